@@ -1,0 +1,1 @@
+"""Frames read, rendered, solved, measured, compared and composed."""

@@ -1,0 +1,1 @@
+"""The picture: registration, stacking, path plot, time-lapse, statement of truth."""

@@ -1,0 +1,1 @@
+"""Where the disc is: limbs, planet centroids, contact and light-curve timing."""

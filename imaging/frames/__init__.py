@@ -1,0 +1,1 @@
+"""Pixels and their times: readers, timestamps, calibration, rendering."""

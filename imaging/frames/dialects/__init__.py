@@ -1,0 +1,1 @@
+"""One file a frame format, each with one registration line."""

@@ -1,0 +1,1 @@
+"""Where the frame points: detection, pattern matching, plate solution."""

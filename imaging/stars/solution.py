@@ -1,0 +1,62 @@
+"""What a plate solution is: where a frame points, how well, and how likely it is to be chance."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+if TYPE_CHECKING:
+    from astropy.wcs import WCS
+
+
+@dataclass(frozen=True)
+class MatchedStars:
+    """Pairs of detections and catalogue stars; every array has shape (n,)."""
+
+    x_px: np.ndarray
+    y_px: np.ndarray
+    ra_deg: np.ndarray
+    dec_deg: np.ndarray
+    magnitude: np.ndarray
+    residual_x_px: np.ndarray
+    residual_y_px: np.ndarray
+    name: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class PlateSolution:
+    """The pointing of one frame.
+
+    `wcs`: ICRS, valid for 0-based array pixels, with SIP and its inverse where the stars support it.
+    `position_angle_deg`: of the frame's up direction as it is looked at, from ICRS north through east.
+    `mirrored`: True when, looked at with north up, east is to the right.
+    `parameter_covariance`, `jacobian`: see `sigma_px_at`. `how`: `hinted`, `blind`, `previous` or `sparse`.
+    """
+
+    wcs: WCS
+    width_px: int
+    height_px: int
+    center_ra_deg: float
+    center_dec_deg: float
+    scale_arcsec_px: float
+    position_angle_deg: float
+    mirrored: bool
+    matched: MatchedStars
+    rms_px: float
+    false_alarm_log10: float
+    how: str
+    sigma_model_px: float
+    covariance_at_center_px2: np.ndarray
+    covariance: np.ndarray | None = None
+
+    def pixel_to_sky(self, x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return ICRS (ra_deg, dec_deg) of 0-based array pixels."""
+        ra_deg, dec_deg = self.wcs.all_pix2world(x_px, y_px, 0)
+        return np.asarray(ra_deg), np.asarray(dec_deg)
+
+    def sky_to_pixel(self, ra_deg: np.ndarray, dec_deg: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return 0-based array pixels (x_px, y_px) of ICRS directions; NaN where they do not project."""
+        x_px, y_px = self.wcs.all_world2pix(ra_deg, dec_deg, 0, quiet=True)
+        return np.asarray(x_px), np.asarray(y_px)

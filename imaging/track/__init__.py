@@ -1,0 +1,1 @@
+"""Observed minus computed: residuals, fits, findings, report."""

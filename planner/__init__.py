@@ -1,0 +1,1 @@
+"""Where and when the sky moves, what to shoot, and doing it."""

@@ -1,0 +1,1 @@
+"""What happens: one module an event family, behind one small interface."""

@@ -1,0 +1,1 @@
+"""What to shoot and when: brief, site, rig, exposure, framing, nights, plan."""

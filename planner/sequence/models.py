@@ -1,0 +1,230 @@
+"""What a site, a rig, a brief and a plan are: models with units in their keys, and their JSON Schema.
+
+Unknown keys are errors. Times are ISO 8601 with `Z` or an offset. Longitudes are east positive.
+"""
+
+from __future__ import annotations
+
+from datetime import UTC, date, datetime
+from typing import Annotated, Any, Literal
+
+from pydantic import AfterValidator, AwareDatetime, BaseModel, ConfigDict, Field
+
+PLAN_FORMAT = 1
+
+
+class Model(BaseModel):
+    """A strict, immutable model: unknown keys and infinite numbers are refused."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True, allow_inf_nan=False, str_strip_whitespace=True)
+
+
+Utc = Annotated[AwareDatetime, AfterValidator(lambda moment: moment.astimezone(UTC))]
+
+
+class Site(Model):
+    """A place to observe from."""
+
+    name: str
+    latitude_deg: float = Field(ge=-90, le=90)
+    longitude_deg: float = Field(ge=-180, le=360, description="east positive")
+    height_m: float = Field(ge=-500, le=9000, description="above the WGS 84 ellipsoid")
+    timezone: str = Field("UTC", description="IANA name, for civil times")
+    horizon: list[tuple[float, float]] = Field(
+        default=[], description="[azimuth_deg, altitude_deg] pairs of what hides the sky"
+    )
+    position_sigma_m: float = Field(15.0, gt=0)
+    height_sigma_m: float = Field(20.0, gt=0)
+    pressure_hpa: float | None = Field(None, ge=0, description="default: standard atmosphere at the height")
+    temperature_c: float = Field(10.0, ge=-90, le=60)
+    seeing_arcsec: float = Field(2.0, gt=0, le=20, description="FWHM at the zenith")
+    extinction_mag: float = Field(0.2, ge=0, le=2, description="V magnitudes an airmass")
+    sky_brightness_mag_arcsec2: float = Field(20.5, ge=10, le=22.5, description="V, dark, at the zenith")
+
+
+class Sensor(Model):
+    """A camera's sensor."""
+
+    width_px: int = Field(ge=16, le=40000)
+    height_px: int = Field(ge=16, le=40000)
+    pixel_um: float = Field(gt=0.5, le=50)
+    full_well_e: float = Field(50000, gt=100)
+    read_noise_e: float = Field(3.0, ge=0)
+    gain_e_adu: float = Field(1.0, gt=0, description="at gain setting 0")
+    bit_depth: int = Field(16, ge=8, le=32)
+    bias_adu: float = Field(200, ge=0)
+    dark_e_s: float = Field(0.02, ge=0)
+    quantum_efficiency: float = Field(0.6, gt=0, le=1)
+    readout_s: float = Field(0.3, ge=0, description="from the end of one exposure to the next start")
+    shutter: Literal["global", "rolling"] = "global"
+    rolling_readout_s: float = Field(0.0, ge=0)
+    bayer: Literal["RGGB", "BGGR", "GRBG", "GBRG"] | None = None
+    min_exposure_s: float = Field(1e-4, gt=0)
+    max_exposure_s: float = Field(3600, gt=0)
+    buffer_frames: int | None = Field(None, ge=1)
+    drain_frames_s: float | None = Field(None, gt=0)
+
+
+class Optics(Model):
+    """A lens or telescope."""
+
+    focal_length_mm: float = Field(gt=0, le=100000)
+    aperture_mm: float = Field(gt=0, le=20000)
+    obstruction: float = Field(0.0, ge=0, lt=1, description="diameter of the obstruction over the aperture")
+    transmission: float = Field(0.85, gt=0, le=1)
+    vignetting: float = Field(0.15, ge=0, lt=1, description="loss of light in the corner")
+    reducer: float = Field(1.0, gt=0, description="factor on the focal length")
+
+
+class Filter(Model):
+    """A filter in the wheel."""
+
+    name: str
+    transmission: float = Field(1.0, gt=0, le=1)
+    bandwidth_nm: float = Field(90.0, gt=0)
+
+
+class SolarFilter(Model):
+    """A filter over the front of the aperture, without which no plan may point at the Sun."""
+
+    optical_density: float = Field(ge=2, le=8)
+    mounting: Literal["front"] = "front"
+
+
+class Mount(Model):
+    """What carries the camera."""
+
+    kind: Literal["equatorial", "altazimuth", "fixed"] = "equatorial"
+    tracking_error_arcsec: float = Field(2.0, ge=0, description="rms over an exposure, unguided")
+    pointing_error_arcsec: float = Field(60.0, ge=0)
+    settle_s: float = Field(5.0, ge=0)
+    slew_deg_s: float = Field(2.0, gt=0)
+    min_altitude_deg: float = Field(5.0, ge=-5, le=90)
+    meridian_flip: bool = True
+
+
+class Clock(Model):
+    """What stamps the frames."""
+
+    source: str = "computer"
+    sigma_s: float = Field(0.5, gt=0)
+
+
+class Rig(Model):
+    """A camera, its optics and its mount."""
+
+    name: str
+    sensor: Sensor
+    optics: Optics
+    mount: Mount = Mount()
+    filters: list[Filter] = []
+    solar_filter: SolarFilter | None = None
+    clock: Clock = Clock()
+    camera_angle_deg: float = Field(
+        0.0, description="position angle of the frame's up direction, at the start"
+    )
+    mirrored: bool = False
+    storage_gb: float = Field(64.0, gt=0)
+
+    @property
+    def scale_arcsec_px(self) -> float:
+        """Scale in the middle of the field."""
+        return 206264.806 * self.sensor.pixel_um * 1e-3 / (self.optics.focal_length_mm * self.optics.reducer)
+
+
+class EventRequest(Model):
+    """Which event: the one of this family nearest to the date."""
+
+    family: str
+    body: str = ""
+    date: date | Utc
+    other_body: str | None = None
+    star: str | None = None
+    orbit: str | None = None
+    radii: str | None = None
+
+
+class Brief(Model):
+    """What the user wants: which event, from where, with what, for which result."""
+
+    title: str
+    site: str | Site
+    rig: str | Rig
+    event: EventRequest
+
+
+class Shot(Model):
+    """One exposure recipe: `count` frames that begin at `start_utc` and then every `cadence_s`."""
+
+    name: str
+    start_utc: Utc
+    cadence_s: float = Field(gt=0)
+    count: int = Field(ge=1)
+    exposure_s: float = Field(gt=0)
+    gain: float = Field(0, ge=0)
+    filter: str | None = None
+    tracking: Literal["sidereal", "solar", "lunar", "none"] = "sidereal"
+
+
+class Passage(Model):
+    """A stretch of a plan with one purpose, in which the camera has one aim.
+
+    `aim`: what the middle of the frame follows: a disc of the geometry (`sun`, `moon`, `mars`), or `field` with
+    `aim_ra_deg`, `aim_dec_deg` (ICRS).
+    """
+
+    name: str
+    purpose: str
+    visit: int | None = None
+    aim: str
+    aim_ra_deg: float | None = None
+    aim_dec_deg: float | None = None
+    shots: list[Shot]
+
+
+class PredictedPoint(Model):
+    """One point of the predicted track: offsets are from the reference disc, None where stars are the reference."""
+
+    utc: Utc
+    ra_deg: float
+    dec_deg: float
+    east_arcsec: float | None = None
+    north_arcsec: float | None = None
+    altitude_deg: float
+
+
+class Finding(Model):
+    """What a feasibility rule found: where, how much, and what would cure it."""
+
+    rule: str
+    level: Literal["error", "caution", "note"]
+    where: str
+    sentence: str
+    cure: str
+
+
+class Plan(Model):
+    """A generated sequence plan."""
+
+    format: Literal[1] = 1
+    title: str
+    event: EventRequest
+    site: Site
+    rig: Rig
+    circumstances: dict[str, Any]
+    passages: list[Passage]
+    track: list[PredictedPoint]
+    frames_total: int
+    storage_gb: float
+    assumptions: list[str] = []
+    findings: list[Finding] = []
+    cautions: list[str] = []
+    provenance: dict[str, str]
+
+
+def utc_datetime(text: str) -> datetime:
+    """Return an aware UTC datetime from ISO 8601 text that names its offset; raises ValueError without one."""
+    moment = datetime.fromisoformat(text)
+    if moment.tzinfo is None:
+        raise ValueError(f"{text!r} has no Z and no offset")
+    return moment.astimezone(UTC)

@@ -1,0 +1,1 @@
+"""Where things are: time scales, ephemeris, bodies, stars, observer, refraction, brightness."""
