@@ -1,4 +1,4 @@
-"""The command `syzygraph`: finds a command's file only when that command is called, and turns errors into exit codes."""
+"""The command `syzygraph`: imports a command's file only when it is called, and turns errors into exit codes."""
 
 from __future__ import annotations
 
