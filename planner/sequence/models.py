@@ -151,6 +151,9 @@ class Brief(Model):
     site: str | Site
     rig: str | Rig
     event: EventRequest
+    other_rigs: list[str | Rig] = Field(
+        default=[], description="more cameras at the same site: paths or inline"
+    )
 
 
 class Shot(Model):

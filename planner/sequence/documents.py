@@ -1,0 +1,314 @@
+"""From YAML files to models and back: briefs, plans, sites, rigs, and the errors that say what is wrong with them."""
+
+from __future__ import annotations
+
+import json
+from datetime import UTC, date, datetime, time
+from difflib import get_close_matches
+from pathlib import Path
+from types import UnionType
+from typing import Annotated, Any, TypeVar, Union, get_args, get_origin
+
+from pydantic import BaseModel, ValidationError
+
+from planner.errors import DocumentError, InputError
+from planner.events.family import EventSpec
+from planner.sequence import strictyaml
+from planner.sequence.models import Brief, EventRequest, Plan, Rig, Site
+from planner.sky.observer import Observer
+
+AnyModel = TypeVar("AnyModel", bound=BaseModel)
+
+_LONGEST_FOUND = 60
+
+
+def load_site(path: str | Path) -> Site:
+    """Return the site in a YAML file; raises DocumentError."""
+    return _as(Site, strictyaml.read(path))
+
+
+def load_rig(path: str | Path) -> Rig:
+    """Return the rig in a YAML file; raises DocumentError."""
+    return _as(Rig, strictyaml.read(path))
+
+
+def load_plan(path: str | Path) -> Plan:
+    """Return the plan in a YAML file; raises DocumentError."""
+    return _as(Plan, strictyaml.read(path))
+
+
+def load_brief(path: str | Path, site: Site | None = None, rig: Rig | None = None) -> Brief:
+    """Return the brief in a YAML file with the site and the rigs it names put in place of their paths.
+
+    Paths count from the brief's folder and may not leave it; `site` and `rig`, which the caller may have loaded
+    from anywhere, take the place of the brief's. Raises DocumentError naming file, line, key, found, allowed.
+    """
+    document = strictyaml.read(path)
+    if isinstance(document.data, dict):
+        for key, model, given in (("site", Site, site), ("rig", Rig, rig)):
+            if given is not None:
+                document.data[key] = given.model_dump(mode="json")
+            elif isinstance(document.data.get(key), str):
+                document.data[key] = _referred(document, (key,), model)
+        others = document.data.get("other_rigs")
+        for index, entry in enumerate(others if isinstance(others, list) else []):
+            if isinstance(entry, str):
+                others[index] = _referred(document, ("other_rigs", index), Rig)
+    return _as(Brief, document)
+
+
+def observer_of(site: Site) -> Observer:
+    """Return the observer who stands at a site."""
+    return Observer(
+        name=site.name,
+        latitude_deg=site.latitude_deg,
+        longitude_deg=site.longitude_deg,
+        height_m=site.height_m,
+        position_sigma_m=site.position_sigma_m,
+        height_sigma_m=site.height_sigma_m,
+        pressure_hpa=site.pressure_hpa,
+        temperature_c=site.temperature_c,
+        horizon=tuple(site.horizon),
+        timezone=site.timezone,
+    )
+
+
+def event_spec(request: EventRequest) -> EventSpec:
+    """Return the event asked for as families understand it; a date without a time means noon UTC."""
+    from planner.sky.timescale import tt_s_from_datetime
+
+    moment = request.date
+    if not isinstance(moment, datetime):
+        moment = datetime.combine(moment, time(12), tzinfo=UTC)
+    return EventSpec(
+        family=request.family,
+        body=request.body,
+        date_tt_s=float(tt_s_from_datetime(moment)),
+        other_body=request.other_body,
+        star=request.star,
+        orbit=request.orbit,
+        radii=request.radii,
+    )
+
+
+def dump_plan(plan: Plan) -> str:
+    """Return a plan as YAML: stable order, a line for each shot and each point, so that two plans diff well."""
+    return strictyaml.dump(_tidy(plan, Plan))
+
+
+def _referred(document: strictyaml.Document, key: strictyaml.Key, model: type[BaseModel]) -> dict[str, Any]:
+    """Return the data of the file that a brief names, after it has been found right by itself."""
+    name = document.data
+    for part in key:
+        name = name[part]
+    folder = Path(document.path).parent
+    line = document.line(key)
+    where = strictyaml.dotted(key)
+    if Path(name).is_absolute() or not (folder / name).resolve().is_relative_to(folder.resolve()):
+        raise DocumentError(
+            document.path,
+            line,
+            where,
+            repr(name),
+            "a path may not leave the brief's folder; name it on the command line",
+        )
+    if not (folder / name).is_file():
+        near = sorted(str(p.relative_to(folder)) for p in folder.glob("**/*.yaml") if len(p.parts) < 40)
+        raise DocumentError(
+            document.path,
+            line,
+            where,
+            repr(name),
+            "no such file in the brief's folder" + _did_you_mean(name, near),
+        )
+    return _as(model, strictyaml.read(folder / name)).model_dump(mode="json", exclude_unset=True)
+
+
+def _as(model: type[AnyModel], document: strictyaml.Document) -> AnyModel:
+    """Return a document as a model; the first thing wrong becomes a DocumentError."""
+    if not isinstance(document.data, dict):
+        found = "nothing" if document.data is None else _shown(document.data)
+        raise DocumentError(
+            document.path,
+            document.line(()),
+            "(document)",
+            found,
+            f"a {model.__name__.lower()} with its keys is needed",
+        )
+    try:
+        # JSON is the strict mode in which text may become a moment, but not a number or a truth value
+        return model.model_validate_json(json.dumps(document.data), strict=True)
+    except ValidationError as invalid:
+        raise _document_error(model, document, invalid) from None
+
+
+def _document_error(
+    model: type[BaseModel], document: strictyaml.Document, invalid: ValidationError
+) -> DocumentError:
+    found_errors = [
+        (*_place(document.data, error["loc"]), error)
+        for error in invalid.errors(include_url=False, include_context=True)
+    ]
+    # a mapping where a path is allowed too also fails as text, which is not what is wrong with it
+    found_errors = [
+        item for item in found_errors if not (item[2]["type"] == "string_type" and isinstance(item[1], dict))
+    ] or found_errors
+    key, value, error = min(
+        found_errors, key=lambda item: (item[2]["type"] == "missing", document.line(item[0]) or 0)
+    )
+    siblings = _model_at(model, key[:-1])
+    fields = siblings.model_fields if siblings else {}
+    name = str(key[-1]) if key else ""
+    kind = error["type"]
+    if kind == "missing":
+        description = fields[name].description if name in fields else None
+        found, allowed = "nothing", "this key is needed" + (f": {description}" if description else "")
+        rivals = [str(k) for k in _unknown(document.data, key[:-1], fields)]
+        close = get_close_matches(name, rivals, n=1)
+        allowed += f" (is {close[0]!r} meant for it?)" if close else ""
+    elif kind == "extra_forbidden":
+        found = "this key, which is unknown"
+        elsewhere = _homes(model, name)
+        close_text = _did_you_mean(name, list(fields))
+        allowed = (
+            "allowed are "
+            + ", ".join(fields)
+            + (close_text or (f"; {name!r} belongs to {elsewhere[0]}" if elsewhere else ""))
+        )
+    else:
+        same_key = [item for item in found_errors if item[0] == key]
+        found = _shown(value)
+        wishes = dict.fromkeys(_wish(item[2]) for item in same_key)
+        allowed = " or ".join(wishes)
+        if kind == "literal_error" and isinstance(value, str):
+            allowed += _did_you_mean(value, [str(v) for v in _literals(error)])
+        if name in fields and fields[name].description:
+            allowed += f" ({fields[name].description})"
+    others = len({item[0] for item in found_errors}) - 1
+    if others:
+        allowed += f" [and {others} more to put right]"
+    return DocumentError(document.path, document.line(key), strictyaml.dotted(key), found, allowed)
+
+
+def _place(data: Any, loc: tuple[str | int, ...]) -> tuple[strictyaml.Key, Any]:
+    """Return the key path of a pydantic location without the union tags in it, and the value found there."""
+    key: list[str | int] = []
+    for index, part in enumerate(loc):
+        if (isinstance(data, dict) and part in data) or (isinstance(data, list) and isinstance(part, int)):
+            key.append(part)
+            data = data[part]  # type: ignore[index]
+        elif (
+            index == len(loc) - 1 and isinstance(data, dict) and isinstance(part, str) and part.isidentifier()
+        ):
+            key.append(part)
+            data = None
+    return tuple(key), data
+
+
+def _wish(error: Any) -> str:
+    """Return what a pydantic error asks for, in our words where we have better ones."""
+    kind = error["type"]
+    if kind.startswith("timezone") or kind == "timezone_aware":
+        return "a time needs Z or an offset, such as 2032-11-13T06:41:12Z"
+    if kind.startswith("datetime"):
+        return "an ISO 8601 time with Z or an offset is needed, such as 2032-11-13T06:41:12Z"
+    if kind.startswith("date"):
+        return "a date is needed, such as 2032-11-13"
+    if kind == "bool_type":
+        return "true or false is needed"
+    if kind in ("float_type", "int_type"):
+        return "a number is needed, without quotes"
+    if kind == "string_type":
+        return "text is needed"
+    if kind == "model_type":
+        return "a mapping of keys to values is needed"
+    if kind == "literal_error":
+        return "allowed are " + ", ".join(str(v) for v in _literals(error))
+    return str(error["msg"]).replace("Input should", "should").replace("Value error, ", "")
+
+
+def _literals(error: Any) -> list[str]:
+    text = error.get("ctx", {}).get("expected", "")
+    return [part.strip().strip("'") for part in text.replace(" or ", ", ").split(",") if part.strip()]
+
+
+def _shown(value: Any) -> str:
+    text = "a mapping" if isinstance(value, dict) else "a list" if isinstance(value, list) else repr(value)
+    text = {"None": "nothing", "True": "true", "False": "false"}.get(text, text)
+    return text if len(text) <= _LONGEST_FOUND else text[:_LONGEST_FOUND] + "…"
+
+
+def _did_you_mean(name: str, allowed: list[str]) -> str:
+    close = get_close_matches(name, allowed, n=1, cutoff=0.5)
+    return f"; did you mean {close[0]!r}?" if close else ""
+
+
+def _unknown(data: Any, key: strictyaml.Key, fields: dict[str, Any]) -> list[str]:
+    for part in key:
+        data = data[part]
+    return [name for name in data if name not in fields] if isinstance(data, dict) else []
+
+
+def _models_in(annotation: Any) -> list[type[BaseModel]]:
+    """Return the models that an annotation may hold: alone, optional, in unions or lists."""
+    if isinstance(annotation, type) and issubclass(annotation, BaseModel):
+        return [annotation]
+    if get_origin(annotation) in (Union, UnionType, list, tuple, Annotated):
+        return [model for part in get_args(annotation) for model in _models_in(part)]
+    return []
+
+
+def _model_at(model: type[BaseModel], key: strictyaml.Key) -> type[BaseModel] | None:
+    for part in key:
+        if isinstance(part, int):
+            continue
+        field = model.model_fields.get(part)
+        inside = _models_in(field.annotation) if field else []
+        if not inside:
+            return None
+        model = inside[0]
+    return model
+
+
+def _homes(model: type[BaseModel], name: str, prefix: str = "") -> list[str]:
+    """Return where in a document a key of this name belongs."""
+    found = [prefix + name] if prefix and name in model.model_fields else []
+    for field_name, field in model.model_fields.items():
+        for inside in _models_in(field.annotation):
+            found += _homes(inside, name, f"{prefix}{field_name}.")
+    return found
+
+
+def _tidy(value: Any, kind: Any = None) -> Any:
+    """Return a model as plain data in field order, without keys left at their defaults in site, rig and shots."""
+    if isinstance(value, BaseModel):
+        fields = type(value).model_fields
+        plain = {
+            name: _tidy(getattr(value, name))
+            for name, field in fields.items()
+            if field.is_required() or getattr(value, name) != field.get_default(call_default_factory=True)
+        }
+        if isinstance(value, Plan):
+            plain = {"format": value.format, **plain}
+        leaf = not any(isinstance(item, dict | list) for item in plain.values())
+        return strictyaml.OneLine(plain) if leaf and type(value).__name__ in _ONE_LINE else plain
+    if isinstance(value, datetime):
+        return strictyaml.Moment(moment_text(value))
+    if isinstance(value, date):
+        return strictyaml.Moment(value.isoformat())
+    if isinstance(value, dict):
+        return {str(name): _tidy(item) for name, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [_tidy(item) for item in value]
+    if isinstance(value, str | int | float | bool) or value is None:
+        return value
+    raise InputError(f"cannot be written as YAML: {type(value).__name__}")
+
+
+_ONE_LINE = {"Shot", "PredictedPoint", "EventRequest", "Filter"}
+
+
+def moment_text(moment: datetime) -> str:
+    """Return an aware moment as ISO 8601 in UTC with `Z`, with milliseconds, or microseconds where needed."""
+    spec = "microseconds" if moment.microsecond % 1000 else "milliseconds"
+    return moment.astimezone(UTC).replace(tzinfo=None).isoformat(timespec=spec) + "Z"
