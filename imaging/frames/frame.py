@@ -39,6 +39,7 @@ class Frame:
     `saturation_adu`: value at and above which a pixel is not linear, or None when unknown.
     `gain_e_adu`, `read_noise_e`: for the noise model, None when unknown.
     `site`: (latitude_deg, longitude_deg, height_m) from the file, or None.
+    `time_missing`: why `time` is None, in one line.
     """
 
     path: Path
@@ -58,3 +59,4 @@ class Frame:
     scale_hint_arcsec_px: float | None = None
     header: dict[str, Any] = field(default_factory=dict)
     frame_index: int = 0
+    time_missing: str | None = None
