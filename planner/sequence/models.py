@@ -182,6 +182,7 @@ class Passage(Model):
     aim: str
     aim_ra_deg: float | None = None
     aim_dec_deg: float | None = None
+    flipped: bool = Field(False, description="past the meridian flip: the camera is upside down")
     shots: list[Shot]
 
 

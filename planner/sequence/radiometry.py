@@ -1,0 +1,211 @@
+"""The single place of photon rates: electrons a second in a pixel from Sun, Moon, planets, stars and sky.
+
+All magnitudes are V, all functions take and give arrays, and a Gaussian stands for the point-spread function.
+A rate is `V_ZERO_PHOTONS` x collecting area x bandwidth x efficiency x 10**(-0.4 V): the spectrum is taken as flat
+over the band, good to about 10 % in V and 20 % unfiltered for bodies of solar colour.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import lru_cache
+
+import numpy as np
+from scipy.special import erf
+
+from planner.errors import InputError
+from planner.sequence.models import Rig
+
+# photons / (s m2 nm) of V = 0: 3.631e-11 W m-2 nm-1 (Bessell, Castelli & Plez 1998, table A2) over h c / lambda
+V_ZERO_PHOTONS = 3.631e-11 / (6.62607015e-34 * 299792458.0 / 545e-9)
+EFFECTIVE_NM = 545.0
+UNFILTERED_NM = 300.0  # 400-700 nm; common practice, no source
+BAYER_NM = 90.0  # the green passband of a colour mosaic; common practice, no source
+# I(mu) / I(1) = 1 - u - v + u mu + v mu^2 at 550 nm (Cox 2000, Allen's Astrophysical Quantities, 14.7; from memory)
+SUN_LIMB_U, SUN_LIMB_V = 0.93, -0.23
+FWHM_OF_SIGMA = 2.0 * np.sqrt(2.0 * np.log(2.0))
+SEEING_AIRMASS_POWER = 0.6  # Kolmogorov turbulence: r0 falls as airmass**-0.6 (Fried 1966)
+
+# How each surface scatters: Lommel-Seeliger for airless rock, Lambert for clouds and dust. Common practice, no source.
+DISC_LAWS = {"moon": "lommel-seeliger", "mercury": "lommel-seeliger", "sun": "sun"}
+
+
+@dataclass(frozen=True)
+class Band:
+    """What is between the sky and the electrons: all that does not depend on the source."""
+
+    name: str
+    bandwidth_nm: float
+    efficiency: float
+    area_m2: float
+
+    @property
+    def zero_rate_e_s(self) -> float:
+        """Electrons a second from V = 0 above an atmosphere that takes nothing."""
+        return V_ZERO_PHOTONS * self.area_m2 * self.bandwidth_nm * self.efficiency
+
+
+def band(rig: Rig, filter_name: str | None = None, behind_solar_filter: bool = False) -> Band:
+    """Return the band of a rig through one of its filters (None: what the bare sensor sees).
+
+    Raises InputError when the rig has no such filter, or no solar filter and one is asked for.
+    """
+    transmission = 1.0
+    if filter_name is None:
+        bandwidth_nm = BAYER_NM if rig.sensor.bayer else UNFILTERED_NM
+    else:
+        chosen = next((each for each in rig.filters if each.name == filter_name), None)
+        if chosen is None:
+            names = ", ".join(each.name for each in rig.filters) or "none"
+            raise InputError(f"filter: found {filter_name!r}; the filters of {rig.name} are: {names}")
+        bandwidth_nm, transmission = chosen.bandwidth_nm, chosen.transmission
+    efficiency = transmission * rig.optics.transmission * rig.sensor.quantum_efficiency
+    if behind_solar_filter:
+        if rig.solar_filter is None:
+            raise InputError(
+                f"rig.solar_filter: {rig.name} has none, and the Sun is not pointed at without one"
+            )
+        efficiency *= 10.0**-rig.solar_filter.optical_density
+    area_m2 = np.pi / 4 * (rig.optics.aperture_mm * 1e-3) ** 2 * (1 - rig.optics.obstruction**2)
+    return Band(filter_name or "none", bandwidth_nm, efficiency, float(area_m2))
+
+
+def rate_e_s(through: Band, magnitude: np.ndarray) -> np.ndarray:
+    """Return electrons a second in all pixels from a source of this magnitude (extinction already added to it)."""
+    return through.zero_rate_e_s * 10.0 ** (-0.4 * np.asarray(magnitude, float))
+
+
+def extinguished(magnitude: np.ndarray, airmass: np.ndarray, extinction_mag: float) -> np.ndarray:
+    """Return the magnitude under the atmosphere: Bouguer's law."""
+    return np.asarray(magnitude, float) + extinction_mag * np.asarray(airmass, float)
+
+
+def sky_rate_e_s_px(through: Band, sky_mag_arcsec2: np.ndarray, scale_arcsec_px: float) -> np.ndarray:
+    """Return electrons a second in a pixel from the sky; its brightness is as seen, extinction included."""
+    return rate_e_s(through, sky_mag_arcsec2) * scale_arcsec_px**2
+
+
+def lit_area_arcsec2(
+    semidiameter_arcsec: np.ndarray, flattening: np.ndarray, phase_angle_deg: np.ndarray
+) -> np.ndarray:
+    """Return the lit area of a disc on the sky."""
+    lit = (1 + np.cos(np.radians(phase_angle_deg))) / 2
+    return np.pi * np.asarray(semidiameter_arcsec) ** 2 * (1 - np.asarray(flattening)) * lit
+
+
+def sun_limb_darkening(mu: np.ndarray) -> np.ndarray:
+    """Return the Sun's intensity at mu = cos(heliocentric angle), relative to the middle of the disc."""
+    mu = np.asarray(mu, float)
+    return 1 - SUN_LIMB_U - SUN_LIMB_V + SUN_LIMB_U * mu + SUN_LIMB_V * mu**2
+
+
+def disc_law(body: str) -> str:
+    """Return how a body's surface scatters: `sun`, `lommel-seeliger` or `lambert`."""
+    return DISC_LAWS.get(body, "lambert")
+
+
+def surface_law(law: str, mu0: np.ndarray, mu: np.ndarray) -> np.ndarray:
+    """Return the surface brightness, in any unit, where the Sun stands at cos mu0 and the observer at cos mu.
+
+    Zero where either does not see the surface. Lambert: mu0; Lommel-Seeliger: mu0 / (mu0 + mu); `sun`: limb
+    darkening, without mu0. Normalise so that the whole disc has the body's magnitude.
+    """
+    mu0, mu = np.asarray(mu0, float), np.asarray(mu, float)
+    if law == "sun":
+        return np.where(mu >= 0, sun_limb_darkening(np.clip(mu, 0, 1)), 0.0)
+    seen = (mu0 > 0) & (mu > 0)
+    if law == "lambert":
+        return np.where(seen, mu0, 0.0)
+    if law == "lommel-seeliger":
+        return np.where(seen, mu0 / np.where(seen, mu0 + mu, 1.0), 0.0)
+    raise InputError(f"surface law: found {law!r}; allowed are sun, lambert, lommel-seeliger")
+
+
+@lru_cache(maxsize=8)
+def _peak_table(law: str) -> tuple[np.ndarray, np.ndarray]:
+    phase_deg = np.linspace(0.0, 175.0, 71)
+    y, x = np.mgrid[-1:1:401j, -1:1:401j]
+    mu = np.sqrt(np.clip(1 - x**2 - y**2, 0, None))
+    inside = (x**2 + y**2) < 1
+    ratios = []
+    for angle in np.radians(phase_deg):
+        mu0 = np.where(inside, mu * np.cos(angle) + x * np.sin(angle), -1.0)
+        brightness = surface_law(law, mu0, np.where(inside, mu, -1.0))
+        lit_pixels = inside.sum() * (1 + np.cos(angle)) / 2
+        # the very limb is too thin to fill a pixel: the 98th percentile is what a camera sees as the peak
+        ratios.append(np.quantile(brightness[brightness > 0], 0.98) * lit_pixels / brightness.sum())
+    return phase_deg, np.array(ratios)
+
+
+def peak_over_mean(law: str, phase_angle_deg: np.ndarray) -> np.ndarray:
+    """Return the brightest surface over the mean of the lit area, at these phase angles."""
+    if law == "sun":
+        mean = 1 - SUN_LIMB_U / 3 - SUN_LIMB_V / 2
+        return np.full(np.shape(phase_angle_deg), 1.0 / mean)
+    return np.interp(phase_angle_deg, *_peak_table(law))
+
+
+def disc_rate_e_s_px(
+    through: Band,
+    body: str,
+    magnitude: np.ndarray,
+    semidiameter_arcsec: np.ndarray,
+    flattening: np.ndarray,
+    phase_angle_deg: np.ndarray,
+    scale_arcsec_px: float,
+) -> np.ndarray:
+    """Return electrons a second in the brightest pixel of a disc that is large against the blur."""
+    if body == "sun":
+        phase_angle_deg = np.zeros_like(np.asarray(semidiameter_arcsec, float))
+    area_px = lit_area_arcsec2(semidiameter_arcsec, flattening, phase_angle_deg) / scale_arcsec_px**2
+    return rate_e_s(through, magnitude) / area_px * peak_over_mean(disc_law(body), phase_angle_deg)
+
+
+def psf_fwhm_arcsec(
+    rig: Rig, seeing_arcsec: float, airmass: np.ndarray, tracking_error_arcsec: float | None = None
+) -> np.ndarray:
+    """Return the FWHM of the Gaussian that stands for seeing, diffraction and tracking, before pixels integrate it.
+
+    `tracking_error_arcsec` is an rms; the mount's is taken when None.
+    """
+    seeing = seeing_arcsec * np.asarray(airmass, float) ** SEEING_AIRMASS_POWER
+    diffraction = 1.029 * np.degrees(EFFECTIVE_NM * 1e-6 / rig.optics.aperture_mm) * 3600
+    error = rig.mount.tracking_error_arcsec if tracking_error_arcsec is None else tracking_error_arcsec
+    return np.sqrt(seeing**2 + diffraction**2 + (FWHM_OF_SIGMA * error) ** 2)
+
+
+def star_peak_fraction(fwhm_px: np.ndarray, trail_px: np.ndarray = 0.0) -> np.ndarray:
+    """Return the part of a star's light in the pixel it is centred on, when it trails by so many pixels."""
+    sigma = np.maximum(np.asarray(fwhm_px, float), 1e-3) / FWHM_OF_SIGMA
+    across = erf(0.5 / (np.sqrt(2) * sigma))
+    along_sigma = np.sqrt(sigma**2 + np.asarray(trail_px, float) ** 2 / 12)
+    return across * erf(0.5 / (np.sqrt(2) * along_sigma))
+
+
+def blurred_peak_fraction(radius_px: np.ndarray, fwhm_px: np.ndarray) -> np.ndarray:
+    """Return the peak of a uniform disc blurred by seeing and pixel, over that of the disc unblurred.
+
+    The Gaussian integrated over the disc: 1 - exp(-r^2 / 2 sigma^2); tends to the star's peak for small discs.
+    """
+    sigma_px2 = (np.asarray(fwhm_px, float) / FWHM_OF_SIGMA) ** 2 + 1 / 12
+    return 1 - np.exp(-(np.asarray(radius_px, float) ** 2) / (2 * sigma_px2))
+
+
+def vignetting_factor(rig: Rig, radius_over_corner: np.ndarray) -> np.ndarray:
+    """Return what part of the light arrives at a distance from the middle of the field, in half diagonals."""
+    return 1 - rig.optics.vignetting * np.asarray(radius_over_corner, float) ** 2
+
+
+def saturation_e(rig: Rig, gain_e_adu: float | None = None) -> float:
+    """Return the electrons at which a pixel saturates: the well, or the end of the converter's range."""
+    sensor = rig.sensor
+    converter = (2**sensor.bit_depth - 1 - sensor.bias_adu) * (gain_e_adu or sensor.gain_e_adu)
+    return float(min(sensor.full_well_e, converter))
+
+
+def signal_to_noise(
+    signal_e: np.ndarray, sky_e_px: np.ndarray, dark_e_px: np.ndarray, read_noise_e: float, pixels: np.ndarray
+) -> np.ndarray:
+    """Return the signal-to-noise of a source spread over so many pixels (Poisson and read noise)."""
+    noise2 = signal_e + pixels * (np.asarray(sky_e_px) + dark_e_px + read_noise_e**2)
+    return np.asarray(signal_e) / np.sqrt(noise2)
