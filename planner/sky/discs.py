@@ -6,6 +6,19 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from planner.sky.bodies import AU_KM, pole_radec_deg, radii_km
+from planner.sky.ephemeris import position_km
+from planner.sky.observer import Observer
+from planner.sky.photometry import moon_magnitude, planet_magnitude, sun_magnitude
+from planner.sky.places import (
+    RAD_ARCSEC,
+    direction,
+    observer_position_km,
+    position_angle_deg,
+    unit_vector,
+)
+from planner.sky.timescale import YEAR_S, tdb_s
+
 
 @dataclass(frozen=True)
 class SkyDisc:
@@ -27,3 +40,78 @@ class SkyDisc:
     phase_angle_deg: np.ndarray
     bright_limb_pa_deg: np.ndarray
     magnitude: np.ndarray
+
+
+def sky_disc(body: str, observer: Observer | None, tt_s: np.ndarray, radii: str | None = None) -> SkyDisc:
+    """Return the Sun, the Moon or a planet as a disc, topocentric (or geocentric), under a convention of radii.
+
+    Saturn's disc is its globe; its magnitude includes the rings. Position angles count from ICRS north.
+    """
+    tt_s = np.atleast_1d(np.asarray(tt_s, float))
+    here = observer_position_km(observer, tt_s)
+    place = direction(body, observer, tt_s, here)
+    equatorial_km, polar_km = radii_km(body, radii)
+    pole = unit_vector(*pole_radec_deg(body, tt_s))
+    sight = place.vector_km / place.distance_km
+    zero = np.zeros_like(tt_s)
+    if body == "sun":
+        to_sun_km, phase, limb_pa = zero, zero, zero
+        sun_from_body = None
+    else:
+        moment = tdb_s(tt_s) - place.light_time_s
+        # light that is reflected left the Sun earlier still; the Sun moves 13 m/s, so it does not matter
+        sun_from_body = position_km("sun", moment) - here - place.vector_km
+        to_sun_km = np.sqrt((sun_from_body**2).sum(axis=0))
+        phase = np.degrees(_angle(sun_from_body, -place.vector_km))
+        limb_pa = position_angle_deg(place.vector_km, place.vector_km + sun_from_body)
+    sin_latitude = -(pole * sight).sum(axis=0)
+    eccentricity2 = 1.0 - (polar_km / equatorial_km) ** 2
+    flattening = 1.0 - np.sqrt(1.0 - eccentricity2 * (1.0 - sin_latitude**2))
+    return SkyDisc(
+        name=body,
+        ra_deg=place.ra_deg,
+        dec_deg=place.dec_deg,
+        distance_km=place.distance_km,
+        semidiameter_arcsec=RAD_ARCSEC * np.arcsin(equatorial_km / place.distance_km),
+        flattening=flattening,
+        pole_pa_deg=position_angle_deg(sight, pole),
+        phase_angle_deg=phase,
+        bright_limb_pa_deg=limb_pa,
+        magnitude=_magnitude(
+            body, place.distance_km, to_sun_km, phase, sin_latitude, sun_from_body, pole, tt_s
+        ),
+    )
+
+
+def _angle(a: np.ndarray, b: np.ndarray) -> np.ndarray:
+    cross = np.cross(a, b, axis=0)
+    return np.arctan2(np.sqrt((cross**2).sum(axis=0)), (a * b).sum(axis=0))
+
+
+def _magnitude(
+    body: str,
+    distance_km: np.ndarray,
+    to_sun_km: np.ndarray,
+    phase_deg: np.ndarray,
+    sin_latitude: np.ndarray,
+    sun_from_body: np.ndarray | None,
+    pole: np.ndarray,
+    tt_s: np.ndarray,
+) -> np.ndarray:
+    if body == "sun" or sun_from_body is None:
+        return sun_magnitude(distance_km / AU_KM)
+    if body == "moon":
+        return moon_magnitude(phase_deg, distance_km)
+    if body in ("pluto",):
+        return np.full_like(distance_km, np.nan)
+    sin_sun = (pole * sun_from_body).sum(axis=0) / to_sun_km
+    latitude, sun_latitude = np.degrees(np.arcsin(sin_latitude)), np.degrees(np.arcsin(sin_sun))
+    return planet_magnitude(
+        body,
+        to_sun_km / AU_KM,
+        distance_km / AU_KM,
+        phase_deg,
+        sub_observer_latitude_deg=latitude,
+        sub_solar_latitude_deg=sun_latitude,
+        year=2000.0 + tt_s / YEAR_S,
+    )
