@@ -1,0 +1,131 @@
+"""Two bodies that pass each other on the sky, and the instants at which their limbs touch.
+
+Contacts are solved on the chord: separation squared minus the squared sum (outer) or difference (inner) of the
+angular radii is close to a parabola in time, so its minimum splits the two contacts however close together they
+are. Directions are un-aberrated and topocentric: aberration would scale the larger disc by up to 1e-4, and
+refraction cancels where two limbs touch.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from planner.events.roots import minima_near, roots_between
+from planner.sky import places
+from planner.sky.observer import Observer
+
+RAD_ARCSEC = places.RAD_ARCSEC
+
+
+@dataclass(frozen=True)
+class Shape:
+    """Size of a body's outline: a spheroid about `pole` (unit vector, ICRS); a ring is one without thickness.
+
+    `polar_over_equatorial` 1 makes it a sphere, and the pole is not looked at.
+    """
+
+    equatorial_km: float
+    polar_over_equatorial: float = 1.0
+    pole: tuple[float, float, float] | None = None
+
+    def reach_km(self, toward: np.ndarray) -> np.ndarray | float:
+        """Return how far the outline reaches along `toward` (3, n), unit vectors across the line of sight.
+
+        Exact for the parallel projection of a spheroid: its support function.
+        """
+        if self.pole is None or self.polar_over_equatorial == 1.0:
+            return self.equatorial_km
+        along_pole = np.einsum("i,i...->...", np.asarray(self.pole), toward)
+        return self.equatorial_km * np.sqrt(1.0 - (1.0 - self.polar_over_equatorial**2) * along_pole**2)
+
+
+@dataclass(frozen=True)
+class Sight:
+    """A near and a far body at n times, as (3, n) vectors in km from the observer, and what follows from them.
+
+    `toward`: unit vectors across the line of sight to the far body, from its centre toward the near one's.
+    """
+
+    tt_s: np.ndarray
+    near_km: np.ndarray
+    far_km: np.ndarray
+
+    @property
+    def near_distance_km(self) -> np.ndarray:
+        """Distance of the near body."""
+        return np.sqrt(np.einsum("i...,i...->...", self.near_km, self.near_km))
+
+    @property
+    def far_distance_km(self) -> np.ndarray:
+        """Distance of the far body."""
+        return np.sqrt(np.einsum("i...,i...->...", self.far_km, self.far_km))
+
+    @property
+    def separation_rad(self) -> np.ndarray:
+        """Angle between the centres, good to 1e-16 rad however small it is."""
+        return places.separation_arcsec(self.near_km, self.far_km) / RAD_ARCSEC
+
+    @property
+    def toward(self) -> np.ndarray:
+        """Direction of the near body from the far one on the sky."""
+        axis = self.far_km / self.far_distance_km
+        offset = self.near_km - axis * np.einsum("i...,i...->...", self.near_km, axis)
+        length = np.sqrt(np.einsum("i...,i...->...", offset, offset))
+        return offset / np.where(length > 0, length, 1.0)
+
+
+@dataclass(frozen=True)
+class Passing:
+    """A near body that passes a far one, as an observer (None: the geocentre) sees it."""
+
+    near: str
+    far: str
+    near_shape: Shape
+    far_shape: Shape
+    observer: Observer | None
+
+    def sight(self, tt_s: np.ndarray) -> Sight:
+        """Return both bodies at these times."""
+        tt_s = np.asarray(tt_s, dtype=float)
+        return Sight(
+            tt_s,
+            places.direction(self.near, self.observer, tt_s).vector_km,
+            places.direction(self.far, self.observer, tt_s).vector_km,
+        )
+
+    def radii_rad(self, sight: Sight) -> tuple[np.ndarray, np.ndarray]:
+        """Return the angular radii of near and far body along the line between their centres."""
+        toward = sight.toward
+        near = np.arcsin(np.minimum(1.0, self.near_shape.reach_km(toward) / sight.near_distance_km))
+        far = np.arcsin(np.minimum(1.0, self.far_shape.reach_km(toward) / sight.far_distance_km))
+        return near, far
+
+    def chord(self, inner: bool) -> Callable[[np.ndarray, np.ndarray], np.ndarray]:
+        """Return the function of time (rad^2) that is zero when the limbs touch."""
+
+        def squared(tt_s: np.ndarray, which: np.ndarray) -> np.ndarray:
+            sight = self.sight(tt_s)
+            near, far = self.radii_rad(sight)
+            limit = near - far if inner else near + far
+            return sight.separation_rad**2 - limit**2
+
+        return squared
+
+    def closest(self, guess_tt_s: np.ndarray, step_s: float, reach_s: float) -> np.ndarray:
+        """Return the instants of least separation nearest to the guesses, NaN where there is none in reach."""
+        return minima_near(
+            lambda tt_s, which: self.sight(tt_s).separation_rad ** 2, guess_tt_s, step_s, reach_s
+        )
+
+    def contacts(self, closest_tt_s: np.ndarray, reach_s: float, inner: bool) -> np.ndarray:
+        """Return (n, 2) instants at which limbs touch before and after the closest approach; NaN where they do not.
+
+        `reach_s` must be longer than half the passage.
+        """
+        closest_tt_s = np.atleast_1d(np.asarray(closest_tt_s, dtype=float))
+        low = np.concatenate([closest_tt_s - reach_s, closest_tt_s])
+        high = np.concatenate([closest_tt_s, closest_tt_s + reach_s])
+        return roots_between(self.chord(inner), low, high).reshape(2, -1).T

@@ -1,0 +1,100 @@
+"""What the Moon looks like where something passes behind it: lit or dark limb, cusp angle, phase, eclipse."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from planner.events.contacts import RAD_ARCSEC
+from planner.sky import discs, places
+from planner.sky.observer import Observer
+
+# Meeus, Astronomical Algorithms (2nd ed.), ch. 54: the shadow of the solid Earth is widened by its atmosphere by
+# about 1/50 of the lunar parallax term (the rule used in almanacs since Chauvenet); radius of the Earth at 45 degrees.
+_SHADOW_WIDENED = 1.02
+_EARTH_MEAN_OVER_EQUATORIAL = 0.998340
+
+
+@dataclass(frozen=True)
+class MoonState:
+    """The Moon at n times; arrays (n,). Position angles from ICRS north.
+
+    `lit`: True where the limb at the angle asked for is in sunlight; `cusp_angle_deg`: from the nearer cusp along
+    the limb, positive on the dark side (common practice); `cusp`: `north` or `south`.
+    `eclipse`: `none`, `penumbral`, `partial` or `total` for the Moon as a whole.
+    """
+
+    lit: np.ndarray
+    cusp_angle_deg: np.ndarray
+    cusp: tuple[str, ...]
+    illuminated_fraction: np.ndarray
+    waxing: np.ndarray
+    semidiameter_arcsec: np.ndarray
+    elongation_deg: np.ndarray
+    eclipse: tuple[str, ...]
+
+
+def moon_state(observer: Observer | None, tt_s: np.ndarray, limb_pa_icrs_deg: np.ndarray) -> MoonState:
+    """Return what the Moon looks like at these times and limb angles (ICRS north through east)."""
+    tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
+    moon = discs.sky_disc("moon", observer, tt_s)
+    sun = places.direction("sun", observer, tt_s)
+    moon_km = places.direction("moon", observer, tt_s).vector_km
+    elongation = places.separation_arcsec(moon_km, sun.vector_km) / 3600.0
+    from_bright = (limb_pa_icrs_deg - moon.bright_limb_pa_deg + 180.0) % 360.0 - 180.0
+    north = places.north_of_date_pa_deg(moon.ra_deg, moon.dec_deg, tt_s)
+    # the cusps stand at +-90 degrees from the middle of the lit limb; which of them is the northern one:
+    cusp_plus = (moon.bright_limb_pa_deg - north + 90.0 + 180.0) % 360.0 - 180.0
+    plus_is_north = np.abs(cusp_plus) < 90.0
+    near_plus = from_bright >= 0.0
+    cusp = np.where(near_plus == plus_is_north, "north", "south")
+    # the Moon waxes while its bright limb is its western one (position angle about 270)
+    waxing = np.sin(np.radians(moon.bright_limb_pa_deg - north)) < 0.0
+    return MoonState(
+        lit=np.abs(from_bright) < 90.0,
+        cusp_angle_deg=np.abs(from_bright) - 90.0,
+        cusp=tuple(str(c) for c in cusp),
+        illuminated_fraction=(1.0 + np.cos(np.radians(moon.phase_angle_deg))) / 2.0,
+        waxing=waxing,
+        semidiameter_arcsec=moon.semidiameter_arcsec,
+        elongation_deg=elongation,
+        eclipse=eclipse_state(tt_s),
+    )
+
+
+def eclipse_state(tt_s: np.ndarray) -> tuple[str, ...]:
+    """Return whether the Moon stands in the Earth's shadow: `none`, `penumbral`, `partial` or `total`.
+
+    Radii of the shadow after Meeus ch. 54; the edge of the umbra is good to about 20 s of time.
+    """
+    tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
+    moon = places.direction("moon", None, tt_s)
+    sun = places.direction("sun", None, tt_s)
+    from_axis = places.separation_arcsec(moon.vector_km, -sun.vector_km) / RAD_ARCSEC
+    moon_parallax = np.arcsin(6378.137 / moon.distance_km) * _EARTH_MEAN_OVER_EQUATORIAL
+    sun_parallax, sun_radius = np.arcsin(6378.137 / sun.distance_km), np.arcsin(695700.0 / sun.distance_km)
+    umbra = _SHADOW_WIDENED * (moon_parallax + sun_parallax - sun_radius)
+    penumbra = _SHADOW_WIDENED * (moon_parallax + sun_parallax + sun_radius)
+    moon_radius = np.arcsin(1737.4 / moon.distance_km)
+    state = np.where(
+        from_axis < umbra - moon_radius,
+        "total",
+        np.where(
+            from_axis < umbra + moon_radius,
+            "partial",
+            np.where(from_axis < penumbra + moon_radius, "penumbral", "none"),
+        ),
+    )
+    return tuple(str(s) for s in state)
+
+
+def limb_words(state: MoonState) -> dict[str, list]:
+    """Return what is worth saying of each instant, as lists by name."""
+    return {
+        "limb": ["lit" if lit else "dark" for lit in state.lit],
+        "cusp_angle_deg": [float(v) for v in state.cusp_angle_deg],
+        "cusp": list(state.cusp),
+        "moon_illuminated_fraction": [float(v) for v in state.illuminated_fraction],
+        "moon_eclipse": list(state.eclipse),
+    }

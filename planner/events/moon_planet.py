@@ -1,0 +1,235 @@
+"""The Moon covers a planet."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+
+from planner.errors import InputError
+from planner.events import cautions
+from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
+from planner.events.contacts import RAD_ARCSEC, Passing, Shape
+from planner.events.family import Circumstances, Event, EventSpec, Geometry
+from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
+from planner.events.moon import limb_words, moon_state
+from planner.events.visibility import sun_altitude_deg, view
+from planner.sky import bodies, discs, places, timescale
+from planner.sky.observer import Observer
+
+DAY_S = timescale.DAY_S
+# The Moon gains 10 to 17 degrees a day on any planet in ecliptic longitude: under half a turn a step.
+_GRID_S = 4 * DAY_S
+# Geocentric separation at conjunction in longitude within which some place on Earth sees an occultation: the largest
+# lunar parallax and semidiameter (61.5' + 16.8') and a planet's (0.5'), over the cosine of the track's slope
+# (under 20 degrees even for Venus near its stations).
+_NEAR_ARCSEC = 79.0 * 60.0 / np.cos(np.deg2rad(20.0))
+_EARTH_RADIUS_KM = 6378.137
+# A topocentric occultation lasts under 2 h, and its middle is within 2 h of the geocentric one.
+_CLOSEST_REACH_S = 0.25 * DAY_S
+_CONTACT_REACH_S = 0.15 * DAY_S
+# 1-sigma of the limb about a smooth circle at the contact point, km: measured on the lunar elevation grid, see tests.
+_LIMB_SIGMA_KM = 1.2
+_RINGS_KM = 136775.0  # outer edge of Saturn's A ring (IAU/NASA planetary ring tables; from memory)
+
+
+class MoonOccultsPlanet:
+    """The Moon passes in front of a planet."""
+
+    name = "moon-occults-planet"
+    targets = ("mercury", "venus", "mars", "jupiter", "saturn", "uranus", "neptune")
+    reference = "moon"
+    campaign = False
+
+    def search(
+        self,
+        start_tt_s: float,
+        end_tt_s: float,
+        observer: Observer | None = None,
+        bodies: tuple[str, ...] | None = None,
+        tick: Callable[[int, int], None] | None = None,
+    ) -> list[Event]:
+        """Return the occultations between two instants: seen from the geocentre, or from the site above its horizon."""
+        timescale.require_span(np.array([start_tt_s, end_tt_s]), "search span")
+        wanted = tuple(self._checked(body) for body in bodies or self.targets)
+        found: list[Event] = []
+        for count, body in enumerate(wanted):
+            somewhere = self._somewhere(body, start_tt_s, end_tt_s)
+            found += [event for event in somewhere if self.predict(event, observer).happens]
+            if tick:
+                tick(count + 1, len(wanted))
+        return sorted(found, key=lambda event: event.middle_tt_s)
+
+    def nearest(self, spec: EventSpec) -> Event:
+        """Return the occultation of the spec's planet nearest to its date that some place on Earth sees."""
+        self._checked(spec.body)
+        bodies.convention(spec.radii)
+        return nearest_of(
+            spec, lambda low, high: self._somewhere(spec.body, low, high), (0.1, 1.0, 10.0, 60.0)
+        )
+
+    def predict(self, event: Event, observer: Observer | None = None) -> Circumstances:
+        """Return the disc contacts and the closest approach, to about 1 ms in the geometry.
+
+        The 1-sigma is mostly the Moon's limb, taken as smooth.
+        """
+        body, radii = event.spec.body, bodies.convention(event.spec.radii).name
+        passing = self._passing(body, observer, radii, event.middle_tt_s)
+        closest = passing.closest(np.array([event.middle_tt_s]), 1800.0, _CLOSEST_REACH_S)
+        if not np.isfinite(closest).all():
+            closest = np.array([event.middle_tt_s])
+        outer = passing.contacts(closest, _CONTACT_REACH_S, inner=False)[0]
+        inner = passing.contacts(closest, _CONTACT_REACH_S, inner=True)[0]
+        times = np.array([outer[0], inner[0], closest[0], inner[1], outer[1]])
+        names = np.array(
+            ["disappearance_start", "disappearance_end", "closest", "reappearance_start", "reappearance_end"]
+        )
+        kept = np.isfinite(times)
+        times, names = times[kept], names[kept]
+        moment = moments(passing, times, names == "closest")
+        sight = passing.sight(times)
+        at_limb = np.where(names == "closest", 0.0, 1.0)
+        limb_arcsec = at_limb * _LIMB_SIGMA_KM / moment.near_distance_km * RAD_ARCSEC
+        terms = site_terms(moment, observer)
+        terms += [ephemeris_term(moment, "moon", body), angle_term("lunar limb", moment, limb_arcsec)]
+        planet = discs.sky_disc(body, observer, times, radii=radii)
+        maker = InstantMaker(observer, times, sight.far_km, sight.near_km, magnitude=planet.magnitude)
+        state = moon_state(observer, times, places.position_angle_deg(sight.near_km, sight.far_km))
+        separation = sight.separation_rad * RAD_ARCSEC
+        extra = {"separation_arcsec": separation, **limb_words(state)}
+        instants = maker.instants(names, terms, extra)
+        covered = bool(np.isfinite(outer).all())
+        middle = int(np.flatnonzero(names == "closest")[0])
+        least = float(separation[middle])
+        near, far = passing.radii_rad(sight)
+        happens, reason = covered, None
+        if not covered:
+            missed = least - float(near[middle] + far[middle]) * RAD_ARCSEC
+            reason = f"the Moon's limb passes {body.capitalize()} at {missed:.0f} arcsec"
+        elif observer is not None:
+            hidden = [i.limited_by for i in instants if i.name != "closest"]
+            if all(limit in ("below horizon", "behind the horizon line") for limit in hidden):
+                happens, reason = False, f"{body.capitalize()} is below the horizon at every contact"
+        inner_seen = bool(np.isfinite(inner).all())
+        facts = {
+            "moon_semidiameter_arcsec": float(near[middle]) * RAD_ARCSEC,
+            "planet_semidiameter_arcsec": float(planet.semidiameter_arcsec[middle]),
+            "planet_magnitude": float(planet.magnitude[middle]),
+            "planet_phase_angle_deg": float(planet.phase_angle_deg[middle]),
+            "moon_illuminated_fraction": float(state.illuminated_fraction[middle]),
+            "moon_waxing": bool(state.waxing[middle]),
+            "sun_elongation_deg": float(state.elongation_deg[middle]),
+            "moon_eclipse": state.eclipse[middle],
+            "coverage": "none" if not covered else "complete" if inner_seen else "partial (graze)",
+            "duration_s": float(outer[1] - outer[0]) if covered else 0.0,
+        }
+        return Circumstances(
+            event=event,
+            observer=observer,
+            happens=happens,
+            reason=reason,
+            instants=instants,
+            least_separation_arcsec=least,
+            conventions={
+                "radii": f"{radii}: {bodies.convention(radii).text}",
+                "position_angle": "of the planet from the Moon's centre, from true celestial north of date",
+                "limb": "smooth",
+                "places": "light-time directions from the observer; refraction does not move a contact",
+            },
+            cautions=self._cautions(state.elongation_deg[middle], maker),
+            facts=facts,
+        )
+
+    def geometry(self, event: Event, observer: Observer | None, tt_s: np.ndarray) -> Geometry:
+        """Return Moon and planet as discs at these times."""
+        tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
+        body, radii = event.spec.body, bodies.convention(event.spec.radii).name
+        shown = {name: discs.sky_disc(name, observer, tt_s, radii=radii) for name in ("moon", body)}
+        vector_km = places.direction(body, observer, tt_s).vector_km
+        seen = view(vector_km, observer, tt_s)
+        return Geometry(
+            tt_s=tt_s,
+            discs=shown,
+            target=body,
+            reference="moon",
+            altitude_deg=seen.altitude_deg,
+            azimuth_deg=seen.azimuth_deg,
+            zenith_pa_deg=zenith_pa_deg(vector_km, observer, tt_s),
+            sun_altitude_deg=sun_altitude_deg(observer, tt_s),
+        )
+
+    def _checked(self, body: str) -> str:
+        if body not in self.targets:
+            raise InputError(
+                f"event.body: found {body!r}; allowed for {self.name} are {', '.join(self.targets)}"
+            )
+        return body
+
+    def _passing(self, body: str, observer: Observer | None, radii: str | None, tt_s: float) -> Passing:
+        moon = Shape(bodies.radii_km("moon", radii)[0])
+        return Passing("moon", body, moon, planet_shape(body, radii, tt_s), observer)
+
+    def _somewhere(self, body: str, low_tt_s: float, high_tt_s: float) -> list[Event]:
+        """Return the occultations that some place on Earth sees, with their geocentric middles."""
+        guess = _conjunctions(body, low_tt_s, high_tt_s)
+        passing = self._passing(body, None, None, 0.5 * (low_tt_s + high_tt_s))
+        middle = passing.closest(guess, 3600.0, DAY_S)
+        middle = middle[np.isfinite(middle)]
+        middle = np.unique(middle[(middle >= low_tt_s) & (middle <= high_tt_s)])
+        sight = passing.sight(middle)
+        near, far = passing.radii_rad(sight)
+        parallax = np.arcsin(_EARTH_RADIUS_KM / sight.near_distance_km)
+        middle = middle[sight.separation_rad < near + far + parallax]
+        return [
+            Event(
+                EventSpec(self.name, body, float(t)),
+                float(t - 0.2 * DAY_S),
+                float(t),
+                float(t + 0.2 * DAY_S),
+                f"The Moon covers {body.capitalize()}, {civil_day(t)}",
+            )
+            for t in middle
+        ]
+
+    @staticmethod
+    def _cautions(elongation_deg: float, maker: InstantMaker) -> tuple[str, ...]:
+        found: tuple[str, ...] = cautions.ROUND_LIMB + maker.time_cautions()
+        if elongation_deg < 30.0:
+            found = tuple(text.format(elongation_deg) for text in cautions.SUN_NEAR) + found
+        return found + cautions.NIGHT
+
+
+def planet_shape(body: str, radii: str | None, tt_s: float) -> Shape:
+    """Return the outline of a planet's disc at a date: a spheroid about its pole."""
+    equatorial_km, polar_km = bodies.radii_km(body, radii)
+    pole = places.unit_vector(*bodies.pole_radec_deg(body, np.array([tt_s])))[:, 0]
+    return Shape(equatorial_km, polar_km / equatorial_km, tuple(pole))
+
+
+def _conjunctions(body: str, low_tt_s: float, high_tt_s: float) -> np.ndarray:
+    """Return geocentric conjunctions in ecliptic longitude at which the Moon passes near the planet."""
+    first, last = timescale.SPAN
+    grid = np.arange(max(first, low_tt_s - _GRID_S), min(last, high_tt_s + 2 * _GRID_S), _GRID_S)
+    gain = np.unwrap(_longitude_gain(body, grid)[0])
+    turns = np.arange(np.ceil(gain[0] / (2 * np.pi)), gain[-1] / (2 * np.pi)) * 2 * np.pi
+    t = np.interp(turns, gain, grid)
+    for _ in range(4):
+        angle, apart = _longitude_gain(body, t)
+        later = _longitude_gain(body, np.minimum(t + 600.0, last))[0]
+        rate = ((later - angle + np.pi) % (2 * np.pi) - np.pi) / 600.0
+        ahead = (angle + np.pi) % (2 * np.pi) - np.pi
+        t = np.clip(t - ahead / rate, first, last)
+    apart = _longitude_gain(body, t)[1]
+    return t[apart * RAD_ARCSEC < _NEAR_ARCSEC]
+
+
+def _longitude_gain(body: str, tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return the Moon's geocentric ecliptic longitude minus the planet's, and their separation, in radians."""
+    moon = places.direction("moon", None, tt_s).vector_km
+    planet = places.direction(body, None, tt_s).vector_km
+    longitudes = [np.arctan2(v[1] * _COS_EPS + v[2] * _SIN_EPS, v[0]) for v in (moon, planet)]
+    return longitudes[0] - longitudes[1], places.separation_arcsec(moon, planet) / RAD_ARCSEC
+
+
+_OBLIQUITY_RAD = np.deg2rad(84381.406 / 3600.0)  # of J2000.0, IAU 2006 (Hilton et al. 2006)
+_COS_EPS, _SIN_EPS = np.cos(_OBLIQUITY_RAD), np.sin(_OBLIQUITY_RAD)

@@ -1,0 +1,258 @@
+"""Transits of Mercury or Venus over the Sun."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import replace
+
+import numpy as np
+
+from planner.errors import InputError
+from planner.events import cautions
+from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
+from planner.events.contacts import RAD_ARCSEC, Passing, Shape
+from planner.events.family import Circumstances, Event, EventSpec, Geometry
+from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
+from planner.events.visibility import sun_altitude_deg, view
+from planner.sky import bodies, discs, ephemeris, places, timescale
+from planner.sky.observer import Observer
+
+DAY_S = timescale.DAY_S
+# Conjunctions in heliocentric longitude are found on a grid on which the planet gains less than half a turn on
+# the Earth: Mercury gains at most 5.4 degrees a day, Venus 0.7.
+_GRID_S = {"mercury": 28 * DAY_S, "venus": 200 * DAY_S}
+# Half the longest transit is 4.0 h (Venus over the Sun's centre).
+_REACH_S = 0.4 * DAY_S
+# Geocentric separation at heliocentric conjunction beyond which no transit can follow: the Sun's largest and
+# Venus's largest semidiameter and parallax (975 + 34 + 34 arcsec), over the cosine of the track's slope (9 degrees),
+# and the motion during the light-time between the geometric and the seen conjunction (500 s at 0.1"/s).
+_NEAR_ARCSEC = 1300.0
+_PARALLAX_ARCSEC = 36.0
+
+# 1-sigma of what a radius means at the limb. Sun: spread of measured radii about 959.63", such as 960.12" +- 0.09"
+# (Emilio et al. 2012, ApJ 750, 135) and 959.86" +- 0.18" (Meftah et al. 2014); Venus: cloud top and atmosphere,
+# 6051.8 km to 6100 km in published tables; both from memory.
+_SUN_RADIUS_SIGMA_ARCSEC = 0.3
+_PLANET_RADIUS_SIGMA_KM = {"mercury": 1.0, "venus": 25.0}
+
+
+class SolarTransit:
+    """Mercury or Venus crosses the disc of the Sun."""
+
+    name = "solar-transit"
+    targets = ("mercury", "venus")
+    reference = "sun"
+    campaign = False
+
+    def search(
+        self,
+        start_tt_s: float,
+        end_tt_s: float,
+        observer: Observer | None = None,
+        bodies: tuple[str, ...] | None = None,
+        tick: Callable[[int, int], None] | None = None,
+    ) -> list[Event]:
+        """Return the transits between two instants: all geocentric ones, or those the observer sees any of."""
+        timescale.require_span(np.array([start_tt_s, end_tt_s]), "search span")
+        wanted = tuple(self._checked(body) for body in bodies or self.targets)
+        found: list[Event] = []
+        for count, body in enumerate(wanted):
+            found += self._transits(
+                body, start_tt_s, end_tt_s, None if observer is None else _PARALLAX_ARCSEC
+            )
+            if tick:
+                tick(count + 1, len(wanted))
+        if observer is not None:
+            found = [event for event in found if self.predict(event, observer).happens]
+        return sorted(found, key=lambda event: event.middle_tt_s)
+
+    def nearest(self, spec: EventSpec) -> Event:
+        """Return the transit of the spec's body nearest to its date, one seen from anywhere on Earth."""
+        self._checked(spec.body)
+        self._radii(spec)
+        return nearest_of(
+            spec,
+            lambda low, high: self._transits(spec.body, low, high, _PARALLAX_ARCSEC),
+            (1.0, 30.0, 250.0),
+        )
+
+    def contact_times(
+        self,
+        body: str,
+        start_tt_s: float,
+        end_tt_s: float,
+        margin_arcsec: float = 0.0,
+        radii: str | None = None,
+    ) -> tuple[np.ndarray, np.ndarray]:
+        """Return (n,) greatest and (n, 4) geocentric contacts I to IV of all transits in a span, in TT seconds.
+
+        NaN where a limb does not cross. `margin_arcsec` also admits those that pass the Sun by as much.
+        """
+        passing = self._passing(body, None, radii)
+        guess = self._near_conjunctions(body, start_tt_s, end_tt_s)
+        greatest = passing.closest(guess, 0.1 * DAY_S, 2 * DAY_S)
+        greatest = greatest[np.isfinite(greatest)]
+        greatest = greatest[(greatest >= start_tt_s) & (greatest <= end_tt_s)]
+        sight = passing.sight(greatest)
+        gap = (sight.separation_rad - sum(passing.radii_rad(sight))) * RAD_ARCSEC
+        greatest = greatest[gap < margin_arcsec]
+        outer = passing.contacts(greatest, _REACH_S, inner=False)
+        inner = passing.contacts(greatest, _REACH_S, inner=True)
+        return greatest, np.stack([outer[:, 0], inner[:, 0], inner[:, 1], outer[:, 1]], axis=1)
+
+    def predict(self, event: Event, observer: Observer | None = None) -> Circumstances:
+        """Return contacts I to IV and greatest transit, to about 1 ms in the geometry.
+
+        The 1-sigma is mostly the Sun's radius: what is seen as the limb differs between instruments.
+        """
+        body, radii = event.spec.body, self._radii(event.spec)
+        passing = self._passing(body, observer, radii)
+        greatest = passing.closest(np.array([event.middle_tt_s]), 3600.0, DAY_S)
+        outer = passing.contacts(greatest, _REACH_S, inner=False)[0]
+        inner = passing.contacts(greatest, _REACH_S, inner=True)[0]
+        times = np.array([outer[0], inner[0], greatest[0], inner[1], outer[1]])
+        names = np.array(["contact_1", "contact_2", "greatest", "contact_3", "contact_4"])
+        kept = np.isfinite(times)
+        times, names = times[kept], names[kept]
+        moment = moments(passing, times, names == "greatest")
+        sight = passing.sight(times)
+        terms = site_terms(moment, observer) + [ephemeris_term(moment, body, "sun")]
+        at_limb = np.where(names == "greatest", 0.0, 1.0)
+        planet_sigma = _PLANET_RADIUS_SIGMA_KM[body] / moment.near_distance_km * RAD_ARCSEC
+        terms.append(angle_term("solar radius", moment, at_limb * _SUN_RADIUS_SIGMA_ARCSEC))
+        terms.append(angle_term("planet radius", moment, at_limb * planet_sigma))
+        maker = InstantMaker(observer, times, sight.near_km, reference_km=sight.far_km)
+        separation = sight.separation_rad * RAD_ARCSEC
+        instants = maker.instants(names, terms, {"separation_arcsec": separation})
+        near, far = passing.radii_rad(sight)
+        middle = int(np.flatnonzero(names == "greatest")[0])
+        least = float(separation[middle])
+        crosses = bool(np.isfinite(outer).all())
+        happens, reason = crosses, None
+        if not crosses:
+            missed = least - (near[middle] + far[middle]) * RAD_ARCSEC
+            reason = f"{body.capitalize()} passes the Sun's limb at {missed:.1f} arcsec"
+        elif observer is not None and not self._any_sun(observer, outer):
+            happens, reason = False, "the Sun is below the horizon from first to last contact"
+        sun_sd, planet_sd = float(far[middle]) * RAD_ARCSEC, float(near[middle]) * RAD_ARCSEC
+        facts = {
+            "sun_semidiameter_arcsec": sun_sd,
+            "planet_semidiameter_arcsec": planet_sd,
+            "chord_arcsec": 2.0 * float(np.sqrt(max(0.0, sun_sd**2 - least**2))),
+            "rate_arcsec_s": float(moments(passing, greatest, np.array([True])).rate_rad_s[0]) * RAD_ARCSEC,
+            "duration_s": float(outer[1] - outer[0]) if crosses else 0.0,
+        }
+        return Circumstances(
+            event=event,
+            observer=observer,
+            happens=happens,
+            reason=reason,
+            instants=instants,
+            least_separation_arcsec=least,
+            conventions=self._conventions(radii),
+            cautions=cautions.SUN + maker.time_cautions(),
+            facts=facts,
+        )
+
+    def geometry(self, event: Event, observer: Observer | None, tt_s: np.ndarray) -> Geometry:
+        """Return Sun and planet as discs at these times."""
+        tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
+        body, radii = event.spec.body, self._radii(event.spec)
+        shown = {name: discs.sky_disc(name, observer, tt_s, radii=radii) for name in ("sun", body)}
+        target = places.direction(body, observer, tt_s)
+        seen = view(target.vector_km, observer, tt_s)
+        return Geometry(
+            tt_s=tt_s,
+            discs=shown,
+            target=body,
+            reference="sun",
+            altitude_deg=seen.altitude_deg,
+            azimuth_deg=seen.azimuth_deg,
+            zenith_pa_deg=zenith_pa_deg(target.vector_km, observer, tt_s),
+            sun_altitude_deg=sun_altitude_deg(observer, tt_s),
+        )
+
+    def _checked(self, body: str) -> str:
+        if body not in self.targets:
+            raise InputError(
+                f"event.body: found {body!r}; allowed for {self.name} are {', '.join(self.targets)}"
+            )
+        return body
+
+    def _radii(self, spec: EventSpec) -> str:
+        return bodies.convention(spec.radii).name
+
+    def _conventions(self, radii: str) -> dict[str, str]:
+        return {
+            "radii": f"{radii}: {bodies.convention(radii).text}",
+            "position_angle": "of the planet's centre on the Sun's disc, from true celestial north of date",
+            "places": "light-time directions from the observer; refraction does not move a contact",
+        }
+
+    def _passing(self, body: str, observer: Observer | None, radii: str | None) -> Passing:
+        shapes = [Shape(bodies.radii_km(name, radii)[0]) for name in (body, "sun")]
+        return Passing(body, "sun", shapes[0], shapes[1], observer)
+
+    def _transits(
+        self, body: str, low_tt_s: float, high_tt_s: float, margin_arcsec: float | None
+    ) -> list[Event]:
+        greatest, contacts = self.contact_times(body, low_tt_s, high_tt_s, margin_arcsec or 0.0)
+        half = np.nan_to_num((contacts[:, 3] - contacts[:, 0]) / 2.0, nan=0.0) + 3600.0
+        spec = EventSpec(self.name, body, 0.0)
+        return [
+            Event(
+                replace(spec, date_tt_s=float(t)),
+                float(t - h),
+                float(t),
+                float(t + h),
+                f"{body.capitalize()} crosses the Sun, {civil_day(t)}",
+            )
+            for t, h in zip(greatest, half, strict=True)
+        ]
+
+    def _near_conjunctions(self, body: str, start_tt_s: float, end_tt_s: float) -> np.ndarray:
+        """Return inferior conjunctions at which the planet passes near the Sun, to some minutes."""
+        step = _GRID_S[body]
+        first, last = timescale.SPAN
+        grid = np.arange(max(first, start_tt_s - step), min(last, end_tt_s + 2 * step), step)
+        gain = np.unwrap(_longitude_gain(body, grid)[0])
+        turns = np.arange(np.ceil(gain[0] / (2 * np.pi)), gain[-1] / (2 * np.pi)) * 2 * np.pi
+        t = np.interp(turns, gain, grid)
+        for _ in range(4):
+            angle, rate, _ = _longitude_gain(body, t)
+            ahead = (angle + np.pi) % (2 * np.pi) - np.pi
+            t = np.clip(t - ahead / rate, first, last)
+        apart = _longitude_gain(body, t)[2]
+        return t[apart * RAD_ARCSEC < _NEAR_ARCSEC]
+
+    @staticmethod
+    def _any_sun(observer: Observer, outer: np.ndarray) -> bool:
+        times = np.linspace(outer[0], outer[1], 97)
+        sun = places.direction("sun", observer, times).vector_km
+        return bool(view(sun, observer, times).visible.any())
+
+
+def _longitude_gain(body: str, tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Return the planet's heliocentric ecliptic longitude minus the Earth's, its rate, and the angle Sun-Earth-planet.
+
+    Radians and rad/s; ecliptic of J2000.0, geometric.
+    """
+    tdb_s = timescale.tdb_s(tt_s)
+    sun, sun_v = ephemeris.state_km_km_s("sun", tdb_s)
+    longitude, rate, position = [], [], []
+    for name in (body, "earth"):
+        r, v = ephemeris.state_km_km_s(name, tdb_s)
+        r, v = r - sun, v - sun_v
+        y = r[1] * _COS_EPS + r[2] * _SIN_EPS
+        vy = v[1] * _COS_EPS + v[2] * _SIN_EPS
+        longitude.append(np.arctan2(y, r[0]))
+        rate.append((r[0] * vy - y * v[0]) / (r[0] ** 2 + y**2))
+        position.append(r)
+    planet, earth = position
+    to_planet, to_sun = planet - earth, -earth
+    apart = places.separation_arcsec(to_planet, to_sun) / RAD_ARCSEC
+    return longitude[0] - longitude[1], rate[0] - rate[1], apart
+
+
+_OBLIQUITY_RAD = np.deg2rad(84381.406 / 3600.0)  # of J2000.0, IAU 2006 (Hilton et al. 2006)
+_COS_EPS, _SIN_EPS = np.cos(_OBLIQUITY_RAD), np.sin(_OBLIQUITY_RAD)
