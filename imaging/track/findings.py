@@ -1,0 +1,304 @@
+"""What the difference between observed and computed means: readings of a track, weighed against each other.
+
+A reading is a way to understand the frames: the plan as it stands, a clock a whole hour off, another date, the site's
+longitude with the wrong sign, a mirrored camera, another body. Each is fitted (`imaging.track.fit`) and weighed by its
+Laplace evidence and by how often such a slip happens; odds are against the plain reading. A claim needs odds of
+10 000 to 1, and to be a hundred times likelier than any other reading; nothing is ever applied.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from imaging.track.fit import Priors, TrackFit, fit_track, start_rotation_deg, turn
+from imaging.track.path import PredictedPath
+from imaging.track.sightings import Sightings
+from planner.errors import NoSolutionError
+
+CLAIM_LOG_ODDS = np.log(1e4)
+RIVAL_LOG_ODDS = np.log(1e2)
+MOST_ODDS = 1e12  # beyond this the model of the noise, not the data, sets the number
+SLIP = np.log(1e-3)  # how often any one kind of slip happens, from our judgement
+SMALL_CLOCK_S = 120.0
+HALF_HOURS = tuple(n for n in range(-28, 29) if n)  # civil zones lie within 14 h of UTC
+DAY_S = 86400.0
+
+
+@dataclass(frozen=True)
+class Finding:
+    """One thing found: its name, the odds for it (to one), and what it means in plain words."""
+
+    name: str
+    odds: float
+    sentence: str
+    value: float = float("nan")
+    sigma: float = float("nan")
+    unit: str = ""
+
+
+@dataclass(frozen=True)
+class Reading:
+    """A way to understand the frames, and how well it fits."""
+
+    name: str
+    fit: TrackFit
+    sightings: Sightings
+    path: PredictedPath
+    clock_s: float
+    log_weight: float
+    sentence: str = ""
+
+    @property
+    def clock_offset_s(self) -> float:
+        """Stamps minus true UTC in this reading."""
+        return self.clock_s + self.fit.value["clock_s"]
+
+
+@dataclass(frozen=True)
+class Question:
+    """Everything the readings need besides the sightings.
+
+    `other_sites`: name to path, for a flipped sign. `other_bodies`: body to path. `plan_middle_tt_s`: the middle
+    of the frames the plan asked for. `shifted_site(north_km, east_km)` gives the path of a displaced observer.
+    `jitter_arcsec`: scatter usual for this rig and seeing. `clock_sigma_s`: what the rig's clock promises.
+    """
+
+    path: PredictedPath
+    jitter_arcsec: float
+    clock_sigma_s: float
+    plan_middle_tt_s: float
+    other_sites: dict[str, PredictedPath]
+    other_bodies: dict[str, PredictedPath]
+    shifted_site: Callable[[float, float], PredictedPath] | None = None
+    target: str = "the target"
+
+
+@dataclass(frozen=True)
+class Diagnosis:
+    """The reading believed, all readings tried (best first), and the findings.
+
+    `explained` is False when no reading brings the frames onto the prediction.
+    """
+
+    reading: Reading
+    readings: tuple[Reading, ...]
+    findings: tuple[Finding, ...]
+    explained: bool
+
+
+def diagnose(sightings: Sightings, question: Question) -> Diagnosis:
+    """Weigh the readings of a track and return the one believed with its findings.
+
+    Raises NoSolutionError when the target is nowhere near its reference in any reading.
+    """
+    readings = [reading for reading in _readings(sightings, question) if reading is not None]
+    if not readings:
+        raise NoSolutionError(
+            "the target is nowhere near its reference at the times of the frames, in any reading"
+        )
+    readings.sort(key=lambda reading: -reading.log_weight)
+    plain = next((reading for reading in readings if reading.name == "plain"), None)
+    best = readings[0]
+    rival = next((reading for reading in readings[1:] if _rivals(best, reading)), None)
+    plain_weight = plain.log_weight if plain else -np.inf
+    claimed = best.name != "plain" and best.log_weight - plain_weight > CLAIM_LOG_ODDS
+    findings: list[Finding] = []
+    if claimed and rival is not None and rival.name != "plain":
+        if best.log_weight - rival.log_weight < RIVAL_LOG_ODDS:
+            findings.append(
+                Finding(
+                    "ambiguous",
+                    odds(best.log_weight - rival.log_weight),
+                    f"The plan as it stands does not fit; either {lower_first(best.sentence)} or, nearly as "
+                    f"likely, {lower_first(rival.sentence)}",
+                )
+            )
+            claimed = False
+    believed = best if claimed or plain is None else plain
+    limit = explained_limit_arcsec(sightings, question)
+    explained = bool(believed.fit.jitter_arcsec <= limit and believed.fit.used.mean() > 0.5)
+    if not explained and not findings:
+        findings.append(
+            Finding(
+                "unexplained",
+                float("nan"),
+                f"The measured places do not follow the prediction of {question.target}: they scatter by "
+                f"{believed.fit.jitter_arcsec:.1f} arcsec, and no slip that was tried (clock, date, site, mirror, "
+                "body) explains it.",
+            )
+        )
+    elif believed.name != "plain":
+        findings.append(Finding(believed.name, odds(believed.log_weight - plain_weight), believed.sentence))
+    if len(sightings) >= 2:
+        believed = _settled(believed, question)
+    return Diagnosis(believed, tuple(readings), tuple(findings), explained)
+
+
+def _rivals(best: Reading, other: Reading) -> bool:
+    """Two readings of one name differ in detail only, and a whole hour is also an odd amount."""
+    general = other.name == "clock-far-off" and best.name in ("zone", "date")
+    return other.name != best.name and not general
+
+
+def explained_limit_arcsec(sightings: Sightings, question: Question) -> float:
+    """Return the scatter above which a track does not follow its path: far more than seeing and measuring make."""
+    own = np.sqrt(np.median(np.einsum("nii->n", sightings.covariance_arcsec2)) / 2.0)
+    return float(max(5.0 * question.jitter_arcsec, 5.0 * own))
+
+
+def odds(log_odds: float) -> float:
+    """Return odds to one, no higher than the noise model can defend."""
+    return float(min(np.exp(min(log_odds, 60.0)), MOST_ODDS))
+
+
+def lower_first(text: str) -> str:
+    """Return a sentence for use within another."""
+    return text[:1].lower() + text[1:].rstrip(".")
+
+
+def _readings(s: Sightings, q: Question):  # type: ignore[no-untyped-def]
+    priors = Priors(clock_s=SMALL_CLOCK_S, jitter_arcsec=q.jitter_arcsec)
+
+    def tried(name, path, clock_s=0.0, log_prior=0.0, sightings=s, sentence="", priors=priors):
+        try:
+            fit = fit_track(sightings, path, priors, start_clock_s=clock_s)
+        except (NoSolutionError, np.linalg.LinAlgError, ValueError):
+            return None
+        clock = float(np.mean(clock_s))
+        return Reading(name, fit, sightings, path, clock, fit.log_evidence + log_prior, sentence)
+
+    yield tried("plain", q.path)
+    if len(s) < 2:
+        return
+    hours = [n * 1800.0 for n in HALF_HOURS]
+    for clock_s in _closest(s, q.path, hours, 2):
+        yield tried("zone", q.path, clock_s, SLIP - np.log(len(hours)), sentence=_zone_sentence(clock_s))
+    days = sorted(_day_candidates(s, q))
+    for clock_s in _closest(s, q.path, days, 2):
+        yield tried("date", q.path, clock_s, SLIP - np.log(40.0), sentence=_date_sentence(clock_s))
+        for hour in (-1.0, 1.0, -2.0, 2.0):
+            both = clock_s + 3600.0 * hour
+            sentence = _date_sentence(clock_s) + f" In addition they are {abs(hour):.0f} h off."
+            yield tried("date", q.path, both, 2 * SLIP, sentence=sentence)
+    for name, path in q.other_sites.items():
+        yield tried(name, path, log_prior=SLIP, sentence=_SITE_SENTENCE[name])
+    if s.on_disc:
+        yield tried("mirrored", q.path, log_prior=SLIP, sightings=s.mirrored(), sentence=_MIRRORED)
+    for body, path in q.other_bodies.items():
+        sentence = f"What was measured moves as {body} does: it is {body}, not {q.target}."
+        yield tried("wrong-body", path, log_prior=SLIP - np.log(8.0), sentence=sentence)
+    still = _still_path(s, q.path)
+    if still is not None and len(s) >= 3:
+        wide = replace(priors, clock_s=0.0, rotation_deg=0.0, log_scale=0.0, center_arcsec=600.0)
+        where = "on the disc" if s.on_disc else "among the stars"
+        sentence = f"What was measured stands still {where}: it is not {q.target}."
+        yield tried("wrong-body", still, log_prior=SLIP, sentence=sentence, priors=wide)
+    anywhere = replace(priors, clock_s=DAY_S / 2)
+    for clock_s in _closest(s, q.path, list(np.arange(-12.0, 12.01, 0.25) * 3600.0), 1):
+        sentence = "The frames' clock is off by an odd amount."
+        yield tried("clock-far-off", q.path, clock_s, SLIP, sentence=sentence, priors=anywhere)
+
+
+_MIRRORED = "The frames are mirrored: left and right are swapped against what the rig file says."
+_SITE_SENTENCE = {
+    "longitude-sign": "The site's longitude has the wrong sign: the frames fit a site on the other side of Greenwich "
+    "(longitudes are east positive).",
+    "latitude-sign": "The site's latitude has the wrong sign: the frames fit a site on the other hemisphere.",
+}
+
+
+def _zone_sentence(clock_s: float) -> str:
+    side = "ahead of" if clock_s > 0 else "behind"
+    return (
+        f"The frames' times are {abs(clock_s) / 3600:g} h {side} UTC: a time zone or daylight saving was left in. "
+        f"Read them with --zone {_zone_text(clock_s)} or set the camera to UTC."
+    )
+
+
+def _zone_text(clock_s: float) -> str:
+    minutes = round(clock_s / 60)
+    return f"{'-' if minutes < 0 else '+'}{abs(minutes) // 60:02d}:{abs(minutes) % 60:02d}"
+
+
+def _date_sentence(clock_s: float) -> str:
+    days = round(clock_s / DAY_S)
+    side = "later" if days > 0 else "earlier"
+    return f"The date in the frames is wrong: it is {abs(days)} day{'s' if abs(days) != 1 else ''} {side} than it was."
+
+
+def _day_candidates(s: Sightings, q: Question) -> set[float]:
+    """Whole days that slips produce: a day or two, a week, a month, a year, and what leads to the plan's own time."""
+    days = {1, 2, 3, 7, 28, 29, 30, 31, 365, 366}
+    toward = round((float(np.median(s.tt_s)) - q.plan_middle_tt_s) / DAY_S)
+    all_days = days | {-day for day in days} | {toward - 1, toward, toward + 1}
+    return {day * DAY_S for day in all_days if day}
+
+
+def _closest(s: Sightings, path: PredictedPath, clocks_s: list[float], count: int) -> list[float]:
+    """Return the few clock errors, of many, that lay the path best on the sightings, rotation free, scale known."""
+    sample = s.part(np.unique(np.linspace(0, len(s) - 1, min(len(s), 25)).astype(int)))
+    worth = [(_misfit(sample, path, clock_s), clock_s) for clock_s in clocks_s]
+    return [clock_s for misfit, clock_s in sorted(worth)[:count] if np.isfinite(misfit)]
+
+
+def _misfit(s: Sightings, path: PredictedPath, clock_s: float) -> float:
+    t = s.tt_s - clock_s
+    try:
+        place = s.expected(path, t)
+        later = s.expected(path, t + 60.0)
+    except Exception as beyond:
+        from planner.errors import InputError
+
+        if isinstance(beyond, InputError):  # beyond the ephemeris: no such reading
+            return float("inf")
+        raise
+    good = np.isfinite(place).all(axis=1) & np.isfinite(later).all(axis=1)
+    if good.sum() < 2:
+        return float("inf")
+    measured = s.places
+    if s.on_disc:
+        measured = turn(measured, np.radians(start_rotation_deg(s, place)))
+    residual = (measured - place)[good]
+    velocity = ((later - place) / 60.0)[good]
+    slope = np.sum(residual * velocity) / max(np.sum(velocity**2), 1e-30)
+    slope = np.clip(slope, -600.0, 600.0)
+    return float(np.median(np.sum((residual - slope * velocity) ** 2, axis=1)))
+
+
+def _still_path(s: Sightings, path: PredictedPath) -> PredictedPath | None:
+    """Return a path that stands still where the median of the sightings is."""
+    if s.on_disc:
+        place = np.median(s.places, axis=0)
+    else:
+        place = np.array([np.median(s.anchor_ra_deg), np.median(s.anchor_dec_deg)])
+    return _Still(path, place, s.on_disc)
+
+
+class _Still(PredictedPath):
+    """A point at rest on the disc or among the stars, in place of the target."""
+
+    def __init__(self, path: PredictedPath, place: np.ndarray, on_disc: bool):
+        self._path, self._place, self._on_disc = path, place, on_disc
+
+    def at(self, tt_s):  # type: ignore[no-untyped-def]
+        """Return the same place at all times."""
+        expected = self._path.at(tt_s)
+        fill = np.ones_like(expected.tt_s)
+        if self._on_disc:
+            return replace(expected, east_arcsec=self._place[0] * fill, north_arcsec=self._place[1] * fill)
+        return replace(expected, ra_deg=self._place[0] * fill, dec_deg=self._place[1] * fill)
+
+
+def _settled(reading: Reading, question: Question) -> Reading:
+    """Fit the believed reading once more with a clock that no prior holds, so that its sigma is the data's."""
+    free = Priors(clock_s=DAY_S, jitter_arcsec=question.jitter_arcsec)
+    if reading.name == "wrong-body":
+        return reading
+    try:
+        fit = fit_track(reading.sightings, reading.path, free, reading.clock_s)
+    except (NoSolutionError, np.linalg.LinAlgError):
+        return reading
+    return replace(reading, fit=fit)
