@@ -54,6 +54,16 @@ class Canvas:
         """Return canvas pixels of ICRS directions when the anchor is there."""
         return self.from_plane(*sky_to_plane(anchor_ra_deg, anchor_dec_deg, ra_deg, dec_deg))
 
+    def window(self, rows: slice, columns: slice) -> Canvas:
+        """Return the part of the canvas in these rows and columns."""
+        return replace(
+            self,
+            width_px=columns.stop - columns.start,
+            height_px=rows.stop - rows.start,
+            anchor_x_px=self.anchor_x_px - columns.start,
+            anchor_y_px=self.anchor_y_px - rows.start,
+        )
+
     def at_scale(self, scale_arcsec_px: float) -> Canvas:
         """Return the same piece of sky at another scale."""
         factor = self.scale_arcsec_px / scale_arcsec_px

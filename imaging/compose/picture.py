@@ -1,0 +1,53 @@
+"""A composite in linear light, with what was drawn where, before it becomes a file."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from imaging.compose.canvas import Canvas
+from imaging.compose.material import Registered
+
+
+@dataclass(frozen=True)
+class Drawn:
+    """The target as drawn at one instant: canvas pixels of its measured and of its predicted place.
+
+    `displacement_arcsec`: between where it is drawn and where the prediction has it; NaN when it was not measured.
+    """
+
+    frame: Registered
+    x_px: float
+    y_px: float
+    predicted_x_px: float
+    predicted_y_px: float
+    displacement_arcsec: float
+    radius_px: float
+
+
+@dataclass(frozen=True)
+class Picture:
+    """A composite.
+
+    `image`: (rows, columns) or (rows, columns, 3), float32, linear, NaN where no frame reaches; row 0 is the bottom.
+    `anchor_ra_deg`, `anchor_dec_deg`: what the canvas is anchored on at `reference_tt_s`.
+    `used`: every frame that went in, with its role. `tone`: `disc` or `stars`, for the stretch.
+    `enlargement`: by how much bodies are drawn larger than true (1 for none). `left_out`: frames and why.
+    """
+
+    kind: str
+    registered_on: str
+    blend: str
+    image: np.ndarray
+    count: np.ndarray
+    canvas: Canvas
+    anchor_ra_deg: float
+    anchor_dec_deg: float
+    reference_tt_s: float
+    drawn: tuple[Drawn, ...]
+    used: tuple[tuple[Registered, str], ...]
+    tone: str
+    notes: tuple[str, ...] = ()
+    enlargement: float = 1.0
+    left_out: tuple[tuple[str, str], ...] = field(default=())

@@ -1,0 +1,110 @@
+"""From linear light to what a screen or a press shows: a stretch that is measured on the picture, not fixed."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+SKY_TONE = 0.10  # of 0 (black) to 1 (white): a dark grey, so that faint stars have a ground to stand on
+WHITE_TONE = 0.97
+
+
+@dataclass(frozen=True)
+class Stretch:
+    """How values become tones between 0 and 1.
+
+    `kind`: `linear` (tones proportional to light), `disc` (proportional, then encoded as sRGB does) or `stars`
+    (inverse hyperbolic sine of Lupton et al. 1999, AJ 118, 1406, already a display tone). `softening`: value above black
+    where the curve turns from linear to logarithmic.
+    """
+
+    kind: str
+    black: float
+    white: float
+    softening: float = 1.0
+
+    def tones(self, image: np.ndarray) -> np.ndarray:
+        """Return display tones in 0..1, float32; where the picture is empty (NaN) the tone is 0."""
+        value = np.nan_to_num(np.asarray(image, np.float32), nan=self.black)
+        share = np.clip((value - self.black) / (self.white - self.black), 0.0, 1.0)
+        if self.kind == "stars":
+            steep = (self.white - self.black) / self.softening
+            return (np.arcsinh(share * steep) / np.arcsinh(steep)).astype(np.float32)
+        return srgb_encoded(share) if self.kind == "disc" else share.astype(np.float32)
+
+    def sentence(self) -> str:
+        """Return what was done, for the statement of truth."""
+        how = {
+            "linear": "tones proportional to light",
+            "disc": "tones proportional to light, sRGB encoded",
+            "stars": f"inverse hyperbolic sine, softening {self.softening:.4g}",
+        }[self.kind]
+        return f"{how}, black at {self.black:.6g}, white at {self.white:.6g}"
+
+
+def srgb_encoded(light: np.ndarray) -> np.ndarray:
+    """Return sRGB tones of linear light in 0..1 (IEC 61966-2-1)."""
+    light = np.asarray(light, np.float32)
+    return np.where(light <= 0.0031308, 12.92 * light, 1.055 * np.maximum(light, 1e-9) ** (1 / 2.4) - 0.055)
+
+
+def background(image: np.ndarray) -> tuple[float, float]:
+    """Return the background's level and noise: median and spread, clipped at 2.5 sigma until it settles."""
+    values = _sample(image)
+    center, sigma = float(np.median(values)), float(np.std(values))
+    for _ in range(20):
+        kept = values[np.abs(values - center) < 2.5 * sigma] if sigma > 0 else values
+        if kept.size < 16:
+            break
+        before = sigma
+        center, sigma = float(np.median(kept)), float(1.4826 * np.median(np.abs(kept - np.median(kept))))
+        if abs(sigma - before) < 1e-3 * before:
+            break
+    return center, sigma
+
+
+def measured_stretch(image: np.ndarray, kind: str) -> Stretch:
+    """Return the stretch for a picture of this kind (`disc`, `stars`, `linear`), measured on it.
+
+    Stars: the background goes to a dark grey, the brightest pixels (99.98 %) to white. Disc: what lies off the
+    disc goes to black, the brightest hundredth of the disc to just under white.
+    """
+    values = _sample(image)
+    if not values.size:
+        return Stretch("linear", 0.0, 1.0)
+    top = float(np.percentile(values, 99.98))
+    level, sigma = background(image)
+    if kind == "linear":
+        return Stretch("linear", min(0.0, float(values.min())), max(float(values.max()), 1e-6))
+    if kind == "disc":
+        black = float(np.percentile(values, 2.0))
+        half = black + 0.25 * (top - black)
+        lit = values[values > half]
+        bright = float(np.percentile(lit, 99.0)) if lit.size else top
+        white = black + (bright - black) / _light_of(WHITE_TONE)
+        return Stretch("disc", black, max(white, black + 1e-6))
+    black = level - 3.0 * max(sigma, 1e-6 * abs(level), 1e-9)
+    white = max(top, level + 50 * max(sigma, 1e-9))
+    return Stretch("stars", black, white, _softening(level - black, white - black))
+
+
+def _softening(sky: float, span: float) -> float:
+    """Return the softening that puts the sky at SKY_TONE; the curve is monotonic in it."""
+    low, high = sky * 1e-3, span * 1e3
+    for _ in range(80):
+        middle = np.sqrt(low * high)
+        tone = np.arcsinh(sky / middle) / np.arcsinh(span / middle)
+        low, high = (middle, high) if tone > SKY_TONE else (low, middle)
+    return float(np.sqrt(low * high))
+
+
+def _light_of(tone: float) -> float:
+    return ((tone + 0.055) / 1.055) ** 2.4
+
+
+def _sample(image: np.ndarray) -> np.ndarray:
+    plane = image.mean(axis=2) if image.ndim == 3 else image
+    step = max(1, int(np.sqrt(plane.size / 2_000_000)))
+    values = plane[::step, ::step]
+    return values[np.isfinite(values)]
