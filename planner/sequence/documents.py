@@ -293,13 +293,15 @@ def _tidy(value: Any, kind: Any = None) -> Any:
         leaf = not any(isinstance(item, dict | list) for item in plain.values())
         return strictyaml.OneLine(plain) if leaf and type(value).__name__ in _ONE_LINE else plain
     if isinstance(value, datetime):
-        return strictyaml.Moment(moment_text(value))
+        return moment_text(value)
     if isinstance(value, date):
-        return strictyaml.Moment(value.isoformat())
+        return value.isoformat()
     if isinstance(value, dict):
         return {str(name): _tidy(item) for name, item in value.items()}
     if isinstance(value, list | tuple):
-        return [_tidy(item) for item in value]
+        items = [_tidy(item) for item in value]
+        plain_row = all(isinstance(item, str | int | float | strictyaml.Row) for item in items)
+        return strictyaml.Row(items) if plain_row and not any(isinstance(i, str) for i in items) else items
     if isinstance(value, str | int | float | bool) or value is None:
         return value
     raise InputError(f"cannot be written as YAML: {type(value).__name__}")

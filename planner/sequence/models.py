@@ -144,6 +144,28 @@ class EventRequest(Model):
     radii: str | None = None
 
 
+class Wish(Model):
+    """What the pictures are for; everything here has a sensible default."""
+
+    filter: str | None = Field(None, description="one of the rig's filters; default: the rig's first")
+    exposure_s: float | None = Field(None, gt=0, description="default: from the brightness")
+    well_fraction: float = Field(0.5, gt=0, lt=1, description="peak signal over saturation")
+    cadence_s: float | None = Field(None, gt=0, description="of regular frames; default: from the motion")
+    burst_cadence_s: float | None = Field(
+        None, gt=0, description="around contacts; default: as fast as needed"
+    )
+    burst_s: float | None = Field(
+        None, gt=0, description="before and after a contact; default: from its uncertainty"
+    )
+    lead_s: float | None = Field(
+        None, ge=0, description="of frames before the first and after the last contact"
+    )
+    visits: int | None = Field(None, ge=1, le=1000, description="nights of a campaign")
+    frames_per_visit: int = Field(8, ge=1, le=1000)
+    darkness_deg: float = Field(-12.0, ge=-18, le=0, description="the Sun's altitude below which it is night")
+    moon_distance_deg: float = Field(15.0, ge=0, le=180, description="least distance of the Moon on a visit")
+
+
 class Brief(Model):
     """What the user wants: which event, from where, with what, for which result."""
 
@@ -154,6 +176,7 @@ class Brief(Model):
     other_rigs: list[str | Rig] = Field(
         default=[], description="more cameras at the same site: paths or inline"
     )
+    wish: Wish = Wish()
 
 
 class Shot(Model):
@@ -167,6 +190,10 @@ class Shot(Model):
     gain: float = Field(0, ge=0)
     filter: str | None = None
     tracking: Literal["sidereal", "solar", "lunar", "none"] = "sidereal"
+    peak_of: str | None = Field(None, description="whose brightest pixel `peak_e` is")
+    peak_e: float | None = Field(
+        None, ge=0, description="electrons expected there, at the middle of the shot"
+    )
 
 
 class Passage(Model):

@@ -200,7 +200,7 @@ def _scalar(node: yaml.ScalarNode, key: Key, path: str | Path) -> Any:
 
 
 class _Dumper(yaml.CSafeDumper if yaml.__with_libyaml__ else yaml.SafeDumper):  # type: ignore[misc]
-    """Writes text that reads the same under YAML 1.1 and 1.2; moments are plain, as people write them."""
+    """Writes text that reads the same under YAML 1.1 and 1.2: what either takes for a number or a time is quoted."""
 
     def ignore_aliases(self, data: Any) -> bool:
         return True
@@ -213,22 +213,24 @@ for _first, _pairs in CoreResolver.yaml_implicit_resolvers.items():
     _Dumper.yaml_implicit_resolvers.setdefault(_first, []).extend(_pairs)
 
 
-class Moment(str):
-    """A time or date that is written without quotes."""
-
-
 class OneLine(dict):
     """A mapping that is written on one line."""
 
 
-_Dumper.add_representer(Moment, lambda dumper, text: dumper.represent_scalar(_TAG + "timestamp", str(text)))
+class Row(list):
+    """A list that is written on one line."""
+
+
 _Dumper.add_representer(
     OneLine, lambda dumper, data: dumper.represent_mapping(_TAG + "map", data.items(), flow_style=True)
+)
+_Dumper.add_representer(
+    Row, lambda dumper, data: dumper.represent_sequence(_TAG + "seq", data, flow_style=True)
 )
 
 
 def dump(data: Any) -> str:
-    """Return data as YAML text in the order given, one line for each `OneLine`; reads back equal."""
+    """Return data as YAML text in the order given, one line for each `OneLine` and `Row`; reads back equal."""
     try:
         return yaml.dump(data, Dumper=_Dumper, sort_keys=False, allow_unicode=True, width=2**20)
     except yaml.representer.RepresenterError as wrong:

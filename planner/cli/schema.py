@@ -1,0 +1,23 @@
+"""`syzygraph schema`: JSON Schema of the documents, for editors."""
+
+from __future__ import annotations
+
+import json
+
+import click
+
+
+@click.command("schema")
+@click.argument("document", type=click.Choice(["site", "rig", "brief", "plan"]))
+def command(document: str) -> None:
+    """Print the JSON Schema of a site, a rig, a brief or a plan.
+
+    \b
+    Example:
+      syzygraph schema brief > brief.schema.json
+    """
+    from planner.sequence import models
+
+    model = {"site": models.Site, "rig": models.Rig, "brief": models.Brief, "plan": models.Plan}[document]
+    schema = {"$schema": "https://json-schema.org/draft/2020-12/schema", **model.model_json_schema()}
+    click.echo(json.dumps(schema, indent=2))

@@ -1,0 +1,78 @@
+"""How long to expose: from the brightness of what is in the field to seconds, and what that promises."""
+
+from __future__ import annotations
+
+from itertools import pairwise
+
+import numpy as np
+
+from planner.sequence import radiometry
+from planner.sequence.models import Rig, Site
+from planner.sequence.radiometry import Band
+from planner.sky.discs import SkyDisc
+
+# An exposure is stepped where the brightness has changed by this factor: a third of a stop, common practice, no source.
+STEP = 2 ** (1 / 3)
+
+
+def peak_rate_e_s(
+    rig: Rig, site: Site, through: Band, body: str, disc: SkyDisc, altitude_deg: np.ndarray
+) -> np.ndarray:
+    """Return electrons a second in the brightest pixel of a disc: extinction, seeing and blur included, on the axis."""
+    from planner.sky.photometry import airmass
+
+    mass = airmass(np.maximum(altitude_deg, 0.0))
+    magnitude = radiometry.extinguished(disc.magnitude, mass, site.extinction_mag)
+    scale = rig.scale_arcsec_px
+    unblurred = radiometry.disc_rate_e_s_px(
+        through, body, magnitude, disc.semidiameter_arcsec, disc.flattening, disc.phase_angle_deg, scale
+    )
+    fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass) / scale
+    lit = (1 + np.cos(np.radians(disc.phase_angle_deg))) / 2 if body != "sun" else 1.0
+    radius_px = disc.semidiameter_arcsec / scale * np.sqrt(lit)
+    kept = radiometry.blurred_peak_fraction(radius_px, fwhm_px)
+    total = radiometry.rate_e_s(through, magnitude)
+    star_like = total * radiometry.star_peak_fraction(fwhm_px)
+    # a disc lost in the blur peaks like a star; a large one like its surface
+    return np.minimum(unblurred * kept, star_like)
+
+
+def rounded_down(exposure_s: float) -> float:
+    """Return an exposure as people set it: two significant digits, never longer."""
+    if exposure_s <= 0:
+        return 0.0
+    unit = 10.0 ** (np.floor(np.log10(exposure_s)) - 1)
+    return float(f"{np.floor(exposure_s / unit * (1 + 1e-12)) * unit:.3g}")
+
+
+def wanted_exposure_s(rig: Rig, rate_e_s: np.ndarray, well_fraction: float) -> np.ndarray:
+    """Return the exposure that fills this part of the range of the brightest pixel, within what the camera can do."""
+    wanted = well_fraction * radiometry.saturation_e(rig) / np.asarray(rate_e_s, float)
+    return np.clip(wanted, rig.sensor.min_exposure_s, rig.sensor.max_exposure_s)
+
+
+def steps(wanted_s: np.ndarray) -> list[slice]:
+    """Return stretches within each of which the wanted exposure stays in one step of a third of a stop."""
+    if not len(wanted_s):
+        return []
+    rung = np.floor(np.log(wanted_s) / np.log(STEP))
+    edges = [0, *(np.flatnonzero(np.diff(rung)) + 1), len(wanted_s)]
+    return [slice(int(first), int(end)) for first, end in pairwise(edges)]
+
+
+def rounded_up(exposure_s: float) -> float:
+    """Return an exposure as people set it: two significant digits, never shorter."""
+    unit = 10.0 ** (np.floor(np.log10(exposure_s)) - 1)
+    return float(f"{np.ceil(exposure_s / unit * (1 - 1e-12)) * unit:.3g}")
+
+
+def time_for_signal_to_noise_s(
+    rate_e_s: np.ndarray, background_e_s: np.ndarray, read_variance_e2: np.ndarray, wanted: float
+) -> np.ndarray:
+    """Return the exposure in which a source over a background reaches a signal-to-noise.
+
+    The CCD equation S t / sqrt((S + B) t + R) = wanted, solved for t (Howell 2006, Handbook of CCD Astronomy, 4.4).
+    """
+    rate = np.asarray(rate_e_s, float)
+    half = wanted**2 * (rate + background_e_s) / (2 * rate**2)
+    return half + np.sqrt(half**2 + wanted**2 * np.asarray(read_variance_e2) / rate**2)

@@ -1,0 +1,79 @@
+"""Where the camera points: what fits the field, and how the frame lies on the sky."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from planner.sequence.models import Rig
+
+MARGIN = 0.12  # of the field's width and height kept clear at each edge; common practice, no source
+
+
+@dataclass(frozen=True)
+class Field:
+    """The field of a camera on the tangent plane: half sides in arcseconds, `rotation_deg` of its up direction."""
+
+    half_width_arcsec: float
+    half_height_arcsec: float
+    rotation_deg: float
+    parity: int = 1
+
+    def along(self, east_arcsec: np.ndarray, north_arcsec: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return (right, up) in arcseconds of offsets on the sky."""
+        sin, cos = np.sin(np.radians(self.rotation_deg)), np.cos(np.radians(self.rotation_deg))
+        up = east_arcsec * sin + north_arcsec * cos
+        right = (-east_arcsec * cos + north_arcsec * sin) * self.parity
+        return right, up
+
+    def on_sky(self, right_arcsec: np.ndarray, up_arcsec: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return (east, north) in arcseconds of offsets in the frame: the inverse of `along`."""
+        sin, cos = np.sin(np.radians(self.rotation_deg)), np.cos(np.radians(self.rotation_deg))
+        right = np.asarray(right_arcsec) * self.parity
+        return up_arcsec * sin - right * cos, up_arcsec * cos + right * sin
+
+    @property
+    def radius_deg(self) -> float:
+        """Half the diagonal."""
+        return float(np.hypot(self.half_width_arcsec, self.half_height_arcsec)) / 3600
+
+
+def field_of(rig: Rig, rotation_deg: float | None = None) -> Field:
+    """Return the field of a rig, at its camera angle unless another is given."""
+    scale = rig.scale_arcsec_px
+    return Field(
+        rig.sensor.width_px * scale / 2,
+        rig.sensor.height_px * scale / 2,
+        rig.camera_angle_deg if rotation_deg is None else rotation_deg,
+        -1 if rig.mirrored else 1,
+    )
+
+
+@dataclass(frozen=True)
+class Framing:
+    """Where the middle of the frame points for each place of a track; `whole` when one pointing holds all of it."""
+
+    ra_deg: np.ndarray
+    dec_deg: np.ndarray
+    whole: bool
+
+
+def frame_track(field: Field, ra_deg: np.ndarray, dec_deg: np.ndarray, margin: float = MARGIN) -> Framing:
+    """Return pointings that keep a track inside the margin: one for all where it fits, else the least shifts of it."""
+    from planner.sky.places import offsets_arcsec, radec_deg, radec_from_offsets, unit_vector
+
+    middle = unit_vector(ra_deg, dec_deg).mean(axis=1, keepdims=True)
+    ra0, dec0 = (float(angle[0]) for angle in radec_deg(middle))
+    right, up = field.along(*offsets_arcsec(ra0, dec0, ra_deg, dec_deg))
+    reach_x, reach_y = field.half_width_arcsec * (1 - 2 * margin), field.half_height_arcsec * (1 - 2 * margin)
+    middle_x, middle_y = (right.min() + right.max()) / 2, (up.min() + up.max()) / 2
+    whole = bool(np.ptp(right) <= 2 * reach_x and np.ptp(up) <= 2 * reach_y)
+    aim_x = middle_x + _excess(right - middle_x, reach_x)
+    aim_y = middle_y + _excess(up - middle_y, reach_y)
+    ra_aim, dec_aim = radec_from_offsets(ra0, dec0, *field.on_sky(aim_x, aim_y))
+    return Framing(ra_aim, dec_aim, whole)
+
+
+def _excess(offset: np.ndarray, reach: float) -> np.ndarray:
+    return offset - np.clip(offset, -reach, reach)
