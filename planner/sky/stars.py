@@ -1,0 +1,282 @@
+"""Stars at a date: all stars in a field, and one star by name, with proper motion and parallax.
+
+To G = 10 everywhere on the sky. Positions are accurate to what `sigma_mas` says: 0.2 mas at 2016.0, then growing
+with the uncertainty of the motion (0.05 mas/yr where Hipparcos saw the star, 20 mas/yr where nobody did).
+"""
+
+from __future__ import annotations
+
+import re
+from dataclasses import dataclass
+
+import numpy as np
+
+from planner.errors import InputError
+from planner.sky.bodies import AU_KM
+from planner.sky.ephemeris import position_km
+from planner.sky.observer import Observer
+from planner.sky.places import observer_position_km, radec_deg, separation_arcsec, unit_vector
+from planner.sky.starlist import EPOCH_YEAR, STAR, star_list
+from planner.sky.timescale import YEAR_S, tdb_s
+
+_MAS = np.pi / 648e6
+_EPOCH_TT_S = (EPOCH_YEAR - 2000.0) * YEAR_S
+_FASTEST_DEG_YEAR = 10.4 / 3600.0  # Barnard's star
+
+# IAU Working Group on Star Names, Catalog of Star Names: the brightest and those the Moon can cover (from memory)
+NAMED = {
+    "achernar": 7588, "acrux": 60718, "aldebaran": 21421, "alcyone": 17702, "algol": 14576, "alnilam": 26311,
+    "altair": 97649, "antares": 80763, "arcturus": 69673, "betelgeuse": 27989, "canopus": 30438, "capella": 24608,
+    "castor": 36850, "dabih": 100345, "deneb": 102098, "elnath": 25428, "fomalhaut": 113368, "merope": 17608,
+    "nunki": 92855, "polaris": 11767, "pollux": 37826, "porrima": 61941, "procyon": 37279, "regulus": 49669,
+    "rigel": 24436, "sirius": 32349, "spica": 65474, "vega": 91262, "zubenelgenubi": 72622,
+}  # fmt: skip
+
+
+@dataclass(frozen=True)
+class StarField:
+    """Stars at one date; arrays of shape (n,), brightest first.
+
+    `ra_deg`, `dec_deg`: ICRS at the date, with proper motion and the parallax seen from the geocentre.
+    `magnitude`: what a camera with a visual response records: Johnson V from Gaia's three bands.
+    `bp_rp`: colour, NaN where unknown. `sigma_mas`: 1-sigma of the position, one coordinate, at the date.
+    `index`: rows of the star list.
+    """
+
+    ra_deg: np.ndarray
+    dec_deg: np.ndarray
+    magnitude: np.ndarray
+    g_mag: np.ndarray
+    bp_rp: np.ndarray
+    sigma_mas: np.ndarray
+    index: np.ndarray
+
+    def __len__(self) -> int:
+        """Return the number of stars."""
+        return len(self.index)
+
+    @property
+    def name(self) -> tuple[str, ...]:
+        """Names, made when asked for: `HIP 21421`, or `Gaia DR3 ...`."""
+        return tuple(_name(row) for row in star_list()[self.index])
+
+    def select(self, keep: np.ndarray) -> StarField:
+        """Return the stars that a mask or an array of rows keeps."""
+        return StarField(
+            *(
+                getattr(self, name)[keep]
+                for name in ("ra_deg", "dec_deg", "magnitude", "g_mag", "bp_rp", "sigma_mas", "index")
+            )
+        )
+
+    def stars(self) -> list[Star]:
+        """Return each as a `Star`, with its motion."""
+        return [_star(star_list()[row]) for row in self.index]
+
+
+@dataclass(frozen=True)
+class Star:
+    """One star with its motion: ICRS position at `epoch_year`, proper motion (that in right ascension times cos dec)."""
+
+    name: str
+    ra_deg: float
+    dec_deg: float
+    epoch_year: float
+    pm_ra_mas_yr: float
+    pm_dec_mas_yr: float
+    parallax_mas: float
+    magnitude: float
+    g_mag: float
+    sigma_position_mas: float
+    sigma_pm_mas_yr: float
+    sigma_parallax_mas: float = 0.0
+
+    def sigma_mas(self, tt_s: np.ndarray | float) -> np.ndarray:
+        """Return the 1-sigma of the position at a date, one coordinate, in mas."""
+        years = np.asarray(tt_s, float) / YEAR_S + 2000.0 - self.epoch_year
+        return np.sqrt(
+            self.sigma_position_mas**2 + (self.sigma_pm_mas_yr * years) ** 2 + self.sigma_parallax_mas**2
+        )
+
+    def vector(
+        self, observer: Observer | None, tt_s: np.ndarray, observer_km: np.ndarray | None = None
+    ) -> np.ndarray:
+        """Return un-aberrated unit vectors (3, n), ICRS axes, with proper motion and parallax at these times."""
+        tt_s = np.atleast_1d(np.asarray(tt_s, float))
+        here = observer_position_km(observer, tt_s) if observer_km is None else observer_km
+        years = tt_s / YEAR_S + 2000.0 - self.epoch_year
+        ra, dec = np.radians(self.ra_deg), np.radians(self.dec_deg)
+        start = unit_vector(self.ra_deg, self.dec_deg)
+        east = np.array([-np.sin(ra), np.cos(ra), 0.0])
+        north = np.array([-np.sin(dec) * np.cos(ra), -np.sin(dec) * np.sin(ra), np.cos(dec)])
+        motion = (east * self.pm_ra_mas_yr + north * self.pm_dec_mas_yr) * _MAS
+        vector = start[:, None] + motion[:, None] * years - self.parallax_mas * _MAS * here / AU_KM
+        return vector / np.sqrt((vector**2).sum(axis=0))
+
+    def place(self, observer: Observer | None, tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return un-aberrated (ra_deg, dec_deg), ICRS axes, with proper motion and parallax at these times."""
+        return radec_deg(self.vector(observer, tt_s))
+
+
+def stars_in_field(
+    ra_deg: float, dec_deg: float, radius_deg: float, tt_s: float, magnitude_limit: float | None = None
+) -> StarField:
+    """Return the stars within a radius of a direction (ICRS), at the date, brightest first.
+
+    `magnitude_limit` is in `magnitude` (V). A field of 20 degrees takes 20 ms.
+    """
+    table = star_list()
+    slack = _FASTEST_DEG_YEAR * abs(tt_s - _EPOCH_TT_S) / YEAR_S + 0.001
+    dec = table["dec_deg"]
+    low, high = np.searchsorted(dec, [dec_deg - radius_deg - slack, dec_deg + radius_deg + slack])
+    rows = np.arange(low, high)
+    if magnitude_limit is not None:
+        rows = rows[table["v"][low:high] <= magnitude_limit]
+    centre = unit_vector(ra_deg, dec_deg)
+    near = np.cos(np.radians(min(radius_deg + slack, 180.0)))
+    part = unit_vector(table["ra_deg"][rows], dec[rows])
+    rows = rows[centre @ part >= near - 1e-12]
+    field = _at_date(rows, tt_s)
+    place = unit_vector(field.ra_deg, field.dec_deg)
+    inside = separation_arcsec(place, np.broadcast_to(centre[:, None], place.shape)) <= radius_deg * 3600.0
+    return field.select(inside)
+
+
+def all_stars(tt_s: float, magnitude_limit: float | None = None) -> StarField:
+    """Return all stars at the date, brightest first, to a limit of `magnitude` (V)."""
+    table = star_list()
+    rows = np.arange(len(table))
+    if magnitude_limit is not None:
+        rows = rows[np.asarray(table["v"]) <= magnitude_limit]
+    return _at_date(rows, tt_s)
+
+
+def _at_date(rows: np.ndarray, tt_s: float) -> StarField:
+    table = star_list()[rows]
+    order = np.argsort(table["v"], kind="stable")
+    table, rows = table[order], rows[order]
+    years = (tt_s - _EPOCH_TT_S) / YEAR_S
+    ra, dec = np.radians(table["ra_deg"]), np.radians(table["dec_deg"])
+    earth_au = position_km("earth", tdb_s(np.array([tt_s])))[:, 0] / AU_KM
+    x, y, z = unit_vector(table["ra_deg"], table["dec_deg"])
+    east_au = -np.sin(ra) * earth_au[0] + np.cos(ra) * earth_au[1]
+    north_au = (
+        -np.sin(dec) * (np.cos(ra) * earth_au[0] + np.sin(ra) * earth_au[1]) + np.cos(dec) * earth_au[2]
+    )
+    parallax = table["parallax"].astype(float)
+    east = (table["pm_ra"] * years - parallax * east_au) * _MAS
+    north = (table["pm_dec"] * years - parallax * north_au) * _MAS
+    moved = np.stack(
+        [
+            x - np.sin(ra) * east - np.sin(dec) * np.cos(ra) * north,
+            y + np.cos(ra) * east - np.sin(dec) * np.sin(ra) * north,
+            z + np.cos(dec) * north,
+        ]
+    )
+    ra_deg, dec_deg = radec_deg(moved)
+    return StarField(
+        ra_deg=ra_deg,
+        dec_deg=dec_deg,
+        magnitude=table["v"].astype(float),
+        g_mag=table["g"].astype(float),
+        bp_rp=(table["bp"] - table["rp"]).astype(float),
+        sigma_mas=np.hypot(table["sigma_mas"], table["sigma_pm"] * years).astype(float),
+        index=rows,
+    )
+
+
+def _name(row: np.void) -> str:
+    return f"HIP {row['hip']}" if row["hip"] > 0 else f"Gaia DR3 {row['source']}"
+
+
+def _star(row: np.void) -> Star:
+    return Star(
+        name=_name(row),
+        ra_deg=float(row["ra_deg"]),
+        dec_deg=float(row["dec_deg"]),
+        epoch_year=EPOCH_YEAR,
+        pm_ra_mas_yr=float(row["pm_ra"]),
+        pm_dec_mas_yr=float(row["pm_dec"]),
+        parallax_mas=float(row["parallax"]),
+        magnitude=float(row["v"]),
+        g_mag=float(row["g"]),
+        sigma_position_mas=float(row["sigma_mas"]),
+        sigma_pm_mas_yr=float(row["sigma_pm"]),
+        sigma_parallax_mas=float(row["sigma_parallax"]),
+    )
+
+
+def star(
+    name: str,
+    *,
+    epoch_year: float | None = None,
+    pm_mas_yr: tuple[float, float] | None = None,
+    parallax_mas: float = 0.0,
+    magnitude: float | None = None,
+    sigma_mas: float = 1.0,
+) -> Star:
+    """Return one star: `HIP 21421`, a Gaia source id, an IAU name such as `Aldebaran`, or `RA,DEC` in degrees (ICRS).
+
+    The keywords belong to `RA,DEC` alone: the epoch of the position (default 2016.0), its proper motion
+    (right ascension times cos dec), parallax, magnitude, and 1-sigma of the position.
+    Raises InputError when the star does not exist or the text is none of these.
+    """
+    text = name.strip()
+    if "," in text:
+        return _given_star(text, epoch_year, pm_mas_yr, parallax_mas, magnitude, sigma_mas)
+    if epoch_year is not None or pm_mas_yr is not None:
+        raise InputError(f"star: found {name!r} with an epoch or a motion; allowed only with RA,DEC")
+    table = star_list()
+    hip = re.fullmatch(r"hip\s*(\d{1,6})", text, re.IGNORECASE)
+    number = int(hip[1]) if hip else NAMED.get(text.lower())
+    if number is not None:
+        found = np.flatnonzero(table["hip"] == number) if number > 0 else []
+    elif source := re.fullmatch(r"(?:gaia\s*(?:dr3)?\s*)?(\d{7,20})", text, re.IGNORECASE):
+        found = np.flatnonzero(table["source"] == int(source[1])) if int(source[1]) < 2**63 else []
+    else:
+        from difflib import get_close_matches
+
+        close = get_close_matches(text.lower(), NAMED, n=1)
+        hint = f" (did you mean {close[0].capitalize()}?)" if close else ""
+        raise InputError(
+            f"star: found {name!r}{hint}; allowed are `HIP 21421`, a Gaia DR3 source id, or RA,DEC in degrees"
+        )
+    if not len(found):
+        raise InputError(
+            f"star: found {name!r}, which the catalogue does not hold; allowed are stars of Hipparcos-2, "
+            "of Gaia DR3 to G = 10, or RA,DEC in degrees"
+        )
+    return _star(table[found[0]])
+
+
+def _given_star(
+    text: str,
+    epoch_year: float | None,
+    pm_mas_yr: tuple[float, float] | None,
+    parallax_mas: float,
+    magnitude: float | None,
+    sigma_mas: float,
+) -> Star:
+    try:
+        ra_deg, dec_deg = (float(part) for part in text.split(","))
+    except ValueError:
+        raise InputError(f"star: found {text!r}; allowed is RA,DEC in degrees, such as 68.98,16.51") from None
+    if not (0.0 <= ra_deg < 360.0 and -90.0 <= dec_deg <= 90.0):
+        raise InputError(f"star: found {text!r}; allowed are RA in [0, 360) and DEC in [-90, 90] degrees")
+    brightness = np.nan if magnitude is None else magnitude
+    return Star(
+        name=f"{ra_deg:.5f},{dec_deg:+.5f}",
+        ra_deg=ra_deg,
+        dec_deg=dec_deg,
+        epoch_year=EPOCH_YEAR if epoch_year is None else epoch_year,
+        pm_ra_mas_yr=0.0 if pm_mas_yr is None else pm_mas_yr[0],
+        pm_dec_mas_yr=0.0 if pm_mas_yr is None else pm_mas_yr[1],
+        parallax_mas=parallax_mas,
+        magnitude=brightness,
+        g_mag=brightness,
+        sigma_position_mas=sigma_mas,
+        sigma_pm_mas_yr=20.0 if pm_mas_yr is None else 0.1,
+    )
+
+
+__all__ = ["NAMED", "STAR", "Star", "StarField", "all_stars", "star", "stars_in_field"]
