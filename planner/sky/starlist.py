@@ -18,7 +18,7 @@ from planner.errors import InputError
 
 EPOCH_YEAR = 2016.0
 _HIPPARCOS_YEAR = 1991.25
-_FORMAT = 4
+_FORMAT = 5
 _MAS = np.pi / 648e6
 # 1-sigma of a motion that nobody measured, mas/yr: half of the median total motion of stars of this brightness
 _UNKNOWN_MOTION_MAS_YEAR = 20.0
@@ -32,7 +32,8 @@ STAR = np.dtype(
         ("pm_ra", "<f4"),  # mas/yr, times cos(dec)
         ("pm_dec", "<f4"),
         ("parallax", "<f4"),  # mas
-        ("sigma_mas", "<f4"),  # of the position at 2016.0, one coordinate
+        ("sigma_mas", "<f4"),  # of the position, one coordinate, at the year it was measured
+        ("sigma_year", "<f4"),
         ("sigma_pm", "<f4"),  # mas/yr, one coordinate
         ("sigma_parallax", "<f4"),
         ("g", "<f4"),
@@ -169,7 +170,7 @@ def _merge(gaia: np.ndarray, hip: dict[str, np.ndarray]) -> np.ndarray:
     both["g"] = gaia["g"]
     both["bp"] = np.where(known, gaia["bp"], np.nan)
     both["rp"] = np.where(known, gaia["rp"], np.nan)
-    both["sigma_mas"] = 0.2
+    both["sigma_mas"], both["sigma_year"] = 0.2, EPOCH_YEAR
     both["sigma_pm"] = _UNKNOWN_MOTION_MAS_YEAR
     both["v"] = _v_magnitude(both["g"], both["bp"], both["rp"])
     into = row[chosen]
@@ -196,7 +197,7 @@ def _merge(gaia: np.ndarray, hip: dict[str, np.ndarray]) -> np.ndarray:
     motion_error = np.zeros(len(gaia))
     motion_error[into] = noise / np.sqrt(2.0)
     both["sigma_pm"][carried] = motion_error[carried]
-    both["sigma_mas"][carried] = np.hypot(1.0, motion_error[carried] * years)
+    both["sigma_mas"][carried], both["sigma_year"][carried] = 1.0, _HIPPARCOS_YEAR
     no_colour = np.isnan(both["v"])
     v_hip = hip["hp"] - np.interp(hip["b_v"], _COLOUR, _HP_V)
     both["v"][into] = np.where(no_colour[into], v_hip[chosen], both["v"][into])
@@ -209,7 +210,8 @@ def _merge(gaia: np.ndarray, hip: dict[str, np.ndarray]) -> np.ndarray:
     alone["pm_ra"], alone["pm_dec"] = hip["pm_ra"][lone], hip["pm_dec"][lone]
     alone["parallax"], alone["sigma_parallax"] = hip["parallax"][lone], hip["e_parallax"][lone]
     alone["sigma_pm"] = np.hypot(hip["e_pm_ra"], hip["e_pm_dec"])[lone] / np.sqrt(2.0)
-    alone["sigma_mas"] = np.hypot(np.hypot(hip["e_ra"], hip["e_dec"])[lone], alone["sigma_pm"] * years)
+    alone["sigma_mas"] = np.hypot(hip["e_ra"], hip["e_dec"])[lone] / np.sqrt(2.0)
+    alone["sigma_year"] = _HIPPARCOS_YEAR
     alone["g"], alone["v"] = hp_g[lone], v_hip[lone]
     alone["bp"], alone["rp"] = np.nan, np.nan
     # a Hipparcos entry within 3" of a star of Gaia that is at most a magnitude fainter is that star, seen double

@@ -76,7 +76,10 @@ class StarField:
 
 @dataclass(frozen=True)
 class Star:
-    """One star with its motion: ICRS position at `epoch_year`, proper motion (that in right ascension times cos dec)."""
+    """One star with its motion: ICRS position at `epoch_year`, proper motion in right ascension times cos dec.
+
+    The position was measured, with its sigma, at `sigma_year`.
+    """
 
     name: str
     ra_deg: float
@@ -89,11 +92,12 @@ class Star:
     g_mag: float
     sigma_position_mas: float
     sigma_pm_mas_yr: float
+    sigma_year: float
     sigma_parallax_mas: float = 0.0
 
     def sigma_mas(self, tt_s: np.ndarray | float) -> np.ndarray:
         """Return the 1-sigma of the position at a date, one coordinate, in mas."""
-        years = np.asarray(tt_s, float) / YEAR_S + 2000.0 - self.epoch_year
+        years = np.asarray(tt_s, float) / YEAR_S + 2000.0 - self.sigma_year
         return np.sqrt(
             self.sigma_position_mas**2 + (self.sigma_pm_mas_yr * years) ** 2 + self.sigma_parallax_mas**2
         )
@@ -180,7 +184,9 @@ def _at_date(rows: np.ndarray, tt_s: float) -> StarField:
         magnitude=table["v"].astype(float),
         g_mag=table["g"].astype(float),
         bp_rp=(table["bp"] - table["rp"]).astype(float),
-        sigma_mas=np.hypot(table["sigma_mas"], table["sigma_pm"] * years).astype(float),
+        sigma_mas=np.hypot(
+            table["sigma_mas"], table["sigma_pm"] * (years + EPOCH_YEAR - table["sigma_year"])
+        ).astype(float),
         index=rows,
     )
 
@@ -202,6 +208,7 @@ def _star(row: np.void) -> Star:
         g_mag=float(row["g"]),
         sigma_position_mas=float(row["sigma_mas"]),
         sigma_pm_mas_yr=float(row["sigma_pm"]),
+        sigma_year=float(row["sigma_year"]),
         sigma_parallax_mas=float(row["sigma_parallax"]),
     )
 
@@ -276,6 +283,7 @@ def _given_star(
         g_mag=brightness,
         sigma_position_mas=sigma_mas,
         sigma_pm_mas_yr=20.0 if pm_mas_yr is None else 0.1,
+        sigma_year=EPOCH_YEAR if epoch_year is None else epoch_year,
     )
 
 
