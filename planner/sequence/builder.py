@@ -59,21 +59,21 @@ def circumstances_of(circumstances: Circumstances) -> dict[str, Any]:
     """Return what a plan keeps of the circumstances: plain data, rounded to what is known."""
     from planner.sky.timescale import utc_iso
 
-    def degrees(value: float) -> float | None:
+    def rounded(value: float) -> float | None:
         return round(float(value), 2) if np.isfinite(value) else None
 
     return {
         "happens": circumstances.happens,
         "reason": circumstances.reason,
-        "least_separation_arcsec": round(float(circumstances.least_separation_arcsec), 2),
+        "least_separation_arcsec": rounded(circumstances.least_separation_arcsec),
         "instants": [
             {
                 "name": instant.name,
                 "utc": utc_iso(instant.tt_s, 2),
                 "sigma_s": float(f"{instant.sigma_s:.3g}"),
-                "position_angle_deg": degrees(instant.position_angle_deg),
-                "altitude_deg": degrees(instant.altitude_deg),
-                "azimuth_deg": degrees(instant.azimuth_deg),
+                "position_angle_deg": rounded(instant.position_angle_deg),
+                "altitude_deg": rounded(instant.altitude_deg),
+                "azimuth_deg": rounded(instant.azimuth_deg),
                 "visible": bool(instant.visible),
                 "limited_by": instant.limited_by,
             }

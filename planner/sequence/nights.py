@@ -12,8 +12,9 @@ from planner.errors import InputError
 from planner.sequence import exposure, radiometry
 from planner.sequence.framing import Framing, field_of, frame_track
 from planner.sequence.models import Passage, Shot
-from planner.sequence.passages import tracking_of, whole_tenth_after
+from planner.sequence.passages import next_whole, rows_of_disc, tracking_of
 from planner.sequence.setting import Setting
+from planner.sky.discs import SkyDisc
 
 DAY_S = 86400.0
 STEP_S = 600.0
@@ -21,6 +22,8 @@ _LEAST_VISITS, _MOST_VISITS = 6, 30
 _SPACING_PX = 40.0
 # Enough stars for a plate solution with outliers to spare, each with signal for a centroid of a tenth of a pixel.
 STARS_WANTED, STAR_SIGNAL_TO_NOISE = 60, 20.0
+# A planet clipped so many times over can still be measured by its bloom-free outline (see imaging/discs).
+SATURATION_BORNE = 200.0
 _LONGEST_S = 60.0
 _SKY_WELL_FRACTION = 0.2
 
@@ -34,6 +37,7 @@ class Visits:
     dec_deg: np.ndarray
     altitude_deg: np.ndarray
     path_arcsec: np.ndarray
+    disc: SkyDisc
 
 
 def choose_visits(setting: Setting) -> Visits:
@@ -73,6 +77,7 @@ def choose_visits(setting: Setting) -> Visits:
         target.dec_deg[chosen],
         geometry.altitude_deg[chosen],
         path[chosen],
+        rows_of_disc(target, chosen),
     )
 
 
@@ -97,7 +102,7 @@ def campaign_passages(setting: Setting, tick: Callable[[int, int], None] | None 
     exposures = _star_exposures_s(setting, visits, framing)
     passages = []
     for index in range(len(visits.tt_s)):
-        start, _ = whole_tenth_after(visits.tt_s[index])
+        start, _ = next_whole(visits.tt_s[index], 60.0)
         exposure_s = float(exposures[index])
         cadence_s = ceil((exposure_s + setting.rig.sensor.readout_s) * 10) / 10 + 1.0
         shot = Shot(
@@ -126,7 +131,7 @@ def campaign_passages(setting: Setting, tick: Callable[[int, int], None] | None 
 
 
 def _star_exposures_s(setting: Setting, visits: Visits, framing: Framing) -> np.ndarray:
-    """Return the exposure at each visit that gives enough stars, shorter than the sky and the mount allow."""
+    """Return the exposure at each visit: enough stars for a solution, more while the planet can still be measured."""
     if setting.wish.exposure_s is not None:
         return np.full(len(visits.tt_s), setting.wish.exposure_s)
     from planner.sky.photometry import airmass
@@ -155,5 +160,8 @@ def _star_exposures_s(setting: Setting, visits: Visits, framing: Framing) -> np.
         rate, pixels * (sky + rig.sensor.dark_e_s), pixels * rig.sensor.read_noise_e**2, STAR_SIGNAL_TO_NOISE
     )
     longest = min(_LONGEST_S, _SKY_WELL_FRACTION * radiometry.saturation_e(rig) / max(float(sky), 1e-12))
+    peak = exposure.peak_rate_e_s(rig, site, through, visits.disc.name, visits.disc, visits.altitude_deg)
+    bearable = SATURATION_BORNE * radiometry.saturation_e(rig) / peak
+    wanted = np.maximum(wanted, np.minimum(bearable, longest))
     wanted = np.clip(wanted, rig.sensor.min_exposure_s, min(longest, rig.sensor.max_exposure_s))
     return np.array([exposure.rounded_up(float(value)) for value in wanted])

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import fields, replace
 from datetime import datetime, timedelta
 from math import ceil, floor
 
@@ -13,6 +14,7 @@ from planner.sequence import exposure
 from planner.sequence.models import Passage, Shot
 from planner.sequence.setting import Setting
 from planner.sequence.windows import Window, event_windows
+from planner.sky.discs import SkyDisc
 
 SAMPLE_S = 30.0
 TRACKING = {"sun": "solar", "moon": "lunar"}
@@ -76,7 +78,7 @@ def _fill(setting: Setting, window: Window) -> list[Passage]:
     edges = np.flatnonzero(np.diff(np.concatenate([[False], seen, [False]]).astype(int)))
     passages = []
     for first, last in zip(edges[::2], edges[1::2], strict=True):
-        passage = _passage(setting, window, sample_s[first:last], _rows(geometry, slice(first, last)))
+        passage = _passage(setting, window, sample_s[first:last], rows_of(geometry, slice(first, last)))
         if passage is not None:
             passages.append(passage)
     return passages
@@ -91,7 +93,7 @@ def _passage(setting: Setting, window: Window, sample_s: np.ndarray, geometry: G
         wanted_s = np.full_like(wanted_s, wish.exposure_s)
     least_cadence_s = float(wanted_s.max()) + sensor.readout_s
     cadence_s = _cadence_s(setting, window, geometry, least_cadence_s)
-    start, start_tt_s = whole_tenth_after(sample_s[0])
+    start, start_tt_s = next_whole(sample_s[0], 0.1 if window.burst else 1.0)
     count = floor((sample_s[-1] - start_tt_s - least_cadence_s) / cadence_s) + 1
     if count < 1:
         return None
@@ -150,28 +152,35 @@ def relative_rate_arcsec_s(geometry: Geometry) -> float:
     return float(np.nanmedian(np.hypot(np.diff(east), np.diff(north)) / step))
 
 
-def whole_tenth_after(tt_s: float) -> tuple[datetime, float]:
-    """Return the first tenth of a second of UTC at or after an instant, as a moment and in TT."""
+def next_whole(tt_s: float, unit_s: float) -> tuple[datetime, float]:
+    """Return the first moment of UTC at or after an instant that is a whole multiple of a unit, and the same in TT.
+
+    `unit_s` divides a minute.
+    """
     from planner.sky.timescale import datetime_from_tt_s, tt_s_from_datetime
 
     moment = datetime_from_tt_s(tt_s)
-    # a moment holds microseconds, so an exact tenth may come back one or two late
-    tenths = ceil((moment.microsecond - 2) / 100_000)
-    moment = moment.replace(microsecond=0) + timedelta(milliseconds=100 * tenths)
+    # a moment holds microseconds, so an exact multiple may come back one or two late
+    past_s = moment.second + (moment.microsecond - 2) * 1e-6
+    units = ceil(past_s / unit_s)
+    moment = moment.replace(second=0, microsecond=0) + timedelta(seconds=round(units * unit_s, 3))
     return moment, float(tt_s_from_datetime(moment))
 
 
-def _rows(geometry: Geometry, rows: slice) -> Geometry:
-    """Return the same geometry at fewer times."""
-    from dataclasses import fields, replace
+def rows_of_disc(disc: SkyDisc, rows: slice | np.ndarray) -> SkyDisc:
+    """Return the same disc at fewer times."""
+    return replace(disc, **{f.name: getattr(disc, f.name)[rows] for f in fields(disc) if f.name != "name"})
 
-    discs = {
-        name: replace(disc, **{f.name: getattr(disc, f.name)[rows] for f in fields(disc) if f.name != "name"})
-        for name, disc in geometry.discs.items()
-    }
+
+def rows_of(geometry: Geometry, rows: slice | np.ndarray) -> Geometry:
+    """Return the same geometry at fewer times."""
     arrays = {
         name: getattr(geometry, name)[rows]
         for name in ("tt_s", "altitude_deg", "azimuth_deg", "zenith_pa_deg", "sun_altitude_deg")
     }
-    stars = tuple((name, ra[rows], dec[rows], magnitude) for name, ra, dec, magnitude in geometry.stars)
-    return replace(geometry, discs=discs, stars=stars, **arrays)
+    return replace(
+        geometry,
+        discs={name: rows_of_disc(disc, rows) for name, disc in geometry.discs.items()},
+        stars=tuple((name, ra[rows], dec[rows], magnitude) for name, ra, dec, magnitude in geometry.stars),
+        **arrays,
+    )
