@@ -11,8 +11,8 @@ SUN_NEAR = (
 )
 NIGHT = ("Night work: know the ground by day, keep power and cables dry, tell someone where you are.",)
 FAR_TIME = (
-    "UTC at this date is an extrapolation of the Earth's rotation (1 sigma {0:.1f} s): repeat the prediction "
-    "nearer to the event.",
+    "The Earth's rotation at this date is not known from tables (1 sigma {0:.1f} s), nor are leap seconds: repeat "
+    "the prediction nearer to the event.",
 )
 ROUND_LIMB = (
     "The Moon's limb is taken as smooth: mountains and valleys shift a contact by some seconds, "

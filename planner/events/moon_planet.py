@@ -7,7 +7,7 @@ from collections.abc import Callable
 import numpy as np
 
 from planner.errors import InputError
-from planner.events import cautions
+from planner.events import cautions, conjunctions
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
 from planner.events.contacts import RAD_ARCSEC, Passing, Shape
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
@@ -18,8 +18,6 @@ from planner.sky import bodies, discs, places, timescale
 from planner.sky.observer import Observer
 
 DAY_S = timescale.DAY_S
-# The Moon gains 10 to 17 degrees a day on any planet in ecliptic longitude: under half a turn a step.
-_GRID_S = 4 * DAY_S
 # Geocentric separation at conjunction in longitude within which some place on Earth sees an occultation: the largest
 # lunar parallax and semidiameter (61.5' + 16.8') and a planet's (0.5'), over the cosine of the track's slope
 # (under 20 degrees even for Venus near its stations).
@@ -171,8 +169,9 @@ class MoonOccultsPlanet:
 
     def _somewhere(self, body: str, low_tt_s: float, high_tt_s: float) -> list[Event]:
         """Return the occultations that some place on Earth sees, with their geocentric middles."""
-        guess = _conjunctions(body, low_tt_s, high_tt_s)
         passing = self._passing(body, None, None, 0.5 * (low_tt_s + high_tt_s))
+        guess = conjunctions.moon_with(body, low_tt_s, high_tt_s)
+        guess = guess[passing.sight(guess).separation_rad * RAD_ARCSEC < _NEAR_ARCSEC]
         middle = passing.closest(guess, 3600.0, DAY_S)
         middle = middle[np.isfinite(middle)]
         middle = np.unique(middle[(middle >= low_tt_s) & (middle <= high_tt_s)])
@@ -204,32 +203,3 @@ def planet_shape(body: str, radii: str | None, tt_s: float) -> Shape:
     equatorial_km, polar_km = bodies.radii_km(body, radii)
     pole = places.unit_vector(*bodies.pole_radec_deg(body, np.array([tt_s])))[:, 0]
     return Shape(equatorial_km, polar_km / equatorial_km, tuple(pole))
-
-
-def _conjunctions(body: str, low_tt_s: float, high_tt_s: float) -> np.ndarray:
-    """Return geocentric conjunctions in ecliptic longitude at which the Moon passes near the planet."""
-    first, last = timescale.SPAN
-    grid = np.arange(max(first, low_tt_s - _GRID_S), min(last, high_tt_s + 2 * _GRID_S), _GRID_S)
-    gain = np.unwrap(_longitude_gain(body, grid)[0])
-    turns = np.arange(np.ceil(gain[0] / (2 * np.pi)), gain[-1] / (2 * np.pi)) * 2 * np.pi
-    t = np.interp(turns, gain, grid)
-    for _ in range(4):
-        angle, apart = _longitude_gain(body, t)
-        later = _longitude_gain(body, np.minimum(t + 600.0, last))[0]
-        rate = ((later - angle + np.pi) % (2 * np.pi) - np.pi) / 600.0
-        ahead = (angle + np.pi) % (2 * np.pi) - np.pi
-        t = np.clip(t - ahead / rate, first, last)
-    apart = _longitude_gain(body, t)[1]
-    return t[apart * RAD_ARCSEC < _NEAR_ARCSEC]
-
-
-def _longitude_gain(body: str, tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Return the Moon's geocentric ecliptic longitude minus the planet's, and their separation, in radians."""
-    moon = places.direction("moon", None, tt_s).vector_km
-    planet = places.direction(body, None, tt_s).vector_km
-    longitudes = [np.arctan2(v[1] * _COS_EPS + v[2] * _SIN_EPS, v[0]) for v in (moon, planet)]
-    return longitudes[0] - longitudes[1], places.separation_arcsec(moon, planet) / RAD_ARCSEC
-
-
-_OBLIQUITY_RAD = np.deg2rad(84381.406 / 3600.0)  # of J2000.0, IAU 2006 (Hilton et al. 2006)
-_COS_EPS, _SIN_EPS = np.cos(_OBLIQUITY_RAD), np.sin(_OBLIQUITY_RAD)

@@ -8,19 +8,16 @@ from dataclasses import replace
 import numpy as np
 
 from planner.errors import InputError
-from planner.events import cautions
+from planner.events import cautions, conjunctions
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
 from planner.events.contacts import RAD_ARCSEC, Passing, Shape
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
 from planner.events.visibility import sun_altitude_deg, view
-from planner.sky import bodies, discs, ephemeris, places, timescale
+from planner.sky import bodies, discs, places, timescale
 from planner.sky.observer import Observer
 
 DAY_S = timescale.DAY_S
-# Conjunctions in heliocentric longitude are found on a grid on which the planet gains less than half a turn on
-# the Earth: Mercury gains at most 5.4 degrees a day, Venus 0.7.
-_GRID_S = {"mercury": 28 * DAY_S, "venus": 200 * DAY_S}
 # Half the longest transit is 4.0 h (Venus over the Sun's centre).
 _REACH_S = 0.4 * DAY_S
 # Geocentric separation at heliocentric conjunction beyond which no transit can follow: the Sun's largest and
@@ -89,7 +86,9 @@ class SolarTransit:
         NaN where a limb does not cross. `margin_arcsec` also admits those that pass the Sun by as much.
         """
         passing = self._passing(body, None, radii)
-        guess = self._near_conjunctions(body, start_tt_s, end_tt_s)
+        guess = conjunctions.with_earth(body, start_tt_s, end_tt_s)
+        guess = guess[(guess >= start_tt_s - 2 * DAY_S) & (guess <= end_tt_s + 2 * DAY_S)]
+        guess = guess[passing.sight(guess).separation_rad * RAD_ARCSEC < _NEAR_ARCSEC]
         greatest = passing.closest(guess, 0.1 * DAY_S, 2 * DAY_S)
         greatest = greatest[np.isfinite(greatest)]
         greatest = greatest[(greatest >= start_tt_s) & (greatest <= end_tt_s)]
@@ -210,49 +209,8 @@ class SolarTransit:
             for t, h in zip(greatest, half, strict=True)
         ]
 
-    def _near_conjunctions(self, body: str, start_tt_s: float, end_tt_s: float) -> np.ndarray:
-        """Return inferior conjunctions at which the planet passes near the Sun, to some minutes."""
-        step = _GRID_S[body]
-        first, last = timescale.SPAN
-        grid = np.arange(max(first, start_tt_s - step), min(last, end_tt_s + 2 * step), step)
-        gain = np.unwrap(_longitude_gain(body, grid)[0])
-        turns = np.arange(np.ceil(gain[0] / (2 * np.pi)), gain[-1] / (2 * np.pi)) * 2 * np.pi
-        t = np.interp(turns, gain, grid)
-        for _ in range(4):
-            angle, rate, _ = _longitude_gain(body, t)
-            ahead = (angle + np.pi) % (2 * np.pi) - np.pi
-            t = np.clip(t - ahead / rate, first, last)
-        apart = _longitude_gain(body, t)[2]
-        return t[apart * RAD_ARCSEC < _NEAR_ARCSEC]
-
     @staticmethod
     def _any_sun(observer: Observer, outer: np.ndarray) -> bool:
         times = np.linspace(outer[0], outer[1], 97)
         sun = places.direction("sun", observer, times).vector_km
         return bool(view(sun, observer, times).visible.any())
-
-
-def _longitude_gain(body: str, tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Return the planet's heliocentric ecliptic longitude minus the Earth's, its rate, and the angle Sun-Earth-planet.
-
-    Radians and rad/s; ecliptic of J2000.0, geometric.
-    """
-    tdb_s = timescale.tdb_s(tt_s)
-    sun, sun_v = ephemeris.state_km_km_s("sun", tdb_s)
-    longitude, rate, position = [], [], []
-    for name in (body, "earth"):
-        r, v = ephemeris.state_km_km_s(name, tdb_s)
-        r, v = r - sun, v - sun_v
-        y = r[1] * _COS_EPS + r[2] * _SIN_EPS
-        vy = v[1] * _COS_EPS + v[2] * _SIN_EPS
-        longitude.append(np.arctan2(y, r[0]))
-        rate.append((r[0] * vy - y * v[0]) / (r[0] ** 2 + y**2))
-        position.append(r)
-    planet, earth = position
-    to_planet, to_sun = planet - earth, -earth
-    apart = places.separation_arcsec(to_planet, to_sun) / RAD_ARCSEC
-    return longitude[0] - longitude[1], rate[0] - rate[1], apart
-
-
-_OBLIQUITY_RAD = np.deg2rad(84381.406 / 3600.0)  # of J2000.0, IAU 2006 (Hilton et al. 2006)
-_COS_EPS, _SIN_EPS = np.cos(_OBLIQUITY_RAD), np.sin(_OBLIQUITY_RAD)

@@ -1,0 +1,226 @@
+"""Circumstances as others read them: JSON objects for machines, plain tables to shoot from for people."""
+
+from __future__ import annotations
+
+import math
+from datetime import datetime
+from typing import Any
+from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
+
+from planner.errors import InputError
+from planner.events.family import Circumstances, Instant
+from planner.sky import timescale
+from planner.sky.observer import Observer
+
+_LABELS = {
+    "contact_1": "contact I",
+    "contact_2": "contact II",
+    "contact_3": "contact III",
+    "contact_4": "contact IV",
+    "station_ra_1": "1st station, RA",
+    "station_ra_2": "2nd station, RA",
+    "station_longitude_1": "1st station, longitude",
+    "station_longitude_2": "2nd station, longitude",
+}
+_UNITS = {"_arcsec_s": "arcsec/s", "_arcsec": "arcsec", "_deg": "degrees", "_days": "days", "_km": "km", "_s": "s"}
+
+
+def as_object(circumstances: Circumstances, brief: bool = False) -> dict[str, Any]:
+    """Return circumstances as a JSON object of the machine interface; NaN becomes null.
+
+    With `brief`, as in lists: instants without budget and extras, no conventions.
+    """
+    event = circumstances.event
+    found: dict[str, Any] = {
+        "family": event.spec.family,
+        "body": event.spec.body,
+        "title": event.title,
+        "site": _site(circumstances.observer),
+        "happens": circumstances.happens,
+        "reason": circumstances.reason,
+        "instants": [_instant(instant, brief) for instant in circumstances.instants],
+        "least_separation_arcsec": _number(circumstances.least_separation_arcsec),
+    }
+    for key in ("other_body", "star"):
+        value = getattr(event.spec, key)
+        if value is not None:
+            found[key] = value
+    if not brief:
+        found["conventions"] = {
+            **circumstances.conventions,
+            "time_scale": timescale.utc_kind(event.middle_tt_s),
+        }
+        found["cautions"] = list(circumstances.cautions)
+    found["facts"] = {key: _number(value) for key, value in circumstances.facts.items()}
+    return found
+
+
+def _site(observer: Observer | None) -> dict[str, Any] | str:
+    if observer is None:
+        return "geocentre"
+    return {
+        "name": observer.name,
+        "latitude_deg": observer.latitude_deg,
+        "longitude_deg": observer.longitude_deg,
+        "height_m": observer.height_m,
+    }
+
+
+def _instant(instant: Instant, brief: bool) -> dict[str, Any]:
+    found = {
+        "name": instant.name,
+        "utc": timescale.utc_iso(instant.tt_s, 3),
+        "sigma_s": _number(instant.sigma_s),
+        "largest_term": instant.largest_term,
+        "position_angle_deg": _number(instant.position_angle_deg),
+        "altitude_deg": _number(instant.altitude_deg),
+        "azimuth_deg": _number(instant.azimuth_deg),
+        "visible": bool(instant.visible),
+        "limited_by": instant.limited_by,
+    }
+    if not brief:
+        found["budget_s"] = {term.name: _number(term.sigma_s) for term in instant.budget}
+        found |= {key: _number(value) for key, value in instant.extra}
+    return found
+
+
+def _number(value: Any) -> Any:
+    """Return floats rounded to what they are worth writing, NaN and infinity as None, the rest as it is."""
+    if isinstance(value, float):
+        return float(f"{value:.9g}") if math.isfinite(value) else None
+    return value
+
+
+def zone_of(observer: Observer | None) -> ZoneInfo:
+    """Return the time zone of a site; raises InputError on a name that does not exist."""
+    name = observer.timezone if observer is not None else "UTC"
+    try:
+        return ZoneInfo(name)
+    except (ZoneInfoNotFoundError, ValueError, OSError):
+        raise InputError(
+            f"site.timezone: found {name!r}; allowed is an IANA name such as Europe/Berlin"
+        ) from None
+
+
+def as_table(circumstances: Circumstances) -> str:
+    """Return a plain text page to shoot from: instants in UTC and civil time, angles, what is seen, cautions."""
+    observer = circumstances.observer
+    lines = [circumstances.event.title, _place_line(observer)]
+    if not circumstances.happens:
+        lines.append(f"DOES NOT HAPPEN HERE: {circumstances.reason}.")
+    lines += ["", *_columns(_header(observer, circumstances), _rows(circumstances)), ""]
+    least = circumstances.least_separation_arcsec
+    if math.isfinite(least):
+        lines.append(f"least separation of centres: {least:.1f} arcsec")
+    lines += [_fact(key, value) for key, value in circumstances.facts.items()]
+    kind = timescale.utc_kind(circumstances.event.middle_tt_s)
+    lines += ["", "+-: 1 sigma in seconds, and the largest term of it", f"time scale: {kind}"]
+    lines += [f"{key.replace('_', ' ')}: {text}" for key, text in circumstances.conventions.items()]
+    lines += ["", *(f"CAUTION: {text}" for text in circumstances.cautions)]
+    return "\n".join(line.rstrip() for line in lines)
+
+
+def _place_line(observer: Observer | None) -> str:
+    if observer is None:
+        return "as seen from the Earth's centre"
+    north = "N" if observer.latitude_deg >= 0 else "S"
+    east = "E" if observer.longitude_deg >= 0 else "W"
+    return (
+        f"{observer.name}: {abs(observer.latitude_deg):.4f} {north}, {abs(observer.longitude_deg):.4f} {east}, "
+        f"{observer.height_m:.0f} m, times also in {observer.timezone}"
+    )
+
+
+def _header(observer: Observer | None, circumstances: Circumstances) -> list[str]:
+    header = ["instant", "UTC"]
+    if observer is not None:
+        header.append("civil time")
+    header += ["+- s", "largest term"]
+    if _has_angles(circumstances):
+        header.append("PA")
+        if observer is not None:
+            header.append("from zenith")
+    if observer is not None:
+        header += ["alt", "az", "Sun", "seen"]
+    return header
+
+
+def _has_angles(circumstances: Circumstances) -> bool:
+    return any(math.isfinite(instant.position_angle_deg) for instant in circumstances.instants)
+
+
+def _rows(circumstances: Circumstances) -> list[list[str]]:
+    observer, zone = circumstances.observer, zone_of(circumstances.observer)
+    rows = []
+    for instant in circumstances.instants:
+        decimals = 0 if instant.sigma_s >= 5.0 else 1
+        utc = timescale.utc_iso(instant.tt_s, decimals)
+        row = [_LABELS.get(instant.name, instant.name.replace("_", " ")), utc.replace("T", " ").rstrip("Z")]
+        if observer is not None:
+            row.append(_civil(instant.tt_s, decimals, zone))
+        row += [_sigma(instant.sigma_s), instant.largest_term or ""]
+        extra = dict(instant.extra)
+        if _has_angles(circumstances):
+            row.append(_angle(instant.position_angle_deg))
+            if observer is not None:
+                row.append(_angle(extra.get("zenith_position_angle_deg", math.nan)))
+        if observer is not None:
+            row += [_angle(instant.altitude_deg), _angle(instant.azimuth_deg)]
+            row += [_angle(extra.get("sun_altitude_deg", math.nan))]
+            words = [extra["limb"] + " limb"] if "limb" in extra and instant.name != "closest" else []
+            row.append(", ".join([instant.limited_by or "yes", *words]))
+        rows.append(row)
+    return rows
+
+
+def _civil(tt_s: float, decimals: int, zone: ZoneInfo) -> str:
+    """Return civil time rounded as the UTC beside it, with the zone's own abbreviation."""
+    moment = timescale.datetime_from_tt_s(tt_s)
+    whole = timescale.utc_iso(tt_s, decimals)[:-1]
+    rounded = datetime.fromisoformat(whole + "+00:00") if ":60" not in whole else moment
+    local = rounded.astimezone(zone)
+    text = f"{local:%m-%d %H:%M:%S}"
+    if decimals:
+        text += f".{local.microsecond // 10 ** (6 - decimals):0{decimals}d}"
+    return f"{text} {local:%Z}"
+
+
+def _sigma(sigma_s: float) -> str:
+    return f"{sigma_s:.2f}" if sigma_s < 10 else f"{sigma_s:.0f}"
+
+
+def _angle(value: float) -> str:
+    return f"{value:.1f}" if math.isfinite(value) else ""
+
+
+def _fact(key: str, value: Any) -> str:
+    """Return `sun_semidiameter_arcsec: 969.8` as a reader wants it: `sun semidiameter: 969.8 arcsec`."""
+    unit = next((unit for suffix, unit in _UNITS.items() if key.endswith(suffix)), "")
+    name = key.removesuffix(next((suffix for suffix in _UNITS if key.endswith(suffix)), "")).replace("_", " ")
+    if isinstance(value, bool):
+        return f"{name}: {'yes' if value else 'no'}"
+    if isinstance(value, float) and unit == "s" and value >= 60.0:
+        minutes, seconds = divmod(round(value), 60)
+        hours, minutes = divmod(minutes, 60)
+        return f"{name}: " + (f"{hours} h " if hours else "") + f"{minutes} min {seconds:02d} s"
+    return f"{name}: {value:.4g} {unit}".rstrip() if isinstance(value, float) else f"{name}: {value}"
+
+
+def _columns(header: list[str], rows: list[list[str]]) -> list[str]:
+    """Return lines with columns in line; columns of numbers end in line, text begins in line."""
+    table = [header, *rows]
+    widths = [max(len(row[i]) for row in table) for i in range(len(header))]
+    numeric = [all(_is_number(row[i]) for row in rows) for i in range(len(header))]
+    lines = []
+    for row in table:
+        cells = [c.rjust(w) if n else c.ljust(w) for c, w, n in zip(row, widths, numeric, strict=True)]
+        lines.append("  " + "  ".join(cells))
+    return lines
+
+
+def _is_number(text: str) -> bool:
+    try:
+        float(text or 0)
+    except ValueError:
+        return False
+    return True
