@@ -4,10 +4,10 @@ The model of a measured place u (nominal orientation and scale) is
 
     u = Rot(-rotation) p(t - clock - drift (t - t_mean)) / scale + constant [+ shift along given directions]
 
-with p the predicted path. Scatter that the frames' own sigmas do not explain (seeing that moves the limb, mostly) is one
-isotropic variance, estimated so that chi-square equals the degrees of freedom (Paule & Mandel 1982, J. Res. NBS 87,
-377); when it was estimated from the data, stated sigmas are those of the resulting Student distribution, wider than the
-Gaussian by sqrt(nu / (nu - 2)). Frames beyond 5 sigma of a robust first fit (Cauchy weights) take no part.
+with p the predicted path. Scatter that the frames' own sigmas do not explain (seeing that moves the limb, mostly) is
+one isotropic variance, estimated so that chi-square equals the degrees of freedom (Paule & Mandel 1982, J. Res. NBS
+87, 377); when it was estimated from the data, stated sigmas are those of the resulting Student distribution, wider than
+the Gaussian by sqrt(nu / (nu - 2)). Frames beyond 5 sigma of a robust first fit (Cauchy weights) take no part.
 """
 
 from __future__ import annotations
@@ -213,7 +213,7 @@ class _Solver:
         return residual, matrix, gradient, data
 
     def _step(self, x, weights, used):
-        residual, matrix, gradient, data = self._normal(x, weights, used)
+        _, matrix, gradient, _ = self._normal(x, weights, used)
         scale = np.sqrt(np.diag(matrix))
         step = np.linalg.solve(matrix / np.outer(scale, scale), gradient / scale) / scale
         moved = x.copy()

@@ -1,0 +1,176 @@
+"""Figures of a track: residuals against time, and the path on the disc or among the stars.
+
+Shapes, not hues, tell frames apart, and lines differ in brightness: a red lamp or a red screen keeps them legible.
+"""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import numpy as np
+
+from imaging.track.result import CheckResult
+from planner.outputs import whole_file
+
+INK, PALE, PAPER = "#f2e6d8", "#8d8379", "#14110f"
+MEASURED, OFF = "#ffc46b", "#ff8f6b"
+FORMATS = ("png", "svg", "pdf")
+
+
+def _axes(rows: int, size: tuple[float, float], sharex: bool = True):  # type: ignore[no-untyped-def]
+    from matplotlib.backends.backend_agg import FigureCanvasAgg
+    from matplotlib.figure import Figure
+
+    figure = Figure(figsize=size, layout="constrained", facecolor=PAPER)
+    FigureCanvasAgg(figure)
+    axes = figure.subplots(rows, 1, sharex=sharex, squeeze=False)[:, 0]
+    for axis in axes:
+        axis.set_facecolor(PAPER)
+        axis.tick_params(colors=INK, labelsize=9)
+        for spine in axis.spines.values():
+            spine.set_color(PALE)
+        axis.xaxis.label.set_color(INK)
+        axis.yaxis.label.set_color(INK)
+        axis.title.set_color(INK)
+    return figure, axes
+
+
+def _times(result: CheckResult) -> np.ndarray:
+    from planner.sky.timescale import datetime_from_tt_s
+
+    moments = datetime_from_tt_s(np.atleast_1d(result.times_tt_s))
+    return np.array(
+        [moment.replace(tzinfo=None) for moment in np.atleast_1d(moments)], dtype="datetime64[us]"
+    )
+
+
+def _time_axis(axis) -> None:  # type: ignore[no-untyped-def]
+    from matplotlib.dates import AutoDateLocator, ConciseDateFormatter
+
+    locator = AutoDateLocator(minticks=3, maxticks=7)
+    axis.xaxis.set_major_locator(locator)
+    formatter = ConciseDateFormatter(locator)
+    axis.xaxis.set_major_formatter(formatter)
+    axis.xaxis.get_offset_text().set_color(INK)
+
+
+def column(result: CheckResult, name: str) -> np.ndarray:
+    """Return one column of the rows."""
+    return np.array([getattr(row, name) for row in result.rows])
+
+
+def residual_figure(result: CheckResult):  # type: ignore[no-untyped-def]
+    """Return the figure of observed minus computed, along and across the motion, against stamped time.
+
+    The line along is what the fitted clock offset alone would make of each frame.
+    """
+    figure, axes = _axes(2, (8.0, 5.0))
+    when, verdict = _times(result), column(result, "verdict")
+    shift = clock_shift_arcsec(result)
+    for axis, part, sign in ((axes[0], "along", 1.0), (axes[1], "across", 0.0)):
+        value, sigma = column(result, f"{part}_arcsec"), column(result, f"sigma_{part}_arcsec")
+        axis.axhline(0.0, color=PALE, lw=1.0)
+        for kind, marker, colour in (("on-track", "o", MEASURED), ("off-track", "x", OFF)):
+            chosen = (verdict == kind) & np.isfinite(value)
+            if chosen.any():
+                axis.errorbar(
+                    when[chosen],
+                    value[chosen],
+                    sigma[chosen],
+                    fmt=marker,
+                    ms=5,
+                    color=colour,
+                    ecolor=PALE,
+                    elinewidth=1,
+                    label=f"{kind} ({chosen.sum()})",
+                )
+        if sign and np.isfinite(shift).any():
+            order = np.argsort(when)
+            order = order[np.isfinite(shift[order])]
+            axis.plot(when[order], shift[order], color=INK, lw=1.2, label="what the clock offset makes")
+        axis.set_ylabel(f"O − C {part} (arcsec)")
+        axis.grid(color=PALE, alpha=0.25, lw=0.6)
+        _scale_to(axis, value, sigma, verdict)
+    legend = axes[0].legend(loc="best", fontsize=8, facecolor=PAPER, edgecolor=PALE, labelcolor=INK)
+    legend.set_zorder(5)
+    _time_axis(axes[-1])
+    axes[-1].set_xlabel("mid-exposure as stamped, UTC")
+    return figure
+
+
+def _scale_to(axis, value, sigma, verdict) -> None:  # type: ignore[no-untyped-def]
+    """Keep a frame that is far off from hiding what the others do."""
+    good = (verdict == "on-track") & np.isfinite(value)
+    if good.sum() < 3:
+        return
+    low, high = np.min(value[good] - sigma[good]), np.max(value[good] + sigma[good])
+    low, high = min(low, 0.0), max(high, 0.0)
+    margin = 0.25 * (high - low)
+    axis.set_ylim(low - margin, high + margin)
+
+
+def clock_shift_arcsec(result: CheckResult) -> np.ndarray:
+    """Return the residual along the motion that the fitted clock alone makes, a row; NaN where unknown."""
+    if result.diagnosis is None or not np.isfinite(result.clock_offset_s):
+        return np.full(len(result.rows), np.nan)
+    shift = np.full(len(result.rows), np.nan)
+    measured = np.flatnonzero(column(result, "verdict") != "unmeasured")
+    shift[measured] = column(result, "along_arcsec")[measured] - result.diagnosis.reading.fit.along_arcsec
+    return shift
+
+
+def path_figure(result: CheckResult):  # type: ignore[no-untyped-def]
+    """Return the figure of the path: predicted line, measured points; north up, east to the left."""
+    figure, axes = _axes(1, (6.4, 6.0))
+    axis = axes[0]
+    verdict = column(result, "verdict")
+    on_disc = result.reference in ("sun", "moon")
+    names = ("east_arcsec", "north_arcsec") if on_disc else ("ra_deg", "dec_deg")
+    px, py = (column(result, f"predicted_{name}") for name in names)
+    mx, my = (column(result, f"measured_{name}") for name in names)
+    order = np.argsort(result.times_tt_s)
+    seen = order[np.isfinite(px[order])]
+    axis.plot(px[seen], py[seen], color=INK, lw=1.0, label="predicted at the stamped times")
+    for kind, marker, colour in (("on-track", "o", MEASURED), ("off-track", "x", OFF)):
+        chosen = (verdict == kind) & np.isfinite(mx)
+        if chosen.any():
+            axis.plot(
+                mx[chosen], my[chosen], marker, ms=5, color=colour, mfc="none", label=f"measured, {kind}"
+            )
+    if on_disc:
+        from matplotlib.patches import Circle
+
+        radius = np.nanmedian(column(result, "reference_radius_px") * column(result, "scale_arcsec_px"))
+        if np.isfinite(radius):
+            axis.add_patch(Circle((0, 0), radius, fill=False, color=PALE, lw=1.5))
+            axis.set_xlim(-1.15 * radius, 1.15 * radius)
+            axis.set_ylim(-1.15 * radius, 1.15 * radius)
+        axis.set_aspect("equal")
+        axis.set_xlabel(f"east of the {result.reference.capitalize()}'s centre (arcsec)")
+        axis.set_ylabel(f"north of the {result.reference.capitalize()}'s centre (arcsec)")
+    else:
+        middle = np.nanmedian(py) if np.isfinite(py).any() else 0.0
+        axis.set_aspect(1.0 / max(np.cos(np.radians(middle)), 0.05), adjustable="datalim")
+        axis.set_xlabel("right ascension (degrees, ICRS)")
+        axis.set_ylabel("declination (degrees, ICRS)")
+        axis.ticklabel_format(useOffset=False)
+    axis.invert_xaxis()
+    axis.grid(color=PALE, alpha=0.25, lw=0.6)
+    axis.set_title("north up, east to the left", fontsize=9, color=INK)
+    axis.legend(loc="best", fontsize=8, facecolor=PAPER, edgecolor=PALE, labelcolor=INK)
+    return figure
+
+
+def save_figures(result: CheckResult, folder: Path, force: bool = False) -> list[Path]:
+    """Write each figure as PNG, SVG and PDF and return their paths."""
+    written = []
+    if not result.rows:
+        return written
+    for name, make in (("residuals", residual_figure), ("path", path_figure)):
+        figure = make(result)
+        for kind in FORMATS:
+            path = folder / f"{name}.{kind}"
+            with whole_file(path, force) as part:
+                figure.savefig(part, format=kind, dpi=160, facecolor=figure.get_facecolor())
+            written.append(path)
+    return written
