@@ -22,7 +22,14 @@ _LABELS = {
     "station_longitude_1": "1st station, longitude",
     "station_longitude_2": "2nd station, longitude",
 }
-_UNITS = {"_arcsec_s": "arcsec/s", "_arcsec": "arcsec", "_deg": "degrees", "_days": "days", "_km": "km", "_s": "s"}
+_UNITS = {
+    "_arcsec_s": "arcsec/s",
+    "_arcsec": "arcsec",
+    "_deg": "degrees",
+    "_days": "days",
+    "_km": "km",
+    "_s": "s",
+}
 
 
 def as_object(circumstances: Circumstances, brief: bool = False) -> dict[str, Any]:
@@ -118,6 +125,30 @@ def as_table(circumstances: Circumstances) -> str:
     lines += [f"{key.replace('_', ' ')}: {text}" for key, text in circumstances.conventions.items()]
     lines += ["", *(f"CAUTION: {text}" for text in circumstances.cautions)]
     return "\n".join(line.rstrip() for line in lines)
+
+
+def as_list(found: list[Circumstances], observer: Observer | None) -> str:
+    """Return a plain text list of events, a line each: what can be seen first and last, in UTC and civil time."""
+    if not found:
+        return "nothing found in this span within these limits"
+    zone = zone_of(observer)
+    header = ["event", "first instant (UTC)", "last instant (UTC)"]
+    if observer is not None:
+        header += ["first, civil", "alt", "Sun", "seen"]
+    rows = []
+    for circumstances in found:
+        instants = circumstances.instants
+        first, last = instants[0], instants[-1]
+        row = [circumstances.event.title]
+        row += [timescale.utc_iso(i.tt_s, 0)[:19].replace("T", " ") for i in (first, last)]
+        if observer is not None:
+            seen = sum(instant.visible for instant in instants)
+            best = max(instants, key=lambda i: (i.visible, i.altitude_deg))
+            row.append(_civil(first.tt_s, 0, zone))
+            row += [_angle(best.altitude_deg), _angle(dict(best.extra).get("sun_altitude_deg", math.nan))]
+            row.append(f"{seen} of {len(instants)}")
+        rows.append(row)
+    return "\n".join([_place_line(observer), "", *(line.rstrip() for line in _columns(header, rows))])
 
 
 def _place_line(observer: Observer | None) -> str:
