@@ -10,10 +10,12 @@ import numpy as np
 if TYPE_CHECKING:
     from astropy.wcs import WCS
 
+    from imaging.stars.camera import CameraFit, Lens
+
 
 @dataclass(frozen=True)
 class MatchedStars:
-    """Pairs of detections and catalogue stars; every array has shape (n,)."""
+    """Pairs of detections and catalogue stars; every array has shape (n,); `index` counts rows of the star list."""
 
     x_px: np.ndarray
     y_px: np.ndarray
@@ -22,7 +24,14 @@ class MatchedStars:
     magnitude: np.ndarray
     residual_x_px: np.ndarray
     residual_y_px: np.ndarray
-    name: tuple[str, ...]
+    index: np.ndarray
+
+    @property
+    def name(self) -> tuple[str, ...]:
+        """Names of the stars, made when asked for: `HIP 21421`, or `Gaia DR3 ...`."""
+        from planner.sky.stars import star_names
+
+        return star_names(self.index)
 
 
 @dataclass(frozen=True)
@@ -32,7 +41,9 @@ class PlateSolution:
     `wcs`: ICRS, valid for 0-based array pixels, with SIP and its inverse where the stars support it.
     `position_angle_deg`: of the frame's up direction as it is looked at, from ICRS north through east.
     `mirrored`: True when, looked at with north up, east is to the right.
-    `parameter_covariance`, `jacobian`: see `sigma_px_at`. `how`: `hinted`, `blind`, `previous` or `sparse`.
+    `how`: `hinted`, `blind`, `previous` or `sparse`. `rms_px`: of the residuals (both axes together).
+    `sigma_model_px`: scatter of the residuals beyond the stated errors of stars and centroids (one axis).
+    `fit`: the camera with the covariance of its parameters; `fit_lens`: what was held of the lens.
     """
 
     wcs: WCS
@@ -49,7 +60,8 @@ class PlateSolution:
     how: str
     sigma_model_px: float
     covariance_at_center_px2: np.ndarray
-    covariance: np.ndarray | None = None
+    fit: CameraFit | None = None
+    fit_lens: Lens | None = None
 
     def pixel_to_sky(self, x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return ICRS (ra_deg, dec_deg) of 0-based array pixels."""
@@ -60,3 +72,13 @@ class PlateSolution:
         """Return 0-based array pixels (x_px, y_px) of ICRS directions; NaN where they do not project."""
         x_px, y_px = self.wcs.all_world2pix(ra_deg, dec_deg, 0, quiet=True)
         return np.asarray(x_px), np.asarray(y_px)
+
+    def covariance_px2(self, x_px: float, y_px: float) -> np.ndarray:
+        """Return the (2, 2) covariance in px^2 of where the solution puts a direction at this place of the frame."""
+        if self.fit is None:
+            return self.covariance_at_center_px2
+        return self.fit.covariance_at(np.array([float(x_px)]), np.array([float(y_px)]))[0]
+
+    def sigma_px_at(self, x_px: float, y_px: float) -> float:
+        """Return the 1-sigma, of one axis, in pixels, of the solution at this place of the frame."""
+        return float(np.sqrt(np.trace(self.covariance_px2(x_px, y_px)) / 2))

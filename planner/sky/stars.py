@@ -58,7 +58,7 @@ class StarField:
     @property
     def name(self) -> tuple[str, ...]:
         """Names, made when asked for: `HIP 21421`, or `Gaia DR3 ...`."""
-        return tuple(_name(row) for row in star_list()[self.index])
+        return star_names(self.index)
 
     def select(self, keep: np.ndarray) -> StarField:
         """Return the stars that a mask or an array of rows keeps."""
@@ -191,6 +191,11 @@ def _at_date(rows: np.ndarray, tt_s: float) -> StarField:
     )
 
 
+def star_names(index: np.ndarray) -> tuple[str, ...]:
+    """Return the names of rows of the star list: `HIP 21421`, or `Gaia DR3 ...`."""
+    return tuple(_name(row) for row in star_list()[index])
+
+
 def _name(row: np.void) -> str:
     return f"HIP {row['hip']}" if row["hip"] > 0 else f"Gaia DR3 {row['source']}"
 
@@ -287,4 +292,4 @@ def _given_star(
     )
 
 
-__all__ = ["NAMED", "STAR", "Star", "StarField", "all_stars", "star", "stars_in_field"]
+__all__ = ["NAMED", "STAR", "Star", "StarField", "all_stars", "star", "star_names", "stars_in_field"]

@@ -1,0 +1,347 @@
+"""The camera as physics has it: an orientation, a focal length, an optical axis, and a smooth distortion.
+
+Pixels map to the tangent plane as in the SIP convention (Shupe et al. 2005, ASP Conf. 347, 491): u, v are offsets
+from the optical axis in pixels, `u + sum a_pq u^p v^q` is the ideal plane, so that a fitted camera is written as
+TAN-SIP without loss. Every distortion term has a prior width (a fraction of the frame, not zero), so few stars
+leave them near zero, or near a lens learned before, and the covariance says what is not known.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+if TYPE_CHECKING:
+    from astropy.wcs import WCS
+
+ARCSEC_RAD = 206264.80624709636
+AFFINE_PRIOR = 1.5e-3  # differential refraction, aberration and sensor tilt (common practice, no source)
+AXIS_PRIOR = 0.02  # optical axis off the middle, in half-diagonals (common practice, no source)
+CORNER_PRIOR = {
+    2: 2e-3,
+    3: 1.2e-2,
+    4: 5e-4,
+    5: 4e-3,
+}  # displacement of the corner in half-diagonals, by order
+
+
+@dataclass(frozen=True)
+class Camera:
+    """Orientation and optics of one frame.
+
+    `axes` (3, 3): rows are the ICRS unit vectors of the array's +x, of its +y, and of the optical axis.
+    `focal_px`: focal length in pixels. `axis_x_px`, `axis_y_px`: where the optical axis meets the sensor.
+    `terms`: exponents (p, q) of the distortion; `coefficients` (2, n): of u and v, with u and v in half-diagonals.
+    `projection`: `TAN`, or `ARC` for fisheyes (equidistant). `half_diagonal_px` scales the terms.
+    """
+
+    axes: np.ndarray
+    focal_px: float
+    axis_x_px: float
+    axis_y_px: float
+    half_diagonal_px: float
+    terms: tuple[tuple[int, int], ...] = ()
+    coefficients: np.ndarray | None = None
+    projection: str = "TAN"
+
+    @property
+    def parity(self) -> int:
+        """+1 as the sky is seen in a FITS array, -1 when mirrored (DEVELOPERS.md, Orientation)."""
+        return -1 if np.linalg.det(self.axes) > 0 else 1
+
+    @property
+    def scale_arcsec_px(self) -> float:
+        """Scale on the optical axis."""
+        return ARCSEC_RAD / self.focal_px
+
+    def ideal(self, x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return the undistorted offsets from the optical axis, in pixels."""
+        u, v = np.asarray(x_px) - self.axis_x_px, np.asarray(y_px) - self.axis_y_px
+        if not self.terms or self.coefficients is None:
+            return u, v
+        basis = monomials(u / self.half_diagonal_px, v / self.half_diagonal_px, self.terms)
+        shift = self.half_diagonal_px * (self.coefficients @ basis)
+        return u + shift[0], v + shift[1]
+
+    def vectors(self, x_px: np.ndarray, y_px: np.ndarray) -> np.ndarray:
+        """Return ICRS unit vectors (n, 3) of pixels."""
+        return unproject(*self.ideal(x_px, y_px), self.focal_px, self.projection) @ self.axes
+
+    def pixels(self, vectors: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return pixels of ICRS unit vectors (n, 3); NaN for what lies behind the camera."""
+        ideal_u, ideal_v = project(vectors @ self.axes.T, self.focal_px, self.projection)
+        u, v = ideal_u, ideal_v
+        if self.terms and self.coefficients is not None:
+            for _ in range(12):  # fixed point: the distortion is small and smooth
+                x, y = self.ideal(u + self.axis_x_px, v + self.axis_y_px)
+                du, dv = ideal_u - x, ideal_v - y
+                u, v = u + du, v + dv
+                if np.nanmax(np.abs(du), initial=0) < 1e-4 and np.nanmax(np.abs(dv), initial=0) < 1e-4:
+                    break
+            lost = ~(np.hypot(u, v) < 3 * self.half_diagonal_px)
+            u, v = np.where(lost, np.nan, u), np.where(lost, np.nan, v)
+        return u + self.axis_x_px, v + self.axis_y_px
+
+
+def monomials(u: np.ndarray, v: np.ndarray, terms: tuple[tuple[int, int], ...]) -> np.ndarray:
+    """Return u^p v^q of every term, (terms, n)."""
+    top = max((max(term) for term in terms), default=0)
+    power_u, power_v = [np.ones_like(u)], [np.ones_like(v)]
+    for _ in range(top):
+        power_u.append(power_u[-1] * u)
+        power_v.append(power_v[-1] * v)
+    return np.array([power_u[p] * power_v[q] for p, q in terms]).reshape(len(terms), *np.shape(u))
+
+
+def unproject(u: np.ndarray, v: np.ndarray, focal_px: float, projection: str = "TAN") -> np.ndarray:
+    """Return unit vectors (n, 3) in camera axes of ideal offsets from the optical axis."""
+    radius = np.hypot(u, v)
+    theta = np.arctan(radius / focal_px) if projection == "TAN" else np.minimum(radius / focal_px, np.pi)
+    factor = np.sinc(theta / np.pi) / focal_px if projection != "TAN" else np.cos(theta) / focal_px
+    return np.stack([u * factor, v * factor, np.cos(theta)], axis=-1)
+
+
+def project(vectors: np.ndarray, focal_px: float, projection: str = "TAN") -> tuple[np.ndarray, np.ndarray]:
+    """Return ideal offsets of unit vectors (n, 3) in camera axes; NaN beyond 85 (TAN) or 175 degrees (ARC)."""
+    x, y, z = np.moveaxis(vectors, -1, 0)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        if projection == "TAN":
+            factor = np.where(z > 0.087, focal_px / z, np.nan)
+        else:
+            across = np.hypot(x, y)
+            theta = np.arctan2(across, z)
+            factor = np.where(theta < 3.05, focal_px * np.where(across > 1e-12, theta / across, 1.0), np.nan)
+        return x * factor, y * factor
+
+
+@dataclass(frozen=True)
+class CameraFit:
+    """A fitted camera, the covariance of its parameters, and what is needed to carry it to a place.
+
+    Parameters: rotation (3, rad, about the camera's axes), ln focal length, axis (2, half-diagonals), distortion of u
+    then v. `covariance` is scaled by `sigma_model_px`, the fitted scatter that the stated errors do not explain.
+    """
+
+    camera: Camera
+    covariance: np.ndarray
+    sigma_model_px: float
+    residual_px: np.ndarray
+    weight: np.ndarray
+
+    def covariance_at(self, x_px: np.ndarray, y_px: np.ndarray) -> np.ndarray:
+        """Return the (n, 2, 2) covariance in px^2 of where the camera puts a direction seen near these pixels."""
+        vectors = self.camera.vectors(x_px, y_px)
+        jacobian = _jacobian(self.camera, np.asarray(x_px, float), np.asarray(y_px, float), vectors)
+        return np.einsum("nip,pq,njq->nij", jacobian, self.covariance, jacobian, optimize=True)
+
+
+@dataclass(frozen=True)
+class Lens:
+    """What is known of a rig's optics before a frame is fitted: expected values and their widths.
+
+    `axis_*` in half-diagonals off the middle; `coefficients` (2, terms) with `sigma` of the same shape.
+    """
+
+    terms: tuple[tuple[int, int], ...]
+    coefficients: np.ndarray
+    sigma: np.ndarray
+    axis: np.ndarray
+    axis_sigma: np.ndarray
+    projection: str = "TAN"
+
+
+def unknown_lens(order: int) -> Lens:
+    """Return the prior of a lens never seen before, with distortion terms up to `order` (1 to 5)."""
+    terms = tuple((p, n - p) for n in range(1, order + 1) for p in range(n, -1, -1))
+    sigma = np.zeros((2, len(terms)))
+    for i, (p, q) in enumerate(terms):
+        n = p + q
+        if n == 1:
+            sigma[:, i] = AFFINE_PRIOR
+        else:
+            sigma[:, i] = CORNER_PRIOR[n]
+    return Lens(terms, np.zeros_like(sigma), sigma, np.zeros(2), np.full(2, AXIS_PRIOR))
+
+
+def order_for(stars: int) -> int:
+    """Return the order of distortion that this many stars support."""
+    return 3 if stars < 80 else 4 if stars < 250 else 5
+
+
+def fit_camera(
+    start: Camera,
+    lens: Lens,
+    x_px: np.ndarray,
+    y_px: np.ndarray,
+    vectors: np.ndarray,
+    sigma_px: np.ndarray,
+    shape: tuple[int, int],
+    robust: bool = True,
+) -> CameraFit:
+    """Return the most probable camera of matched stars.
+
+    Iterated linear least squares with the lens as prior; outliers weigh as in Student's t of 4 degrees of freedom
+    (Lange, Little & Taylor 1989). The scatter beyond the stated errors is fitted as `sigma_model_px`.
+    """
+    height, width = shape
+    half = start.half_diagonal_px
+    middle = np.array([(width - 1) / 2, (height - 1) / 2])
+    terms = lens.terms
+    coefficients = lens.coefficients.copy() if start.terms != terms else np.array(start.coefficients)
+    camera = replace(start, terms=terms, coefficients=coefficients, projection=lens.projection)
+    if start.terms != terms:
+        camera = replace(
+            camera, axis_x_px=middle[0] + lens.axis[0] * half, axis_y_px=middle[1] + lens.axis[1] * half
+        )
+    count = len(x_px)
+    sigma_model, weight = 0.0, np.ones(count)
+    prior_width = np.concatenate([lens.axis_sigma, lens.sigma.ravel()])
+    prior_weight = np.concatenate([[1e-12] * 3, [1e-4], 1 / np.maximum(prior_width, 1e-9) ** 2])
+    residual = np.zeros((count, 2))
+    for iteration in range(8):
+        residual = _residual(camera, x_px, y_px, vectors)
+        if iteration and robust and count >= 6:
+            sigma_model = _extra_scatter(residual, sigma_px, count)
+        inverse = 1 / (sigma_px**2 + sigma_model**2)
+        if robust and count >= 6 and iteration:
+            chi2 = (residual**2).sum(axis=1) * inverse
+            weight = 6.0 / (4.0 + chi2)
+        jacobian = _jacobian(camera, x_px, y_px, vectors)
+        scaled = jacobian * np.sqrt(weight * inverse)[:, None, None]
+        normal = np.einsum("nip,niq->pq", scaled, scaled, optimize=True) + np.diag(prior_weight)
+        now = np.concatenate(
+            [
+                np.zeros(4),
+                [
+                    (camera.axis_x_px - middle[0]) / half - lens.axis[0],
+                    (camera.axis_y_px - middle[1]) / half - lens.axis[1],
+                ],
+                (np.asarray(camera.coefficients) - lens.coefficients).ravel(),
+            ]
+        )
+        right = np.einsum("nip,ni->p", jacobian, residual * (weight * inverse)[:, None], optimize=True)
+        step = np.linalg.solve(normal, right - prior_weight * now)
+        camera = _stepped(camera, step)
+        if iteration >= 3 and np.abs(step).max() < 1e-9:
+            break
+    residual = _residual(camera, x_px, y_px, vectors)
+    return CameraFit(camera, np.linalg.inv(normal), sigma_model, residual, weight)
+
+
+def _extra_scatter(residual: np.ndarray, sigma_px: np.ndarray, count: int) -> float:
+    """Return the scatter to add in quadrature so that the residuals are as large as their errors (robustly)."""
+    dof = max(2 * count - 4, 1) / (2 * count)
+    scatter2 = np.median((residual**2).sum(axis=1)) / 1.386 / dof  # median of chi-square with 2 degrees
+    typical2 = np.median(sigma_px**2)
+    return float(np.sqrt(max(scatter2 - typical2, 0.0)))
+
+
+def _residual(camera: Camera, x_px: np.ndarray, y_px: np.ndarray, vectors: np.ndarray) -> np.ndarray:
+    u, v = camera.ideal(x_px, y_px)
+    pu, pv = project(vectors @ camera.axes.T, camera.focal_px, camera.projection)
+    return np.stack([pu - u, pv - v], axis=-1)
+
+
+def _jacobian(camera: Camera, x_px: np.ndarray, y_px: np.ndarray, vectors: np.ndarray) -> np.ndarray:
+    """Return d(ideal pixel - projected direction) / d(parameters), (n, 2, parameters)."""
+    half, focal = camera.half_diagonal_px, camera.focal_px
+    x, y, z = (vectors @ camera.axes.T).T
+    pu, pv = project(np.stack([x, y, z], axis=-1), focal, camera.projection)
+    count = len(pu)
+    terms = len(camera.terms)
+    out = np.zeros((count, 2, 6 + 2 * terms))
+    eps = 1e-6
+    cam = np.stack([x, y, z], axis=-1)
+    for axis in range(3):  # numerical in the rotation: exact for every projection, and cheap
+        turn = np.zeros(3)
+        turn[axis] = eps
+        du, dv = project(cam + np.cross(np.broadcast_to(turn, cam.shape), cam), focal, camera.projection)
+        out[:, 0, axis], out[:, 1, axis] = -(du - pu) / eps, -(dv - pv) / eps
+    out[:, 0, 3], out[:, 1, 3] = -pu, -pv
+    out[:, 0, 4] = out[:, 1, 5] = -half
+    if terms:
+        basis = half * monomials(
+            (x_px - camera.axis_x_px) / half, (y_px - camera.axis_y_px) / half, camera.terms
+        )
+        out[:, 0, 6 : 6 + terms] = basis.T
+        out[:, 1, 6 + terms :] = basis.T
+    return out
+
+
+def _stepped(camera: Camera, step: np.ndarray) -> Camera:
+    from scipy.spatial.transform import Rotation
+
+    turn = Rotation.from_rotvec(step[:3]).as_matrix()
+    terms = len(camera.terms)
+    half = camera.half_diagonal_px
+    return replace(
+        camera,
+        axes=turn @ camera.axes,
+        focal_px=camera.focal_px * float(np.exp(np.clip(step[3], -0.3, 0.3))),
+        axis_x_px=camera.axis_x_px + half * step[4],
+        axis_y_px=camera.axis_y_px + half * step[5],
+        coefficients=np.asarray(camera.coefficients) + step[6:].reshape(2, terms),
+    )
+
+
+def to_wcs(camera: Camera, width_px: int, height_px: int) -> WCS:
+    """Return the camera as an astropy WCS: TAN or ARC, with SIP and fitted inverse terms where it distorts.
+
+    Linear distortion goes into the CD matrix. The inverse is fitted on a grid to below 0.01 px.
+    """
+    from astropy.wcs import WCS, Sip
+
+    pole = camera.axes[2]
+    ra, dec = np.arctan2(pole[1], pole[0]), np.arcsin(np.clip(pole[2], -1, 1))
+    east = np.array([-np.sin(ra), np.cos(ra), 0.0])
+    north = np.array([-np.sin(dec) * np.cos(ra), -np.sin(dec) * np.sin(ra), np.cos(dec)])
+    turn = np.array(
+        [[camera.axes[0] @ east, camera.axes[1] @ east], [camera.axes[0] @ north, camera.axes[1] @ north]]
+    )
+    coefficients = camera.coefficients if camera.terms else None
+    linear = np.eye(2)
+    if coefficients is not None:
+        for i, (p, q) in enumerate(camera.terms):
+            if p + q == 1:
+                linear[:, 0 if p else 1] += coefficients[:, i]
+    wcs = WCS(naxis=2)
+    wcs.wcs.ctype = [f"RA---{camera.projection}", f"DEC--{camera.projection}"]
+    wcs.wcs.cunit = ["deg", "deg"]
+    wcs.wcs.crpix = [camera.axis_x_px + 1, camera.axis_y_px + 1]
+    wcs.wcs.crval = [np.degrees(ra) % 360, np.degrees(dec)]
+    wcs.wcs.cd = np.degrees(turn @ linear / camera.focal_px)
+    wcs.wcs.radesys = "ICRS"
+    wcs.pixel_shape = (width_px, height_px)
+    higher = [(i, p, q) for i, (p, q) in enumerate(camera.terms) if p + q >= 2]
+    if higher and coefficients is not None:
+        order = max(p + q for _, p, q in higher)
+        half = camera.half_diagonal_px
+        forward = np.zeros((2, order + 1, order + 1))
+        inverse_linear = np.linalg.inv(linear)
+        for i, p, q in higher:
+            forward[:, p, q] = inverse_linear @ coefficients[:, i] * half ** (1 - p - q)
+        wcs.wcs.ctype = [name + "-SIP" for name in wcs.wcs.ctype]
+        back = _inverse_sip(forward, order, camera, width_px, height_px)
+        wcs.sip = Sip(forward[0], forward[1], back[0], back[1], wcs.wcs.crpix)
+    wcs.wcs.set()
+    return wcs
+
+
+def _inverse_sip(
+    forward: np.ndarray, order: int, camera: Camera, width_px: int, height_px: int
+) -> np.ndarray:
+    top = min(order + 2, 7)
+    x, y = np.meshgrid(np.linspace(0, width_px - 1, 31), np.linspace(0, height_px - 1, 31))
+    u, v = x.ravel() - camera.axis_x_px, y.ravel() - camera.axis_y_px
+    terms = tuple((p, q) for p in range(order + 1) for q in range(order + 1 - p) if p + q >= 2)
+    shift = np.array([[forward[axis, p, q] for p, q in terms] for axis in (0, 1)]) @ monomials(u, v, terms)
+    back_terms = tuple((p, q) for p in range(top + 1) for q in range(top + 1 - p) if p + q >= 1)
+    half = camera.half_diagonal_px
+    basis = monomials((u + shift[0]) / half, (v + shift[1]) / half, back_terms)
+    found = np.linalg.lstsq(basis.T, -shift.T, rcond=None)[0].T
+    back = np.zeros((2, top + 1, top + 1))
+    for i, (p, q) in enumerate(back_terms):
+        back[:, p, q] = found[:, i] * half ** (-p - q)
+    return back

@@ -1,0 +1,100 @@
+"""A solution from a rough pointing and scale: local quads of the sky around the hint, made on the fly."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from imaging.stars.camera import ARCSEC_RAD, Camera, Lens, unproject
+from imaging.stars.hypotheses import hypotheses, pair_quads
+from imaging.stars.quads import local_quads
+from imaging.stars.refine import Field, Match, Sky, grow
+from imaging.stars.verify import ACCEPT_LOG10
+
+SCALE_TOLERANCE = 0.12
+
+
+@dataclass(frozen=True)
+class Effort:
+    """How widely to search: reach in field radii, stars a field, neighbours that make quads, in image and sky."""
+
+    reach: float
+    image_stars: int
+    sky_stars: int
+    image_neighbours: int
+    sky_neighbours: int
+
+
+# From the cheap and likely to the dear and rare: nearby and clean, clouded, far off, far off and clouded.
+EFFORTS = (
+    Effort(1.2, 40, 60, 5, 6),
+    Effort(1.2, 40, 130, 6, 10),
+    Effort(4.0, 50, 70, 6, 7),
+    Effort(2.0, 70, 250, 6, 11),
+    Effort(4.0, 50, 130, 6, 10),
+)
+_MOST_TESTED = 150  # hypotheses grown at each effort
+
+
+@dataclass(frozen=True)
+class Attempt:
+    """What came out: the match, or None with the best evidence seen, and how many hypotheses there were."""
+
+    match: Match | None
+    best_log10: float
+    trials: int
+    false_alarm_log10: float = 0.0
+
+
+def solve_hinted(
+    field: Field,
+    sky_near: Callable[[float, float], Sky],
+    center: np.ndarray,
+    scale_arcsec_px: float,
+    lens: Lens,
+    *,
+    scale_tolerance: float = SCALE_TOLERANCE,
+    parity: int | None = None,
+    efforts: tuple[Effort, ...] = EFFORTS,
+) -> Attempt:
+    """Return the match of a field whose centre and scale are roughly known; roll and mirror may be unknown.
+
+    `sky_near(radius_rad, stars_per_sr)` gives catalogue stars around `center` (unit vector), brightest first, to
+    about that density. Never returns a match whose false-alarm probability is above 1e-9.
+    """
+    focal = ARCSEC_RAD / scale_arcsec_px
+    height, width = field.shape
+    half = field.half_diagonal_px
+    radius = half / focal if lens.projection != "TAN" else np.arctan(half / focal)
+    field_sr = height * width / focal**2 if radius < 0.5 else 2 * np.pi * (1 - np.cos(radius)) * 0.6
+    x0, y0 = (width - 1) / 2, (height - 1) / 2
+    best, trials = 0.0, 0
+    for effort in efforts:
+        used = min(effort.image_stars, len(field.x_px))
+        if used < 4:
+            break
+        image_vectors = unproject(field.x_px[:used] - x0, field.y_px[:used] - y0, focal, lens.projection)
+        image = local_quads(image_vectors, effort.image_neighbours)
+        sky = sky_near(min(radius * (1 + effort.reach), np.pi), effort.sky_stars / field_sr)
+        if len(sky) < 4:
+            continue
+        sky_quads = local_quads(sky.vectors, effort.sky_neighbours, 2 * radius * (1 + scale_tolerance))
+        pairs = pair_quads(image, sky_quads, scale_tolerance)
+        guesses = hypotheses(image_vectors, sky.vectors, image, sky_quads, pairs, focal, half, parity)
+        near = (guesses.focal_px < focal * (1 + scale_tolerance)) & (
+            guesses.focal_px > focal / (1 + scale_tolerance)
+        )
+        chosen = np.flatnonzero(near)
+        trials += len(chosen)
+        for i in chosen[:_MOST_TESTED]:
+            camera = Camera(guesses.axes[i], guesses.focal_px[i], x0, y0, half, projection=lens.projection)
+            match = grow(camera, lens, field, sky, guesses.image_stars[i], guesses.sky_stars[i])
+            if match is None:
+                continue
+            log10 = match.evidence.chance_log10(trials)
+            best = min(best, log10)
+            if log10 < ACCEPT_LOG10:
+                return Attempt(match, best, trials, log10)
+    return Attempt(None, best, trials)

@@ -1,0 +1,222 @@
+"""One frame in, its pointing out: tries what is known first, and says what was tried when nothing can be defended."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+
+from imaging.frames.frame import Frame
+from imaging.stars.camera import ARCSEC_RAD, Camera, Lens, order_for, to_wcs, unknown_lens
+from imaging.stars.catalogue import stars_near, vectors_of
+from imaging.stars.detection import Detections, detect
+from imaging.stars.hinted import SCALE_TOLERANCE, Attempt, solve_hinted
+from imaging.stars.previous import solve_from_previous
+from imaging.stars.refine import Field, field_of, settle
+from imaging.stars.solution import MatchedStars, PlateSolution
+from planner.errors import NoSolutionError
+
+_CENTROID_FLOOR_PX = 0.01  # below it the model of the star's profile, not noise, limits (measured)
+
+
+@dataclass(frozen=True)
+class Hint:
+    """What is known of the pointing: centre (deg, ICRS), scale and how far each may be off, roll, mirror, lens.
+
+    `parity` and `rotation_deg` as in DEVELOPERS.md, of the array.
+    """
+
+    near: tuple[float, float] | None = None
+    scale_arcsec_px: float | None = None
+    scale_tolerance: float = SCALE_TOLERANCE
+    rotation_deg: float | None = None
+    parity: int | None = None
+    lens: Lens | None = None
+
+
+def solve_frame(
+    frame: Frame,
+    near: tuple[float, float] | None = None,
+    scale_arcsec_px: float | None = None,
+    previous: PlateSolution | None = None,
+    rotation_deg: float | None = None,
+    parity: int | None = None,
+    exclude: Sequence[tuple[float, float]] = (),
+    *,
+    detections: Detections | None = None,
+    scale_tolerance: float = SCALE_TOLERANCE,
+    lens: Lens | None = None,
+) -> PlateSolution:
+    """Return where a frame points.
+
+    `near`: rough centre (ra_deg, dec_deg, ICRS), within four field radii. `scale_arcsec_px`: within
+    `scale_tolerance`. `previous`: the solution of a frame of the same rig shortly before. `rotation_deg`, `parity`:
+    of the array, where known. `exclude`: ICRS places of bodies that are not stars, whose light is not matched.
+    Raises NoSolutionError when no pointing has a false-alarm probability below 1e-9; the message says what was tried.
+    """
+    found = detections if detections is not None else detect_frame(frame)
+    tt_s = frame.time.middle_tt_s if frame.time is not None else DEFAULT_EPOCH_TT_S
+    hint = Hint(near, scale_arcsec_px, scale_tolerance, rotation_deg, parity, lens)
+    return solve_detections(found, tt_s, frame.row_zero, hint, previous, exclude)
+
+
+DEFAULT_EPOCH_TT_S = 25.0 * 365.25 * 86400.0  # a frame without time is solved with the stars of 2025.0
+
+
+def detect_frame(frame: Frame) -> Detections:
+    """Return the stars of a frame, with its own saturation and gain."""
+    return detect(frame.data, saturation_adu=frame.saturation_adu, gain_e_adu=frame.gain_e_adu)
+
+
+def solve_detections(
+    found: Detections,
+    tt_s: float,
+    row_zero: str,
+    hint: Hint,
+    previous: PlateSolution | None = None,
+    exclude: Sequence[tuple[float, float]] = (),
+) -> PlateSolution:
+    """Return where a frame with these stars points; see `solve_frame`."""
+    shape = (found.height_px, found.width_px)
+    field = _field(found)
+    if len(field.x_px) < 4:
+        raise NoSolutionError(
+            f"{len(field.x_px)} stars found, at least 4 are needed; a longer exposure or a darker sky would help"
+        )
+    tried: list[str] = []
+    if previous is not None and previous.fit is not None:
+        attempt = solve_from_previous(field, previous, _nearby(tt_s))
+        if attempt.match is not None:
+            return _solution(attempt, previous.fit_lens, field, shape, tt_s, row_zero, exclude, "previous")
+        tried.append("from the previous frame")
+        hint = Hint(
+            hint.near or (previous.center_ra_deg, previous.center_dec_deg),
+            previous.scale_arcsec_px,
+            min(hint.scale_tolerance, 0.03),
+            hint.rotation_deg,
+            hint.parity or previous.fit.camera.parity,
+            hint.lens,
+        )
+    if hint.near is not None and hint.scale_arcsec_px is not None:
+        center = vectors_of(np.array(hint.near[0]), np.array(hint.near[1]))
+        lens = hint.lens or unknown_lens(3)
+
+        def sky_near(radius_rad: float, stars_per_sr: float):  # type: ignore[no-untyped-def]
+            return stars_near(center, radius_rad, tt_s, stars_per_sr)
+
+        attempt = solve_hinted(
+            field,
+            sky_near,
+            center,
+            hint.scale_arcsec_px,
+            lens,
+            scale_tolerance=hint.scale_tolerance,
+            parity=hint.parity,
+        )
+        if attempt.match is not None:
+            return _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "hinted")
+        tried.append(
+            f"around {hint.near[0]:.3f} {hint.near[1]:+.3f} at {hint.scale_arcsec_px:.3f} arcsec/px "
+            f"(+-{100 * hint.scale_tolerance:.0f} %), best chance 1e{attempt.best_log10:.0f}"
+        )
+    raise NoSolutionError(
+        f"{len(found)} stars found, no pointing defended; tried {'; '.join(tried) or 'nothing, for want of a hint'}"
+    )
+
+
+def _nearby(tt_s: float):  # type: ignore[no-untyped-def]
+    return lambda center, radius_rad: stars_near(center, radius_rad, tt_s)
+
+
+def _field(found: Detections) -> Field:
+    sigma = np.sqrt((found.sigma_x_px**2 + found.sigma_y_px**2) / 2 + _CENTROID_FLOOR_PX**2)
+    sigma = np.where(found.saturated, np.maximum(sigma, 0.1), sigma)
+    return field_of(found.x_px, found.y_px, sigma, (found.height_px, found.width_px))
+
+
+def _solution(
+    attempt: Attempt,
+    lens: Lens | None,
+    field: Field,
+    shape: tuple[int, int],
+    tt_s: float,
+    row_zero: str,
+    exclude: Sequence[tuple[float, float]],
+    how: str,
+) -> PlateSolution:
+    """Settle a match over the whole catalogue and write it down."""
+    assert attempt.match is not None
+    match, camera = attempt.match, attempt.match.fit.camera
+    height, width = shape
+    middle = camera.vectors(np.array([(width - 1) / 2]), np.array([(height - 1) / 2]))[0]
+    corners = camera.vectors(np.array([0, width - 1, 0, width - 1]), np.array([0, 0, height - 1, height - 1]))
+    radius = float(np.arccos(np.clip((corners @ middle).min(), -1, 1))) * 1.02
+    sky = stars_near(middle, radius, tt_s)
+    field = _without_bodies(field, camera, exclude)
+    prior = lens
+    for _ in range(
+        2
+    ):  # the number of pairs decides the order of the distortion, and that the number of pairs
+        prior = lens or unknown_lens(order_for(len(match.star)))
+        match = settle(match, prior, field, sky)
+    assert prior is not None
+    camera = match.fit.camera
+    matched = MatchedStars(
+        x_px=field.x_px[match.detection],
+        y_px=field.y_px[match.detection],
+        ra_deg=np.degrees(np.arctan2(sky.vectors[match.star, 1], sky.vectors[match.star, 0])) % 360,
+        dec_deg=np.degrees(np.arcsin(np.clip(sky.vectors[match.star, 2], -1, 1))),
+        magnitude=sky.magnitude[match.star],
+        residual_x_px=match.fit.residual_px[:, 0],
+        residual_y_px=match.fit.residual_px[:, 1],
+        index=sky.index[match.star],
+    )
+    center_x, center_y = (width - 1) / 2, (height - 1) / 2
+    return PlateSolution(
+        wcs=to_wcs(camera, width, height),
+        width_px=width,
+        height_px=height,
+        matched=matched,
+        rms_px=float(np.sqrt((match.fit.residual_px**2).sum(axis=1).mean())),
+        false_alarm_log10=attempt.false_alarm_log10,
+        how=how,
+        sigma_model_px=match.fit.sigma_model_px,
+        covariance_at_center_px2=match.fit.covariance_at(np.array([center_x]), np.array([center_y]))[0],
+        fit=match.fit,
+        fit_lens=prior,
+        **_orientation(camera, width, height, row_zero),
+    )
+
+
+def _orientation(camera: Camera, width: int, height: int, row_zero: str) -> dict[str, float | bool]:
+    """Return centre, scale and orientation of the middle of the frame, as a user sees it."""
+    x, y = (width - 1) / 2, (height - 1) / 2
+    here, right, up = camera.vectors(np.array([x, x + 1, x]), np.array([y, y, y + 1]))
+    ra, dec = np.arctan2(here[1], here[0]), np.arcsin(np.clip(here[2], -1, 1))
+    east = np.array([-np.sin(ra), np.cos(ra), 0.0])
+    north = np.cross(here, east)
+    area = np.abs(np.dot(here, np.cross(right - here, up - here)))
+    seen_up = up - here if row_zero == "bottom" else here - up
+    angle = float(np.degrees(np.arctan2(seen_up @ east, seen_up @ north)) % 360)
+    as_seen = camera.parity == (1 if row_zero == "bottom" else -1)
+    return {
+        "center_ra_deg": float(np.degrees(ra) % 360),
+        "center_dec_deg": float(np.degrees(dec)),
+        "scale_arcsec_px": float(np.sqrt(area)) * ARCSEC_RAD,
+        "position_angle_deg": angle,
+        "mirrored": not as_seen,
+    }
+
+
+def _without_bodies(field: Field, camera: Camera, exclude: Sequence[tuple[float, float]]) -> Field:
+    """Return the field without the light of bodies that are not stars."""
+    if not len(exclude):
+        return field
+    places = np.atleast_2d(np.asarray(exclude, dtype=float))
+    x, y = camera.pixels(vectors_of(places[:, 0], places[:, 1]))
+    keep = np.ones(len(field.x_px), dtype=bool)
+    for one_x, one_y in zip(x, y, strict=True):
+        if np.isfinite(one_x) and np.isfinite(one_y):
+            keep &= np.hypot(field.x_px - one_x, field.y_px - one_y) > 8.0
+    return field_of(field.x_px[keep], field.y_px[keep], field.sigma_px[keep], field.shape)

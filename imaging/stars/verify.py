@@ -1,0 +1,53 @@
+"""Is it chance? A sequential test whose error probability holds whenever one stops.
+
+A hypothesis (four matched stars) predicts where further catalogue stars fall. Each is tested once, with a gate fixed
+before it is looked at, and only then used in the fit. Under chance star i is met with probability p_i (the share
+of the ground near it that the gates of detections cover); if the hypothesis is true, with probability d. The
+product of the likelihood ratios is a test martingale, so it exceeds 1/a with probability a at most, at whatever step
+one stops (Ville 1939; Shafer et al. 2011, Statist. Sci. 26, 84). A mean over several d is one too.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+DETECTED_SHARES = (0.03, 0.1, 0.25, 0.5, 0.8, 0.95)
+ACCEPT_LOG10 = -9.0
+
+
+@dataclass
+class Evidence:
+    """The running log likelihood ratios, one a share of stars detected, and the counts."""
+
+    log_ratio: np.ndarray = field(default_factory=lambda: np.zeros(len(DETECTED_SHARES)))
+    tested: int = 0
+    met: int = 0
+
+    def add(self, met: np.ndarray, chance: np.ndarray) -> None:
+        """Add stars tested: `met` (n,) bool, `chance` (n,) their probability of being met by chance."""
+        shares = np.array(DETECTED_SHARES)[:, None]
+        chance = np.clip(chance, 1e-7, 0.999)[None, :]
+        # a true hypothesis meets a star at least as often as chance does
+        likely = shares + (1 - shares) * chance
+        self.log_ratio = self.log_ratio + np.where(
+            met, np.log(likely / chance), np.log((1 - likely) / (1 - chance))
+        ).sum(axis=1)
+        self.tested += len(met)
+        self.met += int(met.sum())
+
+    def chance_log10(self, trials: float) -> float:
+        """Return log10 of the probability that any of `trials` false hypotheses looks this good."""
+        top = self.log_ratio.max()
+        mean = top + np.log(np.mean(np.exp(self.log_ratio - top)))
+        return float(min(0.0, (-mean + np.log(max(trials, 1.0))) / np.log(10)))
+
+
+def local_density(x_px: np.ndarray, y_px: np.ndarray, tree, area_px: float) -> np.ndarray:  # type: ignore[no-untyped-def]
+    """Return detections per px^2 near each place: of the whole frame, or of the 8 nearest where they crowd."""
+    count = tree.n
+    near = min(9, count)
+    distance, _ = tree.query(np.column_stack([x_px, y_px]), k=near)
+    crowded = (near - 1) / (np.pi * np.maximum(np.atleast_2d(distance)[:, -1], 1.0) ** 2) if near > 1 else 0.0
+    return np.maximum(count / area_px, crowded)
