@@ -19,16 +19,18 @@ YEAR_S = 365.25 * DAY_S
 J2000_MJD = 51544.5
 TT_MINUS_TAI_S = 32.184
 
-# UT1-UTC known before 1962 only through observed Delta T; 1-sigma by year, from memory of the error column that
-# accompanies Morrison & Stephenson 2004, J. Hist. Astron. 35, 327 and later observations.
+# 1-sigma of Delta T before the tables, by year. From 1800 on: how far two published reductions of the same lunar
+# occultations (Morrison et al. 2021; McCarthy & Babcock 1986) lie apart. Earlier: the error column of Morrison &
+# Stephenson 2004, J. Hist. Astron. 35, 327 (from memory).
 _PAST_SIGMA_S = (
     (1550.0, 20.0),
     (1600.0, 15.0),
     (1650.0, 10.0),
     (1700.0, 5.0),
-    (1800.0, 1.0),
-    (1900.0, 0.1),
-    (1955.0, 0.05),
+    (1800.0, 3.0),
+    (1850.0, 1.5),
+    (1900.0, 0.6),
+    (1962.0, 0.3),
 )
 # Growth of UT1 beyond the tables: Brownian motion of the length of day, Huber 2006, J. Geodesy 80, 283 (formula as
 # quoted by NASA/GSFC, "Uncertainty in Delta T"), times 1.45, which gives the 0.8 s at 5 and 2.3 s at 10 years measured
@@ -109,11 +111,14 @@ def earth_orientation() -> EarthOrientation:
     past_tt_s = (past_s - 2000.0) * YEAR_S
     keep = past_tt_s < table_tt_s[0] - 30 * DAY_S
     past_tt_s, past_year = past_tt_s[keep], past_s[keep]
+    # the spline ends 0.4 s below the tables of 1962; the step is spread over its last years, where atomic clocks began
+    past_delta_t = _historic_delta_t(past_year)
+    past_delta_t += (table_delta_t[0] - past_delta_t[-1]) * np.clip((past_year - 1950.0) / 6.0, 0.0, 1.0)
     future_s, future_delta_t, future_sigma = _future(table_tt_s, table_delta_t, sigma[-1])
     known, value = np.array(_PAST_SIGMA_S).T
     return EarthOrientation(
         tt_s=np.concatenate([past_tt_s, table_tt_s, future_s]),
-        delta_t_s=np.concatenate([_historic_delta_t(past_year), table_delta_t, future_delta_t]),
+        delta_t_s=np.concatenate([past_delta_t, table_delta_t, future_delta_t]),
         sigma_s=np.concatenate([np.exp(np.interp(past_year, known, np.log(value))), sigma, future_sigma]),
         pole_tt_s=table_tt_s,
         pole_x_arcsec=x,

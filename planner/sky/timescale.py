@@ -207,13 +207,14 @@ def utc_iso(tt_s: np.ndarray | float, decimals: int = 1) -> Any:
 
     A leap second is written as :60.
     """
-    civil, in_leap = _civil_s(np.asarray(tt_s, float))
     unit = 10**decimals
+    moments = np.atleast_1d(np.asarray(tt_s, float))
+    civil, _ = _civil_s(moments)
+    # move to the tick first: rounding may lead into a leap second or out of it
+    civil, in_leap = _civil_s(moments + (np.round(civil * unit) / unit - civil) + 1e-6)
     texts = []
-    for one, leap in zip(np.atleast_1d(civil), np.atleast_1d(in_leap), strict=True):
-        ticks = round((one - (1.0 if leap else 0.0)) * unit)
-        if leap and (ticks // unit) % 60 == 0:
-            leap, ticks = False, round(one * unit)
+    for one, leap in zip(civil, in_leap, strict=True):
+        ticks = round((one - leap) * unit)
         seconds, fraction = divmod(ticks, unit)
         text = (_J2000 + timedelta(seconds=seconds)).strftime("%Y-%m-%dT%H:%M:%S")
         text = text.rjust(19, "0")
