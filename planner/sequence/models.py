@@ -8,7 +8,7 @@ from __future__ import annotations
 from datetime import UTC, date, datetime
 from typing import Annotated, Any, Literal
 
-from pydantic import AfterValidator, AwareDatetime, BaseModel, ConfigDict, Field
+from pydantic import AfterValidator, AwareDatetime, BaseModel, ConfigDict, Field, model_validator
 
 PLAN_FORMAT = 1
 
@@ -22,6 +22,16 @@ class Model(BaseModel):
 Utc = Annotated[AwareDatetime, AfterValidator(lambda moment: moment.astimezone(UTC))]
 
 
+def _known_zone(name: str) -> str:
+    from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
+
+    try:
+        ZoneInfo(name)
+    except (ZoneInfoNotFoundError, ValueError, OSError):
+        raise ValueError("an IANA time zone is needed, such as Europe/Berlin or UTC") from None
+    return name
+
+
 class Site(Model):
     """A place to observe from."""
 
@@ -29,9 +39,11 @@ class Site(Model):
     latitude_deg: float = Field(ge=-90, le=90)
     longitude_deg: float = Field(ge=-180, le=360, description="east positive")
     height_m: float = Field(ge=-500, le=9000, description="above the WGS 84 ellipsoid")
-    timezone: str = Field("UTC", description="IANA name, for civil times")
-    horizon: list[tuple[float, float]] = Field(
-        default=[], description="[azimuth_deg, altitude_deg] pairs of what hides the sky"
+    timezone: Annotated[str, AfterValidator(_known_zone)] = Field(
+        "UTC", description="IANA name, for civil times"
+    )
+    horizon: list[tuple[Annotated[float, Field(ge=0, le=360)], Annotated[float, Field(ge=-10, le=90)]]] = (
+        Field(default=[], description="[azimuth_deg, altitude_deg] pairs of what hides the sky")
     )
     position_sigma_m: float = Field(15.0, gt=0)
     height_sigma_m: float = Field(20.0, gt=0)
@@ -42,8 +54,17 @@ class Site(Model):
     sky_brightness_mag_arcsec2: float = Field(20.5, ge=10, le=22.5, description="V, dark, at the zenith")
 
 
+class GainSetting(Model):
+    """What a sensor does at one of its gain settings."""
+
+    gain: float = Field(ge=0, description="as the camera names it")
+    e_adu: float = Field(gt=0)
+    read_noise_e: float = Field(ge=0)
+    full_well_e: float = Field(gt=0)
+
+
 class Sensor(Model):
-    """A camera's sensor."""
+    """A camera's sensor; `full_well_e`, `read_noise_e` and `gain_e_adu` hold at gain setting 0."""
 
     width_px: int = Field(ge=16, le=40000)
     height_px: int = Field(ge=16, le=40000)
@@ -51,18 +72,19 @@ class Sensor(Model):
     full_well_e: float = Field(50000, gt=100)
     read_noise_e: float = Field(3.0, ge=0)
     gain_e_adu: float = Field(1.0, gt=0, description="at gain setting 0")
+    gains: list[GainSetting] = Field(default=[], description="measured settings, for a choice of gain")
     bit_depth: int = Field(16, ge=8, le=32)
     bias_adu: float = Field(200, ge=0)
     dark_e_s: float = Field(0.02, ge=0)
     quantum_efficiency: float = Field(0.6, gt=0, le=1)
     readout_s: float = Field(0.3, ge=0, description="from the end of one exposure to the next start")
     shutter: Literal["global", "rolling"] = "global"
-    rolling_readout_s: float = Field(0.0, ge=0)
+    rolling_readout_s: float = Field(0.0, ge=0, description="from the first row's start to the last row's")
     bayer: Literal["RGGB", "BGGR", "GRBG", "GBRG"] | None = None
     min_exposure_s: float = Field(1e-4, gt=0)
     max_exposure_s: float = Field(3600, gt=0)
-    buffer_frames: int | None = Field(None, ge=1)
-    drain_frames_s: float | None = Field(None, gt=0)
+    buffer_frames: int | None = Field(None, ge=1, description="frames the camera holds before it stalls")
+    drain_frames_s: float | None = Field(None, gt=0, description="frames a second that leave the buffer")
 
 
 class Optics(Model):
@@ -80,7 +102,8 @@ class Filter(Model):
     """A filter in the wheel."""
 
     name: str
-    transmission: float = Field(1.0, gt=0, le=1)
+    transmission: float = Field(1.0, gt=0, le=1, description="in its band")
+    optical_density: float = Field(0.0, ge=0, le=8, description="on top of the transmission")
     bandwidth_nm: float = Field(90.0, gt=0)
 
 
@@ -92,15 +115,43 @@ class SolarFilter(Model):
 
 
 class Mount(Model):
-    """What carries the camera."""
+    """What carries the camera; cameras whose mounts have one name sit on one mount."""
 
+    name: str = "mount"
     kind: Literal["equatorial", "altazimuth", "fixed"] = "equatorial"
-    tracking_error_arcsec: float = Field(2.0, ge=0, description="rms over an exposure, unguided")
+    rates: list[Literal["sidereal", "solar", "lunar"]] = Field(
+        default=["sidereal", "solar", "lunar"], description="tracking rates it can run at"
+    )
+    tracking_error_arcsec: float = Field(
+        2.0, ge=0, description="rms over an exposure of some seconds, unguided"
+    )
+    periodic_error_arcsec: float = Field(0.0, ge=0, description="peak to peak, unguided")
+    periodic_error_period_s: float = Field(480.0, gt=0)
     pointing_error_arcsec: float = Field(60.0, ge=0)
     settle_s: float = Field(5.0, ge=0)
     slew_deg_s: float = Field(2.0, gt=0)
     min_altitude_deg: float = Field(5.0, ge=-5, le=90)
-    meridian_flip: bool = True
+    max_altitude_deg: float = Field(90.0, ge=0, le=90)
+    meridian_flip: bool = Field(True, description="equatorial: must turn over past the meridian")
+    meridian_limit_deg: float = Field(
+        5.0, ge=0, le=90, description="hour angle it tracks to before it must flip"
+    )
+    flip_s: float = Field(180.0, ge=0, description="time of a flip, centring included")
+
+
+class Guiding(Model):
+    """What keeps the mount on target."""
+
+    on: Literal["none", "star", "sun", "moon"] = "none"
+    error_arcsec: float = Field(1.0, ge=0, description="rms while guiding")
+
+
+class Power(Model):
+    """Where the current comes from; without a battery the mains are assumed."""
+
+    battery_wh: float | None = Field(None, gt=0)
+    draw_w: float = Field(20.0, ge=0, description="mount, camera and computer together")
+    dew_heater_w: float = Field(0.0, ge=0)
 
 
 class Clock(Model):
@@ -117,14 +168,18 @@ class Rig(Model):
     sensor: Sensor
     optics: Optics
     mount: Mount = Mount()
+    guiding: Guiding = Guiding()
     filters: list[Filter] = []
     solar_filter: SolarFilter | None = None
+    filter_change_s: float = Field(10.0, ge=0)
+    refocus_s: float = Field(60.0, ge=0)
     clock: Clock = Clock()
     camera_angle_deg: float = Field(
-        0.0, description="position angle of the frame's up direction, at the start"
+        0.0, ge=-360, le=360, description="position angle of the frame's up direction, at the start"
     )
     mirrored: bool = False
     storage_gb: float = Field(64.0, gt=0)
+    power: Power = Power()
 
     @property
     def scale_arcsec_px(self) -> float:
@@ -149,7 +204,9 @@ class Wish(Model):
 
     filter: str | None = Field(None, description="one of the rig's filters; default: the rig's first")
     exposure_s: float | None = Field(None, gt=0, description="default: from the brightness")
+    gain: float | None = Field(None, ge=0, description="default: chosen among the sensor's gains")
     well_fraction: float = Field(0.5, gt=0, lt=1, description="peak signal over saturation")
+    trail_px: float = Field(1.0, gt=0, description="longest trail borne in a frame")
     cadence_s: float | None = Field(None, gt=0, description="of regular frames; default: from the motion")
     burst_cadence_s: float | None = Field(
         None, gt=0, description="around contacts; default: as fast as needed"
@@ -160,10 +217,31 @@ class Wish(Model):
     lead_s: float | None = Field(
         None, ge=0, description="of frames before the first and after the last contact"
     )
+    separate_discs: bool = Field(False, description="regular frames so far apart that discs do not touch")
+    timing_s: float | None = Field(None, gt=0, description="1-sigma wanted of a contact's time")
+    camera_angle: Literal["rig", "best"] = Field("rig", description="`best`: turn the camera to the track")
+    calibration: bool = Field(True, description="list the calibration frames")
     visits: int | None = Field(None, ge=1, le=1000, description="nights of a campaign")
+    reserves: int = Field(1, ge=0, le=5, description="reserve nights named for each visit")
     frames_per_visit: int = Field(8, ge=1, le=1000)
+    deep_frames: int = Field(0, ge=0, le=1000, description="long exposures a visit, for faint stars")
+    visit_when: Literal["highest", "sidereal-time", "solar-depression"] = "highest"
+    sidereal_time_h: float | None = Field(
+        None, ge=0, lt=24, description="local, for visits at fixed sidereal time"
+    )
+    solar_depression_deg: float | None = Field(None, ge=0, le=30, description="for visits at a fixed one")
+    twilight: Literal["evening", "morning", "either"] = "either"
     darkness_deg: float = Field(-12.0, ge=-18, le=0, description="the Sun's altitude below which it is night")
+    most_airmass: float = Field(4.0, ge=1, le=40)
     moon_distance_deg: float = Field(15.0, ge=0, le=180, description="least distance of the Moon on a visit")
+
+    @model_validator(mode="after")
+    def _complete(self) -> Wish:
+        if self.visit_when == "sidereal-time" and self.sidereal_time_h is None:
+            raise ValueError("visit_when: sidereal-time needs sidereal_time_h")
+        if self.visit_when == "solar-depression" and self.solar_depression_deg is None:
+            raise ValueError("visit_when: solar-depression needs solar_depression_deg")
+        return self
 
 
 class Brief(Model):
@@ -194,13 +272,14 @@ class Shot(Model):
     peak_e: float | None = Field(
         None, ge=0, description="electrons expected there, at the middle of the shot"
     )
+    trail_px: float | None = Field(None, ge=0, description="longest trail expected in a frame")
 
 
 class Passage(Model):
     """A stretch of a plan with one purpose, in which the camera has one aim.
 
-    `aim`: what the middle of the frame follows: a disc of the geometry (`sun`, `moon`, `mars`), or `field` with
-    `aim_ra_deg`, `aim_dec_deg` (ICRS).
+    `aim`: what the middle of the frame follows: a disc of the geometry (`sun`, `moon`, `mars`), `field` with
+    `aim_ra_deg`, `aim_dec_deg` (ICRS), or `ground` with `aim_altitude_deg`, `aim_azimuth_deg`, which follows nothing.
     """
 
     name: str
@@ -209,8 +288,36 @@ class Passage(Model):
     aim: str
     aim_ra_deg: float | None = None
     aim_dec_deg: float | None = None
+    aim_altitude_deg: float | None = None
+    aim_azimuth_deg: float | None = None
     flipped: bool = Field(False, description="past the meridian flip: the camera is upside down")
+    stars_expected: int | None = Field(
+        None, description="stars in the frame good enough for a plate solution"
+    )
+    slack_s: float | None = Field(None, description="time left after it before the next passage")
+    reserve_utc: list[Utc] = Field(default=[], description="nights to fall back on, best first")
+    done: bool = Field(False, description="taken already; kept by a new plan")
     shots: list[Shot]
+
+
+class Step(Model):
+    """Something to be done between frames, by hand or by the rig."""
+
+    kind: Literal["set-up", "solar-filter", "focus", "filter", "flip", "slew", "take-down"]
+    start_utc: Utc
+    duration_s: float = Field(ge=0)
+    text: str
+
+
+class CalibrationSet(Model):
+    """Calibration frames to take with the plan's."""
+
+    kind: Literal["bias", "dark", "flat"]
+    count: int = Field(ge=1)
+    exposure_s: float | None = Field(None, description="None: whatever half fills the range")
+    gain: float = 0
+    filter: str | None = None
+    text: str
 
 
 class PredictedPoint(Model):
@@ -235,15 +342,18 @@ class Finding(Model):
 
 
 class Plan(Model):
-    """A generated sequence plan."""
+    """A generated sequence plan for one camera."""
 
     format: Literal[1] = 1
     title: str
     event: EventRequest
     site: Site
     rig: Rig
+    companions: list[str] = Field(default=[], description="names of the other rigs planned with this one")
     circumstances: dict[str, Any]
     passages: list[Passage]
+    steps: list[Step] = []
+    calibration: list[CalibrationSet] = []
     track: list[PredictedPoint]
     frames_total: int
     storage_gb: float
