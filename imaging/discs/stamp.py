@@ -1,0 +1,193 @@
+"""A small piece of a frame, modelled on sub-pixels: blurred discs, and least squares with linear amplitudes."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from imaging.discs.edge import Blur
+from planner.errors import NoSolutionError
+
+
+@dataclass(frozen=True)
+class DiscPlace:
+    """A disc or point placed in a frame. Pixels are 0-based; `covariance` (px^2) is of the centre of figure (x, y).
+
+    `light_x_px`, `light_y_px`: centre of light, the same for a body that is evenly lit. `contrast`: depth below the Sun
+    (1 is black) or height over the noise for a bright body. `chi2`: of the fit, by degree of freedom, in units of the noise
+    the stamp itself shows. `notes`: what was assumed or is doubtful.
+    """
+
+    x_px: float
+    y_px: float
+    covariance: np.ndarray
+    radius_px: float
+    radius_sigma_px: float
+    blur: Blur
+    light_x_px: float
+    light_y_px: float
+    contrast: float
+    chi2: float
+    method: str
+    saturated_px: int = 0
+    notes: tuple[str, ...] = ()
+
+    @property
+    def sigma_px(self) -> tuple[float, float]:
+        """1-sigma of x and y."""
+        return float(np.sqrt(self.covariance[0, 0])), float(np.sqrt(self.covariance[1, 1]))
+
+
+@dataclass(frozen=True)
+class Stamp:
+    """Pixels around a place: `data` (rows, columns), the array place (`x_low`, `y_low`) of its first pixel, what is usable."""
+
+    data: np.ndarray
+    x_low: int
+    y_low: int
+    usable: np.ndarray
+    clipped: np.ndarray
+
+    @classmethod
+    def cut(
+        cls, frame: np.ndarray, x_px: float, y_px: float, half_px: float, saturation: float | None = None
+    ) -> Stamp:
+        """Cut a square about a place out of a frame; raises NoSolutionError when less than half of it is in the frame."""
+        half = int(np.ceil(half_px))
+        if not (np.isfinite(x_px) and np.isfinite(y_px)):
+            raise NoSolutionError("the place looked at is not in the frame")
+        x_mid, y_mid = round(x_px), round(y_px)
+        x_low, y_low = max(x_mid - half, 0), max(y_mid - half, 0)
+        x_high, y_high = min(x_mid + half + 1, frame.shape[1]), min(y_mid + half + 1, frame.shape[0])
+        if x_high - x_low < half + 1 or y_high - y_low < half + 1:
+            raise NoSolutionError("the place looked at is at or beyond the frame's edge")
+        data = np.asarray(frame[y_low:y_high, x_low:x_high], float)
+        usable = np.isfinite(data)
+        clipped = (data >= saturation) if saturation is not None else np.zeros(data.shape, bool)
+        return cls(np.where(usable, data, 0.0), x_low, y_low, usable & ~clipped, clipped)
+
+    def grid(self, finer: int = 1, margin: int = 0) -> tuple[np.ndarray, np.ndarray]:
+        """Return (x, y) of sub-pixel middles as a row and a column, with `margin` whole pixels around."""
+        rows, columns = self.data.shape
+
+        def line(low: int, count: int) -> np.ndarray:
+            total = (count + 2 * margin) * finer
+            return low - margin - 0.5 + (np.arange(total) + 0.5) / finer
+
+        return line(self.x_low, columns)[None, :], line(self.y_low, rows)[:, None]
+
+
+def coverage(distance_px: np.ndarray, finer: int) -> np.ndarray:
+    """Return the part of a sub-pixel inside an outline, from its signed distance (negative inside)."""
+    return np.clip(0.5 - distance_px * finer, 0.0, 1.0)
+
+
+def blurred(fine: np.ndarray, blur: Blur, finer: int, margin: int) -> np.ndarray:
+    """Blur a sub-pixel picture, average it over pixels, and drop its margin."""
+    import cv2
+
+    total = np.zeros_like(fine)
+    for weight, sigma in blur.parts():
+        width = sigma * finer
+        size = 2 * int(np.ceil(4 * width)) + 1
+        kernel = cv2.getGaussianKernel(size, width, cv2.CV_64F)
+        total += weight * cv2.sepFilter2D(fine, cv2.CV_64F, kernel, kernel, borderType=cv2.BORDER_REPLICATE)
+    rows, columns = total.shape
+    small = total.reshape(rows // finer, finer, columns // finer, finer).mean(axis=(1, 3))
+    return small[margin : small.shape[0] - margin, margin : small.shape[1] - margin] if margin else small
+
+
+def sub_pixels(radius_px: float, sigma_px: float) -> int:
+    """Return how many sub-pixels a side sample a disc of this radius and blur."""
+    return int(np.clip(np.ceil(2.5 / max(min(radius_px, sigma_px), 0.2)), 2, 8))
+
+
+@dataclass(frozen=True)
+class StampFit:
+    """Parameters that fit a stamp, their covariance (linear amplitudes marginalised), amplitudes, model, chi^2."""
+
+    parameters: np.ndarray
+    covariance: np.ndarray
+    amplitudes: np.ndarray
+    model: np.ndarray
+    chi2: float
+
+
+def fit_stamp(
+    stamp: Stamp,
+    components: Callable[[np.ndarray], np.ndarray],
+    start: np.ndarray,
+    step: np.ndarray,
+    variance: Callable[[np.ndarray], np.ndarray],
+    prior: np.ndarray | None = None,
+    limit: np.ndarray | None = None,
+    robust: float = 6.0,
+) -> StampFit:
+    """Fit data = sum amplitude_k component_k(parameters) by variable projection and Gauss-Newton steps.
+
+    `components(parameters)` gives (k, rows, columns); `step`: for derivatives, of the size of a hundredth of a pixel;
+    `variance(model)`: up to a factor, which the residuals set. `prior`: 1-sigma of each parameter about `start` (inf is
+    free). `limit`: how far each may go from `start`. Pixels off by more than `robust` sigma are left out.
+    Raises NoSolutionError when a parameter runs away.
+    """
+    data, usable = stamp.data, stamp.usable.copy()
+    parameters = np.asarray(start, float).copy()
+    pull = np.zeros(parameters.size) if prior is None else 1 / np.asarray(prior, float) ** 2
+    factor, model = 1.0, None
+    weight = np.where(usable, 1.0, 0.0)
+    for turn in range(12):
+        parts = components(parameters)
+        amplitudes = _amplitudes(parts, data, weight)
+        model = np.tensordot(amplitudes, parts, axes=(0, 0))
+        noise = np.maximum(variance(model), 1e-12)
+        residual = data - model
+        factor = _factor(residual[usable] ** 2 / noise[usable])
+        if turn >= 2:
+            usable = stamp.usable & (residual**2 < robust**2 * factor * noise)
+        weight = np.where(usable, 1 / (noise * factor), 0.0)
+        slopes = []
+        for index in range(parameters.size):
+            moved = parameters.copy()
+            moved[index] += step[index]
+            slopes.append(
+                (np.tensordot(amplitudes, components(moved), axes=(0, 0)) - model) / step[index]
+            )
+        design = np.concatenate([np.array(slopes).reshape(parameters.size, *data.shape), parts])
+        flat = design.reshape(design.shape[0], -1)
+        heavy = flat * weight.reshape(-1)
+        normal = heavy @ flat.T
+        normal[np.arange(parameters.size), np.arange(parameters.size)] += pull
+        right = heavy @ residual.reshape(-1)
+        right[: parameters.size] -= pull * (parameters - start)
+        scale = np.sqrt(np.maximum(np.diag(normal), 1e-300))
+        inverse = np.linalg.pinv(normal / np.outer(scale, scale), rcond=1e-10) / np.outer(scale, scale)
+        change = (inverse @ right)[: parameters.size]
+        most = np.asarray(step) * 150
+        change = np.clip(change, -most, most)
+        parameters = parameters + change
+        if limit is not None and (np.abs(parameters - start) > limit).any():
+            raise NoSolutionError("the fit runs away from where the body is looked for: it is not there")
+        if turn >= 3 and (np.abs(change) < 0.02 * np.asarray(step)).all():
+            break
+    assert model is not None
+    freedom = max(int(usable.sum()) - parameters.size - 3, 1)
+    chi2 = float(np.sum(((data - model) ** 2 * weight)[usable]) / freedom)
+    return StampFit(
+        parameters, inverse[: parameters.size, : parameters.size] * max(chi2, 1.0), amplitudes, model, chi2
+    )
+
+
+def _amplitudes(parts: np.ndarray, data: np.ndarray, weight: np.ndarray) -> np.ndarray:
+    flat = parts.reshape(parts.shape[0], -1)
+    heavy = flat * weight.reshape(-1)
+    normal = heavy @ flat.T
+    scale = np.sqrt(np.maximum(np.diag(normal), 1e-300))
+    inverse = np.linalg.pinv(normal / np.outer(scale, scale), rcond=1e-9) / np.outer(scale, scale)
+    return inverse @ (heavy @ data.reshape(-1))
+
+
+def _factor(squares: np.ndarray) -> float:
+    """Return the scale of chi^2-distributed squares, by their median (0.455 of the mean), robustly."""
+    return max(float(np.median(squares)) / 0.4549, 1e-12) if squares.size else 1.0
