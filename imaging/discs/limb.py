@@ -2,8 +2,8 @@
 
 The pixels about the limb are sorted into sectors. In each sector the mean limb profile of the whole frame is fitted
 with a level, a contrast and a displacement of its own, so that clouds, gradients and vignetting change levels and
-not places. The displacements give the centre, robustly. The mean profile, fitted by a blurred model of a disc, gives the
-true radius: an inflection point would be biased inward by the blur (0.08-0.5").
+not places. The displacements give the centre, robustly. The mean profile, fitted by a blurred model of a disc,
+gives the true radius: an inflection point would be biased inward by the blur (0.08-0.5").
 """
 
 from __future__ import annotations
@@ -87,12 +87,12 @@ def fit_limb(
 ) -> LimbFit:
     """Fit the limb of the one bright disc in a frame.
 
-    data: (rows, columns), any unit. `radius_px`: expected true radius; with `radius_sigma_px` it is a prior (give both
-    for the Moon and for discs cut by the frame: the tool holds it when the arc is short). `guess_px`: rough centre.
-    `outline`: refraction. `lit_angle_deg`, `lit_half_deg`: polar angle (+x toward +y) of the middle of the lit limb
-    and how far to each side it may be used. `avoid`: circles (x, y, radius) to leave out, such as a planet.
-    Raises NoSolutionError with a reason when the data do not defend a number. Centre unbiased to 0.01 px on clean
-    frames; the error stated includes seeing as the limb itself shows it.
+    data: (rows, columns), any unit. `radius_px`: expected true radius; with `radius_sigma_px` it is a prior
+    (give both for the Moon and for discs cut by the frame: the tool holds it when the arc is short).
+    `guess_px`: rough centre. `outline`: refraction. `lit_angle_deg`, `lit_half_deg`: polar angle (+x toward +y)
+    of the middle of the lit limb and how far to each side it may be used. `avoid`: circles (x, y, radius) to
+    leave out, such as a planet. Raises NoSolutionError with a reason when the data do not defend a number.
+    Centre unbiased to 0.01 px on clean frames; the error stated includes seeing as the limb itself shows it.
     """
     data = np.asarray(data, np.float32)
     outline = outline or Outline()
@@ -146,7 +146,8 @@ def fit_limb(
     )
 
 
-def _defended(data, x, y, radius, covariance, used, rms, arc, edge, template, outline, prior, sectors, ring):  # type: ignore[no-untyped-def]
+def _defended(data, x, y, radius, covariance, used, rms, arc, edge, template, outline, prior, sectors, ring):  #
+type: ignore[no-untyped-def]
     """Return the fit with its true radius, or raise when something about it is not as a disc's."""
     notes = []
     if arc < 25:
@@ -259,7 +260,7 @@ def _crossings(
     outline: Outline,
     lit: tuple[float | None, float],
 ) -> tuple[_Sectors, float]:
-    """Find the steepest fall of brightness in each sector, to half a pixel; also the typical width (sigma) of the fall."""
+    """Find the steepest fall of brightness in each sector, to half a pixel; also the typical sigma of the fall."""
     offset, angle = _polar(ring, x, y, radius, outline)
     count = int(np.clip(2 * np.pi * radius / 6, 24, 360))
     step = max(1.0, width / 40)
@@ -471,7 +472,7 @@ def _geometry(
     outline: Outline,
     correlated: bool = False,
 ) -> tuple[float, float, float, np.ndarray, np.ndarray, float]:
-    """Solve for the centre and the radius from displacements; returns them, their covariance, what was used, the rms."""
+    """Solve displacements for centre and radius; returns them, their covariance, what was used, the rms."""
     good = sectors.good
     cos, sin = np.cos(sectors.angle[good]), np.sin(sectors.angle[good])
     ratio = outline.ratio(sectors.angle[good])
@@ -520,7 +521,7 @@ def _geometry(
 def _meat(
     design: np.ndarray, weight: np.ndarray, residual: np.ndarray, angle: np.ndarray, count: int
 ) -> np.ndarray:
-    """Return the covariance of the weighted sum, neighbours' correlation included (Newey & West 1987), up to 8 sectors."""
+    """Return the covariance of the weighted sum, with neighbours correlated up to 8 sectors (Newey & West 1987)."""
     order = np.argsort(angle)
     moment = design[order] * (weight * residual)[order, None]
     total = moment.T @ moment

@@ -23,8 +23,9 @@ def planet_on_sun(
     """Place a dark planet on the Sun's disc.
 
     `x_px`, `y_px`: where it is looked for, to within `search_px`. `radius_px`: the expected radius; fitted when
-    `radius_free`. `sun`: the limb fit of the same frame, which gives limb and blur. Within 1.5 of the Cramér-Rao bound and
-    unbiased to 0.06" down to a gap of 1" to the limb. Raises NoSolutionError when no dark disc of this size is there.
+    `radius_free`. `sun`: the limb fit of the same frame, which gives limb and blur. Within 1.5 of the Cramér-
+    Rao bound and unbiased to 0.06" down to a gap of 1" to the limb. Raises NoSolutionError when no dark disc of
+    this size is there.
     """
     blur = sun.blur
     reach = radius_px + 5 * blur.sigma_px + 3
@@ -54,7 +55,9 @@ def planet_on_sun(
     )
     depth, depth_sigma = _depth(stamp, scene, fit.parameters)
     if depth < 5 * depth_sigma or depth < 0.3:
-        raise NoSolutionError(f"what is dark there has {depth:.2f} of a planet's depth: a spot or a cloud, not a planet")
+        raise NoSolutionError(
+            f"what is dark there has {depth:.2f} of a planet's depth: a spot or a cloud, not a planet"
+        )
     notes = ()
     if depth < 0.8:
         notes = (f"the planet is {depth:.2f} as dark as a black disc: haze, stray light or a spot",)
@@ -82,7 +85,9 @@ class _Scene:
 
     def __init__(self, stamp: Stamp, radius_px: float, sun: LimbFit, finer: int):
         self.radius_px, self.sun, self.finer = radius_px, sun, finer
-        self.margin = int(np.ceil(4 * 2.2 * sun.blur.sigma_px if sun.blur.wing > 0 else 4 * sun.blur.sigma_px)) + 1
+        self.margin = (
+            int(np.ceil(4 * 2.2 * sun.blur.sigma_px if sun.blur.wing > 0 else 4 * sun.blur.sigma_px)) + 1
+        )
         self.margin = min(self.margin, 40)
         self.x, self.y = stamp.grid(finer, self.margin)
         dx, dy = self.x - sun.x_px, self.y - sun.y_px

@@ -15,9 +15,9 @@ from planner.errors import NoSolutionError
 class DiscPlace:
     """A disc or point placed in a frame. Pixels are 0-based; `covariance` (px^2) is of the centre of figure (x, y).
 
-    `light_x_px`, `light_y_px`: centre of light, the same for a body that is evenly lit. `contrast`: depth below the Sun
-    (1 is black) or height over the noise for a bright body. `chi2`: of the fit, by degree of freedom, in units of the noise
-    the stamp itself shows. `notes`: what was assumed or is doubtful.
+    `light_x_px`, `light_y_px`: centre of light, the same for a body that is evenly lit. `contrast`: depth below
+    the Sun (1 is black) or height over the noise for a bright body. `chi2`: of the fit, by degree of freedom,
+    in units of the noise the stamp itself shows. `notes`: what was assumed or is doubtful.
     """
 
     x_px: float
@@ -42,7 +42,7 @@ class DiscPlace:
 
 @dataclass(frozen=True)
 class Stamp:
-    """Pixels around a place: `data` (rows, columns), the array place (`x_low`, `y_low`) of its first pixel, what is usable."""
+    """Pixels about a place: `data` (rows, columns), where its first pixel is in the frame, what is usable."""
 
     data: np.ndarray
     x_low: int
@@ -54,7 +54,7 @@ class Stamp:
     def cut(
         cls, frame: np.ndarray, x_px: float, y_px: float, half_px: float, saturation: float | None = None
     ) -> Stamp:
-        """Cut a square about a place out of a frame; raises NoSolutionError when less than half of it is in the frame."""
+        """Cut a square about a place out of a frame; raises NoSolutionError when most of it is beyond the edge."""
         half = int(np.ceil(half_px))
         if not (np.isfinite(x_px) and np.isfinite(y_px)):
             raise NoSolutionError("the place looked at is not in the frame")
@@ -128,9 +128,9 @@ def fit_stamp(
     """Fit data = sum amplitude_k component_k(parameters) by variable projection and Gauss-Newton steps.
 
     `components(parameters)` gives (k, rows, columns); `step`: for derivatives, of the size of a hundredth of a pixel;
-    `variance(model)`: up to a factor, which the residuals set. `prior`: 1-sigma of each parameter about `start` (inf is
-    free). `limit`: how far each may go from `start`. Pixels off by more than `robust` sigma are left out.
-    Raises NoSolutionError when a parameter runs away.
+    `variance(model)`: up to a factor, which the residuals set. `prior`: 1-sigma of each parameter about `start`
+    (inf is free). `limit`: how far each may go from `start`. Pixels off by more than `robust` sigma are left
+    out. Raises NoSolutionError when a parameter runs away.
     """
     data, usable = stamp.data, stamp.usable.copy()
     parameters = np.asarray(start, float).copy()
@@ -151,9 +151,7 @@ def fit_stamp(
         for index in range(parameters.size):
             moved = parameters.copy()
             moved[index] += step[index]
-            slopes.append(
-                (np.tensordot(amplitudes, components(moved), axes=(0, 0)) - model) / step[index]
-            )
+            slopes.append((np.tensordot(amplitudes, components(moved), axes=(0, 0)) - model) / step[index])
         design = np.concatenate([np.array(slopes).reshape(parameters.size, *data.shape), parts])
         flat = design.reshape(design.shape[0], -1)
         heavy = flat * weight.reshape(-1)

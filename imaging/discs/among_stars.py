@@ -1,0 +1,345 @@
+"""A planet against the night sky or beside the Moon: a point or a disc, saturated, bled, lit from one side."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.special import erf
+
+from imaging.discs.edge import FWHM_OVER_SIGMA, WING_RATIO, Blur
+from imaging.discs.limb import LimbFit
+from imaging.discs.phase import law_of, light_offset_radii, minnaert
+from imaging.discs.stamp import DiscPlace, Stamp, blurred, coverage, fit_stamp, sub_pixels
+from planner.errors import NoSolutionError
+
+# Widths of the round Gaussians that together are any point spread, in units of the narrowest.
+_WIDTHS = (1.0, 1.6, 2.6, 4.5, 9.0)
+
+
+@dataclass(frozen=True)
+class Body:
+    """What is known of a planet beforehand. Angles are polar, in the array, from +x toward +y.
+
+    `radius_px`: equatorial. `lit_angle_deg`: toward the middle of the lit limb; None when not known, then no
+    correction for phase is made. `pole_angle_deg`: of the projected pole, for a flattened disc.
+    """
+
+    name: str = "planet"
+    radius_px: float = 0.0
+    phase_angle_deg: float = 0.0
+    lit_angle_deg: float | None = None
+    flattening: float = 0.0
+    pole_angle_deg: float = 90.0
+
+    def light_offset_px(self) -> tuple[float, float]:
+        """Return the centre of light minus the centre of figure (x, y)."""
+        if self.lit_angle_deg is None:
+            return 0.0, 0.0
+        size = self.radius_px * light_offset_radii(self.phase_angle_deg, law_of(self.name))
+        angle = np.radians(self.lit_angle_deg)
+        return float(size * np.cos(angle)), float(size * np.sin(angle))
+
+
+@dataclass(frozen=True)
+class Noise:
+    """Variance of a pixel: `sky_adu2` where it is dark, growing by `per_adu` times the light above `level_adu`."""
+
+    level_adu: float
+    sky_adu2: float
+    per_adu: float
+
+    def variance(self, model: np.ndarray) -> np.ndarray:
+        """Return the variance at these levels."""
+        return self.sky_adu2 + self.per_adu * np.maximum(model - self.level_adu, 0)
+
+
+def planet_among_stars(
+    data: np.ndarray,
+    x_px: float,
+    y_px: float,
+    body: Body | None = None,
+    fwhm_px: float = 2.5,
+    search_px: float = 12.0,
+    saturation: float | None = None,
+    gain_e_adu: float | None = None,
+) -> DiscPlace:
+    """Place a planet on a dark sky: centre of light, and centre of figure by its phase.
+
+    `x_px`, `y_px`: where it is looked for, to within `search_px`; `fwhm_px`: rough width of a star. A disc
+    clearly larger than the blur is fitted as a lit sphere (Minnaert's law with a free exponent); a smaller one
+    as a point spread of free shape, and the centre of figure follows from the law of `phase.law_of`. Saturated
+    pixels and bled columns are left out; their surroundings place the body. Raises NoSolutionError when nothing
+    stands out, or the image is cut.
+    """
+    body = body or Body()
+    x0, y0, half, noise = _locate(data, x_px, y_px, body, fwhm_px, search_px, saturation, gain_e_adu)
+    stamp = _without_bled_columns(Stamp.cut(data, x0, y0, half, saturation))
+    clipped = int(stamp.clipped.sum())
+    sigma = fwhm_px / FWHM_OVER_SIGMA
+    if body.radius_px > 1.5 * sigma and body.radius_px > 1.2:
+        return _resolved(stamp, x0, y0, body, sigma, noise, None, clipped)
+    return _point(stamp, x0, y0, body, sigma, noise, clipped)
+
+
+def planet_beside_moon(
+    data: np.ndarray,
+    x_px: float,
+    y_px: float,
+    body: Body,
+    moon: LimbFit,
+    search_px: float = 12.0,
+    saturation: float | None = None,
+    gain_e_adu: float | None = None,
+) -> DiscPlace:
+    """Place a planet near or partly behind the Moon, whose limb fit says where the planet is cut and how
+    blurred it is.
+
+    The Moon's limb and glare in the stamp are modelled with it. Raises NoSolutionError when less than a tenth of the
+    planet's disc is clear of the Moon, or nothing stands out there.
+    """
+    gap = np.hypot(x_px - moon.x_px, y_px - moon.y_px) - moon.radius_px
+    if gap < -0.8 * body.radius_px - 0.5 * search_px:
+        raise NoSolutionError("the planet is behind the Moon")
+    sigma = moon.blur.sigma_px
+    reach = body.radius_px + 5 * sigma + 3
+    wide = Stamp.cut(data, x_px, y_px, search_px + reach, saturation)
+    noise = _sky_noise(wide, gain_e_adu)
+    x0, y0 = _peak_off_moon(wide, x_px, y_px, body, moon, search_px, noise)
+    stamp = Stamp.cut(data, x0, y0, reach, saturation)
+    place = _resolved(stamp, x0, y0, body, sigma, noise, moon, int(stamp.clipped.sum()))
+    gap = np.hypot(place.x_px - moon.x_px, place.y_px - moon.y_px) - moon.radius_px
+    if gap < -0.8 * max(body.radius_px, 1.0):
+        raise NoSolutionError("less than a tenth of the planet is clear of the Moon")
+    return place
+
+
+def _sky_noise(stamp: Stamp, gain_e_adu: float | None) -> Noise:
+    values = stamp.data[stamp.usable]
+    if values.size < 30:
+        raise NoSolutionError("too few usable pixels where the planet is looked for")
+    level = float(np.median(values))
+    for _ in range(3):
+        scale = 1.48 * float(np.median(np.abs(values - level))) + 1e-9
+        level = float(np.median(values[np.abs(values - level) < 4 * scale]))
+    pairs = np.diff(stamp.data, axis=1)[stamp.usable[:, 1:] & stamp.usable[:, :-1]]
+    sky = max(float(1.48 * np.median(np.abs(pairs))) ** 2 / 2, 1e-6)
+    return Noise(level, sky, 1 / gain_e_adu if gain_e_adu else sky / max(level, 1.0))
+
+
+def _locate(
+    data: np.ndarray,
+    x_px: float,
+    y_px: float,
+    body: Body,
+    fwhm_px: float,
+    search_px: float,
+    saturation: float | None,
+    gain_e_adu: float | None,
+) -> tuple[float, float, float, Noise]:
+    """Find the brightest thing near a place; returns its middle, the half size of the stamp it needs, the noise."""
+    import cv2
+
+    reach = body.radius_px + 3 * fwhm_px + 4
+    wide = Stamp.cut(data, x_px, y_px, search_px + 2 * reach, saturation)
+    noise = _sky_noise(wide, gain_e_adu)
+    sigma = max(np.hypot(fwhm_px / FWHM_OVER_SIGMA, 0.5 * body.radius_px), 0.6)
+    light = np.where(wide.usable | wide.clipped, wide.data - noise.level_adu, 0.0)
+    smooth = cv2.GaussianBlur(light, (0, 0), sigma, borderType=cv2.BORDER_REPLICATE)
+    x, y = wide.grid()
+    allowed = np.hypot(x - x_px, y - y_px) <= search_px
+    row, column = np.unravel_index(np.argmax(np.where(allowed, smooth, -np.inf)), smooth.shape)
+    significance = smooth[row, column] * np.sqrt(4 * np.pi) * sigma / np.sqrt(noise.sky_adu2)
+    if significance < 6:
+        raise NoSolutionError(
+            f"nothing brighter than the sky's noise within {search_px:.0f} px of where the planet is expected"
+        )
+    # the middle of what is saturated, or of what is above half of the peak
+    top = smooth[row, column]
+    blob = wide.clipped if wide.clipped[row, column] else smooth > 0.5 * top
+    count, labels = cv2.connectedComponents(blob.astype(np.uint8))
+    label = labels[row, column]
+    chosen = (labels == label) if count > 1 and label > 0 else blob
+    rows, columns = np.nonzero(chosen)
+    x0, y0 = float(np.median(columns)) + wide.x_low, float(np.median(rows)) + wide.y_low
+    size = np.sqrt(rows.size / np.pi) if wide.clipped[row, column] else 0.0
+    return x0, y0, max(reach, 2.5 * size + 2 * fwhm_px + 4), noise
+
+
+def _without_bled_columns(stamp: Stamp) -> Stamp:
+    """Leave out the surroundings of saturated pixels, and whole columns (or rows) along which charge has run."""
+    if not stamp.clipped.any():
+        return stamp
+    import cv2
+
+    usable = stamp.usable & ~cv2.dilate(stamp.clipped.astype(np.uint8), np.ones((3, 3), np.uint8)).astype(
+        bool
+    )
+    for axis in (0, 1):
+        along = stamp.clipped.sum(axis=axis)
+        core = np.sqrt(stamp.clipped.sum() / np.pi)
+        bled = np.nonzero(along > 3.0 * core + 4)[0]
+        for line in bled:
+            piece = slice(max(line - 1, 0), line + 2)
+            if axis == 0:
+                usable[:, piece] = False
+            else:
+                usable[piece, :] = False
+    return Stamp(stamp.data, stamp.x_low, stamp.y_low, usable, stamp.clipped)
+
+
+def _point(
+    stamp: Stamp, x0: float, y0: float, body: Body, sigma: float, noise: Noise, clipped: int
+) -> DiscPlace:
+    """Fit a round point spread of free shape: five Gaussians of fixed ratio, integrated over pixels."""
+    x, y = stamp.grid()
+    unit = max(float(stamp.data.shape[0]), 1.0)
+    plane = [np.ones(stamp.data.shape), (x - x0) / unit + 0 * y, (y - y0) / unit + 0 * x]
+
+    def share(offset: np.ndarray, width: float) -> np.ndarray:
+        return 0.5 * (erf((offset + 0.5) / (np.sqrt(2) * width)) - erf((offset - 0.5) / (np.sqrt(2) * width)))
+
+    reach = 0.5 * min(stamp.data.shape)
+    ratios = [ratio for ratio in _WIDTHS if ratio == 1 or ratio * sigma < 0.8 * reach]
+    seen = np.hypot(sigma, body.radius_px / 2)
+
+    def components(parameters: np.ndarray) -> np.ndarray:
+        px, py, log_sigma = parameters
+        widths = [ratio * np.exp(log_sigma) for ratio in ratios]
+        return np.array([share(y - py, width) * share(x - px, width) for width in widths] + plane)
+
+    fit = fit_stamp(
+        stamp,
+        components,
+        np.array([x0, y0, np.log(seen)]),
+        np.array([0.01, 0.01, 0.01]),
+        noise.variance,
+        prior=np.array([np.inf, np.inf, 0.4]),
+        limit=np.array([max(4.0, 0.5 * reach)] * 2 + [1.5]),
+        robust=8.0,
+    )
+    light = np.tensordot(
+        fit.amplitudes[: len(ratios)], components(fit.parameters)[: len(ratios)], axes=(0, 0)
+    )
+    height = float(light.max())
+    if height < 3 * np.sqrt(noise.sky_adu2):
+        raise NoSolutionError("nothing like a planet stands out of the sky there")
+    x, y = float(fit.parameters[0]), float(fit.parameters[1])
+    dx, dy = body.light_offset_px()
+    notes = []
+    if body.lit_angle_deg is None and body.phase_angle_deg * body.radius_px > 2:
+        notes.append("the phase is not corrected: the direction to the lit limb is not known")
+    elif np.hypot(dx, dy) > 0.01:
+        notes.append(f"centre of figure from the centre of light by the law of {law_of(body.name)}")
+    if clipped:
+        notes.append(f"{clipped} saturated pixels left out")
+    return DiscPlace(
+        x - dx, y - dy, fit.covariance[:2, :2], body.radius_px, 0.0, Blur(float(np.exp(fit.parameters[2]))), x, y,
+        height / float(np.sqrt(noise.sky_adu2)), fit.chi2, "point spread", clipped, tuple(notes),
+    )  # fmt: skip
+
+
+def _resolved(
+    stamp: Stamp,
+    x0: float,
+    y0: float,
+    body: Body,
+    sigma: float,
+    noise: Noise,
+    moon: LimbFit | None,
+    clipped: int,
+) -> DiscPlace:
+    """Fit a blurred lit ellipsoid, cut by the Moon where there is one."""
+    finer = sub_pixels(body.radius_px, sigma)
+    wing = moon.blur.wing if moon is not None else 0.1
+    margin = min(int(np.ceil(4 * WING_RATIO * sigma)) + 1, 24)
+    x, y = stamp.grid(finer, margin)
+    pole = np.radians(body.pole_angle_deg)
+    lit = np.radians(body.lit_angle_deg if body.lit_angle_deg is not None else body.pole_angle_deg)
+    phase = body.phase_angle_deg if body.lit_angle_deg is not None else 0.0
+    xs, ys = stamp.grid()
+    unit = max(float(stamp.data.shape[0]), 1.0)
+    u, v = (xs - x0) / unit + 0 * ys, (ys - y0) / unit + 0 * xs
+    plane = [np.ones(stamp.data.shape), u, v]
+    clear = 1.0
+    if moon is not None:
+        dx, dy = x - moon.x_px, y - moon.y_px
+        away = np.hypot(dx, dy) / moon.outline.ratio(np.arctan2(dy, dx)) - moon.radius_px
+        clear = 1 - coverage(away, finer)
+        if away.min() < 3 * sigma:
+            # the Moon's own light: a step with a slope inward, and its glare
+            inside = 1 - clear
+            plane += [
+                blurred(inside, moon.blur, finer, margin),
+                blurred(inside * np.clip(-away, 0, None) / unit, moon.blur, finer, margin),
+            ]
+        plane += [u * u, u * v, v * v]
+
+    def disc(parameters: np.ndarray) -> np.ndarray:
+        px, py, log_sigma, log_radius, exponent = parameters
+        radius = body.radius_px * np.exp(log_radius)
+        dx, dy = x - px, y - py
+        along = (dx * np.cos(pole) + dy * np.sin(pole)) / (radius * (1 - body.flattening))
+        across = (dx * np.sin(pole) - dy * np.cos(pole)) / radius
+        turn = lit - pole
+        toward = along * np.cos(turn) - across * np.sin(turn)
+        side = along * np.sin(turn) + across * np.cos(turn)
+        distance = np.hypot(along, across)
+        # pixels on the outline count by the part inside; brightness there is that just inside
+        shrink = np.minimum(1.0, 0.995 / np.maximum(distance, 1e-6))
+        bright = minnaert(toward * shrink, side * shrink, phase, exponent)
+        seen = bright * coverage((distance - 1) * radius, finer) * clear
+        return blurred(seen, Blur(float(np.exp(log_sigma)), wing), finer, margin)
+
+    def components(parameters: np.ndarray) -> np.ndarray:
+        return np.array([disc(parameters), *plane])
+
+    dx, dy = body.light_offset_px()
+    start = np.array([x0 - dx, y0 - dy, np.log(max(sigma, 0.3)), 0.0, 0.8])
+    fit = fit_stamp(
+        stamp,
+        components,
+        start,
+        np.array([0.02, 0.02, 0.01, 0.005, 0.02]),
+        noise.variance,
+        prior=np.array([np.inf, np.inf, 0.2 if moon is not None else 0.5, 0.01, 0.25]),
+        limit=np.array([max(6.0, 2 * body.radius_px)] * 2 + [1.5, 0.2, 1.0]),
+        robust=8.0,
+    )
+    px, py = float(fit.parameters[0]), float(fit.parameters[1])
+    height = float((fit.amplitudes[0] * disc(fit.parameters)).max())
+    if height < 5 * np.sqrt(noise.sky_adu2):
+        raise NoSolutionError("nothing like the planet's disc stands out there")
+    notes = (f"{clipped} saturated pixels left out",) if clipped else ()
+    return DiscPlace(
+        px, py, fit.covariance[:2, :2], float(body.radius_px * np.exp(fit.parameters[3])),
+        float(body.radius_px * np.sqrt(fit.covariance[3, 3])), Blur(float(np.exp(fit.parameters[2])), wing),
+        px + dx, py + dy, height / float(np.sqrt(noise.sky_adu2)), fit.chi2, "lit disc", clipped, notes,
+    )  # fmt: skip
+
+
+def _peak_off_moon(
+    stamp: Stamp, x_px: float, y_px: float, body: Body, moon: LimbFit, search_px: float, noise: Noise
+) -> tuple[float, float]:
+    """Return the brightest place off the Moon, its glare (by distance from the limb) taken away."""
+    import cv2
+
+    x, y = stamp.grid()
+    dx, dy = x - moon.x_px, y - moon.y_px
+    away = np.hypot(dx, dy) / moon.outline.ratio(np.arctan2(dy, dx)) - moon.radius_px
+    step = np.clip(np.floor(away).astype(int) + 40, 0, 400)
+    light = np.where(stamp.usable, stamp.data, np.nan)
+    glare = np.zeros(401)
+    for one in np.unique(step):
+        values = light[step == one]
+        glare[one] = np.nanmedian(values) if np.isfinite(values).any() else noise.level_adu
+    rest = np.nan_to_num(light - glare[step])
+    sigma = max(np.hypot(moon.blur.sigma_px, 0.5 * body.radius_px), 0.6)
+    smooth = cv2.GaussianBlur(rest, (0, 0), sigma, borderType=cv2.BORDER_REPLICATE)
+    allowed = (np.hypot(x - x_px, y - y_px) <= search_px) & (away > -0.8 * body.radius_px)
+    if not allowed.any():
+        raise NoSolutionError("the planet is behind the Moon")
+    row, column = np.unravel_index(np.argmax(np.where(allowed, smooth, -np.inf)), smooth.shape)
+    if smooth[row, column] * np.sqrt(4 * np.pi) * sigma < 6 * np.sqrt(noise.sky_adu2):
+        raise NoSolutionError("nothing stands out of the Moon's glare where the planet is expected")
+    return float(column + stamp.x_low), float(row + stamp.y_low)
