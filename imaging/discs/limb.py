@@ -146,8 +146,7 @@ def fit_limb(
     )
 
 
-def _defended(data, x, y, radius, covariance, used, rms, arc, edge, template, outline, prior, sectors, ring):  #
-type: ignore[no-untyped-def]
+def _defended(data, x, y, radius, covariance, used, rms, arc, edge, template, outline, prior, sectors, ring):  # type: ignore[no-untyped-def]
     """Return the fit with its true radius, or raise when something about it is not as a disc's."""
     notes = []
     if arc < 25:
