@@ -24,8 +24,11 @@ from planner.sequence import radiometry
 from planner.sequence.documents import observer_of
 from planner.sequence.frametimes import PlannedFrames, planned_event, planned_frames
 from planner.sequence.models import Plan, Rig, Shot, Site
+from planner.sequence.skyglow import sky_v_mag_arcsec2
+from planner.sky.discs import SkyDisc, sky_disc
 from planner.sky.observer import local_axes
 from planner.sky.photometry import airmass
+from planner.sky.places import altaz
 from planner.sky.refraction import refraction_arcsec
 
 SIDEREAL_ARCSEC_S = 15.041
@@ -113,6 +116,8 @@ class Scene:
     rig: Rig
     geometry: Geometry
     zenith: np.ndarray
+    moon: SkyDisc
+    moon_altitude_deg: np.ndarray
     _stars: dict[tuple[float, ...], object] = field(default_factory=dict)
 
     @classmethod
@@ -139,7 +144,9 @@ class Scene:
         middle = frames.middle_tt_s[chosen]
         geometry = catalogue.family(plan.event.family).geometry(planned_event(plan), observer, middle)
         zenith = local_axes(observer, middle)[:, 2, :]
-        return cls(plan, faults, cut, seed, frames, chosen, rig, geometry, zenith)
+        moon = sky_disc("moon", observer, middle)
+        moon_altitude, _ = altaz((moon.ra_deg, moon.dec_deg), observer, middle)
+        return cls(plan, faults, cut, seed, frames, chosen, rig, geometry, zenith, moon, moon_altitude)
 
     def __len__(self) -> int:
         """Give the number of frames chosen."""
@@ -311,11 +318,23 @@ class Scene:
         return PointSpread.seeing(float(np.hypot(width / self.rig.scale_arcsec_px, OPTICS_FWHM_PX)))
 
     def _sky_mag(self, position: int, site: Site) -> float:
-        """V magnitudes a square arcsecond: dark, or the twilight's straight line from 18 degrees down (from memory)."""
-        sun = float(self.geometry.sun_altitude_deg[position])
-        twilight = np.interp(sun, [-18.0, -12.0, -6.0, 0.0, 10.0], [22.0, 19.5, 13.5, 6.5, 4.0])
+        """Return the sky's V magnitude a square arcsecond: dark sky, twilight and moonlight together."""
+        moon = self.moon
+        altitude = float(self.geometry.altitude_deg[position])
+        here = self.frames.ra_deg[self.chosen[position]], self.frames.dec_deg[self.chosen[position]]
+        there = unit_vector(float(moon.ra_deg[position]), float(moon.dec_deg[position]))
+        away = np.degrees(np.arccos(np.clip(unit_vector(*here) @ there, -1, 1)))
         return float(
-            -2.5 * np.log10(10 ** (-0.4 * site.sky_brightness_mag_arcsec2) + 10 ** (-0.4 * twilight))
+            sky_v_mag_arcsec2(
+                site.sky_brightness_mag_arcsec2,
+                site.extinction_mag,
+                max(altitude, 1.0),
+                float(self.geometry.sun_altitude_deg[position]),
+                float(self.moon_altitude_deg[position]),
+                # the law of scattering diverges at the Moon itself
+                max(float(away), 1.0),
+                float(moon.phase_angle_deg[position]),
+            )
         )
 
     def _trail_px(self, pointing: Pointing, shot: Shot) -> tuple[float, float]:
