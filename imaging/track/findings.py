@@ -8,7 +8,6 @@ Laplace evidence and by how often such a slip happens; odds are against the plai
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -62,8 +61,9 @@ class Question:
     """Everything the readings need besides the sightings.
 
     `other_sites`: name to path, for a flipped sign. `other_bodies`: body to path. `plan_middle_tt_s`: the middle
-    of the frames the plan asked for. `shifted_site(north_km, east_km)` gives the path of a displaced observer.
-    `jitter_arcsec`: scatter usual for this rig and seeing. `clock_sigma_s`: what the rig's clock promises.
+    of the frames the plan asked for. `jitter_arcsec`: scatter usual for this rig and seeing. `clock_sigma_s`: what the
+    rig's clock promises.
+    `center_sigma_arcsec`: what the centre of the reference disc may be off by in all frames alike.
     """
 
     path: PredictedPath
@@ -72,8 +72,14 @@ class Question:
     plan_middle_tt_s: float
     other_sites: dict[str, PredictedPath]
     other_bodies: dict[str, PredictedPath]
-    shifted_site: Callable[[float, float], PredictedPath] | None = None
     target: str = "the target"
+    center_sigma_arcsec: float = 0.0
+
+    def priors(self, clock_s: float) -> Priors:
+        """Return what is known before the frames speak, with a clock that may be off by so much."""
+        return Priors(
+            clock_s=clock_s, center_arcsec=self.center_sigma_arcsec, jitter_arcsec=self.jitter_arcsec
+        )
 
 
 @dataclass(frozen=True)
@@ -160,7 +166,7 @@ def lower_first(text: str) -> str:
 
 
 def _readings(s: Sightings, q: Question):  # type: ignore[no-untyped-def]
-    priors = Priors(clock_s=SMALL_CLOCK_S, jitter_arcsec=q.jitter_arcsec)
+    priors = q.priors(SMALL_CLOCK_S)
 
     def tried(name, path, clock_s=0.0, log_prior=0.0, sightings=s, sentence="", priors=priors):
         try:
@@ -294,7 +300,7 @@ class _Still(PredictedPath):
 
 def _settled(reading: Reading, question: Question) -> Reading:
     """Fit the believed reading once more with a clock that no prior holds, so that its sigma is the data's."""
-    free = Priors(clock_s=DAY_S, jitter_arcsec=question.jitter_arcsec)
+    free = question.priors(DAY_S)
     if reading.name == "wrong-body":
         return reading
     try:

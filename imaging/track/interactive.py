@@ -29,9 +29,11 @@ def plots(result: CheckResult) -> tuple[str, str, str]:
 _ON_SELECT = """
 const i = source.selected.indices[0];
 if (i === undefined) return;
-const d = source.data, sigma = d.sigma_along[i];
-showCutout(d.row[i], `${d.file[i]}\\n${d.utc[i]} UTC\\n` +
-  `along ${d.along[i].toFixed(2)}″, across ${d.across[i].toFixed(2)}″ (σ ${sigma.toFixed(2)}″)\\n${d.verdict[i]}${d.reason[i] ? ": " + d.reason[i] : ""}`);
+const d = source.data, number = x => x.toFixed(2) + "″";
+const lines = [d.file[i], d.utc[i] + " UTC",
+  `along ${number(d.along[i])}, across ${number(d.across[i])} (σ ${number(d.sigma_along[i])})`,
+  d.verdict[i] + (d.reason[i] ? ": " + d.reason[i] : "")];
+showCutout(d.row[i], lines.join("\\n"));
 """
 
 

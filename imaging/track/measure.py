@@ -1,0 +1,301 @@
+"""One frame measured: its reference found, then the target looked for where the plan expects it, then anywhere."""
+
+from __future__ import annotations
+
+import hashlib
+from collections.abc import Callable
+from dataclasses import replace
+
+import numpy as np
+
+from imaging.discs.limb import LimbFit, fit_limb
+from imaging.discs.outline import Outline, pixel_angle_deg
+from imaging.discs.planet import Body, DiscPlace, planet_among_stars, planet_beside_moon, planet_on_sun
+from imaging.frames.frame import Frame
+from imaging.stars.detection import Detections
+from imaging.stars.solution import PlateSolution
+from imaging.stars.solve import detect_frame, solve_frame
+from imaging.track.cutout import Cutout, cut_out
+from imaging.track.measurement import DiscReference, Measurement, StarReference
+from imaging.track.nominal import Nominal, Promise
+from imaging.track.path import Expected, tangent_offsets, target_place, unit_vectors
+from planner.errors import InputError, NoSolutionError
+from planner.events.family import Geometry
+
+RADIUS_TOLERANCE = 0.01  # of a rig file's scale: focus and temperature change a focal length by less
+FULL_PHASE_DEG = 3.0  # below this phase angle the whole limb of the Moon is lit
+NEAR_ARCSEC = 15.0  # an ordinary clock, site and camera leave the target this near to where it is expected
+
+STRANGER_RATIO = 5.0  # so much brighter than what is near the prediction, a stranger is taken for the target
+
+
+class Measurer:
+    """Measures the frames of one plan; what one frame taught (where the target was, the plate) helps the next."""
+
+    def __init__(self, promise: Promise):
+        self.promise = promise
+        self.path = promise.path
+        self._shift_px = np.zeros(2)
+        self._solution: PlateSolution | None = None
+
+    def measure(self, frame: Frame, pictures: bool = False) -> Measurement:
+        """Return what a frame gives; a frame that gives nothing says why. The frame must hold a time."""
+        assert frame.time is not None
+        blank = Measurement(
+            file=frame.path.name,
+            frame_index=frame.frame_index,
+            time=frame.time,
+            exposure_s=frame.exposure_s or 0.0,
+            nominal=self.promise.of_frame(frame),
+            shape=(frame.data.shape[0], frame.data.shape[1]),
+            camera=frame.camera,
+            site=frame.site,
+            row_zero=frame.row_zero,
+            digest=hashlib.blake2b(np.ascontiguousarray(frame.data), digest_size=12).hexdigest(),
+        )
+        try:
+            tt_s = np.array([frame.time.middle_tt_s])
+            geometry, expected = self.path.geometry(tt_s), self.path.at(tt_s)
+        except InputError as beyond:
+            return replace(blank, reason=f"its time is beyond the ephemeris: {beyond}")
+        try:
+            if geometry.reference == "stars":
+                done = self._among_stars(frame, blank, geometry)
+            else:
+                done = self._on_disc(frame, blank, geometry, expected)
+        except NoSolutionError as none:
+            done = replace(blank, reason=str(none))
+        return replace(done, cutout=_picture(frame, done)) if pictures else done
+
+    def _on_disc(
+        self, frame: Frame, blank: Measurement, geometry: Geometry, expected: Expected
+    ) -> Measurement:
+        nominal = blank.nominal
+        limb = self._limb(frame, nominal, geometry, expected)
+        center = np.array([limb.x_px, limb.y_px])
+        offset = np.array(nominal.to_pixels(float(expected.east_arcsec[0]), float(expected.north_arcsec[0])))
+        reference = DiscReference(
+            limb.x_px,
+            limb.y_px,
+            limb.radius_px,
+            limb.covariance[:2, :2],
+            float(np.sqrt(limb.covariance[2, 2])),
+        )
+        blank = replace(
+            blank,
+            disc=reference,
+            solved_by=f"{geometry.reference}-limb",
+            predicted_px=tuple((center + offset).tolist()),
+        )
+        radius = float(expected.target_semidiameter_arcsec[0]) / nominal.scale_arcsec_px
+        try:
+            place = self._found(frame, limb, center + offset, radius, geometry)
+        except NoSolutionError as none:
+            return replace(blank, reason=str(none))
+        self._shift_px = np.array([place.x_px, place.y_px]) - center - offset
+        return replace(
+            blank,
+            x_px=place.x_px,
+            y_px=place.y_px,
+            covariance_px2=place.covariance,
+            reason="; ".join((*limb.notes, *place.notes)),
+        )
+
+    def _limb(self, frame: Frame, nominal: Nominal, geometry: Geometry, expected: Expected) -> LimbFit:
+        disc = geometry.discs[geometry.reference]
+        semidiameter = float(disc.semidiameter_arcsec[0])
+        altitude, zenith_pa = float(expected.altitude_deg[0]), float(expected.zenith_pa_deg[0])
+        outline = Outline()
+        if np.isfinite(altitude) and altitude > 0 and self.path.observer is not None:
+            up = _along(expected, zenith_pa)
+            if np.isfinite(up) and abs(up) < 7200:
+                altitude -= up / 3600.0
+            outline = Outline.seen(
+                max(altitude, 0.1),
+                zenith_pa,
+                nominal.rotation_deg,
+                nominal.parity,
+                semidiameter,
+                self.path.observer,
+            )
+        radius = semidiameter / nominal.scale_arcsec_px
+        options = {"outline": outline, "saturation": frame.saturation_adu}
+        if geometry.reference == "moon":
+            options["radius_sigma_px"] = RADIUS_TOLERANCE * radius
+            if float(disc.phase_angle_deg[0]) > FULL_PHASE_DEG:
+                bright = float(disc.bright_limb_pa_deg[0])
+                options["lit_angle_deg"] = pixel_angle_deg(bright, nominal.rotation_deg, nominal.parity)
+                options["lit_half_deg"] = 80.0
+        return fit_limb(frame.data, radius, **options)
+
+    def _found(
+        self, frame: Frame, limb: LimbFit, predicted: np.ndarray, radius_px: float, geometry: Geometry
+    ) -> DiscPlace:
+        """Look for the target near its prediction, near where the last frame had it, farther off, and anywhere."""
+        near = max(NEAR_ARCSEC / self.promise.rig.scale_arcsec_px / frame.binning, 3 * radius_px, 8.0)
+        center = np.array([limb.x_px, limb.y_px])
+        tries = [(predicted, near)]
+        if np.hypot(*self._shift_px) > near / 2:
+            tries.insert(0, (predicted + self._shift_px, near))
+        tries += [(predicted, 0.2 * limb.radius_px), (center, 1.02 * limb.radius_px)]
+        reason = NoSolutionError("nothing was looked for")
+        for place, search in tries:
+            try:
+                return self._place(frame, limb, place, search, radius_px, geometry)
+            except NoSolutionError as none:
+                reason = none
+        raise reason
+
+    def _place(
+        self,
+        frame: Frame,
+        limb: LimbFit,
+        place: np.ndarray,
+        search_px: float,
+        radius_px: float,
+        geometry: Geometry,
+    ) -> DiscPlace:
+        x, y = place.tolist()
+        if geometry.reference == "sun":
+            return planet_on_sun(
+                frame.data, x, y, radius_px, limb, search_px, saturation=frame.saturation_adu
+            )
+        body = _body(geometry, radius_px, self._nominal_pixel_angle(frame))
+        return planet_beside_moon(
+            frame.data,
+            x,
+            y,
+            body,
+            limb,
+            search_px,
+            saturation=frame.saturation_adu,
+            gain_e_adu=frame.gain_e_adu,
+        )
+
+    def _nominal_pixel_angle(self, frame: Frame) -> Callable[[float], float]:
+        nominal = self.promise.of_frame(frame)
+        return lambda pa_deg: pixel_angle_deg(pa_deg, nominal.rotation_deg, nominal.parity)
+
+    def _among_stars(self, frame: Frame, blank: Measurement, geometry: Geometry) -> Measurement:
+        nominal = blank.nominal
+        ra, dec, semidiameter = target_place(geometry)
+        bodies = [(float(disc.ra_deg[0]), float(disc.dec_deg[0])) for disc in geometry.discs.values()]
+        found = detect_frame(frame)
+        solution = solve_frame(
+            frame,
+            near=(nominal.aim_ra_deg, nominal.aim_dec_deg),
+            scale_arcsec_px=nominal.scale_arcsec_px,
+            previous=self._solution,
+            exclude=bodies,
+            detections=found,
+        )
+        self._solution = solution
+        x, y = (float(np.squeeze(v)) for v in solution.sky_to_pixel(ra, dec))
+        plate = _plate(solution, x, y)
+        blank = replace(blank, solved_by="stars", predicted_px=(x, y), stars=plate)
+        radius_px = float(semidiameter[0]) / plate.scale_arcsec_px
+        body = _body(geometry, radius_px, lambda pa: pixel_angle_deg(pa, plate.rotation_deg, plate.parity))
+        try:
+            place = self._found_among_stars(frame, found, solution, (x, y), body)
+        except NoSolutionError as none:
+            return replace(blank, reason=str(none))
+        plate = _plate(solution, place.x_px, place.y_px, place.covariance)
+        return replace(
+            blank,
+            x_px=place.x_px,
+            y_px=place.y_px,
+            covariance_px2=place.covariance,
+            stars=plate,
+            reason="; ".join(place.notes),
+        )
+
+    def _found_among_stars(
+        self,
+        frame: Frame,
+        found: Detections,
+        solution: PlateSolution,
+        predicted: tuple[float, float],
+        body: Body,
+    ) -> DiscPlace:
+        """Place the planet near its prediction; or, where a far brighter stranger stands elsewhere, place that."""
+        strangers = _strangers(found, solution)
+        options = {
+            "fwhm_px": float(found.psf_fwhm_px),
+            "saturation": frame.saturation_adu,
+            "gain_e_adu": frame.gain_e_adu,
+        }
+        search = max(NEAR_ARCSEC / solution.scale_arcsec_px, 6.0)
+        away = np.hypot(found.x_px[strangers] - predicted[0], found.y_px[strangers] - predicted[1])
+        if strangers.size and not (away[0] < search):
+            near = strangers[away < search]
+            brighter = (
+                near.size == 0 or found.flux_adu[strangers[0]] > STRANGER_RATIO * found.flux_adu[near[0]]
+            )
+            if brighter:
+                x, y = float(found.x_px[strangers[0]]), float(found.y_px[strangers[0]])
+                return planet_among_stars(frame.data, x, y, body, search_px=3.0, **options)
+        return planet_among_stars(frame.data, *predicted, body, search_px=search, **options)
+
+
+def _strangers(found: Detections, solution: PlateSolution) -> np.ndarray:
+    """Return the detections that are no catalogue star, as bright as the brighter stars here, brightest first."""
+    matched = solution.matched
+    apart = np.hypot(
+        found.x_px[:, None] - matched.x_px[None, :], found.y_px[:, None] - matched.y_px[None, :]
+    ).min(axis=1)
+    stars = apart < 2.0
+    bright = found.flux_adu > (np.median(found.flux_adu[stars]) if stars.any() else 0.0)
+    return np.flatnonzero(~stars & bright & (found.snr > 10))
+
+
+def _plate(
+    solution: PlateSolution, x_px: float, y_px: float, covariance_px2: np.ndarray | None = None
+) -> StarReference:
+    """Return the plate solution at a place of the frame; with the covariance of a centroid, of its direction."""
+    px = np.array([x_px, x_px + 1.0, x_px]), np.array([y_px, y_px, y_px + 1.0])
+    ra, dec = solution.pixel_to_sky(*px)
+    center = np.full(2, ra[0]), np.full(2, dec[0])
+    east, north = tangent_offsets(*center, unit_vectors(ra[1:], dec[1:]))
+    axes = np.array([east, north])  # columns: what one pixel along x, along y is on the sky
+    if covariance_px2 is None:
+        covariance = np.full((2, 2), np.nan)
+    else:
+        covariance = axes @ (covariance_px2 + solution.covariance_px2(x_px, y_px)) @ axes.T
+    return StarReference(
+        ra_deg=float(ra[0]),
+        dec_deg=float(dec[0]),
+        covariance_arcsec2=covariance,
+        scale_arcsec_px=float(np.sqrt(abs(np.linalg.det(axes)))),
+        rotation_deg=float(np.degrees(np.arctan2(east[1], north[1])) % 360.0),
+        parity=-1 if np.linalg.det(axes) > 0 else 1,
+        stars=len(solution.matched.x_px),
+        rms_px=solution.rms_px,
+        header=solution.wcs.to_header(relax=True).tostring(sep="\n"),
+    )
+
+
+def _body(geometry: Geometry, radius_px: float, pixel_angle: Callable[[float], float]) -> Body:
+    """Return what is known of the target's disc, turned to the frame; a star is a point."""
+    if geometry.target not in geometry.discs:
+        return Body(geometry.target)
+    disc = geometry.discs[geometry.target]
+    return Body(
+        name=geometry.target,
+        radius_px=radius_px,
+        phase_angle_deg=float(disc.phase_angle_deg[0]),
+        lit_angle_deg=pixel_angle(float(disc.bright_limb_pa_deg[0])),
+        flattening=float(disc.flattening[0]),
+        pole_angle_deg=pixel_angle(float(disc.pole_pa_deg[0])),
+    )
+
+
+def _along(expected: Expected, pa_deg: float) -> float:
+    """Return the offset from the reference toward a position angle, in arcseconds."""
+    pa = np.radians(pa_deg)
+    return float(expected.east_arcsec[0] * np.sin(pa) + expected.north_arcsec[0] * np.cos(pa))
+
+
+def _picture(frame: Frame, m: Measurement) -> Cutout | None:
+    measured = (m.x_px, m.y_px) if m.measured else None
+    predicted = m.predicted_px if np.isfinite(m.predicted_px).all() else None
+    return cut_out(frame.data, frame.row_zero, measured, predicted)

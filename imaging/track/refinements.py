@@ -1,0 +1,294 @@
+"""Finer findings: what is wrong with clock, site or camera once the track as a whole is understood."""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from itertools import pairwise
+
+import numpy as np
+
+from imaging.track.findings import DAY_S, MOST_ODDS, SLIP, SMALL_CLOCK_S, Finding, Question, Reading, odds
+from imaging.track.fit import Priors, fit_track
+from imaging.track.measurement import Measurement
+from imaging.track.nominal import Promise
+from imaging.track.path import PredictedPath
+from imaging.track.result import duration_text, with_sigma
+from planner.errors import NoSolutionError
+from planner.sequence.models import Plan
+
+NAN = float("nan")
+CLAIM_SIGMA = 5.0
+CLOCK_SIGMA = 3.0
+SITE_PRIOR_KM = 500.0
+EARTH_KM_DEG = 111.19  # a degree of latitude, mean
+
+
+@dataclass(frozen=True)
+class ClockFindings:
+    """Drift of the clock in seconds a day (positive: gaining), and findings about clock and site."""
+
+    drift_s_day: float
+    drift_sigma_s_day: float
+    findings: tuple[Finding, ...]
+
+
+@dataclass(frozen=True)
+class CameraFindings:
+    """Scale and direction of *up*, and findings about the camera."""
+
+    scale_arcsec_px: float
+    scale_sigma_arcsec_px: float
+    up_pa_deg: float
+    up_pa_sigma_deg: float
+    findings: tuple[Finding, ...]
+
+
+def clock_findings(reading: Reading, plan: Plan, promise: Promise, question: Question) -> ClockFindings:
+    """Return offset, drift, a start taken for a middle, and a displaced site."""
+    findings: list[Finding] = []
+    offset, sigma = reading.fit.value["clock_s"], reading.fit.sigma["clock_s"]
+    if abs(offset) > CLOCK_SIGMA * sigma and reading.name != "clock-far-off":
+        start = _start_for_middle(reading, plan, question)
+        findings.append(start or _offset_finding(offset, sigma, reading))
+    elif reading.name == "clock-far-off":
+        findings.append(_offset_finding(reading.clock_offset_s, sigma, reading))
+    drift, drift_sigma = _drift(reading, question)
+    if np.isfinite(drift_sigma) and abs(drift) > CLAIM_SIGMA * drift_sigma:
+        way = "gains" if drift > 0 else "loses"
+        text = f"The frames' clock {way} {with_sigma(abs(drift), drift_sigma)} s a day."
+        findings.append(
+            Finding(
+                "clock-drift",
+                odds(0.5 * (drift / drift_sigma) ** 2 + SLIP),
+                text,
+                drift,
+                drift_sigma,
+                "s/day",
+            )
+        )
+    site = _site_displaced(reading, promise, question)
+    if site is not None:
+        findings.append(site)
+    return ClockFindings(drift, drift_sigma, tuple(findings))
+
+
+def _offset_finding(offset: float, sigma: float, reading: Reading) -> Finding:
+    way = "fast: its stamps are later than UTC" if offset > 0 else "slow: its stamps are earlier than UTC"
+    beyond = "" if reading.clock_s == 0 or reading.name == "clock-far-off" else " beyond that"
+    text = (
+        f"The frames' clock is {with_sigma(abs(offset), sigma)} s {way}{beyond}. "
+        "`--apply clock` writes a track with the times put right."
+    )
+    if abs(offset) >= SMALL_CLOCK_S:
+        text = text.replace(" s fast", f" s ({duration_text(abs(offset))}) fast").replace(
+            " s slow", f" s ({duration_text(abs(offset))}) slow"
+        )
+    weight = 0.5 * (offset / sigma) ** 2 + np.log(sigma / max(SMALL_CLOCK_S, sigma))
+    return Finding("clock-offset", odds(weight), text, offset, sigma, "s")
+
+
+def _refit(reading: Reading, priors: Priors, clock_s: np.ndarray | float, **more):  # type: ignore[no-untyped-def]
+    try:
+        return fit_track(reading.sightings, reading.path, priors, clock_s, **more)
+    except (NoSolutionError, np.linalg.LinAlgError):
+        return None
+
+
+def _start_for_middle(reading: Reading, plan: Plan, question: Question) -> Finding | None:
+    """Return a finding when half the exposure explains the offset, as well as a free clock does or better."""
+    s = reading.sightings
+    half = s.exposure_s / 2.0
+    if np.median(half) < 3.0 * reading.fit.sigma["clock_s"]:
+        return None
+    clock_sigma = max(plan.rig.clock.sigma_s, 0.05)
+    tight = question.priors(clock_sigma)
+    free = _refit(reading, question.priors(SMALL_CLOCK_S), reading.clock_s)
+    best = None
+    for sign, words in ((-1.0, "start of each exposure was taken for its middle"),
+                        (1.0, "end of each exposure was taken for its middle")):  # fmt: skip
+        fit = _refit(reading, tight, reading.clock_s + sign * half)
+        if fit is None or free is None:
+            continue
+        weight = fit.log_evidence - free.log_evidence + np.log(0.05)
+        if best is None or weight > best[0]:
+            best = weight, words, sign
+    if best is None or best[0] < np.log(20.0):
+        return None
+    text = (
+        f"The {best[1]}: stamps are off by half the exposure ({np.median(half):.3g} s), against a clock "
+        "that is wrong by chance as much."
+    )
+    return Finding("start-for-middle", odds(best[0]), text, best[2] * float(np.median(half)), NAN, "s")
+
+
+def _drift(reading: Reading, question: Question) -> tuple[float, float]:
+    """Return the drift in seconds a day with its sigma; NaN when the frames are too few to tell."""
+    s = reading.sightings
+    if reading.fit.used.sum() < 6 or np.ptp(s.tt_s) < 60.0:
+        return NAN, NAN
+    fit = _refit(reading, replace(question.priors(DAY_S), drift=1e-2), reading.clock_s)
+    if fit is None:
+        return NAN, NAN
+    return fit.value["drift"] * DAY_S, fit.sigma["drift"] * DAY_S
+
+
+def _site_displaced(reading: Reading, promise: Promise, question: Question) -> Finding | None:
+    """Return a finding when another site, a distance away, fits far better; the plan's clock promise breaks the tie.
+
+    A displacement along the path looks like a clock error; only what the frames tell apart is claimed.
+    """
+    if reading.name not in ("plain", "zone", "date") or reading.fit.used.sum() < 6:
+        return None
+    north_km = east_km = 0.0
+    path = reading.path
+    plain = _refit(reading, question.priors(SMALL_CLOCK_S), reading.clock_s)
+    fit = None
+    for _ in range(3):
+        shifts = _site_shifts(reading, promise, path, north_km, east_km)
+        moved = replace(reading, path=path)
+        fit = _refit(moved, question.priors(SMALL_CLOCK_S), reading.clock_s, shifts=shifts,
+                     shift_sigmas=np.array([SITE_PRIOR_KM, SITE_PRIOR_KM]))  # fmt: skip
+        if fit is None or plain is None:
+            return None
+        step = fit.extra_value
+        if not np.isfinite(step).all() or np.hypot(*step) > 3000:
+            return None
+        north_km, east_km = north_km + step[0], east_km + step[1]
+        path = _path_at(promise, north_km, east_km)
+        if np.hypot(*step) < 0.5:
+            break
+    assert fit is not None
+    weight = fit.log_evidence - plain.log_evidence + SLIP
+    away = np.array([north_km, east_km])
+    covariance = fit.extra_covariance
+    significance = float(np.sqrt(away @ np.linalg.solve(covariance, away)))
+    if weight < np.log(1e4) or significance < CLAIM_SIGMA:
+        return None
+    size = float(np.hypot(*away))
+    sigma = float(np.sqrt(away @ covariance @ away) / size)
+    worst = float(np.sqrt(np.linalg.eigvalsh(covariance)[-1]))
+    bearing = np.degrees(np.arctan2(east_km, north_km)) % 360
+    text = (
+        f"The frames fit a site {with_sigma(size, sigma)} km away from the plan's, towards {compass(bearing)}"
+    )
+    if worst > 0.3 * size:
+        text += f"; in the other direction it is free to {worst:.0f} km, being like a clock error"
+    return Finding("site-displaced", odds(weight), text + ".", size, sigma, "km")
+
+
+def _site_shifts(reading: Reading, promise: Promise, path: PredictedPath, north_km: float, east_km: float):  # type: ignore[no-untyped-def]
+    s, t = reading.sightings, reading.sightings.tt_s - reading.clock_offset_s
+    step_km = 20.0
+    here = s.expected(path, t)
+    moves = []
+    for north, east in ((step_km, 0.0), (0.0, step_km)):
+        other = _path_at(promise, north_km + north, east_km + east)
+        moves.append((s.expected(other, t) - here) / step_km)
+    return np.stack(moves)
+
+
+def _path_at(promise: Promise, north_km: float, east_km: float) -> PredictedPath:
+    from planner.sequence.documents import observer_of
+
+    observer = observer_of(promise.plan.site)
+    latitude = float(np.clip(observer.latitude_deg + north_km / EARTH_KM_DEG, -89.9, 89.9))
+    per_degree = EARTH_KM_DEG * max(np.cos(np.radians(observer.latitude_deg)), 0.01)
+    longitude = (observer.longitude_deg + east_km / per_degree + 180.0) % 360.0 - 180.0
+    moved = replace(observer, latitude_deg=latitude, longitude_deg=longitude)
+    return PredictedPath.of_plan(promise.plan, moved)
+
+
+def compass(bearing_deg: float) -> str:
+    """Return one of 16 directions of the compass."""
+    names = "N NNE NE ENE E ESE SE SSE S SSW SW WSW W WNW NW NNW".split()
+    return names[round(bearing_deg / 22.5) % 16]
+
+
+def camera_findings(reading: Reading, plan: Plan, chosen: Sequence[Measurement]) -> CameraFindings:
+    """Return what the frames say about scale, orientation and mirroring against the rig file."""
+    if chosen[0].stars is not None:
+        return _star_camera(plan, chosen)
+    fit = reading.fit
+    nominal = chosen[0].nominal
+    scale = nominal.scale_arcsec_px * float(np.exp(fit.value["log_scale"]))
+    sigma = scale * fit.sigma["log_scale"]
+    flipped = reading.name == "mirrored"
+    rotation = (-nominal.rotation_deg if flipped else nominal.rotation_deg) + fit.value["rotation_deg"]
+    up = (rotation + (180.0 if chosen[0].row_zero == "top" else 0.0)) % 360.0
+    findings = _scale_findings(scale / nominal.scale_arcsec_px, sigma / nominal.scale_arcsec_px, plan)
+    turned = abs(fit.value["rotation_deg"])
+    if not flipped and turned > max(5.0, CLAIM_SIGMA * fit.sigma["rotation_deg"]):
+        findings.append(_rotation_finding(up, fit.sigma["rotation_deg"], turned))
+    return CameraFindings(scale, sigma, up, fit.sigma["rotation_deg"], tuple(findings))
+
+
+def _rotation_finding(up: float, sigma: float, turned: float) -> Finding:
+    text = f"Up in the frames points to position angle {with_sigma(up, sigma)}°, {turned:.1f}° from what the plan says."
+    return Finding("camera-turned", MOST_ODDS, text, up, sigma, "deg")
+
+
+def _scale_findings(ratio: float, sigma: float, plan: Plan) -> list[Finding]:
+    if abs(ratio - 1.0) < max(0.005, CLAIM_SIGMA * sigma):
+        return []
+    focal = plan.rig.optics.focal_length_mm * plan.rig.optics.reducer / ratio
+    text = (
+        f"The scale is {100 * (ratio - 1):+.1f} % off the rig file: the focal length is {focal:.0f} mm, or the pixels "
+        "or the binning are others than it says."
+    )
+    return [Finding("scale", odds(0.5 * ((ratio - 1) / sigma) ** 2), text, ratio, sigma, "ratio")]
+
+
+def _star_camera(plan: Plan, chosen: Sequence[Measurement]) -> CameraFindings:
+    ratio = np.array([m.stars.scale_arcsec_px / m.nominal.scale_arcsec_px for m in chosen])
+    scale = np.array([m.stars.scale_arcsec_px for m in chosen])
+    n = len(chosen)
+    sigma = float(np.std(scale, ddof=1) / np.sqrt(n)) if n > 2 else NAN
+    findings = _scale_findings(float(np.median(ratio)), max(float(np.std(ratio)), 1e-4), plan)
+    flipped = np.mean([m.stars.parity != m.nominal.parity for m in chosen])
+    if flipped > 0.5:
+        findings.append(
+            Finding(
+                "mirrored",
+                MOST_ODDS,
+                "The frames are mirrored: left and right are swapped against what the rig file says "
+                f"(by the stars of {round(flipped * n)} of {n} frames).",
+            )
+        )
+    turn = np.radians([m.stars.rotation_deg + (180.0 if m.row_zero == "top" else 0.0) for m in chosen])
+    up = float(np.degrees(np.angle(np.mean(np.exp(1j * turn)))) % 360.0)
+    away = np.array([(m.stars.rotation_deg - m.nominal.rotation_deg + 180) % 360 - 180 for m in chosen])
+    if flipped < 0.5 and abs(np.median(away)) > 5.0:
+        findings.append(_rotation_finding(up, NAN, float(abs(np.median(away)))))
+    return CameraFindings(float(np.median(scale)), sigma, up, NAN, tuple(findings))
+
+
+def frame_findings(measurements: Sequence[Measurement], plan: Plan) -> list[Finding]:
+    """Return what the files themselves say before anything is compared: site, date, order."""
+    findings: list[Finding] = []
+    sites = {m.site for m in measurements if m.site is not None}
+    away = [_away_km(site, plan) for site in sites]
+    if away and min(away) > 1.0:
+        text = (
+            f"The frames say they were taken {min(away):,.0f} km from the plan's site; plan for the right site, or "
+            "check the file headers."
+        )
+        findings.append(Finding("site-differs", NAN, text, min(away), NAN, "km"))
+    order = [m.time.middle_tt_s for m in measurements]
+    if any(b < a for a, b in pairwise(order)):
+        text = "The files' names are not in the order of their times; frames are shown by time."
+        findings.append(Finding("out-of-order", NAN, text))
+    return findings
+
+
+def _away_km(site: tuple[float, float, float], plan: Plan) -> float:
+    north = (site[0] - plan.site.latitude_deg) * EARTH_KM_DEG
+    lon = (site[1] - plan.site.longitude_deg + 180.0) % 360.0 - 180.0
+    return float(np.hypot(north, lon * EARTH_KM_DEG * np.cos(np.radians(plan.site.latitude_deg))))
+
+
+def majority_camera(measurements: Sequence[Measurement]) -> tuple[str | None, tuple[int, int]] | None:
+    """Return camera and shape of most of the frames, None when there are no frames."""
+    kinds = Counter((m.camera, m.shape) for m in measurements)
+    return kinds.most_common(1)[0][0] if kinds else None

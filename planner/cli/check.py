@@ -1,0 +1,95 @@
+"""`syzygraph check`: measure frames and compare them with the prediction."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+
+import click
+
+
+@click.command(name="check")
+@click.argument("plan_path", metavar="PLAN", type=click.Path(dir_okay=False, path_type=Path))
+@click.argument("folder", metavar="FRAMES_FOLDER", type=click.Path(file_okay=False, path_type=Path))
+@click.option("-o", "--output", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
+              help="Where track.ecsv and report.html go [beside the frames].")  # fmt: skip
+@click.option("--zone", metavar="ZONE", help="Zone of stamps that name none: +02:00 or Europe/Madrid.")
+@click.option("--apply", "apply_what", type=click.Choice(["clock"]),
+              help="Also write track_clock.ecsv, with the fitted clock offset taken off the times.")  # fmt: skip
+@click.option("--follow", is_flag=True, help="Measure each new frame as it arrives, until Ctrl-C.")
+@click.option("--idle", metavar="S", type=float, help="With --follow: stop after so long without a frame.")
+@click.option("--jobs", type=click.IntRange(1), default=1, show_default=True, help="Worker processes.")
+@click.option("--no-pictures", is_flag=True, help="Leave pieces of frames out of the report.")
+@click.option("--json", "as_json", is_flag=True, help="Print the result for a machine.")
+@click.option("--strict", is_flag=True, help="Exit code 1 when anything was found, too.")
+@click.option("--force", is_flag=True, help="Replace outputs that exist.")
+def command(  # type: ignore[no-untyped-def]
+    plan_path, folder, output, zone, apply_what, follow, idle, jobs, no_pictures, as_json, strict, force
+) -> int:
+    """Measure every frame of FRAMES_FOLDER and compare it with the prediction of PLAN.
+
+    Writes track.ecsv, report.html and figures. Nothing that is found is applied to the frames or the plan.
+
+    \b
+    Example:
+      syzygraph check transit.plan.yaml frames -o checked
+      syzygraph check transit.plan.yaml incoming --follow
+    """
+    from imaging.track.checking import CheckOptions, check_frames, frame_files
+    from imaging.track.output import json_of, refuse_outputs, write_outputs
+    from planner import errors
+    from planner.cli.progress import bar
+    from planner.sequence.documents import load_plan
+
+    plan = load_plan(plan_path)
+    output = output or folder.with_name(folder.name + "_checked")
+    options = CheckOptions(zone=zone, pictures=not no_pictures, jobs=jobs)
+    if follow:
+        from imaging.track.follow import follow_folder
+
+        with bar("measuring", quiet=as_json) as tick:
+            result, measurements = follow_folder(
+                plan,
+                plan_path.name,
+                folder,
+                output,
+                options,
+                idle_s=idle,
+                say=_say(as_json),
+                force=force,
+                tick=tick,
+            )
+        written = {}
+    else:
+        files = frame_files(folder)
+        refuse_outputs(output, apply_what, force)
+        with bar("measuring", quiet=as_json) as tick:
+            result, measurements = check_frames(plan, plan_path.name, files, options, tick)
+        written = write_outputs(result, measurements, output, apply_what, force)
+    if as_json:
+        click.echo(json.dumps(json_of(result), indent=2, allow_nan=False))
+    else:
+        _print(result, written)
+    reserved = bool(result.set_aside) or result.measured < len(result.rows) or not result.rows
+    if strict and result.findings:
+        reserved = True
+    return errors.EXIT_WITH_RESERVATIONS if reserved else errors.EXIT_DONE
+
+
+def _say(as_json: bool):  # type: ignore[no-untyped-def]
+    return (lambda text: None) if as_json else click.echo
+
+
+def _print(result, written) -> None:  # type: ignore[no-untyped-def]
+    click.echo(result.verdict)
+    for finding in result.findings:
+        click.echo(f"  {finding.name}: {finding.sentence}")
+    for aside in result.set_aside:
+        click.echo(f"  set aside {aside.file}: {aside.reason}")
+    unmeasured = [row for row in result.rows if row.verdict == "unmeasured"]
+    for row in unmeasured[:8]:
+        click.echo(f"  unmeasured {row.file}: {row.reason}")
+    if len(unmeasured) > 8:
+        click.echo(f"  ... and {len(unmeasured) - 8} more unmeasured, in the report")
+    for path in written.values():
+        click.echo(f"wrote {path}")
