@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -58,19 +58,16 @@ class Light:
             return registered.pointing.sky_to_pixel(*plane_to_sky(*anchor_deg, *canvas.to_plane(x_px, y_px)))
 
         if frame.colour is None:
-            image = warp(frame.data, canvas, to_frame, good, threads=self.threads)
-            return (image - level.dark * self._area(registered, canvas)) / level.unit
+            return warp(frame.data - level.dark, canvas, to_frame, good, threads=self.threads) / level.unit
         planes = []
         for plane, (left, low), step in colour_planes(frame):
             mask = None if good is None else _thinned(good, step, plane.shape)
-            image = warp(plane, canvas, _stepped(to_frame, left, low, step), mask, threads=self.threads)
+            image = warp(
+                plane - level.dark, canvas, _stepped(to_frame, left, low, step), mask, threads=self.threads
+            )
             # a plane pixel stands for `step` x `step` frame pixels: its light is that of one of them
-            planes.append(image * step**2)
-        return (np.stack(planes, axis=-1) - level.dark * self._area(registered, canvas)) / level.unit
-
-    @staticmethod
-    def _area(registered: Registered, canvas: Canvas) -> float:
-        return (canvas.scale_arcsec_px / registered.scale_arcsec_px) ** 2
+            planes.append(image * (step**2 / level.unit))
+        return np.stack(planes, axis=-1)
 
 
 def _stepped(to_frame, left: float, low: float, step: int):
@@ -144,7 +141,7 @@ def limb_steepness(frame: Frame, limb_px: tuple[float, float, float], level: Lev
 
     x_px, y_px, radius_px = limb_px
     angle = np.radians(np.arange(0, 360, 0.5))
-    reach = np.linspace(-8, 8, 65) / max(radius_px, 60.0) * radius_px / radius_px + 1.0
+    reach = 1.0 + np.linspace(-1, 1, 65) * min(8.0 / radius_px, 0.08)
     map_x = (x_px + radius_px * reach[:, None] * np.cos(angle)).astype(np.float32)
     map_y = (y_px + radius_px * reach[:, None] * np.sin(angle)).astype(np.float32)
     ring = cv2.remap(
@@ -155,8 +152,3 @@ def limb_steepness(frame: Frame, limb_px: tuple[float, float, float], level: Lev
         return float("nan")
     profile = np.median((ring[:, complete] - level.dark) / level.unit, axis=1)
     return float(-np.gradient(profile, reach).min())
-
-
-def with_data(frame: Frame, data: np.ndarray) -> Frame:
-    """Return the same frame with other pixels."""
-    return replace(frame, data=data)

@@ -27,7 +27,7 @@ class Registered:
 
     `tt_s`: mid-exposure, with the clock offset that the check found taken off. `reference_*`: predicted place of the
     Sun or Moon then (NaN when stars are the reference). `measured_*`: where the target was found, NaN when it was
-    not; `sigma_arcsec`: its 1-sigma (the larger of along and across). `limb_px`: centre and radius of the disc.
+    not; `sigma_along_arcsec`, `sigma_across_arcsec`: its 1-sigma. `limb_px`: centre and radius of the disc.
     """
 
     path: Path
@@ -43,7 +43,8 @@ class Registered:
     predicted_dec_deg: float
     measured_ra_deg: float
     measured_dec_deg: float
-    sigma_arcsec: float
+    sigma_along_arcsec: float
+    sigma_across_arcsec: float
     limb_px: tuple[float, float, float]
     exposure_s: float
     verdict: str
@@ -62,6 +63,11 @@ class Registered:
     def target_dec_deg(self) -> float:
         """Where the target lies: measured, else predicted."""
         return self.measured_dec_deg if self.measured else self.predicted_dec_deg
+
+    @property
+    def sigma_arcsec(self) -> float:
+        """1-sigma of the measured place: the larger of along and across the motion."""
+        return float(np.fmax(self.sigma_along_arcsec, self.sigma_across_arcsec))
 
     @property
     def displacement_arcsec(self) -> float:
@@ -253,7 +259,8 @@ def _registered(track: Track, index: int, path: Path, tt_s: float, sky: _Sky, pl
         predicted_dec_deg=float(sky.dec_deg[place]),
         measured_ra_deg=measured[0],
         measured_dec_deg=measured[1],
-        sigma_arcsec=float(np.fmax(number("sigma_along_arcsec"), number("sigma_across_arcsec"))),
+        sigma_along_arcsec=number("sigma_along_arcsec"),
+        sigma_across_arcsec=number("sigma_across_arcsec"),
         limb_px=limb,
         exposure_s=number("exposure_s"),
         verdict=str(track["verdict"][index]),

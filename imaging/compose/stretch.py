@@ -15,8 +15,8 @@ class Stretch:
     """How values become tones between 0 and 1.
 
     `kind`: `linear` (tones proportional to light), `disc` (proportional, then encoded as sRGB does) or `stars`
-    (inverse hyperbolic sine of Lupton et al. 1999, AJ 118, 1406, already a display tone). `softening`: value above black
-    where the curve turns from linear to logarithmic.
+    (inverse hyperbolic sine of Lupton et al. 1999, AJ 118, 1406, already a display tone). `softening`: value above
+    black where the curve turns from linear to logarithmic.
     """
 
     kind: str

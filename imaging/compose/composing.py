@@ -1,0 +1,114 @@
+"""From a plan and its track to the files a client sees: picture, path plots, statement of truth."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from datetime import UTC, tzinfo
+from pathlib import Path
+from typing import Any
+
+from imaging.compose import files, truth
+from imaging.compose.choices import Choices
+from imaging.compose.disc_path import disc_path
+from imaging.compose.light import Light
+from imaging.compose.material import Material
+from imaging.compose.pathdata import path_data
+from imaging.compose.pathplot import DARK, LIGHT, write_path_plot
+from imaging.compose.picture import Picture
+from imaging.compose.sky_path import sky_path
+from imaging.compose.stretch import Stretch, measured_stretch
+from planner.errors import InputError
+from planner.outputs import refuse_existing
+
+PICTURE_FORMATS = ("fits", "tiff", "png", "jpg")
+
+
+@dataclass(frozen=True)
+class Outputs:
+    """Where results go and in which formats."""
+
+    folder: Path
+    picture_formats: tuple[str, ...] = ("fits", "png")
+    plot_formats: tuple[str, ...] = ("png", "svg")
+    linear: bool = False
+    caption: bool = True
+    dpi: int = 200
+    force: bool = False
+
+    def picture(self, suffix: str) -> Path:
+        """Return the path of the composite in a format."""
+        return self.folder / f"composite.{suffix}"
+
+    def plot(self, version: str, suffix: str) -> Path:
+        """Return the path of a path plot."""
+        return self.folder / f"path_{version}.{suffix}"
+
+    @property
+    def statement(self) -> Path:
+        """The path of the statement of truth."""
+        return self.folder / "composite.truth.json"
+
+    def refuse_existing(self) -> None:
+        """Refuse, before any work, what would overwrite a file; raises OutputExistsError."""
+        for suffix in self.picture_formats:
+            refuse_existing(self.picture(suffix), self.force)
+        for suffix in self.plot_formats:
+            for version in ("light", "dark"):
+                refuse_existing(self.plot(version, suffix), self.force)
+        refuse_existing(self.statement, self.force)
+
+
+def compose_picture(material: Material, choices: Choices) -> Picture:
+    """Return the composite that suits the event, or the registration the user chose; raises InputError."""
+    light = Light(bias_adu=material.plan.rig.sensor.bias_adu, colour=choices.colour, threads=choices.threads)
+    registration = material.reference if choices.registration == "auto" else choices.registration
+    if registration == "stars":
+        return sky_path(material, choices, light)
+    if registration != material.reference:
+        raise InputError(
+            f"--register: found {registration!r}; this event can be registered on "
+            f"{' or '.join(dict.fromkeys((material.reference, 'stars')))}"
+        )
+    return disc_path(material, choices, light)
+
+
+def write_picture(
+    material: Material, picture: Picture, outputs: Outputs
+) -> tuple[list[Path], dict[str, Any]]:
+    """Write the composite in its formats and the statement of truth; returns the paths and the statement."""
+    stretch: Stretch = measured_stretch(picture.image, "linear" if outputs.linear else picture.tone)
+    statement = truth.statement(material, picture, stretch.sentence())
+    caption = truth.caption(material, picture)
+    statement["caption"] = caption
+    written = []
+    tones = files.tones(picture, stretch)
+    for suffix in outputs.picture_formats:
+        path = outputs.picture(suffix)
+        if suffix == "fits":
+            files.write_fits(path, picture, statement, outputs.force)
+        elif suffix in ("tif", "tiff"):
+            files.write_tiff(path, tones, stretch, caption, outputs.force)
+        else:
+            shown = tones
+            if outputs.caption:
+                shown = files.captioned(
+                    tones, caption, picture.canvas.up_pa_deg, picture.canvas.scale_arcsec_px
+                )
+            files.write_raster(path, shown, stretch, material.plan.title, caption, outputs.force)
+        written.append(path)
+    truth.write_statement(outputs.statement, statement, outputs.force)
+    return [*written, outputs.statement], statement
+
+
+def write_plots(
+    material: Material, choices: Choices, outputs: Outputs, zone: tzinfo = UTC, zone_label: str = "UTC"
+) -> list[Path]:
+    """Write the path plots, light and dark, in their formats."""
+    data = path_data(material, choices, zone, zone_label)
+    written = []
+    for suffix in outputs.plot_formats:
+        for version, palette in (("light", LIGHT), ("dark", DARK)):
+            path = outputs.plot(version, suffix)
+            write_path_plot(path, data, palette, outputs.force, outputs.dpi)
+            written.append(path)
+    return written

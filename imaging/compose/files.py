@@ -1,0 +1,174 @@
+"""Pictures as files: FITS in linear light, TIFF, PNG and JPEG in tones, each with what is needed to trust it."""
+
+from __future__ import annotations
+
+import textwrap
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from imaging.compose.colourspace import profile
+from imaging.compose.picture import Picture
+from imaging.compose.stretch import Stretch
+from planner.outputs import whole_file
+
+
+def write_fits(path: Path, picture: Picture, truth: dict[str, Any], force: bool = False) -> None:
+    """Write 32-bit linear light with WCS and provenance, and every frame used in a table extension (FITS 4.0).
+
+    Colour pictures have three planes (red, green, blue) along the third axis.
+    """
+    from astropy.io import fits
+    from astropy.table import Table
+
+    data = picture.image if picture.image.ndim == 2 else np.moveaxis(picture.image, 2, 0)
+    header = picture.canvas.wcs_header(picture.anchor_ra_deg, picture.anchor_dec_deg)
+    header["OBJECT"] = truth["title"][:68]
+    header["DATE-OBS"] = (truth["frames"][0]["utc_mid"].rstrip("Z"), "mid-exposure of the first frame used")
+    header["DATE-END"] = (truth["frames"][-1]["utc_mid"].rstrip("Z"), "mid-exposure of the last frame used")
+    header["DATE-AVG"] = (truth["reference_utc"].rstrip("Z"), "instant the sky coordinates are for")
+    header["TIMESYS"] = "UTC"
+    header["NCOMBINE"] = (len(truth["frames"]), "frames used")
+    header["REGISTER"] = (truth["registered_on"], "what frames were registered on")
+    header["BLEND"] = truth["blend"]
+    header["ENLARGE"] = (truth["enlargement"], "bodies are drawn this many times true size")
+    largest = truth["largest_displacement_arcsec"]
+    if largest is not None:
+        header["MAXDISP"] = (largest, "[arcsec] largest drawn minus predicted place")
+    header["CREATOR"] = truth["provenance"]["syzygraph"]
+    for key, value in truth["provenance"].items():
+        header.add_history(f"{key}: {value}")
+    for note in truth["notes"]:
+        header.add_history(note)
+    table = Table(rows=[{key: _cell(value) for key, value in row.items()} for row in truth["frames"]])
+    frames = fits.table_to_hdu(table)
+    frames.name = "FRAMES"
+    hdus = fits.HDUList([fits.PrimaryHDU(data.astype(np.float32), header), frames])
+    with whole_file(path, force) as part:
+        hdus.writeto(part, overwrite=True, checksum=True)
+
+
+def _cell(value: Any) -> Any:
+    return float("nan") if value is None else value
+
+
+def tones(picture: Picture, stretch: Stretch) -> np.ndarray:
+    """Return display tones, float32 in 0..1, first row at the top as rasters have it."""
+    return np.flip(stretch.tones(picture.image), axis=0)
+
+
+def write_tiff(
+    path: Path, image: np.ndarray, stretch: Stretch, description: str, force: bool = False
+) -> None:
+    """Write tones (first row at the top) as 16-bit TIFF, deflated, with a colour profile."""
+    import tifffile
+
+    colours = 3 if image.ndim == 3 else 1
+    with whole_file(path, force) as part:
+        tifffile.imwrite(
+            part,
+            np.round(image * 65535).astype(np.uint16),
+            photometric="rgb" if colours == 3 else "minisblack",
+            compression="zlib",
+            predictor=True,
+            iccprofile=profile(colours, stretch.kind == "linear"),
+            description=_ascii(description),
+            software="Syzygraph",
+            metadata=None,
+        )
+
+
+def write_raster(
+    path: Path, image: np.ndarray, stretch: Stretch, title: str, description: str, force: bool = False
+) -> None:
+    """Write tones (first row at the top) as PNG or JPEG by the suffix, 8 bits, with profile and caption inside."""
+    from PIL import Image
+    from PIL.PngImagePlugin import PngInfo
+
+    pixels = np.round(image * 255).astype(np.uint8)
+    icc = profile(3 if image.ndim == 3 else 1, stretch.kind == "linear")
+    picture = Image.fromarray(np.ascontiguousarray(pixels))
+    with whole_file(path, force) as part:
+        if path.suffix.lower() == ".png":
+            info = PngInfo()
+            info.add_itxt("Title", title)
+            info.add_itxt("Description", description)
+            info.add_text("Software", "Syzygraph")
+            picture.save(part, pnginfo=info, icc_profile=icc, optimize=False, compress_level=6)
+        else:
+            exif = Image.Exif()
+            exif[0x010E] = _ascii(description)
+            exif[0x0131] = "Syzygraph"
+            picture.save(part, quality=94, subsampling=0, icc_profile=icc, exif=exif, optimize=True)
+
+
+def _ascii(text: str) -> str:
+    plain = text.replace("″", " arcsec").replace("′", " arcmin").replace("−", "-").replace("°", " deg")
+    return plain.encode("ascii", "replace").decode()
+
+
+def captioned(
+    image: np.ndarray, caption: str, up_pa_deg: float, scale_arcsec_px: float, mirrored: bool = False
+) -> np.ndarray:
+    """Return tones with a band below that holds the caption, north and east arrows, and a scale bar."""
+    from matplotlib import font_manager
+    from PIL import Image, ImageDraw, ImageFont
+
+    height, width = image.shape[:2]
+    size = max(11, min(round(width / 62), 44))
+    font = ImageFont.truetype(font_manager.findfont("DejaVu Sans"), size)
+    marks_px = 9 * size
+    columns = max(20, int((width - marks_px - 3 * size) / (0.56 * size)))
+    lines = textwrap.wrap(caption, columns)
+    band = max(int((len(lines) + 1.4) * 1.35 * size), int(5.6 * size))
+    strip = Image.new("L", (width, band), 18)
+    draw = ImageDraw.Draw(strip)
+    for number, line in enumerate(lines):
+        draw.text((size, int((0.7 + 1.35 * number) * size)), line, fill=225, font=font)
+    _arrows(draw, font, width - 5.2 * size, 3.0 * size, 1.7 * size, up_pa_deg)
+    strip_array = np.asarray(strip, np.float32) / 255
+    if image.ndim == 3:
+        strip_array = np.repeat(strip_array[..., None], 3, axis=2)
+    whole = np.concatenate([image, strip_array])
+    return _with_scale_bar(whole, height, width, size, font, scale_arcsec_px)
+
+
+def _arrows(draw: Any, font: Any, x: float, y: float, length: float, up_pa_deg: float) -> None:
+    for label, pa in (("N", 0.0), ("E", 90.0)):
+        angle = np.radians(pa - up_pa_deg)
+        dx, dy = -np.sin(angle) * length, -np.cos(angle) * length
+        draw.line([(x, y), (x + dx, y + dy)], fill=225, width=max(1, int(length / 14)))
+        draw.text((x + 1.42 * dx, y + 1.42 * dy), label, fill=225, font=font, anchor="mm")
+
+
+ROUND_LENGTHS_ARCSEC = (1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200, 18000, 36000)
+
+
+def round_length(arcsec: float) -> tuple[float, str]:
+    """Return the largest round length not above `arcsec`, with its label."""
+    best = max((value for value in ROUND_LENGTHS_ARCSEC if value <= arcsec), default=1)
+    label = f"{best}″" if best < 60 else f"{best // 60}′" if best < 3600 else f"{best // 3600}°"
+    return float(best), label
+
+
+def _with_scale_bar(
+    image: np.ndarray, height: int, width: int, size: int, font: Any, scale_arcsec_px: float
+) -> np.ndarray:
+    from PIL import Image, ImageDraw
+
+    length, label = round_length(0.22 * width * scale_arcsec_px)
+    pixels = length / scale_arcsec_px
+    box = (0, height - int(3 * size), width, height)
+    under = (image[box[1] : box[3]] * 255).astype(np.uint8)
+    strip = Image.fromarray(np.ascontiguousarray(under))
+    draw = ImageDraw.Draw(strip)
+    right, line = width - size, strip.height - size
+    bright = (225, 225, 225) if image.ndim == 3 else 225
+    thick = max(1, size // 9)
+    draw.line([(right - pixels, line), (right, line)], fill=bright, width=thick)
+    for x in (right - pixels, right):
+        draw.line([(x, line - size // 3), (x, line + size // 3)], fill=bright, width=thick)
+    draw.text((right - pixels / 2, line - size * 0.35), label, fill=bright, font=font, anchor="mb")
+    image[box[1] : box[3]] = np.asarray(strip, np.float32) / 255
+    return image

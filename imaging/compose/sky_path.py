@@ -1,0 +1,192 @@
+"""The target's path among the stars: stars from all visits, the target of each visit at its measured place.
+
+Each visit's frames are first stacked twice: on the stars, and on the target (so that it does not smear); outliers
+are rejected in both, so that satellites, aircraft and hot pixels vanish. The visits' star stacks are blended into
+the ground, from which the target vanishes because it stands elsewhere each time; then it is laid in.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+
+from imaging.compose.canvas import Canvas, canvas_around
+from imaging.compose.choices import Choices
+from imaging.compose.ground import sky_surface
+from imaging.compose.light import Light, exposure_level
+from imaging.compose.material import Material, Registered
+from imaging.compose.orientation import up_pa_deg
+from imaging.compose.patch import lay_patch, patch_box
+from imaging.compose.picture import Drawn, Picture
+from imaging.compose.plane import plane_to_sky, sky_to_plane
+from imaging.compose.stack import new_stack
+from planner.errors import FrameSetAside, InputError
+
+PATCH_MOST_PX = 60.0
+PATCH_LEAST_PX = 5.0
+
+
+def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
+    """Return the composite registered on stars; raises InputError when no frame is left."""
+    anchor, canvas = _canvas(material, choices)
+    visits = list(material.passages())
+    shape = (canvas.height_px, canvas.width_px, *((3,) if light.colour else ()))
+    ground = new_stack(choices.blend, shape, len(visits), choices.scratch)
+    used: list[tuple[Registered, str]] = []
+    left_out: list[tuple[str, str]] = []
+    patches = []
+    total, done = len(material.frames), 0
+    for _, frames in visits:
+        stars = new_stack("clipped", shape, len(frames), choices.scratch)
+        patch_canvas, target = _patch_canvas(canvas, anchor, frames)
+        body = new_stack("clipped", (patch_canvas.height_px, patch_canvas.width_px, *shape[2:]), len(frames))
+        kept = []
+        for frame in frames:
+            choices.tick(done, total)
+            done += 1
+            try:
+                pixels = light.read(frame)
+            except FrameSetAside as problem:
+                left_out.append((frame.path.name, problem.reason))
+                continue
+            level = exposure_level(pixels, frame, light.bias_adu)
+            pixels = replace(pixels, data=pixels.data - sky_surface(pixels.data - level.dark))
+            stars.add(light.on_canvas(pixels, frame, canvas, anchor, level))
+            body.add(
+                light.on_canvas(
+                    pixels, frame, patch_canvas, (frame.target_ra_deg, frame.target_dec_deg), level
+                )
+            )
+            kept.append(frame)
+            used.append((frame, "stars and target" if frame.measured else "stars"))
+        if kept:
+            ground.add(stars.result()[0])
+            patches.append((kept, patch_canvas, body.result()[0], target))
+    if not patches:
+        why = f"; the first: {left_out[0][0]} {left_out[0][1]}" if left_out else ""
+        raise InputError(f"no frame registered on stars is left{why}")
+    image, count = ground.result()
+    drawn = [_lay(image, canvas, anchor, *patch) for patch in patches]
+    choices.tick(total, total)
+    middle = 0.5 * (material.frames[0].tt_s + material.frames[-1].tt_s)
+    return Picture(
+        kind="sky-path",
+        registered_on="stars",
+        blend=choices.blend,
+        image=image,
+        count=count,
+        canvas=canvas,
+        anchor_ra_deg=anchor[0],
+        anchor_dec_deg=anchor[1],
+        reference_tt_s=float(middle),
+        drawn=tuple(item for item in drawn if item is not None),
+        used=tuple(used),
+        tone="stars",
+        notes=(
+            f"the stars are a {choices.blend} blend of {len(patches)} visits",
+            "the target of each visit is stacked on itself and laid in at its measured place, with a soft edge",
+            "values are counts a second above a smooth background, which was taken off every frame",
+        ),
+        left_out=tuple(left_out),
+    )
+
+
+def _canvas(material: Material, choices: Choices) -> tuple[tuple[float, float], Canvas]:
+    """Return the anchor and the canvas: the whole path, with a margin of a tenth of it or a fifth of a frame."""
+    frames = [frame for frame in material.frames if frame.solved_by == "stars"]
+    if not frames:
+        raise InputError("no frame was solved by its stars; registration on stars is not possible")
+    ra = np.array([frame.target_ra_deg for frame in frames])
+    dec = np.array([frame.target_dec_deg for frame in frames])
+    vectors = np.array(
+        [
+            np.cos(np.radians(dec)) * np.cos(np.radians(ra)),
+            np.cos(np.radians(dec)) * np.sin(np.radians(ra)),
+            np.sin(np.radians(dec)),
+        ]
+    ).mean(axis=1)
+    anchor = (
+        float(np.degrees(np.arctan2(vectors[1], vectors[0])) % 360.0),
+        float(np.degrees(np.arctan2(vectors[2], np.hypot(vectors[0], vectors[1])))),
+    )
+    scale = choices.scale_arcsec_px or min(frame.scale_arcsec_px for frame in frames)
+    east, north = sky_to_plane(*anchor, ra, dec)
+    extent = max(float(np.ptp(east)), float(np.ptp(north)), 200 * scale)
+    up = up_pa_deg(material, choices.orientation, anchor, frames[len(frames) // 2].tt_s, on_disc=False)
+    return anchor, canvas_around(east, north, 0.22 * extent, scale, up, choices.largest_px)
+
+
+def _patch_canvas(
+    canvas: Canvas, anchor: tuple[float, float], frames: list[Registered]
+) -> tuple[Canvas, tuple[float, float]]:
+    """Return a small canvas anchored on the target, with the pixel grid of the picture at the visit's mean place."""
+    measured = [frame for frame in frames if frame.measured] or frames
+    offsets = np.array(
+        [sky_to_plane(*anchor, frame.target_ra_deg, frame.target_dec_deg) for frame in measured], float
+    ).mean(axis=0)
+    x_px, y_px = canvas.from_plane(*offsets)
+    half = int(PATCH_MOST_PX) + 4
+    fraction = (x_px - round(float(x_px)), y_px - round(float(y_px)))
+    small = replace(
+        canvas,
+        width_px=2 * half + 1,
+        height_px=2 * half + 1,
+        anchor_x_px=half + float(fraction[0]),
+        anchor_y_px=half + float(fraction[1]),
+    )
+    ra, dec = plane_to_sky(*anchor, *offsets)
+    return small, (float(ra), float(dec))
+
+
+def _lay(
+    image: np.ndarray,
+    canvas: Canvas,
+    anchor: tuple[float, float],
+    frames: list[Registered],
+    patch_canvas: Canvas,
+    patch: np.ndarray,
+    target: tuple[float, float],
+) -> Drawn | None:
+    x_px, y_px = (float(value) for value in canvas.from_sky(*anchor, *target))
+    row, column = round(y_px), round(x_px)
+    half = patch_canvas.width_px // 2
+    box = patch_box(image.shape, column, row, half)
+    if box is None:
+        return None
+    cut = (
+        slice(box[0].start - row + half, box[0].stop - row + half),
+        slice(box[1].start - column + half, box[1].stop - column + half),
+    )
+    radius_px = glow_radius_px(patch, patch_canvas.anchor_x_px, patch_canvas.anchor_y_px)
+    lay_patch(
+        image[box], patch[cut], x_px - box[1].start, y_px - box[0].start, radius_px, 0.5 * radius_px + 2
+    )
+    middle = frames[len(frames) // 2]
+    predicted = np.array(
+        [canvas.from_sky(*anchor, f.predicted_ra_deg, f.predicted_dec_deg) for f in frames], float
+    ).mean(axis=0)
+    measured = [frame.displacement_arcsec for frame in frames if frame.measured]
+    apart = (
+        float(np.hypot(x_px - predicted[0], y_px - predicted[1])) * canvas.scale_arcsec_px
+        if measured
+        else float("nan")
+    )
+    return Drawn(middle, x_px, y_px, float(predicted[0]), float(predicted[1]), apart, radius_px)
+
+
+def glow_radius_px(patch: np.ndarray, x_px: float, y_px: float) -> float:
+    """Return the radius at which the target's glow sinks into the noise of its patch."""
+    plane = patch.mean(axis=2) if patch.ndim == 3 else patch
+    y, x = np.indices(plane.shape)
+    away = np.hypot(x - x_px, y - y_px)
+    outer = plane[(away > 0.7 * PATCH_MOST_PX) & np.isfinite(plane)]
+    if outer.size < 50:
+        return PATCH_LEAST_PX
+    level = float(np.median(outer))
+    noise = float(1.4826 * np.median(np.abs(outer - level)))
+    for radius in np.arange(PATCH_LEAST_PX, 0.66 * PATCH_MOST_PX):
+        ring = plane[(away >= radius - 0.5) & (away < radius + 0.5)]
+        if np.nanmedian(ring) - level < 0.5 * noise:
+            return float(radius + 1)
+    return float(0.66 * PATCH_MOST_PX)

@@ -1,0 +1,92 @@
+"""Lines of a sky grid in the plane of a plot: right ascension and declination, or position angles about a disc."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from imaging.compose.canvas import Canvas
+from imaging.compose.plane import plane_to_sky
+
+_RA_STEPS_DEG = tuple(15 * s / 3600 for s in (1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200))
+_DEC_STEPS_DEG = tuple(
+    s / 3600 for s in (10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200, 18000, 36000)
+)
+
+
+@dataclass(frozen=True)
+class GridLine:
+    """One line of a grid, (2, n) right and up in arcseconds, with its label."""
+
+    points: np.ndarray
+    label: str
+    kind: str
+
+
+def radec_grid(
+    canvas: Canvas, anchor_deg: tuple[float, float], view: tuple[float, float, float, float], lines: int = 6
+) -> list[GridLine]:
+    """Return RA and Dec lines through a view (left, right, low, high in arcsec from the anchor)."""
+    edge = np.linspace(0, 1, 60)
+    left, right, low, high = view
+    rim_x = np.concatenate([left + (right - left) * edge, np.full(60, right), right + (left - right) * edge,
+                            np.full(60, left)])  # fmt: skip
+    rim_y = np.concatenate(
+        [np.full(60, low), low + (high - low) * edge, np.full(60, high), high + (low - high) * edge]
+    )
+    ra, dec = plane_to_sky(*anchor_deg, *canvas.to_plane(rim_x, rim_y))
+    turn = (ra - anchor_deg[0] + 180.0) % 360.0 - 180.0
+    ra_low, ra_high, dec_low, dec_high = turn.min(), turn.max(), dec.min(), dec.max()
+    found = []
+    ra_step = _step(_RA_STEPS_DEG, ra_high - ra_low, lines)
+    dec_step = _step(_DEC_STEPS_DEG, dec_high - dec_low, lines)
+    decs = np.linspace(max(-89.9, dec_low - dec_step), min(89.9, dec_high + dec_step), 300)
+    ras = np.linspace(ra_low - ra_step, ra_high + ra_step, 300) + anchor_deg[0]
+    first = np.ceil((ra_low + anchor_deg[0]) / ra_step)
+    for value in np.arange(first, np.floor((ra_high + anchor_deg[0]) / ra_step) + 1) * ra_step:
+        points = np.array(canvas.from_sky(*anchor_deg, np.full(300, value), decs))
+        found.append(GridLine(points, ra_label(value, ra_step), "ra"))
+    for value in np.arange(np.ceil(dec_low / dec_step), np.floor(dec_high / dec_step) + 1) * dec_step:
+        points = np.array(canvas.from_sky(*anchor_deg, ras, np.full(300, value)))
+        found.append(GridLine(points, dec_label(value, dec_step), "dec"))
+    return found
+
+
+def _step(steps: tuple[float, ...], span: float, lines: int) -> float:
+    return next((step for step in steps if span / step <= lines), steps[-1])
+
+
+def ra_label(ra_deg: float, step_deg: float) -> str:
+    """Return right ascension in hours, with minutes and seconds as far as the step needs them."""
+    seconds = round((ra_deg % 360.0) * 240.0) % 86400
+    hours, minutes, left = seconds // 3600, seconds % 3600 // 60, seconds % 60
+    text = f"{hours}h"
+    if step_deg < 15:
+        text += f" {minutes:02d}m"
+    return text + (f" {left:02d}s" if step_deg < 0.25 else "")
+
+
+def dec_label(dec_deg: float, step_deg: float) -> str:
+    """Return declination in degrees, with minutes and seconds of arc as far as the step needs them."""
+    seconds = round(abs(dec_deg) * 3600.0)
+    degrees, minutes, left = seconds // 3600, seconds % 3600 // 60, seconds % 60
+    text = f"{'−' if dec_deg < 0 and seconds else '+'}{degrees}°"
+    if step_deg < 1:
+        text += f" {minutes:02d}′"
+    return text + (f" {left:02d}″" if step_deg < 1 / 60 else "")
+
+
+def edge_crossing(line: np.ndarray, view: tuple[float, float, float, float], edge: str) -> float | None:
+    """Return where a line crosses the `left` or `bottom` edge of a view, or None."""
+    axis, other = (0, 1) if edge == "left" else (1, 0)
+    at = view[0] if edge == "left" else view[2]
+    value, along = line[axis] - at, line[other]
+    crossing = np.flatnonzero(np.diff(np.sign(value)) != 0)
+    for i in crossing:
+        share = value[i] / (value[i] - value[i + 1])
+        place = along[i] + share * (along[i + 1] - along[i])
+        low, high = (view[2], view[3]) if edge == "left" else (view[0], view[1])
+        if low <= place <= high:
+            return float(place)
+    return None

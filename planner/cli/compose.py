@@ -1,0 +1,134 @@
+"""`syzygraph compose`: the composite picture, the path plot, and the statement of how true they are."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import click
+
+from planner import errors
+
+PICTURE_FORMATS = ("fits", "tiff", "png", "jpg")
+PLOT_FORMATS = ("png", "svg", "pdf")
+
+
+class _Several(click.ParamType):
+    """A comma-separated choice of names."""
+
+    name = "names"
+
+    def __init__(self, allowed: tuple[str, ...]):
+        self.allowed = allowed
+
+    def convert(self, value, param, ctx):  # type: ignore[no-untyped-def]
+        if isinstance(value, tuple):
+            return value
+        names = tuple(name.strip() for name in value.split(",") if name.strip() and name.strip() != "none")
+        for name in names:
+            if name not in self.allowed:
+                self.fail(f"found {name!r}; allowed are {', '.join(self.allowed)}, none", param, ctx)
+        return names
+
+
+@click.command()
+@click.argument("plan", type=click.Path(path_type=Path))
+@click.argument("track", type=click.Path(path_type=Path))
+@click.option("--frames", type=click.Path(path_type=Path), help="Where the frames are; default: near TRACK.")
+@click.option("-o", "--output", type=click.Path(path_type=Path), required=True, metavar="FOLDER")
+@click.option(
+    "--register", "registration", type=click.Choice(("auto", "sun", "moon", "stars")), default="auto"
+)
+@click.option(
+    "--up", "orientation", type=click.Choice(("north", "zenith", "ecliptic", "track")), default="north",
+    show_default=True, help="What is up: celestial north, the zenith, the ecliptic's north, or the track level.",
+)  # fmt: skip
+@click.option(
+    "--blend",
+    type=click.Choice(("mean", "median", "clipped", "min", "max")),
+    default="clipped",
+    show_default=True,
+)
+@click.option("--instants", type=click.IntRange(1, 500), default=9, show_default=True,
+              help="How many times the target is drawn on a disc.")  # fmt: skip
+@click.option(
+    "--scale",
+    type=click.FloatRange(min=0, min_open=True),
+    metavar="ARCSEC_PX",
+    help="Default: the finest of the frames.",
+)
+@click.option("--colour", is_flag=True, help="Keep the colours of a colour camera.")
+@click.option("--linear", is_flag=True, help="No stretch: tones proportional to light.")
+@click.option("--formats", type=_Several(PICTURE_FORMATS), default="fits,png", show_default=True)
+@click.option("--plots", type=_Several(PLOT_FORMATS), default="png,svg", show_default=True)
+@click.option("--local-time", is_flag=True, help="Label plots in the site's time zone instead of UTC.")
+@click.option("--no-caption", is_flag=True, help="No caption band below PNG and JPEG.")
+@click.option("--scratch", type=click.Path(path_type=Path), help="Folder for large temporary files.")
+@click.option("--dpi", type=click.IntRange(50, 1200), default=200, show_default=True)
+@click.option("--force", is_flag=True, help="Replace outputs that exist.")
+@click.option("--quiet", is_flag=True)
+@click.option("--json", "as_json", is_flag=True, help="Print the statement of truth.")
+@click.pass_context
+def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, output: Path, **chosen) -> int:  # type: ignore[no-untyped-def]
+    """Make the composite picture and the path plot of PLAN from the frames that TRACK has measured.
+
+    FOLDER receives composite.png, composite.fits (linear light), path_light and path_dark plots, and
+    composite.truth.json, which says how far each element is from where the sky put it.
+
+    \b
+    Example:
+      syzygraph compose transit.plan.yaml checked/track.ecsv --frames frames -o picture --up zenith
+    """
+    import json
+    from datetime import UTC
+    from zoneinfo import ZoneInfo
+
+    from imaging.compose.choices import Choices
+    from imaging.compose.composing import Outputs, compose_picture, write_picture, write_plots
+    from imaging.compose.material import gather
+    from planner.cli.progress import bar
+    from planner.sequence.documents import load_plan
+
+    quiet = chosen["quiet"] or chosen["as_json"]
+    outputs = Outputs(
+        folder=output,
+        picture_formats=chosen["formats"],
+        plot_formats=chosen["plots"],
+        linear=chosen["linear"],
+        caption=not chosen["no_caption"],
+        dpi=chosen["dpi"],
+        force=chosen["force"],
+    )
+    outputs.refuse_existing()
+    document = load_plan(plan)
+    material = gather(document, track, frames)
+    zone, zone_label = UTC, "UTC"
+    if chosen["local_time"]:
+        zone, zone_label = ZoneInfo(document.site.timezone), document.site.timezone
+    with bar("composing", quiet) as tick:
+        choices = Choices(
+            registration=chosen["registration"],
+            orientation=chosen["orientation"],
+            blend=chosen["blend"],
+            instants=chosen["instants"],
+            scale_arcsec_px=chosen["scale"],
+            colour=chosen["colour"],
+            scratch=chosen["scratch"],
+            tick=tick,
+        )
+        picture = compose_picture(material, choices)
+    paths, statement = write_picture(material, picture, outputs)
+    paths += write_plots(material, choices, outputs, zone, zone_label)
+    aside = statement["set_aside"]
+    if chosen["as_json"]:
+        click.echo(
+            json.dumps({"files": [str(path) for path in paths], **statement}, indent=1, ensure_ascii=False)
+        )
+    elif not chosen["quiet"]:
+        click.echo(statement["caption"])
+        for path in paths:
+            click.echo(f"  {path}")
+    for item in aside[:10]:
+        click.echo(f"set aside: {item['file']} {item['reason']}", err=True)
+    if len(aside) > 10:
+        click.echo(f"... and {len(aside) - 10} more, listed in {outputs.statement}", err=True)
+    return errors.EXIT_WITH_RESERVATIONS if aside else errors.EXIT_DONE
