@@ -16,7 +16,11 @@ from imaging.frames.render_light import (
 )
 from imaging.frames.render_pointing import ARCSEC, PlaneMap, Pointing, unit_vector
 from imaging.frames.render_seeing import LimbMotion
+from imaging.frames.render_stars import draw_points
 from planner.sky.discs import SkyDisc
+
+# Discs smaller than this radius are drawn as so many points each way.
+_SMALL_PX, _SMALL_POINTS = 2.0, 13
 
 
 @dataclass(frozen=True)
@@ -163,10 +167,16 @@ def draw_ball(
     if box is None:
         return
     x_low, x_high, y_low, y_high = box
-    finer = int(np.clip(np.ceil(max(8 / radius_px, 5)), 5, 45))
-    if radius_px > 60:
-        finer = 3
-    x, y = _coordinates(x_low, x_high, finer), _coordinates(y_low, y_high, finer)
+    small = radius_px < _SMALL_PX
+    if small:
+        # a grid on the disc alone, drawn as points: a grid fine enough for the disc over the whole blur costs seconds
+        across = radius_px * 1.02 * np.linspace(-1, 1, _SMALL_POINTS)
+        x_mid, y_mid = pointing.project(ball.vector)
+        x, y = float(x_mid) + across, float(y_mid) + across
+        finer = 1
+    else:
+        finer = 3 if radius_px > 60 else 5
+        x, y = _coordinates(x_low, x_high, finer), _coordinates(y_low, y_high, finer)
     east, north = PlaneMap.about(pointing, ball.vector, box).grid(x, y)
     step = motion.shift_points(pointing, x, y) if motion is not None else None
     if step is not None:
@@ -184,6 +194,11 @@ def draw_ball(
         light = np.where(moon_east**2 + moon_north**2 < in_front.radius_arcsec**2, 0.0, light)
         if not light.any():
             return
+    if small:
+        rows, columns = np.nonzero(light)
+        share = electrons_s * light[rows, columns] / whole
+        draw_points(rate, x[columns], y[rows], share, spread, faintest_e_s=1e-6 * electrons_s / share.size)
+        return
     _add(rate, _shrink(spread.finer(finer).blur(light), finer), x_low, y_low, electrons_s / whole)
 
 
