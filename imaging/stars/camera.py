@@ -74,14 +74,17 @@ class Camera:
         ideal_u, ideal_v = project(vectors @ self.axes.T, self.focal_px, self.projection)
         u, v = ideal_u, ideal_v
         if self.terms and self.coefficients is not None:
+            far = 1.5 * self.half_diagonal_px
+            with np.errstate(invalid="ignore"):
+                beyond = ~(np.hypot(u, v) < far)  # there the polynomial means nothing
+            ideal_u, ideal_v = np.where(beyond, np.nan, ideal_u), np.where(beyond, np.nan, ideal_v)
+            u, v = ideal_u, ideal_v
             for _ in range(12):  # fixed point: the distortion is small and smooth
                 x, y = self.ideal(u + self.axis_x_px, v + self.axis_y_px)
                 du, dv = ideal_u - x, ideal_v - y
-                u, v = u + du, v + dv
+                u, v = np.clip(u + du, -2 * far, 2 * far), np.clip(v + dv, -2 * far, 2 * far)
                 if np.nanmax(np.abs(du), initial=0) < 1e-4 and np.nanmax(np.abs(dv), initial=0) < 1e-4:
                     break
-            lost = ~(np.hypot(u, v) < 3 * self.half_diagonal_px)
-            u, v = np.where(lost, np.nan, u), np.where(lost, np.nan, v)
         return u + self.axis_x_px, v + self.axis_y_px
 
 
@@ -134,7 +137,8 @@ class CameraFit:
         """Return the (n, 2, 2) covariance in px^2 of where the camera puts a direction seen near these pixels."""
         vectors = self.camera.vectors(x_px, y_px)
         jacobian = _jacobian(self.camera, np.asarray(x_px, float), np.asarray(y_px, float), vectors)
-        return np.einsum("nip,pq,njq->nij", jacobian, self.covariance, jacobian, optimize=True)
+        carried = jacobian.reshape(-1, jacobian.shape[2]) @ self.covariance
+        return carried.reshape(jacobian.shape) @ jacobian.transpose(0, 2, 1)
 
 
 @dataclass(frozen=True)
@@ -179,6 +183,7 @@ def fit_camera(
     sigma_px: np.ndarray,
     shape: tuple[int, int],
     robust: bool = True,
+    iterations: int = 8,
 ) -> CameraFit:
     """Return the most probable camera of matched stars.
 
@@ -189,18 +194,20 @@ def fit_camera(
     half = start.half_diagonal_px
     middle = np.array([(width - 1) / 2, (height - 1) / 2])
     terms = lens.terms
-    coefficients = lens.coefficients.copy() if start.terms != terms else np.array(start.coefficients)
+    coefficients = lens.coefficients.copy()
+    for i, term in enumerate(start.terms):
+        if term in terms and start.coefficients is not None:
+            coefficients[:, terms.index(term)] = start.coefficients[:, i]
     camera = replace(start, terms=terms, coefficients=coefficients, projection=lens.projection)
-    if start.terms != terms:
-        camera = replace(
-            camera, axis_x_px=middle[0] + lens.axis[0] * half, axis_y_px=middle[1] + lens.axis[1] * half
-        )
+    if not start.terms:
+        x, y = middle + lens.axis * half
+        camera = replace(camera, axis_x_px=float(x), axis_y_px=float(y))
     count = len(x_px)
     sigma_model, weight = 0.0, np.ones(count)
     prior_width = np.concatenate([lens.axis_sigma, lens.sigma.ravel()])
     prior_weight = np.concatenate([[1e-12] * 3, [1e-4], 1 / np.maximum(prior_width, 1e-9) ** 2])
     residual = np.zeros((count, 2))
-    for iteration in range(8):
+    for iteration in range(iterations):
         residual = _residual(camera, x_px, y_px, vectors)
         if iteration and robust and count >= 6:
             sigma_model = _extra_scatter(residual, sigma_px, count)
@@ -209,8 +216,9 @@ def fit_camera(
             chi2 = (residual**2).sum(axis=1) * inverse
             weight = 6.0 / (4.0 + chi2)
         jacobian = _jacobian(camera, x_px, y_px, vectors)
-        scaled = jacobian * np.sqrt(weight * inverse)[:, None, None]
-        normal = np.einsum("nip,niq->pq", scaled, scaled, optimize=True) + np.diag(prior_weight)
+        root = np.sqrt(weight * inverse)[:, None, None]
+        scaled = (jacobian * root).reshape(2 * count, -1)
+        normal = scaled.T @ scaled + np.diag(prior_weight)
         now = np.concatenate(
             [
                 np.zeros(4),
@@ -221,12 +229,14 @@ def fit_camera(
                 (np.asarray(camera.coefficients) - lens.coefficients).ravel(),
             ]
         )
-        right = np.einsum("nip,ni->p", jacobian, residual * (weight * inverse)[:, None], optimize=True)
+        right = scaled.T @ (residual * root[:, :, 0]).ravel()
         step = np.linalg.solve(normal, right - prior_weight * now)
         camera = _stepped(camera, step)
-        if iteration >= 3 and np.abs(step).max() < 1e-9:
+        if iteration >= 2 and np.abs(step[3:]).max() < 1e-7:
             break
     residual = _residual(camera, x_px, y_px, vectors)
+    if robust and count >= 6:
+        sigma_model = _extra_scatter(residual, sigma_px, count)
     return CameraFit(camera, np.linalg.inv(normal), sigma_model, residual, weight)
 
 
@@ -262,9 +272,17 @@ def _jacobian(camera: Camera, x_px: np.ndarray, y_px: np.ndarray, vectors: np.nd
     out[:, 0, 3], out[:, 1, 3] = -pu, -pv
     out[:, 0, 4] = out[:, 1, 5] = -half
     if terms:
-        basis = half * monomials(
-            (x_px - camera.axis_x_px) / half, (y_px - camera.axis_y_px) / half, camera.terms
+        u, v = (x_px - camera.axis_x_px) / half, (y_px - camera.axis_y_px) / half
+        basis = half * monomials(u, v, camera.terms)
+        # moving the axis moves the distortion along with it
+        by_u = np.array([p for p, _ in camera.terms])[:, None] * monomials(
+            u, v, tuple((max(p - 1, 0), q) for p, q in camera.terms)
         )
+        by_v = np.array([q for _, q in camera.terms])[:, None] * monomials(
+            u, v, tuple((p, max(q - 1, 0)) for p, q in camera.terms)
+        )
+        out[:, :, 4] -= half * (np.asarray(camera.coefficients) @ by_u).T
+        out[:, :, 5] -= half * (np.asarray(camera.coefficients) @ by_v).T
         out[:, 0, 6 : 6 + terms] = basis.T
         out[:, 1, 6 + terms :] = basis.T
     return out

@@ -82,7 +82,7 @@ def solve_hinted(
             continue
         sky_quads = local_quads(sky.vectors, effort.sky_neighbours, 2 * radius * (1 + scale_tolerance))
         pairs = pair_quads(image, sky_quads, scale_tolerance)
-        guesses = hypotheses(image_vectors, sky.vectors, image, sky_quads, pairs, focal, half, parity)
+        guesses = hypotheses(field, sky, image_vectors, image, sky_quads, pairs, focal, half, parity)
         near = (guesses.focal_px < focal * (1 + scale_tolerance)) & (
             guesses.focal_px > focal / (1 + scale_tolerance)
         )

@@ -7,11 +7,13 @@ from dataclasses import dataclass
 import numpy as np
 
 from imaging.stars.quads import Quads
+from imaging.stars.refine import Field, Sky
 
 CODE_TOLERANCE = 0.012  # 1 % of distortion across a frame changes a local quad's ratios by less
 _VOTE_CENTER = 0.04  # of the half-diagonal
 _VOTE_TURN_RAD = 0.03
 _VOTE_SCALE = 0.02
+_MAGNITUDE_SPREAD = 2.2  # of four stars between frame and catalogue: stretched pictures, colours, thin cloud
 
 
 @dataclass(frozen=True)
@@ -55,9 +57,19 @@ def pair_quads(
     return first, second
 
 
+def as_bright(field: Field, sky: Sky, image_stars: np.ndarray, sky_stars: np.ndarray) -> np.ndarray:
+    """Say which hypotheses (n,) pair stars of like brightness up to a constant; saturated ones are not asked."""
+    away = field.magnitude[image_stars] - sky.magnitude[sky_stars]
+    counted = ~field.saturated[image_stars]
+    high = np.where(counted, away, -np.inf).max(axis=1)
+    low = np.where(counted, away, np.inf).min(axis=1)
+    return (high - low < _MAGNITUDE_SPREAD) | (counted.sum(axis=1) < 2)
+
+
 def hypotheses(
+    field: Field,
+    stars: Sky,
     image_vectors: np.ndarray,
-    sky_vectors: np.ndarray,
     image: Quads,
     sky: Quads,
     pairs: tuple[np.ndarray, np.ndarray],
@@ -73,7 +85,9 @@ def hypotheses(
 
     first, second = pairs
     image_stars, sky_stars = image.stars[first], sky.stars[second]
-    seen, true = image_vectors[image_stars], sky_vectors[sky_stars]
+    keep = as_bright(field, stars, image_stars, sky_stars)
+    first, second, image_stars, sky_stars = first[keep], second[keep], image_stars[keep], sky_stars[keep]
+    seen, true = image_vectors[image_stars], stars.vectors[sky_stars]
     axes = _axes(seen, true, parity)
     residual = np.linalg.norm(np.einsum("nij,nkj->nki", axes, true) - seen, axis=2)
     zoom = image.longest[first] / sky.longest[second]

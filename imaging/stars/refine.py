@@ -1,16 +1,21 @@
-"""From four stars to all: matches grow outwards from a hypothesis, as far as the fitted camera is sure of itself."""
+"""From a few stars to all: matches grow outwards from a hypothesis, as far as the fitted camera is sure of itself."""
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
+from imaging.stars.brightness import Brightness, consistent, fit_brightness
 from imaging.stars.camera import Camera, CameraFit, Lens, fit_camera
-from imaging.stars.verify import Evidence, local_density
+from imaging.stars.verify import Evidence, crowding
 
 GATE_SIGMAS = 3.5
 _SHARPEST_PX = 0.25  # a detection is never trusted better than this while matching
+_GROWN_ENOUGH = 120  # pairs after which growing ends and the whole catalogue is matched
+_NEIGHBOURS = 6
+_MIX_UP = 0.05  # chance of another detection in the gate up to which a star is matched
 
 
 @dataclass(frozen=True)
@@ -38,18 +43,59 @@ class Sky:
 
 @dataclass(frozen=True)
 class Field:
-    """Detections of one frame as matching needs them, brightest first."""
+    """Detections of one frame as matching needs them, brightest first; `magnitude` is instrumental."""
 
     x_px: np.ndarray
     y_px: np.ndarray
     sigma_px: np.ndarray
+    magnitude: np.ndarray
+    saturated: np.ndarray
     shape: tuple[int, int]
-    tree: object
+    tree: Any
 
     @property
     def half_diagonal_px(self) -> float:
         """Half of the frame's diagonal."""
         return float(np.hypot(*self.shape) / 2)
+
+    @property
+    def area_px2(self) -> float:
+        """Number of pixels."""
+        return float(self.shape[0] * self.shape[1])
+
+    def take(self, chosen: np.ndarray) -> Field:
+        """Return these of the detections."""
+        return field_of(
+            self.x_px[chosen],
+            self.y_px[chosen],
+            self.sigma_px[chosen],
+            self.magnitude[chosen],
+            self.saturated[chosen],
+            self.shape,
+        )
+
+    def nearest(
+        self, x: np.ndarray, y: np.ndarray, bright: Brightness | None, magnitude: np.ndarray
+    ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Return distance and index of the nearest detection as bright as each star, and how many in the frame are.
+
+        Distance is infinite where none of the nearest few is.
+        """
+        near = min(_NEIGHBOURS, len(self.x_px))
+        distance, index = self.tree.query(np.column_stack([x, y]), k=near)
+        distance, index = distance.reshape(len(x), near), index.reshape(len(x), near)
+        if bright is None:
+            return distance[:, 0], index[:, 0], np.full(len(x), len(self.x_px), dtype=float)
+        expected, half_width = bright.expected(magnitude)
+        fits = consistent(expected, half_width, self.magnitude[index], self.saturated[index])
+        first = fits.argmax(axis=1)
+        line = np.arange(len(x))
+        distance = np.where(fits[line, first], distance[line, first], np.inf)
+        ordered = np.sort(self.magnitude)
+        rivals = np.searchsorted(ordered, expected + half_width) - np.searchsorted(
+            ordered, expected - half_width
+        )
+        return distance, index[line, first], rivals + float(self.saturated.sum())
 
 
 @dataclass(frozen=True)
@@ -60,14 +106,22 @@ class Match:
     detection: np.ndarray
     star: np.ndarray
     evidence: Evidence
-    stars_in_frame: int
+    bright: Brightness
 
 
-def field_of(x_px: np.ndarray, y_px: np.ndarray, sigma_px: np.ndarray, shape: tuple[int, int]) -> Field:
+def field_of(
+    x_px: np.ndarray,
+    y_px: np.ndarray,
+    sigma_px: np.ndarray,
+    magnitude: np.ndarray,
+    saturated: np.ndarray,
+    shape: tuple[int, int],
+) -> Field:
     """Return detections with their tree."""
     from scipy.spatial import cKDTree
 
-    return Field(x_px, y_px, sigma_px, shape, cKDTree(np.column_stack([x_px, y_px])))
+    tree = cKDTree(np.column_stack([x_px, y_px]), balanced_tree=False, compact_nodes=False)
+    return Field(x_px, y_px, sigma_px, magnitude, saturated, shape, tree)
 
 
 def grow(
@@ -77,98 +131,119 @@ def grow(
     sky: Sky,
     detection: np.ndarray,
     star: np.ndarray,
-    give_up: float = -3.0,
+    give_up_log10: float = -2.5,
 ) -> Match | None:
     """Grow the pairs (`detection`, `star`) of a hypothesis over the frame; None when the evidence speaks against it.
 
-    Each catalogue star is tested once, when the camera fitted without it predicts it well enough. `give_up`: log10 of
-    the likelihood ratio at which a hypothesis is dropped.
+    Each catalogue star is tested once, when the camera fitted without it predicts it; those predicted best come
+    first. `give_up_log10`: likelihood ratio at which a hypothesis is dropped.
     """
     evidence = Evidence()
     tested = np.zeros(len(sky), dtype=bool)
     tested[star] = True
     height, width = field.shape
-    area = float(height * width)
-    reach = 0.5 / np.sqrt(max(len(field.x_px), 1) / area)  # half the mean distance of detections
-    widest = min(0.6 * reach, 0.02 * field.half_diagonal_px)
-    fit = _fit(start, lens, field, sky, detection, star)
-    in_frame = 0
-    for _ in range(14):
+    widest = min(0.5 / np.sqrt(max(len(field.x_px), 1) / field.area_px2), 0.025 * field.half_diagonal_px)
+    bright = _bright(field, sky, detection, star)
+    fit = _fit(start, lens, field, sky, detection, star, iterations=4)
+    for step in range(14):
         x, y = fit.camera.pixels(sky.vectors)
         with np.errstate(invalid="ignore"):
-            inside = (x >= 0) & (x <= width - 1) & (y >= 0) & (y <= height - 1)
-        in_frame = int(inside.sum())
-        new = np.flatnonzero(inside & ~tested)
+            new = np.flatnonzero((x >= 0) & (x <= width - 1) & (y >= 0) & (y <= height - 1) & ~tested)
         if len(new) == 0:
             break
-        known = fit.covariance_at(x[new], y[new])
-        spread2 = np.maximum(np.trace(known, axis1=1, axis2=2) / 2, 0)
+        spread2 = np.maximum(np.trace(fit.covariance_at(x[new], y[new]), axis1=1, axis2=2) / 2, 0)
         catalogue_px = sky.sigma_arcsec[new] / fit.camera.scale_arcsec_px
         gate = GATE_SIGMAS * np.sqrt(spread2 + catalogue_px**2 + _SHARPEST_PX**2 + fit.sigma_model_px**2)
-        sure = gate < widest
-        if sure.sum() < min(3, len(new)):
-            # too little is certain: let the nearest tenth in, at the widest gate
-            nearest = np.argsort(gate)[: max(3, len(new) // 10)]
-            sure = np.zeros(len(new), dtype=bool)
-            sure[nearest[gate[nearest] < 4 * widest]] = True
-        if not sure.any():
+        order = np.argsort(gate, kind="stable")[: max(3, int(3 * 1.6**step))]
+        order = order[gate[order] < (widest if step else 2 * widest)]
+        if len(order) == 0:
             break
-        now, gate_now = new[sure], gate[sure]
-        distance, nearest = field.tree.query(np.column_stack([x[now], y[now]]))
-        chance = 1 - np.exp(-local_density(x[now], y[now], field.tree, area) * np.pi * gate_now**2)
+        now, gate_now = new[order], gate[order]
+        distance, nearest, rivals = field.nearest(x[now], y[now], bright, sky.magnitude[now])
+        density = (rivals + 1) / field.area_px2 * crowding(x[now], y[now], field.tree, field.area_px2)
         met = distance < gate_now
-        used = np.isin(nearest, detection)
-        evidence.add((met & ~used)[~(met & used)], chance[~(met & used)])
+        used = met & np.isin(nearest, detection)
+        evidence.add(met[~used], -np.expm1(-density[~used] * np.pi * gate_now[~used] ** 2))
         tested[now] = True
-        taken = np.flatnonzero(met & ~used)
-        taken = taken[np.argsort(distance[taken] / gate_now[taken])]
-        _, first = np.unique(nearest[taken], return_index=True)
-        taken = taken[first]
-        if evidence.log_ratio.max() < give_up * np.log(10):
+        if evidence.log_ratio.max() < give_up_log10 * np.log(10):
             return None
+        taken = np.flatnonzero(met & ~used)
+        taken = taken[np.argsort(distance[taken] / gate_now[taken], kind="stable")]
+        taken = taken[np.unique(nearest[taken], return_index=True)[1]]
         if len(taken):
             detection = np.concatenate([detection, nearest[taken]])
             star = np.concatenate([star, now[taken]])
-            fit = _fit(fit.camera, lens, field, sky, detection, star)
+            fit = _fit(fit.camera, lens, field, sky, detection, star, iterations=3)
             detection, star = _without_outliers(fit, field, sky, detection, star)
-    return Match(fit, detection, star, evidence, in_frame)
+            bright = _bright(field, sky, detection, star)
+        if len(star) >= _GROWN_ENOUGH:
+            break
+    return Match(fit, detection, star, evidence, bright)
 
 
-def settle(match: Match, lens: Lens, field: Field, sky: Sky) -> Match:
-    """Match the whole catalogue with the fitted camera, and fit again until the pairs no longer change."""
-    fit, detection, star = match.fit, match.detection, match.star
+def settle(match: Match, lens: Lens, field: Field, sky: Sky, limit: int = 2500) -> Match:
+    """Match the whole catalogue with the fitted camera, and fit again until the pairs no longer change.
+
+    `sky` may be another list than the one grown on. At most `limit` stars are used, the brightest.
+    """
+    from planner.errors import NoSolutionError
+
+    fit, bright = match.fit, match.bright
     height, width = field.shape
-    in_frame = match.stars_in_frame
-    for _ in range(6):
+    detection, star = match.detection, np.empty(0, dtype=int)
+    for turn in range(10):
         x, y = fit.camera.pixels(sky.vectors)
         with np.errstate(invalid="ignore"):
-            inside = np.flatnonzero((x >= -1) & (x <= width) & (y >= -1) & (y <= height))
-        in_frame = len(inside)
-        spread2 = np.trace(fit.covariance_at(x[inside], y[inside]), axis1=1, axis2=2) / 2
-        catalogue_px = sky.sigma_arcsec[inside] / fit.camera.scale_arcsec_px
-        distance, nearest = field.tree.query(np.column_stack([x[inside], y[inside]]))
-        sigma2 = spread2 + catalogue_px**2 + field.sigma_px[nearest] ** 2 + fit.sigma_model_px**2 + 0.05**2
-        close = np.flatnonzero(distance < 4 * np.sqrt(sigma2))
-        close = close[np.argsort(distance[close] ** 2 / sigma2[close])]
-        _, first = np.unique(nearest[close], return_index=True)
-        chosen = close[first]
-        new_detection, new_star = nearest[chosen], inside[chosen]
-        if len(chosen) < 4:
+            inside = np.flatnonzero((x >= -1) & (x <= width) & (y >= -1) & (y <= height))[: 2 * limit]
+        if len(inside) == 0:
             break
-        same = len(new_star) == len(star) and np.array_equal(np.sort(new_star), np.sort(star))
-        detection, star = new_detection, new_star
-        fit = _fit(fit.camera, lens, field, sky, detection, star)
+        spread2 = np.maximum(np.trace(fit.covariance_at(x[inside], y[inside]), axis1=1, axis2=2) / 2, 0)
+        catalogue_px = sky.sigma_arcsec[inside] / fit.camera.scale_arcsec_px
+        distance, nearest, rivals = field.nearest(x[inside], y[inside], bright, sky.magnitude[inside])
+        # where the camera is not sure enough yet, the nearest detection is often another star: wait for the next turn
+        clear = 16 * (spread2 + fit.sigma_model_px**2) * np.pi * (rivals + 1) / field.area_px2 < _MIX_UP
+        sigma2 = spread2 + catalogue_px**2 + field.sigma_px[nearest] ** 2 + fit.sigma_model_px**2 + 0.05**2
+        close = np.flatnonzero((distance < 4 * np.sqrt(sigma2)) & clear)
+        close = close[np.argsort(distance[close] ** 2 / sigma2[close], kind="stable")]
+        chosen = np.sort(close[np.unique(nearest[close], return_index=True)[1]])[:limit]
+        if len(chosen) < min(4, len(match.star)):
+            break
+        same = len(chosen) == len(star) and np.array_equal(inside[chosen], star)
+        detection, star = nearest[chosen], inside[chosen]
+        fit = _fit(fit.camera, lens, field, sky, detection, star, iterations=5)
+        bright = _bright(field, sky, detection, star)
         if same:
             break
-    return Match(fit, detection, star, match.evidence, in_frame)
+    if len(star) < 3:
+        raise NoSolutionError(
+            "the stars of a promising pointing were lost when the whole catalogue was matched"
+        )
+    return Match(fit, detection, star, match.evidence, bright)
+
+
+def _bright(field: Field, sky: Sky, detection: np.ndarray, star: np.ndarray) -> Brightness:
+    return fit_brightness(field.magnitude[detection], sky.magnitude[star], field.saturated[detection])
 
 
 def _fit(
-    camera: Camera, lens: Lens, field: Field, sky: Sky, detection: np.ndarray, star: np.ndarray
+    camera: Camera,
+    lens: Lens,
+    field: Field,
+    sky: Sky,
+    detection: np.ndarray,
+    star: np.ndarray,
+    iterations: int,
 ) -> CameraFit:
     sigma = np.hypot(field.sigma_px[detection], sky.sigma_arcsec[star] / camera.scale_arcsec_px)
     return fit_camera(
-        camera, lens, field.x_px[detection], field.y_px[detection], sky.vectors[star], sigma, field.shape
+        camera,
+        lens,
+        field.x_px[detection],
+        field.y_px[detection],
+        sky.vectors[star],
+        sigma,
+        field.shape,
+        iterations=iterations,
     )
 
 

@@ -132,7 +132,9 @@ def _nearby(tt_s: float):  # type: ignore[no-untyped-def]
 def _field(found: Detections) -> Field:
     sigma = np.sqrt((found.sigma_x_px**2 + found.sigma_y_px**2) / 2 + _CENTROID_FLOOR_PX**2)
     sigma = np.where(found.saturated, np.maximum(sigma, 0.1), sigma)
-    return field_of(found.x_px, found.y_px, sigma, (found.height_px, found.width_px))
+    magnitude = -2.5 * np.log10(np.maximum(found.flux_adu, 1e-9))
+    shape = (found.height_px, found.width_px)
+    return field_of(found.x_px, found.y_px, sigma, magnitude, found.saturated, shape)
 
 
 def _solution(
@@ -219,4 +221,4 @@ def _without_bodies(field: Field, camera: Camera, exclude: Sequence[tuple[float,
     for one_x, one_y in zip(x, y, strict=True):
         if np.isfinite(one_x) and np.isfinite(one_y):
             keep &= np.hypot(field.x_px - one_x, field.y_px - one_y) > 8.0
-    return field_of(field.x_px[keep], field.y_px[keep], field.sigma_px[keep], field.shape)
+    return field.take(keep)

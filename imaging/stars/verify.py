@@ -10,11 +10,12 @@ one stops (Ville 1939; Shafer et al. 2011, Statist. Sci. 26, 84). A mean over se
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
 DETECTED_SHARES = (0.03, 0.1, 0.25, 0.5, 0.8, 0.95)
-ACCEPT_LOG10 = -9.0
+ACCEPT_LOG10 = -7.0
 
 
 @dataclass
@@ -44,10 +45,11 @@ class Evidence:
         return float(min(0.0, (-mean + np.log(max(trials, 1.0))) / np.log(10)))
 
 
-def local_density(x_px: np.ndarray, y_px: np.ndarray, tree, area_px: float) -> np.ndarray:  # type: ignore[no-untyped-def]
-    """Return detections per px^2 near each place: of the whole frame, or of the 8 nearest where they crowd."""
-    count = tree.n
-    near = min(9, count)
+def crowding(x_px: np.ndarray, y_px: np.ndarray, tree: Any, area_px2: float) -> np.ndarray:
+    """Return how much denser detections stand near each place than in the whole frame, at least 1 (8 nearest)."""
+    near = min(9, tree.n)
+    if near < 2:
+        return np.ones(len(x_px))
     distance, _ = tree.query(np.column_stack([x_px, y_px]), k=near)
-    crowded = (near - 1) / (np.pi * np.maximum(np.atleast_2d(distance)[:, -1], 1.0) ** 2) if near > 1 else 0.0
-    return np.maximum(count / area_px, crowded)
+    local = (near - 1) / (np.pi * np.maximum(distance[:, -1], 1.0) ** 2)
+    return np.maximum(local * area_px2 / tree.n, 1.0)
