@@ -129,8 +129,7 @@ def pole_radec_deg(body: str, tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray]
     century = day / 36525.0
     one = np.ones_like(day)
     if body == "moon":
-        ra, dec, _ = moon_orientation_deg(tt_s)
-        return ra, dec
+        return moon_orientation_deg(tt_s)[:2]
     if body == "neptune":
         n = np.radians(357.85 + 52.316 * century)
         return 299.36 + 0.70 * np.sin(n), 43.46 - 0.51 * np.cos(n)

@@ -124,7 +124,7 @@ def radec_deg(vector: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     return np.degrees(np.arctan2(y, x)) % 360.0, np.degrees(np.arctan2(z, np.hypot(x, y)))
 
 
-def unit_vector(ra_deg: np.ndarray, dec_deg: np.ndarray) -> np.ndarray:
+def unit_vector(ra_deg: np.ndarray | float, dec_deg: np.ndarray | float) -> np.ndarray:
     """Return unit vectors (3, n) of directions in degrees."""
     ra, dec = np.broadcast_arrays(np.radians(ra_deg), np.radians(dec_deg))
     return np.stack([np.cos(dec) * np.cos(ra), np.cos(dec) * np.sin(ra), np.sin(dec)])

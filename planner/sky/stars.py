@@ -242,9 +242,9 @@ def star(
     hip = re.fullmatch(r"hip\s*(\d{1,6})", text, re.IGNORECASE)
     number = int(hip[1]) if hip else NAMED.get(text.lower())
     if number is not None:
-        found = np.flatnonzero(table["hip"] == number) if number > 0 else []
+        found = np.flatnonzero((table["hip"] == number) & (table["hip"] > 0))
     elif source := re.fullmatch(r"(?:gaia\s*(?:dr3)?\s*)?(\d{7,20})", text, re.IGNORECASE):
-        found = np.flatnonzero(table["source"] == int(source[1])) if int(source[1]) < 2**63 else []
+        found = np.flatnonzero((table["source"] == min(int(source[1]), 2**63 - 1)) & (table["source"] > 0))
     else:
         from difflib import get_close_matches
 
