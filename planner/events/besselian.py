@@ -233,7 +233,7 @@ class MoonPassings:
         reach = radius * np.sqrt(1.0 - self.outline.squeezed[which] * share)
         return near, reach / far_distance
 
-    def moon_altitude_deg(self, where: Observer, tt_s: np.ndarray) -> np.ndarray:
+    def target_altitude_deg(self, where: Observer, tt_s: np.ndarray) -> np.ndarray:
         """Return the geometric altitude of the target of each passing, without aberration: to 0.01 degrees."""
         which = np.arange(len(self))
         site_km = observer.itrs_position_km(where)

@@ -10,6 +10,7 @@ from planner.events.family import Family
 FAMILIES = {
     "solar-transit": "planner.events.transit:SolarTransit",
     "moon-occults-planet": "planner.events.moon_planet:MoonOccultsPlanet",
+    "moon-occults-star": "planner.events.moon_star:MoonOccultsStar",
     "retrograde-track": "planner.events.retrograde:RetrogradeTrack",
 }
 

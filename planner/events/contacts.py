@@ -20,6 +20,15 @@ from planner.sky.observer import Observer
 RAD_ARCSEC = places.RAD_ARCSEC
 
 
+# Where something is: (observer, TT seconds) to vectors (3, n) in km from the observer, with light-time.
+Track = Callable[[Observer | None, np.ndarray], np.ndarray]
+
+
+def body_track(body: str) -> Track:
+    """Return the track of the Sun, the Moon or a planet."""
+    return lambda observer, tt_s: places.direction(body, observer, tt_s).vector_km
+
+
 @dataclass(frozen=True)
 class Shape:
     """Size of a body's outline: a spheroid about `pole` (unit vector, ICRS); a ring is one without thickness.
@@ -81,8 +90,8 @@ class Sight:
 class Passing:
     """A near body that passes a far one, as an observer (None: the geocentre) sees it."""
 
-    near: str
-    far: str
+    near: Track
+    far: Track
     near_shape: Shape
     far_shape: Shape
     observer: Observer | None
@@ -90,11 +99,7 @@ class Passing:
     def sight(self, tt_s: np.ndarray) -> Sight:
         """Return both bodies at these times."""
         tt_s = np.asarray(tt_s, dtype=float)
-        return Sight(
-            tt_s,
-            places.direction(self.near, self.observer, tt_s).vector_km,
-            places.direction(self.far, self.observer, tt_s).vector_km,
-        )
+        return Sight(tt_s, self.near(self.observer, tt_s), self.far(self.observer, tt_s))
 
     def radii_rad(self, sight: Sight) -> tuple[np.ndarray, np.ndarray]:
         """Return the angular radii of near and far body along the line between their centres."""

@@ -48,6 +48,13 @@ class InstantMaker:
                 zenith = places.zenith_pa_deg(*start, observer, self.tt_s)
                 self.zenith_angle_deg = (angle - zenith) % 360.0
 
+    def limit(self, where: np.ndarray, reason: str) -> None:
+        """Add a reason why instants are not seen, where nothing else limits them already."""
+        limits = [
+            old or (reason if hit else None) for old, hit in zip(self.view.limited_by, where, strict=True)
+        ]
+        self.view = replace(self.view, limited_by=tuple(limits))
+
     def instants(
         self,
         names: np.ndarray | list[str],

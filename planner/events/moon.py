@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from planner.events import cautions
 from planner.events.contacts import RAD_ARCSEC
 from planner.sky import discs, places
 from planner.sky.observer import Observer
@@ -14,6 +15,10 @@ from planner.sky.observer import Observer
 # about 1/50 of the lunar parallax term (the rule used in almanacs since Chauvenet); radius of the Earth at 45 degrees.
 _SHADOW_WIDENED = 1.02
 _EARTH_MEAN_OVER_EQUATORIAL = 0.998340
+# The limb about a smooth circle, km: 1-sigma at one place, and the highest and lowest that it reaches; measured on
+# the public elevation grid at many librations (tests/events/test_moon.py).
+LIMB_SIGMA_KM = 1.2
+LIMB_RELIEF_KM = 2.5
 
 
 @dataclass(frozen=True)
@@ -98,3 +103,11 @@ def limb_words(state: MoonState) -> dict[str, list]:
         "moon_illuminated_fraction": [float(v) for v in state.illuminated_fraction],
         "moon_eclipse": list(state.eclipse),
     }
+
+
+def moon_cautions(elongation_deg: float) -> tuple[str, ...]:
+    """Return the cautions of an occultation by the Moon, this far from the Sun."""
+    near_sun = (
+        tuple(text.format(elongation_deg) for text in cautions.SUN_NEAR) if elongation_deg < 30.0 else ()
+    )
+    return near_sun + cautions.ROUND_LIMB + cautions.NIGHT

@@ -7,27 +7,20 @@ from collections.abc import Callable
 import numpy as np
 
 from planner.errors import InputError
-from planner.events import cautions, conjunctions
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
-from planner.events.contacts import RAD_ARCSEC, Passing, Shape
+from planner.events.contacts import RAD_ARCSEC, Passing, Shape, body_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
-from planner.events.moon import limb_words, moon_state
+from planner.events.moon import LIMB_SIGMA_KM, limb_words, moon_cautions, moon_state
+from planner.events.moon_search import EVENT_REACH_S, happening, moon_candidates
 from planner.events.visibility import sun_altitude_deg, view
 from planner.sky import bodies, discs, places, timescale
 from planner.sky.observer import Observer
 
 DAY_S = timescale.DAY_S
-# Geocentric separation at conjunction in longitude within which some place on Earth sees an occultation: the largest
-# lunar parallax and semidiameter (61.5' + 16.8') and a planet's (0.5'), over the cosine of the track's slope
-# (under 20 degrees even for Venus near its stations).
-_NEAR_ARCSEC = 79.0 * 60.0 / np.cos(np.deg2rad(20.0))
-_EARTH_RADIUS_KM = 6378.137
 # A topocentric occultation lasts under 2 h, and its middle is within 2 h of the geocentric one.
 _CLOSEST_REACH_S = 0.25 * DAY_S
 _CONTACT_REACH_S = 0.15 * DAY_S
-# 1-sigma of the limb about a smooth circle at the contact point, km: measured on the lunar elevation grid, see tests.
-_LIMB_SIGMA_KM = 1.2
 _RINGS_KM = 136775.0  # outer edge of Saturn's A ring (IAU/NASA planetary ring tables; from memory)
 
 
@@ -50,13 +43,11 @@ class MoonOccultsPlanet:
         """Return the occultations between two instants: seen from the geocentre, or from the site above its horizon."""
         timescale.require_span(np.array([start_tt_s, end_tt_s]), "search span")
         wanted = tuple(self._checked(body) for body in bodies or self.targets)
-        found: list[Event] = []
-        for count, body in enumerate(wanted):
-            somewhere = self._somewhere(body, start_tt_s, end_tt_s)
-            found += [event for event in somewhere if self.predict(event, observer).happens]
-            if tick:
-                tick(count + 1, len(wanted))
-        return sorted(found, key=lambda event: event.middle_tt_s)
+        found = [
+            self._event(wanted[planet], middle_tt_s)
+            for planet, _, middle_tt_s in happening(start_tt_s, end_tt_s, observer, wanted, tick=tick)
+        ]
+        return [event for event in found if self.predict(event, observer).happens]
 
     def nearest(self, spec: EventSpec) -> Event:
         """Return the occultation of the spec's planet nearest to its date that some place on Earth sees."""
@@ -87,7 +78,7 @@ class MoonOccultsPlanet:
         moment = moments(passing, times, names == "closest")
         sight = passing.sight(times)
         at_limb = np.where(names == "closest", 0.0, 1.0)
-        limb_arcsec = at_limb * _LIMB_SIGMA_KM / moment.near_distance_km * RAD_ARCSEC
+        limb_arcsec = at_limb * LIMB_SIGMA_KM / moment.near_distance_km * RAD_ARCSEC
         terms = site_terms(moment, observer)
         terms += [ephemeris_term(moment, "moon", body), angle_term("lunar limb", moment, limb_arcsec)]
         planet = discs.sky_disc(body, observer, times, radii=radii)
@@ -134,7 +125,7 @@ class MoonOccultsPlanet:
                 "limb": "smooth",
                 "places": "light-time directions from the observer; refraction does not move a contact",
             },
-            cautions=self._cautions(state.elongation_deg[middle], maker),
+            cautions=moon_cautions(state.elongation_deg[middle]) + maker.time_cautions(),
             facts=facts,
         )
 
@@ -165,37 +156,21 @@ class MoonOccultsPlanet:
 
     def _passing(self, body: str, observer: Observer | None, radii: str | None, tt_s: float) -> Passing:
         moon = Shape(bodies.radii_km("moon", radii)[0])
-        return Passing("moon", body, moon, planet_shape(body, radii, tt_s), observer)
+        return Passing(body_track("moon"), body_track(body), moon, planet_shape(body, radii, tt_s), observer)
+
+    def _event(self, body: str, middle_tt_s: float) -> Event:
+        return Event(
+            EventSpec(self.name, body, middle_tt_s),
+            middle_tt_s - EVENT_REACH_S,
+            middle_tt_s,
+            middle_tt_s + EVENT_REACH_S,
+            f"The Moon covers {body.capitalize()}, {civil_day(middle_tt_s)}",
+        )
 
     def _somewhere(self, body: str, low_tt_s: float, high_tt_s: float) -> list[Event]:
         """Return the occultations that some place on Earth sees, with their geocentric middles."""
-        passing = self._passing(body, None, None, 0.5 * (low_tt_s + high_tt_s))
-        guess = conjunctions.moon_with(body, low_tt_s, high_tt_s)
-        guess = guess[passing.sight(guess).separation_rad * RAD_ARCSEC < _NEAR_ARCSEC]
-        middle = passing.closest(guess, 3600.0, DAY_S)
-        middle = middle[np.isfinite(middle)]
-        middle = np.unique(middle[(middle >= low_tt_s) & (middle <= high_tt_s)])
-        sight = passing.sight(middle)
-        near, far = passing.radii_rad(sight)
-        parallax = np.arcsin(_EARTH_RADIUS_KM / sight.near_distance_km)
-        middle = middle[sight.separation_rad < near + far + parallax]
-        return [
-            Event(
-                EventSpec(self.name, body, float(t)),
-                float(t - 0.2 * DAY_S),
-                float(t),
-                float(t + 0.2 * DAY_S),
-                f"The Moon covers {body.capitalize()}, {civil_day(t)}",
-            )
-            for t in middle
-        ]
-
-    @staticmethod
-    def _cautions(elongation_deg: float, maker: InstantMaker) -> tuple[str, ...]:
-        found: tuple[str, ...] = cautions.ROUND_LIMB + maker.time_cautions()
-        if elongation_deg < 30.0:
-            found = tuple(text.format(elongation_deg) for text in cautions.SUN_NEAR) + found
-        return found + cautions.NIGHT
+        candidates = moon_candidates(low_tt_s, high_tt_s, (body,))
+        return [self._event(body, float(t)) for t in candidates.passings.geocentric()[0]]
 
 
 def planet_shape(body: str, radii: str | None, tt_s: float) -> Shape:

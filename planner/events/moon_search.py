@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from itertools import pairwise
 
@@ -11,6 +12,8 @@ from planner.events import conjunctions
 from planner.events.besselian import MoonPassings, Outline, moon_passings
 from planner.events.contacts import RAD_ARCSEC
 from planner.sky import bodies, ephemeris, places, starlist, timescale
+from planner.sky.observer import Observer
+from planner.sky.stars import Star
 
 DAY_S = timescale.DAY_S
 EARTH_RADIUS_KM = bodies.EARTH_RADIUS_KM
@@ -24,21 +27,26 @@ _ZODIAC_RAD = np.radians(5.3) + _NEAR_STAR_RAD
 # Linear interpolation of the Moon's longitude and latitude over half a day is good to 0.02 degrees.
 _MOON_STEP_S = 0.5 * DAY_S
 _INTERPOLATION_RAD = np.radians(0.03)
+# An event is looked at this long before and after its geocentric middle.
+EVENT_REACH_S = 0.2 * DAY_S
+_GRAZE_ARCSEC = 5.0
+_HORIZON_SLACK_DEG = 1.5
 _EPOCH_TT_S = (starlist.EPOCH_YEAR - 2000.0) * timescale.YEAR_S
 _MAS_RAD = 1e-3 / RAD_ARCSEC
+_DEG = 180.0 / np.pi
 
 
 @dataclass(frozen=True)
 class MoonCandidates:
     """Passings that some place on Earth sees as occultations, in time order.
 
-    `planet` (n,): index into `planets`, -1 for a star; `star_row` (n,): row of the star list, -1 for a planet.
+    `planet` (n,): index into `planets`, -1 for a star; `star` (n,): row of the table of stars, -1 for a planet.
     """
 
     passings: MoonPassings
     planets: tuple[str, ...]
     planet: np.ndarray
-    star_row: np.ndarray
+    star: np.ndarray
 
     def __len__(self) -> int:
         """Return the number of passings."""
@@ -49,14 +57,26 @@ def zodiac_stars(magnitude_limit: float) -> np.ndarray:
     """Return the rows of the star list, to a V magnitude, that the Moon can ever cover."""
     table = starlist.star_list()
     rows = np.flatnonzero(np.asarray(table["v"]) <= magnitude_limit)
-    return rows[np.abs(_lonlat(_star_vectors(rows))[1]) < _ZODIAC_RAD]
+    return rows[np.abs(_lonlat(_star_vectors(table[rows]))[1]) < _ZODIAC_RAD]
+
+
+def as_table(star: Star) -> np.ndarray:
+    """Return one star as a table of one row, its position carried to the epoch of the star list."""
+    years = starlist.EPOCH_YEAR - star.epoch_year
+    row = np.zeros(1, starlist.STAR)
+    row["dec_deg"] = star.dec_deg + star.pm_dec_mas_yr * years * _MAS_RAD * _DEG
+    east_deg = star.pm_ra_mas_yr * years * _MAS_RAD * _DEG
+    row["ra_deg"] = star.ra_deg + east_deg / np.cos(np.radians(star.dec_deg))
+    row["pm_ra"], row["pm_dec"], row["parallax"] = star.pm_ra_mas_yr, star.pm_dec_mas_yr, star.parallax_mas
+    row["v"] = star.magnitude
+    return row
 
 
 def moon_candidates(
     low_tt_s: float,
     high_tt_s: float,
     planets: tuple[str, ...] = (),
-    star_rows: np.ndarray | None = None,
+    star_table: np.ndarray | None = None,
     radii: str | None = None,
 ) -> MoonCandidates:
     """Return all passings between two instants over these planets and stars, ready for any site.
@@ -72,11 +92,11 @@ def moon_candidates(
         times.append(t)
         planet.append(np.full(len(t), index))
         row.append(np.full(len(t), -1))
-    if star_rows is not None and len(star_rows):
-        t, which = _star_conjunctions(low_tt_s - DAY_S, high_tt_s + DAY_S, star_rows)
+    if star_table is not None and len(star_table):
+        t, which = _star_conjunctions(low_tt_s - DAY_S, high_tt_s + DAY_S, star_table)
         times.append(t)
         planet.append(np.full(len(t), -1))
-        row.append(star_rows[which])
+        row.append(which)
     middle = np.concatenate(times) if times else np.empty(0)
     order = np.argsort(middle, kind="stable")
     middle = middle[order]
@@ -86,7 +106,7 @@ def moon_candidates(
         middle,
         planets,
         planet_of,
-        _geocentric_star_vectors(row_of, middle),
+        _geocentric_star_vectors(star_table, row_of, middle),
         bodies.radii_km("moon", radii)[0],
         outline_of(planets, planet_of, middle, radii),
     )
@@ -114,7 +134,7 @@ def outline_of(planets: tuple[str, ...], planet: np.ndarray, tt_s: np.ndarray, r
     return Outline(radius, squeezed, poles)
 
 
-def _star_conjunctions(low_tt_s: float, high_tt_s: float, rows: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+def _star_conjunctions(low_tt_s: float, high_tt_s: float, table: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Return conjunctions in longitude within reach, and the index of the star of each; in blocks of 20 years."""
     low, high = max(low_tt_s, timescale.SPAN[0]), min(high_tt_s, timescale.SPAN[1])
     blocks = max(1, int(np.ceil((high - low) / (20 * timescale.YEAR_S))))
@@ -125,7 +145,7 @@ def _star_conjunctions(low_tt_s: float, high_tt_s: float, rows: np.ndarray) -> t
         moon = ephemeris.default_ephemeris().relative_km("moon", "earth", timescale.tdb_s(grid))
         longitude, latitude = _lonlat(moon)
         longitude = np.unwrap(longitude)
-        star_longitude, star_latitude = _lonlat(_star_vectors(rows, 0.5 * (start + end)))
+        star_longitude, star_latitude = _lonlat(_star_vectors(table, 0.5 * (start + end)))
         turns = np.arange(np.floor(longitude[0] / (2 * np.pi)), np.ceil(longitude[-1] / (2 * np.pi)) + 1)
         target = (star_longitude[None, :] % (2 * np.pi)) + 2 * np.pi * turns[:, None]
         inside = (target >= longitude[0]) & (target < longitude[-1])
@@ -137,9 +157,8 @@ def _star_conjunctions(low_tt_s: float, high_tt_s: float, rows: np.ndarray) -> t
     return np.concatenate(found_t), np.concatenate(found_star)
 
 
-def _star_vectors(rows: np.ndarray, tt_s: float | np.ndarray = _EPOCH_TT_S) -> np.ndarray:
+def _star_vectors(table: np.ndarray, tt_s: float | np.ndarray = _EPOCH_TT_S) -> np.ndarray:
     """Return barycentric directions (3, n) with proper motion to a date."""
-    table = starlist.star_list()[rows]
     ra, dec = np.radians(table["ra_deg"]), np.radians(table["dec_deg"])
     years = (np.asarray(tt_s) - _EPOCH_TT_S) / timescale.YEAR_S
     east, north = table["pm_ra"] * years * _MAS_RAD, table["pm_dec"] * years * _MAS_RAD
@@ -153,14 +172,14 @@ def _star_vectors(rows: np.ndarray, tt_s: float | np.ndarray = _EPOCH_TT_S) -> n
     return vector / np.sqrt((vector**2).sum(axis=0))
 
 
-def _geocentric_star_vectors(rows: np.ndarray, tt_s: np.ndarray) -> np.ndarray:
+def _geocentric_star_vectors(table: np.ndarray | None, rows: np.ndarray, tt_s: np.ndarray) -> np.ndarray:
     """Return geocentric directions (3, n) with motion and parallax; zeros where the row is -1."""
     vectors = np.zeros((3, len(rows)))
     of = np.flatnonzero(rows >= 0)
-    if len(of):
-        parallax = starlist.star_list()["parallax"][rows[of]].astype(float) * _MAS_RAD
+    if table is not None and len(of):
+        parallax = table["parallax"][rows[of]].astype(float) * _MAS_RAD
         earth_au = ephemeris.position_km("earth", timescale.tdb_s(tt_s[of])) / bodies.AU_KM
-        moved = _star_vectors(rows[of], tt_s[of]) - parallax * earth_au
+        moved = _star_vectors(table[rows[of]], tt_s[of]) - parallax * earth_au
         vectors[:, of] = moved / np.sqrt((moved**2).sum(axis=0))
     return vectors
 
@@ -168,3 +187,36 @@ def _geocentric_star_vectors(rows: np.ndarray, tt_s: np.ndarray) -> np.ndarray:
 def _lonlat(vector: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     longitude, latitude = places.ecliptic_lonlat(vector, equinox="J2000")
     return np.radians(longitude), np.radians(latitude)
+
+
+def happening(
+    low_tt_s: float,
+    high_tt_s: float,
+    observer: Observer | None,
+    planets: tuple[str, ...] = (),
+    star_table: np.ndarray | None = None,
+    tick: Callable[[int, int], None] | None = None,
+) -> list[tuple[int, int, float]]:
+    """Return (index of planet, index of star, geocentric middle) of what an observer sees as an occultation or a graze.
+
+    Passings with the target well below the horizon are left out; near grazes are kept for a closer look.
+    """
+    found: list[tuple[int, int, float]] = []
+    blocks = max(1, int(np.ceil((high_tt_s - low_tt_s) / (5 * timescale.YEAR_S))))
+    for count, (start, end) in enumerate(pairwise(np.linspace(low_tt_s, high_tt_s, blocks + 1))):
+        candidates = moon_candidates(start, end, planets, star_table)
+        if len(candidates):
+            passings = candidates.passings
+            middle = passings.geocentric()[0]
+            seen = passings.contacts(observer, inner=False)
+            keep = seen.gap_arcsec < _GRAZE_ARCSEC
+            if observer is not None:
+                at = np.where(np.isfinite(seen.outer), seen.outer, seen.closest[:, None]).T
+                at = np.where(keep, at, middle)
+                altitude = [passings.target_altitude_deg(observer, t) for t in at]
+                keep &= np.max(altitude, axis=0) > -_HORIZON_SLACK_DEG
+            rows = np.flatnonzero(keep)
+            found += [(int(candidates.planet[i]), int(candidates.star[i]), float(middle[i])) for i in rows]
+        if tick:
+            tick(count + 1, blocks)
+    return found

@@ -10,7 +10,7 @@ import numpy as np
 from planner.errors import InputError
 from planner.events import cautions, conjunctions
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
-from planner.events.contacts import RAD_ARCSEC, Passing, Shape
+from planner.events.contacts import RAD_ARCSEC, Passing, Shape, body_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
 from planner.events.visibility import sun_altitude_deg, view
@@ -190,7 +190,7 @@ class SolarTransit:
 
     def _passing(self, body: str, observer: Observer | None, radii: str | None) -> Passing:
         shapes = [Shape(bodies.radii_km(name, radii)[0]) for name in (body, "sun")]
-        return Passing(body, "sun", shapes[0], shapes[1], observer)
+        return Passing(body_track(body), body_track("sun"), shapes[0], shapes[1], observer)
 
     def _transits(
         self, body: str, low_tt_s: float, high_tt_s: float, margin_arcsec: float | None
