@@ -121,6 +121,8 @@ def draw_sun(
     rate[y_low:y_high, x_low:x_high] += centre_rate * profile.at(distance_px)
     for planet in planets:
         _cut_out(rate, pointing, sun, planet, centre_rate, spread, motion)
+    # what is cut out is sampled more coarsely than the profile it is cut from: rounding may leave less than nothing
+    np.maximum(rate, 0.0, out=rate)
 
 
 def _cut_out(
