@@ -1,0 +1,129 @@
+"""A circle through displacements of a limb: robust, with a prior on the radius, and errors that neighbours share."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from imaging.discs.outline import Outline
+from imaging.discs.ring import Sectors
+from planner.errors import NoSolutionError
+
+# How many sectors further on a displacement by seeing may still be the same.
+_LAGS = 8
+
+
+@dataclass(frozen=True)
+class CircleFit:
+    """Centre and radius (px), their covariance, which sectors were used, what is left in each, and its rms."""
+
+    x: float
+    y: float
+    radius: float
+    covariance: np.ndarray
+    used: np.ndarray
+    residual: np.ndarray
+    rms: float
+
+
+def fit_circle(
+    sectors: Sectors,
+    x: float,
+    y: float,
+    radius: float,
+    prior: tuple[float, float] | None,
+    outline: Outline,
+    correlated: bool = False,
+) -> CircleFit:
+    """Move a circle (x, y, radius) by the displacements of its sectors, with Tukey's weights.
+
+    `prior`: radius and its 1-sigma. The scale of the weights is that about zero of the first, unweighted turns,
+    so that a rough start does not silence half the limb. `correlated`: errors allow for neighbours that move
+    together (Newey & West 1987), as seeing makes them.
+    """
+    good = sectors.good
+    angle = sectors.angle[good]
+    ratio = outline.ratio(angle)
+    design = np.stack([np.cos(angle) / ratio, np.sin(angle) / ratio, np.ones_like(angle)], axis=1)
+    shift, sigma = sectors.shift[good], sectors.sigma[good]
+    if shift.size < 6:
+        raise NoSolutionError("too little of a limb is seen to place a disc")
+    floor = float(np.median(sigma))
+    base = 1 / (sigma**2 + floor**2)
+    extra, target = np.zeros(3), np.zeros(3)
+    if prior is not None:
+        extra[2], target[2] = 1 / prior[1] ** 2, prior[0] - radius
+    weight = np.ones(shift.size)
+    solution = np.zeros(3)
+    residual = shift
+    normal = np.eye(3)
+    for turn in range(25):
+        total = base * weight
+        normal = design.T @ (design * total[:, None]) + np.diag(extra) + 1e-12 * np.eye(3)
+        new = np.linalg.solve(normal, design.T @ (total * shift) + extra * target)
+        change = float(np.abs(new - solution).max())
+        solution = new
+        residual = shift - design @ solution
+        scale = max(1.48 * float(np.median(np.abs(residual))), 0.3 * floor, 1e-6)
+        if turn >= 1:
+            weight = np.clip(1 - (residual / (5 * scale)) ** 2, 0, None) ** 2
+            if (weight > 0.2).sum() < 6:
+                raise NoSolutionError(
+                    "the edges do not lie on one circle: not a disc, or most of it is hidden"
+                )
+        if turn > 3 and change < 1e-5:
+            break
+    used = np.zeros(good.size, bool)
+    used[np.nonzero(good)[0][weight > 0.2]] = True
+    left = np.full(good.size, np.nan)
+    left[good] = residual
+    rms = float(np.sqrt(np.sum(weight * residual**2) / max(np.sum(weight) - 3, 1)))
+    bread = np.linalg.inv(normal)
+    covariance = bread
+    if correlated:
+        covariance = bread @ (_shared(design, base * weight, residual, good) + np.diag(extra)) @ bread
+    return CircleFit(
+        x + float(solution[0]), y + float(solution[1]), radius + float(solution[2]), covariance, used, left, rms
+    )  # fmt: skip
+
+
+def _shared(design: np.ndarray, weight: np.ndarray, residual: np.ndarray, good: np.ndarray) -> np.ndarray:
+    """Return the covariance of the weighted sum of residuals, sectors up to `_LAGS` apart correlated."""
+    moment = np.zeros((good.size, 3))
+    moment[good] = design * (weight * residual)[:, None]
+    lags = min(_LAGS, max(int(good.sum()) // 8, 0))
+    total = moment.T @ moment
+    for lag in range(1, lags + 1):
+        part = np.roll(moment, -lag, axis=0).T @ moment
+        total += (1 - lag / (lags + 1)) * (part + part.T)
+    count = int(good.sum())
+    return total * count / max(count - 3, 1)
+
+
+def limb_motion(sectors: Sectors, circle: CircleFit) -> tuple[float, float]:
+    """Return the rms displacement of the limb (px) without photon noise, and its correlation length (px).
+
+    From the autocovariance of residuals between neighbouring sectors, to which photon noise adds nothing:
+    m^2 exp(-(d/L)^2). Zero and the sector's length when neighbours do not move together.
+    """
+    step = 2 * np.pi * circle.radius / sectors.angle.size
+    left = np.where(circle.used, circle.residual, np.nan)
+    number = int(np.isfinite(left).sum())
+    if number < 12:
+        return 0.0, step
+    covariances = []
+    for lag in range(1, 4):
+        product = left * np.roll(left, -lag)
+        covariances.append(float(np.nanmean(product)) if np.isfinite(product).any() else 0.0)
+    total = float(np.nanmean(left**2))
+    first, second = covariances[0], covariances[1]
+    if first < 2 * total / np.sqrt(number):
+        return 0.0, step
+    if 0 < second < first:
+        # ln(first / second) = 3 step^2 / L^2
+        length = float(np.clip(step * np.sqrt(3 / np.log(first / second)), 0.5 * step, 20 * step))
+    else:
+        length = step if second <= 0 else 20 * step
+    squared = min(first * np.exp((step / length) ** 2), total)
+    return float(np.sqrt(squared)), length
