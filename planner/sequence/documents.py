@@ -307,7 +307,7 @@ def _tidy(value: Any, kind: Any = None) -> Any:
     raise InputError(f"cannot be written as YAML: {type(value).__name__}")
 
 
-_ONE_LINE = {"Shot", "PredictedPoint", "EventRequest", "Filter"}
+_ONE_LINE = {"Shot", "PredictedPoint", "EventRequest", "Filter", "GainSetting", "CalibrationSet", "Step"}
 
 
 def moment_text(moment: datetime) -> str:

@@ -27,7 +27,7 @@ def peak_rate_e_s(
     unblurred = radiometry.disc_rate_e_s_px(
         through, body, magnitude, disc.semidiameter_arcsec, disc.flattening, disc.phase_angle_deg, scale
     )
-    fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass) / scale
+    fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass, 0.0) / scale
     lit = (1 + np.cos(np.radians(disc.phase_angle_deg))) / 2 if body != "sun" else 1.0
     radius_px = disc.semidiameter_arcsec / scale * np.sqrt(lit)
     kept = radiometry.blurred_peak_fraction(radius_px, fwhm_px)
@@ -45,9 +45,9 @@ def rounded_down(exposure_s: float) -> float:
     return float(f"{np.floor(exposure_s / unit * (1 + 1e-12)) * unit:.3g}")
 
 
-def wanted_exposure_s(rig: Rig, rate_e_s: np.ndarray, well_fraction: float) -> np.ndarray:
+def wanted_exposure_s(rig: Rig, rate_e_s: np.ndarray, well_fraction: float, gain: float = 0.0) -> np.ndarray:
     """Return the exposure that fills this part of the range of the brightest pixel, within what the camera can do."""
-    wanted = well_fraction * radiometry.saturation_e(rig) / np.asarray(rate_e_s, float)
+    wanted = well_fraction * radiometry.saturation_e(rig, gain) / np.asarray(rate_e_s, float)
     return np.clip(wanted, rig.sensor.min_exposure_s, rig.sensor.max_exposure_s)
 
 

@@ -99,15 +99,14 @@ def camera_rotation_deg(plan: Plan, passage: Passage, observer, ra_deg, dec_deg,
     """Return the position angle of the frame's up direction at these times.
 
     An equatorial mount keeps it, turned by 180 degrees past the meridian flip; an alt-azimuth mount and a tripod
-    keep the angle to the zenith, so the field turns from the start of each passage (Meeus 1998, chapter 14).
+    keep the angle to the zenith, so the field turns (Meeus 1998, chapter 14).
     """
     angle_deg = plan.rig.camera_angle_deg + (180.0 if passage.flipped else 0.0)
     if plan.rig.mount.kind == "equatorial" or not len(tt_s):
         return np.full(len(tt_s), angle_deg % 360.0)
     from planner.sky.places import zenith_pa_deg
 
-    zenith = zenith_pa_deg(ra_deg, dec_deg, observer, tt_s)
-    return (angle_deg + zenith - zenith[0]) % 360.0
+    return (angle_deg + zenith_pa_deg(ra_deg, dec_deg, observer, tt_s)) % 360.0
 
 
 def _aim(
@@ -117,9 +116,28 @@ def _aim(
         if passage.aim_ra_deg is None or passage.aim_dec_deg is None:
             raise InputError(f"passage {passage.name!r}: aim 'field' needs aim_ra_deg and aim_dec_deg")
         return np.full(len(tt_s), passage.aim_ra_deg), np.full(len(tt_s), passage.aim_dec_deg)
+    if passage.aim == "ground":
+        return _ground_place(plan, passage, tt_s)
     assert event is not None
     geometry = catalogue.family(plan.event.family).geometry(event, observer_of(plan.site), tt_s)
     return aim_place(geometry, passage.aim)
+
+
+def _ground_place(plan: Plan, passage: Passage, tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return what passes behind a fixed direction over the ground; aberration (20 arcsec) is left out."""
+    from planner.sky.observer import local_axes
+    from planner.sky.places import radec_deg
+    from planner.sky.refraction import true_altitude_deg
+
+    if passage.aim_altitude_deg is None or passage.aim_azimuth_deg is None:
+        raise InputError(f"passage {passage.name!r}: aim 'ground' needs aim_altitude_deg and aim_azimuth_deg")
+    observer = observer_of(plan.site)
+    altitude = np.radians(true_altitude_deg(np.array([passage.aim_altitude_deg]), observer)[0])
+    azimuth = np.radians(passage.aim_azimuth_deg)
+    horizontal = np.array(
+        [np.cos(altitude) * np.sin(azimuth), np.cos(altitude) * np.cos(azimuth), np.sin(altitude)]
+    )
+    return radec_deg(np.einsum("nij,i->jn", local_axes(observer, tt_s), horizontal))
 
 
 def aim_place(geometry: Geometry, aim: str) -> tuple[np.ndarray, np.ndarray]:
@@ -129,5 +147,5 @@ def aim_place(geometry: Geometry, aim: str) -> tuple[np.ndarray, np.ndarray]:
     for name, ra_deg, dec_deg, _ in geometry.stars:
         if name == aim:
             return ra_deg, dec_deg
-    known = ", ".join([*geometry.discs, *(name for name, *_ in geometry.stars), "field"])
+    known = ", ".join([*geometry.discs, *(name for name, *_ in geometry.stars), "field", "ground"])
     raise InputError(f"aim: found {aim!r}; allowed are {known}")

@@ -77,3 +77,17 @@ def frame_track(field: Field, ra_deg: np.ndarray, dec_deg: np.ndarray, margin: f
 
 def _excess(offset: np.ndarray, reach: float) -> np.ndarray:
     return offset - np.clip(offset, -reach, reach)
+
+
+def best_angle_deg(rig: Rig, ra_deg: np.ndarray, dec_deg: np.ndarray) -> float:
+    """Return the camera angle, whole degrees in [0, 180), at which a track leaves most room in the frame."""
+    from planner.sky.places import offsets_arcsec, radec_deg, unit_vector
+
+    middle = radec_deg(unit_vector(ra_deg, dec_deg).mean(axis=1, keepdims=True))
+    east, north = offsets_arcsec(float(middle[0][0]), float(middle[1][0]), ra_deg, dec_deg)
+    fills = []
+    for angle in range(180):
+        field = field_of(rig, float(angle))
+        right, up = field.along(east, north)
+        fills.append(max(np.ptp(right) / field.half_width_arcsec, np.ptp(up) / field.half_height_arcsec))
+    return float(np.argmin(fills))

@@ -175,7 +175,11 @@ class Rig(Model):
     refocus_s: float = Field(60.0, ge=0)
     clock: Clock = Clock()
     camera_angle_deg: float = Field(
-        0.0, ge=-360, le=360, description="position angle of the frame's up direction, at the start"
+        0.0,
+        ge=-360,
+        le=360,
+        description="of the frame's up direction, counted like a position angle: from north on an equatorial mount, "
+        "from the zenith on an alt-azimuth mount and a tripod",
     )
     mirrored: bool = False
     storage_gb: float = Field(64.0, gt=0)
@@ -224,6 +228,7 @@ class Wish(Model):
     visits: int | None = Field(None, ge=1, le=1000, description="nights of a campaign")
     reserves: int = Field(1, ge=0, le=5, description="reserve nights named for each visit")
     frames_per_visit: int = Field(8, ge=1, le=1000)
+    planet_frames: int = Field(0, ge=0, le=1000, description="short exposures a visit, for the planet's disc")
     deep_frames: int = Field(0, ge=0, le=1000, description="long exposures a visit, for faint stars")
     visit_when: Literal["highest", "sidereal-time", "solar-depression"] = "highest"
     sidereal_time_h: float | None = Field(

@@ -2,17 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
-from math import ceil
 
 import numpy as np
 
 from planner.errors import InputError
-from planner.sequence import exposure, radiometry
-from planner.sequence.framing import Framing, field_of, frame_track
-from planner.sequence.models import Passage, Shot
-from planner.sequence.passages import next_whole, rows_of_disc, tracking_of
+from planner.events.family import Geometry
+from planner.sequence.motion import hour_angle_deg
 from planner.sequence.setting import Setting
 from planner.sky.discs import SkyDisc
 
@@ -20,49 +16,80 @@ DAY_S = 86400.0
 STEP_S = 600.0
 _LEAST_VISITS, _MOST_VISITS = 6, 30
 _SPACING_PX = 40.0
-# Enough stars for a plate solution with outliers to spare, each with signal for a centroid of a tenth of a pixel.
-STARS_WANTED, STAR_SIGNAL_TO_NOISE = 60, 20.0
-# A planet clipped so many times over can still be measured by its bloom-free outline (see imaging/discs).
-SATURATION_BORNE = 200.0
-_LONGEST_S = 60.0
-_SKY_WELL_FRACTION = 0.2
+_SPACING_DIAMETERS = 3.0
 
 
 @dataclass(frozen=True)
-class Visits:
-    """Chosen visits in time order: best time of each, place of the target and its altitude; arrays of shape (n,)."""
+class Nights:
+    """Usable nights in time order, each at its best time; arrays of shape (n,), `path_arcsec` along the sky."""
 
     tt_s: np.ndarray
-    ra_deg: np.ndarray
-    dec_deg: np.ndarray
+    night: np.ndarray
     altitude_deg: np.ndarray
+    azimuth_deg: np.ndarray
+    sun_altitude_deg: np.ndarray
+    moon_deg: np.ndarray
     path_arcsec: np.ndarray
     disc: SkyDisc
 
+    def __len__(self) -> int:
+        """Give the number of nights."""
+        return len(self.tt_s)
 
-def choose_visits(setting: Setting) -> Visits:
-    """Return visits spread evenly along the path on the sky; raises InputError when no night will do."""
-    from planner.sky.places import direction, separation_arcsec
+    def rows(self, rows: np.ndarray) -> Nights:
+        """Return some of the nights."""
+        from planner.sequence.passages import rows_of_disc
+
+        names = (
+            "tt_s",
+            "night",
+            "altitude_deg",
+            "azimuth_deg",
+            "sun_altitude_deg",
+            "moon_deg",
+            "path_arcsec",
+        )
+        return Nights(*(getattr(self, name)[rows] for name in names), rows_of_disc(self.disc, rows))
+
+
+def usable_nights(setting: Setting, after_tt_s: float | None = None) -> Nights:
+    """Return every night of the event that the wish allows, each at its best time; raises InputError when none is.
+
+    Best is highest, or the one moment of the fixed sidereal time or solar depression that the wish names.
+    """
+    from planner.sky.photometry import airmass
+    from planner.sky.places import direction, separation_arcsec, unit_vector
 
     event, wish = setting.event, setting.wish
-    tt_s = np.arange(event.start_tt_s, event.end_tt_s, STEP_S)
-    geometry = setting.geometry(tt_s)
+    grid_s = np.arange(event.start_tt_s, event.end_tt_s, STEP_S)
+    geometry = setting.geometry(grid_s)
+    path_grid = path_arcsec(geometry)
+    tt_s = _candidates(setting, geometry)
+    if tt_s is not grid_s:
+        tt_s = tt_s[(tt_s > grid_s[0]) & (tt_s < grid_s[-1])]
+        geometry = setting.geometry(tt_s) if len(tt_s) else geometry
     target = geometry.discs[geometry.target]
     moon = direction("moon", setting.observer, tt_s)
-    body = direction(geometry.target, setting.observer, tt_s)
-    path = np.concatenate(
-        [[0.0], np.cumsum(separation_arcsec(body.vector_km[:, :-1], body.vector_km[:, 1:]))]
-    )
-    moon_deg = separation_arcsec(moon.vector_km, body.vector_km) / 3600
-    usable = (
-        setting.reachable(geometry)
-        & (geometry.sun_altitude_deg < wish.darkness_deg)
-        & (moon_deg > wish.moon_distance_deg)
-    )
+    moon_deg = separation_arcsec(moon.vector_km, unit_vector(target.ra_deg, target.dec_deg)) / 3600
+    high = setting.reachable(geometry) & (airmass(geometry.altitude_deg) <= wish.most_airmass)
+    dark = geometry.sun_altitude_deg < wish.darkness_deg
+    if wish.visit_when == "solar-depression":
+        dark = np.ones(len(tt_s), bool)
+    away = moon_deg > wish.moon_distance_deg
+    later = tt_s > (after_tt_s if after_tt_s is not None else -np.inf)
+    usable = high & dark & away & later
     if not usable.any():
+        counts = {
+            "high enough": high,
+            "dark enough": dark,
+            "far enough from the Moon": away,
+            "still to come": later,
+        }
+        failing = min(counts, key=lambda name: int((high & counts[name]).sum()))
         raise InputError(
-            f"event: no night from {setting.site.name} has {geometry.target} above the horizon line with the Sun below "
-            f"{wish.darkness_deg:g} degrees and the Moon {wish.moon_distance_deg:g} degrees away"
+            f"event: no night from {setting.site.name} has {geometry.target} up, the Sun below {wish.darkness_deg:g} "
+            f"degrees, airmass under {wish.most_airmass:g} and the Moon {wish.moon_distance_deg:g} degrees away; "
+            f"fewest moments are {failing}"
         )
     # a night runs from local noon to noon
     night = np.floor((tt_s / DAY_S) + setting.site.longitude_deg / 360.0).astype(int)
@@ -70,98 +97,79 @@ def choose_visits(setting: Setting) -> Visits:
     order = np.lexsort((-score, night))
     best = order[np.concatenate([[True], np.diff(night[order]) != 0])]
     best = np.sort(best[np.isfinite(score[best])])
-    chosen = best[spread_evenly(path[best], _wanted_visits(setting, path[best]))]
-    return Visits(
-        tt_s[chosen],
-        target.ra_deg[chosen],
-        target.dec_deg[chosen],
-        geometry.altitude_deg[chosen],
-        path[chosen],
-        rows_of_disc(target, chosen),
+    path = np.interp(tt_s, grid_s, path_grid)
+    return Nights(
+        tt_s,
+        night,
+        geometry.altitude_deg,
+        geometry.azimuth_deg,
+        geometry.sun_altitude_deg,
+        moon_deg,
+        path,
+        target,
+    ).rows(best)
+
+
+def path_arcsec(geometry: Geometry) -> np.ndarray:
+    """Return the length of the target's path on the sky up to each time."""
+    from planner.sky.places import separation_arcsec, unit_vector
+
+    target = geometry.discs[geometry.target]
+    place = unit_vector(target.ra_deg, target.dec_deg)
+    return np.concatenate([[0.0], np.cumsum(separation_arcsec(place[:, :-1], place[:, 1:]))])
+
+
+def _candidates(setting: Setting, geometry: Geometry) -> np.ndarray:
+    """Return the times among which each night's best is looked for."""
+    wish = setting.wish
+    if wish.visit_when == "sidereal-time":
+        zero = np.zeros(len(geometry.tt_s))
+        turn = np.unwrap(np.radians(hour_angle_deg(setting.observer, zero, zero, geometry.tt_s)))
+        wanted = np.radians(15.0 * wish.sidereal_time_h)  # type: ignore[operator]
+        turns = np.arange(np.ceil((turn[0] - wanted) / (2 * np.pi)), (turn[-1] - wanted) / (2 * np.pi) + 1)
+        return np.interp(wanted + 2 * np.pi * turns, turn, geometry.tt_s)
+    if wish.visit_when == "solar-depression":
+        above = geometry.sun_altitude_deg + wish.solar_depression_deg
+        falls = np.flatnonzero((above[:-1] > 0) & (above[1:] <= 0))
+        rises = np.flatnonzero((above[:-1] <= 0) & (above[1:] > 0))
+        chosen = {"evening": falls, "morning": rises, "either": np.sort(np.concatenate([falls, rises]))}[
+            wish.twilight
+        ]
+        part = above[chosen] / (above[chosen] - above[chosen + 1])
+        return geometry.tt_s[chosen] + part * STEP_S
+    return geometry.tt_s
+
+
+def wanted_visits(setting: Setting, nights: Nights) -> int:
+    """Return how many visits: as asked, else as many as stand clearly apart in the picture."""
+    if setting.wish.visits is not None:
+        return setting.wish.visits
+    apart = max(
+        _SPACING_PX * setting.scale_arcsec_px,
+        2 * _SPACING_DIAMETERS * float(np.median(nights.disc.semidiameter_arcsec)),
     )
+    return int(np.clip(np.ptp(nights.path_arcsec) / apart, _LEAST_VISITS, _MOST_VISITS))
 
 
-def spread_evenly(path_arcsec: np.ndarray, count: int) -> np.ndarray:
-    """Return indices of at most `count` of these places, as even along the path as the places allow, no place twice."""
-    goals = np.linspace(path_arcsec[0], path_arcsec[-1], count)
-    nearest = np.abs(path_arcsec[None, :] - goals[:, None]).argmin(axis=1)
+def spread_evenly(path: np.ndarray, count: int, taken_path: float | None = None) -> np.ndarray:
+    """Return indices of at most `count` places, as even along the path as they allow, none twice.
+
+    With `taken_path` (where the last visit taken lies) the first of them keeps the same distance from it.
+    """
+    if taken_path is None:
+        goals = np.linspace(path[0], path[-1], count)
+    else:
+        goals = np.linspace(min(taken_path, path[-1]), path[-1], count + 1)[1:]
+    nearest = np.abs(path[None, :] - goals[:, None]).argmin(axis=1)
     return np.unique(nearest)
 
 
-def _wanted_visits(setting: Setting, path_arcsec: np.ndarray) -> int:
-    if setting.wish.visits is not None:
-        return setting.wish.visits
-    length_px = np.ptp(path_arcsec) / setting.scale_arcsec_px
-    return int(np.clip(length_px / _SPACING_PX, _LEAST_VISITS, _MOST_VISITS))
-
-
-def campaign_passages(setting: Setting, tick: Callable[[int, int], None] | None = None) -> list[Passage]:
-    """Return one passage a visit, each with frames exposed for the stars that a plate solution needs."""
-    visits = choose_visits(setting)
-    framing = frame_track(field_of(setting.rig), visits.ra_deg, visits.dec_deg)
-    exposures = _star_exposures_s(setting, visits, framing)
-    passages = []
-    for index in range(len(visits.tt_s)):
-        start, _ = next_whole(visits.tt_s[index], 60.0)
-        exposure_s = float(exposures[index])
-        cadence_s = ceil((exposure_s + setting.rig.sensor.readout_s) * 10) / 10 + 1.0
-        shot = Shot(
-            name="stars",
-            start_utc=start,
-            cadence_s=round(cadence_s, 3),
-            count=setting.wish.frames_per_visit,
-            exposure_s=exposure_s,
-            filter=setting.filter_name,
-            tracking=tracking_of(setting, "field"),
-        )
-        passages.append(
-            Passage(
-                name=f"visit {index + 1}",
-                purpose=f"{setting.event.spec.body} at {visits.path_arcsec[index] / 3600:.2f} degrees along its path",
-                visit=index + 1,
-                aim="field",
-                aim_ra_deg=round(float(framing.ra_deg[index]), 5),
-                aim_dec_deg=round(float(framing.dec_deg[index]), 5),
-                shots=[shot],
-            )
-        )
-        if tick:
-            tick(index + 1, len(visits.tt_s))
-    return passages
-
-
-def _star_exposures_s(setting: Setting, visits: Visits, framing: Framing) -> np.ndarray:
-    """Return the exposure at each visit: enough stars for a solution, more while the planet can still be measured."""
-    if setting.wish.exposure_s is not None:
-        return np.full(len(visits.tt_s), setting.wish.exposure_s)
-    from planner.sky.photometry import airmass
-    from planner.sky.stars import stars_in_field
-
-    rig, site, through = setting.rig, setting.site, setting.through
-    field = field_of(rig)
-    mass = airmass(visits.altitude_deg)
-    magnitudes = np.empty(len(visits.tt_s))
-    known: dict[tuple[float, float], float] = {}
-    for index, place in enumerate(zip(framing.ra_deg, framing.dec_deg, strict=True)):
-        place = (round(float(place[0]), 1), round(float(place[1]), 1))
-        if place not in known:
-            stars = stars_in_field(*place, field.radius_deg, float(visits.tt_s[index]))
-            inside = np.sort(stars.magnitude)
-            # the field is a rectangle in the circle that was asked for
-            area = 4 * field.half_width_arcsec * field.half_height_arcsec / 3600**2
-            rank = int(STARS_WANTED * np.pi * field.radius_deg**2 / area)
-            known[place] = float(inside[min(rank, len(inside) - 1)]) if len(inside) else 10.0
-        magnitudes[index] = known[place]
-    rate = radiometry.rate_e_s(through, radiometry.extinguished(magnitudes, mass, site.extinction_mag))
-    fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass) / setting.scale_arcsec_px
-    pixels = np.maximum(2.0 * fwhm_px**2, 4.0)
-    sky = radiometry.sky_rate_e_s_px(through, site.sky_brightness_mag_arcsec2, setting.scale_arcsec_px)
-    wanted = exposure.time_for_signal_to_noise_s(
-        rate, pixels * (sky + rig.sensor.dark_e_s), pixels * rig.sensor.read_noise_e**2, STAR_SIGNAL_TO_NOISE
-    )
-    longest = min(_LONGEST_S, _SKY_WELL_FRACTION * radiometry.saturation_e(rig) / max(float(sky), 1e-12))
-    peak = exposure.peak_rate_e_s(rig, site, through, visits.disc.name, visits.disc, visits.altitude_deg)
-    bearable = SATURATION_BORNE * radiometry.saturation_e(rig) / peak
-    wanted = np.maximum(wanted, np.minimum(bearable, longest))
-    wanted = np.clip(wanted, rig.sensor.min_exposure_s, min(longest, rig.sensor.max_exposure_s))
-    return np.array([exposure.rounded_up(float(value)) for value in wanted])
+def reserve_nights(nights: Nights, chosen: np.ndarray, count: int) -> list[np.ndarray]:
+    """Return for each chosen night the others to fall back on: before the next visit, nearest on the path first."""
+    reserves = []
+    for position, index in enumerate(chosen):
+        end = chosen[position + 1] if position + 1 < len(chosen) else len(nights)
+        between = np.arange(index + 1, end)
+        near = np.argsort(np.abs(nights.path_arcsec[between] - nights.path_arcsec[index]), kind="stable")
+        reserves.append(between[near][:count])
+    return reserves

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections import Counter
 from dataclasses import fields, replace
 from datetime import datetime, timedelta
 from math import ceil, floor
@@ -11,113 +12,148 @@ import numpy as np
 from planner.errors import InputError
 from planner.events.family import Geometry
 from planner.sequence import exposure
+from planner.sequence.flips import Pause, cut, focus_pauses, meridian_pause
 from planner.sequence.models import Passage, Shot
+from planner.sequence.recipes import Recipe, aim_of, place_of, recipes
 from planner.sequence.setting import Setting
 from planner.sequence.windows import Window, event_windows
 from planner.sky.discs import SkyDisc
 
 SAMPLE_S = 30.0
-TRACKING = {"sun": "solar", "moon": "lunar"}
 _LEAST_BURST_CADENCE_S = 0.5
 _MOST_BURST_FRAMES = 600
 _REGULAR_MOTION_PX = 2.0
 _REGULAR_CADENCE_S = (10.0, 60.0)
 _HIDDEN_CADENCE_S = 60.0
+# Centres of separate discs stand this many diameters apart.
+_SEPARATE_DIAMETERS = 1.25
 
 
-def event_passages(setting: Setting) -> list[Passage]:
-    """Return the passages of an event in time order; raises InputError when none of it can be reached from the site."""
+def event_passages(setting: Setting, clock_sigma_s: float | None = None) -> tuple[list[Passage], list[Pause]]:
+    """Return the passages of an event in time order, and the pauses between them.
+
+    `clock_sigma_s`: the poorest clock of all cameras, so that their passages share their instants.
+    Raises InputError when none of it can be reached from the site.
+    """
     windows = event_windows(
         setting.circumstances,
         setting.family.reference,
-        setting.rig.clock.sigma_s,
+        clock_sigma_s or setting.rig.clock.sigma_s,
         setting.wish.lead_s,
         setting.wish.burst_s,
     )
-    passages = [passage for window in windows for passage in _fill(setting, window)]
+    windows = [piece for window in windows for piece in _reachable(setting, window)]
+    aim = aim_of(setting)
+    flip = meridian_pause(setting, windows, aim)
+    pauses = ([flip] if flip else []) + focus_pauses(setting, windows, flip)
+    pauses.sort(key=lambda pause: pause.start_tt_s)
+    passages = []
+    for window in cut(windows, pauses):
+        passage = _passage(
+            setting, window, aim, flipped=flip is not None and window.start_tt_s >= flip.end_tt_s
+        )
+        if passage is not None:
+            passages.append(passage)
     if not passages:
         reason = setting.circumstances.reason or "it stays below the horizon line or the mount's limit"
         raise InputError(f"event: nothing of it can be photographed from {setting.site.name}: {reason}")
-    return passages
+    return _named_apart(passages), pauses
 
 
-def aim_of(setting: Setting) -> str:
-    """Return what the middle of the frame follows."""
-    reference = setting.family.reference
-    return reference if reference in ("sun", "moon") else setting.event.spec.body
-
-
-def tracking_of(setting: Setting, aim: str) -> str:
-    """Return the rate at which the mount follows this aim."""
-    return "none" if setting.rig.mount.kind == "fixed" else TRACKING.get(aim, "sidereal")
-
-
-def limiting_peak_e_s(setting: Setting, geometry: Geometry) -> tuple[str, np.ndarray]:
-    """Return the body whose brightest pixel limits the exposure, and its electrons a second at each time."""
-    names = [geometry.reference] if geometry.reference == "sun" else list(geometry.discs)
-    rates = {
-        name: exposure.peak_rate_e_s(
-            setting.rig, setting.site, setting.through, name, geometry.discs[name], geometry.altitude_deg
-        )
-        for name in names
-    }
-    if not rates:
-        raise InputError(f"event.family: {setting.family.name} shows no disc to expose for")
-    brightest = max(rates, key=lambda name: float(np.median(rates[name])))
-    return brightest, np.max(list(rates.values()), axis=0) if len(rates) > 1 else rates[brightest]
-
-
-def _fill(setting: Setting, window: Window) -> list[Passage]:
-    """Return a window's frames as a passage, or as several where the horizon cuts it."""
-    count = max(3, ceil((window.end_tt_s - window.start_tt_s) / SAMPLE_S) + 1)
-    sample_s = np.linspace(window.start_tt_s, window.end_tt_s, count)
-    geometry = setting.geometry(sample_s)
-    seen = setting.reachable(geometry)
-    if not seen.any():
-        return []
+def _reachable(setting: Setting, window: Window) -> list[Window]:
+    """Return the parts of a window in which the target is above the horizon line and within the mount's limits."""
+    sample_s = _samples(window)
+    seen = setting.reachable(setting.geometry(sample_s))
     edges = np.flatnonzero(np.diff(np.concatenate([[False], seen, [False]]).astype(int)))
-    passages = []
-    for first, last in zip(edges[::2], edges[1::2], strict=True):
-        passage = _passage(setting, window, sample_s[first:last], rows_of(geometry, slice(first, last)))
-        if passage is not None:
-            passages.append(passage)
-    return passages
+    return [
+        replace(window, start_tt_s=float(sample_s[first]), end_tt_s=float(sample_s[last - 1]))
+        for first, last in zip(edges[::2], edges[1::2], strict=True)
+        if last - first > 1
+    ]
 
 
-def _passage(setting: Setting, window: Window, sample_s: np.ndarray, geometry: Geometry) -> Passage | None:
-    aim = aim_of(setting)
-    sensor, wish = setting.rig.sensor, setting.wish
-    peak_of, rate_e_s = limiting_peak_e_s(setting, geometry)
-    wanted_s = exposure.wanted_exposure_s(setting.rig, rate_e_s, wish.well_fraction)
-    if wish.exposure_s is not None:
-        wanted_s = np.full_like(wanted_s, wish.exposure_s)
-    least_cadence_s = float(wanted_s.max()) + sensor.readout_s
-    cadence_s = _cadence_s(setting, window, geometry, least_cadence_s)
+def _samples(window: Window) -> np.ndarray:
+    count = max(3, ceil((window.end_tt_s - window.start_tt_s) / SAMPLE_S) + 1)
+    return np.linspace(window.start_tt_s, window.end_tt_s, count)
+
+
+def _passage(setting: Setting, window: Window, aim: str, flipped: bool) -> Passage | None:
+    sample_s = _samples(window)
+    geometry = setting.geometry(sample_s)
+    kinds = recipes(setting, geometry, target_hidden=window.name == "hidden")
+    readout_s = setting.rig.sensor.readout_s
+    # kinds of frame take turns; each slot is as long as its longest exposure
+    slots_s = [ceil((float(kind.wanted_s.max()) + readout_s) * 10 - 1e-9) / 10 for kind in kinds]
+    turn_s = sum(slots_s)
+    cadence_s = _cadence_s(setting, window, geometry, turn_s)
     start, start_tt_s = next_whole(sample_s[0], 0.1 if window.burst else 1.0)
-    count = floor((sample_s[-1] - start_tt_s - least_cadence_s) / cadence_s) + 1
+    count = floor((sample_s[-1] - start_tt_s - turn_s) / cadence_s + 1e-9) + 1
     if count < 1:
         return None
-    frame_tt_s = start_tt_s + np.arange(count) * cadence_s
-    frame_wanted_s = np.interp(frame_tt_s, sample_s, wanted_s)
-    stretches = exposure.steps(frame_wanted_s)
+    shots = []
+    for number, kind in enumerate(kinds):
+        offset_s = round(sum(slots_s[:number]), 3)
+        shots += _shots(
+            setting, window, kind, start + timedelta(seconds=offset_s), cadence_s, count, sample_s
+        )
+    aim_place = {}
+    if setting.rig.mount.kind == "fixed":
+        aim, aim_place = "ground", _ground_aim(setting, geometry, aim)
+    return Passage(
+        name=window.name, purpose=window.purpose, aim=aim, flipped=flipped, shots=shots, **aim_place
+    )
+
+
+def _ground_aim(setting: Setting, geometry: Geometry, aim: str) -> dict[str, float]:
+    """Return where a tripod points: the middle of what the aim passes through in a passage."""
+    from planner.sky.places import altaz
+
+    middle = len(geometry.tt_s) // 2
+    ra_deg, dec_deg = place_of(geometry, aim)
+    altitude, azimuth = altaz((ra_deg, dec_deg), setting.observer, geometry.tt_s)
+    return {
+        "aim_altitude_deg": round(float(altitude[middle]), 3),
+        "aim_azimuth_deg": round(float(azimuth[middle]), 3),
+    }
+
+
+def _shots(
+    setting: Setting,
+    window: Window,
+    kind: Recipe,
+    start: datetime,
+    cadence_s: float,
+    count: int,
+    sample_s: np.ndarray,
+) -> list[Shot]:
+    """Return the shots of one kind of frame: as many as the changing brightness needs steps of exposure."""
+    from planner.sky.timescale import tt_s_from_datetime
+
+    frame_tt_s = float(tt_s_from_datetime(start)) + np.arange(count) * cadence_s
+    wanted_s = np.interp(frame_tt_s, sample_s, kind.wanted_s)
+    stretches = exposure.steps(wanted_s)
+    name = window.name if kind.name == "main" else f"{window.name}, {kind.name}"
     shots = []
     for number, stretch in enumerate(stretches, 1):
-        exposure_s = wish.exposure_s or exposure.rounded_down(float(frame_wanted_s[stretch].min()))
+        exposure_s = setting.wish.exposure_s or exposure.rounded_down(float(wanted_s[stretch].min()))
         middle_tt_s = (frame_tt_s[stretch][0] + frame_tt_s[stretch][-1] + exposure_s) / 2
+        trail_px = float(kind.motion.trail_px(setting.rig, exposure_s).max())
         shots.append(
             Shot(
-                name=window.name if len(stretches) == 1 else f"{window.name} {number}",
+                name=name if len(stretches) == 1 else f"{name} {number}",
                 start_utc=start + timedelta(seconds=round(stretch.start * cadence_s, 3)),
                 cadence_s=cadence_s,
                 count=stretch.stop - stretch.start,
                 exposure_s=exposure_s,
+                gain=kind.gain,
                 filter=setting.filter_name,
-                tracking=tracking_of(setting, aim),
-                peak_of=peak_of,
-                peak_e=float(f"{exposure_s * np.interp(middle_tt_s, sample_s, rate_e_s):.4g}"),
+                tracking=kind.tracking,
+                peak_of=kind.peak_of,
+                peak_e=float(f"{exposure_s * np.interp(middle_tt_s, sample_s, kind.rate_e_s):.4g}"),
+                trail_px=float(f"{trail_px:.2g}"),
             )
         )
-    return Passage(name=window.name, purpose=window.purpose, aim=aim, shots=shots)
+    return shots
 
 
 def _cadence_s(setting: Setting, window: Window, geometry: Geometry, least_s: float) -> float:
@@ -130,24 +166,26 @@ def _cadence_s(setting: Setting, window: Window, geometry: Geometry, least_s: fl
     elif window.name == "hidden":
         asked = wish.cadence_s or _HIDDEN_CADENCE_S
     else:
-        motion_s = _REGULAR_MOTION_PX * setting.scale_arcsec_px / max(relative_rate_arcsec_s(geometry), 1e-9)
+        rate = max(relative_rate_arcsec_s(geometry), 1e-9)
+        motion_s = _REGULAR_MOTION_PX * setting.scale_arcsec_px / rate
         asked = wish.cadence_s or 5.0 * round(float(np.clip(motion_s, *_REGULAR_CADENCE_S)) / 5.0)
-    return round(max(ceil(least_s * 10 - 1e-9) / 10, asked), 3)
+        if wish.separate_discs and geometry.target in geometry.discs:
+            diameter = 2 * float(geometry.discs[geometry.target].semidiameter_arcsec.max())
+            asked = max(asked, ceil(_SEPARATE_DIAMETERS * diameter / rate))
+    return round(max(least_s, ceil(asked * 10 - 1e-9) / 10), 3)
 
 
 def relative_rate_arcsec_s(geometry: Geometry) -> float:
     """Return the median speed of the target against its reference."""
     from planner.sky.places import offsets_arcsec
 
-    target = geometry.discs[geometry.target]
+    ra_deg, dec_deg = place_of(geometry, geometry.target)
     if geometry.reference in geometry.discs:
         origin = geometry.discs[geometry.reference]
-        east, north = offsets_arcsec(origin.ra_deg, origin.dec_deg, target.ra_deg, target.dec_deg)
+        east, north = offsets_arcsec(origin.ra_deg, origin.dec_deg, ra_deg, dec_deg)
     else:
         middle = len(geometry.tt_s) // 2
-        east, north = offsets_arcsec(
-            target.ra_deg[middle], target.dec_deg[middle], target.ra_deg, target.dec_deg
-        )
+        east, north = offsets_arcsec(ra_deg[middle], dec_deg[middle], ra_deg, dec_deg)
     step = np.diff(geometry.tt_s)
     return float(np.nanmedian(np.hypot(np.diff(east), np.diff(north)) / step))
 
@@ -167,20 +205,18 @@ def next_whole(tt_s: float, unit_s: float) -> tuple[datetime, float]:
     return moment, float(tt_s_from_datetime(moment))
 
 
+def _named_apart(passages: list[Passage]) -> list[Passage]:
+    """Return the passages with a number added where a pause has cut one in two."""
+    total, seen = Counter(passage.name for passage in passages), Counter()
+    named = []
+    for passage in passages:
+        seen[passage.name] += 1
+        number = seen[passage.name]
+        name = passage.name if total[passage.name] == 1 else f"{passage.name} {number}"
+        named.append(passage.model_copy(update={"name": name}))
+    return named
+
+
 def rows_of_disc(disc: SkyDisc, rows: slice | np.ndarray) -> SkyDisc:
     """Return the same disc at fewer times."""
     return replace(disc, **{f.name: getattr(disc, f.name)[rows] for f in fields(disc) if f.name != "name"})
-
-
-def rows_of(geometry: Geometry, rows: slice | np.ndarray) -> Geometry:
-    """Return the same geometry at fewer times."""
-    arrays = {
-        name: getattr(geometry, name)[rows]
-        for name in ("tt_s", "altitude_deg", "azimuth_deg", "zenith_pa_deg", "sun_altitude_deg")
-    }
-    return replace(
-        geometry,
-        discs={name: rows_of_disc(disc, rows) for name, disc in geometry.discs.items()},
-        stars=tuple((name, ra[rows], dec[rows], magnitude) for name, ra, dec, magnitude in geometry.stars),
-        **arrays,
-    )

@@ -1,6 +1,6 @@
 """The single place of photon rates: electrons a second in a pixel from Sun, Moon, planets, stars and sky.
 
-All magnitudes are V, all functions take and give arrays, and a Gaussian stands for the point-spread function.
+All magnitudes are V, and all functions take and give arrays.
 A rate is `V_ZERO_PHOTONS` x collecting area x bandwidth x efficiency x 10**(-0.4 V): the spectrum is taken as flat
 over the band, good to about 10 % in V and 20 % unfiltered for bodies of solar colour.
 """
@@ -14,7 +14,7 @@ import numpy as np
 from scipy.special import erf
 
 from planner.errors import InputError
-from planner.sequence.models import Rig
+from planner.sequence.models import GainSetting, Rig
 
 # photons / (s m2 nm) of V = 0: 3.631e-11 W m-2 nm-1 (Bessell, Castelli & Plez 1998, table A2) over h c / lambda
 V_ZERO_PHOTONS = 3.631e-11 / (6.62607015e-34 * 299792458.0 / 545e-9)
@@ -24,6 +24,10 @@ BAYER_NM = 90.0  # the green passband of a colour mosaic; common practice, no so
 # I(mu) / I(1) = 1 - u - v + u mu + v mu^2 at 550 nm (Cox 2000, Allen's Astrophysical Quantities, 14.7; from memory)
 SUN_LIMB_U, SUN_LIMB_V = 0.93, -0.23
 FWHM_OF_SIGMA = 2.0 * np.sqrt(2.0 * np.log(2.0))
+# Three Gaussians for a Moffat profile with exponent 4.765, which Kolmogorov seeing has (Trujillo et al. 2001,
+# MNRAS 328, 977): least squares, within 0.5 % of the peak; sigmas in units of the FWHM.
+SEEING_WEIGHT = np.array([0.3667, 0.5370, 0.0963])
+SEEING_SIGMA = np.array([0.36388, 0.54576, 0.89341])
 SEEING_AIRMASS_POWER = 0.6  # Kolmogorov turbulence: r0 falls as airmass**-0.6 (Fried 1966)
 
 # How each surface scatters: Lommel-Seeliger for airless rock, Lambert for clouds and dust. Common practice, no source.
@@ -58,7 +62,8 @@ def band(rig: Rig, filter_name: str | None = None, behind_solar_filter: bool = F
         if chosen is None:
             names = ", ".join(each.name for each in rig.filters) or "none"
             raise InputError(f"filter: found {filter_name!r}; the filters of {rig.name} are: {names}")
-        bandwidth_nm, transmission = chosen.bandwidth_nm, chosen.transmission
+        bandwidth_nm = chosen.bandwidth_nm
+        transmission = chosen.transmission * 10.0**-chosen.optical_density
     efficiency = transmission * rig.optics.transmission * rig.sensor.quantum_efficiency
     if behind_solar_filter:
         if rig.solar_filter is None:
@@ -164,7 +169,7 @@ def disc_rate_e_s_px(
 def psf_fwhm_arcsec(
     rig: Rig, seeing_arcsec: float, airmass: np.ndarray, tracking_error_arcsec: float | None = None
 ) -> np.ndarray:
-    """Return the FWHM of the Gaussian that stands for seeing, diffraction and tracking, before pixels integrate it.
+    """Return the FWHM of seeing, diffraction and tracking together, before pixels integrate it.
 
     `tracking_error_arcsec` is an rms; the mount's is taken when None.
     """
@@ -174,12 +179,23 @@ def psf_fwhm_arcsec(
     return np.sqrt(seeing**2 + diffraction**2 + (FWHM_OF_SIGMA * error) ** 2)
 
 
-def star_peak_fraction(fwhm_px: np.ndarray, trail_px: np.ndarray = 0.0) -> np.ndarray:
-    """Return the part of a star's light in the pixel it is centred on, when it trails by so many pixels."""
-    sigma = np.maximum(np.asarray(fwhm_px, float), 1e-3) / FWHM_OF_SIGMA
-    across = erf(0.5 / (np.sqrt(2) * sigma))
-    along_sigma = np.sqrt(sigma**2 + np.asarray(trail_px, float) ** 2 / 12)
-    return across * erf(0.5 / (np.sqrt(2) * along_sigma))
+def tracking_blur_arcsec(rig: Rig, exposure_s: float) -> float:
+    """Return the rms of tracking in one exposure: none in a second, in which a mount has no time to err."""
+    if exposure_s <= 1.0 or rig.mount.kind == "fixed":
+        return 0.0
+    return rig.guiding.error_arcsec if rig.guiding.on != "none" else rig.mount.tracking_error_arcsec
+
+
+def star_peak_fraction(fwhm_px: np.ndarray, trail_px: np.ndarray | float = 0.0) -> np.ndarray:
+    """Return the part of a star's light in the pixel it is centred on, when it trails by so many pixels.
+
+    The star has the profile that Kolmogorov seeing gives, as a sum of Gaussians.
+    """
+    fwhm = np.maximum(np.asarray(fwhm_px, float), 1e-3)[..., None]
+    sigma = SEEING_SIGMA * fwhm
+    along_sigma = np.sqrt(sigma**2 + np.asarray(trail_px, float)[..., None] ** 2 / 12)
+    in_pixel = erf(0.5 / (np.sqrt(2) * sigma)) * erf(0.5 / (np.sqrt(2) * along_sigma))
+    return (SEEING_WEIGHT * in_pixel).sum(axis=-1)
 
 
 def blurred_peak_fraction(radius_px: np.ndarray, fwhm_px: np.ndarray) -> np.ndarray:
@@ -196,11 +212,25 @@ def vignetting_factor(rig: Rig, radius_over_corner: np.ndarray) -> np.ndarray:
     return 1 - rig.optics.vignetting * np.asarray(radius_over_corner, float) ** 2
 
 
-def saturation_e(rig: Rig, gain_e_adu: float | None = None) -> float:
-    """Return the electrons at which a pixel saturates: the well, or the end of the converter's range."""
+def at_gain(rig: Rig, gain: float = 0.0) -> GainSetting:
+    """Return what the sensor does at a gain setting: as listed, else steps of 0.1 dB (common practice, no source)."""
+    for listed in rig.sensor.gains:
+        if listed.gain == gain:
+            return listed
     sensor = rig.sensor
-    converter = (2**sensor.bit_depth - 1 - sensor.bias_adu) * (gain_e_adu or sensor.gain_e_adu)
-    return float(min(sensor.full_well_e, converter))
+    return GainSetting(
+        gain=gain,
+        e_adu=sensor.gain_e_adu / 10 ** (gain / 200.0),
+        read_noise_e=sensor.read_noise_e,
+        full_well_e=sensor.full_well_e,
+    )
+
+
+def saturation_e(rig: Rig, gain: float = 0.0) -> float:
+    """Return the electrons at which a pixel saturates: the well, or the end of the converter's range."""
+    setting = at_gain(rig, gain)
+    converter = (2**rig.sensor.bit_depth - 1 - rig.sensor.bias_adu) * setting.e_adu
+    return float(min(setting.full_well_e, converter))
 
 
 def signal_to_noise(

@@ -13,7 +13,7 @@ LEAST_BURST_S = 20.0
 # Lead before the first and after the last contact. Nothing of a planet is seen beside the Sun; beside the Moon and
 # among stars the approach is part of the picture. Common practice, no source.
 LEAD_S = {"sun": 120.0, "moon": 900.0, "stars": 3600.0}
-_EXTREMES = ("greatest", "closest")
+EXTREMES = ("greatest", "closest", "graze")
 _NAMES = {
     ("contact_1", "contact_2"): "ingress",
     ("contact_3", "contact_4"): "egress",
@@ -36,7 +36,7 @@ class Window:
 
 def contact_instants(circumstances: Circumstances) -> tuple[Instant, ...]:
     """Return the instants at which something touches: all but extremes."""
-    return tuple(i for i in circumstances.instants if i.name not in _EXTREMES)
+    return tuple(i for i in circumstances.instants if i.name not in EXTREMES)
 
 
 def burst_half_s(instant: Instant, clock_sigma_s: float, burst_s: float | None = None) -> float:

@@ -1,0 +1,154 @@
+"""What to expose for in a stretch of time: the bright disc, and by itself what that exposure leaves too faint."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from planner.errors import InputError
+from planner.events.family import Geometry
+from planner.sequence import exposure, radiometry
+from planner.sequence.motion import Motion, motion
+from planner.sequence.setting import Setting
+
+TRACKING = {"sun": "solar", "moon": "lunar"}
+# A target fainter than this in the exposure for the bright disc gets exposures of its own.
+LEAST_SIGNAL_TO_NOISE = 20.0
+
+
+@dataclass(frozen=True)
+class Recipe:
+    """What one kind of frame is exposed for, sampled at n times: the rates are of the brightest pixel."""
+
+    name: str
+    peak_of: str
+    rate_e_s: np.ndarray
+    wanted_s: np.ndarray
+    gain: float
+    tracking: str
+    motion: Motion
+
+
+def aim_of(setting: Setting) -> str:
+    """Return what the middle of the frame follows: the reference disc where it fits the field, else the target."""
+    reference = setting.family.reference
+    if reference in ("sun", "moon"):
+        return reference if setting.reference_fits else target_name(setting)
+    return target_name(setting)
+
+
+def target_name(setting: Setting) -> str:
+    """Return the name under which the geometry holds the moving point."""
+    return setting.geometry(np.array([setting.event.middle_tt_s])).target
+
+
+def tracking_of(setting: Setting, aim: str) -> str:
+    """Return the rate at which the mount follows this aim."""
+    if setting.rig.mount.kind == "fixed":
+        return "none"
+    wanted = TRACKING.get(aim, TRACKING.get(setting.family.reference, "sidereal"))
+    return wanted if wanted in setting.rig.mount.rates else "sidereal"
+
+
+def recipes(setting: Setting, geometry: Geometry, target_hidden: bool) -> list[Recipe]:
+    """Return what to expose for at these times, the brightest disc first; raises InputError when there is nothing."""
+    aim = aim_of(setting)
+    tracking = tracking_of(setting, aim)
+    ra_deg, dec_deg = place_of(geometry, aim)
+    moving = motion(setting.rig, setting.observer, tracking, ra_deg, dec_deg, geometry.tt_s)
+    found = []
+    main = _brightest_disc(setting, geometry)
+    if main is not None:
+        name, rate = main
+        gain = setting.gain_for_bright()
+        wanted = exposure.wanted_exposure_s(setting.rig, rate, setting.wish.well_fraction, gain)
+        found.append(Recipe("main", name, rate, _bounded(setting, moving, wanted), gain, tracking, moving))
+    if main is None or (geometry.reference != "sun" and not target_hidden):
+        faint = _faint_target(setting, geometry, found[0] if found else None)
+        if faint is not None:
+            name, rate, wanted = faint
+            gain = setting.gain_for_faint()
+            wanted = _bounded(setting, moving, wanted)
+            found.append(Recipe("long" if found else "main", name, rate, wanted, gain, tracking, moving))
+    if not found:
+        raise InputError(f"event.family: {setting.family.name} shows neither a disc nor a star to expose for")
+    return found
+
+
+def place_of(geometry: Geometry, name: str) -> tuple[np.ndarray, np.ndarray]:
+    """Return (ra_deg, dec_deg) of a disc or star of the geometry."""
+    from planner.sequence.frametimes import aim_place
+
+    return aim_place(geometry, name)
+
+
+def _bounded(setting: Setting, moving: Motion, wanted_s: np.ndarray) -> np.ndarray:
+    """Return exposures no longer than trailing allows, or what the brief asks for."""
+    if setting.wish.exposure_s is not None:
+        return np.full_like(wanted_s, setting.wish.exposure_s)
+    per_second = np.maximum(moving.trail_px(setting.rig, 1.0), 1e-12)
+    sensor = setting.rig.sensor
+    longest = np.maximum(setting.wish.trail_px / per_second, sensor.min_exposure_s)
+    return np.clip(wanted_s, sensor.min_exposure_s, np.minimum(longest, sensor.max_exposure_s))
+
+
+def _brightest_disc(setting: Setting, geometry: Geometry) -> tuple[str, np.ndarray] | None:
+    names = ["sun"] if geometry.reference == "sun" else [n for n in geometry.discs if n != "sun"]
+    rates = {}
+    for name in names:
+        disc = geometry.discs[name]
+        if np.isfinite(disc.magnitude).all():
+            rates[name] = exposure.peak_rate_e_s(
+                setting.rig, setting.site, setting.through, name, disc, geometry.altitude_deg
+            )
+    if not rates:
+        return None
+    brightest = max(rates, key=lambda name: float(np.median(rates[name])))
+    return brightest, np.max(list(rates.values()), axis=0)
+
+
+def _faint_target(
+    setting: Setting, geometry: Geometry, main: Recipe | None
+) -> tuple[str, np.ndarray, np.ndarray] | None:
+    """Return (name, peak rate, exposure) for a target that the main exposure leaves too faint, or None."""
+    from planner.sky.photometry import airmass
+
+    rig, site, name = setting.rig, setting.site, geometry.target
+    mass = airmass(np.maximum(geometry.altitude_deg, 0.0))
+    star = next((s for s in geometry.stars if s[0] == name or not geometry.discs.get(name)), None)
+    if name in geometry.discs and np.isfinite(geometry.discs[name].magnitude).all():
+        magnitude = geometry.discs[name].magnitude
+        peak = exposure.peak_rate_e_s(
+            rig, site, setting.through, name, geometry.discs[name], geometry.altitude_deg
+        )
+    elif star is not None:
+        name, magnitude = star[0], np.full(len(geometry.tt_s), star[3])
+        fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass, 0.0) / setting.scale_arcsec_px
+        dimmed = radiometry.extinguished(magnitude, mass, site.extinction_mag)
+        peak = radiometry.rate_e_s(setting.through, dimmed) * radiometry.star_peak_fraction(fwhm_px)
+    else:
+        return None
+    total = radiometry.rate_e_s(
+        setting.through, radiometry.extinguished(magnitude, mass, site.extinction_mag)
+    )
+    fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass, 0.0) / setting.scale_arcsec_px
+    radius_px = (
+        geometry.discs[name].semidiameter_arcsec / setting.scale_arcsec_px if name in geometry.discs else 0.0
+    )
+    pixels = np.maximum(np.pi * (radius_px**2 + fwhm_px**2), 4.0)
+    sky = radiometry.sky_rate_e_s_px(
+        setting.through, setting.sky_mag_arcsec2(geometry), setting.scale_arcsec_px
+    )
+    noise_e = radiometry.at_gain(rig, setting.gain_for_faint()).read_noise_e
+    if main is not None:
+        reached = radiometry.signal_to_noise(
+            total * main.wanted_s, sky * main.wanted_s, rig.sensor.dark_e_s * main.wanted_s, noise_e, pixels
+        )
+        if float(np.median(reached)) >= LEAST_SIGNAL_TO_NOISE:
+            return None
+    wanted = exposure.time_for_signal_to_noise_s(
+        total, pixels * (sky + rig.sensor.dark_e_s), pixels * noise_e**2, 2 * LEAST_SIGNAL_TO_NOISE
+    )
+    full = exposure.wanted_exposure_s(rig, peak, setting.wish.well_fraction, setting.gain_for_faint())
+    return name, peak, np.minimum(wanted, full)
