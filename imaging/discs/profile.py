@@ -41,7 +41,8 @@ def fit_sectors(
     show.
     """
     offset, angle = ring.polar(x, y, radius, outline)
-    count = int(np.clip(2 * np.pi * radius / 8, 36, 720))
+    # sectors keep their number from turn to turn, though the radius moves
+    count = int(np.clip(2 * np.pi * radius / 8, 36, 720)) if shifts is None else shifts.size
     sector = sector_of(angle, count)
     if shifts is not None:
         offset = offset - shifts[sector]
