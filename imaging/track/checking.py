@@ -149,6 +149,7 @@ def understand(
         set_aside=tuple(aside),
         diagnosis=diagnosis,
         findings=tuple(findings),
+        line=_line(promise, measurements),
         provenance=_provenance(plan),
     )
     if diagnosis is not None and question is not None:
@@ -269,6 +270,18 @@ def _with_fit(
         contacts=time_contacts(reading, promise, plan),
         findings=result.findings + clock.findings + camera.findings,
     )
+
+
+def _line(promise: Promise, measurements: Sequence[Measurement], points: int = 300) -> np.ndarray:
+    """Return the predicted path from the first frame to the last."""
+    if len(measurements) < 2:
+        return np.empty((0, 2))
+    expected = promise.path.at(
+        np.linspace(measurements[0].time.middle_tt_s, measurements[-1].time.middle_tt_s, points)
+    )
+    if promise.path.among_stars:
+        return np.column_stack([expected.ra_deg, expected.dec_deg])
+    return np.column_stack([expected.east_arcsec, expected.north_arcsec])
 
 
 def _provenance(plan: Plan) -> dict[str, str]:

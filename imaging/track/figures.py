@@ -126,11 +126,9 @@ def path_figure(result: CheckResult):  # type: ignore[no-untyped-def]
     verdict = column(result, "verdict")
     on_disc = result.reference in ("sun", "moon")
     names = ("east_arcsec", "north_arcsec") if on_disc else ("ra_deg", "dec_deg")
-    px, py = (column(result, f"predicted_{name}") for name in names)
+    py = column(result, f"predicted_{names[1]}")
     mx, my = (column(result, f"measured_{name}") for name in names)
-    order = np.argsort(result.times_tt_s)
-    seen = order[np.isfinite(px[order])]
-    axis.plot(px[seen], py[seen], color=INK, lw=1.0, label="predicted at the stamped times")
+    axis.plot(*result.line.T, color=INK, lw=1.0, label="predicted")
     for kind, marker, colour in (("on-track", "o", MEASURED), ("off-track", "x", OFF)):
         chosen = (verdict == kind) & np.isfinite(mx)
         if chosen.any():

@@ -70,8 +70,6 @@ def _data(result: CheckResult) -> dict[str, np.ndarray]:
         "colour": np.where(verdict == "on-track", MEASURED, OFF),
         "measured_x": column(result, f"measured_{names[0]}")[chosen],
         "measured_y": column(result, f"measured_{names[1]}")[chosen],
-        "predicted_x": column(result, f"predicted_{names[0]}")[chosen],
-        "predicted_y": column(result, f"predicted_{names[1]}")[chosen],
     }
     return {name: np.asarray(value).tolist() for name, value in data.items()}
 
@@ -164,9 +162,7 @@ def _path(result: CheckResult, source):  # type: ignore[no-untyped-def]
     else:
         plot.xaxis.axis_label = "right ascension (degrees, ICRS); north up, east left"
         plot.yaxis.axis_label = "declination (degrees, ICRS)"
-    order = np.argsort(source.data["when"])
-    line = [np.array(source.data[f"predicted_{axis}"])[order] for axis in "xy"]
-    plot.line(*line, line_color=INK)
+    plot.line(*result.line.T, line_color=INK)
     points = plot.scatter(
         "measured_x",
         "measured_y",

@@ -191,15 +191,17 @@ class Measurer:
         )
         self._solution = solution
         x, y = (float(np.squeeze(v)) for v in solution.sky_to_pixel(ra, dec))
-        plate = _plate(solution, x, y)
+        plate = _plate(solution, frame.row_zero, x, y)
         blank = replace(blank, solved_by="stars", predicted_px=(x, y), stars=plate)
         radius_px = float(semidiameter[0]) / plate.scale_arcsec_px
-        body = _body(geometry, radius_px, lambda pa: pixel_angle_deg(pa, plate.rotation_deg, plate.parity))
+        body = _body(
+            geometry, radius_px, lambda pa: pixel_angle_deg(pa, plate.local_rotation_deg, plate.parity)
+        )
         try:
             place = self._found_among_stars(frame, found, solution, (x, y), body)
         except NoSolutionError as none:
             return replace(blank, reason=str(none))
-        plate = _plate(solution, place.x_px, place.y_px, place.covariance)
+        plate = _plate(solution, frame.row_zero, place.x_px, place.y_px, place.covariance)
         return replace(
             blank,
             x_px=place.x_px,
@@ -249,7 +251,7 @@ def _strangers(found: Detections, solution: PlateSolution) -> np.ndarray:
 
 
 def _plate(
-    solution: PlateSolution, x_px: float, y_px: float, covariance_px2: np.ndarray | None = None
+    solution: PlateSolution, row_zero: str, x_px: float, y_px: float, covariance_px2: np.ndarray | None = None
 ) -> StarReference:
     """Return the plate solution at a place of the frame; with the covariance of a centroid, of its direction."""
     px = np.array([x_px, x_px + 1.0, x_px]), np.array([y_px, y_px, y_px + 1.0])
@@ -261,13 +263,15 @@ def _plate(
         covariance = np.full((2, 2), np.nan)
     else:
         covariance = axes @ (covariance_px2 + solution.covariance_px2(x_px, y_px)) @ axes.T
+    up_is_y = row_zero == "bottom"
     return StarReference(
         ra_deg=float(ra[0]),
         dec_deg=float(dec[0]),
         covariance_arcsec2=covariance,
-        scale_arcsec_px=float(np.sqrt(abs(np.linalg.det(axes)))),
-        rotation_deg=float(np.degrees(np.arctan2(east[1], north[1])) % 360.0),
-        parity=-1 if np.linalg.det(axes) > 0 else 1,
+        scale_arcsec_px=solution.scale_arcsec_px,
+        rotation_deg=(solution.position_angle_deg + (0.0 if up_is_y else 180.0)) % 360.0,
+        parity=-1 if solution.mirrored == up_is_y else 1,
+        local_rotation_deg=float(np.degrees(np.arctan2(east[1], north[1])) % 360.0),
         stars=len(solution.matched.x_px),
         rms_px=solution.rms_px,
         header=solution.wcs.to_header(relax=True).tostring(sep="\n"),

@@ -29,7 +29,8 @@ class StarReference:
     """The plate solution as far as a track needs it.
 
     `ra_deg`, `dec_deg`: measured place of the target, with `covariance_arcsec2` of (east, north), plate included.
-    `header`: the solution as the text of a FITS header. `rotation_deg` and `parity` are of the array, as in `Nominal`.
+    `header`: the solution as the text of a FITS header. `rotation_deg` and `parity` are of the array, as in
+    `Nominal`, in the middle of the frame; `local_rotation_deg` at the target, which differs in a wide field.
     """
 
     ra_deg: float
@@ -38,6 +39,7 @@ class StarReference:
     scale_arcsec_px: float
     rotation_deg: float
     parity: int
+    local_rotation_deg: float
     stars: int
     rms_px: float
     header: str

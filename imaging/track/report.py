@@ -197,7 +197,7 @@ button{float:right;background:#221d19;color:#f2e6d8;border:1px solid #8d8379;pad
 .wide{overflow-x:auto}
 table{border-collapse:collapse;font-size:.85rem;font-variant-numeric:tabular-nums}
 td,th{padding:.2rem .6rem;text-align:left;border-bottom:1px solid #3a332d;white-space:nowrap}
-td:last-child{white-space:normal;min-width:12rem}
+td:last-child{white-space:normal;min-width:22rem}
 tr.off-track td{font-weight:600}tr.off-track td:first-child::before{content:"✕ "}
 tr.unmeasured td{color:#b3a79a}
 summary{cursor:pointer}

@@ -34,7 +34,8 @@ class CheckResult:
     """Everything that track.ecsv, the report and `check --json` show.
 
     `clock_offset_s`: frame stamps minus true UTC, NaN when not determined. `rms_along_arcsec`, `rms_across_arcsec`:
-    after the fit. `times_tt_s`: (n,) mid-exposures of `rows`, as stamped.
+    after the fit. `times_tt_s`: (n,) mid-exposures of `rows`, as stamped. `line`: the predicted path over the
+    frames' time, (k, 2), in (east, north) arcseconds or (ra, dec) degrees.
     """
 
     title: str
@@ -59,6 +60,7 @@ class CheckResult:
     rms_across_arcsec: float = float("nan")
     jitter_arcsec: float = float("nan")
     contacts: tuple[ContactTiming, ...] = ()
+    line: np.ndarray = field(default_factory=lambda: np.empty((0, 2)))
     provenance: dict[str, Any] = field(default_factory=dict)
 
     @property
