@@ -82,6 +82,15 @@ class Instant:
 
 
 @dataclass(frozen=True)
+class Series:
+    """A table that goes with circumstances, such as evening after evening: columns with units in their names."""
+
+    title: str
+    columns: tuple[str, ...]
+    rows: tuple[tuple[Any, ...], ...]
+
+
+@dataclass(frozen=True)
 class Circumstances:
     """What happens at a site (or at the geocentre, `observer=None`): instants in time order, and what bounds them."""
 
@@ -94,6 +103,7 @@ class Circumstances:
     conventions: dict[str, str] = field(default_factory=dict)
     cautions: tuple[str, ...] = ()
     facts: dict[str, Any] = field(default_factory=dict)
+    series: tuple[Series, ...] = ()
 
     def instant(self, name: str) -> Instant | None:
         """Return the instant of this name, or None where it does not occur."""

@@ -22,6 +22,9 @@ _LABELS = {
     "station_longitude_1": "1st station, longitude",
     "station_longitude_2": "2nd station, longitude",
 }
+# What a one-line entry of a list shows of an event of weeks, and what it passes over.
+_MIDDLES = {"opposition", "conjunction", "greatest_elongation_east", "greatest_elongation_west"}
+_ASIDES = {"closest", "conjunction_ra", "conjunction_longitude"}
 _UNITS = {
     "_arcsec_s": "arcsec/s",
     "_arcsec": "arcsec",
@@ -59,6 +62,14 @@ def as_object(circumstances: Circumstances, brief: bool = False) -> dict[str, An
         }
         found["cautions"] = list(circumstances.cautions)
     found["facts"] = {key: _number(value) for key, value in circumstances.facts.items()}
+    if not brief and circumstances.series:
+        found["series"] = [
+            {
+                "title": series.title,
+                "rows": [dict(zip(series.columns, map(_number, row), strict=True)) for row in series.rows],
+            }
+            for series in circumstances.series
+        ]
     return found
 
 
@@ -120,6 +131,9 @@ def as_table(circumstances: Circumstances) -> str:
     if math.isfinite(least):
         lines.append(f"least separation of centres: {least:.1f} arcsec")
     lines += [_fact(key, value) for key, value in circumstances.facts.items()]
+    for series in circumstances.series:
+        rows = [[f"{v:.1f}" if isinstance(v, float) else str(v) for v in row] for row in series.rows]
+        lines += ["", series.title, *_columns([name.replace("_", " ") for name in series.columns], rows)]
     kind = timescale.utc_kind(circumstances.event.middle_tt_s)
     lines += ["", "+-: 1 sigma in seconds, and the largest term of it", f"time scale: {kind}"]
     lines += [f"{key.replace('_', ' ')}: {text}" for key, text in circumstances.conventions.items()]
@@ -132,23 +146,49 @@ def as_list(found: list[Circumstances], observer: Observer | None) -> str:
     if not found:
         return "nothing found in this span within these limits"
     zone = zone_of(observer)
-    header = ["event", "first instant (UTC)", "last instant (UTC)"]
+    header = ["event", "what", "UTC", "apart"]
     if observer is not None:
-        header += ["first, civil", "alt", "Sun", "seen"]
+        header += ["civil time", "alt", "az", "Sun", "seen"]
     rows = []
     for circumstances in found:
-        instants = circumstances.instants
-        first, last = instants[0], instants[-1]
-        row = [circumstances.event.title]
-        row += [timescale.utc_iso(i.tt_s, 0)[:19].replace("T", " ") for i in (first, last)]
+        instant = _foremost(circumstances)
+        least = circumstances.least_separation_arcsec
+        row = [
+            circumstances.event.title,
+            _label(instant),
+            timescale.utc_iso(instant.tt_s, 0)[:19].replace("T", " "),
+            _apart(least) if math.isfinite(least) else "",
+        ]
         if observer is not None:
-            seen = sum(instant.visible for instant in instants)
-            best = max(instants, key=lambda i: (i.visible, i.altitude_deg))
-            row.append(_civil(first.tt_s, 0, zone))
-            row += [_angle(best.altitude_deg), _angle(dict(best.extra).get("sun_altitude_deg", math.nan))]
-            row.append(f"{seen} of {len(instants)}")
+            weeks = instant.name in _MIDDLES
+            seen = f"{sum(one.visible for one in circumstances.instants)} of {len(circumstances.instants)}"
+            row += [_civil(instant.tt_s, 0, zone), _angle(instant.altitude_deg), _angle(instant.azimuth_deg)]
+            row += [_angle(dict(instant.extra).get("sun_altitude_deg", math.nan))]
+            row = [*row[:-3], "", "", "", "weeks"] if weeks else [*row, seen]
         rows.append(row)
     return "\n".join([_place_line(observer), "", *(line.rstrip() for line in _columns(header, rows))])
+
+
+def _foremost(circumstances: Circumstances) -> Instant:
+    """Return the instant that a list shows: the middle of what lasts weeks, else the first that matters and is seen."""
+    middle = next((one for one in circumstances.instants if one.name in _MIDDLES), None)
+    if middle is not None:
+        return middle
+    instants = [one for one in circumstances.instants if one.name not in _ASIDES] or list(
+        circumstances.instants
+    )
+    return next((one for one in instants if one.visible), instants[0])
+
+
+def _label(instant: Instant) -> str:
+    return _LABELS.get(instant.name, instant.name.replace("_", " "))
+
+
+def _apart(arcsec: float) -> str:
+    """Return a separation in the unit that reads best."""
+    if arcsec < 100.0:
+        return f"{arcsec:.0f} arcsec"
+    return f"{arcsec / 60.0:.1f} arcmin" if arcsec < 6000.0 else f"{arcsec / 3600.0:.1f} deg"
 
 
 def _place_line(observer: Observer | None) -> str:
@@ -186,7 +226,7 @@ def _rows(circumstances: Circumstances) -> list[list[str]]:
     for instant in circumstances.instants:
         decimals = 0 if instant.sigma_s >= 5.0 else 1
         utc = timescale.utc_iso(instant.tt_s, decimals)
-        row = [_LABELS.get(instant.name, instant.name.replace("_", " ")), utc.replace("T", " ").rstrip("Z")]
+        row = [_label(instant), utc.replace("T", " ").rstrip("Z")]
         if observer is not None:
             row.append(_civil(instant.tt_s, decimals, zone))
         row += [_sigma(instant.sigma_s), instant.largest_term or ""]

@@ -8,6 +8,7 @@ import numpy as np
 
 from planner.errors import InputError
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
+from planner.events.catalogue import predicted
 from planner.events.contacts import RAD_ARCSEC, Passing, Shape, body_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
@@ -47,7 +48,7 @@ class MoonOccultsPlanet:
             self._event(wanted[planet], middle_tt_s)
             for planet, _, middle_tt_s in happening(start_tt_s, end_tt_s, observer, wanted, tick=tick)
         ]
-        return [event for event in found if self.predict(event, observer).happens]
+        return [event for event in found if predicted(event, observer).happens]
 
     def nearest(self, spec: EventSpec) -> Event:
         """Return the occultation of the spec's planet nearest to its date that some place on Earth sees."""

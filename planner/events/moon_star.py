@@ -10,6 +10,7 @@ import numpy as np
 from planner.errors import InputError
 from planner.events.besselian import STAR_DISTANCE_KM
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
+from planner.events.catalogue import predicted
 from planner.events.contacts import RAD_ARCSEC, Passing, Shape, body_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
@@ -60,7 +61,7 @@ class MoonOccultsStar:
         found = happening(start_tt_s, end_tt_s, observer, star_table=table, tick=tick)
         names = stars.star_names(rows[np.array([index for _, index, _ in found], dtype=int)])
         events = [self._event(name, middle) for name, (_, _, middle) in zip(names, found, strict=True)]
-        return [event for event in events if self.predict(event, observer).happens]
+        return [event for event in events if predicted(event, observer).happens]
 
     def nearest(self, spec: EventSpec) -> Event:
         """Return the occultation of the spec's star nearest to its date that some place on Earth sees.

@@ -77,12 +77,13 @@ def minima_near(
     step_s: float,
     reach_s: float,
     tolerance_s: float = 1e-3,
+    finest_s: float = 4.0,
 ) -> np.ndarray:
     """Return the time of the minimum nearest to each guess (n,).
 
     The function must be close to a parabola over `step_s` (a squared separation is). Each round fits a parabola
-    through three points and shrinks the step to a tenth, never below 4 s, where rounding would take over. Guesses
-    that run away further than `reach_s` come back as NaN.
+    through three points and shrinks the step to a tenth, never below `finest_s`, where rounding would take over (4 s
+    for separations). Guesses that run away further than `reach_s` come back as NaN.
     """
     guess = np.array(guess_tt_s, dtype=float, ndmin=1)
     t = guess.copy()
@@ -102,8 +103,8 @@ def minima_near(
         limit = 4.0 * h
         move = np.clip(np.nan_to_num(move), -limit, limit)
         t[live] = at + move
-        finest = h <= 4.0
-        step[live] = np.where(np.abs(move) < h, np.maximum(0.1 * h, 4.0), h)
+        finest = h <= finest_s
+        step[live] = np.where(np.abs(move) < h, np.maximum(0.1 * h, finest_s), h)
         astray = np.abs(t[live] - guess[live]) > reach_s
         t[live[astray]] = np.nan
         done = astray | (finest & (np.abs(move) < max(tolerance_s, 1e-12 * step_s)))

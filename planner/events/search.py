@@ -6,7 +6,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 from planner.errors import InputError
-from planner.events.catalogue import FAMILIES, family
+from planner.events.catalogue import FAMILIES, family, predicted
 from planner.events.family import Circumstances
 from planner.sky import timescale
 from planner.sky.observer import Observer
@@ -20,7 +20,7 @@ class Limits:
     `magnitude`: faintest target.
     """
 
-    altitude_deg: float = 0.0
+    altitude_deg: float = 5.0
     night_only: bool = False
     magnitude: float | None = None
 
@@ -69,7 +69,7 @@ def search(
                 tick(int(100 * (count + done / max(1, total))), 100 * len(chosen))
 
         for event in one.search(*span_tt_s, observer, wanted, tock):
-            circumstances = one.predict(event, observer)
+            circumstances = predicted(event, observer)
             if one.campaign or _within(circumstances, limits):
                 found.append(circumstances)
     return sorted(found, key=lambda circumstances: circumstances.event.middle_tt_s)

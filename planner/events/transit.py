@@ -10,6 +10,7 @@ import numpy as np
 from planner.errors import InputError
 from planner.events import cautions, conjunctions
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
+from planner.events.catalogue import predicted
 from planner.events.contacts import RAD_ARCSEC, Passing, Shape, body_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
@@ -60,7 +61,7 @@ class SolarTransit:
             if tick:
                 tick(count + 1, len(wanted))
         if observer is not None:
-            found = [event for event in found if self.predict(event, observer).happens]
+            found = [event for event in found if predicted(event, observer).happens]
         return sorted(found, key=lambda event: event.middle_tt_s)
 
     def nearest(self, spec: EventSpec) -> Event:
