@@ -9,6 +9,7 @@ leave them near zero, or near a lens learned before, and the covariance says wha
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from functools import lru_cache
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -19,12 +20,8 @@ if TYPE_CHECKING:
 ARCSEC_RAD = 206264.80624709636
 AFFINE_PRIOR = 1.5e-3  # differential refraction, aberration and sensor tilt (common practice, no source)
 AXIS_PRIOR = 0.02  # optical axis off the middle, in half-diagonals (common practice, no source)
-CORNER_PRIOR = {
-    2: 2e-3,
-    3: 1.2e-2,
-    4: 5e-4,
-    5: 4e-3,
-}  # displacement of the corner in half-diagonals, by order
+RADIAL_PRIOR = {3: 1.2e-2, 5: 4e-3}  # radial displacement of the corner in half-diagonals, by order
+OTHER_PRIOR = {2: 4e-4, 3: 4e-4, 4: 2e-4, 5: 2e-4}  # what is not radial: decentred or tilted elements
 
 
 @dataclass(frozen=True)
@@ -145,28 +142,38 @@ class CameraFit:
 class Lens:
     """What is known of a rig's optics before a frame is fitted: expected values and their widths.
 
-    `axis_*` in half-diagonals off the middle; `coefficients` (2, terms) with `sigma` of the same shape.
+    `axis`, `axis_sigma` in half-diagonals off the middle; `coefficients` (2, terms) and their `covariance`, with those
+    of u before those of v.
     """
 
     terms: tuple[tuple[int, int], ...]
     coefficients: np.ndarray
-    sigma: np.ndarray
+    covariance: np.ndarray
     axis: np.ndarray
     axis_sigma: np.ndarray
     projection: str = "TAN"
 
 
-def unknown_lens(order: int) -> Lens:
-    """Return the prior of a lens never seen before, with distortion terms up to `order` (1 to 5)."""
+@lru_cache(maxsize=16)
+def unknown_lens(order: int, projection: str = "TAN") -> Lens:
+    """Return the prior of a lens never seen before, with distortion terms up to `order` (1 to 5).
+
+    Lenses are round: radial distortion (r^3, r^5) is wide, everything else narrow.
+    """
     terms = tuple((p, n - p) for n in range(1, order + 1) for p in range(n, -1, -1))
-    sigma = np.zeros((2, len(terms)))
-    for i, (p, q) in enumerate(terms):
-        n = p + q
-        if n == 1:
-            sigma[:, i] = AFFINE_PRIOR
-        else:
-            sigma[:, i] = CORNER_PRIOR[n]
-    return Lens(terms, np.zeros_like(sigma), sigma, np.zeros(2), np.full(2, AXIS_PRIOR))
+    count = len(terms)
+    width = np.array([AFFINE_PRIOR if p + q == 1 else OTHER_PRIOR[p + q] for p, q in terms])
+    covariance = np.diag(np.concatenate([width, width]) ** 2)
+    for n, radial in RADIAL_PRIOR.items():
+        if n > order:
+            continue
+        pattern = {1: (1,), 3: (1, 1), 5: (1, 2, 1)}[n]  # u (u^2 + v^2)^((n - 1) / 2)
+        direction = np.zeros(2 * count)
+        for k, factor in enumerate(pattern):
+            direction[terms.index((n - 2 * k, 2 * k))] = factor
+            direction[count + terms.index((2 * k, n - 2 * k))] = factor
+        covariance += radial**2 * np.outer(direction, direction)
+    return Lens(terms, np.zeros((2, count)), covariance, np.zeros(2), np.full(2, AXIS_PRIOR), projection)
 
 
 def order_for(stars: int) -> int:
@@ -204,8 +211,7 @@ def fit_camera(
         camera = replace(camera, axis_x_px=float(x), axis_y_px=float(y))
     count = len(x_px)
     sigma_model, weight = 0.0, np.ones(count)
-    prior_width = np.concatenate([lens.axis_sigma, lens.sigma.ravel()])
-    prior_weight = np.concatenate([[1e-12] * 3, [1e-4], 1 / np.maximum(prior_width, 1e-9) ** 2])
+    prior = _prior_precision(lens)
     residual = np.zeros((count, 2))
     for iteration in range(iterations):
         residual = _residual(camera, x_px, y_px, vectors)
@@ -218,7 +224,7 @@ def fit_camera(
         jacobian = _jacobian(camera, x_px, y_px, vectors)
         root = np.sqrt(weight * inverse)[:, None, None]
         scaled = (jacobian * root).reshape(2 * count, -1)
-        normal = scaled.T @ scaled + np.diag(prior_weight)
+        normal = scaled.T @ scaled + prior
         now = np.concatenate(
             [
                 np.zeros(4),
@@ -230,7 +236,7 @@ def fit_camera(
             ]
         )
         right = scaled.T @ (residual * root[:, :, 0]).ravel()
-        step = np.linalg.solve(normal, right - prior_weight * now)
+        step = np.linalg.solve(normal, right - prior @ now)
         camera = _stepped(camera, step)
         if iteration >= 2 and np.abs(step[3:]).max() < 1e-7:
             break
@@ -238,6 +244,15 @@ def fit_camera(
     if robust and count >= 6:
         sigma_model = _extra_scatter(residual, sigma_px, count)
     return CameraFit(camera, np.linalg.inv(normal), sigma_model, residual, weight)
+
+
+def _prior_precision(lens: Lens) -> np.ndarray:
+    size = 6 + 2 * len(lens.terms)
+    precision = np.zeros((size, size))
+    precision[range(4), range(4)] = [1e-12, 1e-12, 1e-12, 1e-4]
+    precision[[4, 5], [4, 5]] = 1 / np.maximum(lens.axis_sigma, 1e-9) ** 2
+    precision[6:, 6:] = np.linalg.inv(lens.covariance)
+    return precision
 
 
 def _extra_scatter(residual: np.ndarray, sigma_px: np.ndarray, count: int) -> float:

@@ -47,6 +47,6 @@ def stars_near(center: np.ndarray, radius_rad: float, tt_s: float, stars_per_sr:
         index = np.arange(len(sky))
     else:
         index = np.sort(tree.query_ball_point(center, 2 * np.sin(radius / 2)))
-    if stars_per_sr is not None:
+    if stars_per_sr is not None and np.isfinite(stars_per_sr):
         index = index[: max(4, round(stars_per_sr * 2 * np.pi * (1 - np.cos(radius))))]
     return sky.take(index)

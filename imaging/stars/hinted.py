@@ -35,6 +35,14 @@ EFFORTS = (
     Effort(2.0, 70, 250, 6, 11),
     Effort(4.0, 50, 130, 6, 10),
 )
+# Where the catalogue has few stars a field: every quad of the brightest, because hot pixels and planets are among them.
+SPARSE_EFFORTS = (
+    Effort(1.2, 18, 200, 17, 10),
+    Effort(1.2, 30, 200, 29, 14),
+    Effort(4.0, 18, 200, 17, 8),
+    Effort(4.0, 28, 200, 27, 10),
+)
+_SPARSE = 45  # catalogue stars a field
 _MOST_TESTED = 150  # hypotheses grown at each effort
 
 
@@ -57,12 +65,11 @@ def solve_hinted(
     *,
     scale_tolerance: float = SCALE_TOLERANCE,
     parity: int | None = None,
-    efforts: tuple[Effort, ...] = EFFORTS,
 ) -> Attempt:
     """Return the match of a field whose centre and scale are roughly known; roll and mirror may be unknown.
 
     `sky_near(radius_rad, stars_per_sr)` gives catalogue stars around `center` (unit vector), brightest first, to
-    about that density. Never returns a match whose false-alarm probability is above 1e-9.
+    about that density (all when it is infinite). Never returns a match whose false-alarm probability is above 1e-9.
     """
     focal = ARCSEC_RAD / scale_arcsec_px
     height, width = field.shape
@@ -71,7 +78,9 @@ def solve_hinted(
     field_sr = height * width / focal**2 if radius < 0.5 else 2 * np.pi * (1 - np.cos(radius)) * 0.6
     x0, y0 = (width - 1) / 2, (height - 1) / 2
     best, trials = 0.0, 0
-    for effort in efforts:
+    around = sky_near(min(2.2 * radius, np.pi), np.inf)
+    per_field = len(around) * field_sr / (2 * np.pi * (1 - np.cos(min(2.2 * radius, np.pi))))
+    for effort in SPARSE_EFFORTS if per_field < _SPARSE else EFFORTS:
         used = min(effort.image_stars, len(field.x_px))
         if used < 4:
             break

@@ -33,7 +33,7 @@ class Quads:
 
 
 def local_quads(vectors: np.ndarray, neighbours: int, longest_limit: float = np.inf) -> Quads:
-    """Return the quads of each star with three of its nearest `neighbours`, each quad once.
+    """Return the quads of each star with three of its nearest `neighbours`, each quad once (all quads of few stars).
 
     `vectors`: (n, 3) unit vectors. Quads longer than `longest_limit` (chord, rad) are left out.
     """
@@ -43,6 +43,8 @@ def local_quads(vectors: np.ndarray, neighbours: int, longest_limit: float = np.
     near = min(neighbours, count - 1)
     if near < 3:
         return Quads(np.empty((0, 4), int), np.empty((0, 5)), np.empty(0))
+    if near == count - 1 and count <= 40:
+        return coded(vectors, np.array(list(combinations(range(count), 4))), longest_limit)
     _, index = cKDTree(vectors).query(vectors, k=near + 1)
     triples = np.array(list(combinations(range(1, near + 1), 3)))
     stars = np.concatenate(

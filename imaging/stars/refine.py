@@ -191,7 +191,7 @@ def settle(match: Match, lens: Lens, field: Field, sky: Sky, limit: int = 2500) 
     fit, bright = match.fit, match.bright
     height, width = field.shape
     detection, star = match.detection, np.empty(0, dtype=int)
-    for turn in range(10):
+    for _ in range(10):
         x, y = fit.camera.pixels(sky.vectors)
         with np.errstate(invalid="ignore"):
             inside = np.flatnonzero((x >= -1) & (x <= width) & (y >= -1) & (y <= height))[: 2 * limit]
