@@ -94,7 +94,7 @@ class Ephemeris:
         self.segments: dict[tuple[int, int], ChebyshevSegment] = {}
         for segment in kernel.segments:
             if segment.data_type == 2:
-                self.segments[segment.target, segment.center] = _mapped(segment)
+                self.segments[segment.target, segment.center] = mapped_segment(segment)
         kernel.close()
 
     def state(
@@ -150,7 +150,8 @@ class Ephemeris:
             )
 
 
-def _mapped(segment) -> ChebyshevSegment:  # type: ignore[no-untyped-def]
+def mapped_segment(segment) -> ChebyshevSegment:  # type: ignore[no-untyped-def]
+    """Return a kernel segment of type 2, of a planetary or an orientation kernel, as a memory map."""
     daf = segment.daf
     start_s, interval_s, width, count = daf.read_array(segment.end_i - 3, segment.end_i)
     width, count = int(width), int(count)
