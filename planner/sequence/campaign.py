@@ -17,14 +17,7 @@ from planner.sequence.nights import Nights, reserve_nights, spread_evenly, usabl
 from planner.sequence.passages import next_whole
 from planner.sequence.recipes import tracking_of
 from planner.sequence.setting import Setting
-
-# Enough stars for a plate solution with outliers to spare, each with signal for a centroid of a tenth of a pixel.
-STARS_WANTED, STAR_SIGNAL_TO_NOISE = 60, 20.0
-SOLVABLE_SIGNAL_TO_NOISE = 10.0
-# A planet clipped so many times over can still be measured by its outline (see imaging/discs).
-SATURATION_BORNE = 200.0
-_LONGEST_S = 60.0
-_SKY_WELL_FRACTION = 0.2
+from planner.sequence.starfield import StarFrames, star_frames
 
 
 @dataclass(frozen=True)
@@ -71,7 +64,7 @@ def campaign_passages(
     narrowest = min((setting.rig, *setting.mount_mates), key=lambda rig: field_of(rig).radius_deg)
     angle = setting.rig.camera_angle_deg if narrowest is not setting.rig else None
     aims, ground = _aims(setting, visits, field_of(narrowest, angle))
-    plan = _star_plan(setting, visits, aims)
+    exposures = _exposures(setting, visits, aims)
     hour_angle = hour_angle_deg(setting.observer, visits.disc.ra_deg, visits.disc.dec_deg, visits.tt_s)
     turned = (hour_angle >= 0) != (hour_angle[0] >= 0)
     if setting.rig.mount.kind != "equatorial" or not setting.rig.mount.meridian_flip:
@@ -80,7 +73,7 @@ def campaign_passages(
     passages = list(campaign.done)
     for index in range(len(visits)):
         number = first + index
-        shots = _visit_shots(setting, visits, plan, index)
+        shots = _visit_shots(setting, visits, exposures, index)
         passages.append(
             Passage(
                 name=f"visit {number}",
@@ -88,7 +81,7 @@ def campaign_passages(
                 f"{visits.altitude_deg[index]:.0f} degrees up",
                 visit=number,
                 flipped=bool(turned[index]),
-                stars_expected=int(plan.stars[index]),
+                stars_expected=int(exposures.frames.stars[index]),
                 reserve_utc=[
                     next_whole(float(campaign.nights.tt_s[row]), 60.0)[0] for row in campaign.reserves[index]
                 ],
@@ -128,92 +121,27 @@ def _aims(setting: Setting, visits: Nights, field: Field) -> tuple[Framing, dict
 
 
 @dataclass(frozen=True)
-class _StarPlan:
-    """Exposures at n visits: for stars, for the planet alone (NaN where the star frames do), for depth; (n,) arrays."""
+class _Exposures:
+    """What is exposed at n visits: the star frames, the planet alone (NaN where not needed), rates; (n,) arrays."""
 
-    stars_s: np.ndarray
+    frames: StarFrames
     planet_s: np.ndarray
-    deep_s: np.ndarray
-    stars: np.ndarray
     peak_e_s: np.ndarray
     trail_px_s: np.ndarray
     gain: float
 
 
-def _star_plan(setting: Setting, visits: Nights, aims: Framing) -> _StarPlan:
-    from planner.sky.photometry import airmass
-
-    rig, site, through, wish = setting.rig, setting.site, setting.through, setting.wish
-    count = len(visits)
+def _exposures(setting: Setting, visits: Nights, aims: Framing) -> _Exposures:
     gain = setting.gain_for_faint()
-    saturation = radiometry.saturation_e(rig, gain)
-    mass = airmass(visits.altitude_deg)
-    sky_mag = setting.sky_mag_arcsec2(setting.geometry(visits.tt_s))
-    sky = radiometry.sky_rate_e_s_px(through, sky_mag, setting.scale_arcsec_px)
-    fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass) / setting.scale_arcsec_px
-    pixels = np.maximum(2.0 * fwhm_px**2, 4.0)
-    noise2 = pixels * radiometry.at_gain(rig, gain).read_noise_e ** 2
-    background = pixels * (sky + rig.sensor.dark_e_s)
-    fields = [_field_stars(setting, aims, index, float(visits.tt_s[index])) for index in range(count)]
-
-    def star_rate(magnitude: np.ndarray, row: int) -> np.ndarray:
-        return radiometry.rate_e_s(
-            through, radiometry.extinguished(magnitude, mass[row], site.extinction_mag)
-        )
-
-    enough_s = np.empty(count)
-    for row, magnitudes in enumerate(fields):
-        faintest = magnitudes[min(STARS_WANTED, len(magnitudes)) - 1] if len(magnitudes) else 10.0
-        enough_s[row] = exposure.time_for_signal_to_noise_s(
-            star_rate(faintest, row), background[row], noise2[row], STAR_SIGNAL_TO_NOISE
-        )
-    peak = exposure.peak_rate_e_s(rig, site, through, visits.disc.name, visits.disc, visits.altitude_deg)
-    per_second = np.maximum(_trail_px_s(setting, visits), 1e-12)
-    sensor = rig.sensor
-    longest = np.minimum.reduce(
-        [
-            np.full(count, min(_LONGEST_S, sensor.max_exposure_s)),
-            _SKY_WELL_FRACTION * saturation / np.maximum(sky, 1e-12),
-            np.maximum(wish.trail_px / per_second, sensor.min_exposure_s),
-        ]
+    disc = visits.disc
+    peak = exposure.peak_rate_e_s(
+        setting.rig, setting.site, setting.through, disc.name, disc, visits.altitude_deg
     )
-    bearable = SATURATION_BORNE * saturation / peak
-    stars_s = np.clip(np.maximum(enough_s, np.minimum(bearable, longest)), sensor.min_exposure_s, longest)
-    if wish.exposure_s is not None:
-        stars_s = np.full(count, wish.exposure_s)
-    stars_s = np.array([exposure.rounded_up(value) for value in np.maximum(stars_s, sensor.min_exposure_s)])
-    planet_s = exposure.wanted_exposure_s(rig, peak, wish.well_fraction, gain)
-    needed = (stars_s > bearable * 1.2) | (wish.planet_frames > 0)
-    planet_s = np.where(needed, planet_s, np.nan)
-    solvable = np.array(
-        [
-            (
-                radiometry.signal_to_noise(
-                    star_rate(magnitudes, row) * stars_s[row],
-                    sky[row] * stars_s[row],
-                    sensor.dark_e_s * stars_s[row],
-                    float(np.sqrt(noise2[row] / pixels[row])),
-                    pixels[row],
-                )
-                >= SOLVABLE_SIGNAL_TO_NOISE
-            ).sum()
-            for row, magnitudes in enumerate(fields)
-        ]
-    )
-    return _StarPlan(stars_s, planet_s, longest, solvable, peak, per_second, gain)
-
-
-def _field_stars(setting: Setting, aims: Framing, row: int, tt_s: float) -> np.ndarray:
-    """Return the magnitudes of the catalogue stars in the frame, brightest first."""
-    from planner.sky.places import offsets_arcsec
-    from planner.sky.stars import stars_in_field
-
-    field = field_of(setting.rig)
-    ra_deg, dec_deg = float(aims.ra_deg[row]) % 360.0, float(aims.dec_deg[row])
-    stars = stars_in_field(ra_deg, dec_deg, field.radius_deg, tt_s)
-    right, up = field.along(*offsets_arcsec(ra_deg, dec_deg, stars.ra_deg, stars.dec_deg))
-    inside = (np.abs(right) < field.half_width_arcsec) & (np.abs(up) < field.half_height_arcsec)
-    return np.sort(stars.magnitude[inside])
+    trail = _trail_px_s(setting, visits)
+    frames = star_frames(setting, setting.geometry(visits.tt_s), aims.ra_deg, aims.dec_deg, peak, trail, gain)
+    planet_s = exposure.wanted_exposure_s(setting.rig, peak, setting.wish.well_fraction, gain)
+    needed = frames.clips_too_much | (setting.wish.planet_frames > 0)
+    return _Exposures(frames, np.where(needed, planet_s, np.nan), peak, trail, gain)
 
 
 def _trail_px_s(setting: Setting, visits: Nights) -> np.ndarray:
@@ -229,13 +157,17 @@ def _trail_px_s(setting: Setting, visits: Nights) -> np.ndarray:
     return rate
 
 
-def _visit_shots(setting: Setting, visits: Nights, plan: _StarPlan, row: int) -> list[Shot]:
-    kinds = [("stars", float(plan.stars_s[row]), setting.wish.frames_per_visit)]
+def _visit_shots(setting: Setting, visits: Nights, plan: _Exposures, row: int) -> list[Shot]:
+    kinds = [
+        ("stars", exposure.rounded_up(float(plan.frames.exposure_s[row])), setting.wish.frames_per_visit)
+    ]
     if np.isfinite(plan.planet_s[row]):
         count = setting.wish.planet_frames or setting.wish.frames_per_visit
         kinds.append(("planet", exposure.rounded_down(float(plan.planet_s[row])), count))
     if setting.wish.deep_frames:
-        kinds.append(("deep", exposure.rounded_down(float(plan.deep_s[row])), setting.wish.deep_frames))
+        kinds.append(
+            ("deep", exposure.rounded_down(float(plan.frames.longest_s[row])), setting.wish.deep_frames)
+        )
     shots = []
     start, _ = next_whole(float(visits.tt_s[row]), 60.0)
     saturation = radiometry.saturation_e(setting.rig, plan.gain)

@@ -24,10 +24,11 @@ class Row:
 
 @dataclass(frozen=True)
 class Comparison:
-    """Plans side by side."""
+    """Plans side by side; `reasons` says why a column is empty."""
 
     names: tuple[str, ...]
     rows: tuple[Row, ...]
+    reasons: tuple[str, ...] = ()
 
     def as_dict(self) -> dict[str, dict[str, str]]:
         """Return `{name: {label: value}}`."""
@@ -73,14 +74,16 @@ def compare(briefs: dict[str, Brief]) -> Comparison:
     from planner.sequence.builder import build_plan
 
     columns: dict[str, dict[str, str]] = {}
+    reasons: list[str] = []
     for name, brief in briefs.items():
         try:
             columns[name] = terms(build_plan(brief))
         except InputError as wrong:
-            columns[name] = {"cannot be planned": str(wrong)}
+            columns[name] = {"frames": "none"}
+            reasons.append(f"{name}: {wrong}")
     labels = dict.fromkeys(label for column in columns.values() for label in column)
     rows = tuple(Row(label, tuple(column.get(label, "-") for column in columns.values())) for label in labels)
-    return Comparison(tuple(columns), rows)
+    return Comparison(tuple(columns), rows, tuple(reasons))
 
 
 def terms(plan: Plan) -> dict[str, str]:
@@ -126,7 +129,7 @@ def terms(plan: Plan) -> dict[str, str]:
 def frames_in_contacts(plan: Plan) -> dict[str, int]:
     """Return how many frames begin within the 1-sigma (prediction and clock) of each contact."""
     from planner.sequence.frametimes import frame_starts
-    from planner.sequence.windows import EXTREMES
+    from planner.sequence.windows import is_contact
     from planner.sky.timescale import tt_s_from_iso
 
     if any(passage.visit is not None for passage in plan.passages):
@@ -134,7 +137,7 @@ def frames_in_contacts(plan: Plan) -> dict[str, int]:
     _, _, start, _ = frame_starts(plan)
     found = {}
     for instant in plan.circumstances["instants"]:
-        if instant["name"] in EXTREMES:
+        if not is_contact(instant["name"]):
             continue
         sigma = float(np.hypot(instant["sigma_s"], plan.rig.clock.sigma_s))
         found[instant["name"]] = int((np.abs(start - tt_s_from_iso(instant["utc"])) <= sigma).sum())

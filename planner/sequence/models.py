@@ -230,7 +230,9 @@ class Wish(Model):
     frames_per_visit: int = Field(8, ge=1, le=1000)
     planet_frames: int = Field(0, ge=0, le=1000, description="short exposures a visit, for the planet's disc")
     deep_frames: int = Field(0, ge=0, le=1000, description="long exposures a visit, for faint stars")
-    visit_when: Literal["highest", "sidereal-time", "solar-depression"] = "highest"
+    visit_when: Literal["highest", "sidereal-time", "solar-depression"] | None = Field(
+        None, description="default: highest; 8 degrees of solar depression for an apparition arc"
+    )
     sidereal_time_h: float | None = Field(
         None, ge=0, lt=24, description="local, for visits at fixed sidereal time"
     )

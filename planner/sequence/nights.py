@@ -14,6 +14,9 @@ from planner.sky.discs import SkyDisc
 
 DAY_S = 86400.0
 STEP_S = 600.0
+ARC_DEPRESSION_DEG = (
+    8.0  # bright enough for a foreground, dark enough for Mercury; common practice, no source
+)
 _LEAST_VISITS, _MOST_VISITS = 6, 30
 _SPACING_PX = 40.0
 _SPACING_DIAMETERS = 3.0
@@ -73,7 +76,8 @@ def usable_nights(setting: Setting, after_tt_s: float | None = None) -> Nights:
     moon_deg = separation_arcsec(moon.vector_km, unit_vector(target.ra_deg, target.dec_deg)) / 3600
     high = setting.reachable(geometry) & (airmass(geometry.altitude_deg) <= wish.most_airmass)
     dark = geometry.sun_altitude_deg < wish.darkness_deg
-    if wish.visit_when == "solar-depression":
+    when = visit_rule(setting)[0]
+    if when == "solar-depression":
         dark = np.ones(len(tt_s), bool)
     away = moon_deg > wish.moon_distance_deg
     later = tt_s > (after_tt_s if after_tt_s is not None else -np.inf)
@@ -110,6 +114,14 @@ def usable_nights(setting: Setting, after_tt_s: float | None = None) -> Nights:
     ).rows(best)
 
 
+def visit_rule(setting: Setting) -> tuple[str, float]:
+    """Return when in the night a visit is made, and the solar depression where that decides it."""
+    wish = setting.wish
+    if wish.visit_when is None and setting.family.name == "apparition-arc":
+        return "solar-depression", ARC_DEPRESSION_DEG
+    return wish.visit_when or "highest", wish.solar_depression_deg or 0.0
+
+
 def path_arcsec(geometry: Geometry) -> np.ndarray:
     """Return the length of the target's path on the sky up to each time."""
     from planner.sky.places import separation_arcsec, unit_vector
@@ -122,14 +134,15 @@ def path_arcsec(geometry: Geometry) -> np.ndarray:
 def _candidates(setting: Setting, geometry: Geometry) -> np.ndarray:
     """Return the times among which each night's best is looked for."""
     wish = setting.wish
-    if wish.visit_when == "sidereal-time":
+    when, depression_deg = visit_rule(setting)
+    if when == "sidereal-time":
         zero = np.zeros(len(geometry.tt_s))
         turn = np.unwrap(np.radians(hour_angle_deg(setting.observer, zero, zero, geometry.tt_s)))
         wanted = np.radians(15.0 * wish.sidereal_time_h)  # type: ignore[operator]
         turns = np.arange(np.ceil((turn[0] - wanted) / (2 * np.pi)), (turn[-1] - wanted) / (2 * np.pi) + 1)
         return np.interp(wanted + 2 * np.pi * turns, turn, geometry.tt_s)
-    if wish.visit_when == "solar-depression":
-        above = geometry.sun_altitude_deg + wish.solar_depression_deg
+    if when == "solar-depression":
+        above = geometry.sun_altitude_deg + depression_deg
         falls = np.flatnonzero((above[:-1] > 0) & (above[1:] <= 0))
         rises = np.flatnonzero((above[:-1] <= 0) & (above[1:] > 0))
         chosen = {"evening": falls, "morning": rises, "either": np.sort(np.concatenate([falls, rises]))}[

@@ -11,7 +11,7 @@ import numpy as np
 
 from planner.errors import InputError
 from planner.events.family import Geometry
-from planner.sequence import exposure
+from planner.sequence import exposure, radiometry
 from planner.sequence.flips import Pause, cut, focus_pauses, meridian_pause
 from planner.sequence.models import Passage, Shot
 from planner.sequence.recipes import Recipe, aim_of, place_of, recipes
@@ -82,10 +82,15 @@ def _passage(setting: Setting, window: Window, aim: str, flipped: bool) -> Passa
     geometry = setting.geometry(sample_s)
     kinds = recipes(setting, geometry, target_hidden=window.name == "hidden")
     readout_s = setting.rig.sensor.readout_s
+    star_contact = window.burst and bool(geometry.stars)
+    if star_contact:
+        # a star goes out in an instant: nothing else is worth a frame then
+        kinds = kinds[-1:]
     # kinds of frame take turns; each slot is as long as its longest exposure
-    slots_s = [ceil((float(kind.wanted_s.max()) + readout_s) * 10 - 1e-9) / 10 for kind in kinds]
+    unit_s = 0.01 if window.burst else 0.1
+    slots_s = [unit_s * ceil((float(kind.wanted_s.max()) + readout_s) / unit_s - 1e-6) for kind in kinds]
     turn_s = sum(slots_s)
-    cadence_s = _cadence_s(setting, window, geometry, turn_s)
+    cadence_s = _cadence_s(setting, window, geometry, turn_s, star_contact)
     start, start_tt_s = next_whole(sample_s[0], 0.1 if window.burst else 1.0)
     count = floor((sample_s[-1] - start_tt_s - turn_s) / cadence_s + 1e-9) + 1
     if count < 1:
@@ -100,7 +105,13 @@ def _passage(setting: Setting, window: Window, aim: str, flipped: bool) -> Passa
     if setting.rig.mount.kind == "fixed":
         aim, aim_place = "ground", _ground_aim(setting, geometry, aim)
     return Passage(
-        name=window.name, purpose=window.purpose, aim=aim, flipped=flipped, shots=shots, **aim_place
+        name=window.name,
+        purpose=window.purpose,
+        aim=aim,
+        flipped=flipped,
+        stars_expected=kinds[0].stars,
+        shots=shots,
+        **aim_place,
     )
 
 
@@ -132,6 +143,7 @@ def _shots(
     frame_tt_s = float(tt_s_from_datetime(start)) + np.arange(count) * cadence_s
     wanted_s = np.interp(frame_tt_s, sample_s, kind.wanted_s)
     stretches = exposure.steps(wanted_s)
+    saturation = radiometry.saturation_e(setting.rig, kind.gain)
     name = window.name if kind.name == "main" else f"{window.name}, {kind.name}"
     shots = []
     for number, stretch in enumerate(stretches, 1):
@@ -149,21 +161,26 @@ def _shots(
                 filter=setting.filter_name,
                 tracking=kind.tracking,
                 peak_of=kind.peak_of,
-                peak_e=float(f"{exposure_s * np.interp(middle_tt_s, sample_s, kind.rate_e_s):.4g}"),
+                peak_e=float(
+                    f"{min(saturation, exposure_s * np.interp(middle_tt_s, sample_s, kind.rate_e_s)):.4g}"
+                ),
                 trail_px=float(f"{trail_px:.2g}"),
             )
         )
     return shots
 
 
-def _cadence_s(setting: Setting, window: Window, geometry: Geometry, least_s: float) -> float:
-    """Return the time between starts: a tenth of a second is the finest step that is written."""
+def _cadence_s(
+    setting: Setting, window: Window, geometry: Geometry, least_s: float, star_contact: bool
+) -> float:
+    """Return the time between starts: hundredths of a second in a burst, tenths elsewhere."""
     wish = setting.wish
     if window.burst:
-        asked = wish.burst_cadence_s or max(
-            _LEAST_BURST_CADENCE_S, (window.end_tt_s - window.start_tt_s) / _MOST_BURST_FRAMES
-        )
-    elif window.name == "hidden":
+        fastest = 0.0 if star_contact else _LEAST_BURST_CADENCE_S
+        spread_s = (window.end_tt_s - window.start_tt_s) / _MOST_BURST_FRAMES
+        asked = wish.burst_cadence_s or max(fastest, spread_s)
+        return round(max(least_s, ceil(asked * 100 - 1e-6) / 100), 3)
+    if window.name == "hidden":
         asked = wish.cadence_s or _HIDDEN_CADENCE_S
     else:
         rate = max(relative_rate_arcsec_s(geometry), 1e-9)

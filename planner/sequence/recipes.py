@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -11,6 +11,7 @@ from planner.events.family import Geometry
 from planner.sequence import exposure, radiometry
 from planner.sequence.motion import Motion, motion
 from planner.sequence.setting import Setting
+from planner.sequence.starfield import star_frames
 
 TRACKING = {"sun": "solar", "moon": "lunar"}
 # A target fainter than this in the exposure for the bright disc gets exposures of its own.
@@ -28,6 +29,7 @@ class Recipe:
     gain: float
     tracking: str
     motion: Motion
+    stars: int | None = None
 
 
 def aim_of(setting: Setting) -> str:
@@ -52,19 +54,25 @@ def tracking_of(setting: Setting, aim: str) -> str:
 
 
 def recipes(setting: Setting, geometry: Geometry, target_hidden: bool) -> list[Recipe]:
-    """Return what to expose for at these times, the brightest disc first; raises InputError when there is nothing."""
+    """Return what to expose for at these times, the kind that is measured first; raises InputError when there is none.
+
+    Against a disc: the brightest disc, and by itself a target that this leaves too faint. Among stars: the stars, and
+    the brightest disc where the star frames clip it.
+    """
     aim = aim_of(setting)
     tracking = tracking_of(setting, aim)
     ra_deg, dec_deg = place_of(geometry, aim)
     moving = motion(setting.rig, setting.observer, tracking, ra_deg, dec_deg, geometry.tt_s)
-    found = []
     main = _brightest_disc(setting, geometry)
+    found: list[Recipe] = []
     if main is not None:
         name, rate = main
         gain = setting.gain_for_bright()
         wanted = exposure.wanted_exposure_s(setting.rig, rate, setting.wish.well_fraction, gain)
         found.append(Recipe("main", name, rate, _bounded(setting, moving, wanted), gain, tracking, moving))
-    if main is None or (geometry.reference != "sun" and not target_hidden):
+    if geometry.reference == "stars" and not geometry.stars:
+        return [_star_recipe(setting, geometry, found[0], ra_deg, dec_deg), replace(found[0], name="disc")]
+    if not found or (geometry.reference != "sun" and not target_hidden):
         faint = _faint_target(setting, geometry, found[0] if found else None)
         if faint is not None:
             name, rate, wanted = faint
@@ -74,6 +82,24 @@ def recipes(setting: Setting, geometry: Geometry, target_hidden: bool) -> list[R
     if not found:
         raise InputError(f"event.family: {setting.family.name} shows neither a disc nor a star to expose for")
     return found
+
+
+def _star_recipe(
+    setting: Setting, geometry: Geometry, disc: Recipe, ra_deg: np.ndarray, dec_deg: np.ndarray
+) -> Recipe:
+    gain = setting.gain_for_faint()
+    trail = disc.motion.trail_px(setting.rig, 1.0, corner=True)
+    frames = star_frames(setting, geometry, ra_deg, dec_deg, disc.rate_e_s, trail, gain)
+    return Recipe(
+        "main",
+        disc.peak_of,
+        disc.rate_e_s,
+        frames.exposure_s,
+        gain,
+        disc.tracking,
+        disc.motion,
+        int(np.median(frames.stars)),
+    )
 
 
 def place_of(geometry: Geometry, name: str) -> tuple[np.ndarray, np.ndarray]:

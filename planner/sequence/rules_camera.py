@@ -99,8 +99,8 @@ def saturates(case: Case) -> Iterator[Finding]:
             limit = radiometry.saturation_e(rig, shot.gain)
             if passage.done or shot.peak_e is None or shot.peak_e < 0.999 * limit:
                 continue
-            among_stars = case.setting.family.reference == "stars" and shot.name in ("stars", "deep")
-            if among_stars or shot.name.endswith((", long", "deep")):
+            among_stars = case.setting.family.reference == "stars" and shot.name != "planet"
+            if (among_stars and not shot.name.endswith(", disc")) or shot.name.endswith(", long"):
                 continue
             yield Finding(
                 rule="saturates",
@@ -137,7 +137,9 @@ def too_faint(case: Case) -> Iterator[Finding]:
 def no_exposure_does_both(case: Case) -> Iterator[Finding]:
     """The bright body and the faint things about it cannot be had in one exposure."""
     both = [p for p in case.plan.passages if len({shot.name.rsplit(",")[-1] for shot in p.shots}) > 1]
-    doubles = [p for p in both if any(s.name.endswith((", long", "planet", "deep")) for s in p.shots)]
+    doubles = [
+        p for p in both if any(s.name.endswith((", long", ", disc", "planet", "deep")) for s in p.shots)
+    ]
     if doubles:
         first = doubles[0]
         longest = max(first.shots, key=lambda shot: shot.exposure_s)

@@ -143,7 +143,7 @@ def too_few_stars(case: Case) -> Iterator[Finding]:
         count = least.stars_expected or 0
         yield Finding(
             rule="too-few-stars",
-            level="error" if count < _TOO_FEW_STARS else "caution",
+            level="error" if count < _TOO_FEW_STARS and case.setting.family.campaign else "caution",
             where=poor[0].name if len(poor) == 1 else f"{poor[0].name} to {poor[-1].name}",
             sentence=f"{count} catalogue stars reach a signal-to-noise of 10 in {least.name}.",
             cure="Expose longer, open the aperture, take a wider field, or wait for a darker sky.",

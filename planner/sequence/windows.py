@@ -10,15 +10,18 @@ from planner.events.family import Circumstances, Instant
 
 CONTACT_SIGMAS = 3.0
 LEAST_BURST_S = 20.0
+CONTACT_NAMES = ("contact", "disappearance", "reappearance", "graze", "occultation")
 # Lead before the first and after the last contact. Nothing of a planet is seen beside the Sun; beside the Moon and
 # among stars the approach is part of the picture. Common practice, no source.
 LEAD_S = {"sun": 120.0, "moon": 900.0, "stars": 3600.0}
-EXTREMES = ("greatest", "closest", "graze")
 _NAMES = {
     ("contact_1", "contact_2"): "ingress",
     ("contact_3", "contact_4"): "egress",
     ("disappearance_start", "disappearance_end"): "disappearance",
     ("reappearance_start", "reappearance_end"): "reappearance",
+    ("disappearance",): "disappearance",
+    ("reappearance",): "reappearance",
+    ("graze",): "graze",
 }
 
 
@@ -35,8 +38,13 @@ class Window:
 
 
 def contact_instants(circumstances: Circumstances) -> tuple[Instant, ...]:
-    """Return the instants at which something touches: all but extremes."""
-    return tuple(i for i in circumstances.instants if i.name not in EXTREMES)
+    """Return the instants at which something touches, in time order."""
+    return tuple(instant for instant in circumstances.instants if is_contact(instant.name))
+
+
+def is_contact(name: str) -> bool:
+    """Return whether an instant of this name is one of contact."""
+    return name.startswith(CONTACT_NAMES)
 
 
 def burst_half_s(instant: Instant, clock_sigma_s: float, burst_s: float | None = None) -> float:
@@ -57,7 +65,8 @@ def event_windows(
     lead = LEAD_S[reference] if lead_s is None else lead_s
     contacts = contact_instants(circumstances)
     if not contacts:
-        middle = circumstances.instants[0].tt_s if circumstances.instants else circumstances.event.middle_tt_s
+        instant = circumstances.instant("best_view") or circumstances.instant("greatest")
+        middle = instant.tt_s if instant else circumstances.event.middle_tt_s
         return [
             Window(
                 "closest", "regular frames through the closest approach", middle - lead, middle + lead, False
