@@ -25,10 +25,11 @@ class Level:
 
 @dataclass(frozen=True)
 class Light:
-    """How frames are turned into light: the bias of the rig, whether colour is kept, how many threads warp."""
+    """How frames are turned into light: the rig's bias, whether colour is kept, stars without dark rings, threads."""
 
     bias_adu: float = 0.0
     colour: bool = False
+    ringless: bool = False
     threads: int = max(1, min(4, os.cpu_count() or 1))
 
     def read(self, registered: Registered) -> Frame:
@@ -58,7 +59,17 @@ class Light:
             return registered.pointing.sky_to_pixel(*plane_to_sky(*anchor_deg, *canvas.to_plane(x_px, y_px)))
 
         if frame.colour is None:
-            return warp(frame.data - level.dark, canvas, to_frame, good, threads=self.threads) / level.unit
+            return (
+                warp(
+                    frame.data - level.dark,
+                    canvas,
+                    to_frame,
+                    good,
+                    threads=self.threads,
+                    ringless=self.ringless,
+                )
+                / level.unit
+            )
         planes = []
         for plane, (left, low), step in colour_planes(frame):
             mask = None if good is None else _thinned(good, step, plane.shape)

@@ -61,12 +61,13 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
             kept.append(frame)
             used.append((frame, "stars and target" if frame.measured else "stars"))
         if kept:
-            ground.add(stars.result()[0])
+            ground.add(_level(stars.result()[0]))
             patches.append((kept, patch_canvas, body.result()[0], target))
     if not patches:
         why = f"; the first: {left_out[0][0]} {left_out[0][1]}" if left_out else ""
         raise InputError(f"no frame registered on stars is left{why}")
     image, count = ground.result()
+    image, count, canvas = _inner_crop(image, count, canvas, patches, anchor)
     drawn = [_lay(image, canvas, anchor, *patch) for patch in patches]
     choices.tick(total, total)
     middle = 0.5 * (material.frames[0].tt_s + material.frames[-1].tt_s)
@@ -90,6 +91,54 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
         ),
         left_out=tuple(left_out),
     )
+
+
+def _level(stars: np.ndarray) -> np.ndarray:
+    """Return a visit's stack with what is left of its background taken off, colour by colour."""
+    planes = stars[..., None] if stars.ndim == 2 else stars
+    planes = np.stack([p - sky_surface(p, order=2) for p in np.moveaxis(planes, 2, 0)], axis=2)
+    return planes[..., 0] if stars.ndim == 2 else planes
+
+
+def _inner_crop(
+    image: np.ndarray, count: np.ndarray, canvas: Canvas, patches: list, anchor: tuple[float, float]
+) -> tuple[np.ndarray, np.ndarray, Canvas]:
+    """Return the picture without its empty corners, as far as the path allows with a margin of 4 % of its length."""
+    covered = np.isfinite(image if image.ndim == 2 else image.sum(axis=2))
+    places = np.array([canvas.from_sky(*anchor, *target) for *_, target in patches], float)
+    margin = 0.04 * max(float(np.ptp(places, axis=0).max()), 200.0)
+    keep = (
+        max(0, int(places[:, 1].min() - margin)),
+        min(covered.shape[0], int(places[:, 1].max() + margin) + 1),
+        max(0, int(places[:, 0].min() - margin)),
+        min(covered.shape[1], int(places[:, 0].max() + margin) + 1),
+    )
+    low, high, left, right = full_rectangle(covered, keep)
+    rows, columns = slice(low, high), slice(left, right)
+    return image[rows, columns].copy(), count[rows, columns].copy(), canvas.window(rows, columns)
+
+
+def full_rectangle(covered: np.ndarray, keep: tuple[int, int, int, int]) -> tuple[int, int, int, int]:
+    """Return a rectangle (low, high, left, right) without holes, or nearly, that contains `keep`.
+
+    The edge with the largest share of empty pixels moves inward until no edge has any, or would cut into `keep`.
+    """
+    low, high, left, right = 0, covered.shape[0], 0, covered.shape[1]
+    step = max(1, min(covered.shape) // 400)
+    while True:
+        shares = {
+            "low": 1 - covered[low, left:right].mean() if low < keep[0] else 0.0,
+            "high": 1 - covered[high - 1, left:right].mean() if high > keep[1] else 0.0,
+            "left": 1 - covered[low:high, left].mean() if left < keep[2] else 0.0,
+            "right": 1 - covered[low:high, right - 1].mean() if right > keep[3] else 0.0,
+        }
+        worst = max(shares, key=lambda name: shares[name])
+        if shares[worst] <= 0.001:
+            return low, high, left, right
+        low += step * (worst == "low")
+        high -= step * (worst == "high")
+        left += step * (worst == "left")
+        right -= step * (worst == "right")
 
 
 def _canvas(material: Material, choices: Choices) -> tuple[tuple[float, float], Canvas]:

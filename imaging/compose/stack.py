@@ -10,6 +10,7 @@ from __future__ import annotations
 import shutil
 import tempfile
 from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Protocol
 
@@ -20,6 +21,7 @@ from planner.errors import InputError
 BLENDS = ("mean", "median", "clipped", "min", "max")
 MEMORY_BYTES = 1_200_000_000
 BAND_BYTES = 150_000_000
+PIECE_BYTES = 2_000_000
 
 
 class Stack(Protocol):
@@ -121,7 +123,17 @@ class _Banded:
             rows = max(1, BAND_BYTES // (4 * self.added * row_values))
             for first in range(0, self.shape[0], rows):
                 band = slice(first, min(first + rows, self.shape[0]))
-                image[band], count[band] = self.reduce(self._band(band, row_values))
+                cube = self._band(band, row_values)
+                # small pieces stay in the processor's cache, and two threads share them
+                step = max(1, PIECE_BYTES // (4 * self.added * row_values))
+
+                def piece(low: int, cube: np.ndarray = cube, first: int = first, step: int = step) -> None:
+                    high = min(low + step, cube.shape[1])
+                    into = slice(first + low, first + high)
+                    image[into], count[into] = self.reduce(cube[:, low:high])
+
+                with ThreadPoolExecutor(2) as pool:
+                    list(pool.map(piece, range(0, cube.shape[1], step)))
         if self.file is not None:
             self.file.close()
         return image, count
@@ -149,47 +161,87 @@ def require_room(folder: Path, needed_bytes: int, purpose: str) -> None:
         )
 
 
+def _sorted(cube: np.ndarray) -> np.ndarray:
+    """Return the cube sorted along axis 0, NaN last as infinity.
+
+    Up to 40 planes by Batcher's merge exchange (Knuth 1998, The Art of Computer Programming 3, 5.2.2, algorithm M):
+    every exchange is a minimum and a maximum of whole planes, several times faster here than sorting pixel by pixel.
+    """
+    ordered = np.where(np.isfinite(cube), cube, np.float32(np.inf))
+    n = len(ordered)
+    if n > 40:
+        ordered.sort(axis=0)
+        return ordered
+    top = 1 << max(0, (n - 1).bit_length() - 1)
+    p = top if n > 1 else 0
+    low = np.empty(ordered.shape[1:], ordered.dtype)
+    while p > 0:
+        q, r, d = top, 0, p
+        while d > 0:
+            for i in range(n - d):
+                if i & p == r:
+                    np.minimum(ordered[i], ordered[i + d], out=low)
+                    np.maximum(ordered[i], ordered[i + d], out=ordered[i + d])
+                    ordered[i] = low
+            d, q, r = q - p, q >> 1, p
+        p >>= 1
+    return ordered
+
+
 def _middle(ordered: np.ndarray, count: np.ndarray) -> np.ndarray:
-    """Return the median along axis 0 of sorted values whose first `count` are finite."""
+    """Return the median along axis 0 of sorted values of which the first `count` are finite."""
+    n = len(ordered)
+    if count.min() == n:
+        return 0.5 * (ordered[(n - 1) // 2] + ordered[n // 2])
     low = np.take_along_axis(ordered, np.maximum((count - 1) // 2, 0)[None], axis=0)[0]
-    high = np.take_along_axis(ordered, np.maximum(count // 2, 0)[None] % len(ordered), axis=0)[0]
+    high = np.take_along_axis(ordered, np.minimum(count // 2, n - 1)[None], axis=0)[0]
     return np.where(count > 0, 0.5 * (low + high), np.nan)
 
 
 def median(cube: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """Return the median along axis 0 without NaN, and the number of values."""
     count = np.isfinite(cube).sum(axis=0)
-    return _middle(np.sort(cube, axis=0), count).astype(np.float32), count
+    with np.errstate(invalid="ignore"):
+        return _middle(_sorted(cube), count).astype(np.float32), count
 
 
 def clipped_mean(cube: np.ndarray, kappa: float = 3.0, rounds: int = 3) -> tuple[np.ndarray, np.ndarray]:
     """Return the mean along axis 0 of what lies within `kappa` sigma of the median, and the number of values.
 
-    The first sigma is 1.4826 times the median absolute deviation, not below 0.8 of its median over the band (a
+    The first sigma is 1.4826 times the median absolute deviation, not below 0.8 of its median over the cube (a
     handful of values that happen to agree would else reject their neighbours); later ones are the standard
     deviation of what is left, corrected for the cut. Pixels with fewer than 3 values are plain means.
     """
-    count = np.isfinite(cube).sum(axis=0)
-    center = _middle(np.sort(cube, axis=0), count)
-    away = np.abs(cube - center)
-    sigma = 1.4826 * _middle(np.sort(away, axis=0), count)
-    enough = count >= 3
-    if enough.any():
-        sigma = np.maximum(sigma, 0.8 * np.nanmedian(sigma[enough]))
-    limit = np.where(enough, kappa * sigma, np.inf)
-    keep = away <= np.maximum(limit, 1e-6 * np.abs(center))
-    mean = center
-    for _ in range(rounds):
-        used = np.maximum(keep.sum(axis=0), 1)
-        mean = np.where(keep, cube, 0).sum(axis=0, dtype=np.float64) / used
-        spread = np.sqrt(np.where(keep, (cube - mean) ** 2, 0).sum(axis=0) / np.maximum(used - 1, 1))
-        fresh = np.where(enough, kappa * np.maximum(1.03 * spread, sigma * 0.8), np.inf)
-        again = (np.abs(cube - mean) <= np.maximum(fresh, 1e-6 * np.abs(center))) & np.isfinite(cube)
-        if np.array_equal(again, keep):
-            break
-        keep = again
-    used = keep.sum(axis=0)
-    total = np.where(keep, cube, 0).sum(axis=0, dtype=np.float64)
+    cube = np.asarray(cube, np.float32)
+    finite = np.isfinite(cube)
+    count = finite.sum(axis=0, dtype=np.int32)
+    filled = np.where(finite, cube, np.float32(0))
     with np.errstate(invalid="ignore", divide="ignore"):
-        mean = np.where(used > 0, total / used, np.where(count > 0, center, np.nan))
-    return mean.astype(np.float32), used
+        if len(cube) < 3:
+            return (filled.sum(axis=0) / np.where(count, count, np.nan)).astype(np.float32), count
+        center = _middle(_sorted(cube), count).astype(np.float32)
+        sigma = 1.4826 * _middle(_sorted(np.abs(cube - center)), count)
+        enough = count >= 3
+        if enough.any():
+            sigma = np.maximum(sigma, 0.8 * np.median(sigma[enough]))
+        # about the median, so that squares of large levels do not drown small spreads in float32
+        away = np.where(finite, cube - center, np.float32(0))
+        limit = np.maximum(kappa * sigma, 1e-6 * np.abs(center))
+        limit = np.where(enough, limit, np.inf).astype(np.float32)
+        keep = (np.abs(away) <= limit) & finite
+        used, mean = count, np.zeros_like(center)
+        for _ in range(rounds):
+            used = keep.sum(axis=0, dtype=np.int32)
+            kept = np.where(keep, away, np.float32(0))
+            mean = kept.sum(axis=0) / np.maximum(used, 1)
+            variance = np.einsum("i...,i...->...", kept, kept) / np.maximum(used, 1) - mean**2
+            spread = np.sqrt(np.maximum(variance, 0) * used / np.maximum(used - 1, 1))
+            limit = np.maximum(kappa * np.maximum(1.03 * spread, 0.8 * sigma), 1e-6 * np.abs(center))
+            limit = np.where(enough, limit, np.inf).astype(np.float32)
+            again = (np.abs(away - mean) <= limit) & finite
+            if np.array_equal(again, keep):
+                break
+            keep = again
+        used = keep.sum(axis=0, dtype=np.int32)
+        mean = np.where(keep, away, np.float32(0)).sum(axis=0) / np.maximum(used, 1)
+        return np.where(count > 0, center + mean, np.nan).astype(np.float32), used

@@ -104,12 +104,15 @@ def warp(
     good: np.ndarray | None = None,
     step_px: int = GRID_PX,
     threads: int = 1,
+    ringless: bool = False,
 ) -> np.ndarray:
     """Return the frame on the canvas: float32, shape (height_px, width_px), NaN where the frame does not reach.
 
     `data` (rows, columns); `pixel_map` takes canvas pixels to frame pixels; `good` is a mask of usable pixels.
     Flux is conserved: values are multiplied by the area of a canvas pixel in frame pixels, so that the sum over a
     star stays the same at any scale. A canvas coarser than 1.5 frame pixels is fed from block means of the frame.
+    `ringless` keeps values from falling below the lowest of the 4 x 4 pixels around: a star narrower than 2 pixels has no
+    dark ring then, at the price of 0.5 % of its flux (nothing at 2.5 pixels and more).
     Accuracy against the exact map: 0.004 px with nodes every 32 px on a lens of 135 mm.
     """
     import cv2
@@ -125,6 +128,10 @@ def warp(
     else:
         good = None
     coefficients = spline_coefficients(data)
+    lowest = None
+    if ringless:
+        # the 4 x 4 pixels from one left of and below the place to two right of and above it
+        lowest = cv2.erode(np.ascontiguousarray(data, np.float32), np.ones((4, 4), np.uint8), anchor=(1, 1))
     bad = None if good is None else (~good).astype(np.float32)
     height, width = data.shape
     out = np.empty((canvas.height_px, canvas.width_px), np.float32)
@@ -147,6 +154,11 @@ def warp(
         low = sample[0] + wx * (sample[1] - sample[0])
         high = sample[2] + wx * (sample[3] - sample[2])
         value = low + wy * (high - low)
+        if lowest is not None:
+            floor = cv2.remap(
+                lowest, np.floor(sx), np.floor(sy), cv2.INTER_NEAREST, borderMode=cv2.BORDER_REPLICATE
+            )
+            np.maximum(value, floor, out=value)
         value *= sa
         outside = ~((sx >= -0.5) & (sx <= width - 0.5) & (sy >= -0.5) & (sy <= height - 0.5))
         if bad is not None:

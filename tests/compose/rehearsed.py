@@ -33,7 +33,8 @@ def track_from_truth(plan, folder: Path, out: Path, sigma_px: float = 0.0, seed:
         height, width = header["NAXIS2"], header["NAXIS1"]
         x, y = (row["target_x_px"], row["target_y_px"]) + rng.normal(0, 1, 2) * sigma_px
         inside = bool(0 < x < width - 1 and 0 < y < height - 1)
-        scale = float(row["scale_arcsec_px"])
+        # the optics' own scale: the truth's is that of the sky behind the refracting air
+        scale = plan.rig.scale_arcsec_px * int(header.get("XBINNING", 1))
         common = {
             "file": str(row["file"]),
             "passage": _passage(plan, times[i]),
@@ -51,7 +52,7 @@ def track_from_truth(plan, folder: Path, out: Path, sigma_px: float = 0.0, seed:
             "verdict": "on-track" if inside else "unmeasured",
         }
         if geometry.reference == "stars":
-            wcs = _wcs(row, width, height)
+            wcs = _wcs(row, width, height, float(row["scale_arcsec_px"]))
             name = f"{Path(row['file']).stem}.wcs"
             (out / name).write_text(wcs.to_header(relax=True).tostring(sep="\n"), encoding="ascii")
             sky = wcs.all_pix2world(x, y, 0)
@@ -73,7 +74,7 @@ def track_from_truth(plan, folder: Path, out: Path, sigma_px: float = 0.0, seed:
         away = np.hypot(*seen)
         hidden = geometry.reference == "moon" and away < disc.semidiameter_arcsec[i]
         beside = geometry.reference == "sun" and away > disc.semidiameter_arcsec[i]
-        found = _offset(row, x, y)
+        found = _offset(row, x, y, scale)
         measured = inside and not hidden and not beside
         rows.append(
             TrackRow(
@@ -100,21 +101,19 @@ def _passage(plan, tt_s: float) -> str:
     return max((start, name) for start, name in starts if start <= tt_s + 1)[1]
 
 
-def _offset(row, x: float, y: float) -> tuple[float, float]:
+def _offset(row, x: float, y: float, scale: float) -> tuple[float, float]:
     dx, dy = x - row["reference_x_px"], y - row["reference_y_px"]
     sin, cos = np.sin(np.radians(row["rotation_deg"])), np.cos(np.radians(row["rotation_deg"]))
-    scale, parity = row["scale_arcsec_px"], row["parity"]
+    parity = row["parity"]
     return float(scale * (dy * sin - parity * dx * cos)), float(scale * (dy * cos + parity * dx * sin))
 
 
-def _wcs(row, width: int, height: int) -> WCS:
+def _wcs(row, width: int, height: int, scale: float) -> WCS:
     wcs = WCS(naxis=2)
     wcs.wcs.ctype = ["RA---TAN", "DEC--TAN"]
     wcs.wcs.crval = [row["center_ra_deg"], row["center_dec_deg"]]
     wcs.wcs.crpix = [(width - 1) / 2 + 1, (height - 1) / 2 + 1]
     sin, cos = np.sin(np.radians(row["rotation_deg"])), np.cos(np.radians(row["rotation_deg"]))
-    wcs.wcs.cd = (
-        np.array([[-row["parity"] * cos, sin], [row["parity"] * sin, cos]]) * row["scale_arcsec_px"] / 3600
-    )
+    wcs.wcs.cd = np.array([[-row["parity"] * cos, sin], [row["parity"] * sin, cos]]) * scale / 3600
     wcs.wcs.set()
     return wcs
