@@ -16,7 +16,7 @@ from imaging.stars.detection import Detections
 from imaging.stars.solution import PlateSolution
 from imaging.stars.solve import detect_frame, solve_frame
 from imaging.track.cutout import Cutout, cut_out
-from imaging.track.measurement import DiscReference, Measurement, StarReference
+from imaging.track.measurement import AS_PREDICTED, DiscReference, Measurement, StarReference
 from imaging.track.nominal import Nominal, Promise
 from imaging.track.path import Expected, tangent_offsets, target_place, unit_vectors
 from planner.errors import InputError, NoSolutionError
@@ -73,6 +73,7 @@ class Measurer:
         nominal = blank.nominal
         limb = self._limb(frame, nominal, geometry, expected)
         center = np.array([limb.x_px, limb.y_px])
+        nominal = _turned_to(nominal, center, frame.data.shape, geometry)
         offset = np.array(nominal.to_pixels(float(expected.east_arcsec[0]), float(expected.north_arcsec[0])))
         reference = DiscReference(
             limb.x_px,
@@ -83,6 +84,7 @@ class Measurer:
         )
         blank = replace(
             blank,
+            nominal=nominal,
             disc=reference,
             solved_by=f"{geometry.reference}-limb",
             predicted_px=tuple((center + offset).tolist()),
@@ -91,7 +93,7 @@ class Measurer:
         try:
             place = self._found(frame, limb, center + offset, radius, geometry)
         except NoSolutionError as none:
-            return replace(blank, reason=str(none))
+            return replace(blank, reason=_hidden(geometry, expected) or str(none))
         self._shift_px = np.array([place.x_px, place.y_px]) - center - offset
         return replace(
             blank,
@@ -291,6 +293,33 @@ def _body(geometry: Geometry, radius_px: float, pixel_angle: Callable[[float], f
         flattening=float(disc.flattening[0]),
         pole_angle_deg=pixel_angle(float(disc.pole_pa_deg[0])),
     )
+
+
+def _hidden(geometry: Geometry, expected: Expected) -> str | None:
+    """Return why nothing was to be seen at this time, where the prediction itself says so."""
+    apart = float(np.hypot(expected.east_arcsec[0], expected.north_arcsec[0]))
+    disc, target = (
+        float(expected.reference_semidiameter_arcsec[0]),
+        float(expected.target_semidiameter_arcsec[0]),
+    )
+    name = geometry.target.capitalize()
+    if geometry.reference == "sun" and apart > disc + 0.2 * target:
+        return f"{name} {AS_PREDICTED} off the Sun's disc"
+    if geometry.reference == "moon" and apart < disc + 0.8 * target:
+        return f"{name} {AS_PREDICTED} behind the Moon"
+    return None
+
+
+def _turned_to(nominal: Nominal, center: np.ndarray, shape: tuple[int, ...], geometry: Geometry) -> Nominal:
+    """Return the promise with the rotation at the disc, where north differs from north on the camera's axis.
+
+    A mount keeps its roll against the pole as its axis sees it; meridians converge by (distance east) tan(declination).
+    """
+    middle = np.array([(shape[1] - 1) / 2.0, (shape[0] - 1) / 2.0])
+    east, _ = nominal.to_sky(*(center - middle))
+    dec = np.radians(float(geometry.discs[geometry.reference].dec_deg[0]))
+    turn = float(east) / 3600.0 * np.tan(np.clip(dec, -1.5, 1.5))
+    return replace(nominal, rotation_deg=(nominal.rotation_deg + turn) % 360.0)
 
 
 def _along(expected: Expected, pa_deg: float) -> float:

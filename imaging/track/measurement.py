@@ -11,6 +11,7 @@ from imaging.track.cutout import Cutout
 from imaging.track.nominal import Nominal
 
 NAN = float("nan")
+AS_PREDICTED = "is, as predicted,"  # marks the reason of a frame in which the target was not to be seen
 
 
 @dataclass(frozen=True)

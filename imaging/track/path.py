@@ -67,34 +67,51 @@ def tangent_offsets(
     )
 
 
+def toward(direction: np.ndarray, ra_deg: np.ndarray, pa_deg: np.ndarray) -> np.ndarray:
+    """Return unit tangents (n, 3) at directions toward position angles, from ICRS north through east."""
+    ra, pa = np.radians(ra_deg), np.radians(pa_deg)
+    east = np.stack([-np.sin(ra), np.cos(ra), np.zeros_like(ra)], axis=-1)
+    north = np.cross(direction, east)
+    return np.sin(pa)[:, None] * east + np.cos(pa)[:, None] * north
+
+
 def as_seen(
-    east_arcsec: np.ndarray,
-    north_arcsec: np.ndarray,
+    place: tuple[np.ndarray, np.ndarray],
+    reference: tuple[np.ndarray, np.ndarray],
     altitude_deg: np.ndarray,
     zenith_pa_deg: np.ndarray,
     observer: Observer | None,
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Return offsets between two bodies as the refracting air shows them.
+    """Return the (east, north) offset in arcseconds of a body from a reference, as the refracting air shows them.
 
-    `altitude_deg`: refracted, of the body that the offset leads to. Vertical offsets shrink by the difference of the
-    two refractions (0.3 % at 20 degrees), horizontal ones by cos(refracted) / cos(true altitude). Without an
-    observer, without air, or below the horizon the offsets come back unchanged.
+    `place`, `reference`: (ra_deg, dec_deg). `altitude_deg` (refracted) and `zenith_pa_deg` are at the place. East and
+    north are those of the *refracted* reference, which is where a camera on an equatorial mount keeps its angle.
+    Without an observer, without air, or below the horizon the offset is the true one.
     """
+    body, center = unit_vectors(*place), unit_vectors(*reference)
+    true = np.column_stack(tangent_offsets(*reference, body))
     if observer is None or observer.pressure_here_hpa == 0:
-        return east_arcsec, north_arcsec
+        return true[:, 0], true[:, 1]
     from planner.sky.refraction import refraction_arcsec, true_altitude_deg
 
     seen = np.isfinite(altitude_deg) & (altitude_deg > 0)
-    altitude = np.where(seen, altitude_deg, 45.0)
-    pa = np.radians(zenith_pa_deg)
-    up = east_arcsec * np.sin(pa) + north_arcsec * np.cos(pa)
-    aside = east_arcsec * np.cos(pa) - north_arcsec * np.sin(pa)
-    true = np.asarray(true_altitude_deg(altitude, observer))
-    from_true = true - up / 3600.0
-    up_seen = up + refraction_arcsec(true, observer) - refraction_arcsec(from_true, observer)
-    aside_seen = aside * np.cos(np.radians(altitude)) / np.cos(np.radians(true))
-    up, aside = np.where(seen, up_seen, up), np.where(seen, aside_seen, aside)
-    return up * np.sin(pa) + aside * np.cos(pa), up * np.cos(pa) - aside * np.sin(pa)
+    altitude = np.radians(true_altitude_deg(np.where(seen, altitude_deg, 45.0), observer))[:, None]
+    up = toward(body, place[0], np.where(seen, zenith_pa_deg, 0.0))
+    zenith = np.sin(altitude) * body + np.cos(altitude) * up
+
+    def lifted(direction: np.ndarray) -> np.ndarray:
+        height = np.sum(zenith * direction, axis=1)
+        lift = refraction_arcsec(np.degrees(np.arcsin(np.clip(height, -1, 1))), observer) / ARCSEC_RAD
+        along = zenith - height[:, None] * direction
+        along /= np.maximum(np.linalg.norm(along, axis=1), 1e-12)[:, None]
+        return np.cos(lift)[:, None] * direction + np.sin(lift)[:, None] * along
+
+    center = lifted(center)
+    ra = np.degrees(np.arctan2(center[:, 1], center[:, 0]))
+    dec = np.degrees(np.arcsin(np.clip(center[:, 2], -1, 1)))
+    lifted_offset = np.column_stack(tangent_offsets(ra, dec, lifted(body)))
+    offset = np.where(seen[:, None], lifted_offset, true)
+    return offset[:, 0], offset[:, 1]
 
 
 def target_place(geometry: Geometry) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -194,8 +211,13 @@ class PredictedPath:
         east, north, reference = nothing, nothing, nothing
         if not self._among_stars:
             disc = geometry.discs[geometry.reference]
-            east, north = tangent_offsets(disc.ra_deg, disc.dec_deg, direction)
-            east, north = as_seen(east, north, geometry.altitude_deg, geometry.zenith_pa_deg, self.observer)
+            east, north = as_seen(
+                (ra_deg, dec_deg),
+                (disc.ra_deg, disc.dec_deg),
+                geometry.altitude_deg,
+                geometry.zenith_pa_deg,
+                self.observer,
+            )
             reference = disc.semidiameter_arcsec
         zenith = np.radians(geometry.zenith_pa_deg)
         columns = [

@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 
 from imaging.track.findings import Diagnosis, Finding
+from imaging.track.measurement import AS_PREDICTED
 from imaging.track.table import TrackRow
 
 
@@ -72,6 +73,11 @@ class CheckResult:
     def on_track(self) -> int:
         """Number of frames that follow the prediction, one clock error for all allowed."""
         return sum(row.verdict == "on-track" for row in self.rows)
+
+    @property
+    def failed(self) -> int:
+        """Number of frames without a measured place in which one was to be seen."""
+        return sum(row.verdict == "unmeasured" and AS_PREDICTED not in row.reason for row in self.rows)
 
     @property
     def verdict(self) -> str:
