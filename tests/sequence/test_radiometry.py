@@ -1,0 +1,148 @@
+"""Photon rates agree with published magnitudes and with what photographers know."""
+
+import numpy as np
+import pytest
+
+from planner.errors import InputError
+from planner.sequence import exposure, radiometry
+from planner.sequence.models import Rig
+from tests.sequence.briefs import TRANSIT, changed, example
+
+
+def rig_of(**sensor) -> Rig:
+    return Rig.model_validate(
+        {
+            "name": "test",
+            "sensor": {"width_px": 1000, "height_px": 800, "pixel_um": 5.0, **sensor},
+            "optics": {"focal_length_mm": 1000, "aperture_mm": 100, "transmission": 1.0},
+            "filters": [{"name": "V", "bandwidth_nm": 1.0}, {"name": "ND", "optical_density": 2.0}],
+        }
+    )
+
+
+def test_magnitude_zero_gives_a_thousand_photons():
+    """Close to 1000 photons a second, square centimetre and angstrom at V = 0: common practice, no source."""
+    assert radiometry.V_ZERO_PHOTONS / 1e4 / 10 == pytest.approx(1000, rel=0.01)
+
+
+def test_rates_follow_area_band_and_filter():
+    rig = rig_of(quantum_efficiency=1.0)
+    through = radiometry.band(rig, "V")
+    assert through.zero_rate_e_s == pytest.approx(radiometry.V_ZERO_PHOTONS * np.pi / 4 * 0.1**2)
+    assert radiometry.rate_e_s(through, 5.0) == pytest.approx(through.zero_rate_e_s / 100)
+    dense, clear = radiometry.band(rig, "ND"), radiometry.band(rig)
+    assert dense.efficiency == pytest.approx(clear.efficiency / 100)
+    with pytest.raises(InputError, match="filters of test are: V, ND"):
+        radiometry.band(rig, "R")
+
+
+def test_the_sun_needs_a_solar_filter():
+    with pytest.raises(InputError, match="solar_filter"):
+        radiometry.band(rig_of(), behind_solar_filter=True)
+
+
+@pytest.mark.parametrize("law", ["lambert", "lommel-seeliger"])
+@pytest.mark.parametrize("phase_deg", [0.0, 40.0, 90.0])
+def test_a_disc_keeps_its_light_whatever_its_phase(law, phase_deg):
+    """Summing the surface law over the disc gives back the magnitude that set its scale."""
+    y, x = np.mgrid[-1:1:801j, -1:1:801j]
+    mu = np.sqrt(np.clip(1 - x**2 - y**2, 0, None))
+    angle = np.radians(phase_deg)
+    inside = x**2 + y**2 < 1
+    mu0 = np.where(inside, mu * np.cos(angle) + x * np.sin(angle), -1)
+    brightness = radiometry.surface_law(law, mu0, np.where(inside, mu, -1))
+    lit = (1 + np.cos(angle)) / 2
+    mean = brightness.sum() / (inside.sum() * lit)
+    peak = np.quantile(brightness[brightness > 0], 0.98)
+    assert radiometry.peak_over_mean(law, np.array([phase_deg]))[0] == pytest.approx(peak / mean, rel=0.02)
+
+
+def test_the_middle_of_the_sun_is_a_quarter_brighter_than_its_mean():
+    """Mean over centre 0.81 in V (Cox 2000, Allen's Astrophysical Quantities, 14.7; from memory)."""
+    assert 1 / radiometry.peak_over_mean("sun", 0.0) == pytest.approx(0.81, abs=0.01)
+
+
+def test_a_full_moon_needs_about_what_the_daylight_rule_says():
+    """Full Moon: f/11 at 1 / ISO seconds, to a stop and a half. Common practice, no source.
+
+    Taken for a sensor that at ISO 100 holds 60 000 electrons on a 6 micrometre pixel, exposed to a third of its range.
+    """
+    rig = Rig.model_validate(
+        {
+            "name": "camera",
+            "sensor": {
+                "width_px": 6000, "height_px": 4000, "pixel_um": 6.0, "full_well_e": 60000, "gain_e_adu": 4.0,
+                "bit_depth": 14, "quantum_efficiency": 0.5, "bayer": "RGGB",
+            },
+            "optics": {"focal_length_mm": 1100, "aperture_mm": 100},
+        }
+    )  # fmt: skip
+    through = radiometry.band(rig)
+    rate = radiometry.disc_rate_e_s_px(
+        through, "moon", -12.7 + 0.2 * 1.2, 932.0, 0.0, 3.0, rig.scale_arcsec_px
+    )
+    found_s = float(exposure.wanted_exposure_s(rig, rate, 0.33))
+    assert abs(np.log2(found_s / (1 / 100))) < 1.5
+
+
+def test_a_small_disc_peaks_like_a_star_and_a_large_one_like_its_surface():
+    fwhm_px = 3.0
+    assert radiometry.blurred_peak_fraction(50.0, fwhm_px) == pytest.approx(1.0, abs=1e-6)
+    tiny = radiometry.blurred_peak_fraction(0.05, fwhm_px) / (np.pi * 0.05**2)
+    sigma2 = (fwhm_px / radiometry.FWHM_OF_SIGMA) ** 2 + 1 / 12
+    assert tiny == pytest.approx(1 / (2 * np.pi * sigma2), rel=1e-3)
+
+
+def test_a_star_trailed_over_pixels_loses_its_peak_in_proportion():
+    still, trailed = radiometry.star_peak_fraction(2.0), radiometry.star_peak_fraction(2.0, 40.0)
+    # a trail of L pixels leaves about 1/L of the light of its cross-section in a pixel, within the Gaussian stand-in
+    assert 0.02 < trailed / still < 0.12
+    assert radiometry.star_peak_fraction(0.1) == pytest.approx(1.0, abs=1e-3)
+
+
+def test_seeing_worsens_with_airmass_to_the_power_of_three_fifths():
+    rig = rig_of()
+    at_zenith = radiometry.psf_fwhm_arcsec(rig, 2.0, 1.0, 0.0)
+    low = radiometry.psf_fwhm_arcsec(rig, 2.0, 4.0, 0.0)
+    diffraction = 1.029 * np.degrees(545e-9 / 0.1) * 3600
+    assert at_zenith == pytest.approx(np.hypot(2.0, diffraction))
+    assert low == pytest.approx(np.hypot(2.0 * 4**0.6, diffraction))
+
+
+def test_saturation_is_the_well_or_the_end_of_the_converter():
+    assert radiometry.saturation_e(rig_of(full_well_e=50000, gain_e_adu=1.0)) == 50000
+    assert radiometry.saturation_e(rig_of(full_well_e=50000, bit_depth=12, bias_adu=95)) == 4000
+    assert radiometry.at_gain(rig_of(), 200).e_adu == pytest.approx(0.1)
+    listed = {"gain": 120, "e_adu": 0.3, "read_noise_e": 1.2, "full_well_e": 15000}
+    assert radiometry.at_gain(rig_of(gains=[listed]), 120).read_noise_e == 1.2
+
+
+def test_exposure_for_a_signal_to_noise_gives_that_signal_to_noise():
+    rate, background, variance = np.array([3.0, 300.0, 3e4]), 20.0, 60.0
+    seconds = exposure.time_for_signal_to_noise_s(rate, background, variance, 25.0)
+    assert rate * seconds / np.sqrt((rate + background) * seconds + variance) == pytest.approx(25.0)
+
+
+def test_exposures_are_rounded_as_people_set_them():
+    assert exposure.rounded_down(0.0123456) == 0.012
+    assert exposure.rounded_up(0.0123456) == 0.013
+    assert exposure.rounded_down(0.5) == exposure.rounded_up(0.5) == 0.5
+
+
+def test_a_step_of_exposure_is_a_third_of_a_stop():
+    wanted = np.geomspace(0.01, 0.02, 1000)
+    stretches = exposure.steps(wanted)
+    assert 3 <= len(stretches) <= 4
+    assert sum(s.stop - s.start for s in stretches) == 1000
+    assert all(wanted[s].max() / wanted[s].min() <= exposure.STEP for s in stretches)
+
+
+def test_the_sun_is_exposed_to_the_fraction_of_the_well_that_is_asked():
+    from planner.sequence.builder import build_plan
+
+    brief = example(TRANSIT)
+    for fraction in (0.3, 0.6):
+        plan = build_plan(changed(brief, wish={"well_fraction": fraction}))
+        peaks = [s.peak_e / radiometry.saturation_e(plan.rig) for p in plan.passages for s in p.shots]
+        assert max(peaks) <= fraction * 1.001
+        assert min(peaks) > fraction * 0.75
