@@ -60,8 +60,13 @@ class Outputs:
 
 def compose_picture(material: Material, choices: Choices) -> Picture:
     """Return the composite that suits the event, or the registration the user chose; raises InputError."""
-    light = Light(bias_adu=material.plan.rig.sensor.bias_adu, colour=choices.colour, threads=choices.threads)
     registration = material.reference if choices.registration == "auto" else choices.registration
+    light = Light(
+        bias_adu=material.plan.rig.sensor.bias_adu,
+        colour=choices.colour,
+        ringless=registration == "stars",
+        threads=choices.threads,
+    )
     if registration == "stars":
         return sky_path(material, choices, light)
     if registration != material.reference:
@@ -76,7 +81,9 @@ def write_picture(
     material: Material, picture: Picture, outputs: Outputs
 ) -> tuple[list[Path], dict[str, Any]]:
     """Write the composite in its formats and the statement of truth; returns the paths and the statement."""
-    stretch: Stretch = measured_stretch(picture.image, "linear" if outputs.linear else picture.tone)
+    stretch: Stretch = measured_stretch(
+        picture.image, "linear" if outputs.linear else picture.tone, picture.faintest_peak()
+    )
     statement = truth.statement(material, picture, stretch.sentence())
     caption = truth.caption(material, picture)
     statement["caption"] = caption

@@ -28,7 +28,7 @@ class Crowd:
                 cost += 1000.0 + wide * tall
         if self.points.size:
             x, y = self.points
-            cost += 3.0 * np.count_nonzero((x > left) & (x < right) & (y > low) & (y < high))
+            cost += 4.0 * np.count_nonzero((x > left) & (x < right) & (y > low) & (y < high))
         return cost
 
     def place(
@@ -41,8 +41,8 @@ class Crowd:
     ) -> tuple[float, float] | None:
         """Return the middle of the best free place for a label, and occupy it.
 
-        `toward` is the wished direction (unit vector, pixels); directions further from it cost more. None when the
-        label is optional and would cover another one, or when it fits nowhere on the sheet.
+            `toward` is the wished direction (unit vector, pixels); directions further from it cost more. None when the
+        label is optional and would cover another one or several points, or when it fits nowhere on the sheet.
         """
         best, best_cost = None, np.inf
         wide, tall = size_px
@@ -58,7 +58,7 @@ class Crowd:
                 cost = self.cost(box) + 4.0 * (reach - 1) + abs(turn) / 60
                 if cost < best_cost:
                     best, best_cost = (x, y), cost
-        if best is None or (optional and best_cost >= 1000):
+        if best is None or (optional and best_cost >= 12):
             return None
         x, y = best
         self.boxes.append((x - wide / 2, y - tall / 2, x + wide / 2, y + tall / 2))

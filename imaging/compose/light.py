@@ -10,7 +10,7 @@ import numpy as np
 from imaging.compose.canvas import Canvas
 from imaging.compose.material import Registered
 from imaging.compose.plane import plane_to_sky
-from imaging.compose.warp import warp
+from imaging.compose.warp import PixelMap, warp
 from imaging.frames.frame import Frame
 from planner.errors import FrameSetAside
 
@@ -59,29 +59,22 @@ class Light:
             return registered.pointing.sky_to_pixel(*plane_to_sky(*anchor_deg, *canvas.to_plane(x_px, y_px)))
 
         if frame.colour is None:
-            return (
-                warp(
-                    frame.data - level.dark,
-                    canvas,
-                    to_frame,
-                    good,
-                    threads=self.threads,
-                    ringless=self.ringless,
-                )
-                / level.unit
-            )
+            return self._warp(frame.data - level.dark, canvas, to_frame, good) / level.unit
         planes = []
         for plane, (left, low), step in colour_planes(frame):
             mask = None if good is None else _thinned(good, step, plane.shape)
-            image = warp(
-                plane - level.dark, canvas, _stepped(to_frame, left, low, step), mask, threads=self.threads
-            )
+            image = self._warp(plane - level.dark, canvas, _stepped(to_frame, left, low, step), mask)
             # a plane pixel stands for `step` x `step` frame pixels: its light is that of one of them
             planes.append(image * (step**2 / level.unit))
         return np.stack(planes, axis=-1)
 
+    def _warp(
+        self, data: np.ndarray, canvas: Canvas, to_frame: PixelMap, good: np.ndarray | None
+    ) -> np.ndarray:
+        return warp(data, canvas, to_frame, good, threads=self.threads, ringless=self.ringless)
 
-def _stepped(to_frame, left: float, low: float, step: int):
+
+def _stepped(to_frame: PixelMap, left: float, low: float, step: int) -> PixelMap:
     def to_plane(x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         x, y = to_frame(x_px, y_px)
         return (x - left) / step, (y - low) / step

@@ -11,8 +11,9 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from imaging.compose.plane import plane_to_sky, sky_to_plane
-from imaging.compose.pointing import DiscPointing, Pointing, StarPointing
+from imaging.compose.pointing import Air, DiscPointing, Pointing, StarPointing
 from planner.errors import FrameSetAside, InputError
+from planner.sky.refraction import true_altitude_deg
 
 if TYPE_CHECKING:
     from imaging.track.table import Track
@@ -205,17 +206,29 @@ class _Sky:
     """The prediction at the frames' times, with offsets from the disc both true and as seen through the air."""
 
     def __init__(self, geometry: Geometry, observer: Observer | None):
-        from imaging.track.path import as_seen, tangent_offsets, target_place, unit_vectors
+        from imaging.track.path import as_seen, tangent_offsets, target_place, toward, unit_vectors
 
-        self.discs = geometry.discs
-        self.ra_deg, self.dec_deg, _ = target_place(geometry)
-        direction = unit_vectors(self.ra_deg, self.dec_deg)
+        self.discs, self.observer = geometry.discs, observer
+        place = target_place(geometry)[:2]
+        self.ra_deg, self.dec_deg = place
+        direction = unit_vectors(*place)
         self.true, self.seen = {}, {}
         for body in {"sun", "moon"} & set(self.discs):
-            disc = self.discs[body]
-            self.true[body] = np.stack(tangent_offsets(disc.ra_deg, disc.dec_deg, direction))
-            seen = as_seen(*self.true[body], geometry.altitude_deg, geometry.zenith_pa_deg, observer)
+            reference = self.discs[body].ra_deg, self.discs[body].dec_deg
+            self.true[body] = np.stack(tangent_offsets(*reference, direction))
+            seen = as_seen(place, reference, geometry.altitude_deg, geometry.zenith_pa_deg, observer)
             self.seen[body] = np.stack(seen)
+        self.zenith = None
+        if observer is not None and observer.pressure_here_hpa > 0:
+            altitude = np.radians(true_altitude_deg(geometry.altitude_deg, observer))[:, None]
+            up = toward(direction, self.ra_deg, geometry.zenith_pa_deg)
+            self.zenith = np.sin(altitude) * direction + np.cos(altitude) * up
+
+    def air(self, place: int) -> Air | None:
+        """Return the air over one frame; None without any, or with the target below the horizon."""
+        if self.zenith is None or not np.isfinite(self.zenith[place]).all():
+            return None
+        return Air(tuple(self.zenith[place].tolist()), self.observer)  # type: ignore[arg-type]
 
 
 def _registered(track: Track, index: int, path: Path, tt_s: float, sky: _Sky, place: int) -> Registered:
@@ -239,7 +252,9 @@ def _registered(track: Track, index: int, path: Path, tt_s: float, sky: _Sky, pl
         rotation = number("rotation_deg")
         if not np.isfinite([*limb[:2], rotation]).all():
             raise FrameSetAside(path, "has no limb or no rotation in the track")
-        pointing = DiscPointing(*limb[:2], scale, rotation, int(track["parity"][index]), *reference)
+        pointing = DiscPointing(
+            *limb[:2], scale, rotation, int(track["parity"][index]), *reference, sky.air(place)
+        )
         found = np.array([number("measured_east_arcsec"), number("measured_north_arcsec")])
         found += sky.true[body][:, place] - sky.seen[body][:, place]
         if np.isfinite(found).all():

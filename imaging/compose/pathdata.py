@@ -76,6 +76,8 @@ class PathData:
     up_pa_deg: float
     zenith_pa_deg: float
     north_of_date_pa_deg: float
+    phase_angle_deg: float
+    bright_limb_pa_deg: float
     campaign: bool
 
 
@@ -120,6 +122,8 @@ def path_data(material: Material, choices: Choices, zone: tzinfo = UTC, zone_lab
         up_pa_deg=up,
         zenith_pa_deg=float(geometry.zenith_pa_deg[PATH_POINTS // 2]),
         north_of_date_pa_deg=float(np.squeeze(north_of_date_pa_deg(*middle_anchor, middle))),
+        phase_angle_deg=float(disc.phase_angle_deg[PATH_POINTS // 2]) if on_disc == "moon" and disc else 0.0,
+        bright_limb_pa_deg=float(disc.bright_limb_pa_deg[PATH_POINTS // 2]) if disc else 0.0,
         campaign=last - first > 5 * 86400.0,
     )
 

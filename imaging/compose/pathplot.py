@@ -32,11 +32,16 @@ class Palette:
     predicted: str
     measured: str
     disc: str
+    lit: str
     star: str
 
 
-LIGHT = Palette("#ffffff", "#1c2126", "#5d6770", "#c9d0d6", "#2b5c8a", "#b3401f", "#fbf3df", "#39424a")
-DARK = Palette("#0e1216", "#e8e4da", "#9aa3ab", "#38424b", "#79b4e3", "#f2a65a", "#22211c", "#e9ecef")
+LIGHT = Palette(
+    "#ffffff", "#1c2126", "#5d6770", "#c9d0d6", "#2b5c8a", "#b3401f", "#fbf3df", "#fbf3df", "#39424a"
+)
+DARK = Palette(
+    "#0e1216", "#e8e4da", "#9aa3ab", "#38424b", "#79b4e3", "#f2a65a", "#22211c", "#45423a", "#e9ecef"
+)
 
 
 def draw_path_plot(data: PathData, palette: Palette = LIGHT, stars: bool = True, residuals: bool = True):
@@ -48,12 +53,13 @@ def draw_path_plot(data: PathData, palette: Palette = LIGHT, stars: bool = True,
     wide = 9.0
     aspect = (view[3] - view[2]) / (view[1] - view[0])
     lower = 2.3 if residuals and data.points.size else 0.0
-    main = min(max(7.6 * aspect, 3.2), 9.5)
-    tall = main + lower + 1.5
+    left, right = 0.095, 0.975
+    main = wide * (right - left) * aspect
+    below = 0.12 if data.on_disc else 0.36
+    tall = main + lower + below + 0.78
     figure = Figure(figsize=(wide, tall), facecolor=palette.paper)
     FigureCanvasAgg(figure)
-    left, right = 0.095, 0.975
-    axes = figure.add_axes((left, (lower + 0.72) / tall, right - left, main / tall))
+    axes = figure.add_axes((left, (lower + below) / tall, right - left, main / tall))
     _frame_axes(axes, palette)
     axes.set_aspect("equal")
     axes.set_xlim(view[0], view[1])
@@ -63,7 +69,7 @@ def draw_path_plot(data: PathData, palette: Palette = LIGHT, stars: bool = True,
     )
     figure.text(
         left,
-        1 - 0.56 / tall,
+        1 - 0.55 / tall,
         f"{data.site} · times in {data.zone_label}",
         color=palette.quiet,
         fontsize=9,
@@ -115,7 +121,7 @@ def _view(data: PathData) -> tuple[float, float, float, float]:
     pad = 0.16 * max(np.ptp(x), np.ptp(y))
     wide, tall = np.ptp(x) + 2 * pad, np.ptp(y) + 2 * pad
     tall = max(tall, 0.45 * wide)
-    wide = max(wide, 0.6 * tall)
+    wide = max(wide, 0.85 * tall)
     middle_x, middle_y = (x.min() + x.max()) / 2, (y.min() + y.max()) / 2
     return middle_x - wide / 2, middle_x + wide / 2, middle_y - tall / 2, middle_y + tall / 2
 
@@ -134,8 +140,17 @@ def _disc(axes: Any, data: PathData, palette: Palette) -> None:
 
     radius = data.disc_radius_arcsec
     axes.add_patch(
-        Circle((0, 0), radius, facecolor=palette.disc, edgecolor=palette.quiet, linewidth=1.0, zorder=1)
+        Circle(
+            (0, 0),
+            radius,
+            facecolor=palette.disc if data.on_disc == "sun" else palette.paper,
+            edgecolor=palette.quiet,
+            linewidth=1.0,
+            zorder=1,
+        )
     )
+    if data.phase_angle_deg > 0:
+        axes.add_patch(_lit_part(data, palette))
     for share in (0.25, 0.5, 0.75):
         axes.add_patch(
             Circle((0, 0), share * radius, fill=False, edgecolor=palette.faint, linewidth=0.5, zorder=1.1)
@@ -143,6 +158,20 @@ def _disc(axes: Any, data: PathData, palette: Palette) -> None:
     for pa in range(0, 360, 30):
         x, y = _at_pa(data, pa, radius)
         axes.plot([0.25 * x, x], [0.25 * y, y], color=palette.faint, linewidth=0.5, zorder=1.1)
+
+
+def _lit_part(data: PathData, palette: Palette) -> Any:
+    """Return the sunlit part of the Moon as a patch: half the limb, and the ellipse of the terminator."""
+    from matplotlib.patches import Polygon
+
+    turn = np.radians(np.linspace(-90, 90, 91))
+    toward = np.concatenate([np.cos(turn), -np.cos(np.radians(data.phase_angle_deg)) * np.cos(turn[::-1])])
+    aside = np.concatenate([np.sin(turn), np.sin(turn[::-1])])
+    angle = np.radians(data.bright_limb_pa_deg - data.up_pa_deg)
+    x = -np.sin(angle) * toward - np.cos(angle) * aside
+    y = np.cos(angle) * toward - np.sin(angle) * aside
+    points = np.column_stack([x, y]) * data.disc_radius_arcsec
+    return Polygon(points, closed=True, facecolor=palette.lit, edgecolor="none", zorder=1.05)
 
 
 def _at_pa(data: PathData, pa_deg: float, reach: float) -> tuple[float, float]:
@@ -284,11 +313,13 @@ def _compass(axes: Any, data: PathData, palette: Palette, crowd: Crowd) -> None:
     """North, east, and the zenith at mid-event where it is known."""
     box = axes.get_window_extent()
     dots = axes.figure.dpi / 72
-    x, y = box.x0 + 46 * dots, box.y1 - 46 * dots
+    x, y = box.x0 + 50 * dots, box.y1 - 56 * dots
     arms = [("N", data.north_of_date_pa_deg if data.on_disc else 0.0, 24.0)]
     arms.append(("E", arms[0][1] + 90.0, 24.0))
     if np.isfinite(data.zenith_pa_deg) and not data.campaign:
-        arms.append(("zenith", data.zenith_pa_deg, 17.0))
+        arms.append(("zenith", data.zenith_pa_deg, 20.0))
+        crowded = min(abs((data.zenith_pa_deg - pa + 180) % 360 - 180) for _, pa, _ in arms[:2]) < 35
+        arms[-1] = ("zenith", data.zenith_pa_deg, 37.0 if crowded else 20.0)
     for label, pa, length in arms:
         angle = np.radians(pa - data.up_pa_deg)
         step = np.array([-np.sin(angle), np.cos(angle)]) * length * dots
@@ -300,10 +331,12 @@ def _compass(axes: Any, data: PathData, palette: Palette, crowd: Crowd) -> None:
                         "linewidth": 0.7 if thin else 1.1, "shrinkA": 0, "shrinkB": 0,
                         "mutation_scale": 6 if thin else 9, "linestyle": ":" if thin else "-"},
         )  # fmt: skip
-        name = axes.transData.inverted().transform((x + 1.42 * step[0], y + 1.42 * step[1]))
+        name = axes.transData.inverted().transform(
+            (x + step[0] * (1 + 10 * dots / np.hypot(*step)), y + step[1] * (1 + 10 * dots / np.hypot(*step)))
+        )
         axes.text(*name, label, fontsize=7 if thin else 9, color=palette.quiet if thin else palette.ink,
                   ha="center", va="center", zorder=7)  # fmt: skip
-    crowd.boxes.append((x - 42 * dots, y - 42 * dots, x + 42 * dots, y + 42 * dots))
+    crowd.boxes.append((x - 46 * dots, y - 40 * dots, x + 46 * dots, y + 52 * dots))
 
 
 def _scale_bar(axes: Any, view: tuple[float, float, float, float], palette: Palette, crowd: Crowd) -> None:
@@ -404,9 +437,7 @@ def _residual_panel(
         reach = float(np.nanpercentile(shown, 99.5)) * 1.2 or 1.0
         axes.set_ylim(-reach, reach)
         rms = float(np.sqrt(np.nanmean(value**2)))
-        axes.set_ylabel(f"{name} (″)", color=palette.ink, fontsize=8.5)
-        axes.annotate(f"rms {rms:.2g}″", (1, 1), xycoords="axes fraction", xytext=(-5, -4), fontsize=7.5,
-                      textcoords="offset points", ha="right", va="top", color=palette.quiet)  # fmt: skip
+        axes.set_ylabel(f"{name} (″)\nrms {rms:.2g}″", color=palette.ink, fontsize=8)
         axes.tick_params(colors=palette.quiet, labelcolor=palette.quiet, labelsize=8, length=3)
         for spine in axes.spines.values():
             spine.set_color(palette.quiet)
@@ -422,6 +453,10 @@ def _time_axis(axes: Any, data: PathData) -> None:
 
     locator = AutoDateLocator(minticks=4, maxticks=9, tz=data.zone)
     axes.xaxis.set_major_locator(locator)
-    axes.xaxis.set_major_formatter(ConciseDateFormatter(locator, tz=data.zone, show_offset=not data.campaign))
+    formatter = ConciseDateFormatter(locator, tz=data.zone, show_offset=not data.campaign)
+    formatter.formats = ["%Y", "%b", "%d", "%H:%M", "%H:%M", "%S.%f"]
+    formatter.zero_formats = ["", "%Y", "%b", "%d %b", "%H:%M", "%H:%M"]
+    formatter.offset_formats = ["", "%Y", "%B %Y", "%d %B %Y", "%d %B %Y", "%d %B %Y"]
+    axes.xaxis.set_major_formatter(formatter)
     axes.xaxis.get_offset_text().set_fontsize(8)
     axes.xaxis.get_offset_text().set_color(axes.xaxis.get_ticklabels()[0].get_color())

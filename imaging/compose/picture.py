@@ -51,3 +51,17 @@ class Picture:
     notes: tuple[str, ...] = ()
     enlargement: float = 1.0
     left_out: tuple[tuple[str, str], ...] = field(default=())
+
+    def faintest_peak(self) -> float:
+        """Return the peak value of the faintest target drawn on the sky beside a disc, infinity when there is none."""
+        if self.registered_on != "moon":
+            return np.inf
+        plane = self.image if self.image.ndim == 2 else self.image.mean(axis=2)
+        peaks = []
+        for item in self.drawn:
+            reach = int(max(2, item.radius_px + 1))
+            row, column = round(item.y_px), round(item.x_px)
+            box = plane[max(0, row - reach) : row + reach + 1, max(0, column - reach) : column + reach + 1]
+            if box.size and np.isfinite(box).any():
+                peaks.append(float(np.nanmax(box)))
+        return min(peaks, default=np.inf)

@@ -7,10 +7,12 @@ from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 
-from imaging.compose.plane import sky_to_plane
+from imaging.compose.plane import ARCSEC_PER_RADIAN, sky_to_plane
 
 if TYPE_CHECKING:
     from astropy.wcs import WCS
+
+    from planner.sky.observer import Observer
 
 
 class Pointing(Protocol):
@@ -37,10 +39,42 @@ class StarPointing:
 
 
 @dataclass(frozen=True)
+class Air:
+    """The refracting air over a frame: lifts directions toward the zenith (unit vector, ICRS axes)."""
+
+    zenith: tuple[float, float, float]
+    observer: Observer
+
+    def lifted(self, direction: np.ndarray) -> np.ndarray:
+        """Return unit vectors (..., 3) as seen; what lies more than 3 degrees below the horizon stays."""
+        from planner.sky.refraction import refraction_arcsec
+
+        zenith = np.asarray(self.zenith)
+        height = direction @ zenith
+        altitude_deg = np.degrees(np.arcsin(np.clip(height, -1.0, 1.0)))
+        lift = (refraction_arcsec(altitude_deg, self.observer) / ARCSEC_PER_RADIAN)[..., None]
+        along = zenith - height[..., None] * direction
+        along /= np.maximum(np.linalg.norm(along, axis=-1, keepdims=True), 1e-12)
+        return np.cos(lift) * direction + np.sin(lift) * along
+
+
+def _unit(ra_deg: np.ndarray, dec_deg: np.ndarray) -> np.ndarray:
+    ra, dec = np.radians(ra_deg), np.radians(dec_deg)
+    return np.stack([np.cos(dec) * np.cos(ra), np.cos(dec) * np.sin(ra), np.sin(dec)], axis=-1)
+
+
+def _radec(vector: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    return np.degrees(np.arctan2(vector[..., 1], vector[..., 0])), np.degrees(
+        np.arcsin(np.clip(vector[..., 2], -1, 1))
+    )
+
+
+@dataclass(frozen=True)
 class DiscPointing:
     """A frame registered on the limb of a disc, whose place on the sky (`ra_deg`, `dec_deg`) is the predicted one.
 
-    `rotation_deg` is the position angle of the array's +y direction, `parity` +1 when +x lies 90 degrees west of it.
+    `x_px`, `y_px`: where the refracted centre of the disc was found. `rotation_deg`: position angle of the array's +y
+    direction; `parity`: +1 when +x lies 90 degrees west of it, -1 when east.
     """
 
     x_px: float
@@ -50,10 +84,15 @@ class DiscPointing:
     parity: int
     ra_deg: float
     dec_deg: float
+    air: Air | None = None
 
     def sky_to_pixel(self, ra_deg: np.ndarray, dec_deg: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Return 0-based array pixels of ICRS directions; the field is taken as undistorted about the disc."""
-        east, north = sky_to_plane(self.ra_deg, self.dec_deg, ra_deg, dec_deg)
+        """Return 0-based array pixels of ICRS directions, refracted; the field is taken as undistorted."""
+        center = self.ra_deg, self.dec_deg
+        if self.air is not None:
+            center = tuple(float(x) for x in _radec(self.air.lifted(_unit(*center))))
+            ra_deg, dec_deg = _radec(self.air.lifted(_unit(ra_deg, dec_deg)))
+        east, north = sky_to_plane(*center, ra_deg, dec_deg)
         sin, cos = np.sin(np.radians(self.rotation_deg)), np.cos(np.radians(self.rotation_deg))
         along_y = (east * sin + north * cos) / self.scale_arcsec_px
         along_x = self.parity * (north * sin - east * cos) / self.scale_arcsec_px

@@ -208,8 +208,9 @@ def _lay(
         slice(box[1].start - column + half, box[1].stop - column + half),
     )
     radius_px = glow_radius_px(patch, patch_canvas.anchor_x_px, patch_canvas.anchor_y_px)
+    # the feather lies inside the glow: beyond it the patch has only the noise of one visit to add
     lay_patch(
-        image[box], patch[cut], x_px - box[1].start, y_px - box[0].start, radius_px, 0.5 * radius_px + 2
+        image[box], patch[cut], x_px - box[1].start, y_px - box[0].start, 0.55 * radius_px, 0.45 * radius_px
     )
     middle = frames[len(frames) // 2]
     predicted = np.array(

@@ -8,13 +8,14 @@ import numpy as np
 
 SKY_TONE = 0.10  # of 0 (black) to 1 (white): a dark grey, so that faint stars have a ground to stand on
 WHITE_TONE = 0.97
+FAINT_TONE = 0.45  # where the faintest body that must be seen goes
 
 
 @dataclass(frozen=True)
 class Stretch:
     """How values become tones between 0 and 1.
 
-    `kind`: `linear` (tones proportional to light), `disc` (proportional, then encoded as sRGB does) or `stars`
+    `kind`: `linear` (tones proportional to light), `srgb` (proportional, then encoded as sRGB does) or `asinh`
     (inverse hyperbolic sine of Lupton et al. 1999, AJ 118, 1406, already a display tone). `softening`: value above
     black where the curve turns from linear to logarithmic.
     """
@@ -28,17 +29,17 @@ class Stretch:
         """Return display tones in 0..1, float32; where the picture is empty (NaN) the tone is 0."""
         value = np.nan_to_num(np.asarray(image, np.float32), nan=self.black)
         share = np.clip((value - self.black) / (self.white - self.black), 0.0, 1.0)
-        if self.kind == "stars":
+        if self.kind == "asinh":
             steep = (self.white - self.black) / self.softening
             return (np.arcsinh(share * steep) / np.arcsinh(steep)).astype(np.float32)
-        return srgb_encoded(share) if self.kind == "disc" else share.astype(np.float32)
+        return srgb_encoded(share) if self.kind == "srgb" else share.astype(np.float32)
 
     def sentence(self) -> str:
         """Return what was done, for the statement of truth."""
         how = {
             "linear": "tones proportional to light",
-            "disc": "tones proportional to light, sRGB encoded",
-            "stars": f"inverse hyperbolic sine, softening {self.softening:.4g}",
+            "srgb": "tones proportional to light, sRGB encoded",
+            "asinh": f"inverse hyperbolic sine, softening {self.softening:.4g}",
         }[self.kind]
         return f"{how}, black at {self.black:.6g}, white at {self.white:.6g}"
 
@@ -64,38 +65,43 @@ def background(image: np.ndarray) -> tuple[float, float]:
     return center, sigma
 
 
-def measured_stretch(image: np.ndarray, kind: str) -> Stretch:
-    """Return the stretch for a picture of this kind (`disc`, `stars`, `linear`), measured on it.
+def measured_stretch(image: np.ndarray, tone: str, faintest: float = np.inf) -> Stretch:
+    """Return the stretch for a picture of this tone (`disc`, `stars`, `linear`), measured on it.
 
     Stars: the background goes to a dark grey, the brightest pixels (99.98 %) to white. Disc: what lies off the
-    disc goes to black, the brightest hundredth of the disc to just under white.
+    disc goes to black, the brightest hundredth of the disc to just under white; where a body of peak value
+    `faintest` would be lost beside it, the curve bends until it is seen.
     """
     values = _sample(image)
     if not values.size:
         return Stretch("linear", 0.0, 1.0)
     top = float(np.percentile(values, 99.98))
     level, sigma = background(image)
-    if kind == "linear":
+    if tone == "linear":
         return Stretch("linear", min(0.0, float(values.min())), max(float(values.max()), 1e-6))
-    if kind == "disc":
+    if tone == "disc":
         black = float(np.percentile(values, 2.0))
         half = black + 0.25 * (top - black)
         lit = values[values > half]
         bright = float(np.percentile(lit, 99.0)) if lit.size else top
         white = black + (bright - black) / _light_of(WHITE_TONE)
-        return Stretch("disc", black, max(white, black + 1e-6))
+        white = max(white, black + 1e-6)
+        share = (faintest - black) / (white - black)
+        if not 0 < share < _light_of(FAINT_TONE):
+            return Stretch("srgb", black, white)
+        return Stretch("asinh", black, white, _softening(faintest - black, white - black, FAINT_TONE))
     black = level - 3.0 * max(sigma, 1e-6 * abs(level), 1e-9)
     white = max(top, level + 50 * max(sigma, 1e-9))
-    return Stretch("stars", black, white, _softening(level - black, white - black))
+    return Stretch("asinh", black, white, _softening(level - black, white - black))
 
 
-def _softening(sky: float, span: float) -> float:
-    """Return the softening that puts the sky at SKY_TONE; the curve is monotonic in it."""
-    low, high = sky * 1e-3, span * 1e3
+def _softening(value: float, span: float, wanted: float = SKY_TONE) -> float:
+    """Return the softening that gives a value this tone; the curve is monotonic in it."""
+    low, high = value * 1e-3, span * 1e3
     for _ in range(80):
         middle = np.sqrt(low * high)
-        tone = np.arcsinh(sky / middle) / np.arcsinh(span / middle)
-        low, high = (middle, high) if tone > SKY_TONE else (low, middle)
+        tone = np.arcsinh(value / middle) / np.arcsinh(span / middle)
+        low, high = (middle, high) if tone > wanted else (low, middle)
     return float(np.sqrt(low * high))
 
 

@@ -49,7 +49,7 @@ def statement(material: Material, picture: Picture, stretch: str | None = None) 
             "conventions": {
                 "places": "topocentric, light-time applied, neither aberration nor deflection; ICRS",
                 "up": "position angle of the picture's up direction, from ICRS north through east",
-                "discs": "positions on a disc as seen through the air",
+                "discs": "refraction is taken out: a low Sun or Moon is drawn round, as without air",
             },
             "notes": list(picture.notes),
             "drawn": [_drawn(item, scale) for item in picture.drawn],

@@ -9,7 +9,7 @@ from astropy.io import fits
 from astropy.table import Table
 from astropy.wcs import WCS
 
-from imaging.track.path import as_seen, tangent_offsets, target_place, unit_vectors
+from imaging.track.path import as_seen, target_place
 from imaging.track.table import TrackRow, write_track
 from planner.events.catalogue import family
 from planner.sequence.documents import event_spec, observer_of
@@ -69,8 +69,12 @@ def track_from_truth(plan, folder: Path, out: Path, sigma_px: float = 0.0, seed:
             )
             continue
         disc = geometry.discs[geometry.reference]
-        true = tangent_offsets(disc.ra_deg[i], disc.dec_deg[i], unit_vectors(ra[i], dec[i]))
-        seen = as_seen(*true, geometry.altitude_deg[i], geometry.zenith_pa_deg[i], observer)
+        one = slice(i, i + 1)
+        seen = as_seen(
+            (ra[one], dec[one]), (disc.ra_deg[one], disc.dec_deg[one]),
+            geometry.altitude_deg[one], geometry.zenith_pa_deg[one], observer,
+        )  # fmt: skip
+        seen = float(seen[0][0]), float(seen[1][0])
         away = np.hypot(*seen)
         hidden = geometry.reference == "moon" and away < disc.semidiameter_arcsec[i]
         beside = geometry.reference == "sun" and away > disc.semidiameter_arcsec[i]
