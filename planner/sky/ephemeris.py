@@ -7,6 +7,7 @@ centre lies up to 0.07", Saturn's up to 0.05" away as seen from the Earth.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable
 from dataclasses import dataclass
 from functools import lru_cache
@@ -47,6 +48,12 @@ class ChebyshevSegment:
     def end_s(self) -> float:
         """Last TDB second covered."""
         return self.start_s + self.interval_s * len(self.records)
+
+    def at(self, tdb_s: float) -> np.ndarray:
+        """Return the position (3,) in km at one time."""
+        row = self.records[min(max(int((tdb_s - self.start_s) / self.interval_s), 0), len(self.records) - 1)]
+        angle = math.acos(min(1.0, max(-1.0, (tdb_s - row[0]) / row[1])))
+        return row[2:].reshape(3, self.terms) @ np.cos(angle * np.arange(self.terms))
 
     def evaluate(self, tdb_s: np.ndarray, with_velocity: bool) -> tuple[np.ndarray, np.ndarray | None]:
         """Return position (3, n) in km, and velocity (3, n) in km/s where it is wanted."""
@@ -128,6 +135,17 @@ class Ephemeris:
                     position += sign * self.segments[step].evaluate(tdb_s, False)[0]
         return position
 
+    def snapshot_km(self, bodies: tuple[str, ...], tdb_s: float) -> np.ndarray:
+        """Return the barycentric positions (bodies, 3) in km of many bodies at one time, for integrators."""
+        places: dict[tuple[int, int], np.ndarray] = {}
+        result = np.zeros((len(bodies), 3))
+        for row, body in enumerate(bodies):
+            for step in self._chain(body):
+                if step not in places:
+                    places[step] = self.segments[step].at(tdb_s)
+                result[row] += places[step]
+        return result
+
     def _chain(self, body: str) -> Iterable[tuple[int, int]]:
         try:
             chain = CHAINS[body]
@@ -158,7 +176,8 @@ def mapped_segment(segment) -> ChebyshevSegment:  # type: ignore[no-untyped-def]
     # a map of its own, so that the kernel's file object may be closed
     whole = np.memmap(daf.file.name, daf.endian + "d", mode="r")
     first = segment.start_i - 1
-    records = whole[first : first + width * count].reshape(count, width)
+    # a plain view: the subclass costs microseconds at every index
+    records = whole[first : first + width * count].reshape(count, width).view(np.ndarray)
     return ChebyshevSegment(records, start_s, interval_s, (width - 2) // 3)
 
 
