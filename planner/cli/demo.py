@@ -40,7 +40,7 @@ def command(output: Path | None, configs: Path | None, only: str | None) -> int:
     """
     import time
 
-    from planner.errors import EXIT_DONE
+    from planner.errors import EXIT_DONE, EXIT_WITH_RESERVATIONS
 
     briefs = _briefs(configs)
     root = output or _free_folder(Path("demo_output"))
@@ -49,7 +49,7 @@ def command(output: Path | None, configs: Path | None, only: str | None) -> int:
     for count, (name, frames, binning) in enumerate(journeys, 1):
         click.secho(f"\n[{count} of {len(journeys)}] {name}", bold=True)
         code = _journey(briefs / f"{name}.yaml", root / name, frames, binning)
-        if code != EXIT_DONE:
+        if code not in (EXIT_DONE, EXIT_WITH_RESERVATIONS):
             click.echo(f"the demo stopped here: exit code {code}", err=True)
             return code
     click.secho(f"\nDone in {time.perf_counter() - begun:.0f} s. Look at:", bold=True)
@@ -82,14 +82,15 @@ def _journey(brief: Path, folder: Path, frames: int, binning: int) -> int:
         ["compose", plan, checked / "track.ecsv", "--frames", drawn, "-o", folder / "pictures"],
     )
     from planner.cli.main import run_with
+    from planner.errors import EXIT_DONE, EXIT_WITH_RESERVATIONS
 
     for step in steps:
         words = [str(word) for word in step]
         click.secho(f"$ syzygraph {' '.join(words)}", fg="cyan")
         code = run_with(words)
-        if code:
+        if code > EXIT_WITH_RESERVATIONS:
             return code
-    return 0
+    return EXIT_DONE
 
 
 def _briefs(configs: Path | None) -> Path:
