@@ -8,7 +8,7 @@ with direct evaluation to 1 ms (planets' discs: 2 ms).
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -26,7 +26,8 @@ _TARGET_TERMS = 4
 # Contacts of a passing are within 1.3 h of its middle, however slow.
 _CONTACT_REACH_S = 1.3 * 3600.0
 _CLOSEST_REACH_S = _HALF_SPAN_S - _CONTACT_REACH_S
-_HALF_STEP_S = 1.0
+# Rates are differences over this; the mean of two chords then stands for the one between, to 0.01 ms.
+_HALF_STEP_S = 0.1
 # After two steps closest approaches are known to some 10 arcsec: passings beyond half a degree are left there.
 _WORTH_A_LOOK_RAD = np.radians(0.5)
 # A star is put so far away that a site has no parallax on it: 1e15 km, 30 parsec.
@@ -93,6 +94,11 @@ class MoonPassings:
             self.outline.radius_km[keep], self.outline.squeezed[keep], self.outline.pole[:, keep]
         )
         return MoonPassings(**along_last, moon_radius_km=self.moon_radius_km, outline=outline)
+
+    def of_points(self) -> MoonPassings:
+        """Return the same passings with every target taken as a point: contacts are then of centres."""
+        outline = replace(self.outline, radius_km=np.zeros_like(self.outline.radius_km))
+        return replace(self, outline=outline)
 
     def geocentric(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
         """Return the geocentric closest approach (TT s), its gap between limbs, and the Moon's parallax, arcsec."""

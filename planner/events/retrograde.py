@@ -9,7 +9,7 @@ import numpy as np
 
 from planner.errors import InputError
 from planner.events import cautions, conjunctions
-from planner.events.apparent import apparent_syzygies, motion
+from planner.events.apparent import apparent_syzygies, mean_motion, motion, true_motion
 from planner.events.budget import EPHEMERIS_SIGMA_KM
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
@@ -32,6 +32,8 @@ _DIRECT_AGAIN_DAY = {
     "uranus": 120.0,
     "neptune": 120.0,
 }
+# A secant step this short leaves an error a thousand times smaller.
+_SETTLED_S = 20.0
 _REACHES_YEAR = (0.7, 1.7, 2.5)
 # The path is shown from half a retrograde arc before the first station to half of one after the second; whether it
 # closes to a loop is decided on one and a half, where the planet has passed its first station again.
@@ -190,13 +192,31 @@ def middles(body: str, start_tt_s: float, end_tt_s: float) -> np.ndarray:
 
 
 def stations(body: str, middle_tt_s: np.ndarray, axis: str) -> np.ndarray:
-    """Return the two stations (n, 2) about each middle, in `ra` or `longitude`, in TT seconds."""
+    """Return the two stations (n, 2) about each middle, in `ra` or `longitude`, in TT seconds.
+
+    Found without nutation, which is smooth and cheap, then moved by minutes (Mercury) to hours (Neptune) to where
+    the true coordinate stands still. A middle need only be good to some days.
+    """
     middle_tt_s = np.atleast_1d(np.asarray(middle_tt_s, dtype=float))
     reach = _DIRECT_AGAIN_DAY[body] * DAY_S
     low = np.concatenate([middle_tt_s - reach, middle_tt_s])
     high = np.concatenate([middle_tt_s, middle_tt_s + reach])
-    found = roots_between(lambda tt_s, which: motion(body, tt_s, axis), low, high, tolerance_s=1e-3)
-    return found.reshape(2, -1).T
+    t = roots_between(lambda tt_s, which: mean_motion(body, tt_s, axis), low, high, tolerance_s=60.0)
+    live = np.flatnonzero(np.isfinite(t))
+    half = 0.25 * DAY_S
+    ends = mean_motion(body, np.concatenate([t[live] - half, t[live] + half]), axis).reshape(2, -1)
+    slope = (ends[1] - ends[0]) / (2.0 * half)
+    rate = true_motion(body, t[live], axis)
+    for _ in range(4):
+        move = np.clip(-rate / slope, -DAY_S, DAY_S)
+        t[live] += move
+        go = np.abs(move) > _SETTLED_S
+        if not go.any():
+            break
+        live, move, before = live[go], move[go], rate[go]
+        rate = true_motion(body, t[live], axis)
+        slope = (rate - before) / move
+    return t.reshape(2, -1).T
 
 
 def path_facts(body: str, by_ra: np.ndarray, by_longitude: np.ndarray) -> dict:
