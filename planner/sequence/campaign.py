@@ -10,7 +10,7 @@ from math import ceil
 import numpy as np
 
 from planner.sequence import exposure, radiometry
-from planner.sequence.framing import Field, Framing, best_angle_deg, field_of, frame_track
+from planner.sequence.framing import Field, Framing, best_angle_deg, field_of, frame_track, fullest_aim
 from planner.sequence.models import Passage, Rig, Shot
 from planner.sequence.motion import hour_angle_deg, motion
 from planner.sequence.nights import Nights, reserve_nights, spread_evenly, usable_nights, wanted_visits
@@ -110,14 +110,13 @@ def _aims(setting: Setting, visits: Nights, field: Field) -> tuple[Framing, dict
     level = Field(
         field.half_width_arcsec, field.half_height_arcsec, setting.rig.camera_angle_deg, field.parity
     )
-    ground = frame_track(level, -visits.azimuth_deg, visits.altitude_deg)
-    middle = int(np.argmin(np.abs(visits.altitude_deg - np.median(visits.altitude_deg))))
+    azimuth, altitude = fullest_aim(level, -visits.azimuth_deg, visits.altitude_deg)
     where = {
         "aim": "ground",
-        "aim_altitude_deg": round(float(ground.dec_deg[middle]), 3),
-        "aim_azimuth_deg": round(float(-ground.ra_deg[middle]) % 360.0, 3),
+        "aim_altitude_deg": round(altitude, 3),
+        "aim_azimuth_deg": round(-azimuth % 360.0, 3),
     }
-    return Framing(visits.disc.ra_deg, visits.disc.dec_deg, ground.whole), where
+    return Framing(visits.disc.ra_deg, visits.disc.dec_deg, True), where
 
 
 @dataclass(frozen=True)

@@ -75,6 +75,37 @@ def frame_track(field: Field, ra_deg: np.ndarray, dec_deg: np.ndarray, margin: f
     return Framing(ra_aim, dec_aim, whole)
 
 
+def fullest_aim(
+    field: Field, ra_deg: np.ndarray, dec_deg: np.ndarray, margin: float = MARGIN
+) -> tuple[float, float]:
+    """Return the one pointing (ra_deg, dec_deg) whose frame, less its margin, holds most of these places."""
+    framing = frame_track(field, ra_deg, dec_deg, margin)
+    counts = [
+        int(inside(field, float(ra), float(dec), ra_deg, dec_deg, margin).sum())
+        for ra, dec in zip(framing.ra_deg, framing.dec_deg, strict=True)
+    ]
+    best = int(np.argmax(counts))
+    return float(framing.ra_deg[best]), float(framing.dec_deg[best])
+
+
+def inside(
+    field: Field,
+    aim_ra_deg: np.ndarray | float,
+    aim_dec_deg: np.ndarray | float,
+    ra_deg: np.ndarray,
+    dec_deg: np.ndarray,
+    margin: float = 0.0,
+) -> np.ndarray:
+    """Return which places lie in the frame of a pointing, or each in that of its own."""
+    from planner.sky.places import offsets_arcsec
+
+    right, up = field.along(*offsets_arcsec(aim_ra_deg, aim_dec_deg, ra_deg, dec_deg))
+    # the frame is a rectangle on the tangent plane, where offsets beyond 90 degrees are NaN
+    return (np.abs(right) <= field.half_width_arcsec * (1 - 2 * margin) + 1) & (
+        np.abs(up) <= field.half_height_arcsec * (1 - 2 * margin) + 1
+    )
+
+
 def _excess(offset: np.ndarray, reach: float) -> np.ndarray:
     return offset - np.clip(offset, -reach, reach)
 

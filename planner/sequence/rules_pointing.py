@@ -6,8 +6,9 @@ from collections.abc import Iterator
 
 import numpy as np
 
+from planner.events.family import Geometry
 from planner.sequence.feasibility import Case
-from planner.sequence.framing import field_of
+from planner.sequence.framing import field_of, inside
 from planner.sequence.models import Finding, Plan
 
 SUN_FORBIDDEN_DEG, SUN_CAUTION_DEG = 5.0, 30.0
@@ -111,6 +112,43 @@ def does_not_fit(case: Case) -> Iterator[Finding]:
             sentence="The track is larger than the frame with its margin, so the pointing moves along it.",
             cure="The composite becomes a mosaic; camera_angle: best or a shorter focal length may hold it all.",
         )
+
+
+def target_leaves_frame(case: Case) -> Iterator[Finding]:
+    """The target itself is not in the frame."""
+    if not len(case.sample_rows):
+        return
+    from planner.sequence.frametimes import planned_frames
+
+    frames = planned_frames(case.plan)
+    still = np.isin(frames.start_tt_s, case.frames[2][case.sample_rows])
+    rows = np.flatnonzero(still)[: len(case.sample_rows)]
+    sky = case.setting.geometry(frames.middle_tt_s[rows])
+    held = np.array(
+        [
+            bool(inside(field_of(case.plan.rig, float(frames.rotation_deg[row])), ra0, dec0, ra, dec)[0])
+            for row, ra0, dec0, ra, dec in zip(
+                rows, frames.ra_deg[rows], frames.dec_deg[rows], *_target_columns(sky), strict=True
+            )
+        ]
+    )
+    if not held.all():
+        lost = [case.plan.passages[int(frames.passage[row])].name for row in rows[~held]]
+        names = list(dict.fromkeys(lost))
+        yield Finding(
+            rule="target-leaves-frame",
+            level="caution" if held.any() else "error",
+            where=names[0] if len(names) == 1 else f"{names[0]} to {names[-1]} ({len(names)} passages)",
+            sentence=f"In {100 * float((~held).mean()):.0f} % of the frames looked at the target is outside the field.",
+            cure="A shorter focal length, fewer visits, another camera angle, or a mount that follows.",
+        )
+
+
+def _target_columns(sky: Geometry) -> tuple[np.ndarray, np.ndarray]:
+    from planner.sequence.recipes import place_of
+
+    ra_deg, dec_deg = place_of(sky, sky.target)
+    return ra_deg[:, None], dec_deg[:, None]
 
 
 def margin_thin(case: Case) -> Iterator[Finding]:
@@ -217,6 +255,7 @@ RULES = (
     field_turns,
     near_zenith,
     does_not_fit,
+    target_leaves_frame,
     margin_thin,
     too_few_stars,
     sun_near,
