@@ -95,7 +95,9 @@ def monomials(u: np.ndarray, v: np.ndarray, terms: tuple[tuple[int, int], ...]) 
     return np.array([power_u[p] * power_v[q] for p, q in terms]).reshape(len(terms), *np.shape(u))
 
 
-def unproject(u: np.ndarray, v: np.ndarray, focal_px: float, projection: str = "TAN") -> np.ndarray:
+def unproject(
+    u: np.ndarray, v: np.ndarray, focal_px: float | np.ndarray, projection: str = "TAN"
+) -> np.ndarray:
     """Return unit vectors (n, 3) in camera axes of ideal offsets from the optical axis."""
     radius = np.hypot(u, v)
     theta = np.arctan(radius / focal_px) if projection == "TAN" else np.minimum(radius / focal_px, np.pi)

@@ -1,4 +1,4 @@
-"""A solution from a rough pointing and scale: local quads of the sky around the hint, made on the fly."""
+"""A solution from a rough pointing and scale: groups of stars around the hint, made on the fly."""
 
 from __future__ import annotations
 
@@ -8,8 +8,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from imaging.stars.camera import ARCSEC_RAD, Camera, Lens, unproject
-from imaging.stars.hypotheses import hypotheses, pair_quads
-from imaging.stars.quads import local_quads
+from imaging.stars.groups import local_groups
+from imaging.stars.hypotheses import hypotheses, pair_groups
+from imaging.stars.prescreen import promising
 from imaging.stars.refine import Field, Match, Sky, grow
 from imaging.stars.verify import ACCEPT_LOG10
 
@@ -18,13 +19,14 @@ SCALE_TOLERANCE = 0.12
 
 @dataclass(frozen=True)
 class Effort:
-    """How widely to search: reach in field radii, stars a field, neighbours that make quads, in image and sky."""
+    """How widely to search: reach in field radii, stars a field, neighbours that make groups of `size`."""
 
     reach: float
     image_stars: int
     sky_stars: int
     image_neighbours: int
     sky_neighbours: int
+    size: int = 4
 
 
 # From the cheap and likely to the dear and rare: nearby and clean, clouded, far off, far off and clouded.
@@ -34,16 +36,17 @@ EFFORTS = (
     Effort(4.0, 50, 70, 6, 7),
     Effort(2.0, 70, 250, 6, 11),
     Effort(4.0, 50, 130, 6, 10),
+    Effort(1.2, 40, 150, 39, 14, size=3),
+    Effort(4.0, 40, 100, 39, 12, size=3),
 )
-# Where the catalogue has few stars a field: every quad of the brightest, because hot pixels and planets are among them.
+# Where the catalogue has few stars: every triple of the brightest, as hot pixels and planets are among them.
 SPARSE_EFFORTS = (
-    Effort(1.2, 18, 200, 17, 10),
-    Effort(1.2, 30, 200, 29, 14),
-    Effort(4.0, 18, 200, 17, 8),
-    Effort(4.0, 28, 200, 27, 10),
+    Effort(1.2, 24, 200, 23, 12, size=3),
+    Effort(1.2, 45, 200, 44, 16, size=3),
+    Effort(4.0, 24, 200, 23, 10, size=3),
+    Effort(4.0, 40, 200, 39, 14, size=3),
 )
-_SPARSE = 45  # catalogue stars a field
-_MOST_TESTED = 150  # hypotheses grown at each effort
+_SPARSE = 60  # catalogue stars a field
 
 
 @dataclass(frozen=True)
@@ -85,19 +88,18 @@ def solve_hinted(
         if used < 4:
             break
         image_vectors = unproject(field.x_px[:used] - x0, field.y_px[:used] - y0, focal, lens.projection)
-        image = local_quads(image_vectors, effort.image_neighbours)
+        image = local_groups(image_vectors, effort.size, effort.image_neighbours)
         sky = sky_near(min(radius * (1 + effort.reach), np.pi), effort.sky_stars / field_sr)
         if len(sky) < 4:
             continue
-        sky_quads = local_quads(sky.vectors, effort.sky_neighbours, 2 * radius * (1 + scale_tolerance))
-        pairs = pair_quads(image, sky_quads, scale_tolerance)
-        guesses = hypotheses(field, sky, image_vectors, image, sky_quads, pairs, focal, half, parity)
-        near = (guesses.focal_px < focal * (1 + scale_tolerance)) & (
-            guesses.focal_px > focal / (1 + scale_tolerance)
+        groups = local_groups(
+            sky.vectors, effort.size, effort.sky_neighbours, 2 * radius * (1 + scale_tolerance)
         )
-        chosen = np.flatnonzero(near)
-        trials += len(chosen)
-        for i in chosen[:_MOST_TESTED]:
+        pairs = pair_groups(image, groups, scale_tolerance)
+        allowed = (focal / (1 + scale_tolerance), focal * (1 + scale_tolerance))
+        guesses = hypotheses(field, sky, image, groups, pairs, focal, allowed, parity, lens.projection)
+        trials += len(guesses)
+        for i in promising(guesses, field, sky):
             camera = Camera(guesses.axes[i], guesses.focal_px[i], x0, y0, half, projection=lens.projection)
             match = grow(camera, lens, field, sky, guesses.image_stars[i], guesses.sky_stars[i])
             if match is None:

@@ -1,4 +1,4 @@
-"""Hypotheses of where a frame points, from quads that look alike, the ones that agree with each other first."""
+"""Hypotheses of where a frame points, from groups of stars that look alike, those that agree first."""
 
 from __future__ import annotations
 
@@ -6,19 +6,21 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from imaging.stars.quads import Quads
+from imaging.stars.camera import unproject
+from imaging.stars.groups import Groups
 from imaging.stars.refine import Field, Sky
 
 CODE_TOLERANCE = 0.012  # 1 % of distortion across a frame changes a local quad's ratios by less
 _VOTE_CENTER = 0.04  # of the half-diagonal
 _VOTE_TURN_RAD = 0.03
 _VOTE_SCALE = 0.02
+_LOOSEST = 0.05  # residual of a group, in its own radius
 _MAGNITUDE_SPREAD = 2.2  # of four stars between frame and catalogue: stretched pictures, colours, thin cloud
 
 
 @dataclass(frozen=True)
 class Hypotheses:
-    """n guesses, most supported first: pairs of four stars, camera axes (n, 3, 3), focal length in pixels, support."""
+    """n guesses, most supported first: pairs of stars (n, k), axes (n, 3, 3), focal length (px), support."""
 
     image_stars: np.ndarray
     sky_stars: np.ndarray
@@ -31,20 +33,20 @@ class Hypotheses:
         return len(self.focal_px)
 
 
-def pair_quads(
-    image: Quads, sky: Quads, scale_tolerance: float, limit: int = 40_000
+def pair_groups(
+    image: Groups, sky: Groups, scale_tolerance: float, limit: int = 60_000, tolerance: float = CODE_TOLERANCE
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Return indices (image quad, sky quad) of quads of like shape and, within the tolerance, like size."""
+    """Return indices (image group, sky group) of groups of like shape and, within the tolerance, like size."""
     from scipy.spatial import cKDTree
 
     if len(image) == 0 or len(sky) == 0:
         return np.empty(0, int), np.empty(0, int)
-    stretch = CODE_TOLERANCE / max(np.log1p(scale_tolerance), 1e-3)
+    stretch = tolerance / max(np.log1p(scale_tolerance), 1e-3)
     sky_tree = cKDTree(
         np.column_stack([sky.codes, np.log(sky.longest) * stretch]), balanced_tree=False, compact_nodes=False
     )
     image_points = np.column_stack([image.codes, np.log(image.longest) * stretch])
-    found = sky_tree.query_ball_point(image_points, r=CODE_TOLERANCE * 1.2)
+    found = sky_tree.query_ball_point(image_points, r=tolerance * 1.2)
     number = np.array([len(one) for one in found])
     first = np.repeat(np.arange(len(image)), number)
     second = (
@@ -69,50 +71,60 @@ def as_bright(field: Field, sky: Sky, image_stars: np.ndarray, sky_stars: np.nda
 def hypotheses(
     field: Field,
     stars: Sky,
-    image_vectors: np.ndarray,
-    image: Quads,
-    sky: Quads,
+    image: Groups,
+    sky: Groups,
     pairs: tuple[np.ndarray, np.ndarray],
     focal_px: float,
-    half_diagonal_px: float,
+    focal_range_px: tuple[float, float],
     parity: int | None = None,
+    projection: str = "TAN",
 ) -> Hypotheses:
-    """Return the cameras that carry paired quads onto each other, sorted by how many others agree with each.
+    """Return the cameras that carry paired groups onto each other, sorted by how many others agree with each.
 
-    `image_vectors` are in camera axes, de-projected with `focal_px`. `parity` as in DEVELOPERS.md, None when unknown.
+    The groups of the image were made with `focal_px`; each hypothesis gets its own focal length, within
+    `focal_range_px`. `parity` as in DEVELOPERS.md, None when unknown.
     """
-    from scipy.spatial import cKDTree
-
     first, second = pairs
+    focal = focal_px * image.longest[first] / sky.longest[second]
     image_stars, sky_stars = image.stars[first], sky.stars[second]
-    keep = as_bright(field, stars, image_stars, sky_stars)
-    first, second, image_stars, sky_stars = first[keep], second[keep], image_stars[keep], sky_stars[keep]
-    seen, true = image_vectors[image_stars], stars.vectors[sky_stars]
+    keep = (focal > focal_range_px[0]) & (focal < focal_range_px[1])
+    keep &= as_bright(field, stars, image_stars, sky_stars)
+    image_stars, sky_stars, focal = image_stars[keep], sky_stars[keep], focal[keep]
+    height, width = field.shape
+    u, v = field.x_px[image_stars] - (width - 1) / 2, field.y_px[image_stars] - (height - 1) / 2
+    seen = unproject(u, v, focal[:, None], projection)
+    true = stars.vectors[sky_stars]
     axes = _axes(seen, true, parity)
-    residual = np.linalg.norm(np.einsum("nij,nkj->nki", axes, true) - seen, axis=2)
-    zoom = image.longest[first] / sky.longest[second]
-    # the rotation cannot absorb the zoom, so it is part of the residual of a good pair
-    allowed = (0.03 + 0.75 * np.abs(zoom - 1)) * image.longest[first]
-    keep = residual.max(axis=1) < allowed
-    image_stars, sky_stars, axes, zoom = image_stars[keep], sky_stars[keep], axes[keep], zoom[keep]
-    focal = focal_px * zoom
-    votes = np.ones(len(focal), dtype=int)
-    if len(focal) > 1:
-        field_rad = half_diagonal_px / focal_px
-        middle = seen[keep].mean(axis=1)
-        # where the middle of the frame falls: the quad's own place, then outwards by the quad's own scale
-        center = _center(axes, middle, true[keep].mean(axis=1), zoom)
-        place = np.column_stack(
-            [
-                center / (_VOTE_CENTER * field_rad),
-                axes[:, 0] / _VOTE_TURN_RAD,
-                np.log(zoom)[:, None] / _VOTE_SCALE,
-            ]
-        )
-        tree = cKDTree(place)
-        votes = tree.query_ball_point(place, r=1.0, return_length=True)
+    residual = np.linalg.norm(np.einsum("nij,nkj->nki", axes, true) - seen, axis=2).max(axis=1)
+    size = np.linalg.norm(true - true.mean(axis=1, keepdims=True), axis=2).max(axis=1)
+    keep = residual < _LOOSEST * size
+    image_stars, sky_stars, axes, focal = image_stars[keep], sky_stars[keep], axes[keep], focal[keep]
+    votes = _votes(axes, focal, field.half_diagonal_px)
     order = np.argsort(-votes, kind="stable")
     return Hypotheses(image_stars[order], sky_stars[order], axes[order], focal[order], votes[order])
+
+
+def _votes(axes: np.ndarray, focal_px: np.ndarray, half_diagonal_px: float) -> np.ndarray:
+    """Return how many hypotheses agree with each (itself included) on centre, roll, mirror and scale."""
+    from scipy.spatial import cKDTree
+
+    votes = np.ones(len(focal_px), dtype=int)
+    octave = np.floor(np.log2(np.maximum(focal_px, 1e-9)) * 2).astype(int)
+    for one in np.unique(octave):  # the sky is finer where the scale is finer
+        index = np.flatnonzero(octave == one)
+        if len(index) < 2:
+            continue
+        field_rad = np.arctan(half_diagonal_px / np.median(focal_px[index]))
+        place = np.column_stack(
+            [
+                axes[index, 2] / (_VOTE_CENTER * field_rad),
+                axes[index, 0] / _VOTE_TURN_RAD,
+                np.linalg.det(axes[index]),
+                np.log(focal_px[index]) / _VOTE_SCALE,
+            ]
+        )
+        votes[index] = cKDTree(place).query_ball_point(place, r=1.0, return_length=True)
+    return votes
 
 
 def _axes(seen: np.ndarray, true: np.ndarray, parity: int | None) -> np.ndarray:
@@ -145,11 +157,3 @@ def _basis(direction: np.ndarray) -> np.ndarray:
     first = np.cross(helper, direction)
     first /= np.linalg.norm(first, axis=1)[:, None]
     return np.stack([first, np.cross(direction, first), direction], axis=1)
-
-
-def _center(axes: np.ndarray, seen: np.ndarray, true: np.ndarray, zoom: np.ndarray) -> np.ndarray:
-    """Return the sky direction (n, 3) of the middle of the frame, with the quad's own scale for the way there."""
-    offset = np.array([0.0, 0.0, 1.0]) - seen / np.linalg.norm(seen, axis=1)[:, None]
-    way = np.einsum("nji,nj->ni", axes, offset) / zoom[:, None]
-    center = true / np.linalg.norm(true, axis=1)[:, None] + way
-    return center / np.linalg.norm(center, axis=1)[:, None]

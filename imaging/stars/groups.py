@@ -1,0 +1,72 @@
+"""Small groups of stars and their codes: shapes that do not change when the camera turns, mirrors or zooms.
+
+The code of a triple or quad is its mutual distances in falling order, each divided by the longest. It needs no choice
+of a first star, is continuous when stars move, and is the same for a mirrored frame. (Geometric hashing: Wolfson &
+Rigoutsos 1997, IEEE Comput. Sci. Eng. 4, 10.) Distances are chords between unit vectors, so wide fields need no
+tangent plane.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from itertools import combinations
+from math import comb
+
+import numpy as np
+
+MIN_EDGE = 0.06  # of the longest: shorter ones are noise and blends
+_ALL_GROUPS = 30_000  # up to this many groups are all made, however far apart their stars
+
+
+@dataclass(frozen=True)
+class Groups:
+    """n groups of k stars: indices (n, k) in canonical order, codes (n, edges - 1), longest chord (n,)."""
+
+    stars: np.ndarray
+    codes: np.ndarray
+    longest: np.ndarray
+
+    def __len__(self) -> int:
+        """Return the number of groups."""
+        return len(self.stars)
+
+
+def local_groups(vectors: np.ndarray, size: int, neighbours: int, longest_limit: float = np.inf) -> Groups:
+    """Return the groups of each star with `size` - 1 of its nearest `neighbours`, each group once.
+
+    `vectors`: (n, 3) unit vectors. Groups longer than `longest_limit` (chord, rad) are left out.
+    """
+    from scipy.spatial import cKDTree
+
+    count = len(vectors)
+    near = min(neighbours, count - 1)
+    if near < size - 1:
+        return coded(vectors, np.empty((0, size), dtype=int))
+    if near == count - 1 and comb(count, size) <= _ALL_GROUPS:
+        return coded(vectors, np.array(list(combinations(range(count), size))), longest_limit)
+    _, index = cKDTree(vectors).query(vectors, k=near + 1)
+    chosen = np.array(list(combinations(range(1, near + 1), size - 1)))
+    stars = np.concatenate(
+        [np.repeat(index[:, :1], len(chosen), axis=0), index[:, chosen].reshape(-1, size - 1)], axis=1
+    )
+    stars = np.sort(stars, axis=1).astype(np.int64)
+    key = stars[:, 0]
+    for column in range(1, size):
+        key = key * count + stars[:, column]
+    _, first = np.unique(key, return_index=True)
+    return coded(vectors, stars[first], longest_limit)
+
+
+def coded(vectors: np.ndarray, stars: np.ndarray, longest_limit: float = np.inf) -> Groups:
+    """Return groups with their codes and their stars in canonical order (by the sum of distances to the others)."""
+    size = stars.shape[1]
+    edge = np.array(list(combinations(range(size), 2)))
+    at_star = np.array([[i for i, ends in enumerate(edge) if star in ends] for star in range(size)])
+    points = vectors[stars]
+    lengths = np.linalg.norm(points[:, edge[:, 0]] - points[:, edge[:, 1]], axis=2)
+    ordered = np.sort(lengths, axis=1)[:, ::-1]
+    keep = (ordered[:, -1] > MIN_EDGE * ordered[:, 0]) & (ordered[:, 0] < longest_limit)
+    stars, lengths, ordered = stars[keep], lengths[keep], ordered[keep]
+    reach = lengths[:, at_star].sum(axis=2)
+    stars = np.take_along_axis(stars, np.argsort(-reach, axis=1), axis=1)
+    return Groups(stars, ordered[:, 1:] / ordered[:, :1], ordered[:, 0])

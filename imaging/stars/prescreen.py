@@ -1,0 +1,77 @@
+"""A quick look at many hypotheses at once: does the sky they predict show more stars than chance would?
+
+Only their order comes from here; what is accepted is decided by `imaging.stars.verify`.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from imaging.stars.hypotheses import Hypotheses
+from imaging.stars.refine import Field, Sky
+
+_STARS = 14  # of the brightest in each predicted frame
+_MOST = 4000  # hypotheses looked at, the most supported first
+_GATE_PX = 4.0
+_STRETCH = 0.012  # of the way from the group: distortion and the group's own error
+_MAGNITUDES = 1.5
+_DETECTED = 0.4
+_GROWN_BY_VOTES, _GROWN_BY_SCORE = 20, 40
+
+
+def promising(guesses: Hypotheses, field: Field, sky: Sky) -> list[int]:
+    """Return the hypotheses to grow, best first: those with most support and those whose sky shows most stars."""
+    by_votes = np.arange(min(len(guesses), _GROWN_BY_VOTES))
+    by_score = screened(guesses, field, sky)[:_GROWN_BY_SCORE]
+    turns = [i for pair in zip(by_score, by_votes, strict=False) for i in pair]
+    turns += [*by_score[len(by_votes) :], *by_votes[len(by_score) :]]
+    return list(dict.fromkeys(int(i) for i in turns))
+
+
+def screened(guesses: Hypotheses, field: Field, sky: Sky, stars: int = _STARS) -> np.ndarray:
+    """Return indices of hypotheses, the most promising first (log likelihood ratio of their brightest stars)."""
+    count = min(len(guesses), _MOST)
+    if count == 0:
+        return np.empty(0, dtype=int)
+    height, width = field.shape
+    axes, focal = guesses.axes[:count], guesses.focal_px[:count]
+    known = sky.vectors[:600]
+    x, y, z = (np.einsum("hk,nk->hn", axes[:, row], known, optimize=True) for row in range(3))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        scale = np.where(z > 0.3, focal[:, None] / z, np.nan)
+        x, y = x * scale + (width - 1) / 2, y * scale + (height - 1) / 2
+        inside = (x > 0) & (x < width) & (y > 0) & (y < height)
+    own = np.zeros(inside.shape, dtype=bool)
+    for column in range(guesses.sky_stars.shape[1]):
+        index = guesses.sky_stars[:count, column]
+        near = np.flatnonzero(index < len(known))
+        own[near, index[near]] = True
+    inside &= ~own
+    inside &= np.cumsum(inside, axis=1) <= stars
+    h, n = np.nonzero(inside)
+    if len(h) == 0:
+        return np.arange(count)
+    px, py = x[h, n], y[h, n]
+    group = guesses.image_stars[:count]
+    middle_x, middle_y = field.x_px[group].mean(axis=1), field.y_px[group].mean(axis=1)
+    zero = np.median(field.magnitude[group] - sky.magnitude[guesses.sky_stars[:count]], axis=1)
+    gate = _GATE_PX + _STRETCH * np.hypot(px - middle_x[h], py - middle_y[h])
+    near = min(4, len(field.x_px))
+    distance, index = field.tree.query(
+        np.column_stack([px, py]), k=near, distance_upper_bound=float(gate.max())
+    )
+    distance, index = distance.reshape(len(h), near), index.reshape(len(h), near)
+    index = np.minimum(index, len(field.x_px) - 1)
+    away = field.magnitude[index] - (sky.magnitude[n] + zero[h])[:, None]
+    bright = (np.abs(away) < _MAGNITUDES) | (field.saturated[index] & (away > 0))
+    met = ((distance < gate[:, None]) & bright).any(axis=1)
+    ordered = np.sort(field.magnitude)
+    expected = sky.magnitude[n] + zero[h]
+    rivals = np.searchsorted(ordered, expected + _MAGNITUDES) - np.searchsorted(
+        ordered, expected - _MAGNITUDES
+    )
+    chance = np.clip((rivals + 1) * np.pi * gate**2 / field.area_px2, 1e-6, 0.9)
+    likely = _DETECTED + (1 - _DETECTED) * chance
+    gain = np.where(met, np.log(likely / chance), np.log((1 - likely) / (1 - chance)))
+    score = np.bincount(h, weights=gain, minlength=count)
+    return np.argsort(-(score + np.log(guesses.votes[:count])), kind="stable")
