@@ -20,7 +20,10 @@ from imaging.compose.plane import sky_to_plane
 from imaging.compose.stack import new_stack
 from planner.errors import FrameSetAside, InputError
 
-DISC_MARGIN = 1.12
+DISC_MARGIN, WIDEST_MARGIN = (
+    1.12,
+    1.45,
+)  # radii shown about the disc: at least, and at most where the target stands off it
 # Surface drift allowed in the ground, in canvas pixels. The Sun turns 13.2 degrees a day as seen (9.2 arcsec an hour in
 # the middle of the disc); the Moon's topocentric libration reaches about as much. Common practice, no source.
 DRIFT_PX = 0.7
@@ -37,8 +40,11 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
     disc = material.geometry_at(np.array([middle])).discs[body]
     anchor = float(disc.ra_deg[0]), float(disc.dec_deg[0])
     semidiameter = float(disc.semidiameter_arcsec[0])
-    canvas = _disc_canvas(material, choices, frames, semidiameter, anchor, middle)
-    shown = _instants(material, frames, sharpness, choices, body)
+    away = _distances(material, frames, body)
+    seen = away[np.array([frame.measured for frame in frames]) & (away < WIDEST_MARGIN)]
+    margin = max(DISC_MARGIN, float(seen.max()) + 0.04) if seen.size else DISC_MARGIN
+    canvas = _disc_canvas(material, choices, frames, semidiameter * margin, anchor, middle)
+    shown = _instants(material, frames, sharpness, choices, away < margin - 0.01)
     base = _ground_frames(material, frames, sharpness, canvas, body)
     planes = (3,) if light.colour else ()
     stack = new_stack(choices.blend, (canvas.height_px, canvas.width_px, *planes), len(base), choices.scratch)
@@ -112,12 +118,12 @@ def _disc_canvas(
     material: Material,
     choices: Choices,
     frames: list[Registered],
-    semidiameter_arcsec: float,
+    reach_arcsec: float,
     anchor: tuple[float, float],
     tt_s: float,
 ) -> Canvas:
     scale = choices.scale_arcsec_px or min(frame.scale_arcsec_px for frame in frames)
-    side = int(np.ceil(2 * DISC_MARGIN * semidiameter_arcsec / scale)) | 1
+    side = int(np.ceil(2 * reach_arcsec / scale)) | 1
     if side > choices.largest_px:
         raise InputError(
             f"the picture would be {side} pixels wide; allowed are {choices.largest_px}: choose a larger --scale"
@@ -126,19 +132,35 @@ def _disc_canvas(
     return Canvas(side, side, scale, (side - 1) / 2, (side - 1) / 2, up)
 
 
-def _instants(
-    material: Material, frames: list[Registered], sharpness: np.ndarray, choices: Choices, body: str
-) -> np.ndarray:
-    """Return the frames in which the target is drawn: measured there, and near enough to be in the picture."""
-    tt_s = np.array([frame.tt_s for frame in frames])
-    geometry = material.geometry_at(tt_s)
+def _distances(material: Material, frames: list[Registered], body: str) -> np.ndarray:
+    """Return how far the target is from the disc's centre in each frame, in radii of the disc."""
+    radius = material.geometry_at(np.array([frame.tt_s for frame in frames])).discs[body].semidiameter_arcsec
     offsets = [sky_to_plane(*_anchor(frame), frame.target_ra_deg, frame.target_dec_deg) for frame in frames]
-    away = np.hypot(*np.array(offsets, float).T)
-    inside = away < (DISC_MARGIN - 0.01) * geometry.discs[body].semidiameter_arcsec
-    usable = inside & np.array([frame.measured and frame.verdict != "off-track" for frame in frames])
-    if usable.sum() < 1:
-        usable = inside & np.array([frame.measured for frame in frames])
-    return evenly_spaced(tt_s, choices.instants, sharpness, usable)
+    return np.hypot(*np.array(offsets, float).T) / radius
+
+
+def _instants(
+    material: Material, frames: list[Registered], sharpness: np.ndarray, choices: Choices, inside: np.ndarray
+) -> np.ndarray:
+    """Return the frames in which the target is drawn: measured there, and inside the picture.
+
+    Where it hides for a while, the spacing is made finer until as many instants as wished are found, but not so fine
+    that the target would overlap itself.
+    """
+    tt_s = np.array([frame.tt_s for frame in frames])
+    measured = np.array([frame.measured for frame in frames])
+    usable = inside & measured & np.array([frame.verdict != "off-track" for frame in frames])
+    if not usable.any():
+        usable = inside & measured
+    chosen = evenly_spaced(tt_s, choices.instants, sharpness, usable)
+    clear_s = 0.4 * _time_to_clear_s(material, frames)
+    for wanted in range(choices.instants + 1, 4 * choices.instants):
+        finer = evenly_spaced(tt_s, wanted, sharpness, usable)
+        too_close = finer.size > 1 and float(np.diff(tt_s[finer]).min()) < clear_s
+        if chosen.size >= choices.instants or finer.size > choices.instants or too_close:
+            break
+        chosen = finer
+    return chosen
 
 
 def _ground_frames(

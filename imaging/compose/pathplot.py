@@ -55,7 +55,7 @@ def draw_path_plot(data: PathData, palette: Palette = LIGHT, stars: bool = True,
     lower = 2.3 if residuals and data.points.size else 0.0
     left, right = 0.095, 0.975
     main = wide * (right - left) * aspect
-    below = 0.12 if data.on_disc else 0.36
+    below = 0.22 if data.on_disc else 0.42
     tall = main + lower + below + 0.78
     figure = Figure(figsize=(wide, tall), facecolor=palette.paper)
     FigureCanvasAgg(figure)
@@ -285,7 +285,7 @@ def _write(
     dots = figure.dpi / 72
     spot = axes.transData.transform(at)
     place = crowd.place(
-        tuple(spot), (box.width + 3 * dots, box.height + 1.5 * dots), toward, gap * dots, optional
+        tuple(spot), (box.width + 5 * dots, box.height + 3 * dots), toward, gap * dots, optional
     )
     if place is None:
         label.remove()
@@ -313,7 +313,7 @@ def _compass(axes: Any, data: PathData, palette: Palette, crowd: Crowd) -> None:
     """North, east, and the zenith at mid-event where it is known."""
     box = axes.get_window_extent()
     dots = axes.figure.dpi / 72
-    x, y = box.x0 + 50 * dots, box.y1 - 56 * dots
+    x, y = box.x0 + 58 * dots, box.y1 - 56 * dots
     arms = [("N", data.north_of_date_pa_deg if data.on_disc else 0.0, 24.0)]
     arms.append(("E", arms[0][1] + 90.0, 24.0))
     if np.isfinite(data.zenith_pa_deg) and not data.campaign:
@@ -336,7 +336,7 @@ def _compass(axes: Any, data: PathData, palette: Palette, crowd: Crowd) -> None:
         )
         axes.text(*name, label, fontsize=7 if thin else 9, color=palette.quiet if thin else palette.ink,
                   ha="center", va="center", zorder=7)  # fmt: skip
-    crowd.boxes.append((x - 46 * dots, y - 40 * dots, x + 46 * dots, y + 52 * dots))
+    crowd.boxes.append((x - 56 * dots, y - 40 * dots, x + 46 * dots, y + 52 * dots))
 
 
 def _scale_bar(axes: Any, view: tuple[float, float, float, float], palette: Palette, crowd: Crowd) -> None:

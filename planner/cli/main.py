@@ -15,10 +15,12 @@ COMMANDS = {
     "predict": ("planner.cli.predict", "When and how an event happens at a site."),
     "search": ("planner.cli.search", "Events that a site will see in a span of dates."),
     "plan": ("planner.cli.plan", "Turn a brief into a timed sequence."),
+    "handout": ("planner.cli.handout", "Run sheet, calendar, frame table, pictures and script of a plan."),
     "rehearse": ("planner.cli.rehearse", "Render the frames of a plan as the rig would record them."),
     "solve": ("planner.cli.solve", "Where frames point, from their stars."),
     "check": ("planner.cli.check", "Measure frames and compare them with the prediction."),
     "compose": ("planner.cli.compose", "Make the composite picture and the path plot."),
+    "timelapse": ("planner.cli.timelapse", "Make a film of the frames, registered and at a stated pace."),
     "schema": ("planner.cli.schema", "JSON Schema of site, rig, brief or plan."),
     "demo": ("planner.cli.demo", "Run the example briefs from prediction to picture."),
 }
