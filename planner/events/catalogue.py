@@ -14,6 +14,7 @@ FAMILIES = {
     "moon-occults-planet": "planner.events.moon_planet:MoonOccultsPlanet",
     "moon-occults-star": "planner.events.moon_star:MoonOccultsStar",
     "planets-meet": "planner.events.meeting:PlanetsMeet",
+    "asteroid-occults-star": "planner.events.asteroid:AsteroidOccultsStar",
     "retrograde-track": "planner.events.retrograde:RetrogradeTrack",
     "apparition-arc": "planner.events.apparition:ApparitionArc",
 }

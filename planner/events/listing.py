@@ -8,6 +8,7 @@ from typing import Any
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 from planner.errors import InputError
+from planner.events.against import Comparison
 from planner.events.family import Circumstances, Instant
 from planner.sky import timescale
 from planner.sky.observer import Observer
@@ -28,6 +29,8 @@ _ASIDES = {"closest", "conjunction_ra", "conjunction_longitude"}
 _UNITS = {
     "_arcsec_s": "arcsec/s",
     "_arcsec": "arcsec",
+    "_km_s": "km/s",
+    "_au": "au",
     "_deg": "degrees",
     "_days": "days",
     "_km": "km",
@@ -71,6 +74,50 @@ def as_object(circumstances: Circumstances, brief: bool = False) -> dict[str, An
             for series in circumstances.series
         ]
     return found
+
+
+def comparison_object(comparison: Comparison) -> dict[str, Any]:
+    """Return what `--against` adds to the object of the first site."""
+    return {
+        "site": _site(comparison.other.observer),
+        "happens": comparison.other.happens,
+        "reason": comparison.other.reason,
+        "baseline_km": _number(comparison.baseline_km),
+        "instants": [
+            {
+                "name": shift.name,
+                "utc": timescale.utc_iso(shift.tt_s, 3),
+                "other_utc": timescale.utc_iso(shift.other_tt_s, 3) if math.isfinite(shift.later_s) else None,
+                "later_s": _number(shift.later_s),
+                "along_arcsec": _number(shift.along_arcsec),
+                "across_arcsec": _number(shift.across_arcsec),
+            }
+            for shift in comparison.shifts
+        ],
+    }
+
+
+def comparison_table(comparison: Comparison) -> str:
+    """Return what `--against` adds to the page of the first site."""
+    other = comparison.other
+    lines = ["", f"against {_place_line(other.observer)}", f"baseline: {comparison.baseline_km:.1f} km"]
+    if not other.happens:
+        lines.append(f"DOES NOT HAPPEN THERE: {other.reason}.")
+    header = ["instant", "there (UTC)", "later, s", "along, arcsec", "across, arcsec"]
+    rows = [
+        [
+            _LABELS.get(shift.name, shift.name.replace("_", " ")),
+            timescale.utc_iso(shift.other_tt_s, 1).replace("T", " ").rstrip("Z")
+            if math.isfinite(shift.later_s)
+            else "",
+            f"{shift.later_s:+.1f}" if math.isfinite(shift.later_s) else "",
+            f"{shift.along_arcsec:+.2f}",
+            f"{shift.across_arcsec:+.2f}",
+        ]
+        for shift in comparison.shifts
+    ]
+    note = "along, across: where the target stands for the other site, ahead on its way and to the left of it"
+    return "\n".join(line.rstrip() for line in [*lines, "", *_columns(header, rows), "", note])
 
 
 def _site(observer: Observer | None) -> dict[str, Any] | str:

@@ -14,7 +14,7 @@ import numpy as np
 
 from planner.sky import places, timescale
 from planner.sky.bodies import C_KM_S
-from planner.sky.observer import EARTH_FLATTENING, EARTH_RADIUS_KM
+from planner.sky.observer import EARTH_FLATTENING, EARTH_RADIUS_KM, EARTH_RATE_RAD_S
 from planner.sky.pole import celestial_to_terrestrial
 from planner.sky.stars import Star
 
@@ -83,7 +83,8 @@ class Ground:
 def ground_of(axis: Axis, shift_km: np.ndarray | float = 0.0, across: np.ndarray | None = None) -> Ground:
     """Return where the axis, or a line beside it, meets the ground.
 
-    The line lies `shift_km` (n,) from the axis along `across` (3, n): take that of the axis itself.
+    The line lies `shift_km` (n,) from the axis along `across` (3, n): take that of the axis itself. Speeds are by
+    differences over the times given, at least three.
     """
     offset = axis.offset_km if across is None else axis.offset_km + shift_km * across
     turn = celestial_to_terrestrial(axis.tt_s)
@@ -95,25 +96,13 @@ def ground_of(axis: Axis, shift_km: np.ndarray | float = 0.0, across: np.ndarray
     for _ in range(3):
         point, height = _meet(start + lean * np.nan_to_num(height), star)
     latitude, longitude, up = _geodetic(point)
-    # velocity of the axis less that of the ground, by differences over two seconds
-    later, sooner = (_moved(axis, half) for half in (1.0, -1.0))
-    spin = np.array([0.0, 0.0, 7.292115e-5])
-    ground_itrs = np.cross(spin, point, axis=0)
-    ground = np.einsum("nji,jn->in", turn, ground_itrs)
-    relative = (later - sooner) / 2.0 - ground
+    ground = np.einsum("nji,jn->in", turn, np.cross(np.array([0.0, 0.0, EARTH_RATE_RAD_S]), point, axis=0))
+    relative = np.gradient(axis.offset_km, axis.tt_s, axis=1, edge_order=2) - ground
     relative = relative - (relative * axis.star).sum(axis=0) * axis.star
     speed = np.sqrt((relative**2).sum(axis=0))
     sideways = np.cross(axis.star, relative / speed, axis=0)
     altitude = np.degrees(np.arcsin(np.clip((up * star).sum(axis=0), -1.0, 1.0)))
     return Ground(axis.tt_s, latitude, longitude, altitude, speed, sideways)
-
-
-def _moved(axis: Axis, half_s: float) -> np.ndarray:
-    """Return the axis's offset a second later, from its course over the times given; exact for a cubic."""
-    if len(axis.tt_s) < 4:
-        raise ValueError("a shadow's course needs four times or more")
-    slope = np.gradient(axis.offset_km, axis.tt_s, axis=1, edge_order=2)
-    return axis.offset_km + slope * half_s
 
 
 def _meet(start: np.ndarray, direction: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -132,7 +121,9 @@ def _geodetic(point: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
     ring = np.hypot(point[0], point[1])
     latitude = np.arctan2(point[2], (1.0 - EARTH_FLATTENING) ** 2 * ring)
     longitude = np.arctan2(point[1], point[0])
-    up = np.stack([np.cos(latitude) * np.cos(longitude), np.cos(latitude) * np.sin(longitude), np.sin(latitude)])
+    up = np.stack(
+        [np.cos(latitude) * np.cos(longitude), np.cos(latitude) * np.sin(longitude), np.sin(latitude)]
+    )
     return np.degrees(latitude), np.degrees(longitude), up
 
 
@@ -163,7 +154,7 @@ class ShadowPath:
         ]
         centre = self.lines["centre"]
         seen = np.flatnonzero(np.isfinite(centre.latitude_deg))
-        every = max(1, int(round(60.0 / max(1e-6, float(np.median(np.diff(centre.tt_s)))))))
+        every = max(1, round(60.0 / max(1e-6, float(np.median(np.diff(centre.tt_s))))))
         for k in seen[:: max(every, len(seen) // 60)]:
             features.append(
                 {
@@ -261,6 +252,10 @@ def shadow_path(
     turn = celestial_to_terrestrial(times)
     sun_itrs = np.einsum("nij,jn->in", turn, sun / np.sqrt((sun**2).sum(axis=0)))
     latitude, longitude = np.radians(centre.latitude_deg), np.radians(centre.longitude_deg)
-    up = np.stack([np.cos(latitude) * np.cos(longitude), np.cos(latitude) * np.sin(longitude), np.sin(latitude)])
+    up = np.stack(
+        [np.cos(latitude) * np.cos(longitude), np.cos(latitude) * np.sin(longitude), np.sin(latitude)]
+    )
     sun_altitude = np.degrees(np.arcsin(np.clip((up * sun_itrs).sum(axis=0), -1.0, 1.0)))
-    return ShadowPath(title, 2.0 * radius_km, sigma_across_km, sigma_along_s, lines, sun_altitude, facts or {})
+    return ShadowPath(
+        title, 2.0 * radius_km, sigma_across_km, sigma_along_s, lines, sun_altitude, facts or {}
+    )

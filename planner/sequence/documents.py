@@ -13,8 +13,19 @@ from pydantic import BaseModel, ValidationError
 
 from planner.errors import DocumentError, InputError
 from planner.events.family import EventSpec
+from planner.events.orbit import ELEMENTS, Orbit, orbit_from_elements
+from planner.events.orbitfile import orbit_from_spk, read_orbit_line
 from planner.sequence import strictyaml
-from planner.sequence.models import Brief, EventRequest, Plan, Rig, Site
+from planner.sequence.models import (
+    Brief,
+    ElementSigma,
+    EventRequest,
+    OrbitElements,
+    OrbitFile,
+    Plan,
+    Rig,
+    Site,
+)
 from planner.sky.observer import Observer
 
 AnyModel = TypeVar("AnyModel", bound=BaseModel)
@@ -50,11 +61,65 @@ def load_brief(path: str | Path, site: Site | None = None, rig: Rig | None = Non
                 document.data[key] = given.model_dump(mode="json")
             elif isinstance(document.data.get(key), str):
                 document.data[key] = _referred(document, (key,), model)
+        event = document.data.get("event")
+        if isinstance(event, dict) and isinstance(event.get("orbit"), str):
+            event["orbit"] = load_orbit(_inside(document, ("event", "orbit"))).model_dump(
+                mode="json", exclude_unset=True
+            )
         others = document.data.get("other_rigs")
         for index, entry in enumerate(others if isinstance(others, list) else []):
             if isinstance(entry, str):
                 others[index] = _referred(document, ("other_rigs", index), Rig)
     return _as(Brief, document)
+
+
+def load_orbit(path: str | Path) -> OrbitElements | OrbitFile:
+    """Return the orbit in a file: YAML or JSON of elements or of an SPK file's name, or one line of the orbit format.
+
+    Raises DocumentError or InputError naming what is wrong.
+    """
+    path = Path(path)
+    if path.suffix.lower() not in (".yaml", ".yml", ".json"):
+        orbit = read_orbit_line(path)
+        assert orbit.elements is not None
+        assert orbit.element_sigma is not None
+        return OrbitElements(
+            name=orbit.name,
+            epoch_jd_tdb=orbit.epoch_jd_tdb,
+            **dict(zip(ELEMENTS, orbit.elements, strict=True)),
+            sigma=ElementSigma(**dict(zip(ELEMENTS, orbit.element_sigma, strict=True))),
+            absolute_magnitude=orbit.absolute_magnitude,
+            slope=orbit.slope,
+            diameter_km=orbit.diameter_km,
+            diameter_sigma_km=orbit.diameter_sigma_km,
+            source=f"{path.name}, {orbit.source}",
+            notes=list(orbit.notes),
+        )
+    document = strictyaml.read(path)
+    if not (isinstance(document.data, dict) and "spk" in document.data):
+        return _as(OrbitElements, document)
+    held = _as(OrbitFile, document)
+    return held.model_copy(update={"spk": str((path.parent / held.spk).resolve())})
+
+
+def orbit_of(given: OrbitElements | OrbitFile | str | None) -> Orbit | str | None:
+    """Return an orbit as families understand it; raises InputError when it cannot be one."""
+    if given is None or isinstance(given, str):
+        return given
+    stated = (given.sigma_along_arcsec, given.sigma_across_arcsec)
+    common: dict[str, Any] = {
+        name: getattr(given, name)
+        for name in ("absolute_magnitude", "slope", "diameter_km", "diameter_sigma_km", "source")
+    }
+    common["notes"] = tuple(given.notes)
+    if stated != (None, None):
+        along, across = (one if one is not None else other for one, other in (stated, stated[::-1]))
+        common["sigma_arcsec"] = (along, across)
+    if isinstance(given, OrbitFile):
+        return orbit_from_spk(given.spk, given.spk_target, name=given.name, **common)
+    sigma = None if given.sigma is None else tuple(getattr(given.sigma, name) for name in ELEMENTS)
+    elements = tuple(getattr(given, name) for name in ELEMENTS)
+    return orbit_from_elements(given.name, given.epoch_jd_tdb, elements, element_sigma=sigma, **common)
 
 
 def observer_of(site: Site) -> Observer:
@@ -86,7 +151,7 @@ def event_spec(request: EventRequest) -> EventSpec:
         date_tt_s=float(tt_s_from_datetime(moment)),
         other_body=request.other_body,
         star=request.star,
-        orbit=request.orbit,
+        orbit=orbit_of(request.orbit),
         radii=request.radii,
     )
 
@@ -98,6 +163,12 @@ def dump_plan(plan: Plan) -> str:
 
 def _referred(document: strictyaml.Document, key: strictyaml.Key, model: type[BaseModel]) -> dict[str, Any]:
     """Return the data of the file that a brief names, after it has been found right by itself."""
+    path = _inside(document, key)
+    return _as(model, strictyaml.read(path)).model_dump(mode="json", exclude_unset=True)
+
+
+def _inside(document: strictyaml.Document, key: strictyaml.Key) -> Path:
+    """Return the path of a file that a brief names, which must lie in the brief's folder."""
     name = document.data
     for part in key:
         name = name[part]
@@ -121,7 +192,7 @@ def _referred(document: strictyaml.Document, key: strictyaml.Key, model: type[Ba
             repr(name),
             "no such file in the brief's folder" + _did_you_mean(name, near),
         )
-    return _as(model, strictyaml.read(folder / name)).model_dump(mode="json", exclude_unset=True)
+    return folder / name
 
 
 def _as(model: type[AnyModel], document: strictyaml.Document) -> AnyModel:

@@ -191,6 +191,51 @@ class Rig(Model):
         return 206264.806 * self.sensor.pixel_um * 1e-3 / (self.optics.focal_length_mm * self.optics.reducer)
 
 
+class ElementSigma(Model):
+    """1-sigma of each element of an orbit, uncorrelated."""
+
+    semi_major_axis_au: float = Field(ge=0)
+    eccentricity: float = Field(ge=0)
+    inclination_deg: float = Field(ge=0)
+    ascending_node_deg: float = Field(ge=0)
+    perihelion_argument_deg: float = Field(ge=0)
+    mean_anomaly_deg: float = Field(ge=0)
+
+
+class SmallBody(Model):
+    """What is known of a small body beside its orbit; a diameter or an absolute magnitude is needed."""
+
+    name: str
+    absolute_magnitude: float | None = Field(None, ge=-2, le=35)
+    slope: float = Field(0.15, ge=-1, le=1)
+    diameter_km: float | None = Field(None, gt=0, le=6000)
+    diameter_sigma_km: float | None = Field(None, gt=0)
+    sigma_along_arcsec: float | None = Field(None, gt=0, description="1-sigma of the place along its motion")
+    sigma_across_arcsec: float | None = Field(None, gt=0, description="and across it")
+    source: str = ""
+    notes: list[str] = []
+
+
+class OrbitElements(SmallBody):
+    """Osculating elements of a small body: heliocentric, ecliptic and equinox J2000."""
+
+    epoch_jd_tdb: float = Field(ge=2000000, le=3000000, description="Julian day of the elements, TDB")
+    semi_major_axis_au: float = Field(gt=0.1, le=2000)
+    eccentricity: float = Field(ge=0, lt=1)
+    inclination_deg: float = Field(ge=0, le=180)
+    ascending_node_deg: float
+    perihelion_argument_deg: float
+    mean_anomaly_deg: float
+    sigma: ElementSigma | None = None
+
+
+class OrbitFile(SmallBody):
+    """A small body whose places are in an SPK file."""
+
+    spk: str = Field(description="path of the .bsp file, from the folder of this document")
+    spk_target: int | None = Field(None, description="number of the body where the file holds several")
+
+
 class EventRequest(Model):
     """Which event: the one of this family nearest to the date."""
 
@@ -199,7 +244,10 @@ class EventRequest(Model):
     date: date | Utc
     other_body: str | None = None
     star: str | None = None
-    orbit: str | None = None
+    orbit: str | OrbitElements | OrbitFile | None = Field(
+        None,
+        description="a file of elements (.yaml, .json), of one-line orbits (.txt), or the elements themselves",
+    )
     radii: str | None = None
 
 
