@@ -176,7 +176,7 @@ def occultations(reference, years, observers):
         reference_s.append(time.process_time() - clock)
         theirs.append(np.array(found))
     clock = time.process_time()
-    candidates = moon_candidates(start, end, PLANETS, stars)
+    candidates = moon_candidates(start, end, PLANETS, stars, of_figure=False)
     points = candidates.passings.of_points()
     build_s = time.process_time() - clock
     results = []

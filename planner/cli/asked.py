@@ -28,7 +28,7 @@ class Asked:
 
 
 def event_options(command: Callable[..., Any]) -> Callable[..., Any]:
-    """Add BRIEF, --event, --at, --site, --geocentric, --timezone and --radii; the command gets `asked: Asked`."""
+    """Add BRIEF, --event, the site and what refines the event; the command gets `asked: Asked`."""
 
     @click.argument("brief", required=False, type=click.Path(exists=True, dir_okay=False))
     @click.option(
@@ -47,18 +47,59 @@ def event_options(command: Callable[..., Any]) -> Callable[..., Any]:
     @click.option(
         "--radii", metavar="NAME", help="Convention of radii, such as tables, surface, iau, measured."
     )
+    @click.option(
+        "--orbit", metavar="FILE", help="Orbit of an asteroid: elements (YAML, JSON, one line) or SPK."
+    )
+    @click.option("--star", "star_text", metavar="STAR", help="Star of the event, such as 'HIP 21421'.")
+    @click.option("--epoch", type=float, metavar="YEAR", help="Epoch of a star given as RA,DEC.")
+    @click.option("--pm", metavar="RA,DEC", help="Its proper motion in mas a year (RA times cos DEC).")
+    @click.option(
+        "--limb", metavar="FILE", help="Lunar elevation grid (PDS label or image), for the real limb."
+    )
+    @click.option("--limb-orientation", metavar="FILE", help="Lunar orientation kernel (.bpc).")
+    @click.option("--limb-frame", metavar="FILE", help="Lunar frame kernel (.tf).")
     @functools.wraps(command)
     def wrapped(  # type: ignore[no-untyped-def]
-        brief, event_text, at_text, site_file, geocentric, timezone, radii, **others
+        brief, event_text, at_text, site_file, geocentric, timezone, **others
     ):
-        asked = _asked(brief, event_text, at_text, site_file, geocentric, timezone, radii)
-        return command(asked=asked, **others)
+        names = ("radii", "orbit", "star_text", "epoch", "pm", "limb", "limb_orientation", "limb_frame")
+        more = {name: others.pop(name) for name in names}
+        asked = _asked(brief, event_text, at_text, site_file, geocentric, timezone)
+        return command(asked=replace(asked, spec=_refined(asked.spec, **more)), **others)
 
     return wrapped
 
 
+def _refined(  # type: ignore[no-untyped-def]
+    spec: EventSpec, radii, orbit, star_text, epoch, pm, limb, limb_orientation, limb_frame
+) -> EventSpec:
+    """Return the event with what was given beside it on the command line."""
+    options = dict(spec.options)
+    if epoch is not None:
+        options["epoch_year"] = epoch
+    if pm is not None:
+        try:
+            east, north = (float(part) for part in pm.split(","))
+        except ValueError:
+            raise InputError(f"--pm: found {pm!r}; allowed are two numbers such as 62.8,-189.4") from None
+        options["pm_mas_yr"] = (east, north)
+    changes: dict[str, Any] = {"options": tuple(options.items())}
+    changes |= {
+        key: value for key, value in (("radii", radii), ("orbit", orbit), ("star", star_text)) if value
+    }
+    if limb is not None:
+        from planner.sky.moonlimb import limb_model
+
+        changes["limb"] = limb_model(limb, limb_orientation, limb_frame)
+    elif limb_orientation or limb_frame:
+        raise InputError(
+            "--limb: found none beside --limb-orientation; allowed is the elevation grid with it"
+        )
+    return replace(spec, **changes)
+
+
 def _asked(  # type: ignore[no-untyped-def]
-    brief_path, event_text, at_text, site_file, geocentric, timezone, radii
+    brief_path, event_text, at_text, site_file, geocentric, timezone
 ) -> Asked:
     if (brief_path is None) == (event_text is None):
         raise InputError(
@@ -79,8 +120,6 @@ def _asked(  # type: ignore[no-untyped-def]
         spec = spec_of(event_text)
         if observer is None and not geocentric:
             raise InputError("site: found none; give --at LAT,LON,HEIGHT, --site FILE or --geocentric")
-    if radii is not None:
-        spec = replace(spec, radii=radii)
     return Asked(spec, observer, brief)
 
 
@@ -111,6 +150,19 @@ def spec_of(text: str) -> EventSpec:
     return EventSpec(family, body, tt_s, other_body=other)
 
 
+def other_site(text: str) -> Observer | None:
+    """Return the site of --against: a site file, LAT,LON,HEIGHT, or `geocentre`."""
+    from pathlib import Path
+
+    if text == "geocentre":
+        return None
+    if Path(text).is_file():
+        return site_observer(None, text, None)
+    if "," not in text:
+        raise InputError(f"--against: found {text!r}; allowed is a site file, LAT,LON,HEIGHT or geocentre")
+    return observer_at(text, option="--against")
+
+
 def site_observer(at_text: str | None, site_file: str | None, timezone: str | None) -> Observer | None:
     """Return the observer of --at or --site, None when neither is given; raises InputError."""
     if site_file:
@@ -120,7 +172,7 @@ def site_observer(at_text: str | None, site_file: str | None, timezone: str | No
     return observer_at(at_text, timezone) if at_text else None
 
 
-def observer_at(text: str, timezone: str | None = None) -> Observer:
+def observer_at(text: str, timezone: str | None = None, option: str = "--at") -> Observer:
     """Return the observer of LAT,LON,HEIGHT; raises InputError that names the number that is wrong."""
     from planner.sky.observer import Observer
 
@@ -141,6 +193,6 @@ def observer_at(text: str, timezone: str | None = None) -> Observer:
         ("height", height, -500.0, 9000.0),
     ):
         if not math.isfinite(value) or not low <= value <= high:
-            raise InputError(f"--at: found {name} {value:g}; allowed is {low:g} to {high:g}")
+            raise InputError(f"{option}: found {name} {value:g}; allowed is {low:g} to {high:g}")
     observer = Observer(text, latitude, longitude, height)
     return observer if timezone is None else replace(observer, timezone=timezone)

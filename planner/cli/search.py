@@ -6,6 +6,7 @@ import click
 
 from planner.cli.asked import site_observer
 from planner.errors import InputError
+from planner.outputs import refuse_existing
 
 
 @click.command()
@@ -17,15 +18,31 @@ from planner.errors import InputError
 @click.option("--timezone", metavar="ZONE", help="IANA name for civil times, with --at.")
 @click.option("--family", "families", multiple=True, metavar="NAME", help="Only this family (repeatable).")
 @click.option("--body", "bodies", multiple=True, metavar="NAME", help="Only this body (repeatable).")
+@click.option(
+    "--magnitude", type=float, metavar="V", help="Faintest target; for stars to cover the default is 3.5."
+)
+@click.option("--altitude", type=float, default=5.0, show_default=True, metavar="DEG", help="Least altitude.")
+@click.option("--night", is_flag=True, help="Leave out what happens by day.")
+@click.option(
+    "--within", type=float, default=1.0, show_default=True, metavar="DEG", help="Of planets that meet."
+)
 @click.option("--json", "as_json", is_flag=True, help="A JSON list instead of the table.")
+@click.option(
+    "--ecsv", type=click.Path(dir_okay=False), metavar="FILE", help="Write a table of all instants."
+)
+@click.option("--ical", type=click.Path(dir_okay=False), metavar="FILE", help="Write a calendar (RFC 5545).")
+@click.option("--force", is_flag=True, help="Replace an output that exists.")
 def command(  # type: ignore[no-untyped-def]
-    start, end, at_text, site_file, geocentric, timezone, families, bodies, as_json
-) -> None:
+    start, end, at_text, site_file, geocentric, timezone, families, bodies, magnitude, altitude, night, within,
+    as_json, ecsv, ical, force,
+) -> None:  # fmt: skip
     """Events that a site will see in a span of dates.
 
     \b
     Example:
       syzygraph search --from 2027-01-01 --to 2032-01-01 --at 48.137,11.575,520 --family moon-occults-planet
+      syzygraph search --from 2027-11-14T16:00Z --to 2027-11-15T05:00Z --site configs/sites/kestrel_ridge.yaml \\
+        --family moon-occults-star --magnitude 7 --ical tonight.ics
     """
     from planner.cli.progress import bar
     from planner.events import listing, search
@@ -34,8 +51,19 @@ def command(  # type: ignore[no-untyped-def]
     if (observer is not None) == geocentric:
         raise InputError("site: give one of --at LAT,LON,HEIGHT, --site FILE, --geocentric")
     span = search.span_of(start, end)
+    limits = search.Limits(altitude, night, magnitude, within)
+    for path in (ecsv, ical):
+        if path is not None:
+            refuse_existing(path, force)
     with bar("searching", quiet=as_json) as tick:
-        found = search.search(span, observer, families, bodies, tick)
+        found = search.search(span, observer, families, bodies, tick, limits)
+    if ecsv is not None or ical is not None:
+        from planner.events import exports
+
+        if ecsv is not None:
+            exports.write_ecsv(found, observer, ecsv, force)
+        if ical is not None:
+            exports.write_calendar(found, observer, ical, force)
     if as_json:
         import json
 

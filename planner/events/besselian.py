@@ -16,6 +16,7 @@ from planner.events.contacts import RAD_ARCSEC
 from planner.events.roots import minima_near, roots_between
 from planner.sky import ephemeris, observer, places, pole, timescale
 from planner.sky.bodies import C_KM_S, EARTH_RADIUS_KM
+from planner.sky.moonlimb import limb_centre_km
 from planner.sky.observer import Observer
 from planner.sky.rotation import polar_motion_arcsec
 
@@ -259,8 +260,11 @@ def moon_passings(
     star_vectors: np.ndarray,
     moon_radius_km: float,
     outline: Outline,
+    of_figure: bool = True,
 ) -> MoonPassings:
     """Return the table of n passings about these middles (TT seconds), to be evaluated at any site.
+
+    The Moon's limb is a circle about its centre of figure, or of mass where not `of_figure`.
 
     `which_planet` (n,) is an index into `planets`, -1 for a star, whose geocentric direction (with motion and
     parallax) is the column of `star_vectors` (3, n).
@@ -269,6 +273,9 @@ def moon_passings(
     times = (middle_tt_s + _HALF_SPAN_S * nodes[:, None]).ravel()
     earth_km = ephemeris.position_km("earth", timescale.tdb_s(times))
     moon = places.direction("moon", None, times, earth_km).vector_km.reshape(3, _MOON_TERMS, -1)
+    if of_figure:
+        # the Moon turns by 2 degrees in the half span: 40 m of 1.2 km
+        moon = moon + limb_centre_km(middle_tt_s)[:, None, :]
     target = np.broadcast_to(star_vectors[:, None, :] * STAR_DISTANCE_KM, moon.shape).copy()
     target_velocity = np.zeros((3, len(middle_tt_s)))
     earth_km = earth_km.reshape(3, _MOON_TERMS, -1)

@@ -2,23 +2,36 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from planner.events import cautions
 from planner.events.contacts import RAD_ARCSEC
 from planner.sky import discs, places
+from planner.sky.moonlimb import SMOOTH_LIMB_SIGMA_KM, limb_centre_km
 from planner.sky.observer import Observer
 
 # Meeus, Astronomical Algorithms (2nd ed.), ch. 54: the shadow of the solid Earth is widened by its atmosphere by
 # about 1/50 of the lunar parallax term (the rule used in almanacs since Chauvenet); radius of the Earth at 45 degrees.
 _SHADOW_WIDENED = 1.02
 _EARTH_MEAN_OVER_EQUATORIAL = 0.998340
-# The limb about a smooth circle, km: 1-sigma at one place, and the highest and lowest that it reaches; measured on
-# the public elevation grid at many librations (tests/events/test_moon.py).
-LIMB_SIGMA_KM = 1.2
-LIMB_RELIEF_KM = 2.5
+# How far the limb reaches above or below the smooth circle, km, at 1 in 100 places (2.6 sigma): what decides grazes.
+LIMB_RELIEF_KM = 2.6 * SMOOTH_LIMB_SIGMA_KM
+
+SMOOTH_LIMB_TEXT = "smooth, about the centre of figure (1.2 km from the centre of mass)"
+
+
+def limb_track(observer: Observer | None, tt_s: np.ndarray) -> np.ndarray:
+    """Return the centre of the Moon's smooth limb from the observer, (3, n) in km: 1.2 km from the centre of mass."""
+    return places.direction("moon", observer, tt_s).vector_km + limb_centre_km(tt_s)
+
+
+def limb_disc(observer: Observer | None, tt_s: np.ndarray, radii: str | None) -> discs.SkyDisc:
+    """Return the Moon's disc about the centre of its limb, which is what frames show and fits find."""
+    tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
+    ra_deg, dec_deg = places.radec_deg(limb_track(observer, tt_s))
+    return replace(discs.sky_disc("moon", observer, tt_s, radii=radii), ra_deg=ra_deg, dec_deg=dec_deg)
 
 
 @dataclass(frozen=True)

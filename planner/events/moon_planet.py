@@ -12,10 +12,11 @@ from planner.events.catalogue import predicted
 from planner.events.contacts import RAD_ARCSEC, Passing, Shape, body_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
-from planner.events.moon import LIMB_SIGMA_KM, limb_words, moon_cautions, moon_state
+from planner.events.moon import SMOOTH_LIMB_TEXT, limb_disc, limb_track, limb_words, moon_cautions, moon_state
 from planner.events.moon_search import EVENT_REACH_S, happening, moon_candidates
 from planner.events.visibility import sun_altitude_deg, view
 from planner.sky import bodies, discs, places, timescale
+from planner.sky.moonlimb import SMOOTH_LIMB_SIGMA_KM
 from planner.sky.observer import Observer
 
 DAY_S = timescale.DAY_S
@@ -79,7 +80,7 @@ class MoonOccultsPlanet:
         moment = moments(passing, times, names == "closest")
         sight = passing.sight(times)
         at_limb = np.where(names == "closest", 0.0, 1.0)
-        limb_arcsec = at_limb * LIMB_SIGMA_KM / moment.near_distance_km * RAD_ARCSEC
+        limb_arcsec = at_limb * SMOOTH_LIMB_SIGMA_KM / moment.near_distance_km * RAD_ARCSEC
         terms = site_terms(moment, observer)
         terms += [ephemeris_term(moment, "moon", body), angle_term("lunar limb", moment, limb_arcsec)]
         planet = discs.sky_disc(body, observer, times, radii=radii)
@@ -123,7 +124,7 @@ class MoonOccultsPlanet:
             conventions={
                 "radii": f"{radii}: {bodies.convention(radii).text}",
                 "position_angle": "of the planet from the Moon's centre, from true celestial north of date",
-                "limb": "smooth",
+                "limb": SMOOTH_LIMB_TEXT,
                 "places": "light-time directions from the observer; refraction does not move a contact",
             },
             cautions=moon_cautions(state.elongation_deg[middle]) + maker.time_cautions(),
@@ -134,7 +135,10 @@ class MoonOccultsPlanet:
         """Return Moon and planet as discs at these times."""
         tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
         body, radii = event.spec.body, bodies.convention(event.spec.radii).name
-        shown = {name: discs.sky_disc(name, observer, tt_s, radii=radii) for name in ("moon", body)}
+        shown = {
+            "moon": limb_disc(observer, tt_s, radii),
+            body: discs.sky_disc(body, observer, tt_s, radii=radii),
+        }
         vector_km = places.direction(body, observer, tt_s).vector_km
         seen = view(vector_km, observer, tt_s)
         return Geometry(
@@ -157,7 +161,7 @@ class MoonOccultsPlanet:
 
     def _passing(self, body: str, observer: Observer | None, radii: str | None, tt_s: float) -> Passing:
         moon = Shape(bodies.radii_km("moon", radii)[0])
-        return Passing(body_track("moon"), body_track(body), moon, planet_shape(body, radii, tt_s), observer)
+        return Passing(limb_track, body_track(body), moon, planet_shape(body, radii, tt_s), observer)
 
     def _event(self, body: str, middle_tt_s: float) -> Event:
         return Event(

@@ -78,6 +78,7 @@ def moon_candidates(
     planets: tuple[str, ...] = (),
     star_table: np.ndarray | None = None,
     radii: str | None = None,
+    of_figure: bool = True,
 ) -> MoonCandidates:
     """Return all passings between two instants over these planets and stars, ready for any site.
 
@@ -109,6 +110,7 @@ def moon_candidates(
         _geocentric_star_vectors(star_table, row_of, middle),
         bodies.radii_km("moon", radii)[0],
         outline_of(planets, planet_of, middle, radii),
+        of_figure,
     )
     keep = _seen_somewhere(passings, low_tt_s, high_tt_s)
     return MoonCandidates(passings.select(keep), planets, planet_of[keep], row_of[keep])

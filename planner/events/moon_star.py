@@ -11,19 +11,22 @@ from planner.errors import InputError
 from planner.events.besselian import STAR_DISTANCE_KM
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
 from planner.events.catalogue import predicted
-from planner.events.contacts import RAD_ARCSEC, Passing, Shape, body_track
+from planner.events.contacts import RAD_ARCSEC, Passing, Shape
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
 from planner.events.moon import (
     LIMB_RELIEF_KM,
-    LIMB_SIGMA_KM,
+    SMOOTH_LIMB_TEXT,
+    limb_disc,
+    limb_track,
     limb_words,
     moon_cautions,
     moon_state,
 )
 from planner.events.moon_search import EVENT_REACH_S, as_table, happening, moon_candidates, zodiac_stars
 from planner.events.visibility import sun_altitude_deg, view
-from planner.sky import bodies, discs, places, starlist, stars, timescale
+from planner.sky import bodies, places, starlist, stars, timescale
+from planner.sky.moonlimb import SMOOTH_LIMB_SIGMA_KM
 from planner.sky.observer import Observer
 
 DAY_S = timescale.DAY_S
@@ -131,7 +134,7 @@ class MoonOccultsStar:
             conventions={
                 "radii": f"{radii}: {bodies.convention(radii).text}",
                 "position_angle": "of the star from the Moon's centre, from true celestial north of date",
-                "limb": "smooth",
+                "limb": SMOOTH_LIMB_TEXT,
                 "star": f"{star.name}, proper motion and parallax applied",
                 "places": "light-time directions from the observer; refraction does not move a contact",
             },
@@ -148,7 +151,7 @@ class MoonOccultsStar:
         ra_deg, dec_deg = places.radec_deg(vector)
         return Geometry(
             tt_s=tt_s,
-            discs={"moon": discs.sky_disc("moon", observer, tt_s, radii=radii)},
+            discs={"moon": limb_disc(observer, tt_s, radii)},
             target=star.name,
             reference="moon",
             altitude_deg=seen.altitude_deg,
@@ -163,7 +166,7 @@ class MoonOccultsStar:
         moment = moments(passing, times, (names == "closest") | (names == "graze"))
         sight = passing.sight(times)
         at_limb = np.where(names == "closest", 0.0, 1.0)
-        limb = at_limb * LIMB_SIGMA_KM / moment.near_distance_km * RAD_ARCSEC
+        limb = at_limb * SMOOTH_LIMB_SIGMA_KM / moment.near_distance_km * RAD_ARCSEC
         terms = site_terms(moment, observer)
         terms += [
             ephemeris_term(moment, "moon", "star"),
@@ -205,7 +208,7 @@ class MoonOccultsStar:
     def _passing(self, star: stars.Star, observer: Observer | None, radii: str | None) -> Passing:
         moon = Shape(bodies.radii_km("moon", radii)[0])
         return Passing(
-            body_track("moon"),
+            limb_track,
             lambda where, tt_s: star.vector(where, tt_s) * STAR_DISTANCE_KM,
             moon,
             Shape(0.0),

@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from planner.errors import InputError
 from planner.events.catalogue import FAMILIES, family, predicted
-from planner.events.family import Circumstances
+from planner.events.family import Circumstances, Family
 from planner.sky import timescale
 from planner.sky.observer import Observer
+
+# An asteroid's orbit is a file, so that its occultations are searched for only when the family is named.
+_SEARCHED = tuple(name for name in FAMILIES if name != "asteroid-occults-star")
 
 
 @dataclass(frozen=True)
@@ -17,12 +20,13 @@ class Limits:
     """What the user wants to hear of. Events of weeks (tracks, arcs) are kept whatever the altitude of an instant.
 
     `altitude_deg`: least altitude of one instant that can be seen. `night_only`: leave out what happens by day.
-    `magnitude`: faintest target.
+    `magnitude`: faintest target. `within_deg`: how close planets must come.
     """
 
     altitude_deg: float = 5.0
     night_only: bool = False
     magnitude: float | None = None
+    within_deg: float = 1.0
 
 
 def span_of(start: str, end: str) -> tuple[float, float]:
@@ -53,7 +57,7 @@ def search(
     Raises InputError on a family or a body that does not exist.
     """
     limits = limits or Limits()
-    chosen = [family(name) for name in (families or FAMILIES)]
+    chosen = [_limited(family(name), limits) for name in (families or _SEARCHED)]
     known = {target for one in chosen for target in one.targets}
     for body in bodies:
         if body not in known:
@@ -73,6 +77,16 @@ def search(
             if one.campaign or _within(circumstances, limits):
                 found.append(circumstances)
     return sorted(found, key=lambda circumstances: circumstances.event.middle_tt_s)
+
+
+def _limited(one: Family, limits: Limits) -> Family:
+    """Return a family that looks for what the limits ask, where it can."""
+    changes = {}
+    if limits.magnitude is not None and hasattr(one, "magnitude_limit"):
+        changes["magnitude_limit"] = limits.magnitude
+    if hasattr(one, "within_deg"):
+        changes["within_deg"] = limits.within_deg
+    return replace(one, **changes) if changes else one  # type: ignore[type-var]
 
 
 def _within(circumstances: Circumstances, limits: Limits) -> bool:
