@@ -66,9 +66,7 @@ def campaign_passages(
     aims, ground = _aims(setting, visits, field_of(narrowest, angle))
     exposures = _exposures(setting, visits, aims)
     hour_angle = hour_angle_deg(setting.observer, visits.disc.ra_deg, visits.disc.dec_deg, visits.tt_s)
-    turned = (hour_angle >= 0) != (hour_angle[0] >= 0)
-    if setting.rig.mount.kind != "equatorial" or not setting.rig.mount.meridian_flip:
-        turned = np.zeros(len(visits), bool)
+    turned = _turned(setting.rig, hour_angle)
     first = len(campaign.done) + 1
     passages = list(campaign.done)
     for index in range(len(visits)):
@@ -92,6 +90,16 @@ def campaign_passages(
         if tick:
             tick(index + 1, len(visits))
     return passages
+
+
+def _turned(rig: Rig, hour_angle_deg: np.ndarray) -> np.ndarray:
+    """Return at which visits the mount stands turned over against the first; near the meridian it stays as it was."""
+    if rig.mount.kind != "equatorial" or not rig.mount.meridian_flip:
+        return np.zeros(len(hour_angle_deg), bool)
+    sure = np.abs(hour_angle_deg) > rig.mount.meridian_limit_deg
+    last_sure = np.maximum.accumulate(np.where(sure, np.arange(len(sure)), -1))
+    west = np.where(last_sure >= 0, hour_angle_deg[np.maximum(last_sure, 0)] > 0, hour_angle_deg[0] > 0)
+    return west != west[0]
 
 
 def _field_aim(aims: Framing, index: int) -> dict:  # type: ignore[type-arg]

@@ -121,6 +121,10 @@ def _bounded(setting: Setting, moving: Motion, wanted_s: np.ndarray) -> np.ndarr
 
 def _brightest_disc(setting: Setting, geometry: Geometry) -> tuple[str, np.ndarray] | None:
     names = ["sun"] if geometry.reference == "sun" else [n for n in geometry.discs if n != "sun"]
+    if geometry.reference == "stars" and geometry.stars:
+        # a small body before a star: the star is what is exposed for, unless the body outshines it
+        limit = min(star[3] for star in geometry.stars)
+        names = [name for name in names if np.median(geometry.discs[name].magnitude) < limit]
     rates = {}
     for name in names:
         disc = geometry.discs[name]

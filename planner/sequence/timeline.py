@@ -119,6 +119,7 @@ def _draw_instants(
 def _draw_nights(axes: Any, outlook: Outlook) -> None:
     """Draw dates against the hours of the night: darkness, when the target is up, the Moon, the visits."""
     import matplotlib.dates as mdates
+    from matplotlib.ticker import MultipleLocator
 
     from planner.sky.discs import sky_disc
     from planner.sky.places import altaz
@@ -173,12 +174,13 @@ def _draw_nights(axes: Any, outlook: Outlook) -> None:
     def clock(hour: float, _position: object = None) -> str:
         return f"{round(hour + offset) % 24:02d}:00"
 
+    axes.yaxis.set_major_locator(MultipleLocator(2))
     axes.yaxis.set_major_formatter(clock)
     axes.set_ylabel("UTC")
     axes.xaxis.set_major_locator(mdates.AutoDateLocator(minticks=4, maxticks=9))
     axes.xaxis.set_major_formatter(mdates.ConciseDateFormatter(axes.xaxis.get_major_locator()))
     axes.set_title(
-        "o visit   x reserve   /// target low   ... Moon up, over a quarter lit   dark: night",
+        "o visit   x reserve   /// target low   ... Moon up, over a quarter lit   shaded: night",
         fontsize=8,
         loc="left",
     )

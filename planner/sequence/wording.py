@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from datetime import datetime
+from datetime import UTC, datetime
 from zoneinfo import ZoneInfo
 
 
@@ -34,4 +34,6 @@ def local_text(moment: datetime, timezone: str, seconds: bool = True) -> str:
     """Return a moment in the site's civil time, with its offset from UTC."""
     local = moment.astimezone(ZoneInfo(timezone))
     clock = local.strftime("%H:%M:%S" if seconds else "%H:%M")
-    return f"{clock} {local.strftime('%z')[:3]}:{local.strftime('%z')[3:]}"
+    days = (local.date() - moment.astimezone(UTC).date()).days
+    other_day = f" ({days:+d} d)" if days else ""
+    return f"{clock} {local.strftime('%z')[:3]}:{local.strftime('%z')[3:]}{other_day}"
