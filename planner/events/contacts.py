@@ -52,6 +52,25 @@ class Shape:
 
 
 @dataclass(frozen=True)
+class LitShape:
+    """Outline of the sunlit part of a sphere: `bright` is the unit vector across the line of sight to the Sun's side.
+
+    The convex outline: half the limb, and half the terminator's ellipse while it bulges, else the cusps.
+    """
+
+    radius_km: float
+    bright: tuple[float, float, float]
+    phase_angle_deg: float
+
+    def reach_km(self, toward: np.ndarray) -> np.ndarray:
+        """Return how far the lit part reaches along `toward` (3, n), unit vectors across the line of sight."""
+        along = np.einsum("i,i...->...", np.asarray(self.bright), toward)
+        flat = max(np.cos(np.radians(self.phase_angle_deg)), 0.0)
+        dark_side = np.sqrt(1.0 - along**2 * (1.0 - flat**2))
+        return self.radius_km * np.where(along >= 0.0, 1.0, dark_side)
+
+
+@dataclass(frozen=True)
 class Sight:
     """A near and a far body at n times, as (3, n) vectors in km from the observer, and what follows from them.
 
@@ -93,7 +112,7 @@ class Passing:
     near: Track
     far: Track
     near_shape: Shape
-    far_shape: Shape
+    far_shape: Shape | LitShape
     observer: Observer | None
 
     def sight(self, tt_s: np.ndarray) -> Sight:
@@ -101,11 +120,15 @@ class Passing:
         tt_s = np.asarray(tt_s, dtype=float)
         return Sight(tt_s, self.near(self.observer, tt_s), self.far(self.observer, tt_s))
 
-    def radii_rad(self, sight: Sight) -> tuple[np.ndarray, np.ndarray]:
-        """Return the angular radii of near and far body along the line between their centres."""
+    def radii_rad(self, sight: Sight, inner: bool = False) -> tuple[np.ndarray, np.ndarray]:
+        """Return the angular radii of near and far body along the line between their centres.
+
+        For outer contacts the far body's side toward the near one counts, for `inner` ones its other side.
+        """
         toward = sight.toward
         near = np.arcsin(np.minimum(1.0, self.near_shape.reach_km(toward) / sight.near_distance_km))
-        far = np.arcsin(np.minimum(1.0, self.far_shape.reach_km(toward) / sight.far_distance_km))
+        far_side = -toward if inner else toward
+        far = np.arcsin(np.minimum(1.0, self.far_shape.reach_km(far_side) / sight.far_distance_km))
         return near, far
 
     def chord(self, inner: bool) -> Callable[[np.ndarray, np.ndarray], np.ndarray]:
@@ -113,7 +136,7 @@ class Passing:
 
         def squared(tt_s: np.ndarray, which: np.ndarray) -> np.ndarray:
             sight = self.sight(tt_s)
-            near, far = self.radii_rad(sight)
+            near, far = self.radii_rad(sight, inner)
             limit = near - far if inner else near + far
             return sight.separation_rad**2 - limit**2
 

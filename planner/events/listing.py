@@ -23,6 +23,7 @@ _LABELS = {
     "station_longitude_1": "1st station, longitude",
     "station_longitude_2": "2nd station, longitude",
 }
+_LATER = {"rings_later_s": "rings", "lit_part_later_s": "lit part"}
 # What a one-line entry of a list shows of an event of weeks, and what it passes over.
 _MIDDLES = {"opposition", "conjunction", "greatest_elongation_east", "greatest_elongation_west"}
 _ASIDES = {"closest", "conjunction_ra", "conjunction_longitude"}
@@ -286,6 +287,9 @@ def _rows(circumstances: Circumstances) -> list[list[str]]:
             row += [_angle(instant.altitude_deg), _angle(instant.azimuth_deg)]
             row += [_angle(extra.get("sun_altitude_deg", math.nan))]
             words = [extra["limb"] + " limb"] if "limb" in extra and instant.name != "closest" else []
+            for key, what in _LATER.items():
+                if math.isfinite(extra.get(key, math.nan)):
+                    words.append(f"{what} {extra[key]:+.1f} s")
             row.append(", ".join([instant.limited_by or "yes", *words]))
         rows.append(row)
     return rows

@@ -118,9 +118,9 @@ def limb_words(state: MoonState) -> dict[str, list]:
     }
 
 
-def moon_cautions(elongation_deg: float) -> tuple[str, ...]:
+def moon_cautions(elongation_deg: float, smooth: bool) -> tuple[str, ...]:
     """Return the cautions of an occultation by the Moon, this far from the Sun."""
     near_sun = (
         tuple(text.format(elongation_deg) for text in cautions.SUN_NEAR) if elongation_deg < 30.0 else ()
     )
-    return near_sun + cautions.ROUND_LIMB + cautions.NIGHT
+    return near_sun + (cautions.ROUND_LIMB if smooth else ()) + cautions.NIGHT

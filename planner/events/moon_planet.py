@@ -3,27 +3,30 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 
 import numpy as np
 
 from planner.errors import InputError
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
 from planner.events.catalogue import predicted
-from planner.events.contacts import RAD_ARCSEC, Passing, Shape, body_track
+from planner.events.contacts import RAD_ARCSEC, LitShape, Passing, Shape, body_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
+from planner.events.limb import contact
 from planner.events.moon import SMOOTH_LIMB_TEXT, limb_disc, limb_track, limb_words, moon_cautions, moon_state
 from planner.events.moon_search import EVENT_REACH_S, happening, moon_candidates
 from planner.events.visibility import sun_altitude_deg, view
 from planner.sky import bodies, discs, places, timescale
-from planner.sky.moonlimb import SMOOTH_LIMB_SIGMA_KM
+from planner.sky.moonlimb import SMOOTH_LIMB_SIGMA_KM, LimbModel
 from planner.sky.observer import Observer
 
 DAY_S = timescale.DAY_S
 # A topocentric occultation lasts under 2 h, and its middle is within 2 h of the geocentric one.
 _CLOSEST_REACH_S = 0.25 * DAY_S
 _CONTACT_REACH_S = 0.15 * DAY_S
-_RINGS_KM = 136775.0  # outer edge of Saturn's A ring (IAU/NASA planetary ring tables; from memory)
+# The phase of a planet moves contacts of what is seen of it by more than its limb's error from here on: 1 % of 25".
+_PHASE_THAT_MATTERS_DEG = 10.0
 
 
 class MoonOccultsPlanet:
@@ -71,6 +74,9 @@ class MoonOccultsPlanet:
             closest = np.array([event.middle_tt_s])
         outer = passing.contacts(closest, _CONTACT_REACH_S, inner=False)[0]
         inner = passing.contacts(closest, _CONTACT_REACH_S, inner=True)[0]
+        model = event.spec.limb
+        if model is not None:
+            outer, inner = self._real_limb(passing, model, outer, inner)
         times = np.array([outer[0], inner[0], closest[0], inner[1], outer[1]])
         names = np.array(
             ["disappearance_start", "disappearance_end", "closest", "reappearance_start", "reappearance_end"]
@@ -80,7 +86,8 @@ class MoonOccultsPlanet:
         moment = moments(passing, times, names == "closest")
         sight = passing.sight(times)
         at_limb = np.where(names == "closest", 0.0, 1.0)
-        limb_arcsec = at_limb * SMOOTH_LIMB_SIGMA_KM / moment.near_distance_km * RAD_ARCSEC
+        limb_km = SMOOTH_LIMB_SIGMA_KM if model is None else model.sigma_km
+        limb_arcsec = at_limb * limb_km / moment.near_distance_km * RAD_ARCSEC
         terms = site_terms(moment, observer)
         terms += [ephemeris_term(moment, "moon", body), angle_term("lunar limb", moment, limb_arcsec)]
         planet = discs.sky_disc(body, observer, times, radii=radii)
@@ -88,9 +95,15 @@ class MoonOccultsPlanet:
         state = moon_state(observer, times, places.position_angle_deg(sight.near_km, sight.far_km))
         separation = sight.separation_rad * RAD_ARCSEC
         extra = {"separation_arcsec": separation, **limb_words(state)}
+        if body == "saturn":
+            rings = self._ring_contacts(passing, closest, radii, event.middle_tt_s)
+            extra["rings_later_s"] = _later(names, times, rings)
+        middle = int(np.flatnonzero(names == "closest")[0])
+        if planet.phase_angle_deg[middle] > _PHASE_THAT_MATTERS_DEG and model is None:
+            lit = self._lit_contacts(passing, closest, planet, middle)
+            extra["lit_part_later_s"] = _later(names, times, lit)
         instants = maker.instants(names, terms, extra)
         covered = bool(np.isfinite(outer).all())
-        middle = int(np.flatnonzero(names == "closest")[0])
         least = float(separation[middle])
         near, far = passing.radii_rad(sight)
         happens, reason = covered, None
@@ -124,10 +137,10 @@ class MoonOccultsPlanet:
             conventions={
                 "radii": f"{radii}: {bodies.convention(radii).text}",
                 "position_angle": "of the planet from the Moon's centre, from true celestial north of date",
-                "limb": SMOOTH_LIMB_TEXT,
+                "limb": SMOOTH_LIMB_TEXT if model is None else model.text(event.middle_tt_s),
                 "places": "light-time directions from the observer; refraction does not move a contact",
             },
-            cautions=moon_cautions(state.elongation_deg[middle]) + maker.time_cautions(),
+            cautions=moon_cautions(state.elongation_deg[middle], model is None) + maker.time_cautions(),
             facts=facts,
         )
 
@@ -150,6 +163,42 @@ class MoonOccultsPlanet:
             azimuth_deg=seen.azimuth_deg,
             zenith_pa_deg=zenith_pa_deg(vector_km, observer, tt_s),
             sun_altitude_deg=sun_altitude_deg(observer, tt_s),
+        )
+
+    @staticmethod
+    def _ring_contacts(passing: Passing, closest: np.ndarray, radii: str, tt_s: float) -> dict[str, float]:
+        """Return the contacts of the outer edge of Saturn's A ring."""
+        globe = planet_shape("saturn", radii, tt_s)
+        ring = Shape(bodies.SATURN_RINGS_KM["a_outer"], 0.0, globe.pole)
+        return _four(replace(passing, far_shape=ring), closest)
+
+    @staticmethod
+    def _lit_contacts(
+        passing: Passing, closest: np.ndarray, planet: discs.SkyDisc, middle: int
+    ) -> dict[str, float]:
+        """Return the contacts of the sunlit part of the disc."""
+        ra, dec = np.radians(planet.ra_deg[middle]), np.radians(planet.dec_deg[middle])
+        pa = np.radians(planet.bright_limb_pa_deg[middle])
+        east = np.array([-np.sin(ra), np.cos(ra), 0.0])
+        north = np.array([-np.sin(dec) * np.cos(ra), -np.sin(dec) * np.sin(ra), np.cos(dec)])
+        bright = east * np.sin(pa) + north * np.cos(pa)
+        radius_km = float(passing.far_shape.equatorial_km)  # type: ignore[union-attr]
+        shape = LitShape(radius_km, tuple(bright), float(planet.phase_angle_deg[middle]))
+        return _four(replace(passing, far_shape=shape), closest)
+
+    @staticmethod
+    def _real_limb(
+        passing: Passing, model: LimbModel, outer: np.ndarray, inner: np.ndarray
+    ) -> tuple[np.ndarray, np.ndarray]:
+        """Return the disc contacts with the limb as it is, near the smooth ones."""
+        return tuple(  # type: ignore[return-value]
+            np.array(
+                [
+                    contact(passing, passing.observer, model, t, edge, ingress) if np.isfinite(t) else np.nan
+                    for t, ingress in zip(smooth, (True, False), strict=True)
+                ]
+            )
+            for smooth, edge in ((outer, 1.0), (inner, -1.0))
         )
 
     def _checked(self, body: str) -> str:
@@ -183,3 +232,20 @@ def planet_shape(body: str, radii: str | None, tt_s: float) -> Shape:
     equatorial_km, polar_km = bodies.radii_km(body, radii)
     pole = places.unit_vector(*bodies.pole_radec_deg(body, np.array([tt_s])))[:, 0]
     return Shape(equatorial_km, polar_km / equatorial_km, tuple(pole))
+
+
+def _four(passing: Passing, closest: np.ndarray) -> dict[str, float]:
+    """Return the four contacts by name, NaN where limbs do not meet."""
+    outer = passing.contacts(closest, _CONTACT_REACH_S, inner=False)[0]
+    inner = passing.contacts(closest, _CONTACT_REACH_S, inner=True)[0]
+    return {
+        "disappearance_start": outer[0],
+        "disappearance_end": inner[0],
+        "reappearance_start": inner[1],
+        "reappearance_end": outer[1],
+    }
+
+
+def _later(names: np.ndarray, times: np.ndarray, contacts: dict[str, float]) -> list[float]:
+    """Return how much later these contacts come than the instants of the disc (NaN for the closest approach)."""
+    return [float(contacts.get(str(name), np.nan) - t) for name, t in zip(names, times, strict=True)]

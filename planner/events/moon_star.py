@@ -12,8 +12,9 @@ from planner.events.besselian import STAR_DISTANCE_KM
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
 from planner.events.catalogue import predicted
 from planner.events.contacts import RAD_ARCSEC, Passing, Shape
-from planner.events.family import Circumstances, Event, EventSpec, Geometry
+from planner.events.family import Circumstances, Event, EventSpec, Geometry, Series
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
+from planner.events.limb import contact, crossings
 from planner.events.moon import (
     LIMB_RELIEF_KM,
     SMOOTH_LIMB_TEXT,
@@ -26,13 +27,16 @@ from planner.events.moon import (
 from planner.events.moon_search import EVENT_REACH_S, as_table, happening, moon_candidates, zodiac_stars
 from planner.events.visibility import sun_altitude_deg, view
 from planner.sky import bodies, places, starlist, stars, timescale
-from planner.sky.moonlimb import SMOOTH_LIMB_SIGMA_KM
+from planner.sky.moonlimb import SMOOTH_LIMB_SIGMA_KM, LimbModel
 from planner.sky.observer import Observer
 
 DAY_S = timescale.DAY_S
 DEFAULT_MAGNITUDE = 3.5
 _CLOSEST_REACH_S = 0.25 * DAY_S
 _CONTACT_REACH_S = 0.15 * DAY_S
+# Within this of the limb (9 km of terrain) the limb may be crossed more than twice, over this much time.
+_DEEP_ARCSEC = 6.0
+_GRAZE_SPAN_S = 900.0
 # A star this bright is seen at the Moon's lit limb in a telescope, a fainter one is not; common practice, no source.
 _LIT_LIMB_MAGNITUDE = 3.5
 # A Moon thinner than this has no glare to speak of at its lit limb.
@@ -99,8 +103,14 @@ class MoonOccultsStar:
         least = float(at_closest.separation_rad[0]) * RAD_ARCSEC
         margin = float(near[0]) * RAD_ARCSEC - least
         relief = LIMB_RELIEF_KM / float(at_closest.near_distance_km[0]) * RAD_ARCSEC
-        graze = abs(margin) < relief
         contacts = passing.contacts(closest, _CONTACT_REACH_S, inner=False)[0]
+        smooth, series = contacts.copy(), ()
+        model = event.spec.limb
+        if model is None:
+            graze = abs(margin) < relief
+        else:
+            contacts, series = self._real_limb(passing, model, contacts, float(closest[0]), margin)
+            graze = False
         covered = bool(np.isfinite(contacts).all())
         if graze:
             times, names = closest, np.array(["graze"])
@@ -109,7 +119,7 @@ class MoonOccultsStar:
             names = np.array(["disappearance", "closest", "reappearance"])
         kept = np.isfinite(times)
         times, names = times[kept], names[kept]
-        instants, maker, facts = self._instants(star, passing, times, names)
+        instants, maker, facts = self._instants(star, passing, times, names, model)
         happens, reason = covered or graze, None
         if graze:
             reason = (
@@ -124,6 +134,9 @@ class MoonOccultsStar:
                 happens, reason = False, f"{star.name} is below the horizon"
         facts |= {"margin_arcsec": margin, "limb_relief_arcsec": relief}
         facts["duration_s"] = float(contacts[1] - contacts[0]) if covered else 0.0
+        if model is not None and covered and np.isfinite(smooth).all():
+            facts["limb_shift_of_disappearance_s"] = float(contacts[0] - smooth[0])
+            facts["limb_shift_of_reappearance_s"] = float(contacts[1] - smooth[1])
         return Circumstances(
             event=event,
             observer=observer,
@@ -134,12 +147,13 @@ class MoonOccultsStar:
             conventions={
                 "radii": f"{radii}: {bodies.convention(radii).text}",
                 "position_angle": "of the star from the Moon's centre, from true celestial north of date",
-                "limb": SMOOTH_LIMB_TEXT,
+                "limb": SMOOTH_LIMB_TEXT if model is None else model.text(event.middle_tt_s),
                 "star": f"{star.name}, proper motion and parallax applied",
                 "places": "light-time directions from the observer; refraction does not move a contact",
             },
-            cautions=moon_cautions(float(facts["sun_elongation_deg"])) + maker.time_cautions(),
+            cautions=moon_cautions(float(facts["sun_elongation_deg"]), model is None) + maker.time_cautions(),
             facts=facts,
+            series=series,
         )
 
     def geometry(self, event: Event, observer: Observer | None, tt_s: np.ndarray) -> Geometry:
@@ -161,12 +175,42 @@ class MoonOccultsStar:
             stars=((star.name, ra_deg, dec_deg, star.magnitude),),
         )
 
-    def _instants(self, star: stars.Star, passing: Passing, times: np.ndarray, names: np.ndarray):  # type: ignore[no-untyped-def]
+    @staticmethod
+    def _real_limb(
+        passing: Passing, model: LimbModel, smooth: np.ndarray, closest: float, margin_arcsec: float
+    ) -> tuple[np.ndarray, tuple[Series, ...]]:
+        """Return the contacts with the limb as it is, and all crossings where a graze has several."""
+        observer = passing.observer
+        if abs(margin_arcsec) > _DEEP_ARCSEC:
+            if not np.isfinite(smooth).all():
+                return smooth, ()
+            pairs = zip(smooth, (True, False), strict=True)
+            return np.array([contact(passing, observer, model, t, 0.0, ingress) for t, ingress in pairs]), ()
+        found = crossings(passing, observer, model, closest, 0.0, _GRAZE_SPAN_S)
+        hidden, bare = found.tt_s[found.into], found.tt_s[~found.into]
+        if not len(hidden) or not len(bare):
+            return np.full(2, np.nan), ()
+        rows = tuple(
+            (timescale.utc_iso(float(t), 1), "disappears" if into else "reappears")
+            for t, into in zip(found.tt_s, found.into, strict=True)
+        )
+        series = (Series("crossings of the limb", ("utc", "the_star"), rows),) if len(rows) > 2 else ()
+        return np.array([hidden[0], bare[-1]]), series
+
+    def _instants(  # type: ignore[no-untyped-def]
+        self,
+        star: stars.Star,
+        passing: Passing,
+        times: np.ndarray,
+        names: np.ndarray,
+        model: LimbModel | None,
+    ):  # type: ignore[no-untyped-def]
         observer = passing.observer
         moment = moments(passing, times, (names == "closest") | (names == "graze"))
         sight = passing.sight(times)
         at_limb = np.where(names == "closest", 0.0, 1.0)
-        limb = at_limb * SMOOTH_LIMB_SIGMA_KM / moment.near_distance_km * RAD_ARCSEC
+        limb_km = SMOOTH_LIMB_SIGMA_KM if model is None else model.sigma_km
+        limb = at_limb * limb_km / moment.near_distance_km * RAD_ARCSEC
         terms = site_terms(moment, observer)
         terms += [
             ephemeris_term(moment, "moon", "star"),

@@ -11,8 +11,9 @@ from planner.sky import places
 from planner.sky.observer import Observer
 
 # Brightest-limit V magnitude and the Sun's altitude below which a target of it is worth a try in a telescope.
-# Common practice, no source: Venus and Jupiter are found by day, stars of magnitude 4 need nautical twilight.
-_DAYLIGHT_LIMITS = ((-3.0, 90.0), (-1.5, 0.0), (1.5, -3.0), (3.0, -6.0), (6.0, -9.0), (99.0, -12.0))
+# Common practice, no source: Venus is found by day, first-magnitude stars about sunset (Regulus was timed with the
+# Sun 2 degrees up on 1999 May 22), stars of magnitude 4 need nautical twilight.
+_DAYLIGHT_LIMITS = ((-3.0, 90.0), (-1.5, 20.0), (1.5, 3.0), (3.0, -6.0), (6.0, -9.0), (99.0, -12.0))
 
 
 @dataclass(frozen=True)
