@@ -271,7 +271,8 @@ class Scene:
             for name, ball in balls.items():
                 if name not in ("sun", "moon"):
                     draw_ball(rate, pointing, ball, rate_of(ball.magnitude), spread, motion, moon)
-            self._draw_stars(rate, pointing, tt_s, rate_of, spread, shot, moon, position)
+            covers = [ball for name, ball in balls.items() if name != "sun"]
+            self._draw_stars(rate, pointing, tt_s, rate_of, spread, shot, covers, position)
             if moon is not None:
                 lit = (1 + np.cos(np.radians(moon.phase_angle_deg))) / 2
                 shine = EARTHSHINE * (1 - lit) * rate_of(-12.7)
@@ -279,7 +280,7 @@ class Scene:
         trail = self._trail_px(pointing, shot)
         return _trailed(rate, trail) if np.hypot(*trail) > 0.1 else rate
 
-    def _draw_stars(self, rate, pointing, tt_s, rate_of, spread, shot, moon, position) -> None:  # type: ignore[no-untyped-def]
+    def _draw_stars(self, rate, pointing, tt_s, rate_of, spread, shot, covers, position) -> None:  # type: ignore[no-untyped-def]
         stars = self.stars(pointing, tt_s)
         ra, dec = np.asarray(stars.ra_deg), np.asarray(stars.dec_deg)
         magnitude = np.asarray(stars.magnitude)
@@ -291,9 +292,10 @@ class Scene:
             ra, dec = np.append(ra, own_ra), np.append(dec, own_dec)
             magnitude = np.append(magnitude, star_magnitude)
         vector = unit_vector(ra, dec)
-        if moon is not None:
-            away = np.arccos(np.clip(np.tensordot(moon.vector, vector, axes=(0, 0)), -1, 1))
-            seen = away > np.arctan(moon.radius_arcsec * np.pi / 648000)
+        for ball in covers:
+            # the chord, not the cosine, which cannot tell milliarcseconds apart: minor planets are as small
+            chord = np.sqrt(((vector - np.reshape(ball.vector, (3, 1))) ** 2).sum(axis=0))
+            seen = chord > 2 * np.sin(np.arctan(ball.radius_arcsec * np.pi / 648000) / 2)
             vector, magnitude = vector[:, seen], magnitude[seen]
         x, y = pointing.project(vector)
         margin = 60

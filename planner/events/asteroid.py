@@ -215,13 +215,13 @@ class AsteroidOccultsStar:
         """Return the body as a disc and the star as a point at these times."""
         tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
         occulter, star = occulter_of(event.spec), star_of(event.spec)
-        vector = occulter.track(observer, tt_s)
+        vector = star.vector(observer, tt_s)
         seen = view(vector, observer, tt_s)
-        ra_deg, dec_deg = places.radec_deg(star.vector(observer, tt_s))
+        ra_deg, dec_deg = places.radec_deg(vector)
         return Geometry(
             tt_s=tt_s,
             discs={occulter.body: disc_of(occulter, observer, tt_s, event.spec.radii)},
-            target=occulter.body,
+            target=star.name,
             reference="stars",
             altitude_deg=seen.altitude_deg,
             azimuth_deg=seen.azimuth_deg,
