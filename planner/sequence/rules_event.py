@@ -77,9 +77,8 @@ def contact_sparse(case: Case) -> Iterator[Finding]:
         sigma = float(np.hypot(contact.sigma_s, case.setting.rig.clock.sigma_s))
         inside = int(((start > contact.tt_s - sigma) & (start < contact.tt_s + sigma)).sum())
         reached = _reachable_at(case, np.array([contact.tt_s]))[0]
-        spacing = (
-            float(np.median(np.diff(start[np.abs(start - contact.tt_s) < 300]))) if len(start) > 2 else np.inf
-        )
+        near = start[np.abs(start - contact.tt_s) < 300]
+        spacing = float(np.median(np.diff(near))) if len(near) > 1 else np.inf
         if (
             reached
             and 0.5 < sigma < _SURE_S
