@@ -12,12 +12,14 @@ import numpy as np
 from planner.sequence import exposure, radiometry
 from planner.sequence.framing import Field, Framing, best_angle_deg, field_of, frame_track, fullest_aim
 from planner.sequence.models import Passage, Rig, Shot
-from planner.sequence.motion import hour_angle_deg, motion
+from planner.sequence.motion import hour_angle_deg, motion_at_rates
 from planner.sequence.nights import Nights, reserve_nights, spread_evenly, usable_nights, wanted_visits
 from planner.sequence.passages import next_whole
 from planner.sequence.recipes import tracking_of
 from planner.sequence.setting import Setting
 from planner.sequence.starfield import StarFrames, star_frames
+
+_HALF_STEP_S = 60.0
 
 
 @dataclass(frozen=True)
@@ -153,15 +155,18 @@ def _exposures(setting: Setting, visits: Nights, aims: Framing) -> _Exposures:
 
 def _trail_px_s(setting: Setting, visits: Nights) -> np.ndarray:
     """Return how fast stars and planet trail in the frame, pixels a second at the corner."""
-    rate = np.empty(len(visits))
+    from planner.sky.places import offsets_arcsec
+
+    before, after = (
+        setting.geometry(visits.tt_s + step_s).discs[visits.disc.name]
+        for step_s in (-_HALF_STEP_S, _HALF_STEP_S)
+    )
+    east, north = offsets_arcsec(before.ra_deg, before.dec_deg, after.ra_deg, after.dec_deg)
+    rates = (east / (2 * _HALF_STEP_S), north / (2 * _HALF_STEP_S))
+    place = (visits.disc.ra_deg, visits.disc.dec_deg)
     tracking = tracking_of(setting, "field")
-    for row, tt_s in enumerate(visits.tt_s):
-        times = tt_s + np.array([-60.0, 0.0, 60.0])
-        geometry = setting.geometry(times)
-        disc = geometry.discs[geometry.target]
-        moving = motion(setting.rig, setting.observer, tracking, disc.ra_deg, disc.dec_deg, times)
-        rate[row] = moving.trail_px(setting.rig, 1.0, corner=True)[1]
-    return rate
+    moving = motion_at_rates(setting.rig, setting.observer, tracking, place, rates, visits.tt_s)
+    return moving.trail_px(setting.rig, 1.0, corner=True)
 
 
 def _visit_shots(setting: Setting, visits: Nights, plan: _Exposures, row: int) -> list[Shot]:

@@ -79,10 +79,16 @@ def load_orbit(path: str | Path) -> OrbitElements | OrbitFile:
     Raises DocumentError or InputError naming what is wrong.
     """
     path = Path(path)
+    if path.suffix.lower() == ".bsp":
+        raise InputError(
+            f"{path}: found an SPK file, which says nothing of the body's size; allowed is a YAML file that names it "
+            "(spk: FILE.bsp) with name and diameter_km"
+        )
     if path.suffix.lower() not in (".yaml", ".yml", ".json"):
         orbit = read_orbit_line(path)
         assert orbit.elements is not None
         assert orbit.element_sigma is not None
+        assert orbit.epoch_jd_tdb is not None
         return OrbitElements(
             name=orbit.name,
             epoch_jd_tdb=orbit.epoch_jd_tdb,
@@ -102,10 +108,12 @@ def load_orbit(path: str | Path) -> OrbitElements | OrbitFile:
     return held.model_copy(update={"spk": str((path.parent / held.spk).resolve())})
 
 
-def orbit_of(given: OrbitElements | OrbitFile | str | None) -> Orbit | str | None:
+def orbit_of(given: OrbitElements | OrbitFile | str | None) -> Orbit | None:
     """Return an orbit as families understand it; raises InputError when it cannot be one."""
-    if given is None or isinstance(given, str):
-        return given
+    if given is None:
+        return None
+    if isinstance(given, str):
+        given = load_orbit(given)
     stated = (given.sigma_along_arcsec, given.sigma_across_arcsec)
     common: dict[str, Any] = {
         name: getattr(given, name)

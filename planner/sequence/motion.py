@@ -37,12 +37,25 @@ class Motion:
 def motion(
     rig: Rig, observer: Observer, tracking: str, ra_deg: np.ndarray, dec_deg: np.ndarray, tt_s: np.ndarray
 ) -> Motion:
-    """Return the motion of a moving place under a tracking rate; needs at least two times.
+    """Return the motion of a moving place under a tracking rate; needs at least two times."""
+    rates = place_rate_arcsec_s(ra_deg, dec_deg, tt_s)
+    return motion_at_rates(rig, observer, tracking, (ra_deg, dec_deg), rates, tt_s)
+
+
+def motion_at_rates(
+    rig: Rig,
+    observer: Observer,
+    tracking: str,
+    place_deg: tuple[np.ndarray, np.ndarray],
+    rate_arcsec_s: tuple[np.ndarray, np.ndarray],
+    tt_s: np.ndarray,
+) -> Motion:
+    """Return the motion of a place (ra, dec) that moves at a rate (east, north) among the stars, under a tracking rate.
 
     A periodic error that nothing guides out adds the steepest slope of its sine. An alt-azimuth mount is taken to
     follow its target and lets the field turn at the rate of the zenith's position angle.
     """
-    east, north = place_rate_arcsec_s(ra_deg, dec_deg, tt_s)
+    (ra_deg, dec_deg), (east, north) = place_deg, rate_arcsec_s
     cos_dec = np.cos(np.radians(dec_deg))
     mount = rig.mount
     if mount.kind == "altazimuth":

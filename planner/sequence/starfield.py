@@ -18,6 +18,7 @@ SOLVABLE_SIGNAL_TO_NOISE = 10.0
 SATURATION_BORNE = 200.0
 LONGEST_S = 60.0
 _SKY_WELL_FRACTION = 0.2
+_WIDE = ((20.0, 7.0), (10.0, 8.5))  # radius of the field in degrees, faintest magnitude looked up in it
 
 
 @dataclass(frozen=True)
@@ -98,12 +99,14 @@ def _fields(setting: Setting, ra_deg: np.ndarray, dec_deg: np.ndarray, tt_s: np.
 
     field = field_of(setting.rig)
     step_deg = min(field.half_width_arcsec, field.half_height_arcsec) / 3600 / 10
+    # in a wide field the bright stars are more than enough, and all others a thousand times as many
+    limit = next((magnitude for radius_deg, magnitude in _WIDE if field.radius_deg > radius_deg), None)
     known: dict[tuple[int, int], np.ndarray] = {}
     found = []
     for ra, dec, moment in zip(ra_deg, dec_deg, tt_s, strict=True):
         key = (round(float(ra) * np.cos(np.radians(dec)) / step_deg), round(float(dec) / step_deg))
         if key not in known:
-            stars = stars_in_field(float(ra) % 360.0, float(dec), field.radius_deg, float(moment))
+            stars = stars_in_field(float(ra) % 360.0, float(dec), field.radius_deg, float(moment), limit)
             right, up = field.along(*offsets_arcsec(ra, dec, stars.ra_deg, stars.dec_deg))
             inside = (np.abs(right) < field.half_width_arcsec) & (np.abs(up) < field.half_height_arcsec)
             known[key] = np.sort(stars.magnitude[inside])
