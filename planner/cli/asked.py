@@ -84,9 +84,11 @@ def _refined(  # type: ignore[no-untyped-def]
             raise InputError(f"--pm: found {pm!r}; allowed are two numbers such as 62.8,-189.4") from None
         options["pm_mas_yr"] = (east, north)
     changes: dict[str, Any] = {"options": tuple(options.items())}
-    changes |= {
-        key: value for key, value in (("radii", radii), ("orbit", orbit), ("star", star_text)) if value
-    }
+    changes |= {key: value for key, value in (("radii", radii), ("star", star_text)) if value}
+    if orbit is not None:
+        from planner.sequence.documents import load_orbit, orbit_of
+
+        changes["orbit"] = orbit_of(load_orbit(orbit))
     if limb is not None:
         from planner.sky.moonlimb import limb_model
 

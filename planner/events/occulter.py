@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -134,20 +133,12 @@ def _states(orbit: Orbit) -> tuple[StateOf, tuple[StateOf, ...]]:
 
 
 def orbit_of(given: Any) -> Orbit:
-    """Return an orbit from what a spec carries: an `Orbit`, or the path of an SPK or one-line orbit file.
-
-    Raises InputError when there is none or it cannot be read.
-    """
-    from planner.events.orbitfile import orbit_from_spk, read_orbit_line
-
+    """Return the orbit of a spec; raises InputError when there is none."""
     if isinstance(given, Orbit):
         return given
-    if not given:
-        raise InputError(
-            "event.orbit: found none; allowed is a file of elements (.yaml, .json), of one-line orbits, or SPK (.bsp)"
-        )
-    path = Path(str(given))
-    return orbit_from_spk(path) if path.suffix.lower() == ".bsp" else read_orbit_line(path)
+    raise InputError(
+        f"event.orbit: found {given or 'none'}; allowed is a file of elements (.yaml, .json) or one-line orbits (.txt)"
+    )
 
 
 def star_of(spec: EventSpec) -> stars.Star:
