@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.special import erf
@@ -10,11 +10,12 @@ from scipy.special import erf
 from imaging.discs.edge import FWHM_OVER_SIGMA, WING_RATIO, Blur
 from imaging.discs.limb import LimbFit
 from imaging.discs.phase import law_of, light_offset_radii, minnaert
-from imaging.discs.stamp import DiscPlace, Stamp, blurred, coverage, fit_stamp, sub_pixels
+from imaging.discs.stamp import DiscPlace, Stamp, blurred, coverage, fit_stamp, projected_cost, sub_pixels
 from planner.errors import NoSolutionError
 
-# Widths of the round Gaussians that together are any point spread, in units of the narrowest.
-_WIDTHS = (1.0, 1.6, 2.6, 4.5, 9.0)
+# Widths of the round Gaussians that together are any point spread: in units of the narrowest, and, for the aureole,
+# of the stamp's half side.
+_WIDTHS, _AUREOLE = (1.0, 1.6, 2.6, 4.5), (0.25, 0.6)
 
 
 @dataclass(frozen=True)
@@ -43,15 +44,22 @@ class Body:
 
 @dataclass(frozen=True)
 class Noise:
-    """Variance of a pixel: `sky_adu2` where it is dark, growing by `per_adu` times the light above `level_adu`."""
+    """Variance of a pixel: `sky_adu2` where it is dark, growing by `per_adu` times the light above `level_adu`.
+
+    `relative`: by what part of the light the model of the point spread may be wrong in a pixel (assumed).
+    `brightest_adu`: the most that any usable pixel holds; a model that promises more earns no larger variance by it.
+    """
 
     level_adu: float
     sky_adu2: float
     per_adu: float
+    relative: float = 0.0
+    brightest_adu: float = np.inf
 
     def variance(self, model: np.ndarray) -> np.ndarray:
         """Return the variance at these levels."""
-        return self.sky_adu2 + self.per_adu * np.maximum(model - self.level_adu, 0)
+        light = np.clip(model - self.level_adu, 0, self.brightest_adu - self.level_adu)
+        return self.sky_adu2 + self.per_adu * light + (self.relative * light) ** 2
 
 
 def planet_among_stars(
@@ -123,7 +131,9 @@ def _sky_noise(stamp: Stamp, gain_e_adu: float | None) -> Noise:
         scale = 1.48 * float(np.median(np.abs(values - level))) + 1e-9
         level = float(np.median(values[np.abs(values - level) < 4 * scale]))
     pairs = np.diff(stamp.data, axis=1)[stamp.usable[:, 1:] & stamp.usable[:, :-1]]
-    sky = max(float(1.48 * np.median(np.abs(pairs))) ** 2 / 2, 1e-6)
+    # mean square of the inner nine tenths, 0.623 of a normal law's variance: a median would be 0 for coarse numbers
+    square = np.sort(pairs**2)[: max(int(0.9 * pairs.size), 1)]
+    sky = max(float(square.mean()) / 0.623 / 2, 1 / 12)
     return Noise(level, sky, 1 / gain_e_adu if gain_e_adu else sky / max(level, 1.0))
 
 
@@ -161,25 +171,18 @@ def _locate(
     label = labels[row, column]
     chosen = (labels == label) if count > 1 and label > 0 else blob
     rows, columns = np.nonzero(chosen)
-    x0, y0 = float(np.median(columns)) + wide.x_low, float(np.median(rows)) + wide.y_low
+    x0, y0 = float(np.mean(columns)) + wide.x_low, float(np.mean(rows)) + wide.y_low
     size = np.sqrt(rows.size / np.pi) if wide.clipped[row, column] else 0.0
-    return x0, y0, max(reach, 2.5 * size + 2 * fwhm_px + 4), noise
+    return x0, y0, max(reach, 3 * size + 3 * fwhm_px + 5), noise
 
 
 def _without_bled_columns(stamp: Stamp) -> Stamp:
-    """Leave out the surroundings of saturated pixels, and whole columns (or rows) along which charge has run."""
-    if not stamp.clipped.any():
-        return stamp
-    import cv2
-
-    usable = stamp.usable & ~cv2.dilate(stamp.clipped.astype(np.uint8), np.ones((3, 3), np.uint8)).astype(
-        bool
-    )
+    """Leave out whole columns (or rows) along which charge has run out of saturated pixels, and their neighbours."""
+    usable = stamp.usable.copy()
+    core = np.sqrt(stamp.clipped.sum() / np.pi)
     for axis in (0, 1):
         along = stamp.clipped.sum(axis=axis)
-        core = np.sqrt(stamp.clipped.sum() / np.pi)
-        bled = np.nonzero(along > 3.0 * core + 4)[0]
-        for line in bled:
+        for line in np.nonzero(along > 3.0 * core + 4)[0]:
             piece = slice(max(line - 1, 0), line + 2)
             if axis == 0:
                 usable[:, piece] = False
@@ -200,27 +203,39 @@ def _point(
         return 0.5 * (erf((offset + 0.5) / (np.sqrt(2) * width)) - erf((offset - 0.5) / (np.sqrt(2) * width)))
 
     reach = 0.5 * min(stamp.data.shape)
-    ratios = [ratio for ratio in _WIDTHS if ratio == 1 or ratio * sigma < 0.8 * reach]
+    count = len(_WIDTHS) + len(_AUREOLE)
     seen = np.hypot(sigma, body.radius_px / 2)
 
     def components(parameters: np.ndarray) -> np.ndarray:
         px, py, log_sigma = parameters
-        widths = [ratio * np.exp(log_sigma) for ratio in ratios]
+        widths = [ratio * np.exp(log_sigma) for ratio in _WIDTHS] + [part * reach for part in _AUREOLE]
         return np.array([share(y - py, width) * share(x - px, width) for width in widths] + plane)
 
-    fit = fit_stamp(
-        stamp,
-        components,
-        np.array([x0, y0, np.log(seen)]),
-        np.array([0.01, 0.01, 0.01]),
-        noise.variance,
-        prior=np.array([np.inf, np.inf, 0.4]),
-        limit=np.array([max(4.0, 0.5 * reach)] * 2 + [1.5]),
-        robust=8.0,
-    )
-    light = np.tensordot(
-        fit.amplitudes[: len(ratios)], components(fit.parameters)[: len(ratios)], axes=(0, 0)
-    )
+    core = np.hypot(x - x0, y - y0) < 2 * FWHM_OVER_SIGMA * seen
+    tolerance = replace(noise, relative=0.008, brightest_adu=float(stamp.data[stamp.usable].max()))
+    x0, y0 = _clipped_centroid(stamp, x0, y0, noise, seen)
+    near = 0.5 + 0.5 * seen
+    start, stages = np.array([x0, y0, np.log(seen)]), (0.008,)
+    if clipped or seen < 0.8:
+        # a saturated or undersampled point has several minima: with large relative errors they are one
+        stages = (0.1, 0.008)
+        start = _best_start(stamp, components, start, replace(tolerance, relative=0.1), count)
+    fit = None
+    for relative in stages:
+        fit = fit_stamp(
+            stamp,
+            components,
+            start if fit is None else fit.parameters,
+            np.array([0.01, 0.01, 0.01]),
+            replace(tolerance, relative=relative).variance,
+            prior=np.array([np.inf, np.inf, 0.4]),
+            limit=np.array([near, near, 1.5]),
+            robust=8.0,
+            positive=count,
+            core=core,
+        )
+    assert fit is not None
+    light = np.tensordot(fit.amplitudes[:count], components(fit.parameters)[:count], axes=(0, 0))
     height = float(light.max())
     if height < 3 * np.sqrt(noise.sky_adu2):
         raise NoSolutionError("nothing like a planet stands out of the sky there")
@@ -237,6 +252,40 @@ def _point(
         x - dx, y - dy, fit.covariance[:2, :2], body.radius_px, 0.0, Blur(float(np.exp(fit.parameters[2]))), x, y,
         height / float(np.sqrt(noise.sky_adu2)), fit.chi2, "point spread", clipped, tuple(notes),
     )  # fmt: skip
+
+
+def _clipped_centroid(stamp: Stamp, x0: float, y0: float, noise: Noise, seen: float) -> tuple[float, float]:
+    """Return the centroid of the image clipped at a hundredth of its height: saturation and blur move it little."""
+    x, y = stamp.grid()
+    light = np.where(stamp.usable | stamp.clipped, stamp.data - noise.level_adu, 0.0)
+    top = max(0.01 * float(light.max()), 10 * np.sqrt(noise.sky_adu2))
+    cut = np.clip(light, 0, top)
+    cut[light < max(0.2 * top, 4 * np.sqrt(noise.sky_adu2))] = 0
+    radius = 3 * seen + np.sqrt(float((light >= top).sum()) / np.pi)
+    for _ in range(6):
+        window = cut * (np.hypot(x - x0, y - y0) < radius + 1)
+        total = window.sum()
+        if total <= 0:
+            break
+        x0, y0 = float((window * x).sum() / total), float((window * y).sum() / total)
+    return x0, y0
+
+
+def _best_start(  # type: ignore[no-untyped-def]
+    stamp: Stamp, components, start: np.ndarray, noise: Noise, positive: int
+) -> np.ndarray:
+    """Try widths, and places about the centroid: a saturated or undersampled point has several minima."""
+    weight = np.where(stamp.usable, 1 / noise.variance(stamp.data), 0.0)
+    offsets = np.linspace(-0.3, 0.3, 4)
+    best, best_cost = start, np.inf
+    for log_width in start[2] + np.log([0.35, 0.55, 0.8, 1.2]):
+        for dy in offsets:
+            for dx in offsets:
+                tried = np.array([start[0] + dx, start[1] + dy, log_width])
+                cost = projected_cost(components(tried), stamp.data, weight, positive)
+                if cost < best_cost:
+                    best, best_cost = tried, cost
+    return best
 
 
 def _resolved(
@@ -305,6 +354,7 @@ def _resolved(
         prior=np.array([np.inf, np.inf, 0.2 if moon is not None else 0.5, 0.01, 0.25]),
         limit=np.array([max(6.0, 2 * body.radius_px)] * 2 + [1.5, 0.2, 1.0]),
         robust=8.0,
+        positive=1,
     )
     px, py = float(fit.parameters[0]), float(fit.parameters[1])
     height = float((fit.amplitudes[0] * disc(fit.parameters)).max())

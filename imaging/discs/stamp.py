@@ -124,66 +124,128 @@ def fit_stamp(
     prior: np.ndarray | None = None,
     limit: np.ndarray | None = None,
     robust: float = 6.0,
+    positive: int = 0,
+    core: np.ndarray | None = None,
 ) -> StampFit:
-    """Fit data = sum amplitude_k component_k(parameters) by variable projection and Gauss-Newton steps.
+    """Fit data = sum amplitude_k component_k(parameters) by variable projection and damped Gauss-Newton steps.
 
-    `components(parameters)` gives (k, rows, columns); `step`: for derivatives, of the size of a hundredth of a pixel;
-    `variance(model)`: up to a factor, which the residuals set. `prior`: 1-sigma of each parameter about `start`
-    (inf is free). `limit`: how far each may go from `start`. Pixels off by more than `robust` sigma are left
-    out. Raises NoSolutionError when a parameter runs away.
+    `components(parameters)` gives (k, rows, columns); the first `positive` amplitudes are held at 0 or above.
+    `step`: for derivatives, of the size of a hundredth of a pixel. `variance(model)`: up to a factor, which the
+    residuals set. `prior`: 1-sigma of each parameter about `start` (inf is free). `limit`: how far each may go from
+    `start`. Pixels off by more than `robust` sigma are left out once the fit is near, but none of the `core`.
+    Raises NoSolutionError when a parameter runs away.
     """
-    data, usable = stamp.data, stamp.usable.copy()
-    parameters = np.asarray(start, float).copy()
-    pull = np.zeros(parameters.size) if prior is None else 1 / np.asarray(prior, float) ** 2
-    factor, model = 1.0, None
-    weight = np.where(usable, 1.0, 0.0)
-    for turn in range(12):
-        parts = components(parameters)
-        amplitudes = _amplitudes(parts, data, weight)
-        model = np.tensordot(amplitudes, parts, axes=(0, 0))
-        noise = np.maximum(variance(model), 1e-12)
-        residual = data - model
-        factor = _factor(residual[usable] ** 2 / noise[usable])
-        if turn >= 2:
-            usable = stamp.usable & (residual**2 < robust**2 * factor * noise)
+    start, step = np.asarray(start, float), np.asarray(step, float)
+    data = stamp.data
+    pull = np.zeros(start.size) if prior is None else 1 / np.asarray(prior, float) ** 2
+    parameters, usable = start.copy(), stamp.usable
+    if int(usable.sum()) < start.size + 6:
+        raise NoSolutionError("too few usable pixels where the body is looked for")
+    noise = np.maximum(variance(data), 1e-12)
+    weight = np.where(usable, 1 / noise, 0.0)
+    damping, settled, factor = 1e-3, 0, 1.0
+    parts = components(parameters)
+    amplitudes = _amplitudes(parts, data, weight, positive)
+    model = np.tensordot(amplitudes, parts, axes=(0, 0))
+    for turn in range(30):
+        # until the fit is near, a bright pixel that the model misses must not get a faint pixel's weight
+        noise = np.maximum(variance(model if settled >= 1 else np.maximum(model, data)), 1e-12)
+        square = (data - model) ** 2 / noise
+        factor = _factor(square[usable])
+        if settled >= 1:
+            near = square < robust**2 * factor
+            usable = stamp.usable & (near if core is None else near | core)
         weight = np.where(usable, 1 / (noise * factor), 0.0)
-        slopes = []
-        for index in range(parameters.size):
-            moved = parameters.copy()
-            moved[index] += step[index]
-            slopes.append((np.tensordot(amplitudes, components(moved), axes=(0, 0)) - model) / step[index])
-        design = np.concatenate([np.array(slopes).reshape(parameters.size, *data.shape), parts])
-        flat = design.reshape(design.shape[0], -1)
-        heavy = flat * weight.reshape(-1)
-        normal = heavy @ flat.T
-        normal[np.arange(parameters.size), np.arange(parameters.size)] += pull
-        right = heavy @ residual.reshape(-1)
-        right[: parameters.size] -= pull * (parameters - start)
-        scale = np.sqrt(np.maximum(np.diag(normal), 1e-300))
-        inverse = np.linalg.pinv(normal / np.outer(scale, scale), rcond=1e-10) / np.outer(scale, scale)
-        change = (inverse @ right)[: parameters.size]
-        most = np.asarray(step) * 150
-        change = np.clip(change, -most, most)
-        parameters = parameters + change
-        if limit is not None and (np.abs(parameters - start) > limit).any():
-            raise NoSolutionError("the fit runs away from where the body is looked for: it is not there")
-        if turn >= 3 and (np.abs(change) < 0.02 * np.asarray(step)).all():
+        amplitudes = _amplitudes(parts, data, weight, positive)
+        model = np.tensordot(amplitudes, parts, axes=(0, 0))
+        cost = _cost(data - model, weight, parameters - start, pull)
+        normal, right = _equations(
+            components, parameters, parts, amplitudes, model, data, weight, step, positive
+        )
+        diagonal = np.arange(start.size)
+        normal[diagonal, diagonal] += pull
+        right[: start.size] -= pull * (parameters - start)
+        accepted = False
+        for _ in range(8):
+            damped = normal.copy()
+            damped[diagonal, diagonal] *= 1 + damping
+            change = np.clip((_inverse(damped) @ right)[: start.size], -150 * step, 150 * step)
+            tried = parameters + change
+            new_parts = components(tried)
+            new_amplitudes = _amplitudes(new_parts, data, weight, positive)
+            new_model = np.tensordot(new_amplitudes, new_parts, axes=(0, 0))
+            if _cost(data - new_model, weight, tried - start, pull) <= cost * (1 + 1e-9):
+                accepted = True
+                break
+            damping = min(damping * 10, 1e6)
+        if not accepted:
+            settled += 1
+        else:
+            damping = max(damping / 5, 1e-6)
+            parameters, parts, amplitudes, model = tried, new_parts, new_amplitudes, new_model
+            if limit is not None and (np.abs(parameters - start) > limit).any():
+                raise NoSolutionError("the fit runs away from where the body is looked for: it is not there")
+            settled = settled + 1 if (np.abs(change) < 0.03 * step).all() else min(settled, 1)
+        if settled >= 3 or (turn > 12 and settled >= 2):
             break
-    assert model is not None
-    freedom = max(int(usable.sum()) - parameters.size - 3, 1)
-    chi2 = float(np.sum(((data - model) ** 2 * weight)[usable]) / freedom)
-    return StampFit(
-        parameters, inverse[: parameters.size, : parameters.size] * max(chi2, 1.0), amplitudes, model, chi2
-    )
+    normal, _ = _equations(components, parameters, parts, amplitudes, model, data, weight, step, positive)
+    normal[np.arange(start.size), np.arange(start.size)] += pull
+    covariance = _inverse(normal)[: start.size, : start.size]
+    freedom = max(int(usable.sum()) - start.size - amplitudes.size, 1)
+    chi2 = float(np.sum((data - model) ** 2 * weight) / freedom)
+    # a factor below 1 would say that the noise given is too large: the factor found is used both ways
+    return StampFit(parameters, covariance * max(chi2, 1.0), amplitudes, model, chi2 * factor)
 
 
-def _amplitudes(parts: np.ndarray, data: np.ndarray, weight: np.ndarray) -> np.ndarray:
-    flat = parts.reshape(parts.shape[0], -1)
-    heavy = flat * weight.reshape(-1)
-    normal = heavy @ flat.T
+def _equations(  # type: ignore[no-untyped-def]
+    components, parameters, parts, amplitudes, model, data, weight, step, positive
+) -> tuple[np.ndarray, np.ndarray]:
+    """Return the normal equations of parameters and those amplitudes that are not held at zero."""
+    slopes = []
+    for index in range(parameters.size):
+        moved = parameters.copy()
+        moved[index] += step[index]
+        slopes.append((np.tensordot(amplitudes, components(moved), axes=(0, 0)) - model) / step[index])
+    free = np.ones(amplitudes.size, bool)
+    free[:positive] = amplitudes[:positive] > 0
+    design = np.concatenate([np.array(slopes), parts[free]]).reshape(parameters.size + int(free.sum()), -1)
+    heavy = design * weight.reshape(-1)
+    return heavy @ design.T, heavy @ (data - model).reshape(-1)
+
+
+def _inverse(normal: np.ndarray) -> np.ndarray:
     scale = np.sqrt(np.maximum(np.diag(normal), 1e-300))
-    inverse = np.linalg.pinv(normal / np.outer(scale, scale), rcond=1e-9) / np.outer(scale, scale)
-    return inverse @ (heavy @ data.reshape(-1))
+    return np.linalg.pinv(normal / np.outer(scale, scale), rcond=1e-11) / np.outer(scale, scale)
+
+
+def _cost(residual: np.ndarray, weight: np.ndarray, away: np.ndarray, pull: np.ndarray) -> float:
+    return float(np.sum(residual**2 * weight) + np.sum(pull * away**2))
+
+
+def projected_cost(parts: np.ndarray, data: np.ndarray, weight: np.ndarray, positive: int = 0) -> float:
+    """Return the weighted sum of squares that the best amplitudes of components leave."""
+    model = np.tensordot(_amplitudes(parts, data, weight, positive), parts, axes=(0, 0))
+    return float(np.sum((data - model) ** 2 * weight))
+
+
+def _amplitudes(parts: np.ndarray, data: np.ndarray, weight: np.ndarray, positive: int) -> np.ndarray:
+    flat = parts.reshape(parts.shape[0], -1)
+    if positive == 0:
+        heavy = flat * weight.reshape(-1)
+        return _inverse(heavy @ flat.T) @ (heavy @ data.reshape(-1))
+    from scipy.optimize import nnls
+
+    root = np.sqrt(weight.reshape(-1))
+    keep = root > 0
+    design, target = (flat * root)[:, keep].T, (data.reshape(-1) * root)[keep]
+    scale = np.sqrt(np.sum(design**2, axis=0)) + 1e-300
+    design = design / scale
+    # amplitudes of either sign are projected out first, the others then found at 0 or above
+    basis, _ = np.linalg.qr(design[:, positive:])
+    held = design[:, :positive]
+    solution, _ = nnls(held - basis @ (basis.T @ held), target - basis @ (basis.T @ target), maxiter=200)
+    rest, *_ = np.linalg.lstsq(design[:, positive:], target - held @ solution, rcond=None)
+    return np.append(solution, rest) / scale
 
 
 def _factor(squares: np.ndarray) -> float:
