@@ -25,7 +25,6 @@ class Choices:
     scale_arcsec_px: float | None = None
     largest_px: int = 20000
     colour: bool = False
-    enlarge: float = 1.0
     scratch: Path | None = None
     threads: int = 2
     tick: Callable[[int, int], None] = lambda done, total: None

@@ -149,9 +149,12 @@ def _instants(
     """
     tt_s = np.array([frame.tt_s for frame in frames])
     measured = np.array([frame.measured for frame in frames])
-    usable = inside & measured & np.array([frame.verdict != "off-track" for frame in frames])
-    if not usable.any():
-        usable = inside & measured
+    usable = inside & measured
+    if not usable.any() and any(frame.verdict == "off-track" for frame in frames):
+        raise InputError(
+            f"{material.track_path}: the target is off its track in every frame, so that a picture would be wrong; "
+            "read the check's report, or draw it all the same with --keep-off-track"
+        )
     chosen = evenly_spaced(tt_s, choices.instants, sharpness, usable)
     clear_s = 0.4 * _time_to_clear_s(material, frames)
     for wanted in range(choices.instants + 1, 4 * choices.instants):

@@ -49,11 +49,12 @@ class Registered:
     limb_px: tuple[float, float, float]
     exposure_s: float
     verdict: str
+    believed: bool = True
 
     @property
     def measured(self) -> bool:
-        """True when the target was measured in this frame."""
-        return bool(np.isfinite(self.measured_ra_deg) and np.isfinite(self.measured_dec_deg))
+        """True when the target was measured in this frame, and the measurement is believed."""
+        return self.believed and bool(np.isfinite([self.measured_ra_deg, self.measured_dec_deg]).all())
 
     @property
     def target_ra_deg(self) -> float:
@@ -123,11 +124,13 @@ def gather(
     track_path: str | Path,
     frames_folder: str | Path | None = None,
     geometry_at: Callable[[np.ndarray], Geometry] | None = None,
+    keep_off_track: bool = False,
 ) -> Material:
     """Return what a picture can be made of.
 
     `frames_folder`: where the frames are now; default: where the track says, else beside it. `geometry_at`: default
-    is the plan's family at the plan's site. Frames that are missing or were not solved are set aside with a reason.
+    is the plan's family at the plan's site. `keep_off_track`: believe measurements that the check found off the track.
+    Frames that are missing or were not solved are set aside with a reason.
     Raises InputError when the track is wrong or no frame is left.
     """
     from imaging.track.table import read_track
@@ -157,7 +160,7 @@ def gather(
         sky = _Sky(geometry_at(np.array([tt_s for tt_s, _, _ in rows])), observer)
         for place, (tt_s, index, path) in enumerate(rows):
             try:
-                frames.append(_registered(track, index, path, tt_s, sky, place))
+                frames.append(_registered(track, index, path, tt_s, sky, place, keep_off_track))
             except FrameSetAside as problem:
                 aside.append(problem)
     if not frames:
@@ -231,7 +234,9 @@ class _Sky:
         return Air(tuple(self.zenith[place].tolist()), self.observer)  # type: ignore[arg-type]
 
 
-def _registered(track: Track, index: int, path: Path, tt_s: float, sky: _Sky, place: int) -> Registered:
+def _registered(
+    track: Track, index: int, path: Path, tt_s: float, sky: _Sky, place: int, keep_off_track: bool
+) -> Registered:
     def number(name: str) -> float:
         return float(track[name][index])
 
@@ -279,6 +284,7 @@ def _registered(track: Track, index: int, path: Path, tt_s: float, sky: _Sky, pl
         limb_px=limb,
         exposure_s=number("exposure_s"),
         verdict=str(track["verdict"][index]),
+        believed=keep_off_track or str(track["verdict"][index]) != "off-track",
     )
 
 

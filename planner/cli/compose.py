@@ -57,6 +57,9 @@ class _Several(click.ParamType):
     help="Default: the finest of the frames.",
 )
 @click.option("--colour", is_flag=True, help="Keep the colours of a colour camera.")
+@click.option(
+    "--keep-off-track", is_flag=True, help="Draw the target also where the check found it off its track."
+)
 @click.option("--linear", is_flag=True, help="No stretch: tones proportional to light.")
 @click.option("--formats", type=_Several(PICTURE_FORMATS), default="fits,png", show_default=True)
 @click.option("--plots", type=_Several(PLOT_FORMATS), default="png,svg", show_default=True)
@@ -100,7 +103,7 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     )
     outputs.refuse_existing()
     document = load_plan(plan)
-    material = gather(document, track, frames)
+    material = gather(document, track, frames, keep_off_track=chosen["keep_off_track"])
     zone, zone_label = UTC, "UTC"
     if chosen["local_time"]:
         zone, zone_label = ZoneInfo(document.site.timezone), document.site.timezone

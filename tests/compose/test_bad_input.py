@@ -1,0 +1,125 @@
+"""What is missing, moved, unreadable or of another size is set aside with a reason; the picture is made of the rest."""
+
+from __future__ import annotations
+
+import json
+import shutil
+from dataclasses import replace
+
+import numpy as np
+import pytest
+from astropy.io import fits
+from astropy.table import Table
+
+from planner.cli.main import run_with
+
+
+@pytest.fixture
+def copy(transit, tmp_path):
+    """A copy of the rehearsed transit that a test may spoil."""
+    frames, checked = tmp_path / "frames", tmp_path / "checked"
+    shutil.copytree(transit.frames, frames)
+    shutil.copytree(transit.track.parent, checked)
+    return replace(transit, frames=frames, track=checked / "track.ecsv")
+
+
+def composed(rehearsal, out, *options):
+    code = run_with(
+        ["compose", *rehearsal.arguments, "-o", str(out), "--formats", "png", "--plots", "none", "--instants", "3", "--quiet",
+         *options]
+    )  # fmt: skip
+    statement = out / "composite.truth.json"
+    return code, json.loads(statement.read_text()) if statement.exists() else None
+
+
+def names(copy):
+    return sorted(path.name for path in copy.frames.iterdir())
+
+
+def test_a_missing_an_empty_and_a_damaged_frame_are_set_aside(copy, tmp_path):
+    missing, empty, damaged = names(copy)[5:8]
+    (copy.frames / missing).unlink()
+    (copy.frames / empty).write_bytes(b"")
+    whole = (copy.frames / damaged).read_bytes()
+    (copy.frames / damaged).write_bytes(whole[: len(whole) // 3])
+    code, statement = composed(copy, tmp_path / "out")
+    assert code == 1
+    reasons = {item["file"]: item["reason"] for item in statement["set_aside"]}
+    assert set(reasons) == {missing, empty, damaged}
+    assert "is not in" in reasons[missing]
+    assert "empty" in reasons[empty]
+
+
+def test_frames_moved_into_another_folder_are_found_by_name(copy, tmp_path):
+    night = copy.frames / "night 1"
+    night.mkdir()
+    for name in names(copy):
+        if name.endswith(".fits"):
+            (copy.frames / name).rename(night / name)
+    code, statement = composed(copy, tmp_path / "out")
+    assert code == 0
+    assert statement["set_aside"] == []
+
+
+def test_frames_of_another_binning_combine(copy, tmp_path):
+    """A frame summed 2 x 2 has twice the scale; the track says so, and the picture does not change its place."""
+    table = Table.read(copy.track)
+    name = str(table["file"][7])
+    with fits.open(copy.frames / name, mode="update") as hdus:
+        data = hdus[0].data[: hdus[0].data.shape[0] // 2 * 2, : hdus[0].data.shape[1] // 2 * 2]
+        rows, columns = data.shape
+        hdus[0].data = data.reshape(rows // 2, 2, columns // 2, 2).mean(axis=(1, 3)).astype(np.float32)
+    row = table["file"] == name
+    table["scale_arcsec_px"][row] *= 2
+    for column in ("x_px", "y_px", "reference_x_px", "reference_y_px"):
+        table[column][row] = (table[column][row] - 0.5) / 2
+    table["reference_radius_px"][row] /= 2
+    table.write(copy.track, overwrite=True)
+    code, statement = composed(copy, tmp_path / "out")
+    assert code == 0
+    assert statement["largest_displacement_px"] < 0.05
+
+
+def test_no_frame_left_is_one_line_and_exit_code_2(copy, tmp_path, capsys):
+    for name in names(copy):
+        (copy.frames / name).write_bytes(b"not a frame")
+    code, statement = composed(copy, tmp_path / "out")
+    assert code == 2
+    assert statement is None
+    said = capsys.readouterr().err.strip()
+    assert said.count("\n") == 0
+    assert "no frame registered on the Sun is left" in said
+
+
+def test_a_track_that_is_off_everywhere_makes_no_picture_unless_asked(copy, tmp_path, capsys):
+    table = Table.read(copy.track)
+    table["verdict"] = ["off-track"] * len(table)
+    table.write(copy.track, overwrite=True)
+    code, _ = composed(copy, tmp_path / "out")
+    assert code == 2
+    assert "--keep-off-track" in capsys.readouterr().err
+    assert composed(copy, tmp_path / "out", "--keep-off-track")[0] == 0
+
+
+@pytest.mark.parametrize(
+    "text", ["", "hello", "# %ECSV 1.0\n# ---\n# datatype:\n# - {name: a, datatype: int64}\na\n1\n"]
+)
+def test_a_file_that_is_no_track_is_said_to_be_none(copy, tmp_path, capsys, text):
+    copy.track.write_text(text)
+    code, _ = composed(copy, tmp_path / "out")
+    assert code == 2
+    assert "not a track" in capsys.readouterr().err
+
+
+@pytest.mark.parametrize(
+    ("options", "words"),
+    [
+        (["--register", "moon"], "can be registered on sun or stars"),
+        (["--scale", "0.05"], "choose a larger --scale"),
+        (["--frames", "nowhere"], "no folder"),
+    ],
+)
+def test_impossible_choices_name_what_is_possible(copy, tmp_path, capsys, options, words):
+    code, _ = composed(copy, tmp_path / "out", *options)
+    assert code == 2
+    assert words in capsys.readouterr().err
