@@ -28,6 +28,7 @@ LIMB_SIGMA_ARCSEC = {"sun": 0.3, "moon": 0.3}
 # What the centre of a fitted disc may be off by in all frames alike. The Moon's centre of figure is not its
 # centre of mass, and a lit limb alone leaves 0.1-0.2" (docs: pitfalls of discs); the Sun's whole limb leaves nothing.
 CENTER_SIGMA_ARCSEC = {"sun": 0.0, "moon": 0.2, "stars": 0.0}
+STRAY_SHARE = 0.4
 
 
 @dataclass(frozen=True)
@@ -125,6 +126,7 @@ def understand(
     measurements = [outcome for outcome in outcomes if isinstance(outcome, Measurement)]
     measurements, doubles = _without_doubles(measurements)
     aside += doubles
+    measurements = _without_faint_strays(measurements)
     findings = frame_findings(measurements, plan)
     measurements.sort(key=lambda m: m.time.middle_tt_s)
     promise = promise or Promise(plan)
@@ -174,6 +176,22 @@ def _without_doubles(measurements: list[Measurement]) -> tuple[list[Measurement]
         seen[m.digest] = m.file
         kept.append(m)
     return kept, aside
+
+
+def _without_faint_strays(measurements: Sequence[Measurement]) -> list[Measurement]:
+    """Return the measurements, those unmeasured that took a point fainter than the brightest stray for the target.
+
+    Where the target is hidden, a star may be the brightest point; the target itself is equally bright in all frames.
+    """
+    rates = [m.stray_rate_adu_s for m in measurements if m.measured and np.isfinite(m.stray_rate_adu_s)]
+    if not rates:
+        return list(measurements)
+    least = STRAY_SHARE * max(rates)
+    reason = "only a point fainter than the target, elsewhere"
+    return [
+        replace(m, x_px=float("nan"), reason=reason) if m.measured and m.stray_rate_adu_s < least else m
+        for m in measurements
+    ]
 
 
 def usual_jitter_arcsec(plan: Plan, reference: str) -> float:

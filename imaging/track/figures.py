@@ -91,8 +91,8 @@ def residual_figure(result: CheckResult):  # type: ignore[no-untyped-def]
         axis.set_ylabel(f"O − C {part} (arcsec)")
         axis.grid(color=PALE, alpha=0.25, lw=0.6)
         _scale_to(axis, value, sigma, verdict)
-    legend = axes[0].legend(loc="best", fontsize=8, facecolor=PAPER, edgecolor=PALE, labelcolor=INK)
-    legend.set_zorder(5)
+    if axes[0].get_legend_handles_labels()[0]:
+        axes[0].legend(loc="best", fontsize=8, facecolor=PAPER, edgecolor=PALE, labelcolor=INK).set_zorder(5)
     _time_axis(axes[-1])
     axes[-1].set_xlabel("mid-exposure as stamped, UTC")
     return figure

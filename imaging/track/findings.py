@@ -151,8 +151,8 @@ def _rivals(best: Reading, other: Reading) -> bool:
 
 def explained_limit_arcsec(sightings: Sightings, question: Question) -> float:
     """Return the scatter above which a track does not follow its path: far more than seeing and measuring make."""
-    own = np.sqrt(np.median(np.einsum("nii->n", sightings.covariance_arcsec2)) / 2.0)
-    return float(max(5.0 * question.jitter_arcsec, 5.0 * own))
+    own = float(np.sqrt(np.median(np.einsum("nii->n", sightings.covariance_arcsec2)) / 2.0))
+    return 5.0 * float(np.hypot(question.jitter_arcsec, min(own, 2.0)))
 
 
 def odds(log_odds: float) -> float:

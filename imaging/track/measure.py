@@ -8,6 +8,7 @@ from dataclasses import replace
 
 import numpy as np
 
+from imaging.discs.find import find_disc
 from imaging.discs.limb import LimbFit, fit_limb
 from imaging.discs.outline import Outline, pixel_angle_deg
 from imaging.discs.planet import Body, DiscPlace, planet_among_stars, planet_beside_moon, planet_on_sun
@@ -24,6 +25,10 @@ from planner.events.family import Geometry
 
 RADIUS_TOLERANCE = 0.01  # of a rig file's scale: focus and temperature change a focal length by less
 FULL_PHASE_DEG = 3.0  # below this phase angle the whole limb of the Moon is lit
+LIT_HALF_DEG = 80.0  # how far to each side of its middle the lit limb is used
+PHASE_SEEN_DEG = 25.0  # above this phase angle the centre of light tells where the Sun stands
+TURNED_DEG = 15.0  # beyond this difference the light is believed, not the plan
+VAGUE_PX, VAGUE_ARCSEC = 0.7, 2.0  # a place less certain than both is not a planet's
 NEAR_ARCSEC = 15.0  # an ordinary clock, site and camera leave the target this near to where it is expected
 
 STRANGER_RATIO = 5.0  # so much brighter than what is near the prediction, a stranger is taken for the target
@@ -36,6 +41,7 @@ class Measurer:
         self.promise = promise
         self.path = promise.path
         self._shift_px = np.zeros(2)
+        self._stray_rate = float("nan")
         self._solution: PlateSolution | None = None
 
     def measure(self, frame: Frame, pictures: bool = False) -> Measurement:
@@ -90,6 +96,7 @@ class Measurer:
             predicted_px=tuple((center + offset).tolist()),
         )
         radius = float(expected.target_semidiameter_arcsec[0]) / nominal.scale_arcsec_px
+        self._stray_rate = float("nan")
         try:
             place = self._found(frame, limb, center + offset, radius, geometry)
         except NoSolutionError as none:
@@ -100,6 +107,7 @@ class Measurer:
             x_px=place.x_px,
             y_px=place.y_px,
             covariance_px2=place.covariance,
+            stray_rate_adu_s=self._stray_rate,
             reason="; ".join((*limb.notes, *place.notes)),
         )
 
@@ -126,8 +134,11 @@ class Measurer:
             options["radius_sigma_px"] = RADIUS_TOLERANCE * radius
             if float(disc.phase_angle_deg[0]) > FULL_PHASE_DEG:
                 bright = float(disc.bright_limb_pa_deg[0])
-                options["lit_angle_deg"] = pixel_angle_deg(bright, nominal.rotation_deg, nominal.parity)
-                options["lit_half_deg"] = 80.0
+                promised = pixel_angle_deg(bright, nominal.rotation_deg, nominal.parity)
+                options["lit_angle_deg"] = _lit_angle_deg(
+                    frame.data, radius, promised, float(disc.phase_angle_deg[0])
+                )
+                options["lit_half_deg"] = LIT_HALF_DEG
         return fit_limb(frame.data, radius, **options)
 
     def _found(
@@ -139,14 +150,39 @@ class Measurer:
         tries = [(predicted, near)]
         if np.hypot(*self._shift_px) > near / 2:
             tries.insert(0, (predicted + self._shift_px, near))
-        tries += [(predicted, 0.2 * limb.radius_px), (center, 1.02 * limb.radius_px)]
+        if geometry.reference == "sun":
+            tries += [(predicted, 0.2 * limb.radius_px), (center, 1.02 * limb.radius_px)]
         reason = NoSolutionError("nothing was looked for")
         for place, search in tries:
             try:
-                return self._place(frame, limb, place, search, radius_px, geometry)
+                return self._sure(frame, limb, place, search, radius_px, geometry)
             except NoSolutionError as none:
                 reason = none
+        if geometry.reference == "moon":
+            point = _point_off_disc(frame, limb)
+            if point is not None:
+                self._stray_rate = point[1] / max(frame.exposure_s or 1.0, 1e-6)
+                return self._sure(frame, limb, point[0], 3.0, radius_px, geometry)
         raise reason
+
+    def _sure(
+        self,
+        frame: Frame,
+        limb: LimbFit,
+        place: np.ndarray,
+        search_px: float,
+        radius_px: float,
+        geometry: Geometry,
+    ) -> DiscPlace:
+        """Return a place that is sharp enough to be a planet's; glare and gradients give vague ones."""
+        found = self._place(frame, limb, place, search_px, radius_px, geometry)
+        worst = max(found.sigma_px)
+        limit = max(VAGUE_PX, VAGUE_ARCSEC / (self.promise.rig.scale_arcsec_px * frame.binning))
+        if worst > limit:
+            raise NoSolutionError(
+                f"what is seen there has no sharp place (1 sigma {worst:.1f} px): not the planet"
+            )
+        return found
 
     def _place(
         self,
@@ -293,6 +329,39 @@ def _body(geometry: Geometry, radius_px: float, pixel_angle: Callable[[float], f
         flattening=float(disc.flattening[0]),
         pole_angle_deg=pixel_angle(float(disc.pole_pa_deg[0])),
     )
+
+
+def _point_off_disc(frame: Frame, limb: LimbFit) -> tuple[np.ndarray, float] | None:
+    """Return the place and the light of the brightest point clear of the Moon's limb, None when nothing is bright."""
+    found = detect_frame(frame)
+    away = np.hypot(found.x_px - limb.x_px, found.y_px - limb.y_px) - limb.radius_px
+    clear = np.flatnonzero((away > 4.0 + 2.0 * limb.seeing_fwhm_px) & (found.snr > 20.0))
+    if not clear.size:
+        return None
+    first = clear[np.argmax(found.flux_adu[clear])]
+    return np.array([found.x_px[first], found.y_px[first]]), float(found.flux_adu[first])
+
+
+def _lit_angle_deg(data: np.ndarray, radius_px: float, promised_deg: float, phase_angle_deg: float) -> float:
+    """Return the polar angle of the middle of the lit limb: as promised, unless the light itself lies elsewhere.
+
+    A camera that was turned or mirrored must not make the terminator a limb. Dark and bright ground shifts the
+    Moon's centre of light by a few degrees of this angle, so small differences leave the promise as it is.
+    """
+    if phase_angle_deg < PHASE_SEEN_DEG:
+        return promised_deg
+    rough = find_disc(data, radius_px)
+    step = max(1, int(radius_px / 100))
+    small = data[::step, ::step]
+    y, x = (np.arange(n) * step for n in small.shape)
+    dx, dy = x[None, :] - rough.x_px, y[:, None] - rough.y_px
+    inside = (np.hypot(dx, dy) < 0.97 * radius_px) & np.isfinite(small)
+    if inside.sum() < 100:
+        return promised_deg
+    light = np.where(inside, small - np.percentile(small[inside], 5), 0.0)
+    seen = np.degrees(np.arctan2(float(np.sum(light * dy)), float(np.sum(light * dx))))
+    away = (seen - promised_deg + 180.0) % 360.0 - 180.0
+    return float(seen) if abs(away) > TURNED_DEG else promised_deg
 
 
 def _hidden(geometry: Geometry, expected: Expected) -> str | None:

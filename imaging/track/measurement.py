@@ -51,6 +51,7 @@ class Measurement:
     """What one frame gave. `solved_by` is `none` and `x_px` NaN where it gave nothing, with the reason.
 
     `covariance_px2`: (2, 2), of the target. `predicted_px`: where it was expected at the stamped time.
+    `stray_rate_adu_s`: light of a point taken for the target far from where it was expected; NaN otherwise.
     """
 
     file: str
@@ -71,6 +72,7 @@ class Measurement:
     site: tuple[float, float, float] | None = None
     row_zero: str = "bottom"
     digest: str = ""
+    stray_rate_adu_s: float = NAN
     cutout: Cutout | None = None
 
     @property

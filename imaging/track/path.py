@@ -132,8 +132,13 @@ class PredictedPath:
     `geometry`: a function of `tt_s` (n,) that returns the family's `Geometry`.
     """
 
-    def __init__(self, geometry: Callable[[np.ndarray], Geometry], observer: Observer | None):
-        self._geometry = geometry
+    def __init__(
+        self,
+        geometry: Callable[[np.ndarray], Geometry],
+        observer: Observer | None,
+        centered: Callable[[], PredictedPath] | None = None,
+    ):
+        self._geometry, self._centered = geometry, centered
         self.observer = observer
         self._blocks: dict[int, np.ndarray] = {}
         self._among_stars: bool | None = None
@@ -158,7 +163,11 @@ class PredictedPath:
         kind = family(spec.family)
         event = kind.nearest(spec)
         observer = observer_of(plan.site) if observer is None else observer
-        return cls(lambda tt_s: kind.geometry(event, observer, tt_s), observer)
+
+        def from_center() -> PredictedPath:
+            return cls(lambda tt_s: kind.geometry(event, None, tt_s), None)
+
+        return cls(lambda tt_s: kind.geometry(event, observer, tt_s), observer, from_center)
 
     @property
     def among_stars(self) -> bool:
@@ -170,6 +179,12 @@ class PredictedPath:
     def geometry(self, tt_s: np.ndarray) -> Geometry:
         """Return the family's geometry itself, exact, at these instants."""
         return self._geometry(np.atleast_1d(np.asarray(tt_s, dtype=float)))
+
+    def from_center(self) -> PredictedPath:
+        """Return the path as the Earth's centre would see it; only of a path made by `of_plan`."""
+        if self._centered is None:
+            raise RuntimeError("the path was not made from a plan")
+        return self._centered()
 
     def at(self, tt_s: np.ndarray) -> Expected:
         """Return what is expected at instants of shape (n,), from the sampled blocks."""
