@@ -22,7 +22,7 @@ from planner.sky.rotation import polar_motion_arcsec
 
 # Topocentric passings are within 2 h of the geocentric ones and last under 2 h: contacts lie within 3.2 h.
 _HALF_SPAN_S = 3.5 * 3600.0
-_MOON_TERMS = 8
+_MOON_TERMS = 6
 _TARGET_TERMS = 4
 # Contacts of a passing are within 1.3 h of its middle, however slow.
 _CONTACT_REACH_S = 1.3 * 3600.0
@@ -66,7 +66,10 @@ class MoonPassings:
     target_km: np.ndarray
     moon_velocity_km_s: np.ndarray  # (2, 3, n) barycentric: at the middle, and its change per u
     target_velocity_km_s: np.ndarray  # (3, n)
-    to_celestial: np.ndarray  # (3, 3, n): from the turning frame (CIRS) to ICRS axes
+    to_celestial: np.ndarray  # (3, 3, n): from the turning frame (CIRS) to ICRS axes, at the middle
+    axis_drift: (
+        np.ndarray
+    )  # (3, n): rotation vector of that frame per u (precession and nutation, 0.5 m of the site)
     angle_rad: np.ndarray  # Earth rotation angle at the middle
     pole_rad: np.ndarray  # (2, n) polar motion
     moon_radius_km: float
@@ -87,6 +90,7 @@ class MoonPassings:
                 "moon_velocity_km_s",
                 "target_velocity_km_s",
                 "to_celestial",
+                "axis_drift",
                 "angle_rad",
                 "pole_rad",
             )
@@ -139,8 +143,12 @@ class MoonPassings:
         a, b = site_km[0] - x * site_km[2], site_km[1] + y * site_km[2]
         c = site_km[2] + x * site_km[0] - y * site_km[1]
         cos, sin = np.cos(turned), np.sin(turned)
-        at = np.stack([a * cos - b * sin, a * sin + b * cos, c])
-        return np.einsum("ijn,jn->in", self.to_celestial[:, :, which], at)
+        x, y = a * cos - b * sin, a * sin + b * cos
+        matrix = self.to_celestial[:, :, which]
+        at = matrix[:, 0] * x + matrix[:, 1] * y + matrix[:, 2] * c
+        p, q, r = self.axis_drift[:, which] * ((tt_s - self.middle_tt_s[which]) / _HALF_SPAN_S)
+        drift = np.stack([q * at[2] - r * at[1], r * at[0] - p * at[2], p * at[1] - q * at[0]])
+        return at + drift
 
     def contacts(self, where: Observer | None, inner: bool = True) -> SiteContacts:
         """Return closest approach and contacts at a site, for all passings at once.
@@ -272,10 +280,10 @@ def moon_passings(
     nodes = np.cos(np.pi * (np.arange(_MOON_TERMS) + 0.5) / _MOON_TERMS)
     times = (middle_tt_s + _HALF_SPAN_S * nodes[:, None]).ravel()
     earth_km = ephemeris.position_km("earth", timescale.tdb_s(times))
-    moon = places.direction("moon", None, times, earth_km).vector_km.reshape(3, _MOON_TERMS, -1)
+    moon = places.direction("moon", None, times, earth_km).vector_km
     if of_figure:
-        # the Moon turns by 2 degrees in the half span: 40 m of 1.2 km
-        moon = moon + limb_centre_km(middle_tt_s)[:, None, :]
+        moon = moon + limb_centre_km(times)
+    moon = moon.reshape(3, _MOON_TERMS, -1)
     target = np.broadcast_to(star_vectors[:, None, :] * STAR_DISTANCE_KM, moon.shape).copy()
     target_velocity = np.zeros((3, len(middle_tt_s)))
     earth_km = earth_km.reshape(3, _MOON_TERMS, -1)
@@ -297,10 +305,22 @@ def moon_passings(
         moon_velocity_km_s=np.stack([(before + after) / 2.0, (after - before) / 2.0]),
         target_velocity_km_s=target_velocity,
         to_celestial=np.ascontiguousarray(matrix.transpose(2, 1, 0)),
+        axis_drift=_drift(middle_tt_s),
         angle_rad=pole.earth_rotation_angle(middle_tt_s),
         pole_rad=np.stack([x, y]) / RAD_ARCSEC,
         moon_radius_km=moon_radius_km,
         outline=outline,
+    )
+
+
+def _drift(middle_tt_s: np.ndarray) -> np.ndarray:
+    """Return the rotation vector (3, n) by which the intermediate frame turns in half a span, in radians."""
+    before = pole.celestial_to_intermediate(pole.pole_columns(middle_tt_s - _HALF_SPAN_S))
+    after = pole.celestial_to_intermediate(pole.pole_columns(middle_tt_s + _HALF_SPAN_S))
+    # columns of the transposed matrices are the frame's axes on ICRS axes
+    turn = np.einsum("nji,njk->nik", after, before)
+    return 0.25 * np.stack(
+        [turn[:, 2, 1] - turn[:, 1, 2], turn[:, 0, 2] - turn[:, 2, 0], turn[:, 1, 0] - turn[:, 0, 1]]
     )
 
 

@@ -20,6 +20,8 @@ from planner.sky.observer import Observer
 RAD_ARCSEC = places.RAD_ARCSEC
 
 
+_SPEED_STEP_S = 60.0
+
 # Where something is: (observer, TT seconds) to vectors (3, n) in km from the observer, with light-time.
 Track = Callable[[Observer | None, np.ndarray], np.ndarray]
 
@@ -151,9 +153,34 @@ class Passing:
     def contacts(self, closest_tt_s: np.ndarray, reach_s: float, inner: bool) -> np.ndarray:
         """Return (n, 2) instants at which limbs touch before and after the closest approach; NaN where they do not.
 
-        `reach_s` must be longer than half the passage.
+        `reach_s` must be longer than half the passage. Straight motion tells where to look; where the contact is not
+        found there, the whole reach is searched.
         """
         closest_tt_s = np.atleast_1d(np.asarray(closest_tt_s, dtype=float))
-        low = np.concatenate([closest_tt_s - reach_s, closest_tt_s])
-        high = np.concatenate([closest_tt_s, closest_tt_s + reach_s])
-        return roots_between(self.chord(inner), low, high).reshape(2, -1).T
+        count = len(closest_tt_s)
+        times = np.concatenate([closest_tt_s, closest_tt_s + _SPEED_STEP_S])
+        sight = self.sight(times)
+        near, far = self.radii_rad(sight, inner)
+        limit = np.abs(near - far if inner else near + far)[:count]
+        apart = sight.separation_rad[:count]
+        relative = sight.near_km / sight.near_distance_km - sight.far_km / sight.far_distance_km
+        moved = relative[:, count:] - relative[:, :count]
+        speed = np.sqrt((moved**2).sum(axis=0)) / _SPEED_STEP_S
+        found = np.full((count, 2), np.nan)
+        meet = np.flatnonzero(apart < limit)
+        if not len(meet):
+            return found
+        half = np.sqrt(limit[meet] ** 2 - apart[meet] ** 2) / speed[meet]
+        slack = np.minimum(0.05 * half + 20.0, half)
+        middle = np.tile(closest_tt_s[meet], 2)
+        guess = middle + np.concatenate([-half, half])
+        squared = self.chord(inner)
+        touch = roots_between(squared, guess - np.tile(slack, 2), guess + np.tile(slack, 2))
+        lost = np.flatnonzero(np.isnan(touch))
+        if len(lost):
+            before = lost < len(meet)
+            low = np.where(before, middle[lost] - reach_s, middle[lost])
+            high = np.where(before, middle[lost], middle[lost] + reach_s)
+            touch[lost] = roots_between(squared, low, high)
+        found[meet] = touch.reshape(2, -1).T
+        return found

@@ -90,6 +90,11 @@ class PlanetsMeet:
         radii = [float(r[0]) for r in passing.radii_rad(at_closest)]
         names, times = ["greatest"], [float(closest[0])]
         meets = apart < sum(radii)
+        parallax = [
+            float(np.arcsin(bodies.EARTH_RADIUS_KM / distance[0]))
+            for distance in (at_closest.near_distance_km, at_closest.far_distance_km)
+        ]
+        meets_somewhere = apart < sum(radii) + parallax[0] - parallax[1]
         if meets:
             speed = float(moments(passing, closest, np.array([True])).rate_rad_s[0])
             reach = 2.0 * (sum(radii) + 1e-9) / speed
@@ -135,6 +140,7 @@ class PlanetsMeet:
                 "in_front": near,
                 "behind": far,
                 "discs_meet": meets,
+                "discs_meet_somewhere_on_earth": meets_somewhere,
                 "magnitude": float(magnitude[0]),
                 f"{near}_magnitude": float(shown[0].magnitude[0]),
                 f"{far}_magnitude": float(shown[1].magnitude[0]),
