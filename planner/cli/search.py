@@ -26,6 +26,13 @@ from planner.outputs import refuse_existing
 @click.option(
     "--within", type=float, default=1.0, show_default=True, metavar="DEG", help="Of planets that meet."
 )
+@click.option(
+    "--orbit",
+    "orbit_files",
+    multiple=True,
+    metavar="FILE",
+    help="Also stars covered by this body (repeatable).",
+)
 @click.option("--json", "as_json", is_flag=True, help="A JSON list instead of the table.")
 @click.option(
     "--ecsv", type=click.Path(dir_okay=False), metavar="FILE", help="Write a table of all instants."
@@ -34,7 +41,7 @@ from planner.outputs import refuse_existing
 @click.option("--force", is_flag=True, help="Replace an output that exists.")
 def command(  # type: ignore[no-untyped-def]
     start, end, at_text, site_file, geocentric, timezone, families, bodies, magnitude, altitude, night, within,
-    as_json, ecsv, ical, force,
+    orbit_files, as_json, ecsv, ical, force,
 ) -> None:  # fmt: skip
     """Events that a site will see in a span of dates.
 
@@ -55,8 +62,13 @@ def command(  # type: ignore[no-untyped-def]
     for path in (ecsv, ical):
         if path is not None:
             refuse_existing(path, force)
+    orbits = ()
+    if orbit_files:
+        from planner.sequence.documents import load_orbit, orbit_of
+
+        orbits = tuple(orbit_of(load_orbit(path)) for path in orbit_files)
     with bar("searching", quiet=as_json) as tick:
-        found = search.search(span, observer, families, bodies, tick, limits)
+        found = search.search(span, observer, families, bodies, tick, limits, orbits)
     if ecsv is not None or ical is not None:
         from planner.events import exports
 

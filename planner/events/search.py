@@ -8,11 +8,13 @@ from dataclasses import dataclass, replace
 from planner.errors import InputError
 from planner.events.catalogue import FAMILIES, family, predicted
 from planner.events.family import Circumstances, Family
+from planner.events.orbit import Orbit
 from planner.sky import timescale
 from planner.sky.observer import Observer
 
 # An asteroid's orbit is a file, so that its occultations are searched for only when the family is named.
-_SEARCHED = tuple(name for name in FAMILIES if name != "asteroid-occults-star")
+_BY_ORBIT = "asteroid-occults-star"
+_SEARCHED = tuple(name for name in FAMILIES if name != _BY_ORBIT)
 
 
 @dataclass(frozen=True)
@@ -51,13 +53,18 @@ def search(
     bodies: tuple[str, ...] = (),
     tick: Callable[[int, int], None] | None = None,
     limits: Limits | None = None,
+    orbits: tuple[Orbit, ...] = (),
 ) -> list[Circumstances]:
     """Return the circumstances of all events of these families (none: all) that the site sees, in time order.
 
+    `orbits` are small bodies whose occultations of stars are looked for as well.
     Raises InputError on a family or a body that does not exist.
     """
     limits = limits or Limits()
     chosen = [_limited(family(name), limits) for name in (families or _SEARCHED)]
+    small = [_limited(replace(family(_BY_ORBIT), orbit=orbit), limits) for orbit in orbits]  # type: ignore[type-var]
+    if small:
+        chosen = [one for one in chosen if one.name != _BY_ORBIT] + small
     known = {target for one in chosen for target in one.targets}
     for body in bodies:
         if body not in known:
@@ -65,6 +72,8 @@ def search(
     found: list[Circumstances] = []
     for count, one in enumerate(chosen):
         wanted = tuple(body for body in one.targets if body in bodies) if bodies else None
+        if one in small:
+            wanted = ("asteroid",) if not bodies or "asteroid" in bodies else ()
         if wanted == ():
             continue
 

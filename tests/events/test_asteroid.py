@@ -287,3 +287,15 @@ def test_the_path_command_writes_what_it_says(tmp_path):
     assert json.loads(out.read_text(encoding="utf-8"))["properties"]["width_km"] == 140.0
     assert run_with(["path", brief, "-o", str(out)]) == 2
     assert run_with(["path", str(ROOT / "configs/mercury_transit_2032.yaml")]) == 2
+
+
+def test_the_search_command_takes_orbits(capsys):
+    from planner.cli.main import run_with
+
+    site = str(ROOT / "configs/sites/kestrel_ridge.yaml")
+    orbit = str(ROOT / "configs/orbits/halcyon.yaml")
+    span = ["--from", "2028-10-01", "--to", "2028-11-01", "--site", site, "--json"]
+    assert run_with(["search", *span, "--family", "asteroid-occults-star", "--orbit", orbit]) == 0
+    (found,) = json.loads(capsys.readouterr().out)
+    assert found["star"] == "HIP 8588"
+    assert found["happens"]
