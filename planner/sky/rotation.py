@@ -33,10 +33,10 @@ _PAST_SIGMA_S = (
     (1962.0, 0.3),
 )
 # Growth of UT1 beyond the tables: Brownian motion of the length of day, Huber 2006, J. Geodesy 80, 283 (formula as
-# quoted by NASA/GSFC, "Uncertainty in Delta T"), times 1.45, which gives the 0.8 s at 5 and 2.3 s at 10 years measured
-# by extrapolating past tables.
+# quoted by NASA/GSFC, "Uncertainty in Delta T"), times 1.6: 0.1, 0.9 and 2.6 s at 1, 5 and 10 years, as measured by
+# extrapolating past tables (docs/notes/ut1_growth.py).
 _HUBER_Q_MS2_YEAR = 0.058
-_HUBER_SCALE = 1.45
+_HUBER_SCALE = 1.6
 _HUBER_SPAN_YEAR = 2500.0
 
 
@@ -134,14 +134,14 @@ def earth_orientation() -> EarthOrientation:
 def _future(
     table_tt_s: np.ndarray, table_delta_t: np.ndarray, last_sigma: float
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Extrapolate Delta T: the mean rate of the last ten years, bent towards the long-term parabola.
+    """Extrapolate Delta T: the mean rate of the last year (which does best), bent towards the long-term parabola.
 
     The parabola is that of Stephenson, Morrison & Hohenkerk 2016, Proc. R. Soc. A 472, 20160404 (-320 + 32.5 u^2);
     a cubic meets it 800 years on.
     """
     start = 2000.0 + table_tt_s[-1] / YEAR_S
-    decade = table_tt_s > table_tt_s[-1] - 10 * YEAR_S
-    rate = np.polyfit(table_tt_s[decade] / YEAR_S, table_delta_t[decade], 1)[0]
+    recent = table_tt_s > table_tt_s[-1] - YEAR_S
+    rate = np.polyfit(table_tt_s[recent] / YEAR_S, table_delta_t[recent], 1)[0]
     end = start + 800.0
     target, target_rate = -320.0 + 32.5 * ((end - 1825.0) / 100.0) ** 2, 0.65 * (end - 1825.0) / 100.0
     years = np.concatenate([np.arange(0.05, 20.0, 0.05), np.arange(20.0, 700.0, 0.5)])
