@@ -130,7 +130,10 @@ def _compare(wanted, paths: tuple[Path, ...], exposures_s: tuple[float, ...], as
         shown.add_column(name, justify="right", overflow="fold")
     for row in table.rows:
         shown.add_row(row.label, *row.values)
-    Console(highlight=False).print(shown)
+    console = Console(highlight=False)
+    console.print(shown)
+    for reason in table.reasons:
+        console.print(f"cannot be planned: {reason}", soft_wrap=True)
     return errors.EXIT_DONE
 
 

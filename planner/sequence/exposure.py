@@ -27,12 +27,13 @@ def peak_rate_e_s(
     unblurred = radiometry.disc_rate_e_s_px(
         through, body, magnitude, disc.semidiameter_arcsec, disc.flattening, disc.phase_angle_deg, scale
     )
-    fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass, 0.0) / scale
+    fwhm_px = radiometry.psf_fwhm_px(rig, site.seeing_arcsec, mass, 0.0)
     lit = (1 + np.cos(np.radians(disc.phase_angle_deg))) / 2 if body != "sun" else 1.0
     radius_px = disc.semidiameter_arcsec / scale * np.sqrt(lit)
     kept = radiometry.blurred_peak_fraction(radius_px, fwhm_px)
     total = radiometry.rate_e_s(through, magnitude)
-    star_like = total * radiometry.star_peak_fraction(fwhm_px)
+    own_px = radiometry.FWHM_OF_SIGMA * radius_px / 2  # a uniform disc has a variance of r^2 / 4 an axis
+    star_like = total * radiometry.star_peak_fraction(np.hypot(fwhm_px, own_px))
     # a disc lost in the blur peaks like a star; a large one like its surface
     return np.minimum(unblurred * kept, star_like)
 

@@ -28,6 +28,7 @@ FWHM_OF_SIGMA = 2.0 * np.sqrt(2.0 * np.log(2.0))
 # MNRAS 328, 977): least squares, within 0.5 % of the peak; sigmas in units of the FWHM.
 SEEING_WEIGHT = np.array([0.3667, 0.5370, 0.0963])
 SEEING_SIGMA = np.array([0.36388, 0.54576, 0.89341])
+OPTICS_FWHM_PX = 0.8  # a good lens or telescope focused on its sensor; common practice, no source
 SEEING_AIRMASS_POWER = 0.6  # Kolmogorov turbulence: r0 falls as airmass**-0.6 (Fried 1966)
 
 # How each surface scatters: Lommel-Seeliger for airless rock, Lambert for clouds and dust. Common practice, no source.
@@ -179,6 +180,14 @@ def psf_fwhm_arcsec(
     return np.sqrt(seeing**2 + diffraction**2 + (FWHM_OF_SIGMA * error) ** 2)
 
 
+def psf_fwhm_px(
+    rig: Rig, seeing_arcsec: float, airmass: np.ndarray, tracking_error_arcsec: float | None = None
+) -> np.ndarray:
+    """Return the FWHM in pixels of all that blurs a star, the lens or telescope's own spot included."""
+    sky_px = psf_fwhm_arcsec(rig, seeing_arcsec, airmass, tracking_error_arcsec) / rig.scale_arcsec_px
+    return np.hypot(sky_px, OPTICS_FWHM_PX)
+
+
 def tracking_blur_arcsec(rig: Rig, exposure_s: float) -> float:
     """Return the rms of tracking in one exposure: none in a second, in which a mount has no time to err."""
     if exposure_s <= 1.0 or rig.mount.kind == "fixed":
@@ -187,15 +196,22 @@ def tracking_blur_arcsec(rig: Rig, exposure_s: float) -> float:
 
 
 def star_peak_fraction(fwhm_px: np.ndarray, trail_px: np.ndarray | float = 0.0) -> np.ndarray:
-    """Return the part of a star's light in the pixel it is centred on, when it trails by so many pixels.
+    """Return the part of a star's light in its brightest pixel, on average over where in the pixel it falls.
 
-    The star has the profile that Kolmogorov seeing gives, as a sum of Gaussians.
+    The star has the profile that Kolmogorov seeing gives, as a sum of Gaussians; `trail_px` widens it along one axis.
     """
     fwhm = np.maximum(np.asarray(fwhm_px, float), 1e-3)[..., None]
     sigma = SEEING_SIGMA * fwhm
     along_sigma = np.sqrt(sigma**2 + np.asarray(trail_px, float)[..., None] ** 2 / 12)
-    in_pixel = erf(0.5 / (np.sqrt(2) * sigma)) * erf(0.5 / (np.sqrt(2) * along_sigma))
-    return (SEEING_WEIGHT * in_pixel).sum(axis=-1)
+    across = _mean_share(sigma)
+    return (SEEING_WEIGHT * across * _mean_share(along_sigma)).sum(axis=-1)
+
+
+def _mean_share(sigma_px: np.ndarray) -> np.ndarray:
+    """Return the part of a Gaussian's line that the pixel nearest to it holds, averaged over its place in the pixel."""
+    place = (np.arange(8) + 0.5) / 8 - 0.5
+    scale = np.sqrt(2) * sigma_px[..., None]
+    return (0.5 * (erf((0.5 - place) / scale) + erf((0.5 + place) / scale))).mean(axis=-1)
 
 
 def blurred_peak_fraction(radius_px: np.ndarray, fwhm_px: np.ndarray) -> np.ndarray:

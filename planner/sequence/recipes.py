@@ -154,7 +154,7 @@ def _faint_target(
         )
     elif star is not None:
         name, magnitude = star[0], np.full(len(geometry.tt_s), star[3])
-        fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass, 0.0) / setting.scale_arcsec_px
+        fwhm_px = radiometry.psf_fwhm_px(rig, site.seeing_arcsec, mass, 0.0)
         dimmed = radiometry.extinguished(magnitude, mass, site.extinction_mag)
         peak = radiometry.rate_e_s(setting.through, dimmed) * radiometry.star_peak_fraction(fwhm_px)
     else:
@@ -162,7 +162,7 @@ def _faint_target(
     total = radiometry.rate_e_s(
         setting.through, radiometry.extinguished(magnitude, mass, site.extinction_mag)
     )
-    fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass, 0.0) / setting.scale_arcsec_px
+    fwhm_px = radiometry.psf_fwhm_px(rig, site.seeing_arcsec, mass, 0.0)
     radius_px = (
         geometry.discs[name].semidiameter_arcsec / setting.scale_arcsec_px if name in geometry.discs else 0.0
     )

@@ -52,7 +52,7 @@ def star_frames(
     saturation = radiometry.saturation_e(rig, gain)
     mass = airmass(np.maximum(geometry.altitude_deg, 0.0))
     sky = radiometry.sky_rate_e_s_px(through, setting.sky_mag_arcsec2(geometry), setting.scale_arcsec_px)
-    fwhm_px = radiometry.psf_fwhm_arcsec(rig, site.seeing_arcsec, mass) / setting.scale_arcsec_px
+    fwhm_px = radiometry.psf_fwhm_px(rig, site.seeing_arcsec, mass)
     pixels = np.maximum(2.0 * fwhm_px**2, 4.0)
     read_e = radiometry.at_gain(rig, gain).read_noise_e
     fields = _fields(setting, aim_ra_deg, aim_dec_deg, geometry.tt_s)
