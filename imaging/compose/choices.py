@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 ORIENTATIONS = ("north", "zenith", "ecliptic", "track")
-REGISTRATIONS = ("auto", "sun", "moon", "stars")
+REGISTRATIONS = ("auto", "sun", "moon", "stars", "target")
 
 
 @dataclass(frozen=True)
@@ -15,7 +15,8 @@ class Choices:
     """Choices with sensible defaults.
 
     `instants`: how many times the target is drawn. `scale_arcsec_px`: None for the finest scale of the frames.
-    `blend`: of the ground (the disc, or the stars). `tick(done, total)` reports progress.
+    `blend`: of the ground (the disc, or the stars). `enlarge`: of bodies
+    registered on themselves; it is declared in the picture. `tick(done, total)` reports progress.
     """
 
     registration: str = "auto"
@@ -25,6 +26,7 @@ class Choices:
     scale_arcsec_px: float | None = None
     largest_px: int = 20000
     colour: bool = False
+    enlarge: float = 1.0
     scratch: Path | None = None
     threads: int = 2
     tick: Callable[[int, int], None] = lambda done, total: None

@@ -14,9 +14,12 @@ from imaging.compose.light import Light
 from imaging.compose.material import Material
 from imaging.compose.pathdata import path_data
 from imaging.compose.pathplot import DARK, LIGHT, write_path_plot
+from imaging.compose.phase_series import phase_series
 from imaging.compose.picture import Picture
 from imaging.compose.sky_path import sky_path
+from imaging.compose.sky_series import sky_series
 from imaging.compose.stretch import Stretch, measured_stretch
+from imaging.compose.two_sites import two_sites
 from planner.errors import InputError
 from planner.outputs import refuse_existing
 
@@ -58,8 +61,11 @@ class Outputs:
         refuse_existing(self.statement, self.force)
 
 
-def compose_picture(material: Material, choices: Choices) -> Picture:
-    """Return the composite that suits the event, or the registration the user chose; raises InputError."""
+def compose_picture(material: Material, choices: Choices, other: Material | None = None) -> Picture:
+    """Return the composite that suits the event, or the registration the user chose; raises InputError.
+
+    `other`: the same event from a second site, laid into the first one's picture.
+    """
     registration = material.reference if choices.registration == "auto" else choices.registration
     light = Light(
         bias_adu=material.plan.rig.sensor.bias_adu,
@@ -67,13 +73,19 @@ def compose_picture(material: Material, choices: Choices) -> Picture:
         ringless=registration == "stars",
         threads=choices.threads,
     )
+    if registration == "target":
+        return phase_series(material, choices, light)
+    if registration == "stars" and material.reference != "stars":
+        return sky_series(material, choices, light)
     if registration == "stars":
         return sky_path(material, choices, light)
     if registration != material.reference:
         raise InputError(
             f"--register: found {registration!r}; this event can be registered on "
-            f"{' or '.join(dict.fromkeys((material.reference, 'stars')))}"
+            f"{' or '.join(dict.fromkeys((material.reference, 'stars', 'target')))}"
         )
+    if other is not None:
+        return two_sites(material, other, choices, light)
     return disc_path(material, choices, light)
 
 

@@ -34,7 +34,7 @@ DRIFT_ARCSEC_S = {"sun": 9.2 / 3600.0, "moon": 8.0 / 3600.0}
 def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
     """Return the composite registered on the Sun or Moon; raises InputError when no frame is left."""
     body = material.reference
-    frames, levels, sharpness, left_out = _survey(material, light, body, choices)
+    frames, levels, sharpness, left_out = survey(material, light, body, choices)
     tt_s = np.array([frame.tt_s for frame in frames])
     middle = float(0.5 * (tt_s[0] + tt_s[-1]))
     disc = material.geometry_at(np.array([middle])).discs[body]
@@ -53,7 +53,7 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
     for done, index in enumerate(base):
         frame = frames[index]
         choices.tick(len(frames) + done, len(frames) + total)
-        stack.add(light.on_canvas(light.read(frame), frame, canvas, _anchor(frame), levels[index]))
+        stack.add(light.on_canvas(light.read(frame), frame, canvas, disc_anchor(frame), levels[index]))
         used.append((frame, "ground"))
     image, count = stack.result()
     if not np.isfinite(image).any():
@@ -62,7 +62,7 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
     for done, index in enumerate(shown):
         frame = frames[index]
         choices.tick(len(frames) + len(base) + done, len(frames) + total)
-        drawn.append(_lay_target(image, material, frame, levels[index], canvas, light, body))
+        drawn.append(lay_target(image, material, frame, levels[index], canvas, light, body))
         used.append((frame, "target"))
     choices.tick(len(frames) + total, len(frames) + total)
     return Picture(
@@ -86,11 +86,12 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
     )
 
 
-def _anchor(frame: Registered) -> tuple[float, float]:
+def disc_anchor(frame: Registered) -> tuple[float, float]:
+    """Return the direction of the reference disc at a frame's time."""
     return frame.reference_ra_deg, frame.reference_dec_deg
 
 
-def _survey(
+def survey(
     material: Material, light: Light, body: str, choices: Choices
 ) -> tuple[list[Registered], list[Level], np.ndarray, list[tuple[str, str]]]:
     """Read every frame once: its level, its sharpness, or why it cannot be used."""
@@ -135,7 +136,9 @@ def _disc_canvas(
 def _distances(material: Material, frames: list[Registered], body: str) -> np.ndarray:
     """Return how far the target is from the disc's centre in each frame, in radii of the disc."""
     radius = material.geometry_at(np.array([frame.tt_s for frame in frames])).discs[body].semidiameter_arcsec
-    offsets = [sky_to_plane(*_anchor(frame), frame.target_ra_deg, frame.target_dec_deg) for frame in frames]
+    offsets = [
+        sky_to_plane(*disc_anchor(frame), frame.target_ra_deg, frame.target_dec_deg) for frame in frames
+    ]
     return np.hypot(*np.array(offsets, float).T) / radius
 
 
@@ -197,7 +200,8 @@ def _time_to_clear_s(material: Material, frames: list[Registered]) -> float:
     if last.tt_s == first.tt_s:
         return 0.0
     path = [
-        np.array(sky_to_plane(*_anchor(f), f.predicted_ra_deg, f.predicted_dec_deg)) for f in (first, last)
+        np.array(sky_to_plane(*disc_anchor(f), f.predicted_ra_deg, f.predicted_dec_deg))
+        for f in (first, last)
     ]
     rate = float(np.hypot(*(path[1] - path[0]))) / (last.tt_s - first.tt_s)
     target = material.geometry.discs.get(material.target)
@@ -205,7 +209,7 @@ def _time_to_clear_s(material: Material, frames: list[Registered]) -> float:
     return 5 * max(diameter, 4.0) / rate if rate > 0 else 0.0
 
 
-def _lay_target(
+def lay_target(
     image: np.ndarray,
     material: Material,
     frame: Registered,
@@ -214,9 +218,10 @@ def _lay_target(
     light: Light,
     body: str,
 ) -> Drawn:
+    """Lay the target of one frame into the picture, in place, and return where."""
     geometry = material.geometry_at(np.array([frame.tt_s]))
-    x_px, y_px = canvas.from_sky(*_anchor(frame), frame.target_ra_deg, frame.target_dec_deg)
-    predicted = canvas.from_sky(*_anchor(frame), frame.predicted_ra_deg, frame.predicted_dec_deg)
+    x_px, y_px = canvas.from_sky(*disc_anchor(frame), frame.target_ra_deg, frame.target_dec_deg)
+    predicted = canvas.from_sky(*disc_anchor(frame), frame.predicted_ra_deg, frame.predicted_dec_deg)
     semidiameter = (
         float(geometry.discs[material.target].semidiameter_arcsec[0])
         if material.target in geometry.discs
@@ -227,7 +232,7 @@ def _lay_target(
     feather_px = max(2.0, 0.4 * radius_px)
     box = patch_box(image.shape, float(x_px), float(y_px), reach_px + feather_px + 1)
     if box is not None:
-        piece = light.on_canvas(light.read(frame), frame, canvas.window(*box), _anchor(frame), level)
+        piece = light.on_canvas(light.read(frame), frame, canvas.window(*box), disc_anchor(frame), level)
         lay_patch(
             image[box],
             piece,

@@ -23,7 +23,9 @@ def write_fits(path: Path, picture: Picture, truth: dict[str, Any], force: bool 
     from astropy.table import Table
 
     data = picture.image if picture.image.ndim == 2 else np.moveaxis(picture.image, 2, 0)
-    header = picture.canvas.wcs_header(picture.anchor_ra_deg, picture.anchor_dec_deg)
+    header = fits.Header()
+    if np.isfinite(picture.anchor_ra_deg):
+        header = picture.canvas.wcs_header(picture.anchor_ra_deg, picture.anchor_dec_deg)
     header["OBJECT"] = truth["title"][:68]
     header["DATE-OBS"] = (truth["frames"][0]["utc_mid"].rstrip("Z"), "mid-exposure of the first frame used")
     header["DATE-END"] = (truth["frames"][-1]["utc_mid"].rstrip("Z"), "mid-exposure of the last frame used")

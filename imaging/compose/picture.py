@@ -54,7 +54,7 @@ class Picture:
 
     def faintest_peak(self) -> float:
         """Return the peak value of the faintest target drawn on the sky beside a disc, infinity when there is none."""
-        if self.registered_on != "moon":
+        if self.registered_on != "moon" and self.kind != "sky-series":
             return np.inf
         plane = self.image if self.image.ndim == 2 else self.image.mean(axis=2)
         peaks = []

@@ -90,12 +90,13 @@ def caption(material: Material, picture: Picture) -> str:
     start, end = utc_iso(first, 0), utc_iso(last, 0)
     span = f"{start[:10]} {start[11:16]} to {end[11:16] if end[:10] == start[:10] else end[:10] + ' ' + end[11:16]} UTC"
     apart = [item.displacement_arcsec for item in picture.drawn if math.isfinite(item.displacement_arcsec)]
-    pieces = [
-        f"{material.plan.title}.",
-        f"{material.plan.site.name}, {span}.",
-        f"{len({(f.path, f.frame_index) for f, _ in picture.used})} frames registered on "
-        f"{names.get(picture.registered_on, picture.registered_on)}.",
-    ]
+    count = len({(frame.path, frame.frame_index) for frame, _ in picture.used})
+    how = f"registered on {names.get(picture.registered_on, picture.registered_on)}"
+    if picture.kind == "sky-series":
+        how = f"registered on the limb of {names[material.reference]}, laid where it stood among the stars"
+    pieces = [f"{material.plan.title}.", f"{material.plan.site.name}, {span}.", f"{count} frames {how}."]
+    if picture.kind == "two-sites":
+        pieces.append(picture.notes[-1][0].upper() + picture.notes[-1][1:] + ".")
     if apart:
         pieces.append(f"No position is drawn more than {_arcsec(max(apart))} from its predicted place.")
     pieces.append(

@@ -60,6 +60,8 @@ class _Several(click.ParamType):
 @click.option(
     "--keep-off-track", is_flag=True, help="Draw the target also where the check found it off its track."
 )
+@click.option("--second-site", type=click.Path(path_type=Path), nargs=3, metavar="PLAN TRACK FRAMES",
+              help="The same transit from another place, drawn on the same disc.")  # fmt: skip
 @click.option("--linear", is_flag=True, help="No stretch: tones proportional to light.")
 @click.option("--formats", type=_Several(PICTURE_FORMATS), default="fits,png", show_default=True)
 @click.option("--plots", type=_Several(PLOT_FORMATS), default="png,svg", show_default=True)
@@ -104,6 +106,10 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     outputs.refuse_existing()
     document = load_plan(plan)
     material = gather(document, track, frames, keep_off_track=chosen["keep_off_track"])
+    other = None
+    if chosen["second_site"]:
+        second_plan, second_track, second_frames = chosen["second_site"]
+        other = gather(load_plan(second_plan), second_track, second_frames)
     zone, zone_label = UTC, "UTC"
     if chosen["local_time"]:
         zone, zone_label = ZoneInfo(document.site.timezone), document.site.timezone
@@ -115,10 +121,11 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
             instants=chosen["instants"],
             scale_arcsec_px=chosen["scale"],
             colour=chosen["colour"],
+            enlarge=chosen["enlarge"],
             scratch=chosen["scratch"],
             tick=tick,
         )
-        picture = compose_picture(material, choices)
+        picture = compose_picture(material, choices, other)
     paths, statement = write_picture(material, picture, outputs)
     paths += write_plots(material, choices, outputs, zone, zone_label)
     aside = statement["set_aside"]

@@ -25,8 +25,8 @@ def copy(transit, tmp_path):
 
 def composed(rehearsal, out, *options):
     code = run_with(
-        ["compose", *rehearsal.arguments, "-o", str(out), "--formats", "png", "--plots", "none", "--instants", "3", "--quiet",
-         *options]
+        ["compose", *rehearsal.arguments, "-o", str(out), "--formats", "png", "--plots", "none", "--instants", "3",
+         "--quiet", *options]
     )  # fmt: skip
     statement = out / "composite.truth.json"
     return code, json.loads(statement.read_text()) if statement.exists() else None
@@ -114,7 +114,7 @@ def test_a_file_that_is_no_track_is_said_to_be_none(copy, tmp_path, capsys, text
 @pytest.mark.parametrize(
     ("options", "words"),
     [
-        (["--register", "moon"], "can be registered on sun or stars"),
+        (["--register", "moon"], "can be registered on sun or stars or target"),
         (["--scale", "0.05"], "choose a larger --scale"),
         (["--frames", "nowhere"], "no folder"),
     ],
