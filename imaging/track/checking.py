@@ -15,7 +15,7 @@ from imaging.track.measure import Measurer
 from imaging.track.measurement import Measurement
 from imaging.track.nominal import Promise
 from imaging.track.path import PredictedPath
-from imaging.track.refinements import camera_findings, clock_findings, frame_findings
+from imaging.track.refinements import camera_findings, clock_findings, frame_findings, majority_camera
 from imaging.track.result import CheckResult, SetAside
 from imaging.track.sightings import Sightings
 from planner.errors import FrameSetAside, InputError, NoSolutionError
@@ -126,6 +126,8 @@ def understand(
     measurements = [outcome for outcome in outcomes if isinstance(outcome, Measurement)]
     measurements, doubles = _without_doubles(measurements)
     aside += doubles
+    measurements, others = _of_one_camera(measurements)
+    aside += others
     measurements = _without_faint_strays(measurements)
     findings = frame_findings(measurements, plan)
     measurements.sort(key=lambda m: m.time.middle_tt_s)
@@ -178,6 +180,19 @@ def _without_doubles(measurements: list[Measurement]) -> tuple[list[Measurement]
     return kept, aside
 
 
+def _of_one_camera(measurements: list[Measurement]) -> tuple[list[Measurement], list[SetAside]]:
+    """Return the frames of the camera that took most of them; those of another one need a plan of their own."""
+    most = majority_camera(measurements)
+    kept, aside = [], []
+    for m in measurements:
+        if (m.camera, m.shape) == most:
+            kept.append(m)
+            continue
+        kind = f"{m.camera or 'an unnamed camera'}, {m.shape[1]} x {m.shape[0]} px"
+        aside.append(SetAside(m.file, f"is of another camera than most frames ({kind})"))
+    return kept, aside
+
+
 def _without_faint_strays(measurements: Sequence[Measurement]) -> list[Measurement]:
     """Return the measurements, those unmeasured that took a point fainter than the brightest stray for the target.
 
@@ -195,13 +210,14 @@ def _without_faint_strays(measurements: Sequence[Measurement]) -> list[Measureme
 
 
 def usual_jitter_arcsec(plan: Plan, reference: str) -> float:
-    """Return the scatter a frame has beyond its photon noise: limb motion by seeing, or a fifth of a pixel.
+    """Return the scatter a frame has beyond its photon noise: limb motion by seeing, or part of a pixel.
 
     Daytime image motion of the limb is near a third of the seeing's width (Tatarskii's theory for a small aperture
     gives 0.36 FWHM; Roddier 1981, Progress in Optics 19, 281, section 7.3, from memory).
     """
-    floor = 0.2 * plan.rig.scale_arcsec_px
-    return max(floor, 0.35 * plan.site.seeing_arcsec) if reference in ("sun", "moon") else max(floor, 0.2)
+    if reference in ("sun", "moon"):
+        return max(0.2 * plan.rig.scale_arcsec_px, 0.35 * plan.site.seeing_arcsec)
+    return max(0.1 * plan.rig.scale_arcsec_px, 0.2)
 
 
 def _diagnosed(sightings: Sightings, question: Question) -> tuple[Diagnosis | None, Finding | None]:

@@ -17,6 +17,7 @@ from imaging.track.result import ContactTiming
 from planner.sequence.models import Plan
 
 LEAST_FRAMES = 4
+LIMB_SIGMA_PX = 0.08  # bias of fitted radii at several scales of rehearsed frames (docs/track.md)
 REACH = 0.35  # of the chord's length, how far from the nearest frame a contact may lie
 CONTACTS = {
     "contact_1": (+1, "outer"),
@@ -32,10 +33,13 @@ CONTACTS = {
 }
 
 
-def time_contacts(reading: Reading, promise: Promise, plan: Plan) -> tuple[ContactTiming, ...]:
+def time_contacts(
+    reading: Reading, promise: Promise, plan: Plan, limb_sigma_px: float = LIMB_SIGMA_PX
+) -> tuple[ContactTiming, ...]:
     """Return the contacts that the frames reach, in time order; none on a path among stars.
 
-    Sigmas hold the measured scatter; the radius of the limb as an instrument sees it adds its own, in common.
+    Sigmas hold the measured scatter, and what the fitted limb's radius may be off by in all frames alike
+    (`limb_sigma_px`), which moves contacts on one side later and on the other earlier.
     """
     sightings, used = reading.sightings, reading.fit.used
     if not sightings.on_disc or used.sum() < LEAST_FRAMES:
@@ -49,7 +53,7 @@ def time_contacts(reading: Reading, promise: Promise, plan: Plan) -> tuple[Conta
     if not instants:
         return ()
     s = sightings.part(used)
-    chord = _Chord(s, promise, reading)
+    chord = _Chord(s, promise, reading, limb_sigma_px * promise.rig.scale_arcsec_px)
     timings = []
     span = max(i.tt_s for i in instants) - min(i.tt_s for i in instants)
     for instant in instants:
@@ -66,9 +70,10 @@ def time_contacts(reading: Reading, promise: Promise, plan: Plan) -> tuple[Conta
 class _Chord:
     """The fitted parabola of squared distance, observed minus predicted."""
 
-    def __init__(self, s, promise: Promise, reading: Reading):  # type: ignore[no-untyped-def]
+    def __init__(self, s, promise: Promise, reading: Reading, limb_sigma_arcsec: float):  # type: ignore[no-untyped-def]
         self.path, self.clock_s = reading.path, reading.clock_offset_s
         radius = _radius_arcsec(s, self.path)
+        self.limb_share = limb_sigma_arcsec / float(np.median(radius))
         seen = np.hypot(s.east_arcsec, s.north_arcsec) / radius
         predicted, _, shrink = self.predicted(s.tt_s)
         measured = seen / shrink
@@ -119,7 +124,8 @@ class _Chord:
         else:
             return float("nan"), float("nan")
         basis = self.basis(t)[0]
-        return t, float(np.sqrt(basis @ self.covariance @ basis) / abs(slope))
+        limb = 2.0 * float(distance[1]) ** 2 * self.limb_share
+        return t, float(np.sqrt(basis @ self.covariance @ basis + limb**2) / abs(slope))
 
 
 def _radius_arcsec(s, path) -> np.ndarray:  # type: ignore[no-untyped-def]

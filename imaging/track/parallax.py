@@ -2,9 +2,9 @@
 
 Every station's path is predicted with the ephemeris and the site. The difference that the Earth's size makes, the
 path from the site minus the path from the Earth's centre, is scaled by one number kappa, common to all stations;
-kappa = 1 is the ephemeris. What the ephemeris says of the path itself is *not* used: an offset and a rate common to all
-stations are free, and so are each station's clock (within what it promises), camera roll and scale. So only the
-stations' differences decide, as in the classical campaigns. Distances follow by Kepler's third law, which gives their
+kappa = 1 is the ephemeris. Where the ephemeris puts the path is *not* used: an offset common to all stations is free,
+a rate nearly so, and so are each station's clock (within what it promises), camera roll and scale. So the differences
+of the stations decide, as in the classical campaigns. Distances follow by Kepler's third law, which gives their
 ratios: all scale with 1 / kappa, and so does the solar parallax with kappa.
 """
 
@@ -29,7 +29,9 @@ if TYPE_CHECKING:
 
 SOLAR_PARALLAX_ARCSEC = 8.794143  # 6378.1366 km at the au of IAU 2012 resolution B2
 FREE_OFFSET_ARCSEC = 100.0
+FREE_RATE_ARCSEC = 1.0  # over half of the frames' span: the body's angular speed is known from any one track
 FREE_ROTATION_RAD = 1.0
+UNSEEN_ARCSEC = 1e3  # a contact says nothing of where on the limb the planet is
 INDEPENDENT_S = (
     10.0  # frames nearer in time share the seeing's motion of the limb; common practice, no source
 )
@@ -167,6 +169,40 @@ def sightings_of_track(track: Track, rows: np.ndarray, path: PredictedPath) -> S
     return replace(sightings, covariance_arcsec2=covariance)
 
 
+def station_of_contacts(
+    name: str,
+    path: PredictedPath,
+    signs: np.ndarray,
+    tt_s: np.ndarray,
+    sigma_s: np.ndarray,
+    clock_sigma_s: float = 1e-3,
+) -> Station:
+    """Return a station from timed contacts alone: each says how far from the Sun's centre the planet stood then.
+
+    `signs`: +1 for outer contacts (I, IV), -1 for inner ones (II, III). `clock_sigma_s`: error common to the station.
+    """
+    from planner.sky.places import direction
+
+    airless = PredictedPath(path.geometry, _without_air(path.observer), path.from_center)
+    expected = airless.at(tt_s)
+    place = np.column_stack([expected.east_arcsec, expected.north_arcsec])
+    apart = np.hypot(*place.T)
+    outward = place / apart[:, None]
+    radius = expected.reference_semidiameter_arcsec + signs * expected.target_semidiameter_arcsec
+    later = airless.at(tt_s + 1.0)
+    rate = np.hypot(later.east_arcsec, later.north_arcsec) - apart
+    covariance = np.einsum("n,ni,nj->nij", (rate * sigma_s) ** 2, outward, outward)
+    along = np.column_stack([-outward[:, 1], outward[:, 0]])
+    covariance += UNSEEN_ARCSEC**2 * np.einsum("ni,nj->nij", along, along)
+    nothing = np.full(tt_s.shape, np.nan)
+    seen = outward * radius[:, None]
+    sightings = Sightings(tt_s, 0 * tt_s, seen[:, 0], seen[:, 1], covariance, nothing, nothing)
+    middle = np.array([float(np.median(tt_s))])
+    target = path.geometry(middle).target
+    distance = float(direction(target, None, middle).distance_km[0])
+    return Station(name, sightings, airless, clock_sigma_s, 1e-6, target, distance)
+
+
 def lever(station: Station) -> np.ndarray:
     """Return the path from the site minus the path from the Earth's centre, (n, 2) in arcseconds, without air."""
     airless = PredictedPath(station.path.geometry, _without_air(station.path.observer))
@@ -247,7 +283,7 @@ def _normal_equations(
     """
     size = 5 + 3 * len(stations)
     matrix, vector, prior = np.zeros((size, size)), np.zeros(size), np.zeros(size)
-    prior[1:5] = FREE_OFFSET_ARCSEC**-2.0
+    prior[1:3], prior[3:5] = FREE_OFFSET_ARCSEC**-2.0, FREE_RATE_ARCSEC**-2.0
     chi2, rows = 0.0, 0
     for number, station in enumerate(stations):
         s, path = station.sightings, station.path

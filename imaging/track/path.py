@@ -19,7 +19,7 @@ from planner.events.family import Geometry
 from planner.sky.observer import Observer
 
 if TYPE_CHECKING:
-    from planner.sequence.models import Plan
+    from planner.sequence.models import EventRequest, Plan
 
 ARCSEC_RAD = 206264.80624709636
 BLOCK_S = 3600.0
@@ -147,22 +147,20 @@ class PredictedPath:
         self._to_coefficients = np.linalg.inv(chebyshev.chebvander(self._nodes, NODES - 1))
 
     @classmethod
-    def of_plan(cls, plan: Plan, observer: Observer | None = None, body: str | None = None) -> PredictedPath:
-        """Return the path of a plan's event; with another observer or body than the plan's where given.
+    def of_plan(cls, plan: Plan, observer: Observer | None = None) -> PredictedPath:
+        """Return the path of a plan's event, from the plan's site or from another observer's."""
+        from planner.sequence.documents import observer_of
 
-        Raises InputError when the family cannot do the body.
-        """
-        from dataclasses import replace
+        return cls.of_event(plan.event, observer_of(plan.site) if observer is None else observer)
 
+    @classmethod
+    def of_event(cls, request: EventRequest, observer: Observer) -> PredictedPath:
+        """Return the path of an event as one observer sees it; raises InputError when there is no such event."""
         from planner.events.catalogue import family
-        from planner.sequence.documents import event_spec, observer_of
+        from planner.sequence.documents import event_spec
 
-        spec = event_spec(plan.event)
-        if body is not None:
-            spec = replace(spec, body=body)
-        kind = family(spec.family)
-        event = kind.nearest(spec)
-        observer = observer_of(plan.site) if observer is None else observer
+        kind = family(request.family)
+        event = kind.nearest(event_spec(request))
 
         def from_center() -> PredictedPath:
             return cls(lambda tt_s: kind.geometry(event, None, tt_s), None)

@@ -22,6 +22,7 @@ NAN = float("nan")
 CLAIM_SIGMA = 5.0
 CLOCK_SIGMA = 3.0
 SITE_PRIOR_KM = 500.0
+ANOTHER_DATE_S = 2.0 * DAY_S
 EARTH_KM_DEG = 111.19  # a degree of latitude, mean
 
 
@@ -49,11 +50,14 @@ def clock_findings(reading: Reading, plan: Plan, promise: Promise, question: Que
     """Return offset, drift, a start taken for a middle, and a displaced site."""
     findings: list[Finding] = []
     offset, sigma = reading.fit.value["clock_s"], reading.fit.sigma["clock_s"]
+    if reading.name not in ("plain", "clock-far-off"):
+        # frames were measured with the air, the phase and the limb of another time, place or camera: first things first
+        return ClockFindings(NAN, NAN, ())
     if abs(offset) > CLOCK_SIGMA * sigma and reading.name != "clock-far-off":
         start = _start_for_middle(reading, plan, question)
-        findings.append(start or _offset_finding(offset, sigma, reading))
+        findings.append(start or _offset_finding(offset, sigma))
     elif reading.name == "clock-far-off":
-        findings.append(_offset_finding(reading.clock_offset_s, sigma, reading))
+        findings.append(_offset_finding(reading.clock_offset_s, sigma))
     drift, drift_sigma = _drift(reading, question)
     if np.isfinite(drift_sigma) and abs(drift) > CLAIM_SIGMA * drift_sigma:
         way = "gains" if drift > 0 else "loses"
@@ -74,11 +78,10 @@ def clock_findings(reading: Reading, plan: Plan, promise: Promise, question: Que
     return ClockFindings(drift, drift_sigma, tuple(findings))
 
 
-def _offset_finding(offset: float, sigma: float, reading: Reading) -> Finding:
+def _offset_finding(offset: float, sigma: float) -> Finding:
     way = "fast: its stamps are later than UTC" if offset > 0 else "slow: its stamps are earlier than UTC"
-    beyond = "" if reading.clock_s == 0 or reading.name == "clock-far-off" else " beyond that"
     text = (
-        f"The frames' clock is {with_sigma(abs(offset), sigma)} s {way}{beyond}. "
+        f"The frames' clock is {with_sigma(abs(offset), sigma)} s {way}. "
         "`--apply clock` writes a track with the times put right."
     )
     if abs(offset) >= SMALL_CLOCK_S:
@@ -139,7 +142,7 @@ def _site_displaced(reading: Reading, promise: Promise, question: Question) -> F
 
     A displacement along the path looks like a clock error; only what the frames tell apart is claimed.
     """
-    if reading.name not in ("plain", "zone", "date") or reading.fit.used.sum() < 6:
+    if reading.name != "plain" or reading.fit.used.sum() < 6:
         return None
     north_km = east_km = 0.0
     path = reading.path
@@ -275,11 +278,32 @@ def frame_findings(measurements: Sequence[Measurement], plan: Plan) -> list[Find
             "check the file headers."
         )
         findings.append(Finding("site-differs", NAN, text, min(away), NAN, "km"))
+    findings += _date_findings(measurements, plan)
     order = [m.time.middle_tt_s for m in measurements]
     if any(b < a for a, b in pairwise(order)):
         text = "The files' names are not in the order of their times; frames are shown by time."
         findings.append(Finding("out-of-order", NAN, text))
     return findings
+
+
+def _date_findings(measurements: Sequence[Measurement], plan: Plan) -> list[Finding]:
+    """Return a finding when the frames lie days away from all that was planned."""
+    from planner.sequence.frametimes import frame_starts
+
+    start = frame_starts(plan)[2]
+    if not measurements or not start.size:
+        return []
+    stamps = np.array([m.time.middle_tt_s for m in measurements])
+    early, late = start.min() - stamps.max(), stamps.min() - start.max()
+    away = max(early, late)
+    if away < ANOTHER_DATE_S:
+        return []
+    side = "before the first" if early > late else "after the last"
+    text = (
+        f"All frames are stamped {duration_text(away)} {side} planned frame: the plan is for another date, or the "
+        "camera's date is wrong."
+    )
+    return [Finding("another-date", NAN, text, away, NAN, "s")]
 
 
 def _away_km(site: tuple[float, float, float], plan: Plan) -> float:

@@ -22,6 +22,8 @@ COMMANDS = {
     "check": ("planner.cli.check", "Measure frames and compare them with the prediction."),
     "compose": ("planner.cli.compose", "Make the composite picture and the path plot."),
     "timelapse": ("planner.cli.timelapse", "Make a film of the frames, registered and at a stated pace."),
+    "parallax": ("planner.cli.parallax", "The distance of a body from the tracks of two sites."),
+    "orbit": ("planner.cli.orbit", "The orbit of a planet from its track among the stars."),
     "schema": ("planner.cli.schema", "JSON Schema of site, rig, brief or plan."),
     "demo": ("planner.cli.demo", "Run the example briefs from prediction to picture."),
 }
