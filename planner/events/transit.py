@@ -23,8 +23,9 @@ DAY_S = timescale.DAY_S
 _REACH_S = 0.4 * DAY_S
 # Geocentric separation at heliocentric conjunction beyond which no transit can follow: the Sun's largest and
 # Venus's largest semidiameter and parallax (975 + 34 + 34 arcsec), over the cosine of the track's slope (9 degrees),
-# and the motion during the light-time between the geometric and the seen conjunction (500 s at 0.1"/s).
-_NEAR_ARCSEC = 1300.0
+# the motion during the light-time between the geometric and the seen conjunction (500 s at 0.1"/s), and what a
+# conjunction found to a quarter of an hour is off by (90").
+_NEAR_ARCSEC = 1400.0
 _PARALLAX_ARCSEC = 36.0
 
 # 1-sigma of what a radius means at the limb. Sun: spread of measured radii about 959.63", such as 960.12" +- 0.09"
@@ -87,9 +88,9 @@ class SolarTransit:
         NaN where a limb does not cross. `margin_arcsec` also admits those that pass the Sun by as much.
         """
         passing = self._passing(body, None, radii)
-        guess = conjunctions.with_earth(body, start_tt_s, end_tt_s)
+        guess = conjunctions.with_earth(body, start_tt_s, end_tt_s, steps=2)
         guess = guess[(guess >= start_tt_s - 2 * DAY_S) & (guess <= end_tt_s + 2 * DAY_S)]
-        guess = guess[passing.sight(guess).separation_rad * RAD_ARCSEC < _NEAR_ARCSEC]
+        guess = guess[conjunctions.elongation_rad(body, guess) * RAD_ARCSEC < _NEAR_ARCSEC]
         greatest = passing.closest(guess, 0.1 * DAY_S, 2 * DAY_S)
         greatest = greatest[np.isfinite(greatest)]
         greatest = greatest[(greatest >= start_tt_s) & (greatest <= end_tt_s)]
