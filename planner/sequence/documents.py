@@ -7,7 +7,7 @@ from datetime import UTC, date, datetime, time
 from difflib import get_close_matches
 from pathlib import Path
 from types import UnionType
-from typing import Annotated, Any, TypeVar, Union, get_args, get_origin
+from typing import TYPE_CHECKING, Annotated, Any, TypeVar, Union, get_args, get_origin
 
 from pydantic import BaseModel, ValidationError
 
@@ -20,6 +20,7 @@ from planner.sequence.models import (
     Brief,
     ElementSigma,
     EventRequest,
+    LimbFiles,
     OrbitElements,
     OrbitFile,
     Plan,
@@ -27,6 +28,9 @@ from planner.sequence.models import (
     Site,
 )
 from planner.sky.observer import Observer
+
+if TYPE_CHECKING:
+    from planner.sky.moonlimb import LimbModel
 
 AnyModel = TypeVar("AnyModel", bound=BaseModel)
 
@@ -66,6 +70,10 @@ def load_brief(path: str | Path, site: Site | None = None, rig: Rig | None = Non
             event["orbit"] = load_orbit(_inside(document, ("event", "orbit"))).model_dump(
                 mode="json", exclude_unset=True
             )
+        limb = event.get("limb") if isinstance(event, dict) else None
+        for key in ("elevation", "orientation", "frame"):
+            if isinstance(limb, dict) and isinstance(limb.get(key), str):
+                limb[key] = str(_inside(document, ("event", "limb", key)).resolve())
         others = document.data.get("other_rigs")
         for index, entry in enumerate(others if isinstance(others, list) else []):
             if isinstance(entry, str):
@@ -160,8 +168,17 @@ def event_spec(request: EventRequest) -> EventSpec:
         other_body=request.other_body,
         star=request.star,
         orbit=orbit_of(request.orbit),
+        limb=_limb_of(request.limb),
         radii=request.radii,
     )
+
+
+def _limb_of(files: LimbFiles | None) -> LimbModel | None:
+    if files is None:
+        return None
+    from planner.sky.moonlimb import limb_model
+
+    return limb_model(files.elevation, files.orientation, files.frame)
 
 
 def dump_plan(plan: Plan) -> str:

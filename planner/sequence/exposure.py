@@ -35,7 +35,8 @@ def peak_rate_e_s(
     own_px = radiometry.FWHM_OF_SIGMA * radius_px / 2  # a uniform disc has a variance of r^2 / 4 an axis
     star_like = total * radiometry.star_peak_fraction(np.hypot(fwhm_px, own_px))
     # a disc lost in the blur peaks like a star; a large one like its surface
-    return np.minimum(unblurred * kept, star_like)
+    resolved = own_px > 1.5 * fwhm_px
+    return np.where(resolved, unblurred * kept, np.minimum(unblurred * kept, star_like))
 
 
 def rounded_down(exposure_s: float) -> float:

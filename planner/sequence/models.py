@@ -236,6 +236,14 @@ class OrbitFile(SmallBody):
     spk_target: int | None = Field(None, description="number of the body where the file holds several")
 
 
+class LimbFiles(Model):
+    """The Moon's real limb: files that the user has; paths count from the brief's folder."""
+
+    elevation: str = Field(description="PDS elevation grid: its label (.LBL) or image (.IMG)")
+    orientation: str | None = Field(None, description="lunar orientation kernel (.bpc); default: analytic")
+    frame: str | None = Field(None, description="its frame kernel (.tf)")
+
+
 class EventRequest(Model):
     """Which event: the one of this family nearest to the date."""
 
@@ -249,6 +257,7 @@ class EventRequest(Model):
         description="a file of elements (.yaml, .json), of one-line orbits (.txt), or the elements themselves",
     )
     radii: str | None = None
+    limb: LimbFiles | None = None
 
 
 class Wish(Model):
