@@ -8,9 +8,9 @@ import click
 
 
 @click.command("schema")
-@click.argument("document", type=click.Choice(["site", "rig", "brief", "plan"]))
+@click.argument("document", type=click.Choice(["site", "rig", "brief", "plan", "orbit"]))
 def command(document: str) -> None:
-    """Print the JSON Schema of a site, a rig, a brief or a plan.
+    """Print the JSON Schema of a site, a rig, a brief, a plan or an orbit.
 
     \b
     Example:
@@ -18,6 +18,15 @@ def command(document: str) -> None:
     """
     from planner.sequence import models
 
-    model = {"site": models.Site, "rig": models.Rig, "brief": models.Brief, "plan": models.Plan}[document]
-    schema = {"$schema": "https://json-schema.org/draft/2020-12/schema", **model.model_json_schema()}
+    known = {
+        "site": models.Site,
+        "rig": models.Rig,
+        "brief": models.Brief,
+        "plan": models.Plan,
+        "orbit": models.OrbitElements,
+    }
+    schema = {
+        "$schema": "https://json-schema.org/draft/2020-12/schema",
+        **known[document].model_json_schema(),
+    }
     click.echo(json.dumps(schema, indent=2))
