@@ -18,7 +18,7 @@ from planner.errors import InputError
 
 EPOCH_YEAR = 2016.0
 _HIPPARCOS_YEAR = 1991.25
-_FORMAT = 5
+_FORMAT = 6
 _MAS = np.pi / 648e6
 # 1-sigma of a motion that nobody measured, mas/yr: half of the median total motion of stars of this brightness
 _UNKNOWN_MOTION_MAS_YEAR = 20.0
@@ -45,6 +45,9 @@ STAR = np.dtype(
 _GAIA = np.dtype(
     [("source", "<i8"), ("ra", "<f8"), ("dec", "<f8"), ("g", "<f4"), ("bp", "<f4"), ("rp", "<f4")]
 )
+
+# Too bright for both satellites: V from the Bright Star Catalogue (from memory)
+_PUBLISHED_V = {32349: -1.46, 30438: -0.72}
 
 # Hp - V and Hp - G by B - V, medians over 107,000 stars in both catalogues (V from Gaia's three bands)
 _COLOUR = np.array([-0.2, 0.0, 0.2, 0.4, 0.6, 0.8, 1.0, 1.2, 1.4, 1.6, 1.85, 2.5])
@@ -222,6 +225,8 @@ def _merge(gaia: np.ndarray, hip: dict[str, np.ndarray]) -> np.ndarray:
     blended[blended] &= gaia["g"][other[blended]] < alone["g"][blended] + 1.0
     keep = np.concatenate([np.ones(len(gaia), bool), ~blended])
     stars = stars[keep]
+    for number, v in _PUBLISHED_V.items():
+        stars["v"][stars["hip"] == number] = v
     return stars[np.argsort(stars["dec_deg"], kind="stable")]
 
 

@@ -40,8 +40,7 @@ def test_the_brightest_stars_are_the_known_ones():
         ("Aldebaran", 0.87),
         ("Spica", 0.98),
     ):
-        # Sirius lies outside every calibrated range
-        assert stars.star(name).magnitude == pytest.approx(v, abs=0.4 if name == "Sirius" else 0.1)
+        assert stars.star(name).magnitude == pytest.approx(v, abs=0.1)
 
 
 def test_visual_magnitudes_come_from_three_bands_and_agree_with_hipparcos(hipparcos):
