@@ -27,6 +27,8 @@ _GRID_S = 2.0 * DAY_S
 DEFAULT_WITHIN_DEG = 1.0
 # An event asked for by its date may be wider than what a search lists.
 _NEAREST_WITHIN_DEG = 10.0
+# The best view is not before the sky has begun to darken, however bright the planets.
+_TWILIGHT_DEG = -4.0
 _BLOCK_S = 50 * timescale.YEAR_S
 
 
@@ -249,7 +251,8 @@ class PlanetsMeet:
                 for b in (near, far)
             )
         )
-        dark = sun_altitude_deg(observer, times) < darkness_needed_deg(np.array([magnitude]))[0]
+        needed = min(darkness_needed_deg(np.array([magnitude]))[0], _TWILIGHT_DEG)
+        dark = sun_altitude_deg(observer, times) < needed
         usable = dark & (altitude > 0)
         return float(times[np.argmax(np.where(usable, altitude, -99.0))]) if usable.any() else None
 

@@ -101,7 +101,11 @@ class RetrogradeTrack:
             "diameter_arcsec": 2.0 * disc.semidiameter_arcsec,
         }
         instants = maker.instants(names, self._terms(body, names, times), extra)
-        near_sun = (cautions.SUN_NEAR[0].format(0),) if body in _INNER else ()
+        sun = places.direction("sun", None, times).vector_km
+        elongation = (
+            places.separation_arcsec(places.direction(body, None, times).vector_km, sun).max() / 3600.0
+        )
+        near_sun = tuple(text.format(elongation) for text in cautions.SUN_NEAR) if body in _INNER else ()
         return Circumstances(
             event=event,
             observer=observer,
