@@ -101,7 +101,8 @@ def _from(here: Geometry, there: Geometry, at: int | slice) -> tuple[np.ndarray,
 
 def _target(geometry: Geometry) -> tuple[np.ndarray, np.ndarray]:
     for name, ra_deg, dec_deg, _ in geometry.stars:
-        if name == geometry.target:
+        # among the stars it is the body before the star that parallax moves
+        if name == geometry.target and geometry.reference != "stars":
             return ra_deg, dec_deg
-    disc = geometry.discs[geometry.target]
+    disc = geometry.discs.get(geometry.target) or next(iter(geometry.discs.values()))
     return disc.ra_deg, disc.dec_deg

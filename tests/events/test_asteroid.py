@@ -299,3 +299,20 @@ def test_the_search_command_takes_orbits(capsys):
     (found,) = json.loads(capsys.readouterr().out)
     assert found["star"] == "HIP 8588"
     assert found["happens"]
+
+
+def test_two_sites_see_the_body_displaced_by_their_baseline(event, brief):
+    from planner.events.against import compare
+
+    here = observer_of(brief.site)
+    there = Observer("there", 36.0, 34.0, 100.0)
+    comparison = compare(event, here, there)
+    middle = next(shift for shift in comparison.shifts if shift.name == "closest")
+    facts = comparison.one.facts
+    # along: the speed of the shadow times the difference in time; across: what the other site is off the line
+    along_km = -middle.later_s * facts["shadow_speed_km_s"]
+    kilometres = np.array([along_km, comparison.other.facts["offset_km"]])
+    seen = (
+        np.abs([middle.along_arcsec, middle.across_arcsec]) / 206264.8 * facts["distance_au"] * 1.495978707e8
+    )
+    assert seen == pytest.approx(np.abs(kilometres), abs=1.0)
