@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from datetime import UTC, tzinfo
 from pathlib import Path
 from typing import Any
 
@@ -12,7 +11,8 @@ from imaging.compose.choices import Choices
 from imaging.compose.disc_path import disc_path
 from imaging.compose.light import Light
 from imaging.compose.material import Material
-from imaging.compose.pathdata import path_data
+from imaging.compose.page import write_page
+from imaging.compose.pathdata import PathData
 from imaging.compose.pathplot import DARK, LIGHT, write_path_plot
 from imaging.compose.phase_series import phase_series
 from imaging.compose.picture import Picture
@@ -35,6 +35,7 @@ class Outputs:
     plot_formats: tuple[str, ...] = ("png", "svg")
     linear: bool = False
     caption: bool = True
+    page: bool = True
     dpi: int = 200
     force: bool = False
 
@@ -51,6 +52,11 @@ class Outputs:
         """The path of the statement of truth."""
         return self.folder / "composite.truth.json"
 
+    @property
+    def html(self) -> Path:
+        """The path of the interactive page."""
+        return self.folder / "composite.html"
+
     def refuse_existing(self) -> None:
         """Refuse, before any work, what would overwrite a file; raises OutputExistsError."""
         for suffix in self.picture_formats:
@@ -59,6 +65,8 @@ class Outputs:
             for version in ("light", "dark"):
                 refuse_existing(self.plot(version, suffix), self.force)
         refuse_existing(self.statement, self.force)
+        if self.page:
+            refuse_existing(self.html, self.force)
 
 
 def compose_picture(material: Material, choices: Choices, other: Material | None = None) -> Picture:
@@ -90,9 +98,12 @@ def compose_picture(material: Material, choices: Choices, other: Material | None
 
 
 def write_picture(
-    material: Material, picture: Picture, outputs: Outputs
+    material: Material, picture: Picture, outputs: Outputs, data: PathData | None = None
 ) -> tuple[list[Path], dict[str, Any]]:
-    """Write the composite in its formats and the statement of truth; returns the paths and the statement."""
+    """Write the composite in its formats and the statement of truth; returns the paths and the statement.
+
+    With the path plot's `data`, and where the path can be drawn on the picture, the interactive page too.
+    """
     stretch: Stretch = measured_stretch(
         picture.image, "linear" if outputs.linear else picture.tone, picture.faintest_peak()
     )
@@ -115,15 +126,15 @@ def write_picture(
                 )
             files.write_raster(path, shown, stretch, material.plan.title, caption, outputs.force)
         written.append(path)
+    if outputs.page and data is not None and picture.holds_path_about(data.on_disc):
+        write_page(outputs.html, material, picture, tones, data, caption, outputs.force)
+        written.append(outputs.html)
     truth.write_statement(outputs.statement, statement, outputs.force)
     return [*written, outputs.statement], statement
 
 
-def write_plots(
-    material: Material, choices: Choices, outputs: Outputs, zone: tzinfo = UTC, zone_label: str = "UTC"
-) -> list[Path]:
+def write_plots(data: PathData, outputs: Outputs) -> list[Path]:
     """Write the path plots, light and dark, in their formats."""
-    data = path_data(material, choices, zone, zone_label)
     written = []
     for suffix in outputs.plot_formats:
         for version, palette in (("light", LIGHT), ("dark", DARK)):

@@ -130,7 +130,7 @@ def path_data(material: Material, choices: Choices, zone: tzinfo = UTC, zone_lab
 
 def _disc_of(material: Material, choices: Choices) -> str | None:
     wanted = material.reference if choices.registration == "auto" else choices.registration
-    return None if wanted == "stars" else wanted
+    return wanted if wanted in ("sun", "moon") else None
 
 
 def _anchors(

@@ -52,6 +52,12 @@ class Picture:
     enlargement: float = 1.0
     left_out: tuple[tuple[str, str], ...] = field(default=())
 
+    def holds_path_about(self, disc: str | None) -> bool:
+        """Return whether a path about this disc, or among stars (None), can be drawn on the picture."""
+        if disc is None:
+            return self.kind in ("sky-path", "sky-series")
+        return self.kind in ("disc-path", "two-sites") and disc == self.registered_on
+
     def faintest_peak(self) -> float:
         """Return the peak value of the faintest target drawn on the sky beside a disc, infinity when there is none."""
         if self.registered_on != "moon" and self.kind != "sky-series":

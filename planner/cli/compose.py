@@ -36,7 +36,11 @@ class _Several(click.ParamType):
 @click.option("--frames", type=click.Path(path_type=Path), help="Where the frames are; default: near TRACK.")
 @click.option("-o", "--output", type=click.Path(path_type=Path), required=True, metavar="FOLDER")
 @click.option(
-    "--register", "registration", type=click.Choice(("auto", "sun", "moon", "stars")), default="auto"
+    "--register",
+    "registration",
+    type=click.Choice(("auto", "sun", "moon", "stars", "target")),
+    default="auto",
+    help="What stays still; target: a sheet of the planet's own discs in date order.",
 )
 @click.option(
     "--up", "orientation", type=click.Choice(("north", "zenith", "ecliptic", "track")), default="north",
@@ -57,6 +61,8 @@ class _Several(click.ParamType):
     help="Default: the finest of the frames.",
 )
 @click.option("--colour", is_flag=True, help="Keep the colours of a colour camera.")
+@click.option("--enlarge", type=click.FloatRange(1, 50), default=1.0, show_default=True,
+              help="Draw a sheet of discs larger than true; the caption says so.")  # fmt: skip
 @click.option(
     "--keep-off-track", is_flag=True, help="Draw the target also where the check found it off its track."
 )
@@ -67,6 +73,7 @@ class _Several(click.ParamType):
 @click.option("--plots", type=_Several(PLOT_FORMATS), default="png,svg", show_default=True)
 @click.option("--local-time", is_flag=True, help="Label plots in the site's time zone instead of UTC.")
 @click.option("--no-caption", is_flag=True, help="No caption band below PNG and JPEG.")
+@click.option("--no-page", is_flag=True, help="No interactive page.")
 @click.option("--scratch", type=click.Path(path_type=Path), help="Folder for large temporary files.")
 @click.option("--dpi", type=click.IntRange(50, 1200), default=200, show_default=True)
 @click.option("--force", is_flag=True, help="Replace outputs that exist.")
@@ -76,8 +83,8 @@ class _Several(click.ParamType):
 def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, output: Path, **chosen) -> int:  # type: ignore[no-untyped-def]
     """Make the composite picture and the path plot of PLAN from the frames that TRACK has measured.
 
-    FOLDER receives composite.png, composite.fits (linear light), path_light and path_dark plots, and
-    composite.truth.json, which says how far each element is from where the sky put it.
+    FOLDER receives composite.png, composite.fits (linear light), path_light and path_dark plots, composite.html
+    (point at a place for its frame), and composite.truth.json: how far each element is from where the sky put it.
 
     \b
     Example:
@@ -90,6 +97,7 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     from imaging.compose.choices import Choices
     from imaging.compose.composing import Outputs, compose_picture, write_picture, write_plots
     from imaging.compose.material import gather
+    from imaging.compose.pathdata import path_data
     from planner.cli.progress import bar
     from planner.sequence.documents import load_plan
 
@@ -100,6 +108,7 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
         plot_formats=chosen["plots"],
         linear=chosen["linear"],
         caption=not chosen["no_caption"],
+        page=not chosen["no_page"],
         dpi=chosen["dpi"],
         force=chosen["force"],
     )
@@ -126,8 +135,9 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
             tick=tick,
         )
         picture = compose_picture(material, choices, other)
-    paths, statement = write_picture(material, picture, outputs)
-    paths += write_plots(material, choices, outputs, zone, zone_label)
+        data = path_data(material, choices, zone, zone_label)
+    paths, statement = write_picture(material, picture, outputs, data)
+    paths += write_plots(data, outputs)
     aside = statement["set_aside"]
     if chosen["as_json"]:
         click.echo(
