@@ -62,7 +62,7 @@ def command(  # type: ignore[no-untyped-def]
     for path in (ecsv, ical):
         if path is not None:
             refuse_existing(path, force)
-    orbits = ()
+    orbits: tuple = ()
     if orbit_files:
         from planner.sequence.documents import load_orbit, orbit_of
 
