@@ -86,3 +86,58 @@ def _matrix(powers: list[tuple[int, int]], coefficients: np.ndarray) -> np.ndarr
     for (i, j), value in zip(powers, coefficients, strict=True):
         matrix[j, i] = value
     return matrix
+
+
+def measured_falloff(frames: list[np.ndarray]) -> tuple[float, float] | None:
+    """Return (a, b) of the vignetting 1 - a r^2 - b r^4 that the sky shows, r = 1 in the corner; None when it does not.
+
+    `frames`: values above bias. The falloff is what all frames have in common and is symmetric about the middle:
+    gradients of twilight or moonlight are fitted beside it as a plane a frame. None when the sky is too faint for
+    1 % in the corner.
+    """
+    rows, targets, planes = [], [], []
+    for number, data in enumerate(frames):
+        block = max(8, min(BLOCK_PX, data.shape[0] // 12, data.shape[1] // 12))
+        values = block_levels(data, block)
+        y, x = (np.indices(values.shape) + 0.5) * block - 0.5
+        u = (x - (data.shape[1] - 1) / 2) / (data.shape[1] / 2)
+        v = (y - (data.shape[0] - 1) / 2) / (data.shape[0] / 2)
+        aspect = data.shape[0] / data.shape[1]
+        r2 = (u**2 + (v * aspect) ** 2) / (1 + aspect**2)
+        level = float(np.nanmedian(values))
+        known = np.isfinite(values)
+        if level <= 0 or known.sum() < 40:
+            continue
+        rows.append(np.stack([-r2, -(r2**2)], axis=-1)[known])
+        planes.append((number, np.stack([np.ones_like(u), u, v], axis=-1)[known]))
+        targets.append(values[known] / level)
+    if not rows:
+        return None
+    total = sum(len(target) for target in targets)
+    design = np.zeros((total, 2 + 3 * len(rows)))
+    start = 0
+    for index, (row, (_, plane)) in enumerate(zip(rows, planes, strict=True)):
+        stop = start + len(row)
+        design[start:stop, :2] = row
+        design[start:stop, 2 + 3 * index : 5 + 3 * index] = plane
+        start = stop
+    target = np.concatenate(targets)
+    keep = np.ones(total, bool)
+    for _ in range(8):
+        solution, *_ = np.linalg.lstsq(design[keep], target[keep], rcond=None)
+        residual = target - design @ solution
+        spread = 1.4826 * float(np.median(np.abs(residual[keep]))) + 1e-9
+        keep = np.abs(residual) < 2.5 * spread
+    covariance = np.linalg.pinv(design[keep].T @ design[keep]) * spread**2
+    middle = float(np.mean([solution[2 + 3 * index] for index in range(len(rows))]))
+    corner_sigma = float(np.sqrt(np.ones(2) @ covariance[:2, :2] @ np.ones(2))) / middle
+    a, b = float(solution[0] / middle), float(solution[1] / middle)
+    return (a, b) if corner_sigma < 0.01 and 0 <= a + b < 0.9 else None
+
+
+def falloff(shape: tuple[int, int], a: float, b: float) -> np.ndarray:
+    """Return the share of light that arrives at each pixel: 1 - a r^2 - b r^4, r = 1 in the corner."""
+    y = (np.arange(shape[0]) - (shape[0] - 1) / 2)[:, None]
+    x = (np.arange(shape[1]) - (shape[1] - 1) / 2)[None, :]
+    r2 = (x**2 + y**2) / ((shape[0] / 2) ** 2 + (shape[1] / 2) ** 2)
+    return (1 - a * r2 - b * r2**2).astype(np.float32)

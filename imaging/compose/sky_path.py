@@ -14,63 +14,58 @@ import numpy as np
 from imaging.compose.canvas import Canvas, canvas_around
 from imaging.compose.choices import Choices
 from imaging.compose.ground import sky_surface
-from imaging.compose.light import Light, exposure_level
-from imaging.compose.material import Material, Registered
+from imaging.compose.light import Light
+from imaging.compose.material import Material
 from imaging.compose.orientation import up_pa_deg
 from imaging.compose.patch import lay_patch, patch_box
 from imaging.compose.picture import Drawn, Picture
-from imaging.compose.plane import plane_to_sky, sky_to_plane
+from imaging.compose.plane import sky_to_plane
 from imaging.compose.stack import new_stack
-from planner.errors import FrameSetAside, InputError
+from imaging.compose.visit import PATCH_MOST_PX, Visit, learnt_flat, stacked
+from planner.errors import InputError
 
-PATCH_MOST_PX = 60.0
 PATCH_LEAST_PX = 5.0
 
 
 def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
     """Return the composite registered on stars; raises InputError when no frame is left."""
     anchor, canvas = _canvas(material, choices)
-    visits = list(material.passages())
+    groups = list(material.passages())
     shape = (canvas.height_px, canvas.width_px, *((3,) if light.colour else ()))
-    ground = new_stack(choices.blend, shape, len(visits), choices.scratch)
-    used: list[tuple[Registered, str]] = []
+    ground = new_stack(choices.blend, shape, len(groups), choices.scratch)
+    flat = learnt_flat(material, material.frames, light)
     left_out: list[tuple[str, str]] = []
-    patches = []
-    total, done = len(material.frames), 0
-    for _, frames in visits:
-        stars = new_stack("clipped", shape, len(frames), choices.scratch)
-        patch_canvas, target = _patch_canvas(canvas, anchor, frames)
-        body = new_stack("clipped", (patch_canvas.height_px, patch_canvas.width_px, *shape[2:]), len(frames))
-        kept = []
-        for frame in frames:
-            choices.tick(done, total)
-            done += 1
-            try:
-                pixels = light.read(frame)
-            except FrameSetAside as problem:
-                left_out.append((frame.path.name, problem.reason))
-                continue
-            level = exposure_level(pixels, frame, light.bias_adu)
-            pixels = replace(pixels, data=pixels.data - sky_surface(pixels.data - level.dark))
-            stars.add(light.on_canvas(pixels, frame, canvas, anchor, level))
-            body.add(
-                light.on_canvas(
-                    pixels, frame, patch_canvas, (frame.target_ra_deg, frame.target_dec_deg), level
-                )
-            )
-            kept.append(frame)
-            used.append((frame, "stars and target" if frame.measured else "stars"))
-        if kept:
-            ground.add(_level(stars.result()[0]))
-            patches.append((kept, patch_canvas, body.result()[0], target))
-    if not patches:
+    visits: list[Visit] = []
+    done = 0
+
+    def tick() -> None:
+        nonlocal done
+        choices.tick(done, len(material.frames))
+        done += 1
+
+    for _, frames in groups:
+        visit = stacked(material, frames, canvas, anchor, choices, light, flat, left_out, tick)
+        if visit is not None:
+            ground.add(_level(visit.stars))
+            visits.append(replace(visit, stars=np.zeros((0, 0), np.float32)))
+    if not visits:
         why = f"; the first: {left_out[0][0]} {left_out[0][1]}" if left_out else ""
         raise InputError(f"no frame registered on stars is left{why}")
     image, count = ground.result()
-    image, count, canvas = _inner_crop(image, count, canvas, patches, anchor)
-    drawn = [_lay(image, canvas, anchor, *patch) for patch in patches]
-    choices.tick(total, total)
+    image, count, canvas = _inner_crop(image, count, canvas, visits, anchor)
+    drawn = [_lay(image, canvas, anchor, visit) for visit in visits]
+    choices.tick(len(material.frames), len(material.frames))
     middle = 0.5 * (material.frames[0].tt_s + material.frames[-1].tt_s)
+    notes = [
+        f"the stars are a {choices.blend} blend of {len(visits)} visits",
+        "the target of each visit is stacked on itself and laid in at its measured place, with a soft edge",
+        "values are counts a second above a smooth background, which was taken off every frame",
+        f"vignetting {100 * (flat.a + flat.b):.0f} % in the corner, {flat.source}, was divided out",
+    ]
+    if max(visit.merged for visit in visits) > 1:
+        notes.append(
+            "what long exposures burnt out in the target is taken from shorter ones, in linear light"
+        )
     return Picture(
         kind="sky-path",
         registered_on="stars",
@@ -82,13 +77,13 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
         anchor_dec_deg=anchor[1],
         reference_tt_s=float(middle),
         drawn=tuple(item for item in drawn if item is not None),
-        used=tuple(used),
-        tone="stars",
-        notes=(
-            f"the stars are a {choices.blend} blend of {len(patches)} visits",
-            "the target of each visit is stacked on itself and laid in at its measured place, with a soft edge",
-            "values are counts a second above a smooth background, which was taken off every frame",
+        used=tuple(
+            (frame, "stars and target" if frame.measured else "stars")
+            for visit in visits
+            for frame in visit.frames
         ),
+        tone="stars",
+        notes=tuple(notes),
         left_out=tuple(left_out),
     )
 
@@ -101,11 +96,11 @@ def _level(stars: np.ndarray) -> np.ndarray:
 
 
 def _inner_crop(
-    image: np.ndarray, count: np.ndarray, canvas: Canvas, patches: list, anchor: tuple[float, float]
+    image: np.ndarray, count: np.ndarray, canvas: Canvas, visits: list[Visit], anchor: tuple[float, float]
 ) -> tuple[np.ndarray, np.ndarray, Canvas]:
     """Return the picture without its empty corners, as far as the path allows with a margin of 4 % of its length."""
     covered = np.isfinite(image if image.ndim == 2 else image.sum(axis=2))
-    places = np.array([canvas.from_sky(*anchor, *target) for *_, target in patches], float)
+    places = np.array([canvas.from_sky(*anchor, *visit.target_deg) for visit in visits], float)
     margin = 0.04 * max(float(np.ptp(places, axis=0).max()), 200.0)
     keep = (
         max(0, int(places[:, 1].min() - margin)),
@@ -166,40 +161,10 @@ def _canvas(material: Material, choices: Choices) -> tuple[tuple[float, float], 
     return anchor, canvas_around(east, north, 0.22 * extent, scale, up, choices.largest_px)
 
 
-def _patch_canvas(
-    canvas: Canvas, anchor: tuple[float, float], frames: list[Registered]
-) -> tuple[Canvas, tuple[float, float]]:
-    """Return a small canvas anchored on the target, with the pixel grid of the picture at the visit's mean place."""
-    measured = [frame for frame in frames if frame.measured] or frames
-    offsets = np.array(
-        [sky_to_plane(*anchor, frame.target_ra_deg, frame.target_dec_deg) for frame in measured], float
-    ).mean(axis=0)
-    x_px, y_px = canvas.from_plane(*offsets)
-    half = int(PATCH_MOST_PX) + 4
-    fraction = (x_px - round(float(x_px)), y_px - round(float(y_px)))
-    small = replace(
-        canvas,
-        width_px=2 * half + 1,
-        height_px=2 * half + 1,
-        anchor_x_px=half + float(fraction[0]),
-        anchor_y_px=half + float(fraction[1]),
-    )
-    ra, dec = plane_to_sky(*anchor, *offsets)
-    return small, (float(ra), float(dec))
-
-
-def _lay(
-    image: np.ndarray,
-    canvas: Canvas,
-    anchor: tuple[float, float],
-    frames: list[Registered],
-    patch_canvas: Canvas,
-    patch: np.ndarray,
-    target: tuple[float, float],
-) -> Drawn | None:
-    x_px, y_px = (float(value) for value in canvas.from_sky(*anchor, *target))
+def _lay(image: np.ndarray, canvas: Canvas, anchor: tuple[float, float], visit: Visit) -> Drawn | None:
+    x_px, y_px = (float(value) for value in canvas.from_sky(*anchor, *visit.target_deg))
     row, column = round(y_px), round(x_px)
-    half = patch_canvas.width_px // 2
+    half = visit.patch_canvas.width_px // 2
     box = patch_box(image.shape, column, row, half)
     if box is None:
         return None
@@ -207,22 +172,24 @@ def _lay(
         slice(box[0].start - row + half, box[0].stop - row + half),
         slice(box[1].start - column + half, box[1].stop - column + half),
     )
-    radius_px = glow_radius_px(patch, patch_canvas.anchor_x_px, patch_canvas.anchor_y_px)
+    radius_px = glow_radius_px(visit.patch, visit.patch_canvas.anchor_x_px, visit.patch_canvas.anchor_y_px)
     # the feather lies inside the glow: beyond it the patch has only the noise of one visit to add
-    lay_patch(
-        image[box], patch[cut], x_px - box[1].start, y_px - box[0].start, 0.55 * radius_px, 0.45 * radius_px
+    x, y = x_px - box[1].start, y_px - box[0].start
+    lay_patch(image[box], visit.patch[cut], x, y, 0.55 * radius_px, 0.45 * radius_px)
+    places = [
+        canvas.from_sky(*anchor, f.predicted_ra_deg, f.predicted_dec_deg) for f in visit.frames if f.measured
+    ]
+    predicted = np.array(places or [(x_px, y_px)], float).mean(axis=0)
+    apart = float(np.hypot(x_px - predicted[0], y_px - predicted[1])) * canvas.scale_arcsec_px
+    return Drawn(
+        visit.frames[len(visit.frames) // 2],
+        x_px,
+        y_px,
+        float(predicted[0]),
+        float(predicted[1]),
+        apart if places else float("nan"),
+        radius_px,
     )
-    middle = frames[len(frames) // 2]
-    predicted = np.array(
-        [canvas.from_sky(*anchor, f.predicted_ra_deg, f.predicted_dec_deg) for f in frames], float
-    ).mean(axis=0)
-    measured = [frame.displacement_arcsec for frame in frames if frame.measured]
-    apart = (
-        float(np.hypot(x_px - predicted[0], y_px - predicted[1])) * canvas.scale_arcsec_px
-        if measured
-        else float("nan")
-    )
-    return Drawn(middle, x_px, y_px, float(predicted[0]), float(predicted[1]), apart, radius_px)
 
 
 def glow_radius_px(patch: np.ndarray, x_px: float, y_px: float) -> float:

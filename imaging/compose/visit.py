@@ -1,0 +1,163 @@
+"""One visit of a campaign: its frames stacked on the stars, and stacked on the target so that it does not smear."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from imaging.compose.canvas import Canvas
+from imaging.compose.choices import Choices
+from imaging.compose.exposures import by_exposure, merged, not_burnt_out
+from imaging.compose.ground import falloff, measured_falloff, sky_surface
+from imaging.compose.light import Light, exposure_level
+from imaging.compose.material import Material, Registered
+from imaging.compose.plane import plane_to_sky, sky_to_plane
+from imaging.compose.stack import new_stack
+from imaging.frames.frame import Frame
+from planner.errors import FrameSetAside
+
+PATCH_MOST_PX = 60.0
+
+
+@dataclass(frozen=True)
+class Visit:
+    """What a visit gives: stars on the picture's canvas, the target on a small canvas of its own.
+
+    `target_deg`: mean measured direction. `merged`: number of exposure lengths that the target's patch is made of.
+    """
+
+    frames: tuple[Registered, ...]
+    stars: np.ndarray
+    patch: np.ndarray
+    patch_canvas: Canvas
+    target_deg: tuple[float, float]
+    merged: int
+
+
+@dataclass(frozen=True)
+class Flat:
+    """The vignetting of star frames: 1 - a r^2 - b r^4, and where it was learnt."""
+
+    a: float
+    b: float
+    source: str
+
+    def applied(self, frame: Frame, dark: float) -> Frame:
+        """Return the frame with its light above `dark` divided by the falloff."""
+        share = falloff(frame.data.shape[:2], self.a, self.b)
+        colour = frame.colour
+        if colour is not None:
+            step = frame.data.shape[0] // colour.shape[0]
+            planes = falloff((colour.shape[0] * step, colour.shape[1] * step), self.a, self.b)
+            planes = planes[step // 2 :: step, step // 2 :: step]
+            colour = (colour - dark) / planes[..., None] + dark
+        return replace(frame, data=(frame.data - dark) / share + dark, colour=colour)
+
+
+def learnt_flat(material: Material, frames: tuple[Registered, ...], light: Light, most: int = 8) -> Flat:
+    """Return the vignetting that the sky of a few frames shows, else the one that the rig states."""
+    chosen = np.unique(np.linspace(0, len(frames) - 1, most).astype(int))
+    skies = []
+    for index in chosen.tolist():
+        try:
+            skies.append(light.read(frames[index]).data - light.bias_adu)
+        except FrameSetAside:
+            continue
+    measured = measured_falloff(skies) if skies else None
+    if measured is None:
+        return Flat(
+            material.plan.rig.optics.vignetting, 0.0, "as the rig states it, the sky being too faint to tell"
+        )
+    return Flat(*measured, f"measured on the sky of {len(skies)} frames")
+
+
+def stacked(
+    material: Material,
+    frames: list[Registered],
+    canvas: Canvas,
+    anchor_deg: tuple[float, float],
+    choices: Choices,
+    light: Light,
+    flat: Flat,
+    left_out: list[tuple[str, str]],
+    tick: Callable[[], None],
+) -> Visit | None:
+    """Return a visit's stacks, outliers rejected; None when none of its frames can be read.
+
+    Stars come from the longest exposures. Where a visit has shorter ones too, what the long ones burn out in the
+    target is taken from them.
+    """
+    patch_canvas, target = _patch_canvas(canvas, anchor_deg, frames)
+    planes = (3,) if light.colour else ()
+    patch_shape = (patch_canvas.height_px, patch_canvas.width_px, *planes)
+    groups = by_exposure(frames)
+    layers, kept, stars, whole = [], [], None, None
+    for number, group in enumerate(groups):
+        star_stack = None
+        if number == 0:
+            star_shape = (canvas.height_px, canvas.width_px, *planes)
+            star_stack = new_stack("clipped", star_shape, len(group), choices.scratch)
+        patch = new_stack("clipped", patch_shape, len(group))
+        bright = new_stack("clipped", patch_shape, len(group))
+        for frame in group:
+            tick()
+            try:
+                pixels = light.read(frame)
+            except FrameSetAside as problem:
+                left_out.append((frame.path.name, problem.reason))
+                continue
+            level = exposure_level(pixels, frame, light.bias_adu)
+            good = not_burnt_out(pixels, _saturation_adu(material)) if len(groups) > 1 else None
+            pixels = without_sky(flat.applied(pixels, level.dark), level.dark)
+            if star_stack is not None:
+                star_stack.add(light.on_canvas(pixels, frame, canvas, anchor_deg, level))
+            place = frame.target_ra_deg, frame.target_dec_deg
+            patch.add(light.on_canvas(pixels, frame, patch_canvas, place, level, good))
+            if number == len(groups) - 1 and good is not None:
+                bright.add(light.on_canvas(pixels, frame, patch_canvas, place, level))
+            kept.append(frame)
+        if star_stack is not None:
+            stars = star_stack.result()[0]
+        layers.append(patch.result()[0])
+        whole = bright.result()[0] if number == len(groups) - 1 and len(groups) > 1 else None
+    if not kept or stars is None:
+        return None
+    kept.sort(key=lambda frame: frame.tt_s)
+    return Visit(tuple(kept), stars, merged(layers, whole), patch_canvas, target, len(groups))
+
+
+def without_sky(frame: Frame, dark: float) -> Frame:
+    """Return the frame with its smooth background taken off down to `dark`, each colour by itself."""
+    data = frame.data - sky_surface(frame.data - dark)
+    colour = frame.colour
+    if colour is not None:
+        colour = np.stack([plane - sky_surface(plane - dark) for plane in np.moveaxis(colour, 2, 0)], axis=2)
+    return replace(frame, data=data, colour=colour)
+
+
+def _saturation_adu(material: Material) -> float:
+    sensor = material.plan.rig.sensor
+    return min(2.0**sensor.bit_depth - 1, sensor.full_well_e / sensor.gain_e_adu + sensor.bias_adu)
+
+
+def _patch_canvas(
+    canvas: Canvas, anchor: tuple[float, float], frames: list[Registered]
+) -> tuple[Canvas, tuple[float, float]]:
+    """Return a small canvas anchored on the target, with the pixel grid of the picture at the visit's mean place."""
+    measured = [frame for frame in frames if frame.measured] or frames
+    offsets = np.array(
+        [sky_to_plane(*anchor, frame.target_ra_deg, frame.target_dec_deg) for frame in measured], float
+    ).mean(axis=0)
+    x_px, y_px = (float(value) for value in canvas.from_plane(*offsets))
+    half = int(PATCH_MOST_PX) + 4
+    small = replace(
+        canvas,
+        width_px=2 * half + 1,
+        height_px=2 * half + 1,
+        anchor_x_px=half + x_px - round(x_px),
+        anchor_y_px=half + y_px - round(y_px),
+    )
+    ra, dec = plane_to_sky(*anchor, *offsets)
+    return small, (float(ra), float(dec))
