@@ -82,19 +82,8 @@ def moon_state(observer: Observer | None, tt_s: np.ndarray, limb_pa_icrs_deg: np
 
 
 def eclipse_state(tt_s: np.ndarray) -> tuple[str, ...]:
-    """Return whether the Moon stands in the Earth's shadow: `none`, `penumbral`, `partial` or `total`.
-
-    Radii of the shadow after Meeus ch. 54; the edge of the umbra is good to about 20 s of time.
-    """
-    tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
-    moon = places.direction("moon", None, tt_s)
-    sun = places.direction("sun", None, tt_s)
-    from_axis = places.separation_arcsec(moon.vector_km, -sun.vector_km) / RAD_ARCSEC
-    moon_parallax = np.arcsin(6378.137 / moon.distance_km) * _EARTH_MEAN_OVER_EQUATORIAL
-    sun_parallax, sun_radius = np.arcsin(6378.137 / sun.distance_km), np.arcsin(695700.0 / sun.distance_km)
-    umbra = _SHADOW_WIDENED * (moon_parallax + sun_parallax - sun_radius)
-    penumbra = _SHADOW_WIDENED * (moon_parallax + sun_parallax + sun_radius)
-    moon_radius = np.arcsin(1737.4 / moon.distance_km)
+    """Return whether the Moon stands in the Earth's shadow: `none`, `penumbral`, `partial` or `total`."""
+    from_axis, umbra, penumbra, moon_radius = earth_shadow(tt_s)
     state = np.where(
         from_axis < umbra - moon_radius,
         "total",
@@ -105,6 +94,22 @@ def eclipse_state(tt_s: np.ndarray) -> tuple[str, ...]:
         ),
     )
     return tuple(str(s) for s in state)
+
+
+def earth_shadow(tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Return the Moon's distance from the shadow's axis, and the radii of umbra, penumbra and Moon, in radians.
+
+    Geocentric; radii of the shadow after Meeus ch. 54; the edge of the umbra is good to about 20 s of time.
+    """
+    tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
+    moon = places.direction("moon", None, tt_s)
+    sun = places.direction("sun", None, tt_s)
+    from_axis = places.separation_arcsec(moon.vector_km, -sun.vector_km) / RAD_ARCSEC
+    moon_parallax = np.arcsin(6378.137 / moon.distance_km) * _EARTH_MEAN_OVER_EQUATORIAL
+    sun_parallax, sun_radius = np.arcsin(6378.137 / sun.distance_km), np.arcsin(695700.0 / sun.distance_km)
+    umbra = _SHADOW_WIDENED * (moon_parallax + sun_parallax - sun_radius)
+    penumbra = _SHADOW_WIDENED * (moon_parallax + sun_parallax + sun_radius)
+    return from_axis, umbra, penumbra, np.arcsin(1737.4 / moon.distance_km)
 
 
 def limb_words(state: MoonState) -> dict[str, list]:

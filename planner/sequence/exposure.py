@@ -13,6 +13,7 @@ from planner.sky.discs import SkyDisc
 
 # An exposure is stepped where the brightness has changed by this factor: a third of a stop, common practice, no source.
 STEP = 2 ** (1 / 3)
+ECLIPSED_LIGHT = 1e-4
 
 
 def peak_rate_e_s(
@@ -37,6 +38,19 @@ def peak_rate_e_s(
     # a disc lost in the blur peaks like a star; a large one like its surface
     resolved = own_px > 1.5 * fwhm_px
     return np.where(resolved, unblurred * kept, np.minimum(unblurred * kept, star_like))
+
+
+def eclipse_light(tt_s: np.ndarray) -> np.ndarray:
+    """Return the part of its light that the brightest place of the Moon keeps in the Earth's shadow; 1 outside it.
+
+    Straight from the penumbra's edge to the umbra's, and 10 magnitudes down inside. Common practice, no source: total
+    eclipses differ by some magnitudes from one to the next, so a bracket of exposures is wise.
+    """
+    from planner.events.moon import earth_shadow
+
+    from_axis, umbra, penumbra, moon_radius = earth_shadow(tt_s)
+    brightest = from_axis + moon_radius
+    return np.maximum(np.clip((brightest - umbra) / (penumbra - umbra), 0.0, 1.0), ECLIPSED_LIGHT)
 
 
 def rounded_down(exposure_s: float) -> float:

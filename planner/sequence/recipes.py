@@ -132,6 +132,8 @@ def _brightest_disc(setting: Setting, geometry: Geometry) -> tuple[str, np.ndarr
             rates[name] = exposure.peak_rate_e_s(
                 setting.rig, setting.site, setting.through, name, disc, geometry.altitude_deg
             )
+            if name == "moon":
+                rates[name] = rates[name] * exposure.eclipse_light(geometry.tt_s)
     if not rates:
         return None
     brightest = max(rates, key=lambda name: float(np.median(rates[name])))

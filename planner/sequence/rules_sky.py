@@ -7,6 +7,7 @@ from collections.abc import Iterator
 import numpy as np
 
 from planner.sequence import radiometry
+from planner.sequence.exposure import eclipse_light
 from planner.sequence.feasibility import Case
 from planner.sequence.models import Finding
 from planner.sequence.skyglow import dark_nl, moonlight_nl
@@ -97,4 +98,20 @@ def target_low(case: Case) -> Iterator[Finding]:
         )
 
 
-RULES = (twilight, sky_fills_well, moon_glare, target_low)
+def moon_eclipsed(case: Case) -> Iterator[Finding]:
+    """The Moon stands in the Earth's shadow, and how dark it will be nobody knows."""
+    if "moon" not in case.sky.discs or not len(case.sample_rows):
+        return
+    light = eclipse_light(case.sky.tt_s)
+    if light.min() < 0.9:
+        yield Finding(
+            rule="moon-eclipsed",
+            level="caution",
+            where=case.where(light < 0.9),
+            sentence=f"The Earth's shadow takes {-2.5 * np.log10(light.min()):.1f} magnitudes "
+            "of the Moon's brightest part.",
+            cure="Total eclipses differ by some magnitudes: bracket the exposures by two stops.",
+        )
+
+
+RULES = (moon_eclipsed, twilight, sky_fills_well, moon_glare, target_low)

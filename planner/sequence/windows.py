@@ -10,6 +10,7 @@ from planner.events.family import Circumstances, Instant
 
 CONTACT_SIGMAS = 3.0
 LEAST_BURST_S = 20.0
+_TOGETHER_S = 240.0
 CONTACT_NAMES = ("contact", "disappearance", "reappearance", "graze", "occultation")
 # Lead before the first and after the last contact. Nothing of a planet is seen beside the Sun; beside the Moon and
 # among stars the approach is part of the picture. Common practice, no source.
@@ -76,14 +77,11 @@ def event_windows(
     for contact in contacts:
         half = burst_half_s(contact, clock_sigma_s, burst_s)
         start, end = contact.tt_s - half, contact.tt_s + half
-        # two contacts of one limb crossing belong together unless minutes lie between them
-        if bursts and start <= bursts[-1].end_tt_s + 240.0 and _same_limb(bursts[-1].contacts[-1], contact):
-            last = bursts.pop()
-            bursts.append(_burst((*last.contacts, contact), last.start_tt_s, max(end, last.end_tt_s)))
-        else:
-            if bursts and start < bursts[-1].end_tt_s:
-                start = bursts[-1].end_tt_s
-            bursts.append(_burst((contact,), start, end))
+        bursts.append(_burst((contact,), start, end))
+        while len(bursts) > 1 and _belong_together(bursts[-2], bursts[-1]):
+            second, first = bursts.pop(), bursts.pop()
+            begin, end = min(first.start_tt_s, second.start_tt_s), max(first.end_tt_s, second.end_tt_s)
+            bursts.append(_burst((*first.contacts, *second.contacts), begin, end))
     windows = [
         Window(
             "approach", "before the first contact", bursts[0].start_tt_s - lead, bursts[0].start_tt_s, False
@@ -98,13 +96,17 @@ def event_windows(
     return [window for window in windows if window.end_tt_s > window.start_tt_s]
 
 
-def _same_limb(a: Instant, b: Instant) -> bool:
-    return (a.name, b.name) in _NAMES
+def _belong_together(first: Window, second: Window) -> bool:
+    """Bursts that overlap are one; so are two contacts of one limb crossing, unless minutes lie between them."""
+    one_limb = (first.contacts[-1].name, second.contacts[0].name) in _NAMES
+    return second.start_tt_s <= first.end_tt_s + (_TOGETHER_S if one_limb else 0.0)
 
 
 def _burst(contacts: tuple[Instant, ...], start_tt_s: float, end_tt_s: float) -> Window:
     names = tuple(contact.name for contact in contacts)
-    name = _NAMES.get(names, " and ".join(n.replace("_", " ") for n in names))  # type: ignore[call-overload]
+    spelled = [n.replace("_", " ") for n in names]
+    default = " and ".join(spelled) if len(names) < 3 else f"{spelled[0]} to {spelled[-1]}"
+    name = _NAMES.get(names, default)  # type: ignore[call-overload]
     which = " and ".join(n.replace("_", " ") for n in names)
     return Window(name, f"dense frames through {which}", start_tt_s, end_tt_s, True, contacts)
 

@@ -23,6 +23,16 @@ def by_day() -> Brief:
     return brief.model_copy(update={"event": type(brief.event).model_validate(event)})
 
 
+def eclipsed() -> Brief:
+    """Uranus behind the Moon in total eclipse, seen from Japan on 2022 November 8 (published almanacs; from memory)."""
+    brief = changed(
+        example(OCCULTATION),
+        site={"latitude_deg": 35.7, "longitude_deg": 139.7, "timezone": "Asia/Tokyo", "horizon": []},
+    )
+    event = {"family": "moon-occults-planet", "body": "uranus", "date": "2022-11-08"}
+    return brief.model_copy(update={"event": type(brief.event).model_validate(event)})
+
+
 NARROW = {"width_px": 1200, "height_px": 900}
 
 # rule, level, brief, and the change that provokes it
@@ -62,6 +72,7 @@ PROVOKED = [
     ("twilight", "caution", meeting, {}),
     ("sky-fills-well", "caution", meeting, {"wish": {"exposure_s": 20.0}}),
     ("moon-glare", "caution", CAMPAIGN, {}),
+    ("moon-eclipsed", "caution", eclipsed, {}),
     ("target-low", "note", CAMPAIGN, {"wish": {"visit_when": "solar-depression", "solar_depression_deg": 15.0,
                                                "most_airmass": 20.0}}),
 ]  # fmt: skip
