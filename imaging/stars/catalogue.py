@@ -13,10 +13,10 @@ from planner.sky.places import radec_deg
 if TYPE_CHECKING:
     from planner.sky.stars import StarField
 
-_EPOCH_STEP_S = 86400.0 * 10  # within it no star of the list moves by more than 0.3 arcsec, most by 0.001
-_WIDE_RAD = (
-    0.7  # up to here a field alone is brought to the date, which takes a hundredth of the whole sky's time
-)
+_EPOCH_STEP_S = (
+    86400.0 * 90
+)  # of the whole sky: within it one star of the list moves by 1.3 arcsec, most by 0.01
+_WIDE_RAD = 0.7  # up to here a field alone is brought to the date, in a hundredth of the whole sky's time
 
 
 @lru_cache(maxsize=4)
@@ -50,19 +50,30 @@ def whole_sky(tt_s: float) -> Sky:
 
 
 def stars_near(center: np.ndarray, radius_rad: float, tt_s: float, stars_per_sr: float | None = None) -> Sky:
-    """Return the stars within a radius of a unit vector, brightest first, to about a mean density."""
-    radius = min(radius_rad, np.pi)
-    if radius < _WIDE_RAD:
-        from planner.sky.stars import stars_in_field
+    """Return the stars within a radius of a unit vector at the date, brightest first, to about a mean density."""
+    if radius_rad >= _WIDE_RAD:
+        return whole_sky(tt_s).take(rows_near(center, radius_rad, tt_s, stars_per_sr))
+    from planner.sky.stars import stars_in_field
 
-        ra_deg, dec_deg = radec_deg(np.asarray(center, float))
-        sky = _as_sky(stars_in_field(float(ra_deg), float(dec_deg), float(np.degrees(radius)), tt_s))
-        index = np.arange(len(sky))
+    ra_deg, dec_deg = radec_deg(np.asarray(center, float))
+    sky = _as_sky(stars_in_field(float(ra_deg), float(dec_deg), float(np.degrees(radius_rad)), tt_s))
+    return sky.take(np.arange(_number(len(sky), radius_rad, stars_per_sr)))
+
+
+def rows_near(
+    center: np.ndarray, radius_rad: float, tt_s: float, stars_per_sr: float | None = None
+) -> np.ndarray:
+    """Return the rows of `whole_sky` within a radius of a unit vector, ascending, to about a mean density."""
+    sky, tree = _whole(round(tt_s / _EPOCH_STEP_S))
+    radius = min(radius_rad, np.pi)
+    if radius >= np.pi - 1e-6:
+        rows = np.arange(len(sky))
     else:
-        sky, tree = _whole(round(tt_s / _EPOCH_STEP_S))
-        index = np.arange(len(sky))
-        if radius < np.pi - 1e-6:
-            index = np.sort(tree.query_ball_point(center, 2 * np.sin(radius / 2)))
-    if stars_per_sr is not None and np.isfinite(stars_per_sr):
-        index = index[: max(4, round(stars_per_sr * 2 * np.pi * (1 - np.cos(radius))))]
-    return sky.take(index)
+        rows = np.sort(tree.query_ball_point(center, 2 * np.sin(radius / 2))).astype(int)
+    return rows[: _number(len(rows), radius, stars_per_sr)]
+
+
+def _number(found: int, radius_rad: float, stars_per_sr: float | None) -> int:
+    if stars_per_sr is None or not np.isfinite(stars_per_sr):
+        return found
+    return min(found, max(4, round(stars_per_sr * 2 * np.pi * (1 - np.cos(min(radius_rad, np.pi))))))

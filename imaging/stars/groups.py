@@ -11,6 +11,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from itertools import combinations
 from math import comb
+from typing import Any
 
 import numpy as np
 
@@ -44,17 +45,23 @@ def local_groups(vectors: np.ndarray, size: int, neighbours: int, longest_limit:
         return coded(vectors, np.empty((0, size), dtype=int))
     if near == count - 1 and comb(count, size) <= _ALL_GROUPS:
         return coded(vectors, np.array(list(combinations(range(count), size))), longest_limit)
-    _, index = cKDTree(vectors).query(vectors, k=near + 1)
-    chosen = np.array(list(combinations(range(1, near + 1), size - 1)))
-    stars = np.concatenate(
-        [np.repeat(index[:, :1], len(chosen), axis=0), index[:, chosen].reshape(-1, size - 1)], axis=1
-    )
-    stars = np.sort(stars, axis=1).astype(np.int64)
-    key = stars[:, 0]
+    stars = local_members(cKDTree(vectors), vectors, size, near)
+    key = stars[:, 0].astype(np.int64)
     for column in range(1, size):
         key = key * count + stars[:, column]
     _, first = np.unique(key, return_index=True)
     return coded(vectors, stars[first], longest_limit)
+
+
+def local_members(tree: Any, vectors: np.ndarray, size: int, neighbours: int) -> np.ndarray:
+    """Return members (n, size), sorted, of the groups that each star (k, 3) forms with its nearest in the tree."""
+    _, index = tree.query(vectors, k=neighbours + 1)
+    chosen = np.array(list(combinations(range(1, neighbours + 1), size - 1)))
+    index = index.astype(np.int32)
+    members = np.concatenate(
+        [np.repeat(index[:, :1], len(chosen), axis=0), index[:, chosen].reshape(-1, size - 1)], axis=1
+    )
+    return np.sort(members, axis=1)
 
 
 def coded(vectors: np.ndarray, stars: np.ndarray, longest_limit: float = np.inf) -> Groups:

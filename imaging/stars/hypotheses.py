@@ -85,8 +85,29 @@ def hypotheses(
     `focal_range_px`. `parity` as in DEVELOPERS.md, None when unknown.
     """
     first, second = pairs
-    focal = focal_px * image.longest[first] / sky.longest[second]
-    image_stars, sky_stars = image.stars[first], sky.stars[second]
+    return hypotheses_of(
+        field,
+        stars,
+        image.stars[first],
+        sky.stars[second],
+        focal_px * image.longest[first] / sky.longest[second],
+        focal_range_px,
+        parity,
+        projection,
+    )
+
+
+def hypotheses_of(
+    field: Field,
+    stars: Sky,
+    image_stars: np.ndarray,
+    sky_stars: np.ndarray,
+    focal: np.ndarray,
+    focal_range_px: tuple[float, float],
+    parity: int | None = None,
+    projection: str = "TAN",
+) -> Hypotheses:
+    """Return the cameras that carry these groups (n, k), with these focal lengths (n,), onto each other."""
     keep = (focal > focal_range_px[0]) & (focal < focal_range_px[1])
     keep &= as_bright(field, stars, image_stars, sky_stars)
     image_stars, sky_stars, focal = image_stars[keep], sky_stars[keep], focal[keep]

@@ -28,11 +28,17 @@ def promising(guesses: Hypotheses, field: Field, sky: Sky) -> list[int]:
     return list(dict.fromkeys(int(i) for i in turns))
 
 
-def screened(guesses: Hypotheses, field: Field, sky: Sky, stars: int = _STARS) -> np.ndarray:
-    """Return indices of hypotheses, the most promising first (log likelihood ratio of their brightest stars)."""
+def screened(guesses: Hypotheses, field: Field, sky: Sky) -> np.ndarray:
+    """Return indices of hypotheses, the most promising first."""
+    score = scores(guesses, field, sky)
+    return np.argsort(-(score + np.log(guesses.votes[: len(score)])), kind="stable")
+
+
+def scores(guesses: Hypotheses, field: Field, sky: Sky) -> np.ndarray:
+    """Return the log likelihood ratio of the brightest stars that each of the first hypotheses predicts."""
     count = min(len(guesses), _MOST)
     if count == 0:
-        return np.empty(0, dtype=int)
+        return np.empty(0)
     height, width = field.shape
     axes, focal = guesses.axes[:count], guesses.focal_px[:count]
     known = sky.vectors[:600]
@@ -47,10 +53,10 @@ def screened(guesses: Hypotheses, field: Field, sky: Sky, stars: int = _STARS) -
         near = np.flatnonzero(index < len(known))
         own[near, index[near]] = True
     inside &= ~own
-    inside &= np.cumsum(inside, axis=1) <= stars
+    inside &= np.cumsum(inside, axis=1) <= _STARS
     h, n = np.nonzero(inside)
     if len(h) == 0:
-        return np.arange(count)
+        return np.zeros(count)
     px, py = x[h, n], y[h, n]
     group = guesses.image_stars[:count]
     middle_x, middle_y = field.x_px[group].mean(axis=1), field.y_px[group].mean(axis=1)
@@ -73,5 +79,4 @@ def screened(guesses: Hypotheses, field: Field, sky: Sky, stars: int = _STARS) -
     chance = np.clip((rivals + 1) * np.pi * gate**2 / field.area_px2, 1e-6, 0.9)
     likely = _DETECTED + (1 - _DETECTED) * chance
     gain = np.where(met, np.log(likely / chance), np.log((1 - likely) / (1 - chance)))
-    score = np.bincount(h, weights=gain, minlength=count)
-    return np.argsort(-(score + np.log(guesses.votes[:count])), kind="stable")
+    return np.bincount(h, weights=gain, minlength=count)

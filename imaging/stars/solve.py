@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -47,18 +47,24 @@ def solve_frame(
     detections: Detections | None = None,
     scale_tolerance: float = SCALE_TOLERANCE,
     lens: Lens | None = None,
+    blind: bool | None = None,
+    tick: Callable[[int, int], None] | None = None,
 ) -> PlateSolution:
     """Return where a frame points.
 
     `near`: rough centre (ra_deg, dec_deg, ICRS), within four field radii. `scale_arcsec_px`: within
     `scale_tolerance`. `previous`: the solution of a frame of the same rig shortly before. `rotation_deg`, `parity`:
     of the array, where known. `exclude`: ICRS places of bodies that are not stars, whose light is not matched.
-    Raises NoSolutionError when no pointing has a false-alarm probability below 1e-9; the message says what was tried.
+    `blind`: search the whole sky when the hints fail; by default only without `near` and `previous`. `tick`: progress
+    of the index that the first blind solution builds.
+    Raises NoSolutionError when no pointing has a false-alarm probability below 1e-7; the message says what was tried.
     """
     found = detections if detections is not None else detect_frame(frame)
     tt_s = frame.time.middle_tt_s if frame.time is not None else DEFAULT_EPOCH_TT_S
     hint = Hint(near, scale_arcsec_px, scale_tolerance, rotation_deg, parity, lens)
-    return solve_detections(found, tt_s, frame.row_zero, hint, previous, exclude)
+    if blind is None:
+        blind = near is None and previous is None
+    return solve_detections(found, tt_s, frame.row_zero, hint, previous, exclude, blind, tick)
 
 
 DEFAULT_EPOCH_TT_S = 25.0 * 365.25 * 86400.0  # a frame without time is solved with the stars of 2025.0
@@ -76,6 +82,8 @@ def solve_detections(
     hint: Hint,
     previous: PlateSolution | None = None,
     exclude: Sequence[tuple[float, float]] = (),
+    blind: bool = False,
+    tick: Callable[[int, int], None] | None = None,
 ) -> PlateSolution:
     """Return where a frame with these stars points; see `solve_frame`."""
     shape = (found.height_px, found.width_px)
@@ -120,6 +128,25 @@ def solve_detections(
             f"around {hint.near[0]:.3f} {hint.near[1]:+.3f} at {hint.scale_arcsec_px:.3f} arcsec/px "
             f"(+-{100 * hint.scale_tolerance:.0f} %), best chance 1e{attempt.best_log10:.0f}"
         )
+    if blind:
+        from imaging.stars.blind import solve_blind
+        from imaging.stars.index import quad_index
+
+        allowed = None
+        if hint.scale_arcsec_px is not None:
+            focal, slack = ARCSEC_RAD / hint.scale_arcsec_px, 1 + hint.scale_tolerance
+            allowed = (focal / slack, focal * slack)
+        attempt = solve_blind(
+            field,
+            quad_index(tick),
+            tt_s,
+            hint.lens or unknown_lens(3),
+            parity=hint.parity,
+            focal_range_px=allowed,
+        )
+        if attempt.match is not None:
+            return _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "blind")
+        tried.append(f"the whole sky, best chance 1e{attempt.best_log10:.0f}")
     raise NoSolutionError(
         f"{len(found)} stars found, no pointing defended; tried {'; '.join(tried) or 'nothing, for want of a hint'}"
     )
