@@ -75,7 +75,7 @@ def test_geocentric_predictions_have_no_altitude_and_name_the_geocentre(capsys):
 @pytest.mark.parametrize(
     ("event", "names"),
     [
-        ("moon-occults-star:HIP 92855:2027-08-13", {"disappearance", "closest", "reappearance"}),
+        ("moon-occults-star:HIP 49669:2017-07-25", {"disappearance", "closest", "reappearance"}),
         ("planets-meet:jupiter+saturn:2020-12-21", {"greatest", "conjunction_ra", "conjunction_longitude"}),
         (
             "retrograde-track:mars:2022-12-08",
