@@ -15,6 +15,7 @@ COMMANDS = {
     "predict": ("planner.cli.predict", "When and how an event happens at a site."),
     "search": ("planner.cli.search", "Events that a site will see in a span of dates."),
     "path": ("planner.cli.path", "Path of an asteroid's shadow over the Earth, as GeoJSON."),
+    "limb": ("planner.cli.limb", "Picture of the Moon's limb where something passes behind it."),
     "plan": ("planner.cli.plan", "Turn a brief into a timed sequence."),
     "handout": ("planner.cli.handout", "Run sheet, calendar, frame table, pictures and script of a plan."),
     "rehearse": ("planner.cli.rehearse", "Render the frames of a plan as the rig would record them."),

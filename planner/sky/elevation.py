@@ -24,7 +24,7 @@ _SAMPLE_TYPES = {
 _UNITS_KM = {"METER": 1e-3, "METERS": 1e-3, "M": 1e-3, "KILOMETER": 1.0, "KILOMETERS": 1.0, "KM": 1.0}
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class ElevationGrid:
     """Heights over a sphere: `samples` (lines, line samples), pixel registered, north at the top, longitude eastward.
 

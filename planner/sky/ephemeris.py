@@ -35,7 +35,7 @@ CHAINS: dict[str, tuple[tuple[int, int], ...]] = {
 _CHUNK = 4096
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class ChebyshevSegment:
     """One memory-mapped run of equal Chebyshev records: rows are (middle, half length, x, y, z coefficients)."""
 

@@ -36,7 +36,7 @@ _RISE_AT_4_KM, _RISE_POWER = 0.32, 0.8
 _SIGMA_AT_4_KM, _SIGMA_POWER = 0.28, 0.5
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class LimbModel:
     """An elevation grid with the orientation that turns it to the sky."""
 

@@ -24,7 +24,7 @@ _DE421_TO_MEAN_EARTH: tuple[tuple[float, ...], tuple[int, ...]] = ((67.92, 78.56
 ANALYTIC = "analytic libration (IAU WGCCRE 2009, 150 m)"
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class MoonOrientation:
     """Orientation of the Moon; `segment=None` is the analytic libration alone."""
 
