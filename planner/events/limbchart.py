@@ -84,11 +84,11 @@ def _view(circumstances: Circumstances, observer: Observer | None, group: list[I
 
     _, ends, _ = path_at(np.array([middle - 2.0, middle + 2.0]))
     rate = abs(float(ends[1] - ends[0])) / 4.0
-    half = np.clip(_SHOWN_KM / max(rate, 1e-9), _LEAST_HALF_S, _MOST_HALF_S) + (last - first) / 2.0
+    half = np.clip(_SHOWN_KM / max(rate, 1e-9), _LEAST_HALF_S, _MOST_HALF_S) + (last - first)
     times = middle + np.linspace(-half, half, 401)
     _, height, _ = path_at(times)
     at_contact = np.interp([first, last], times, height)
-    near = np.flatnonzero(height < max(_SHOWN_KM, *at_contact) + 2.0)
+    near = np.flatnonzero(height < max(_SHOWN_KM, *(2.0 * at_contact)) + 2.0)
     times = np.linspace(times[near[0]], times[near[-1]], 401)
     angle, height, geometry = path_at(times)
     moon = places.direction("moon", observer, np.array([middle]))
