@@ -158,7 +158,7 @@ def _future(
 
 
 def _historic_delta_t(year: np.ndarray) -> np.ndarray:
-    text = files("planner.sky").joinpath("data/delta_t_s15.csv").read_text(encoding="utf-8")
+    text = files("planner.sky").joinpath("delta_t_s15.csv").read_text(encoding="utf-8")
     rows = np.array([line.split(",") for line in text.splitlines() if line[0].isdigit()], float)
     start, end, a0, a1, a2, a3 = rows[np.searchsorted(rows[:, 0], year, side="right") - 1].T
     u = (year - start) / (end - start)
