@@ -18,17 +18,18 @@ from imaging.compose.patch import lay_patch, patch_box
 from imaging.compose.picture import Drawn, Picture
 from imaging.compose.plane import sky_to_plane
 from imaging.compose.stack import new_stack
+from imaging.compose.sun_surface import sun_view
 from planner.errors import FrameSetAside, InputError
 
 DISC_MARGIN, WIDEST_MARGIN = (
     1.12,
     1.45,
 )  # radii shown about the disc: at least, and at most where the target stands off it
-# Surface drift allowed in the ground, in canvas pixels. The Sun turns 13.2 degrees a day as seen (9.2 arcsec an hour in
-# the middle of the disc); the Moon's topocentric libration reaches about as much. Common practice, no source.
+# Surface drift allowed in the Moon's ground, in canvas pixels: its topocentric libration reaches half a degree an hour
+# (8 arcsec in the middle of the disc), by the observer's own motion of 1500 km an hour at 380 000 km.
 DRIFT_PX = 0.7
 GROUND_TURNS = 24
-DRIFT_ARCSEC_S = {"sun": 9.2 / 3600.0, "moon": 8.0 / 3600.0}
+DRIFT_ARCSEC_S = 8.0 / 3600.0
 
 
 def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
@@ -45,6 +46,9 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
     margin = max(DISC_MARGIN, float(seen.max()) + 0.04) if seen.size else DISC_MARGIN
     canvas = _disc_canvas(material, choices, frames, semidiameter * margin, anchor, middle)
     shown = _instants(material, frames, sharpness, choices, away < margin - 0.01)
+    sun = None
+    if body == "sun":
+        sun = sun_view(semidiameter, float(disc.pole_pa_deg[0]), *anchor, middle)
     base = _ground_frames(material, frames, sharpness, canvas, body)
     planes = (3,) if light.colour else ()
     stack = new_stack(choices.blend, (canvas.height_px, canvas.width_px, *planes), len(base), choices.scratch)
@@ -53,7 +57,9 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
     for done, index in enumerate(base):
         frame = frames[index]
         choices.tick(len(frames) + done, len(frames) + total)
-        stack.add(light.on_canvas(light.read(frame), frame, canvas, disc_anchor(frame), levels[index]))
+        surface = None if sun is None else sun.turned(frame.tt_s - middle)
+        pixels = light.read(frame)
+        stack.add(light.on_canvas(pixels, frame, canvas, disc_anchor(frame), levels[index], surface=surface))
         used.append((frame, "ground"))
     image, count = stack.result()
     if not np.isfinite(image).any():
@@ -81,6 +87,11 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
         notes=(
             f"the {body.capitalize()} is a {choices.blend} blend of {len(base)} frames",
             "the target is laid in at its own place from one frame an instant, with a soft edge",
+            *(
+                ["the Sun's rotation was undone: spots are where they were at the reference instant"]
+                if sun
+                else []
+            ),
         ),
         left_out=tuple(left_out),
     )
@@ -172,15 +183,17 @@ def _instants(
 def _ground_frames(
     material: Material, frames: list[Registered], sharpness: np.ndarray, canvas: Canvas, body: str
 ) -> list[int]:
-    """Return the frames of the ground: near enough in time that the surface has not drifted, the sharpest of each turn.
+    """Return the frames of the ground: near enough in time that the surface stands still, the sharpest of each turn.
 
     The stretch of time is cut into turns and each gives its sharpest frame: seeing is rejected, and the target, which
     moves by several of its diameters, is somewhere else in each.
     """
     tt_s = np.array([frame.tt_s for frame in frames])
     known = np.nan_to_num(sharpness, nan=-np.inf)
-    length_s = 2 * DRIFT_PX * canvas.scale_arcsec_px / DRIFT_ARCSEC_S[body]
-    length_s = max(length_s, _time_to_clear_s(material, frames))
+    length_s = 2 * DRIFT_PX * canvas.scale_arcsec_px / DRIFT_ARCSEC_S
+    # the Sun's surface is turned back, so that all frames serve
+    length_s = float("inf") if body == "sun" else max(length_s, _time_to_clear_s(material, frames))
+    length_s = min(length_s, tt_s[-1] - tt_s[0] + 1.0)
     turn_s = length_s / GROUND_TURNS
     last = np.searchsorted(tt_s, tt_s + length_s, side="right")
     turns = [np.unique(((tt_s[i:end] - tt_s[i]) // turn_s).astype(int)).size for i, end in enumerate(last)]

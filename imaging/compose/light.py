@@ -10,6 +10,7 @@ import numpy as np
 from imaging.compose.canvas import Canvas
 from imaging.compose.material import Registered
 from imaging.compose.plane import plane_to_sky
+from imaging.compose.sun_surface import Surface
 from imaging.compose.warp import PixelMap, warp
 from imaging.frames.frame import Frame
 from planner.errors import FrameSetAside
@@ -48,15 +49,20 @@ class Light:
         anchor_deg: tuple[float, float],
         level: Level,
         good: np.ndarray | None = None,
+        surface: Surface | None = None,
     ) -> np.ndarray:
         """Return the frame's light on a canvas anchored at (ra_deg, dec_deg): float32, NaN where it does not reach.
 
         Each colour of a mosaic is warped from its own pixels, at the place where these lie, so that no colour is
-        shifted. Values are in units of the level, for the area of a canvas pixel.
+        shifted. `surface` moves places on the canvas to where they were at the frame's time. Values are in units of
+        the level, for the area of a canvas pixel.
         """
 
         def to_frame(x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-            return registered.pointing.sky_to_pixel(*plane_to_sky(*anchor_deg, *canvas.to_plane(x_px, y_px)))
+            east, north = canvas.to_plane(x_px, y_px)
+            if surface is not None:
+                east, north = surface(east, north)
+            return registered.pointing.sky_to_pixel(*plane_to_sky(*anchor_deg, east, north))
 
         if frame.colour is None:
             return self._warp(frame.data - level.dark, canvas, to_frame, good) / level.unit
