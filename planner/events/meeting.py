@@ -10,13 +10,12 @@ import numpy as np
 
 from planner.errors import InputError
 from planner.events import cautions
-from planner.events.apparent import coordinate_rad
 from planner.events.budget import EPHEMERIS_SIGMA_KM, angle_term, moments, site_terms
 from planner.events.contacts import RAD_ARCSEC, Passing, body_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
 from planner.events.moon_planet import planet_shape
-from planner.events.roots import changes_of_sign, minima_near, roots_between, samples
+from planner.events.roots import changes_of_sign, minima_near, samples
 from planner.events.visibility import darkness_needed_deg, sun_altitude_deg, view
 from planner.sky import bodies, discs, places, timescale
 from planner.sky.observer import Observer
@@ -220,21 +219,26 @@ class PlanetsMeet:
         """Return conjunctions in right ascension and in longitude within 20 days of the closest approach."""
         one, two = event.spec.body, str(event.spec.other_body)
         first, last = timescale.SPAN
-        grid = samples(
-            max(first, event.middle_tt_s - 20 * DAY_S), min(last, event.middle_tt_s + 20 * DAY_S), DAY_S
-        )
-        found = []
-        for axis in ("ra", "longitude"):
-
-            def difference(tt_s: np.ndarray, which: np.ndarray | None = None, axis: str = axis) -> np.ndarray:
-                apart = coordinate_rad(one, tt_s, axis) - coordinate_rad(two, tt_s, axis)
-                return (apart + np.pi) % (2 * np.pi) - np.pi
-
-            roots = roots_between(difference, *changes_of_sign(grid, difference(grid)))
+        middle = event.middle_tt_s
+        grid = samples(max(first, middle - 20 * DAY_S), min(last, middle + 20 * DAY_S), DAY_S)
+        axes, guess = [], []
+        for axis, apart in enumerate(_apart_rad(one, two, grid)):
+            low, high = changes_of_sign(grid, apart)
+            # half a turn apart is a change of sign too, but no conjunction
+            roots = low - np.interp(low, grid, apart) * (high - low) / (
+                np.interp(high, grid, apart) - np.interp(low, grid, apart)
+            )
+            roots = roots[np.abs(np.interp(low, grid, apart)) < 1.0]
             if len(roots):
-                nearest = roots[np.argmin(np.abs(roots - event.middle_tt_s))]
-                found.append((f"conjunction_{axis}", float(nearest)))
-        return found
+                axes.append(axis)
+                guess.append(roots[np.argmin(np.abs(roots - middle))])
+        t, which = np.array(guess), np.array(axes, dtype=int)
+        for _ in range(4 if len(t) else 0):
+            ends = np.clip(np.concatenate([t - 600.0, t + 600.0]), first, last)
+            apart = np.array(_apart_rad(one, two, ends)).reshape(2, 2, -1)[which, :, np.arange(len(t))]
+            t = np.clip(t - apart.mean(axis=1) / (apart[:, 1] - apart[:, 0]) * 1200.0, first, last)
+        names = ("conjunction_ra", "conjunction_longitude")
+        return [(names[axis], float(moment)) for axis, moment in zip(axes, t, strict=True)]
 
     @staticmethod
     def _best_view(near: str, far: str, observer: Observer | None, closest: float) -> float | None:
@@ -281,6 +285,14 @@ class PlanetsMeet:
             tuple(text.format(elongation_deg) for text in cautions.SUN_NEAR) if elongation_deg < 30 else ()
         )
         return near_sun + cautions.NIGHT
+
+
+def _apart_rad(one: str, two: str, tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return how far one planet is ahead of another in apparent right ascension and longitude of date, -pi to pi."""
+    seen = [places.apparent(body, None, tt_s).vector_km for body in (one, two)]
+    ra = [np.radians(places.of_date(vector, tt_s)[0]) for vector in seen]
+    longitude = [np.radians(places.ecliptic_lonlat(vector, tt_s)[0]) for vector in seen]
+    return tuple((a - b + np.pi) % (2 * np.pi) - np.pi for a, b in (ra, longitude))  # type: ignore[return-value]
 
 
 def _blocks(start_tt_s: float, end_tt_s: float) -> list[tuple[float, float]]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 
@@ -94,7 +95,7 @@ class MoonOccultsPlanet:
         maker = InstantMaker(observer, times, sight.far_km, sight.near_km, magnitude=planet.magnitude)
         state = moon_state(observer, times, places.position_angle_deg(sight.near_km, sight.far_km))
         separation = sight.separation_rad * RAD_ARCSEC
-        extra = {"separation_arcsec": separation, **limb_words(state)}
+        extra: dict[str, Any] = {"separation_arcsec": separation, **limb_words(state)}
         if body == "saturn":
             rings = self._ring_contacts(passing, closest, radii, event.middle_tt_s)
             extra["rings_later_s"] = _later(names, times, rings)

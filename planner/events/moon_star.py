@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
@@ -104,7 +105,8 @@ class MoonOccultsStar:
         margin = float(near[0]) * RAD_ARCSEC - least
         relief = LIMB_RELIEF_KM / float(at_closest.near_distance_km[0]) * RAD_ARCSEC
         contacts = passing.contacts(closest, _CONTACT_REACH_S, inner=False)[0]
-        smooth, series = contacts.copy(), ()
+        smooth = contacts.copy()
+        series: tuple[Series, ...] = ()
         model = event.spec.limb
         if model is None:
             graze = abs(margin) < relief
@@ -223,8 +225,9 @@ class MoonOccultsStar:
         if magnitude > _LIT_LIMB_MAGNITUDE:
             glare = state.lit & (state.illuminated_fraction > _THIN_MOON) & (at_limb > 0)
             maker.limit(glare, "lit limb")
-        extra = {"separation_arcsec": sight.separation_rad * RAD_ARCSEC, **limb_words(state)}
-        middle = int(np.argmin(extra["separation_arcsec"]))
+        separation = sight.separation_rad * RAD_ARCSEC
+        extra: dict[str, Any] = {"separation_arcsec": separation, **limb_words(state)}
+        middle = int(np.argmin(separation))
         facts = {
             "magnitude": star.magnitude,
             "moon_semidiameter_arcsec": float(state.semidiameter_arcsec[middle]),

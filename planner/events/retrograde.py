@@ -172,17 +172,21 @@ class RetrogradeTrack:
         distance = places.direction(body, None, times).distance_km
         sigma_rad = EPHEMERIS_SIGMA_KM[body] / distance
         slow = sigma_rad * 2 * np.pi / timescale.YEAR_S
-        pace = np.empty(len(times))
-        for index, name in enumerate(names):
-            at = times[index : index + 1]
-            if name.startswith("station"):
-                axis = "ra" if "ra" in name else "longitude"
-                step = 0.5 * DAY_S
-                change = motion(body, at + step, axis) - motion(body, at - step, axis)
-                pace[index] = slow[index] / abs(change[0] / (2 * step))
-            else:
-                rate = motion(body, at, "longitude") - motion("sun", at, "longitude")
-                pace[index] = sigma_rad[index] / abs(rate[0])
+        step = 0.5 * DAY_S
+        ends = np.concatenate([times - step, times + step])
+        bend = {
+            axis: np.abs(np.diff(motion(body, ends, axis).reshape(2, -1), axis=0)[0]) / (2 * step)
+            for axis in ("ra", "longitude")
+        }
+        rate = np.abs(motion(body, times, "longitude") - motion("sun", times, "longitude"))
+        pace = np.array(
+            [
+                slow[i] / bend["ra" if "ra" in name else "longitude"][i]
+                if name.startswith("station")
+                else sigma_rad[i] / rate[i]
+                for i, name in enumerate(names)
+            ]
+        )
         label = np.array([timescale.utc_kind(t).startswith("UT1") for t in times], dtype=float)
         return [("ephemeris", pace), ("earth rotation", timescale.ut1_sigma_s(times) * label)]
 
@@ -231,7 +235,7 @@ def path_facts(body: str, by_ra: np.ndarray, by_longitude: np.ndarray) -> dict:
     one, two = by_longitude
     arc = two - one
     times = np.clip(
-        np.linspace(one - _MARGIN_OF_SHAPE * arc, two + _MARGIN_OF_SHAPE * arc, 801), *timescale.SPAN
+        np.linspace(one - _MARGIN_OF_SHAPE * arc, two + _MARGIN_OF_SHAPE * arc, 321), *timescale.SPAN
     )
     # without aberration, whose yearly ellipse is no part of the path among the stars
     seen = places.direction(body, None, times).vector_km
