@@ -301,7 +301,7 @@ def _with_fit(
         rotation_sigma_deg=camera.up_pa_sigma_deg,
         scale_arcsec_px=camera.scale_arcsec_px,
         scale_sigma_arcsec_px=camera.scale_sigma_arcsec_px,
-        contacts=time_contacts(reading, promise, plan),
+        contacts=time_contacts(reading, promise, plan, camera.scale_arcsec_px),
         findings=result.findings + clock.findings + camera.findings,
     )
 

@@ -34,12 +34,12 @@ CONTACTS = {
 
 
 def time_contacts(
-    reading: Reading, promise: Promise, plan: Plan, limb_sigma_px: float = LIMB_SIGMA_PX
+    reading: Reading, promise: Promise, plan: Plan, scale_arcsec_px: float
 ) -> tuple[ContactTiming, ...]:
     """Return the contacts that the frames reach, in time order; none on a path among stars.
 
     Sigmas hold the measured scatter, and what the fitted limb's radius may be off by in all frames alike
-    (`limb_sigma_px`), which moves contacts on one side later and on the other earlier.
+    (LIMB_SIGMA_PX at the frames' own scale), which moves contacts on one side later and on the other earlier.
     """
     sightings, used = reading.sightings, reading.fit.used
     if not sightings.on_disc or used.sum() < LEAST_FRAMES:
@@ -53,7 +53,7 @@ def time_contacts(
     if not instants:
         return ()
     s = sightings.part(used)
-    chord = _Chord(s, promise, reading, limb_sigma_px * promise.rig.scale_arcsec_px)
+    chord = _Chord(s, promise, reading, LIMB_SIGMA_PX * scale_arcsec_px)
     timings = []
     span = max(i.tt_s for i in instants) - min(i.tt_s for i in instants)
     for instant in instants:

@@ -59,6 +59,12 @@ def column(result: CheckResult, name: str) -> np.ndarray:
     return np.array([getattr(row, name) for row in result.rows])
 
 
+def disc_radius_arcsec(result: CheckResult) -> float:
+    """Return the radius of the reference disc, the median of the frames; NaN when none has it."""
+    radius = column(result, "reference_radius_px") * column(result, "scale_arcsec_px")
+    return float(np.median(radius[np.isfinite(radius)])) if np.isfinite(radius).any() else float("nan")
+
+
 def residual_figure(result: CheckResult):  # type: ignore[no-untyped-def]
     """Return the figure of observed minus computed, along and across the motion, against stamped time.
 
@@ -138,7 +144,7 @@ def path_figure(result: CheckResult):  # type: ignore[no-untyped-def]
     if on_disc:
         from matplotlib.patches import Circle
 
-        radius = np.nanmedian(column(result, "reference_radius_px") * column(result, "scale_arcsec_px"))
+        radius = disc_radius_arcsec(result)
         if np.isfinite(radius):
             axis.add_patch(Circle((0, 0), radius, fill=False, color=PALE, lw=1.5))
             axis.set_xlim(-1.15 * radius, 1.15 * radius)

@@ -124,6 +124,8 @@ def diagnose(sightings: Sightings, question: Question) -> Diagnosis:
             )
             claimed = False
     believed = best if claimed or plain is None else plain
+    if len(sightings) >= 2:
+        believed = _settled(believed, question)
     limit = explained_limit_arcsec(sightings, question)
     explained = bool(believed.fit.jitter_arcsec <= limit and believed.fit.used.mean() > 0.5)
     if not explained and not findings:
@@ -138,8 +140,6 @@ def diagnose(sightings: Sightings, question: Question) -> Diagnosis:
         )
     elif believed.name != "plain":
         findings.append(Finding(believed.name, odds(believed.log_weight - plain_weight), believed.sentence))
-    if len(sightings) >= 2:
-        believed = _settled(believed, question)
     return Diagnosis(believed, tuple(readings), tuple(findings), explained)
 
 
@@ -304,7 +304,8 @@ def _settled(reading: Reading, question: Question) -> Reading:
     if reading.name == "wrong-body":
         return reading
     try:
-        fit = fit_track(reading.sightings, reading.path, free, reading.clock_s)
+        fit = fit_track(reading.sightings, reading.path, free, reading.clock_offset_s)
     except (NoSolutionError, np.linalg.LinAlgError):
         return reading
-    return replace(reading, fit=fit)
+    moved = fit.value["clock_s"] + reading.fit.value["clock_s"]
+    return replace(reading, fit=replace(fit, value={**fit.value, "clock_s": moved}))

@@ -21,7 +21,6 @@ from imaging.track.sightings import Sightings
 from planner.errors import NoSolutionError
 
 PARAMETERS = ("clock_s", "drift", "rotation_deg", "log_scale", "east_arcsec", "north_arcsec")
-VELOCITY_STEP_S = 1.0
 REJECT_SIGMA = 5.0
 
 
@@ -86,17 +85,30 @@ def turn(places: np.ndarray, angle_rad: float) -> np.ndarray:
 
 def motion(sightings: Sightings, path: PredictedPath, tt_s: np.ndarray) -> np.ndarray:
     """Return the predicted velocity in arcseconds a second, shape (n, 2)."""
-    step = VELOCITY_STEP_S
-    return (sightings.expected(path, tt_s + step) - sightings.expected(path, tt_s - step)) / (2 * step)
+    return sightings.expected_and_motion(path, tt_s)[1]
 
 
 def start_rotation_deg(sightings: Sightings, predicted: np.ndarray) -> float:
-    """Return the rotation that best lays measured on predicted places about the disc's centre (Procrustes)."""
+    """Return the rotation about the disc's centre that lays most measured places near the predicted ones.
+
+    Of the rotations that single frames ask for, the one that most frames ask for (a mode, not a mean), so that almost
+    half of the frames may be wrong.
+    """
     measured = sightings.east_arcsec + 1j * sightings.north_arcsec
     wanted = predicted[:, 0] + 1j * predicted[:, 1]
-    good = np.isfinite(wanted)
+    good = np.flatnonzero(np.isfinite(wanted) & (np.abs(wanted) > 0) & (np.abs(measured) > 0))
+    good = (
+        good[np.unique(np.linspace(0, len(good) - 1, min(len(good), 200)).astype(int))] if len(good) else good
+    )
+    if not len(good):
+        return 0.0
     # position angles run from north through east: clockwise in the plane of (east, north)
-    return float(-np.degrees(np.angle(np.sum(wanted[good] * np.conj(measured[good])))))
+    asked = np.angle(measured[good] * np.conj(wanted[good]))
+    apart = (asked[:, None] - asked[None, :] + np.pi) % (2 * np.pi) - np.pi
+    width = max(float(np.median(np.abs(apart))), np.radians(0.05))
+    near = np.exp(-0.5 * (apart / (0.5 * width)) ** 2)
+    best = int(np.argmax(near.sum(axis=1)))
+    return float(np.degrees(asked[best] - np.average(apart[best], weights=near[best])))
 
 
 def fit_track(
@@ -153,12 +165,15 @@ class _Solver:
     def _model(self, x, jacobian=True):
         clock, drift, rotation, log_scale = x[:4]
         t = self.t0 - clock - drift * self.lever_s
-        place = self.s.expected(self.path, t)
+        if jacobian:
+            place, speed = self.s.expected_and_motion(self.path, t)
+        else:
+            place = self.s.expected(self.path, t)
         seen = turn(place, -rotation) * np.exp(-log_scale)
         value = seen + x[4:6] + np.einsum("k,kni->ni", x[6:], self.shifts)
         if not jacobian:
             return value
-        velocity = turn(motion(self.s, self.path, t), -rotation) * np.exp(-log_scale)
+        velocity = turn(speed, -rotation) * np.exp(-log_scale)
         n = len(self.s)
         j = np.zeros((n, 2, len(x)))
         j[:, :, 0] = -velocity
@@ -234,18 +249,16 @@ class _Solver:
         return np.sqrt(np.where(np.isfinite(distance2), distance2, np.inf))
 
     def _robust_start(self, x, finite):
-        """Two unweighted rounds, then Cauchy weights whose width follows the median distance."""
+        """Cauchy weights whose width follows the median distance, so that a far start silences nothing."""
         even = np.tile(np.eye(2), (len(self.s), 1, 1))
-        typical = np.median(np.einsum("nii->n", self.s.covariance_arcsec2)[finite]) / 2.0
-        x = self._converge(x, even / typical, finite, limit=4)
-        for _ in range(8):
+        for _ in range(15):
             residual = np.nan_to_num(self.s.places - self._model(x, jacobian=False), nan=1e9)
             size2 = np.sum(residual**2, axis=1)
             width2 = max(
                 np.median(size2[finite]) / 1.386, 1e-12
             )  # median of chi-square with 2 degrees of freedom
-            weight = 1.0 / (1.0 + size2 / (2.0 * width2 * 4.0)) / width2
-            x = self._converge(x, even * weight[:, None, None], finite, limit=3)
+            weight = 1.0 / (1.0 + size2 / (2.0 * width2)) / width2
+            x = self._converge(x, even * weight[:, None, None], finite, limit=1)
         residual = np.nan_to_num(self.s.places - self._model(x, jacobian=False), nan=1e9)
         size2 = np.sum(residual**2, axis=1)
         width2 = np.median(size2[finite]) / 1.386

@@ -4,7 +4,16 @@ from __future__ import annotations
 
 import numpy as np
 
-from imaging.track.figures import INK, MEASURED, OFF, PALE, PAPER, clock_shift_arcsec, column
+from imaging.track.figures import (
+    INK,
+    MEASURED,
+    OFF,
+    PALE,
+    PAPER,
+    clock_shift_arcsec,
+    column,
+    disc_radius_arcsec,
+)
 from imaging.track.result import CheckResult
 
 _TT_TO_UNIX_MS = 1000.0
@@ -154,8 +163,9 @@ def _path(result: CheckResult, source):  # type: ignore[no-untyped-def]
     options = {"match_aspect": True} if on_disc else {}
     plot = _styled(height=460, min_border_left=64, **options)
     if on_disc:
-        radius = np.nanmedian(column(result, "reference_radius_px") * column(result, "scale_arcsec_px"))
-        plot.circle([0], [0], radius=float(radius), fill_color=None, line_color=PALE, line_width=2)
+        plot.circle(
+            [0], [0], radius=disc_radius_arcsec(result), fill_color=None, line_color=PALE, line_width=2
+        )
         body = result.reference.capitalize()
         plot.xaxis.axis_label = f"east of the {body}'s centre (arcsec); north up, east left"
         plot.yaxis.axis_label = f"north of the {body}'s centre (arcsec)"

@@ -96,11 +96,12 @@ class Measurer:
             predicted_px=tuple((center + offset).tolist()),
         )
         radius = float(expected.target_semidiameter_arcsec[0]) / nominal.scale_arcsec_px
+        hidden = _hidden(geometry, expected)
         self._stray_rate = float("nan")
         try:
-            place = self._found(frame, limb, center + offset, radius, geometry)
+            place = self._found(frame, limb, center + offset, radius, geometry, stray=hidden is None)
         except NoSolutionError as none:
-            return replace(blank, reason=_hidden(geometry, expected) or str(none))
+            return replace(blank, reason=hidden or str(none))
         self._shift_px = np.array([place.x_px, place.y_px]) - center - offset
         return replace(
             blank,
@@ -142,15 +143,21 @@ class Measurer:
         return fit_limb(frame.data, radius, **options)
 
     def _found(
-        self, frame: Frame, limb: LimbFit, predicted: np.ndarray, radius_px: float, geometry: Geometry
+        self,
+        frame: Frame,
+        limb: LimbFit,
+        predicted: np.ndarray,
+        radius_px: float,
+        geometry: Geometry,
+        stray: bool,
     ) -> DiscPlace:
-        """Look for the target near its prediction, near where the last frame had it, farther off, and anywhere."""
+        """Look for the target near its prediction, near where the last frame had it, and if `stray` anywhere."""
         near = max(NEAR_ARCSEC / self.promise.rig.scale_arcsec_px / frame.binning, 3 * radius_px, 8.0)
         center = np.array([limb.x_px, limb.y_px])
         tries = [(predicted, near)]
         if np.hypot(*self._shift_px) > near / 2:
             tries.insert(0, (predicted + self._shift_px, near))
-        if geometry.reference == "sun":
+        if geometry.reference == "sun" and stray:
             tries += [(predicted, 0.2 * limb.radius_px), (center, 1.02 * limb.radius_px)]
         reason = NoSolutionError("nothing was looked for")
         for place, search in tries:
@@ -158,7 +165,7 @@ class Measurer:
                 return self._sure(frame, limb, place, search, radius_px, geometry)
             except NoSolutionError as none:
                 reason = none
-        if geometry.reference == "moon":
+        if geometry.reference == "moon" and stray:
             point = _point_off_disc(frame, limb)
             if point is not None:
                 self._stray_rate = point[1] / max(frame.exposure_s or 1.0, 1e-6)
@@ -372,10 +379,11 @@ def _hidden(geometry: Geometry, expected: Expected) -> str | None:
         float(expected.target_semidiameter_arcsec[0]),
     )
     name = geometry.target.capitalize()
-    if geometry.reference == "sun" and apart > disc + 0.2 * target:
-        return f"{name} {AS_PREDICTED} off the Sun's disc"
-    if geometry.reference == "moon" and apart < disc + 0.8 * target:
-        return f"{name} {AS_PREDICTED} behind the Moon"
+    if geometry.reference == "sun" and apart > disc - NEAR_ARCSEC:
+        where = "off the Sun's disc" if apart > disc + target else "at the Sun's limb"
+        return f"{name} {AS_PREDICTED} {where}"
+    if geometry.reference == "moon" and apart < disc + target + NEAR_ARCSEC:
+        return f"{name} {AS_PREDICTED} {'behind the Moon' if apart < disc else 'at the limb of the Moon'}"
     return None
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import re
 from collections.abc import Mapping
 from html import escape
 from pathlib import Path
@@ -37,6 +38,7 @@ def page(result: CheckResult, cutouts: Mapping[int, Cutout]) -> str:
     }
     return f"""<!doctype html>
 <html lang="en"><head><meta charset="utf-8">
+<meta http-equiv="Content-Security-Policy" content="{_POLICY}">
 <meta name="viewport" content="width=device-width, initial-scale=1">
 <title>{escape(result.title)}: checked</title>
 <style>{_STYLE}</style>
@@ -44,7 +46,7 @@ def page(result: CheckResult, cutouts: Mapping[int, Cutout]) -> str:
 </head><body>
 <header>
 <p class="title">{escape(result.title)} <button id="red" type="button" aria-pressed="false">red light</button></p>
-<p class="verdict">{escape(result.verdict)}</p>
+<p class="verdict">{prose(result.verdict)}</p>
 {_findings(result)}
 {_numbers(result)}
 </header>
@@ -62,11 +64,17 @@ def page(result: CheckResult, cutouts: Mapping[int, Cutout]) -> str:
 """
 
 
+def prose(text: str) -> str:
+    """Return a sentence for the page: numbers stay with their errors and units, `options` are set as code."""
+    kept = re.sub(r" ± ([\d.]+) ", "\u00a0±\u00a0\\1\u00a0", text)
+    return re.sub(r"`([^`]+)`", r"<code>\1</code>", escape(kept))
+
+
 def _findings(result: CheckResult) -> str:
     if not result.findings:
         return '<p class="quiet">Nothing else was found amiss.</p>' if result.measured else ""
     items = "".join(
-        f"<li><b>{escape(finding.name)}</b> {escape(finding.sentence)}{_odds(finding.odds)}</li>"
+        f"<li><b>{escape(finding.name)}</b> {prose(finding.sentence)}{_odds(finding.odds)}</li>"
         for finding in result.findings
     )
     return f'<ul class="findings">{items}</ul><p class="quiet">Findings are told, never applied.</p>'
@@ -178,6 +186,11 @@ def _provenance(result: CheckResult) -> str:
     return f"<section><details><summary><h2>Made with</h2></summary><ul>{items}</ul></details></section>"
 
 
+# the page fetches nothing, whatever a library in it may try
+_POLICY = (
+    "default-src 'none'; img-src data: blob:; style-src 'unsafe-inline'; font-src data:; "
+    "script-src 'unsafe-inline' 'unsafe-eval'"
+)
 _STYLE = """
 :root{color-scheme:dark}
 body{margin:0 auto;max-width:60rem;padding:1rem;background:#14110f;color:#f2e6d8;
@@ -200,6 +213,7 @@ td,th{padding:.2rem .6rem;text-align:left;border-bottom:1px solid #3a332d;white-
 td:last-child{white-space:normal;min-width:22rem}
 tr.off-track td{font-weight:600}tr.off-track td:first-child::before{content:"✕ "}
 tr.unmeasured td{color:#b3a79a}
+code{background:#3a332d;padding:0 .25rem}
 summary{cursor:pointer}
 #cutout{margin:.6rem 0;display:flex;gap:1rem;flex-wrap:wrap;align-items:flex-start}
 #cutout[hidden]{display:none}

@@ -8,6 +8,8 @@ import numpy as np
 
 from imaging.track.path import PredictedPath, tangent_offsets, unit_vectors
 
+VELOCITY_STEP_S = 1.0
+
 
 @dataclass(frozen=True)
 class Sightings:
@@ -47,12 +49,23 @@ class Sightings:
         return len(self.tt_s)
 
     def expected(self, path: PredictedPath, tt_s: np.ndarray) -> np.ndarray:
-        """Return the predicted (east, north) in arcseconds at instants aligned with the frames, shape (n, 2)."""
+        """Return the predicted (east, north) in arcseconds at instants aligned with the frames, shape (n, 2).
+
+        Instants may also be (k n,), k times the frames in turn.
+        """
         expected = path.at(tt_s)
         if self.on_disc:
             return np.column_stack([expected.east_arcsec, expected.north_arcsec])
-        direction = unit_vectors(expected.ra_deg, expected.dec_deg)
-        return np.column_stack(tangent_offsets(self.anchor_ra_deg, self.anchor_dec_deg, direction))
+        turns = len(expected.tt_s) // len(self)
+        anchors = np.tile(self.anchor_ra_deg, turns), np.tile(self.anchor_dec_deg, turns)
+        return np.column_stack(tangent_offsets(*anchors, unit_vectors(expected.ra_deg, expected.dec_deg)))
+
+    def expected_and_motion(self, path: PredictedPath, tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return predicted (east, north) in arcseconds and their velocity in arcseconds a second, each (n, 2)."""
+        step = VELOCITY_STEP_S
+        n = len(self)
+        places = self.expected(path, np.concatenate([tt_s, tt_s + step, tt_s - step]))
+        return places[:n], (places[n : 2 * n] - places[2 * n :]) / (2 * step)
 
     def mirrored(self) -> Sightings:
         """Return the same as the opposite parity would have it (any axis will do: rotation is fitted)."""
