@@ -50,15 +50,6 @@ def true_altitude_deg(apparent_altitude_deg: np.ndarray, observer: Observer | No
     return np.where((seen >= seen_deg[0]) & (seen <= seen_deg[-1]), np.interp(seen, seen_deg, true_deg), seen)
 
 
-def vertical_scale(true_altitude_deg: np.ndarray, observer: Observer | None) -> np.ndarray:
-    """Return by what factor refraction shrinks small vertical lengths: 1 + dR/dh, below 1."""
-    step = 1.0 / 60.0
-    altitude = np.asarray(true_altitude_deg, float)
-    upper = refraction_arcsec(altitude + step, observer)
-    lower = refraction_arcsec(altitude - step, observer)
-    return 1.0 + (upper - lower) / (2.0 * step * 3600.0)
-
-
 def disc_flattening(
     true_altitude_deg: np.ndarray, semidiameter_arcsec: np.ndarray, observer: Observer | None
 ) -> np.ndarray:

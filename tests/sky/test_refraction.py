@@ -73,9 +73,3 @@ def test_without_air_nothing_bends():
     assert refraction.refraction_arcsec(np.array([1.0, 45.0]), None) == pytest.approx(0.0)
     vacuum = Observer("", 0, 0, 0, pressure_hpa=0.0)
     assert refraction.refraction_arcsec(np.array([1.0, 45.0]), vacuum) == pytest.approx(0.0)
-
-
-def test_vertical_lengths_shrink_by_the_slope():
-    assert refraction.vertical_scale(10.0, STANDARD) == pytest.approx(
-        1 - refraction.disc_flattening(10.0, 60.0, STANDARD), abs=1e-6
-    )
