@@ -32,7 +32,7 @@ _FIELDS = (
     (14.0, 10.0, 18.0),
     (38.0, 32.0, 45.0),
 )
-_PASSES = ((40, 6), (70, 6))  # (brightest stars, neighbours)
+_PASSES = ((40, 6), (50, 8))  # (brightest stars, neighbours): clean skies, then clouds
 _SURE_VOTES = 3
 _MOST_SURE, _MOST_SCORED, _MOST_GROWN = 20, 250, 80
 
@@ -60,14 +60,14 @@ def solve_blind(
     best, trials = 0.0, 0
     for stars, neighbours in _PASSES:
         used = min(stars, len(field.x_px))
-        if used < 4 or ((stars, neighbours) != _PASSES[0] and used <= _PASSES[0][0]):
+        if used < 4:
             break
         waiting: list[tuple[float, Hypotheses, int]] = []
         for assumed_deg, least_deg, most_deg in _FIELDS:
             allowed = (half / tan(radians(most_deg)), half / tan(radians(least_deg)))
             if focal_range_px is not None:
                 allowed = (max(allowed[0], focal_range_px[0]), min(allowed[1], focal_range_px[1]))
-            if allowed[0] >= allowed[1]:
+            if allowed[0] >= allowed[1] or process_time() - began > give_up_s:
                 continue
             focal = half / tan(radians(assumed_deg or 0.5))
             vectors = unproject(field.x_px[:used] - x0, field.y_px[:used] - y0, focal)

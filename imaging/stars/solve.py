@@ -132,23 +132,36 @@ def solve_detections(
         from imaging.stars.blind import solve_blind
         from imaging.stars.index import quad_index
 
-        allowed = None
-        if hint.scale_arcsec_px is not None:
+        ranges: list[tuple[float, float] | None] = [None]
+        if hint.scale_arcsec_px is not None:  # a stated scale may be wrong: a picture that was resized
             focal, slack = ARCSEC_RAD / hint.scale_arcsec_px, 1 + hint.scale_tolerance
-            allowed = (focal / slack, focal * slack)
-        attempt = solve_blind(
-            field,
-            quad_index(tick),
-            tt_s,
-            hint.lens or unknown_lens(3),
-            parity=hint.parity,
-            focal_range_px=allowed,
-        )
-        if attempt.match is not None:
-            return _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "blind")
+            ranges.insert(0, (focal / slack, focal * slack))
+        for allowed in ranges:
+            lens = hint.lens if allowed is not None else None
+            attempt = solve_blind(
+                field,
+                quad_index(tick),
+                tt_s,
+                lens or unknown_lens(3),
+                parity=hint.parity if allowed is not None else None,
+                focal_range_px=allowed,
+            )
+            if attempt.match is not None:
+                return _solution(attempt, lens, field, shape, tt_s, row_zero, exclude, "blind")
         tried.append(f"the whole sky, best chance 1e{attempt.best_log10:.0f}")
     raise NoSolutionError(
-        f"{len(found)} stars found, no pointing defended; tried {'; '.join(tried) or 'nothing, for want of a hint'}"
+        f"{len(found)} stars found, no pointing defended; tried {'; '.join(tried) or 'nothing, for want of a hint'}; "
+        f"{_would_help(len(found), hint)}"
+    )
+
+
+def _would_help(stars: int, hint: Hint) -> str:
+    if stars < 12:
+        return "more stars would help: a longer exposure, better focus, less cloud"
+    if hint.near is None or hint.scale_arcsec_px is None:
+        return "a rough centre and scale would help (--near, --scale or --rig)"
+    return (
+        "a lens learned from better frames of the rig would help (--learn), or a field with more bright stars"
     )
 
 
