@@ -28,6 +28,8 @@ _STEP_S = 2.0 * 3600.0
 _BLOCK_S = 400.0 * DAY_S
 _CLOSEST_REACH_S = 0.3 * DAY_S
 _EVENT_REACH_S = 0.02 * DAY_S
+# Closest approaches are looked for this far beyond a span of places.
+_MARGIN_S = _CLOSEST_REACH_S + 3600.0
 # A star of the search is fainter than this only when the user names it.
 DEFAULT_MAGNITUDE = 9.0
 _LEAST_CHANCE = 0.05
@@ -255,6 +257,10 @@ class AsteroidOccultsStar:
         """Return the passings whose shadow touches the Earth, found on straight steps of two hours and refined."""
         from scipy.spatial import cKDTree
 
+        known_from, known_to = occulter.span_tt_s
+        low_tt_s, high_tt_s = max(low_tt_s, known_from + _MARGIN_S), min(high_tt_s, known_to - _MARGIN_S)
+        if high_tt_s <= low_tt_s:
+            return []
         count = max(2, int(np.ceil((high_tt_s - low_tt_s) / _STEP_S)))
         times = np.linspace(low_tt_s, high_tt_s, count + 1)
         track = occulter.track(None, times)

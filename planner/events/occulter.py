@@ -25,8 +25,9 @@ _ASSUMED_SIGMA_ARCSEC = 0.1
 class Occulter:
     """What covers the star: how it moves, how large it is, and how well its place is known.
 
-    `variants`: places of the same body with one element off by its 1-sigma each. `sigma_arcsec`: stated (along,
-    across), NaN where it follows from the variants. `h`, `slope`: of its brightness, None for planets.
+    `span_tt_s`: when its places are known. `variants`: places of the same body with one element off by its 1-sigma
+    each. `sigma_arcsec`: stated (along, across), NaN where it follows from the variants. `h`, `slope`: of its
+    brightness, None for planets.
     """
 
     body: str
@@ -39,6 +40,7 @@ class Occulter:
     h: float | None = None
     slope: float = 0.15
     source: str = "DE440"
+    span_tt_s: tuple[float, float] = timescale.SPAN
     notes: tuple[str, ...] = ()
 
     @property
@@ -100,7 +102,7 @@ def occulter_of(spec: EventSpec) -> Occulter:
     elif orbit.element_sigma is None:
         sigma_arcsec = (_ASSUMED_SIGMA_ARCSEC, _ASSUMED_SIGMA_ARCSEC)
         notes.append(f"no uncertainty of the orbit is stated: {_ASSUMED_SIGMA_ARCSEC} arcsec assumed")
-    state, variants = _states(orbit)
+    state, variants, span = _states(orbit)
     assert orbit.diameter_km is not None
     radius = orbit.diameter_km / 2.0
     sigma_radius = (orbit.diameter_sigma_km or 0.1 * orbit.diameter_km) / 2.0
@@ -115,21 +117,26 @@ def occulter_of(spec: EventSpec) -> Occulter:
         orbit.absolute_magnitude,
         orbit.slope,
         orbit.source or "elements as given",
+        span,
         tuple(notes),
     )
 
 
-def _states(orbit: Orbit) -> tuple[StateOf, tuple[StateOf, ...]]:
+def _states(orbit: Orbit) -> tuple[StateOf, tuple[StateOf, ...], tuple[float, float]]:
     if orbit.spk is not None:
         from planner.sky.smallbody import small_body
 
-        return small_body(orbit.spk, orbit.spk_target).state, ()
+        body = small_body(orbit.spk, orbit.spk_target)
+        first, last = body.span_tdb_s
+        # an hour inside the file's ends: light-time reaches back
+        return body.state, (), (max(first + 3600.0, timescale.SPAN[0]), min(last - 3600.0, timescale.SPAN[1]))
     course = trajectory(orbit)
     count = 0 if orbit.element_sigma is None else len(orbit.element_sigma)
-    return course.state, tuple(
+    variants = tuple(
         lambda tdb_s, which=k + 1: course.state(tdb_s, which)  # type: ignore[misc]
         for k in range(count)
     )
+    return course.state, variants, timescale.SPAN
 
 
 def orbit_of(given: Any) -> Orbit:

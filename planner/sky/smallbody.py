@@ -80,6 +80,11 @@ class SmallBody:
     target: int
     runs: tuple[tuple[float, float, str | None, DifferenceArrays | ChebyshevSegment], ...]
 
+    @property
+    def span_tdb_s(self) -> tuple[float, float]:
+        """First and last TDB second of the file's body."""
+        return min(run[0] for run in self.runs), max(run[1] for run in self.runs)
+
     def state(self, tdb_s: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return barycentric position (3, n) in km and velocity (3, n) in km/s, ICRF axes.
 
@@ -101,7 +106,7 @@ class SmallBody:
                 r, v = r + middle, v + drift
             position[:, mine], velocity[:, mine] = r, v
         if np.isnan(position).any():
-            low, high = min(run[0] for run in self.runs), max(run[1] for run in self.runs)
+            low, high = self.span_tdb_s
             raise InputError(
                 f"{self.path}: found no place of body {self.target} at {_year(tdb_s.min())} to {_year(tdb_s.max())}; "
                 f"allowed is {_year(low)} to {_year(high)}"

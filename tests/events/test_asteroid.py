@@ -316,3 +316,53 @@ def test_two_sites_see_the_body_displaced_by_their_baseline(event, brief):
         np.abs([middle.along_arcsec, middle.across_arcsec]) / 206264.8 * facts["distance_au"] * 1.495978707e8
     )
     assert seen == pytest.approx(np.abs(kilometres), abs=1.0)
+
+
+def test_an_spk_file_serves_as_an_orbit(spec, event, tmp_path):
+    # places of the example's body, written to a file of Chebyshev records for forty days
+    from numpy.polynomial.chebyshev import chebinterpolate
+
+    from planner.sequence.documents import load_orbit, orbit_of
+    from tests.sky.test_smallbody import write_spk
+
+    occulter = occulter_of(spec)
+    start, interval, count = event.middle_tt_s - 20 * 86400.0, 4 * 86400.0, 10
+    records = []
+    for k in range(count):
+        middle, half = start + (k + 0.5) * interval, interval / 2
+        parts = [
+            chebinterpolate(lambda s, a=axis, m=middle, h=half: occulter.state(m + h * s)[0][a], 12)
+            for axis in range(3)
+        ]
+        records.append(np.concatenate([[middle, half], *parts]))
+    words = np.concatenate([*records, [start, interval, len(records[0]), count]])
+    write_spk(tmp_path / "body.bsp", 2, words, start, start + count * interval, centre=0)
+    document = tmp_path / "orbit.yaml"
+    document.write_text(
+        "name: By file\nspk: body.bsp\ndiameter_km: 140\nsigma_along_arcsec: 0.04\nsigma_across_arcsec: 0.01\n"
+    )
+    by_file = dataclasses.replace(spec, orbit=orbit_of(load_orbit(document)))
+    found = FAMILY.nearest(by_file)
+    assert found.middle_tt_s == pytest.approx(event.middle_tt_s, abs=0.01)
+    assert FAMILY.predict(found).facts["sigma_across_km"] == pytest.approx(11.6, abs=0.3)
+    # beyond the file there is nothing to find, which is said
+    with pytest.raises(InputError, match=r"event\.date: found no asteroid-occults-star"):
+        FAMILY.nearest(dataclasses.replace(by_file, date_tt_s=event.middle_tt_s + 8 * 365.25 * 86400.0))
+
+
+def test_a_one_line_orbit_serves_as_an_orbit(spec, event, tmp_path):
+    from planner.sequence.documents import load_orbit, orbit_of
+
+    line = (
+        "Z0001    7.40  0.15 K28AH  73.44451   95.00000  205.03144    7.50000  0.1200000  0.22847471   2.6500000  0 "
+        "MPO000000   100  10 2000-2028 0.50 M-v 3Ek Some       0000      (0) Halcyon                20280101"
+    )
+    path = tmp_path / "orbit.txt"
+    path.write_text(line + "\n")
+    read = orbit_of(load_orbit(path))
+    # a day later than the elements' own epoch, so that the date is that of another place on the orbit
+    same = dataclasses.replace(read, epoch_jd_tdb=spec.orbit.epoch_jd_tdb)
+    found = FAMILY.nearest(dataclasses.replace(spec, orbit=same))
+    # five decimals of a degree are 0.02" heliocentric, some seconds of the event
+    assert found.middle_tt_s == pytest.approx(event.middle_tt_s, abs=10.0)
+    assert any("U = 0" in text for text in FAMILY.predict(found).cautions)
