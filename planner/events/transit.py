@@ -133,7 +133,8 @@ class SolarTransit:
         if not crosses:
             missed = least - (near[middle] + far[middle]) * RAD_ARCSEC
             reason = f"{body.capitalize()} passes the Sun's limb at {missed:.1f} arcsec"
-        elif observer is not None and not self._any_sun(observer, outer):
+        seen = self._seen(observer, outer) if crosses and observer is not None else {}
+        if seen.get("seen") == "nothing":
             happens, reason = False, "the Sun is below the horizon from first to last contact"
         sun_sd, planet_sd = float(far[middle]) * RAD_ARCSEC, float(near[middle]) * RAD_ARCSEC
         facts = {
@@ -142,6 +143,7 @@ class SolarTransit:
             "chord_arcsec": 2.0 * float(np.sqrt(max(0.0, sun_sd**2 - least**2))),
             "rate_arcsec_s": float(moments(passing, greatest, np.array([True])).rate_rad_s[0]) * RAD_ARCSEC,
             "duration_s": float(outer[1] - outer[0]) if crosses else 0.0,
+            **seen,
         }
         return Circumstances(
             event=event,
@@ -212,7 +214,15 @@ class SolarTransit:
         ]
 
     @staticmethod
-    def _any_sun(observer: Observer, outer: np.ndarray) -> bool:
-        times = np.linspace(outer[0], outer[1], 97)
-        sun = places.direction("sun", observer, times).vector_km
-        return bool(view(sun, observer, times).visible.any())
+    def _seen(observer: Observer, outer: np.ndarray) -> dict[str, object]:
+        """Return when the Sun stands above the site's horizon between first and last contact, to the minute."""
+        times = np.arange(outer[0], outer[1] + 60.0, 60.0)
+        up = view(places.direction("sun", observer, times).vector_km, observer, times).visible
+        if not up.any():
+            return {"seen": "nothing"}
+        first, last = times[np.flatnonzero(up)[[0, -1]]]
+        return {
+            "seen": "all of it" if up.all() else "part of it",
+            "seen_from": timescale.utc_iso(float(first), 0)[:16] + "Z",
+            "seen_to": timescale.utc_iso(float(min(last, outer[1])), 0)[:16] + "Z",
+        }

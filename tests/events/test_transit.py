@@ -136,6 +136,17 @@ def test_a_transit_below_the_horizon_does_not_happen_at_the_site_but_is_still_de
     assert not any(instant.visible for instant in found.instants)
 
 
+def test_a_site_where_the_sun_rises_during_the_transit_sees_part_of_it():
+    # Honolulu, 2016-05-09: sunrise about 15:55 UTC (from memory), in the middle of the transit
+    found = predicted(FAMILY, "mercury", "2016-05-09", Observer("Honolulu", 21.31, -157.86, 0.0))
+    assert found.happens
+    assert found.facts["seen"] == "part of it"
+    assert found.facts["seen_from"].startswith("2016-05-09T15:5")
+    assert found.facts["seen_to"].startswith("2016-05-09T18:43")
+    assert found.instant("contact_1").limited_by == "below horizon"
+    assert found.instant("contact_4").visible
+
+
 def test_the_horizon_line_of_the_site_hides_a_contact_that_a_flat_horizon_shows():
     open_sky = Observer("plain", 34.93, 32.87, 1420.0)
     walled = dataclasses.replace(open_sky, horizon=((0.0, 30.0), (180.0, 30.0)))
