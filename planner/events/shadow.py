@@ -13,8 +13,8 @@ from typing import Any
 import numpy as np
 
 from planner.sky import places, timescale
-from planner.sky.bodies import C_KM_S
-from planner.sky.observer import EARTH_FLATTENING, EARTH_RADIUS_KM, EARTH_RATE_RAD_S
+from planner.sky.bodies import C_KM_S, EARTH_RADIUS_KM
+from planner.sky.observer import EARTH_FLATTENING, EARTH_RATE_RAD_S
 from planner.sky.pole import celestial_to_terrestrial
 from planner.sky.stars import Star
 

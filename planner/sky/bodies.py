@@ -17,7 +17,7 @@ C_KM_S = 299792.458  # exact: SI
 ARCSEC = np.pi / 648000.0
 SUN_GM_KM3_S2 = 132712440041.279419  # DE440: Park et al. 2021, AJ 161, 105, table 2
 SUN_RADIUS_KM = 695700.0  # nominal: IAU 2015 Resolution B3
-EARTH_RADIUS_KM = 6378.137  # WGS 84
+EARTH_RADIUS_KM = 6378.137  # WGS 84: NIMA TR8350.2, third edition, table 3.1
 PLANETS = ("mercury", "venus", "mars", "jupiter", "saturn", "uranus", "neptune")
 
 # Equatorial and polar radius in km: IAU WGCCRE, Archinal et al. 2011, Celest. Mech. Dyn. Astr. 109, 101, tables 4, 5

@@ -6,10 +6,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from planner.sky.bodies import EARTH_RADIUS_KM
 from planner.sky.pole import celestial_to_terrestrial
 
 # WGS 84: NIMA TR8350.2, third edition, table 3.1
-EARTH_RADIUS_KM = 6378.137
 EARTH_FLATTENING = 1 / 298.257223563
 # Nominal mean angular velocity of the Earth: IERS Conventions (2010), table 1.2
 EARTH_RATE_RAD_S = 7.292115e-5

@@ -10,10 +10,10 @@ from functools import lru_cache
 
 import numpy as np
 
+from planner.sky.bodies import ARCSEC
 from planner.sky.rotation import DAY_S, polar_motion_arcsec
 from planner.sky.timescale import SPAN, ut1_s
 
-ARCSEC = np.pi / 648000.0
 # Columns of the table: X and Y of the pole and the CIO locator s (IAU 2006/2000A), equation of the origins,
 # true obliquity of date; all in radians.
 _COLUMNS = 5

@@ -13,7 +13,8 @@ from functools import lru_cache
 
 import numpy as np
 
-from planner.sky.observer import EARTH_RADIUS_KM, Observer
+from planner.sky.bodies import EARTH_RADIUS_KM
+from planner.sky.observer import Observer
 
 _WAVELENGTH_UM = 0.55
 _LAPSE_K_KM = 6.5
