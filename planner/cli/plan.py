@@ -169,7 +169,7 @@ def _print_plan(plan, output: Path) -> None:  # type: ignore[no-untyped-def]
     zone = ZoneInfo(plan.site.timezone)
     table = Table(title=plan.title, title_justify="left", box=None, pad_edge=False)
     for name in ("passage", "from (UTC)", plan.site.timezone, "frames", "every", "exposure"):
-        table.add_column(name, justify="left" if name == "passage" else "right")
+        table.add_column(name, justify="left" if name == "passage" else "right", no_wrap=True)
     for passage in plan.passages:
         first = min(passage.shots, key=lambda shot: shot.start_utc)
         local = first.start_utc.astimezone(zone)
@@ -181,7 +181,8 @@ def _print_plan(plan, output: Path) -> None:  # type: ignore[no-untyped-def]
             f"{first.cadence_s:g} s",
             exposure_range_text([shot.exposure_s for shot in passage.shots]),
         )
-    console.print(table)
+    # a table wider than the terminal is better broken by the terminal than cut
+    Console(highlight=False, width=max(console.width, 110)).print(table)
     console.print(f"\n{plan.frames_total} frames, {plan.storage_gb:.1f} GB with {plan.rig.name}")
     for finding in plan.findings:
         console.print(f"{finding.level} ({finding.rule}): {finding.where}: {finding.sentence} {finding.cure}")

@@ -40,7 +40,9 @@ def choose_campaign(
 
     if not done and after_tt_s is None:
         nights = usable_nights(setting)
-        chosen = spread_evenly(nights.path_arcsec, wanted_visits(setting, nights))
+        chosen = spread_evenly(
+            nights.path_arcsec, wanted_visits(setting, nights), moonlight_mag=nights.moonlight_mag
+        )
         return Campaign(nights, chosen, reserve_nights(nights, chosen, setting.wish.reserves))
     every = usable_nights(setting)
     taken = [float(tt_s_from_datetime(passage.shots[0].start_utc)) for passage in done]
@@ -48,7 +50,7 @@ def choose_campaign(
     nights = usable_nights(setting, after)
     taken_path = float(np.interp(max(taken), every.tt_s, every.path_arcsec)) if taken else None
     left = max(1, wanted_visits(setting, every) - len(done))
-    chosen = spread_evenly(nights.path_arcsec, left, taken_path)
+    chosen = spread_evenly(nights.path_arcsec, left, taken_path, nights.moonlight_mag)
     return Campaign(nights, chosen, reserve_nights(nights, chosen, setting.wish.reserves), done)
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 
@@ -10,6 +10,7 @@ from planner.errors import InputError
 from planner.events.family import Geometry
 from planner.sequence.motion import hour_angle_deg
 from planner.sequence.setting import Setting
+from planner.sequence.skyglow import dark_nl, moonlight_nl
 from planner.sky.discs import SkyDisc
 
 DAY_S = 86400.0
@@ -19,6 +20,7 @@ ARC_DEPRESSION_DEG = (
 )
 _LEAST_VISITS, _MOST_VISITS = 6, 30
 _SPACING_PX = 40.0
+_MOONLIGHT_COST = 0.25**2 / 3
 _SPACING_DIAMETERS = 3.0
 
 
@@ -32,6 +34,7 @@ class Nights:
     azimuth_deg: np.ndarray
     sun_altitude_deg: np.ndarray
     moon_deg: np.ndarray
+    moonlight_mag: np.ndarray
     path_arcsec: np.ndarray
     disc: SkyDisc
 
@@ -43,16 +46,8 @@ class Nights:
         """Return some of the nights."""
         from planner.sequence.passages import rows_of_disc
 
-        names = (
-            "tt_s",
-            "night",
-            "altitude_deg",
-            "azimuth_deg",
-            "sun_altitude_deg",
-            "moon_deg",
-            "path_arcsec",
-        )
-        return Nights(*(getattr(self, name)[rows] for name in names), rows_of_disc(self.disc, rows))
+        arrays = {f.name: getattr(self, f.name)[rows] for f in fields(self) if f.name != "disc"}
+        return Nights(**arrays, disc=rows_of_disc(self.disc, rows))
 
 
 def usable_nights(setting: Setting, after_tt_s: float | None = None) -> Nights:
@@ -60,8 +55,8 @@ def usable_nights(setting: Setting, after_tt_s: float | None = None) -> Nights:
 
     Best is highest, or the one moment of the fixed sidereal time or solar depression that the wish names.
     """
+    from planner.sky.discs import sky_disc
     from planner.sky.photometry import airmass
-    from planner.sky.places import direction, separation_arcsec, unit_vector
 
     event, wish = setting.event, setting.wish
     grid_s = np.arange(event.start_tt_s, event.end_tt_s, STEP_S)
@@ -72,8 +67,8 @@ def usable_nights(setting: Setting, after_tt_s: float | None = None) -> Nights:
         tt_s = tt_s[(tt_s > grid_s[0]) & (tt_s < grid_s[-1])]
         geometry = setting.geometry(tt_s) if len(tt_s) else geometry
     target = geometry.discs[geometry.target]
-    moon = direction("moon", setting.observer, tt_s)
-    moon_deg = separation_arcsec(moon.vector_km, unit_vector(target.ra_deg, target.dec_deg)) / 3600
+    moon = sky_disc("moon", setting.observer, tt_s)
+    moon_deg = _apart_deg(moon, target)
     high = setting.reachable(geometry) & (airmass(geometry.altitude_deg) <= wish.most_airmass)
     dark = geometry.sun_altitude_deg < wish.darkness_deg
     when = visit_rule(setting)[0]
@@ -109,9 +104,27 @@ def usable_nights(setting: Setting, after_tt_s: float | None = None) -> Nights:
         geometry.azimuth_deg,
         geometry.sun_altitude_deg,
         moon_deg,
+        _moonlight_mag(setting, geometry, moon, moon_deg),
         path,
         target,
     ).rows(best)
+
+
+def _apart_deg(a: SkyDisc, b: SkyDisc) -> np.ndarray:
+    from planner.sky.places import separation_arcsec, unit_vector
+
+    return separation_arcsec(unit_vector(a.ra_deg, a.dec_deg), unit_vector(b.ra_deg, b.dec_deg)) / 3600
+
+
+def _moonlight_mag(setting: Setting, geometry: Geometry, moon: SkyDisc, moon_deg: np.ndarray) -> np.ndarray:
+    """Return by how many magnitudes the Moon brightens the dark sky at the target."""
+    from planner.sky.places import altaz
+
+    up, _ = altaz((moon.ra_deg, moon.dec_deg), setting.observer, geometry.tt_s)
+    extinction = setting.site.extinction_mag
+    light = moonlight_nl(geometry.altitude_deg, up, moon_deg, moon.phase_angle_deg, extinction)
+    dark = dark_nl(setting.site.sky_brightness_mag_arcsec2, geometry.altitude_deg, extinction)
+    return 2.5 * np.log10(1 + light / dark)
 
 
 def visit_rule(setting: Setting) -> tuple[str, float]:
@@ -164,17 +177,23 @@ def wanted_visits(setting: Setting, nights: Nights) -> int:
     return int(np.clip(np.ptp(nights.path_arcsec) / apart, _LEAST_VISITS, _MOST_VISITS))
 
 
-def spread_evenly(path: np.ndarray, count: int, taken_path: float | None = None) -> np.ndarray:
+def spread_evenly(
+    path: np.ndarray, count: int, taken_path: float | None = None, moonlight_mag: np.ndarray | None = None
+) -> np.ndarray:
     """Return indices of at most `count` places, as even along the path as they allow, none twice.
 
-    With `taken_path` (where the last visit taken lies) the first of them keeps the same distance from it.
+    With `taken_path` (where the last visit taken lies) the first of them keeps the same distance from it. Moonlight is
+    avoided as far as that costs little: three magnitudes of it are worth a quarter of the distance between visits.
     """
     if taken_path is None:
         goals = np.linspace(path[0], path[-1], count)
     else:
         goals = np.linspace(min(taken_path, path[-1]), path[-1], count + 1)[1:]
-    nearest = np.abs(path[None, :] - goals[:, None]).argmin(axis=1)
-    return np.unique(nearest)
+    spacing = max(abs(path[-1] - goals[0]) / max(count - 1, 1), 1e-9)
+    cost = ((path[None, :] - goals[:, None]) / spacing) ** 2
+    if moonlight_mag is not None:
+        cost = cost + _MOONLIGHT_COST * moonlight_mag[None, :]
+    return np.unique(cost.argmin(axis=1))
 
 
 def reserve_nights(nights: Nights, chosen: np.ndarray, count: int) -> list[np.ndarray]:

@@ -61,9 +61,14 @@ def event_passages(setting: Setting, clock_sigma_s: float | None = None) -> tupl
 
 
 def _reachable(setting: Setting, window: Window) -> list[Window]:
-    """Return the parts of a window in which the target is above the horizon line and within the mount's limits."""
+    """Return the parts of a window in which the target can be reached, and stars seen where they are needed."""
     sample_s = _samples(window)
-    seen = setting.reachable(setting.geometry(sample_s))
+    geometry = setting.geometry(sample_s)
+    seen = setting.reachable(geometry)
+    if setting.family.reference == "stars" and not window.burst:
+        # what is measured against stars waits for them, unless it never gets dark enough
+        dark = seen & (geometry.sun_altitude_deg < setting.wish.darkness_deg)
+        seen = dark if dark.any() else seen
     edges = np.flatnonzero(np.diff(np.concatenate([[False], seen, [False]]).astype(int)))
     return [
         replace(window, start_tt_s=float(sample_s[first]), end_tt_s=float(sample_s[last - 1]))
