@@ -22,6 +22,7 @@ RIVAL_LOG_ODDS = np.log(1e2)
 MOST_ODDS = 1e12  # beyond this the model of the noise, not the data, sets the number
 SLIP = np.log(1e-3)  # how often any one kind of slip happens, from our judgement
 SMALL_CLOCK_S = 120.0
+PROMISING = 30.0  # usual scatters by which most frames may be off before a reading is not even fitted
 HALF_HOURS = tuple(n for n in range(-28, 29) if n)  # civil zones lie within 14 h of UTC
 DAY_S = 86400.0
 
@@ -168,7 +169,9 @@ def lower_first(text: str) -> str:
 def _readings(s: Sightings, q: Question):  # type: ignore[no-untyped-def]
     priors = q.priors(SMALL_CLOCK_S)
 
-    def tried(name, path, clock_s=0.0, log_prior=0.0, sightings=s, sentence="", priors=priors):
+    def tried(name, path, clock_s=0.0, log_prior=0.0, sightings=s, sentence="", priors=priors, look=True):
+        if name != "plain" and look and not _promising(sightings, path, clock_s, q):
+            return None
         try:
             fit = fit_track(sightings, path, priors, start_clock_s=clock_s)
         except (NoSolutionError, np.linalg.LinAlgError, ValueError):
@@ -201,7 +204,11 @@ def _readings(s: Sightings, q: Question):  # type: ignore[no-untyped-def]
         wide = replace(priors, clock_s=0.0, rotation_deg=0.0, log_scale=0.0, center_arcsec=600.0)
         where = "on the disc" if s.on_disc else "among the stars"
         sentence = f"What was measured stands still {where}: it is not {q.target}."
-        yield tried("wrong-body", still, log_prior=SLIP, sentence=sentence, priors=wide)
+        yield tried("wrong-body", still, log_prior=SLIP, sentence=sentence, priors=wide, look=False)
+    if s.on_disc and q.other_bodies and len(s) >= 4:
+        sentence = f"What was measured moves with the sky but stands elsewhere than {q.target}: a star or another body."
+        wide = replace(priors, center_arcsec=1000.0)
+        yield tried("wrong-body", q.path, log_prior=SLIP, sentence=sentence, priors=wide, look=False)
     anywhere = replace(priors, clock_s=DAY_S / 2)
     for clock_s in _closest(s, q.path, list(np.arange(-12.0, 12.01, 0.25) * 3600.0), 1):
         sentence = "The frames' clock is off by an odd amount."
@@ -245,9 +252,19 @@ def _day_candidates(s: Sightings, q: Question) -> set[float]:
 
 def _closest(s: Sightings, path: PredictedPath, clocks_s: list[float], count: int) -> list[float]:
     """Return the few clock errors, of many, that lay the path best on the sightings, rotation free, scale known."""
-    sample = s.part(np.unique(np.linspace(0, len(s) - 1, min(len(s), 25)).astype(int)))
+    sample = _sample(s)
     worth = [(_misfit(sample, path, clock_s), clock_s) for clock_s in clocks_s]
     return [clock_s for misfit, clock_s in sorted(worth)[:count] if np.isfinite(misfit)]
+
+
+def _promising(s: Sightings, path: PredictedPath, clock_s: float, q: Question) -> bool:
+    """Say whether a reading lays most frames near enough for a fit to be worth its time."""
+    own = float(np.sqrt(np.median(np.einsum("nii->n", s.covariance_arcsec2)) / 2.0))
+    return _misfit(_sample(s), path, clock_s) < (PROMISING * np.hypot(q.jitter_arcsec, own)) ** 2
+
+
+def _sample(s: Sightings, most: int = 25) -> Sightings:
+    return s.part(np.unique(np.linspace(0, len(s) - 1, min(len(s), most)).astype(int)))
 
 
 def _misfit(s: Sightings, path: PredictedPath, clock_s: float) -> float:

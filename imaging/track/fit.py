@@ -231,6 +231,8 @@ class _Solver:
         _, matrix, gradient, _ = self._normal(x, weights, used)
         scale = np.sqrt(np.diag(matrix))
         step = np.linalg.solve(matrix / np.outer(scale, scale), gradient / scale) / scale
+        if not np.isfinite(step).all():
+            raise np.linalg.LinAlgError("the fit left the range of numbers")
         moved = x.copy()
         moved[self.free] += step
         return moved, float(np.max(np.abs(step) * scale))

@@ -117,7 +117,7 @@ def _plots_section(body: str, pictures: dict) -> str:  # type: ignore[type-arg]
 <p class="quiet">{hint} Along is the direction of motion; the line is what the clock offset alone makes.</p>
 <div class="plots">{body}</div>
 <figure id="cutout" hidden><div class="picture"><img alt="piece of the frame"><svg viewBox="0 0 100 100">
-<circle id="m" r="5"></circle><path id="p" d="M-6,0H6M0,-6V6"></path></svg></div>
+<circle id="m" r="5"></circle><path id="p" d="M-12,0H-6M6,0H12M0,-12V-6M0,6V12"></path></svg></div>
 <figcaption></figcaption></figure></section>"""
 
 
@@ -220,7 +220,7 @@ summary{cursor:pointer}
 .picture{position:relative;width:min(18rem,80vw);aspect-ratio:1}
 .picture img,.picture svg{position:absolute;inset:0;width:100%;height:100%;image-rendering:pixelated}
 .picture circle,.picture path{fill:none;stroke:#ffc46b;stroke-width:1.2}
-.picture path{stroke:#fff;stroke-dasharray:2 1}
+.picture path{stroke:#fff;stroke-width:1.6}
 figcaption{font-size:.92rem;max-width:22rem;white-space:pre-line}
 """
 
@@ -245,7 +245,7 @@ function showCutout(i, text) {
     put("p", cut[3], cut[4]);
   }
   box.querySelector("figcaption").textContent = text +
-    (cut ? "\\nring: measured   dashed cross: predicted at the stamped time" : "\\n(no picture kept of this frame)");
+    (cut ? "\\nring: measured; cross: predicted at the stamped time" : "\\n(no picture kept of this frame)");
 }
 window.showCutout = showCutout;
 """

@@ -1,0 +1,65 @@
+"""Slips injected into rendered frames are named by `check`: from pixels to sentence."""
+
+from __future__ import annotations
+
+import json
+
+import pytest
+
+from planner.cli.main import run_with
+from tests.conftest import ROOT
+
+pytestmark = pytest.mark.slow
+
+TRANSIT, MOON, MARS = "mercury_transit_2032", "moon_occults_planet_2030", "mars_retrograde_2027"
+OTHER_SIDE = "--from-site 34.93,-32.87,1420"
+SLIPS = [
+    (TRANSIT, "--frames 12 --binning 6 --clock-offset 3600", "zone"),
+    (TRANSIT, "--frames 12 --binning 6 --clock-offset 86400", "date"),
+    (TRANSIT, "--frames 12 --binning 6 --mirror", "mirrored"),
+    (TRANSIT, f"--frames 12 --binning 6 {OTHER_SIDE}", "longitude-sign"),
+    (TRANSIT, "--frames 12 --binning 6 --rotation 30", "camera-turned"),
+    (MOON, "--frames 12 --binning 4 --clock-offset -3600", "zone"),
+    (MOON, "--frames 12 --binning 4 --mirror", "mirrored"),
+    (MARS, "--frames 6 --binning 3 --clock-offset 7200", "zone"),
+    (MARS, "--frames 6 --binning 3 --clock-offset -86400", "date"),
+    (MARS, "--frames 6 --binning 3 --mirror", "mirrored"),
+    (MARS, f"--frames 6 --binning 2 {OTHER_SIDE}", "longitude-sign"),
+]
+
+
+@pytest.mark.parametrize(("brief", "options", "name"), SLIPS)
+def test_a_slip_in_rendered_frames_is_named(tmp_path, capsys, brief, options, name):
+    plan, frames = tmp_path / "p.plan.yaml", tmp_path / "frames"
+    assert run_with(["plan", str(ROOT / "configs" / f"{brief}.yaml"), "-o", str(plan)]) == 0
+    assert run_with(["rehearse", str(plan), "-o", str(frames), "--quiet", *options.split()]) == 0
+    capsys.readouterr()
+    run_with(["check", str(plan), str(frames), "-o", str(tmp_path / "out"), "--json", "--no-pictures"])
+    told = json.loads(capsys.readouterr().out)
+    assert told["findings"][0]["name"] == name
+    assert told["findings"][0]["odds"] is None or told["findings"][0]["odds"] > 1e4
+    assert told["verdict"] in (tmp_path / "out" / "report.html").read_text(encoding="utf-8").replace(
+        "\u00a0", " "
+    )
+
+
+def test_a_plan_for_another_body_gets_no_place_from_its_frames(tmp_path, capsys):
+    """Frames of Mars, checked with a plan for Jupiter of the same nights: the fields do not even overlap."""
+    brief = (ROOT / "configs" / f"{MARS}.yaml").read_text(encoding="utf-8")
+    other = ROOT / "configs" / "jupiter_for_a_test.yaml"
+    plan, wrong, frames = tmp_path / "mars.plan.yaml", tmp_path / "jupiter.plan.yaml", tmp_path / "frames"
+    assert run_with(["plan", str(ROOT / "configs" / f"{MARS}.yaml"), "-o", str(plan)]) == 0
+    other.write_text(brief.replace("body: mars", "body: jupiter"), encoding="utf-8")
+    try:
+        assert run_with(["plan", str(other), "-o", str(wrong)]) == 0
+    finally:
+        other.unlink()
+    assert (
+        run_with(["rehearse", str(plan), "-o", str(frames), "--quiet", "--frames", "5", "--binning", "3"])
+        == 0
+    )
+    capsys.readouterr()
+    run_with(["check", str(wrong), str(frames), "-o", str(tmp_path / "out"), "--json", "--no-pictures"])
+    told = json.loads(capsys.readouterr().out)
+    assert told["on_track"] == 0
+    assert told["clock_offset_s"] is None or "wrong-body" in [finding["name"] for finding in told["findings"]]
