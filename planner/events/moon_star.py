@@ -278,5 +278,5 @@ class MoonOccultsStar:
 
 def title_of(name: str) -> str:
     """Return a star's name with its proper name where it has one: Aldebaran (HIP 21421)."""
-    known = {f"HIP {number}": proper.capitalize() for proper, number in stars.NAMED.items()}
+    known = {f"HIP {number}": proper for number, proper in stars.PROPER_NAMES.items()}
     return f"{known[name]} ({name})" if name in known else name

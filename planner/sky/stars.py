@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import re
 from dataclasses import dataclass
+from importlib.resources import files
 
 import numpy as np
 
@@ -23,14 +24,16 @@ _MAS = np.pi / 648e6
 _EPOCH_TT_S = (EPOCH_YEAR - 2000.0) * YEAR_S
 _FASTEST_DEG_YEAR = 10.4 / 3600.0  # Barnard's star
 
-# IAU Working Group on Star Names, Catalog of Star Names: the brightest and those the Moon can cover (from memory)
-NAMED = {
-    "achernar": 7588, "acrux": 60718, "aldebaran": 21421, "alcyone": 17702, "algol": 14576, "alnilam": 26311,
-    "altair": 97649, "antares": 80763, "arcturus": 69673, "betelgeuse": 27989, "canopus": 30438, "capella": 24608,
-    "castor": 36850, "dabih": 100345, "deneb": 102098, "elnath": 25428, "fomalhaut": 113368, "merope": 17608,
-    "nunki": 92855, "polaris": 11767, "pollux": 37826, "porrima": 61941, "procyon": 37279, "regulus": 49669,
-    "rigel": 24436, "sirius": 32349, "spica": 65474, "vega": 91262, "zubenelgenubi": 72622,
-}  # fmt: skip
+
+def _proper_names() -> dict[int, str]:
+    text = files("planner.sky").joinpath("starnames.csv").read_text(encoding="utf-8")
+    pairs = [line.split(",") for line in text.splitlines() if not line.startswith("#")][1:]
+    return {int(hip): name for name, hip in pairs}
+
+
+# Names of the IAU by Hipparcos number: the brightest stars, and those the Moon can cover
+PROPER_NAMES = _proper_names()
+NAMED = {name.lower(): hip for hip, name in PROPER_NAMES.items()}
 
 
 @dataclass(frozen=True)
@@ -249,7 +252,7 @@ def star(
         from difflib import get_close_matches
 
         close = get_close_matches(text.lower(), NAMED, n=1)
-        hint = f" (did you mean {close[0].capitalize()}?)" if close else ""
+        hint = f" (did you mean {PROPER_NAMES[NAMED[close[0]]]}?)" if close else ""
         raise InputError(
             f"star: found {name!r}{hint}; allowed are `HIP 21421`, a Gaia DR3 source id, or RA,DEC in degrees"
         )
@@ -292,4 +295,14 @@ def _given_star(
     )
 
 
-__all__ = ["NAMED", "STAR", "Star", "StarField", "all_stars", "star", "star_names", "stars_in_field"]
+__all__ = [
+    "NAMED",
+    "PROPER_NAMES",
+    "STAR",
+    "Star",
+    "StarField",
+    "all_stars",
+    "star",
+    "star_names",
+    "stars_in_field",
+]

@@ -220,3 +220,12 @@ def test_seen_from_a_site_a_star_is_where_it_is_from_the_geocentre():
     one = stars.star("Aldebaran")
     site = Observer("", 35.0, 33.0, 1400.0)
     assert separation_arcsec(one.vector(site, times), one.vector(None, times))[0] < 1e-5
+
+
+def test_every_name_is_that_of_a_bright_star():
+    table = starlist.star_list()
+    row = {int(hip): k for k, hip in enumerate(table["hip"]) if hip}
+    for hip, name in stars.PROPER_NAMES.items():
+        assert table["v"][row[hip]] < 6.0, name
+        assert stars.star(name.upper()).name == f"HIP {hip}"
+    assert stars.star(" deneb algedi ").name == "HIP 107556"
