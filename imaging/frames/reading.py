@@ -31,6 +31,13 @@ class ReadOptions:
 DIALECTS = {
     "FITS": ("imaging.frames.dialects.fits", (".fits", ".fit", ".fts", ".fz")),
     "PNG or JPEG": ("imaging.frames.dialects.raster", (".png", ".jpg", ".jpeg")),
+    "camera RAW": (
+        "imaging.frames.dialects.raw",
+        (".cr2", ".cr3", ".nef", ".arw", ".raf", ".orf", ".rw2", ".dng"),
+    ),
+    "TIFF": ("imaging.frames.dialects.tiff", (".tif", ".tiff")),
+    "SER": ("imaging.frames.dialects.ser", (".ser",)),
+    "video": ("imaging.frames.dialects.video", (".mp4", ".mov", ".avi", ".mkv")),
 }
 
 

@@ -188,6 +188,32 @@ def time_from_begin(tt_s: float, resolution_s: float, length_s: float | None, so
     return _combine(_Stamp(tt_s, resolution_s, source), None, None, length_s, [])
 
 
+def time_from_local_iso(moment: datetime, zone: timezone | ZoneInfo | None, source: str) -> FrameTime:
+    """Return the time of a stamp to the second; one without an offset needs `zone`. Raises NoTimeError."""
+    from planner.sky.timescale import tt_s_from_datetime
+
+    _refuse_unset(moment.date().isoformat(), source)
+    if moment.tzinfo is None:
+        if zone is None:
+            raise NoTimeError(f"{source} has no offset from UTC; give it with --zone")
+        moment = moment.replace(tzinfo=zone)
+    resolution = 1e-6 if moment.microsecond else 1.0
+    return _combine(_Stamp(float(tt_s_from_datetime(moment)), resolution, source), None, None, None, [])
+
+
+def time_from_ticks(ticks: int, source: str) -> FrameTime:
+    """Return the time of a count of 100 ns since 0001-01-01T00:00 UTC (SER); raises NoTimeError when it is none."""
+    from planner.sky.timescale import tt_s_from_datetime
+
+    try:
+        moment = datetime(1, 1, 1, tzinfo=UTC) + timedelta(microseconds=ticks // 10)
+    except OverflowError:
+        raise NoTimeError(f"{source} is {ticks}, which is not a date and time") from None
+    _refuse_unset(moment.date().isoformat(), source)
+    tt_s = float(tt_s_from_datetime(moment)) + (ticks % 10) * 1e-7
+    return _combine(_Stamp(tt_s, 1e-6, source), None, None, None, [])
+
+
 def time_from_file_date(mtime_s: float, length_s: float | None) -> FrameTime:
     """Return a time from the modification time of the file (POSIX seconds), taken as the end of the exposure."""
     from planner.sky.timescale import tt_s_from_datetime

@@ -69,7 +69,7 @@ def write_quicklook(solved: Solved, path: Path, tt_s: float, force: bool = False
     )
     for x, color, text in (
         (0.52, _MATCHED, "o  matched"),
-        (0.63, _MISSED, "\u25a1  catalogue star not seen"),
+        (0.63, _MISSED, "\u25a1  catalogue star not matched"),
         (0.82, _UNKNOWN, "x  not in the catalogue"),
     ):
         figure.text(x, share * 0.62, text, color=color, fontsize=9, va="center")
@@ -106,6 +106,11 @@ def _missed(solved: Solved, tt_s: float) -> tuple[np.ndarray, np.ndarray]:
     x, y = one.sky_to_pixel(ra, np.degrees(np.arcsin(sky.vectors[:, 2])))
     with np.errstate(invalid="ignore"):
         inside = (x > 0) & (x < one.width_px - 1) & (y > 0) & (y < one.height_px - 1)
+    if inside.any():  # the other star of a blended pair is no miss
+        from scipy.spatial import cKDTree
+
+        tree = cKDTree(np.column_stack([one.matched.x_px, one.matched.y_px]))
+        inside[inside] = tree.query(np.column_stack([x[inside], y[inside]]))[0] > 8
     return x[inside][:60], y[inside][:60]
 
 
@@ -128,13 +133,13 @@ def _name(axes, solved: Solved) -> None:  # type: ignore[no-untyped-def]
     taken: list[tuple[float, float]] = []
     for i in order[:200]:
         x, y = float(one.matched.x_px[i]), float(one.matched.y_px[i])
-        if x > 0.86 * one.width_px:
+        if x > 0.86 * one.width_px or not names[i].startswith("HIP"):  # a source id names nothing to a reader
             continue
         if any(abs(x - a) < 0.12 * one.width_px and abs(y - b) < 0.03 * one.height_px for a, b in taken):
             continue
         taken.append((x, y))
         axes.annotate(
-            names[i].removeprefix("Gaia DR3 "),
+            names[i],
             (x, y),
             xytext=(7, 0),
             textcoords="offset points",
