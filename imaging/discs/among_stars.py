@@ -117,6 +117,8 @@ def planet_beside_moon(
     stamp = Stamp.cut(data, x0, y0, reach, saturation)
     place = _resolved(stamp, x0, y0, body, sigma, noise, moon, int(stamp.clipped.sum()))
     gap = np.hypot(place.x_px - moon.x_px, place.y_px - moon.y_px) - moon.radius_px
+    if place.chi2 > 8 or max(place.sigma_px) > max(2.0, body.radius_px):
+        raise NoSolutionError("the Moon's light drowns the planet: nothing there has a planet's shape")
     if gap < -0.8 * max(body.radius_px, 1.0):
         raise NoSolutionError("less than a tenth of the planet is clear of the Moon")
     return place

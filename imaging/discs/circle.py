@@ -10,8 +10,8 @@ from imaging.discs.outline import Outline
 from imaging.discs.ring import Sectors
 from planner.errors import NoSolutionError
 
-# How many sectors further on a displacement by seeing may still be the same.
-_LAGS = 8
+# Sectors further apart than this never count as moving together.
+_MOST_LAGS = 12
 
 
 @dataclass(frozen=True)
@@ -79,7 +79,10 @@ def fit_circle(
     left = np.full(good.size, np.nan)
     left[good] = residual
     rms = float(np.sqrt(np.sum(weight * residual**2) / max(np.sum(weight) - 3, 1)))
-    bread = np.linalg.inv(normal)
+    # Tukey's estimate moves by its influence function, whose slope is not its weight (Huber 1981, section 6.3)
+    u2 = np.clip((residual / (5 * scale)) ** 2, 0, 1)
+    slope = base * np.clip((1 - u2) * (1 - 5 * u2), -0.8, 1)
+    bread = np.linalg.inv(design.T @ (design * slope[:, None]) + np.diag(extra) + 1e-12 * np.eye(3))
     covariance = bread
     if correlated:
         covariance = bread @ (_shared(design, base * weight, residual, good) + np.diag(extra)) @ bread
@@ -89,16 +92,34 @@ def fit_circle(
 
 
 def _shared(design: np.ndarray, weight: np.ndarray, residual: np.ndarray, good: np.ndarray) -> np.ndarray:
-    """Return the covariance of the weighted sum of residuals, sectors up to `_LAGS` apart correlated."""
+    """Return the covariance of the weighted sum of residuals, neighbouring sectors correlated.
+
+    The fit has taken the three slowest waves out of the residuals, which the sum over lags would count as zeros: hence
+    the last factor.
+    """
     moment = np.zeros((good.size, 3))
     moment[good] = design * (weight * residual)[:, None]
-    lags = min(_LAGS, max(int(good.sum()) // 8, 0))
+    count = int(good.sum())
+    left = np.full(good.size, np.nan)
+    left[good] = residual
+    lags = _lags(left, count)
     total = moment.T @ moment
     for lag in range(1, lags + 1):
         part = np.roll(moment, -lag, axis=0).T @ moment
         total += (1 - lag / (lags + 1)) * (part + part.T)
-    count = int(good.sum())
-    return total * count / max(count - 3, 1)
+    return total * count / max(count - 3 * (lags + 1), 0.3 * count)
+
+
+def _lags(left: np.ndarray, count: int) -> int:
+    """Return over how many sectors residuals are alike: 0 unless neighbours are, by two sigma."""
+    square = np.nanmean(left**2)
+    alike = 0
+    for lag in range(1, min(_MOST_LAGS, count // 8) + 1):
+        product = left * np.roll(left, -lag)
+        if not np.isfinite(product).any() or np.nanmean(product) < 2 * square / np.sqrt(count):
+            break
+        alike = lag
+    return min(2 * alike + 1, _MOST_LAGS, count // 8) if alike else 0
 
 
 def limb_motion(sectors: Sectors, circle: CircleFit) -> tuple[float, float]:

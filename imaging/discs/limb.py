@@ -113,7 +113,7 @@ def fit_limb(
             inner_blur = edge.blur if edge is not None else Blur(blur_px)
         fit = fit_sectors(ring, x, y, radius, width, outline, lit, shifts, inner_blur)
         if prior is not None or final or turn == 0:
-            edge = _true_edge(fit.template, radius, blur_px)
+            edge = _true_edge(fit.template, radius, blur_px, 6.0 if lit.angle_deg is None else 12.0)
         held = prior
         if prior is not None and edge is not None:
             # the prior is of the true radius, the circle is that of the profile
@@ -183,13 +183,19 @@ def _defended(
     )  # fmt: skip
 
 
-def _true_edge(template: Template, radius: float, blur_px: float) -> EdgeFit:
-    """Fit the blurred model of a disc to the mean profile, folded to sixty points."""
-    step = max(1, template.offset.size // 60)
-    count = template.offset.size // step * step
+def _true_edge(template: Template, radius: float, blur_px: float, reach: float) -> EdgeFit:
+    """Fit the blurred model of a disc to the mean profile, `reach` blurs to each side of where it is half.
+
+    On the Sun, more than six blurs in, three powers of mu do not follow the limb darkening and pull the limb by
+    hundredths of a pixel; what they miss nearer by is below a thousandth, the floor of the errors.
+    """
+    middle = float(template.offset[np.argmin(np.abs(template.value - 0.4))])
+    near = np.abs(template.offset - middle) < max(reach * blur_px, 4.0)
+    step = max(1, int(near.sum()) // 60)
+    count = int(near.sum()) // step * step
 
     def fold(array: np.ndarray) -> np.ndarray:
-        return array[:count].reshape(-1, step).mean(axis=1)
+        return array[near][:count].reshape(-1, step).mean(axis=1)
 
-    sigma = fold(template.sigma) / np.sqrt(step) + 1e-5
-    return fit_edge(fold(template.offset), fold(template.value), sigma, radius, blur_px)
+    sigma = np.hypot(fold(template.sigma) / np.sqrt(step), 1e-3)
+    return fit_edge(fold(template.offset), fold(template.raw), sigma, radius, blur_px)

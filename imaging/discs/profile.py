@@ -60,7 +60,8 @@ def fit_sectors(
         shape = template.at(place)
         # the variance goes along the profile from that of the sky to that of the disc
         weight = 1 / (spread_out + (spread_in - spread_out) * np.clip(shape, 0, 1) + 1e-12)
-        columns = [shape, np.interp(place, template.offset, template.slope)]
+        # a brightness that changes across the limb (cloud, vignetting) is not to be taken for a displacement
+        columns = [shape, np.interp(place, template.offset, template.slope), place * shape]
         if template.inner is not None:
             columns.append(np.interp(place, template.offset, template.inner))
         solution, inverse, chi2 = _solved(sector, count, weight, columns, value)
@@ -73,6 +74,9 @@ def fit_sectors(
     good = whole & np.isfinite(shift) & np.isfinite(error) & (error > 0) & (solution[:, 1] > 0.15 * size)
     good &= np.abs(shift) < width / 2
     good &= np.bincount(sector, clipped, count) < 0.9 * np.maximum(number, 1)
+    if good.any():
+        # displacements count from the mean profile, so their own mean is zero; what is left of it is the smoothing's
+        shift = shift - np.average(shift[good], weights=1 / error[good] ** 2)
     if shifts is not None:
         shift = shift + shifts
     return ProfileFit(Sectors(middles(count), shift, error, solution[:, 1], solution[:, 0], good), template)
@@ -142,7 +146,7 @@ def _mean_profile(
         radius, blur = inner
         surface = blurred_powers(offset, radius, Blur(np.hypot(blur.sigma_px, 0.29), blur.wing))[1]
     template = Template(
-        offset, smooth, np.sqrt(square / number[filled]), np.gradient(smooth, offset), surface
+        offset, mean[filled], smooth, np.sqrt(square / number[filled]), np.gradient(smooth, offset), surface
     )
     inside, outside = offset < -0.5 * width, offset > 0.5 * width
     return (

@@ -63,10 +63,12 @@ class Sectors:
 class Template:
     """A mean limb profile, 0 outside and 1 inside, at offsets (px) from the limb, with its error.
 
+    `raw` is the profile as it was averaged, `value` the same a little smoothed.
     `slope` is its derivative; `inner` a second shape, the part of the surface that changes with the angle of view.
     """
 
     offset: np.ndarray
+    raw: np.ndarray
     value: np.ndarray
     sigma: np.ndarray
     slope: np.ndarray
