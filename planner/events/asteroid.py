@@ -129,9 +129,11 @@ class AsteroidOccultsStar:
         across_km = np.hypot(across, star_sigma) / RAD_ARCSEC * distance
         chance = _chance(least * distance, radius * distance, across_km)
         terms = site_terms(moment, observer)
-        # what lies along the track moves all instants alike; the chord's length follows from what lies across
-        terms.append(("orbit", np.full(len(times), along / RAD_ARCSEC * distance / speed)))
-        terms.append(("star position", np.full(len(times), star_sigma / RAD_ARCSEC * distance / speed)))
+        # each independent error of the place, as far as it lies along what an instant is sensitive to
+        shifts = occulter.place_shifts_rad(float(closest[0]))
+        orbit_rad = np.sqrt(((shifts @ moment.across) ** 2).sum(axis=0))
+        terms.append(("orbit", orbit_rad / np.abs(moment.rate_rad_s)))
+        terms.append(angle_term("star position", moment, star_sigma))
         at_limb = np.where(names == "closest", 0.0, 1.0)
         size = occulter.sigma_radius_km / moment.near_distance_km * RAD_ARCSEC * at_limb
         terms.append(angle_term("size of the body", moment, size))

@@ -52,20 +52,34 @@ class Occulter:
         """Return vectors (3, n) from the observer, with light-time."""
         return seen_from(self.state, places.observer_position_km(observer, tt_s), tt_s)[0]
 
-    def place_sigma_arcsec(self, tt_s: float) -> tuple[float, float]:
-        """Return the 1-sigma of its apparent place along and across its motion, geocentric."""
-        if not np.isnan(self.sigma_arcsec[0]):
-            return self.sigma_arcsec
+    def place_shifts_rad(self, tt_s: float) -> np.ndarray:
+        """Return independent 1-sigma shifts of its geocentric place as vectors (k, 3) on the sky, in radians."""
         times = np.array([tt_s - 60.0, tt_s, tt_s + 60.0])
         here = places.observer_position_km(None, times)
         vector = seen_from(self.state, here, times)[0]
         unit = vector / np.sqrt((vector**2).sum(axis=0))
-        motion = unit[:, 2] - unit[:, 0]
-        along = motion / np.sqrt(motion @ motion)
-        across = np.cross(unit[:, 1], along)
+        if not np.isnan(self.sigma_arcsec[0]):
+            motion = unit[:, 2] - unit[:, 0]
+            along = motion / np.sqrt(motion @ motion)
+            axes = np.stack([along, np.cross(unit[:, 1], along)])
+            return axes * np.array(self.sigma_arcsec)[:, None] / RAD_ARCSEC
         moved = [seen_from(variant, here[:, 1:2], times[1:2])[0][:, 0] for variant in self.variants]
-        shifts = np.array([v / np.sqrt(v @ v) - unit[:, 1] for v in moved])
-        return tuple(float(np.sqrt(((shifts @ axis) ** 2).sum())) * RAD_ARCSEC for axis in (along, across))  # type: ignore[return-value]
+        return np.array([v / np.sqrt(v @ v) - unit[:, 1] for v in moved])
+
+    def place_sigma_arcsec(self, tt_s: float) -> tuple[float, float]:
+        """Return the 1-sigma of its apparent place along and across its motion, geocentric."""
+        if not np.isnan(self.sigma_arcsec[0]):
+            return self.sigma_arcsec
+        times = np.array([tt_s - 60.0, tt_s + 60.0])
+        vector = self.track(None, times)
+        before, after = (vector / np.sqrt((vector**2).sum(axis=0))).T
+        along = (after - before) / np.sqrt((after - before) @ (after - before))
+        shifts = self.place_shifts_rad(tt_s)
+        sigma = [
+            float(np.sqrt(((shifts @ axis) ** 2).sum())) * RAD_ARCSEC
+            for axis in (along, np.cross(before, along))
+        ]
+        return sigma[0], sigma[1]
 
 
 def magnitude_drop(star_magnitude: float, body_magnitude: float) -> float:

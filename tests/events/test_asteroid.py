@@ -366,3 +366,25 @@ def test_a_one_line_orbit_serves_as_an_orbit(spec, event, tmp_path):
     # five decimals of a degree are 0.02" heliocentric, some seconds of the event
     assert found.middle_tt_s == pytest.approx(event.middle_tt_s, abs=10.0)
     assert any("U = 0" in text for text in FAMILY.predict(found).cautions)
+
+
+def test_the_budget_is_how_far_contacts_scatter_when_the_orbit_is_off(spec, event, path):
+    # a site well off the centre line, where an error across the path shortens the chord
+    ground = path.lines["limit_1"]
+    centre = path.lines["centre"]
+    k = np.flatnonzero(np.isfinite(centre.latitude_deg))[180]
+    share = 0.7
+    here = at(
+        centre.latitude_deg[k] + share * (ground.latitude_deg[k] - centre.latitude_deg[k]),
+        centre.longitude_deg[k] + share * (ground.longitude_deg[k] - centre.longitude_deg[k]),
+    )
+    nominal = FAMILY.predict(event, here).instant("disappearance")
+    stated = dict((term.name, term.sigma_s) for term in nominal.budget)["orbit"]
+    shifts = []
+    for which, sigma in enumerate(spec.orbit.element_sigma):
+        elements = list(spec.orbit.elements)
+        elements[which] += 0.3 * sigma
+        off = dataclasses.replace(spec.orbit, elements=tuple(elements))
+        moved = dataclasses.replace(event, spec=dataclasses.replace(event.spec, orbit=off))
+        shifts.append((FAMILY.predict(moved, here).instant("disappearance").tt_s - nominal.tt_s) / 0.3)
+    assert stated == pytest.approx(float(np.linalg.norm(shifts)), rel=0.1)
