@@ -95,43 +95,43 @@ def measured_falloff(frames: list[np.ndarray]) -> tuple[float, float] | None:
     gradients of twilight or moonlight are fitted beside it as a plane a frame. None when the sky is too faint for
     1 % in the corner.
     """
-    rows, targets, planes = [], [], []
-    for number, data in enumerate(frames):
+    evens, planes, targets = [], [], []
+    for data in frames:
         block = max(8, min(BLOCK_PX, data.shape[0] // 12, data.shape[1] // 12))
         values = block_levels(data, block)
-        y, x = (np.indices(values.shape) + 0.5) * block - 0.5
-        u = (x - (data.shape[1] - 1) / 2) / (data.shape[1] / 2)
-        v = (y - (data.shape[0] - 1) / 2) / (data.shape[0] / 2)
-        aspect = data.shape[0] / data.shape[1]
-        r2 = (u**2 + (v * aspect) ** 2) / (1 + aspect**2)
         level = float(np.nanmedian(values))
         known = np.isfinite(values)
         if level <= 0 or known.sum() < 40:
             continue
-        rows.append(np.stack([-r2, -(r2**2)], axis=-1)[known])
-        planes.append((number, np.stack([np.ones_like(u), u, v], axis=-1)[known]))
+        y, x = (np.indices(values.shape) + 0.5) * block - 0.5
+        half_x, half_y = data.shape[1] / 2, data.shape[0] / 2
+        u, v = (x - half_x + 0.5) / half_x, (y - half_y + 0.5) / half_y
+        r2 = ((u * half_x) ** 2 + (v * half_y) ** 2) / (half_x**2 + half_y**2)
+        evens.append(np.stack([r2, r2**2], axis=-1)[known])
+        planes.append(np.stack([np.ones_like(u), u, v], axis=-1)[known])
         targets.append(values[known] / level)
-    if not rows:
+    if not targets:
         return None
-    total = sum(len(target) for target in targets)
-    design = np.zeros((total, 2 + 3 * len(rows)))
-    start = 0
-    for index, (row, (_, plane)) in enumerate(zip(rows, planes, strict=True)):
-        stop = start + len(row)
-        design[start:stop, :2] = row
-        design[start:stop, 2 + 3 * index : 5 + 3 * index] = plane
-        start = stop
-    target = np.concatenate(targets)
-    keep = np.ones(total, bool)
-    for _ in range(8):
-        solution, *_ = np.linalg.lstsq(design[keep], target[keep], rcond=None)
-        residual = target - design @ solution
-        spread = 1.4826 * float(np.median(np.abs(residual[keep]))) + 1e-9
-        keep = np.abs(residual) < 2.5 * spread
-    covariance = np.linalg.pinv(design[keep].T @ design[keep]) * spread**2
-    middle = float(np.mean([solution[2 + 3 * index] for index in range(len(rows))]))
-    corner_sigma = float(np.sqrt(np.ones(2) @ covariance[:2, :2] @ np.ones(2))) / middle
-    a, b = float(solution[0] / middle), float(solution[1] / middle)
+    shape = np.zeros(2)
+    even = np.concatenate(evens)
+    keep = [np.ones(len(target), bool) for target in targets]
+    # in turns, for the light is the product of both: the plane of each frame, then what all have in common
+    for _ in range(20):
+        skies = []
+        for index, target in enumerate(targets):
+            flat = target / (1 - evens[index] @ shape)
+            plane, *_ = np.linalg.lstsq(planes[index][keep[index]], flat[keep[index]], rcond=None)
+            skies.append(planes[index] @ plane)
+        used = np.concatenate(keep)
+        lost = 1 - np.concatenate([target / sky for target, sky in zip(targets, skies, strict=True)])
+        shape, *_ = np.linalg.lstsq(even[used], lost[used], rcond=None)
+        residual = lost - even @ shape
+        spread = 1.4826 * float(np.median(np.abs(residual[used]))) + 1e-9
+        bounds = np.cumsum([len(target) for target in targets])[:-1]
+        keep = np.split(np.abs(residual) < 3.5 * spread, bounds)
+    covariance = np.linalg.pinv(even[used].T @ even[used]) * spread**2
+    corner_sigma = float(np.sqrt(np.ones(2) @ covariance @ np.ones(2)))
+    a, b = float(shape[0]), float(shape[1])
     return (a, b) if corner_sigma < 0.01 and 0 <= a + b < 0.9 else None
 
 
