@@ -29,20 +29,23 @@ class Background:
 
     def level(self, top: int, bottom: int, of: np.ndarray | None = None) -> np.ndarray:
         """Return the sky of the rows `top` to `bottom` as float32, interpolated between cell centres."""
-        import cv2
+        grid = _extended(self.grid if of is None else of)
+        rows, columns = grid.shape[0] - 2, grid.shape[1] - 2
+        y = (np.arange(top, bottom) + 0.5) * rows / self.height_px + 0.5
+        x = (np.arange(self.width_px) + 0.5) * columns / self.width_px + 0.5
+        i, j = np.minimum(y.astype(int), rows), np.minimum(x.astype(int), columns)
+        across = (x - j).astype(np.float32)
+        first, last = int(i[0]), int(i[-1]) + 2
+        wide = grid[first:last, j] * (1 - across) + grid[first:last, j + 1] * across
+        down = (y - i).astype(np.float32)[:, None]
+        return wide[i - first] * (1 - down) + wide[i - first + 1] * down
 
-        grid = self.grid if of is None else of
-        if grid.shape == (1, 1):
-            return np.full((bottom - top, self.width_px), grid[0, 0], dtype=np.float32)
-        step_y, step_x = self.height_px / grid.shape[0], self.width_px / grid.shape[1]
-        rows = np.clip((np.arange(top, bottom) + 0.5) / step_y - 0.5, 0, grid.shape[0] - 1)
-        first = np.minimum(rows.astype(int), max(grid.shape[0] - 2, 0))
-        part = (rows - first).astype(np.float32)[:, None]
-        wide = cv2.resize(
-            grid[first[0] : first[-1] + 2], (self.width_px, first[-1] + 2 - first[0]), fx=step_x, fy=1
-        )
-        first = first - first[0]
-        return wide[first] * (1 - part) + wide[np.minimum(first + 1, len(wide) - 1)] * part
+
+def _extended(grid: np.ndarray) -> np.ndarray:
+    """Return the grid with one cell more on every side, continued straight, so that a gradient has no edge."""
+    if min(grid.shape) < 2:
+        return np.pad(grid, 1, mode="edge")
+    return np.pad(grid, 1, mode="reflect", reflect_type="odd")
 
 
 @dataclass(frozen=True)
@@ -111,7 +114,7 @@ def background(data: np.ndarray, cell_px: int = CELL_PX) -> Background:
             np.where(good, sigma, spread).astype(np.float32),
         )
     if min(rows, columns) >= 3:
-        grid, sigma = cv2.medianBlur(grid, 3), cv2.medianBlur(sigma, 3)
+        grid, sigma = (cv2.medianBlur(_extended(one), 3)[1:-1, 1:-1] for one in (grid, sigma))
     positive = sigma[sigma > 0]
     floor = 0.2 * float(np.median(positive)) if positive.size else 1e-3
     return Background(grid, np.maximum(sigma, max(floor, 1e-6)), width, height)

@@ -1,0 +1,131 @@
+"""Stars are found where they are, as precisely as the light allows, and hot pixels are not stars."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from scipy.spatial import cKDTree
+from scipy.special import erf
+
+from imaging.stars.detection import background, detect
+
+
+def star_stamp(x, y, flux, sigma, reach):
+    """Light of a round Gaussian star in each pixel (integrated), at offsets from the pixel of the star."""
+    span = np.arange(-reach, reach + 1)
+    fx = erf((span + 0.5 - x) / sigma / 2**0.5) - erf((span - 0.5 - x) / sigma / 2**0.5)
+    fy = erf((span + 0.5 - y) / sigma / 2**0.5) - erf((span - 0.5 - y) / sigma / 2**0.5)
+    return flux * np.outer(fy, fx) / 4
+
+
+def render(shape, x, y, flux, fwhm, sky=200.0, read=3.0, seed=1):
+    """Frame in electrons: sky, stars, Poisson and read noise."""
+    image = np.full(shape, sky)
+    sigma, reach = fwhm / 2.3548, int(np.ceil(3 * fwhm)) + 2
+    padded = np.pad(image, reach)
+    for a, b, f in zip(x, y, flux, strict=True):
+        column, row = round(a), round(b)
+        padded[row : row + 2 * reach + 1, column : column + 2 * reach + 1] += star_stamp(
+            a - column, b - row, f, sigma, reach
+        )
+    image = padded[reach:-reach, reach:-reach]
+    rng = np.random.default_rng(seed)
+    return (rng.poisson(image) + rng.normal(0, read, shape)).astype("float32")
+
+
+def bound_px(flux, fwhm, sky=200.0, read=3.0):
+    """Cramer-Rao bound of one coordinate (Winick 1986, J. Opt. Soc. Am. A 3, 1809), mean over places in a pixel."""
+    sigma, step, bounds = fwhm / 2.3548, 1e-3, []
+    for x, y in ((0.0, 0.0), (0.25, 0.4), (0.5, 0.1), (0.35, 0.35)):
+        model = star_stamp(x, y, flux, sigma, 12)
+        slope = (star_stamp(x + step, y, flux, sigma, 12) - star_stamp(x - step, y, flux, sigma, 12)) / (
+            2 * step
+        )
+        bounds.append(1 / np.sqrt((slope**2 / (model + sky + read**2)).sum()))
+    return float(np.mean(bounds))
+
+
+def matched(found, x, y, within=1.5):
+    distance, index = cKDTree(np.column_stack([found.x_px, found.y_px])).query(np.column_stack([x, y]))
+    return distance < within, index
+
+
+@pytest.mark.parametrize("fwhm", [2.0, 3.0, 5.0])
+def test_faint_and_bright_centroids_reach_the_bound(fwhm):
+    rng = np.random.default_rng(7)
+    grid_y, grid_x = np.mgrid[30:1170:60, 30:1770:60]
+    x = grid_x.ravel() + rng.uniform(-5, 5, grid_x.size)
+    y = grid_y.ravel() + rng.uniform(-5, 5, grid_y.size)
+    for flux in (2000.0, 10_000.0, 100_000.0):
+        bound = bound_px(flux, fwhm)
+        if bound > 0.25:
+            continue
+        found = detect(render((1200, 1800), x, y, np.full(len(x), flux), fwhm), gain_e_adu=1.0)
+        ok, index = matched(found, x, y)
+        assert ok.mean() > 0.99
+        error = np.concatenate([found.x_px[index[ok]] - x[ok], found.y_px[index[ok]] - y[ok]])
+        ratio = 1.4826 * np.median(np.abs(error)) / bound
+        assert ratio < (1.2 if bound > 0.02 else 1.55), (
+            f"flux {flux}: {ratio:.2f} of the bound {bound:.4f} px"
+        )
+        assert np.abs(np.median(error)) < 3 * bound / np.sqrt(len(error)) + 0.002
+        stated = np.median(found.sigma_x_px[index[ok]])
+        assert stated == pytest.approx(1.4826 * np.median(np.abs(error)), rel=0.3)
+
+
+def test_noise_alone_holds_no_stars():
+    frame = np.random.default_rng(3).normal(500, 12, (1500, 2000)).astype("float32")
+    assert len(detect(frame)) <= 2
+
+
+def test_hot_pixels_and_cold_columns_are_not_stars():
+    rng = np.random.default_rng(4)
+    frame = rng.normal(500, 12, (800, 1000)).astype("float32")
+    y, x = rng.integers(5, 795, 200), rng.integers(5, 995, 200)
+    frame[y, x] += rng.uniform(300, 20000, 200)
+    frame[:, 300] = 100
+    assert len(detect(frame)) <= 4
+
+
+def test_a_gradient_and_vignetting_lose_no_stars():
+    rng = np.random.default_rng(5)
+    x, y = rng.uniform(20, 1980, 300), rng.uniform(20, 1480, 300)
+    frame = render((1500, 2000), x, y, np.full(300, 6000.0), 3.0)
+    yy, xx = np.mgrid[0:1500, 0:2000]
+    shade = 1 - 0.4 * (((xx - 1000) / 1250) ** 2 + ((yy - 750) / 1250) ** 2)
+    found = detect((frame * shade + 0.3 * xx).astype("float32"), gain_e_adu=1.0)
+    ok, _ = matched(found, x, y)
+    assert ok.mean() > 0.96  # a few of 300 fall onto each other
+    assert len(found) < 310
+
+
+def test_blank_parts_of_a_frame_are_passed_over():
+    x, y = np.array([100.0, 300.0]), np.array([100.0, 120.0])
+    frame = render((250, 400), x, y, np.array([20000.0, 20000.0]), 3.0)
+    frame[:, 200:260] = np.nan
+    found = detect(frame)
+    ok, _ = matched(found, x, y)
+    assert ok.all()
+    assert len(found) == 2
+
+
+def test_a_saturated_star_is_one_detection_and_says_so():
+    frame = render((300, 300), np.array([150.3]), np.array([140.6]), np.array([5e6]), 4.0)
+    found = detect(np.minimum(frame, 60000), saturation_adu=60000.0)
+    near = np.hypot(found.x_px - 150.3, found.y_px - 140.6) < 12
+    assert near.sum() == 1
+    assert found.saturated[near].all()
+    assert np.hypot(found.x_px[near] - 150.3, found.y_px[near] - 140.6) < 0.2
+
+
+@pytest.mark.parametrize("shape", [(8, 8), (9, 500), (64, 64), (65, 129)])
+def test_small_and_narrow_frames_do_not_break_it(shape):
+    detect(np.random.default_rng(1).normal(0, 1, shape).astype("float32"))
+
+
+def test_background_is_the_sky_between_the_stars():
+    rng = np.random.default_rng(6)
+    x, y = rng.uniform(10, 790, 400), rng.uniform(10, 590, 400)
+    sky = background(render((600, 800), x, y, np.full(400, 30000.0), 3.0))
+    assert np.abs(sky.level(0, 600) - 200).max() < 8
+    assert np.median(sky.sigma_grid) == pytest.approx(np.sqrt(200 + 9), rel=0.1)
