@@ -10,7 +10,8 @@ import numpy as np
 
 from imaging.track.assemble import rows_of, sightings_of
 from imaging.track.contacts import time_contacts
-from imaging.track.findings import Diagnosis, Finding, Question, diagnose
+from imaging.track.displaced import displaced_site
+from imaging.track.findings import Diagnosis, Finding, Question, diagnose, explained_limit_arcsec
 from imaging.track.measure import Measurer
 from imaging.track.measurement import Measurement
 from imaging.track.nominal import Promise
@@ -140,6 +141,8 @@ def understand(
         sightings = sightings_of(chosen, promise.path, LIMB_SIGMA_ARCSEC.get(geometry.reference, 0.0))
         question = question_of(promise, geometry.target)
         diagnosis, problem = _diagnosed(sightings, question)
+        if diagnosis is not None and not diagnosis.explained:
+            diagnosis = _from_another_site(diagnosis, promise, question)
         findings += [problem] if problem else list(diagnosis.findings) if diagnosis else []
     rows = rows_of(measurements, used, promise.path, sightings, diagnosis)
     result = CheckResult(
@@ -225,6 +228,15 @@ def _diagnosed(sightings: Sightings, question: Question) -> tuple[Diagnosis | No
         return diagnose(sightings, question), None
     except NoSolutionError as none:
         return None, Finding("unexplained", float("nan"), f"{none}.")
+
+
+def _from_another_site(diagnosis: Diagnosis, promise: Promise, question: Question) -> Diagnosis:
+    """Return the diagnosis that the frames come from a place away from the plan's, where that explains them."""
+    plain = next((reading for reading in diagnosis.readings if reading.name == "plain"), None)
+    moved = displaced_site(plain, promise, question) if plain else None
+    if moved is None or moved[1].fit.jitter_arcsec > explained_limit_arcsec(plain.sightings, question):
+        return diagnosis
+    return replace(diagnosis, reading=moved[1], findings=(moved[0],), explained=True)
 
 
 def question_of(promise: Promise, target: str) -> Question:

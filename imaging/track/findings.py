@@ -22,6 +22,7 @@ RIVAL_LOG_ODDS = np.log(1e2)
 MOST_ODDS = 1e12  # beyond this the model of the noise, not the data, sets the number
 SLIP = np.log(1e-3)  # how often any one kind of slip happens, from our judgement
 SMALL_CLOCK_S = 120.0
+STRAY_ARCSEC = 60.0  # nearer to the target than this, another body is less likely than a wrong site
 PROMISING = 30.0  # usual scatters by which most frames may be off before a reading is not even fitted
 HALF_HOURS = tuple(n for n in range(-28, 29) if n)  # civil zones lie within 14 h of UTC
 DAY_S = 86400.0
@@ -208,7 +209,9 @@ def _readings(s: Sightings, q: Question):  # type: ignore[no-untyped-def]
     if s.on_disc and q.other_bodies and len(s) >= 4:
         sentence = f"What was measured moves with the sky but stands elsewhere than {q.target}: a star or another body."
         wide = replace(priors, center_arcsec=1000.0)
-        yield tried("wrong-body", q.path, log_prior=SLIP, sentence=sentence, priors=wide, look=False)
+        stray = tried("wrong-body", q.path, log_prior=SLIP, sentence=sentence, priors=wide, look=False)
+        if stray and np.hypot(stray.fit.value["east_arcsec"], stray.fit.value["north_arcsec"]) > STRAY_ARCSEC:
+            yield stray
     anywhere = replace(priors, clock_s=DAY_S / 2)
     for clock_s in _closest(s, q.path, list(np.arange(-12.0, 12.01, 0.25) * 3600.0), 1):
         sentence = "The frames' clock is off by an odd amount."

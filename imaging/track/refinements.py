@@ -9,11 +9,11 @@ from itertools import pairwise
 
 import numpy as np
 
+from imaging.track.displaced import EARTH_KM_DEG, displaced_site
 from imaging.track.findings import DAY_S, MOST_ODDS, SLIP, SMALL_CLOCK_S, Finding, Question, Reading, odds
 from imaging.track.fit import Priors, fit_track
 from imaging.track.measurement import Measurement
 from imaging.track.nominal import Promise
-from imaging.track.path import PredictedPath
 from imaging.track.result import duration_text, with_sigma
 from planner.errors import NoSolutionError
 from planner.sequence.models import Plan
@@ -21,9 +21,7 @@ from planner.sequence.models import Plan
 NAN = float("nan")
 CLAIM_SIGMA = 5.0
 CLOCK_SIGMA = 3.0
-SITE_PRIOR_KM = 500.0
 ANOTHER_DATE_S = 2.0 * DAY_S
-EARTH_KM_DEG = 111.19  # a degree of latitude, mean
 
 
 @dataclass(frozen=True)
@@ -72,9 +70,9 @@ def clock_findings(reading: Reading, plan: Plan, promise: Promise, question: Que
                 "s/day",
             )
         )
-    site = _site_displaced(reading, promise, question)
-    if site is not None:
-        findings.append(site)
+    moved = displaced_site(reading, promise, question)
+    if moved is not None:
+        findings.append(moved[0])
     return ClockFindings(drift, drift_sigma, tuple(findings))
 
 
@@ -135,78 +133,6 @@ def _drift(reading: Reading, question: Question) -> tuple[float, float]:
     if fit is None:
         return NAN, NAN
     return fit.value["drift"] * DAY_S, fit.sigma["drift"] * DAY_S
-
-
-def _site_displaced(reading: Reading, promise: Promise, question: Question) -> Finding | None:
-    """Return a finding when another site, a distance away, fits far better; the plan's clock promise breaks the tie.
-
-    A displacement along the path looks like a clock error; only what the frames tell apart is claimed.
-    """
-    if reading.name != "plain" or reading.fit.used.sum() < 6:
-        return None
-    north_km = east_km = 0.0
-    path = reading.path
-    plain = _refit(reading, question.priors(SMALL_CLOCK_S), reading.clock_s)
-    fit = None
-    for _ in range(3):
-        shifts = _site_shifts(reading, promise, path, north_km, east_km)
-        moved = replace(reading, path=path)
-        fit = _refit(moved, question.priors(SMALL_CLOCK_S), reading.clock_s, shifts=shifts,
-                     shift_sigmas=np.array([SITE_PRIOR_KM, SITE_PRIOR_KM]))  # fmt: skip
-        if fit is None or plain is None:
-            return None
-        step = fit.extra_value
-        if not np.isfinite(step).all() or np.hypot(*step) > 3000:
-            return None
-        north_km, east_km = north_km + step[0], east_km + step[1]
-        path = _path_at(promise, north_km, east_km)
-        if np.hypot(*step) < 0.5:
-            break
-    assert fit is not None
-    weight = fit.log_evidence - plain.log_evidence + SLIP
-    away = np.array([north_km, east_km])
-    covariance = fit.extra_covariance
-    significance = float(np.sqrt(away @ np.linalg.solve(covariance, away)))
-    if weight < np.log(1e4) or significance < CLAIM_SIGMA:
-        return None
-    size = float(np.hypot(*away))
-    sigma = float(np.sqrt(away @ covariance @ away) / size)
-    worst = float(np.sqrt(np.linalg.eigvalsh(covariance)[-1]))
-    bearing = np.degrees(np.arctan2(east_km, north_km)) % 360
-    text = (
-        f"The frames fit a site {with_sigma(size, sigma)} km away from the plan's, towards {compass(bearing)}"
-    )
-    if worst > 0.3 * size:
-        text += f"; in the other direction it is free to {worst:.0f} km, being like a clock error"
-    return Finding("site-displaced", odds(weight), text + ".", size, sigma, "km")
-
-
-def _site_shifts(reading: Reading, promise: Promise, path: PredictedPath, north_km: float, east_km: float):  # type: ignore[no-untyped-def]
-    s, t = reading.sightings, reading.sightings.tt_s - reading.clock_offset_s
-    step_km = 20.0
-    here = s.expected(path, t)
-    moves = []
-    for north, east in ((step_km, 0.0), (0.0, step_km)):
-        other = _path_at(promise, north_km + north, east_km + east)
-        moves.append((s.expected(other, t) - here) / step_km)
-    return np.stack(moves)
-
-
-def _path_at(promise: Promise, north_km: float, east_km: float) -> PredictedPath:
-    from planner.sequence.documents import observer_of
-
-    observer = observer_of(promise.plan.site)
-    latitude = float(np.clip(observer.latitude_deg + north_km / EARTH_KM_DEG, -89.9, 89.9))
-    per_degree = EARTH_KM_DEG * max(np.cos(np.radians(observer.latitude_deg)), 0.01)
-    longitude = (observer.longitude_deg + east_km / per_degree + 180.0) % 360.0 - 180.0
-    moved = replace(observer, latitude_deg=latitude, longitude_deg=longitude)
-    return PredictedPath.of_plan(promise.plan, moved)
-
-
-def compass(bearing_deg: float) -> str:
-    """Return one of 16 directions of the compass."""
-    names = "N NNE NE ENE E ESE SE SSE S SSW SW WSW W WNW NW NNW".split()
-    return names[round(bearing_deg / 22.5) % 16]
 
 
 def camera_findings(reading: Reading, plan: Plan, chosen: Sequence[Measurement]) -> CameraFindings:

@@ -1,0 +1,93 @@
+"""Finer findings on the events of the example briefs: clock, drift, start for middle, site, scale, roll."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from imaging.track.displaced import compass
+from imaging.track.findings import diagnose
+from imaging.track.path import PredictedPath
+from imaging.track.refinements import clock_findings
+from imaging.track.result import clock_words, with_sigma
+from planner.sequence.documents import observer_of
+from tests.track.synthetic import disc_sightings, star_sightings
+from tests.track.test_recognition import scene
+
+
+def told(event, frames):
+    promise, question, *_ = scene(event)
+    found = diagnose(frames, question)
+    return found, clock_findings(found.reading, promise.plan, promise, question)
+
+
+def times(event, count, rng):
+    return np.sort(rng.choice(scene(event)[2], count, replace=False))
+
+
+def test_a_slow_clock_is_told_with_its_size_and_sense():
+    rng = np.random.default_rng(1)
+    frames = disc_sightings(scene("transit")[0].path, times("transit", 30, rng), rng, -2.4, jitter_arcsec=0.1)
+    found, clock = told("transit", frames)
+    assert found.findings == ()
+    assert [finding.name for finding in clock.findings] == ["clock-offset"]
+    assert "slow: its stamps are earlier than UTC" in clock.findings[0].sentence
+    assert clock.findings[0].value == pytest.approx(-2.4, abs=3 * clock.findings[0].sigma)
+
+
+def test_a_drifting_clock_is_told_and_a_steady_one_is_not_accused():
+    rng = np.random.default_rng(2)
+    planned = times("transit", 60, rng)
+    path = scene("transit")[0].path
+    steady = disc_sightings(path, planned, rng, jitter_arcsec=0.1)
+    drifting = disc_sightings(path, planned, rng, jitter_arcsec=0.1, drift=100.0 / 86400.0 * 10)
+    assert [finding.name for finding in told("transit", steady)[1].findings] == []
+    clock = told("transit", drifting)[1]
+    assert "clock-drift" in [finding.name for finding in clock.findings]
+    assert clock.drift_s_day == pytest.approx(1000.0, abs=4 * clock.drift_sigma_s_day)
+
+
+def test_a_start_taken_for_the_middle_is_told_apart_from_a_wrong_clock():
+    """Stamps are half an exposure early, and exposures differ: no constant offset explains both."""
+    rng = np.random.default_rng(3)
+    planned = times("retrograde", 40, rng)
+    exposure = np.where(np.arange(40) % 2, 60.0, 300.0)
+    frames = star_sightings(scene("retrograde")[0].path, planned, rng, sigma_arcsec=0.2)
+    frames = replace(frames, tt_s=planned - exposure / 2, exposure_s=exposure)
+    clock = told("retrograde", frames)[1]
+    assert [finding.name for finding in clock.findings] == ["start-for-middle"]
+    assert "start of each exposure was taken for its middle" in clock.findings[0].sentence
+
+
+def test_a_site_typed_wrong_by_a_fifth_of_a_degree_is_found_beside_the_moon():
+    rng = np.random.default_rng(4)
+    promise = scene("occultation")[0]
+    there = replace(observer_of(promise.plan.site), latitude_deg=promise.plan.site.latitude_deg + 0.2)
+    path = PredictedPath.of_plan(promise.plan, there)
+    frames = disc_sightings(path, times("occultation", 40, rng), rng, sigma_arcsec=0.03, jitter_arcsec=0.05)
+    found, clock = told("occultation", frames)
+    assert found.explained
+    moved = next(finding for finding in clock.findings if finding.name == "site-displaced")
+    assert moved.value == pytest.approx(22.2, abs=max(4 * moved.sigma, 3.0))
+    assert moved.unit == "km"
+
+
+@pytest.mark.parametrize(("bearing", "name"), [(0, "N"), (90, "E"), (181, "S"), (359, "N"), (225, "SW")])
+def test_directions_are_told_as_on_a_compass(bearing, name):
+    assert compass(bearing) == name
+
+
+@pytest.mark.parametrize(
+    ("value", "sigma", "text"),
+    [(7.3123, 0.42, "7.31 ± 0.42"), (1234.6, 30.0, "1235 ± 30"), (0.001234, 0.000031, "0.001234 ± 0.000031")],
+)
+def test_two_digits_of_the_sigma_decide_the_digits_shown(value, sigma, text):
+    assert with_sigma(value, sigma) == text
+
+
+def test_words_for_a_clock():
+    assert "right as far as they tell" in clock_words(1.0, 0.5)
+    assert clock_words(7.3, 0.5).endswith("7.30 ± 0.50 s fast")
+    assert clock_words(-7.3, 0.5).endswith("7.30 ± 0.50 s slow")
