@@ -75,9 +75,10 @@ def load_brief(path: str | Path, site: Site | None = None, rig: Rig | None = Non
             if isinstance(limb, dict) and isinstance(limb.get(key), str):
                 limb[key] = str(_inside(document, ("event", "limb", key)).resolve())
         others = document.data.get("other_rigs")
-        for index, entry in enumerate(others if isinstance(others, list) else []):
+        listed = others if isinstance(others, list) else []
+        for index, entry in enumerate(listed):
             if isinstance(entry, str):
-                others[index] = _referred(document, ("other_rigs", index), Rig)
+                listed[index] = _referred(document, ("other_rigs", index), Rig)
     return _as(Brief, document)
 
 

@@ -53,7 +53,7 @@ class _View:
         right, up = self.frame.along(*offsets)
         return right / 60, up / 60
 
-    def holds(self, x: np.ndarray, y: np.ndarray) -> np.ndarray:
+    def holds(self, x: Any, y: Any) -> Any:
         """Return which places lie in the view."""
         return (x > self.left) & (x < self.right) & (y > self.bottom) & (y < self.top)
 
@@ -128,8 +128,8 @@ def _view(outlook: Outlook, row: int) -> _View:
         x, y = _path(outlook, view, _track_times(outlook))
         view.left, view.right = min(-wide, x.min() - 0.1 * wide), max(wide, x.max() + 0.1 * wide)
         view.bottom, view.top = min(-high, y.min() - 0.1 * high), max(high, y.max() + 0.1 * high)
-    for x, y in _CORNERS:
-        view.take(*view.at(0.82 * x, 0.72 * y), 0.2 * view.width, 0.26 * view.height)
+    for side, level in _CORNERS:
+        view.take(*view.at(0.82 * side, 0.72 * level), 0.2 * view.width, 0.26 * view.height)
     return view
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Literal
 
 import numpy as np
 
@@ -20,7 +21,7 @@ _BURST_COST = 1000.0
 class Pause:
     """A stretch without frames: `flip` or `focus`."""
 
-    kind: str
+    kind: Literal["flip", "focus"]
     start_tt_s: float
     end_tt_s: float
 

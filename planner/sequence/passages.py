@@ -6,6 +6,7 @@ from collections import Counter
 from dataclasses import fields, replace
 from datetime import datetime, timedelta
 from math import ceil, floor
+from typing import Any
 
 import numpy as np
 
@@ -106,7 +107,7 @@ def _passage(setting: Setting, window: Window, aim: str, flipped: bool) -> Passa
         shots += _shots(
             setting, window, kind, start + timedelta(seconds=offset_s), cadence_s, count, sample_s
         )
-    aim_place = {}
+    aim_place: dict[str, Any] = {}
     if setting.rig.mount.kind == "fixed":
         aim, aim_place = "ground", _ground_aim(setting, geometry, aim)
     return Passage(
@@ -120,7 +121,7 @@ def _passage(setting: Setting, window: Window, aim: str, flipped: bool) -> Passa
     )
 
 
-def _ground_aim(setting: Setting, geometry: Geometry, aim: str) -> dict[str, float]:
+def _ground_aim(setting: Setting, geometry: Geometry, aim: str) -> dict[str, Any]:
     """Return where a tripod points: the middle of what the aim passes through in a passage."""
     from planner.sky.places import altaz
 
@@ -229,7 +230,8 @@ def next_whole(tt_s: float, unit_s: float) -> tuple[datetime, float]:
 
 def _named_apart(passages: list[Passage]) -> list[Passage]:
     """Return the passages with a number added where a pause has cut one in two."""
-    total, seen = Counter(passage.name for passage in passages), Counter()
+    total = Counter(passage.name for passage in passages)
+    seen: Counter[str] = Counter()
     named = []
     for passage in passages:
         seen[passage.name] += 1

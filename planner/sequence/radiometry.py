@@ -168,7 +168,7 @@ def disc_rate_e_s_px(
 
 
 def psf_fwhm_arcsec(
-    rig: Rig, seeing_arcsec: float, airmass: np.ndarray, tracking_error_arcsec: float | None = None
+    rig: Rig, seeing_arcsec: float, airmass: np.ndarray | float, tracking_error_arcsec: float | None = None
 ) -> np.ndarray:
     """Return the FWHM of seeing, diffraction and tracking together, before pixels integrate it.
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Literal
 
 import numpy as np
 
@@ -13,7 +14,8 @@ from planner.sequence.motion import Motion, motion
 from planner.sequence.setting import Setting
 from planner.sequence.starfield import star_frames
 
-TRACKING = {"sun": "solar", "moon": "lunar"}
+Rate = Literal["sidereal", "solar", "lunar", "none"]
+TRACKING: dict[str, Rate] = {"sun": "solar", "moon": "lunar"}
 # A target fainter than this in the exposure for the bright disc gets exposures of its own.
 LEAST_SIGNAL_TO_NOISE = 20.0
 
@@ -27,7 +29,7 @@ class Recipe:
     rate_e_s: np.ndarray
     wanted_s: np.ndarray
     gain: float
-    tracking: str
+    tracking: Rate
     motion: Motion
     stars: int | None = None
 
@@ -45,7 +47,7 @@ def target_name(setting: Setting) -> str:
     return setting.geometry(np.array([setting.event.middle_tt_s])).target
 
 
-def tracking_of(setting: Setting, aim: str) -> str:
+def tracking_of(setting: Setting, aim: str) -> Rate:
     """Return the rate at which the mount follows this aim."""
     if setting.rig.mount.kind == "fixed":
         return "none"

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
+from typing import Literal
 
 import numpy as np
 
@@ -199,7 +200,11 @@ def sun_near(case: Case) -> Iterator[Finding]:
     apart = separation_arcsec(sun.vector_km, unit_vector(*case.target)) / 3600
     up = altaz(sun.vector_km, setting.observer, case.sky.tt_s)[0] > -1.0
     limit = SUN_FORBIDDEN_DEG + field_of(setting.rig).radius_deg
-    for level, angle in (("error", limit), ("caution", SUN_CAUTION_DEG)):
+    levels: tuple[tuple[Literal["error", "caution"], float], ...] = (
+        ("error", limit),
+        ("caution", SUN_CAUTION_DEG),
+    )
+    for level, angle in levels:
         near = up & (apart < angle)
         if near.any():
             yield Finding(

@@ -126,9 +126,9 @@ def settings_of(brief: Brief) -> list[Setting]:
     Raises InputError when the event cannot be planned: the Sun without a solar filter, no event, an unknown filter,
     two rigs of one name, or one mount described in two ways.
     """
-    site, rig = brief.site, brief.rig
-    rigs = [rig, *brief.other_rigs]
-    if isinstance(site, str) or any(isinstance(each, str) for each in rigs):
+    site = brief.site
+    rigs = [each for each in (brief.rig, *brief.other_rigs) if isinstance(each, Rig)]
+    if isinstance(site, str) or len(rigs) < 1 + len(brief.other_rigs):
         raise InputError("brief: site and rig are still paths; read the brief with load_brief")
     names = [each.name for each in rigs]
     if len(set(names)) < len(names):
@@ -157,7 +157,7 @@ def settings_of(brief: Brief) -> list[Setting]:
     for each in rigs:
         known = [one.name for one in each.filters]
         # a wish for a filter holds for the rigs that have it, and at least for the first
-        wished = brief.wish.filter if each is rig or brief.wish.filter in known else None
+        wished = brief.wish.filter if each is rigs[0] or brief.wish.filter in known else None
         through = radiometry.band(each, wished or (known[0] if known else None), behind_solar_filter=solar)
         mates = tuple(other for other in rigs if other is not each and other.mount.name == each.mount.name)
         settings.append(

@@ -18,7 +18,7 @@ _DAY_ALTITUDE_DEG = (-5.0, 0.0, 10.0, 30.0)
 _DAY_V = (11.84, 7.0, 4.6, 3.9)
 
 
-def nanolamberts(v_mag_arcsec2: np.ndarray) -> np.ndarray:
+def nanolamberts(v_mag_arcsec2: np.ndarray | float) -> np.ndarray:
     """Return the surface brightness in nanolamberts."""
     return _NL_A * np.exp(_NL_B - _NL_C * np.asarray(v_mag_arcsec2, float))
 

@@ -111,8 +111,10 @@ def parse(content: str | bytes, path: str | Path = "(text)") -> Document:
     try:
         content.decode("utf-8")
     except UnicodeDecodeError as wrong:
-        line = content[: wrong.start].count(b"\n") + 1
-        raise DocumentError(path, line, "file", "bytes that are not UTF-8", "save it as UTF-8 text") from None
+        bad_line = content[: wrong.start].count(b"\n") + 1
+        raise DocumentError(
+            path, bad_line, "file", "bytes that are not UTF-8", "save it as UTF-8 text"
+        ) from None
     lines: dict[Key, int] = {}
     try:
         _refuse_expansion(content, path)

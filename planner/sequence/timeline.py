@@ -46,7 +46,7 @@ def _draw_hours(axes: Any, outlook: Outlook) -> None:
     length = outlook.last_utc - outlook.first_utc
     margin = max(length * 0.06, timedelta(minutes=5))
     start, end = outlook.first_utc - margin, outlook.last_utc + margin
-    tt_s = np.linspace(*(float(tt_s_from_datetime(moment)) for moment in (start, end)), 241)
+    tt_s = np.linspace(float(tt_s_from_datetime(start)), float(tt_s_from_datetime(end)), 241)
     sky = outlook.geometry(tt_s)
     times = mdates.date2num(datetime_from_tt_s(tt_s))
     shades = [sky_shade(value) for value in sky.sun_altitude_deg]

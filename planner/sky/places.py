@@ -216,7 +216,10 @@ def position_angle_deg(origin: np.ndarray, target: np.ndarray) -> np.ndarray:
 
 
 def offsets_arcsec(
-    reference_ra_deg: np.ndarray, reference_dec_deg: np.ndarray, ra_deg: np.ndarray, dec_deg: np.ndarray
+    reference_ra_deg: np.ndarray | float,
+    reference_dec_deg: np.ndarray | float,
+    ra_deg: np.ndarray,
+    dec_deg: np.ndarray,
 ) -> tuple[np.ndarray, np.ndarray]:
     """Return gnomonic offsets (east, north) in arcseconds from a reference direction; NaN beyond 90 degrees."""
     x, y, z = unit_vector(ra_deg, dec_deg)
@@ -229,8 +232,8 @@ def offsets_arcsec(
 
 
 def radec_from_offsets(
-    reference_ra_deg: np.ndarray,
-    reference_dec_deg: np.ndarray,
+    reference_ra_deg: np.ndarray | float,
+    reference_dec_deg: np.ndarray | float,
     east_arcsec: np.ndarray,
     north_arcsec: np.ndarray,
 ) -> tuple[np.ndarray, np.ndarray]:

@@ -1,5 +1,7 @@
 """Every rule can be provoked by a brief, and stays silent for a brief without the fault."""
 
+import re
+
 import pytest
 
 from planner.errors import InputError
@@ -69,8 +71,8 @@ PROVOKED = [
     ("target-leaves-frame", "caution", CAMPAIGN, {"mount": {"kind": "fixed"}, "wish": {"visits": 8}}),
     ("sun-near", "caution", by_day, {}),
     ("twilight", "caution", by_day, {}),
-    ("twilight", "caution", meeting, {}),
-    ("sky-fills-well", "caution", meeting, {"wish": {"exposure_s": 20.0}}),
+    ("twilight", "caution", meeting, {"wish": {"darkness_deg": 0.0}}),
+    ("sky-fills-well", "caution", meeting, {"wish": {"exposure_s": 20.0, "darkness_deg": 0.0}}),
     ("moon-glare", "caution", CAMPAIGN, {}),
     ("moon-eclipsed", "caution", eclipsed, {}),
     ("target-low", "note", CAMPAIGN, {"wish": {"visit_when": "solar-depression", "solar_depression_deg": 15.0,
@@ -176,6 +178,16 @@ def test_errors_stop_a_plan_and_cautions_stay_in_it():
     with pytest.raises(InputError, match=r"storage-short.*10 GB are there.*larger disk"):
         stop_at_errors(plan)
     stop_at_errors(example_plan(CAMPAIGN))
+
+
+def test_the_documents_name_every_rule(root):
+    text = (root / "docs/planning.md").read_text(encoding="utf-8").split("## Findings")[1]
+    named = set(re.findall(r"^\| `([a-z-]+)` \|", text, re.MULTILINE))
+    source = "".join(
+        (root / f"planner/sequence/{name}.py").read_text(encoding="utf-8")
+        for name in ("rules_event", "rules_camera", "rules_pointing", "rules_sky")
+    )
+    assert named == set(re.findall(r'rule="([a-z-]+)"', source))
 
 
 def test_every_rule_is_provoked_somewhere():
