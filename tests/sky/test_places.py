@@ -281,3 +281,13 @@ def test_one_time_and_many_give_the_same():
     many = places.direction("moon", SITE, DATES)
     one = places.direction("moon", SITE, DATES[7])
     assert one.vector_km[:, 0] == pytest.approx(many.vector_km[:, 7], abs=1e-6)
+
+
+@pytest.mark.parametrize(("latitude", "sign"), [(90.0, 1.0), (-90.0, -1.0)])
+def test_at_a_pole_altitude_is_declination(latitude, sign):
+    pole = Observer("pole", latitude, 0.0, 0.0, pressure_hpa=0.0)
+    altitude, azimuth = places.altaz(places.direction("sun", pole, DATES).vector_km, pole, DATES)
+    _, declination = places.of_date(places.apparent("sun", pole, DATES).vector_km, DATES)
+    # polar motion tilts the zenith by up to 0.6"
+    assert altitude == pytest.approx(sign * declination, abs=0.7 / 3600)
+    assert np.all((azimuth >= 0) & (azimuth < 360))
