@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from planner.sequence.models import Rig
-from planner.sequence.radiometry import vignetting_factor
+from planner.sequence.radiometry import at_gain, vignetting_factor
 
 
 @dataclass(frozen=True)
@@ -35,6 +35,15 @@ def binned(rig: Rig, binning: int) -> Rig:
                     "full_well_e": sensor.full_well_e * binning**2,
                     "gain_e_adu": sensor.gain_e_adu * binning**2,
                     "dark_e_s": sensor.dark_e_s * binning**2,
+                    "gains": [
+                        each.model_copy(
+                            update={
+                                "e_adu": each.e_adu * binning**2,
+                                "full_well_e": each.full_well_e * binning**2,
+                            }
+                        )
+                        for each in sensor.gains
+                    ],
                     "bayer": None,
                 }
             )
@@ -52,11 +61,6 @@ def vignetting(rig: Rig, shape: tuple[int, int]) -> np.ndarray:
     return vignetting_factor(rig, radius).astype(np.float32)
 
 
-def gain_e_adu(rig: Rig, gain: float) -> float:
-    """Return electrons per ADU at a gain setting; a setting is in units of 0.1 dB (common practice, no source)."""
-    return rig.sensor.gain_e_adu / 10 ** (gain / 200.0)
-
-
 def record(
     electrons: np.ndarray, rig: Rig, gain: float, generator: np.random.Generator, bleed: bool = False
 ) -> Readout:
@@ -65,22 +69,21 @@ def record(
     Photon noise is Poisson below 40 electrons and its normal limit above. `bleed`: charge above the full well
     runs along the column, half each way, as in a CCD without a drain.
     """
-    sensor = rig.sensor
+    sensor, setting = rig.sensor, at_gain(rig, gain)
     noise = generator.standard_normal(electrons.shape, dtype=np.float32)
     charge = electrons + np.sqrt(electrons) * noise
     faint = electrons < 40
     if faint.any():
         charge[faint] = generator.poisson(electrons[faint])
     if bleed:
-        charge = _bleed(charge, sensor.full_well_e)
-    np.clip(charge, 0, sensor.full_well_e, out=charge)
-    gain_now = gain_e_adu(rig, gain)
-    charge += sensor.read_noise_e * generator.standard_normal(electrons.shape, dtype=np.float32)
+        charge = _bleed(charge, setting.full_well_e)
+    np.clip(charge, 0, setting.full_well_e, out=charge)
+    charge += setting.read_noise_e * generator.standard_normal(electrons.shape, dtype=np.float32)
     top = 2**sensor.bit_depth - 1
-    adu = np.rint(charge / np.float32(gain_now) + np.float32(sensor.bias_adu))
+    adu = np.rint(charge / np.float32(setting.e_adu) + np.float32(sensor.bias_adu))
     kind = np.uint8 if sensor.bit_depth <= 8 else (np.uint16 if sensor.bit_depth <= 16 else np.uint32)
-    saturation = min(top, sensor.bias_adu + sensor.full_well_e / gain_now)
-    return Readout(np.clip(adu, 0, top).astype(kind), gain_now, sensor.read_noise_e, float(saturation))
+    saturation = min(top, sensor.bias_adu + setting.full_well_e / setting.e_adu)
+    return Readout(np.clip(adu, 0, top).astype(kind), setting.e_adu, setting.read_noise_e, float(saturation))
 
 
 def _bleed(charge: np.ndarray, full_well_e: float) -> np.ndarray:

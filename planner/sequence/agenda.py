@@ -9,7 +9,7 @@ from planner.sequence.capacity import end_utc
 from planner.sequence.models import Passage, Plan
 from planner.sequence.outlook import Outlook
 from planner.sequence.windows import is_contact
-from planner.sequence.wording import exposure_range_text
+from planner.sequence.wording import exposure_range_text, nearest_second
 
 _ALARMS = (timedelta(days=-1), timedelta(hours=-1))
 _CONTACT_ALARMS = (timedelta(minutes=-10), timedelta(minutes=-1))
@@ -45,7 +45,7 @@ def calendar_text(outlook: Outlook) -> bytes:
     calendar.add_component(_entry(plan, plan.title, begin, outlook.last_utc, "\n".join(lines), _ALARMS))
     for name, moment, sigma_s in outlook.instants():
         if is_contact(name) and outlook.first_utc <= moment <= outlook.last_utc:
-            moment = moment.replace(microsecond=0)
+            moment = nearest_second(moment)
             text = f"{moment:%H:%M:%S} UTC, 1 sigma {sigma_s:.1f} s"
             title = f"{name.replace('_', ' ')}: {plan.title}"
             calendar.add_component(

@@ -127,22 +127,25 @@ def script_text(plan: Plan, template: str, file: str = "plan.sh") -> str:
 def _block(passage: Passage, shots: list[Shot], template: str, once: bool) -> list[str]:
     """Return the lines for one shot, or for shots that take turns frame by frame."""
     lines = []
-    if once or len(shots) == 1:
-        for shot in shots:
-            command = _filled(template, passage, shot)
-            first, cadence = _milliseconds(shot), round(shot.cadence_s * 1000)
-            if once:
-                lines.append(f'    [ -n "${{DRY_RUN:-}}" ] || wait_until_ms {first}')
-                lines.append(f"    run {shlex.quote(command)}")
-            else:
-                lines.append(f"    shoot() {{ run {shlex.quote(command)}; }}")
-                lines.append(f"    frames {first} {cadence} {shot.count}")
-        return lines
+    if len(shots) == 1:
+        shot = shots[0]
+        command = _filled(template, passage, shot)
+        first, cadence = _milliseconds(shot), round(shot.cadence_s * 1000)
+        if once:
+            return [
+                f'    [ -n "${{DRY_RUN:-}}" ] || wait_until_ms {first}',
+                f"    run {shlex.quote(command)}",
+            ]
+        return [
+            f"    shoot() {{ run {shlex.quote(command)}; }}",
+            f"    frames {first} {cadence} {shot.count}",
+        ]
     # frames of several kinds in turn, in order of time: a line for each
     times = np.concatenate([_milliseconds(s) + np.arange(s.count) * round(s.cadence_s * 1000) for s in shots])
     which = np.concatenate([np.full(shot.count, number) for number, shot in enumerate(shots)])
     for number, shot in enumerate(shots):
-        lines.append(f"    shoot_{number}() {{ run {shlex.quote(_filled(template, passage, shot))}; }}")
+        command = _filled(template, passage, shot.model_copy(update={"count": 1}))
+        lines.append(f"    shoot_{number}() {{ run {shlex.quote(command)}; }}")
     for row in np.argsort(times, kind="stable"):
         lines.append(f"    shoot() {{ shoot_{which[row]}; }}; frames {times[row]} 1000 1")
     return lines

@@ -140,7 +140,8 @@ def settings_of(brief: Brief) -> list[Setting]:
         first = mounts.setdefault(each.mount.name, each)
         if first.mount != each.mount:
             raise InputError(
-                f"mount.name: {first.name} and {each.name} both sit on {each.mount.name!r} but describe it differently"
+                f"mount.name: {first.name} and {each.name} both sit on {each.mount.name!r} but describe it "
+                "differently; give each mount a name of its own"
             )
     family = catalogue.family(brief.event.family)
     solar = family.reference == "sun"

@@ -7,7 +7,7 @@ from datetime import datetime
 
 from planner.sequence.outlook import Outlook
 from planner.sequence.windows import is_contact
-from planner.sequence.wording import duration_text, exposure_range_text, local_text
+from planner.sequence.wording import duration_text, exposure_range_text, local_text, nearest_second
 
 
 @dataclass(frozen=True)
@@ -82,7 +82,7 @@ def sheet_of(outlook: Outlook) -> Sheet:
 
 
 def _instant_row(each: dict, zone: str) -> SheetRow:  # type: ignore[type-arg]
-    moment = datetime.fromisoformat(each["utc"])
+    moment = nearest_second(datetime.fromisoformat(each["utc"]))
     sigma = float(each["sigma_s"])
     precise = sigma < 30
     shown = f"{moment:%m-%d %H:%M:%S}" if precise else f"{moment:%m-%d %H:%M}"

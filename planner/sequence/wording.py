@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from datetime import UTC, datetime
+from datetime import UTC, datetime, timedelta
 from zoneinfo import ZoneInfo
 
 
@@ -28,6 +28,11 @@ def duration_text(seconds: float) -> str:
     if seconds < 48 * 3600:
         return f"{seconds // 3600:.0f} h {seconds % 3600 // 60:.0f} min"
     return f"{seconds / 86400:.0f} d"
+
+
+def nearest_second(moment: datetime) -> datetime:
+    """Return a moment rounded to the nearest whole second."""
+    return (moment + timedelta(milliseconds=500)).replace(microsecond=0)
 
 
 def local_text(moment: datetime, timezone: str, seconds: bool = True) -> str:

@@ -186,7 +186,7 @@ def test_two_rigs_of_one_name_or_one_mount_described_twice_are_refused():
     with pytest.raises(InputError, match="two rigs named"):
         build_plans(brief.model_copy(update={"other_rigs": [brief.rig]}))
     other = changed(brief, mount={"slew_deg_s": 9.0}).rig.model_copy(update={"name": "other"})
-    with pytest.raises(InputError, match="describe it differently"):
+    with pytest.raises(InputError, match="give each mount a name"):
         build_plans(brief.model_copy(update={"other_rigs": [other]}))
 
 
@@ -194,3 +194,45 @@ def test_a_campaign_holds_its_pointing_where_the_field_allows():
     plan = build_plan(changed(example(CAMPAIGN), optics={"focal_length_mm": 50.0, "aperture_mm": 18.0}))
     aims = {(passage.aim_ra_deg, passage.aim_dec_deg) for passage in plan.passages}
     assert len(aims) == 1
+
+
+def neptune_beside_a_bright_moon():
+    """Neptune, of magnitude 7.8, behind a Moon lit by 93 %: what shows the one shows nothing of the other."""
+    brief = example(OCCULTATION)
+    event = {"family": "moon-occults-planet", "body": "neptune", "date": "2024-08-21"}
+    return brief.model_copy(update={"event": type(brief.event).model_validate(event)})
+
+
+def test_short_and_long_frames_take_turns_where_no_exposure_does_both():
+    plan = build_plan(neptune_beside_a_bright_moon())
+    approach = plan.passages[0]
+    short = [shot for shot in approach.shots if shot.peak_of == "moon"]
+    long = [shot for shot in approach.shots if shot.peak_of == "neptune"]
+    assert max(shot.exposure_s for shot in short) * 3 < min(shot.exposure_s for shot in long)
+    assert sum(shot.count for shot in short) == sum(shot.count for shot in long)
+    assert all(shot.peak_of == "moon" for shot in next(p for p in plan.passages if p.name == "hidden").shots)
+    _, _, start, exposure = frame_starts(plan)
+    assert not len(overlaps(start, exposure, plan.rig.sensor.readout_s))
+    assert "no-exposure-does-both" in {finding.rule for finding in plan.findings}
+
+
+def test_a_script_takes_turns_too():
+    import subprocess
+
+    from planner.sequence.script import script_text
+
+    script = script_text(build_plan(neptune_beside_a_bright_moon()), "cam {exposure_s}")
+    done = subprocess.run(
+        ["sh"],
+        input=script,
+        capture_output=True,
+        text=True,
+        env={"PATH": "/usr/bin:/bin", "DRY_RUN": "1"},
+        timeout=60,
+    )
+    assert done.returncode == 0, done.stderr
+    lines = [line for line in done.stdout.splitlines() if line.startswith("at ")]
+    times = [int(line.split()[1].rstrip(":")) for line in lines]
+    assert times == sorted(times)
+    assert lines[0].endswith("cam 0.03")
+    assert lines[1].split()[-1] != lines[0].split()[-1]
