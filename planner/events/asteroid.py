@@ -12,7 +12,7 @@ import numpy as np
 from planner.errors import InputError
 from planner.events import cautions
 from planner.events.budget import angle_term, moments, site_terms
-from planner.events.contacts import RAD_ARCSEC, Passing, Shape
+from planner.events.contacts import RAD_ARCSEC, Passing, Shape, star_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
 from planner.events.occulter import Occulter, disc_of, magnitude_drop, occulter_of, star_of
@@ -22,8 +22,6 @@ from planner.sky import bodies, places, stars, timescale
 from planner.sky.observer import Observer
 from planner.sky.timescale import DAY_S
 
-# A star is put so far away that a site has no parallax on it: 1e15 km, 30 parsec.
-_STAR_DISTANCE_KM = 1e15
 _STEP_S = 2.0 * 3600.0
 _BLOCK_S = 400.0 * DAY_S
 _CLOSEST_REACH_S = 0.3 * DAY_S
@@ -240,13 +238,7 @@ class AsteroidOccultsStar:
         return body
 
     def _passing(self, occulter: Occulter, star: stars.Star, observer: Observer | None) -> Passing:
-        return Passing(
-            occulter.track,
-            lambda where, tt_s: star.vector(where, tt_s) * _STAR_DISTANCE_KM,
-            occulter.shape,
-            Shape(0.0),
-            observer,
-        )
+        return Passing(occulter.track, star_track(star), occulter.shape, Shape(0.0), observer)
 
     def _passings(
         self,

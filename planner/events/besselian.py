@@ -12,7 +12,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from planner.events.contacts import RAD_ARCSEC
+from planner.events.contacts import RAD_ARCSEC, STAR_DISTANCE_KM
 from planner.events.roots import minima_near, roots_between
 from planner.sky import ephemeris, observer, places, pole, timescale
 from planner.sky.bodies import C_KM_S, EARTH_RADIUS_KM
@@ -31,8 +31,6 @@ _CLOSEST_REACH_S = _HALF_SPAN_S - _CONTACT_REACH_S
 _HALF_STEP_S = 0.1
 # After two steps closest approaches are known to some 10 arcsec: passings beyond half a degree are left there.
 _WORTH_A_LOOK_RAD = np.radians(0.5)
-# A star is put so far away that a site has no parallax on it: 1e15 km, 30 parsec.
-STAR_DISTANCE_KM = 1e15
 
 
 @dataclass(frozen=True)

@@ -10,25 +10,52 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Protocol
 
 import numpy as np
 
 from planner.events.roots import minima_near, roots_between
 from planner.sky import places
 from planner.sky.observer import Observer
+from planner.sky.stars import Star
 
 RAD_ARCSEC = places.RAD_ARCSEC
 
 
+# A star is put so far away that a site has no parallax on it: 1e15 km, 30 parsec.
+STAR_DISTANCE_KM = 1e15
 _SPEED_STEP_S = 60.0
 
-# Where something is: (observer, TT seconds) to vectors (3, n) in km from the observer, with light-time.
-Track = Callable[[Observer | None, np.ndarray], np.ndarray]
+
+class Track(Protocol):
+    """Where something is: vectors (3, n) in km from the observer, with light-time.
+
+    `here_km`, the observer's barycentric position, saves work when it is at hand.
+    """
+
+    def __call__(
+        self, observer: Observer | None, tt_s: np.ndarray, here_km: np.ndarray | None = None
+    ) -> np.ndarray:
+        """Return the vectors at these times."""
+        ...
 
 
 def body_track(body: str) -> Track:
     """Return the track of the Sun, the Moon or a planet."""
-    return lambda observer, tt_s: places.direction(body, observer, tt_s).vector_km
+
+    def track(observer: Observer | None, tt_s: np.ndarray, here_km: np.ndarray | None = None) -> np.ndarray:
+        return places.direction(body, observer, tt_s, here_km).vector_km
+
+    return track
+
+
+def star_track(star: Star) -> Track:
+    """Return the track of a star, with proper motion and annual parallax, at the distance of a point."""
+
+    def track(observer: Observer | None, tt_s: np.ndarray, here_km: np.ndarray | None = None) -> np.ndarray:
+        return star.vector(observer, tt_s, here_km) * STAR_DISTANCE_KM
+
+    return track
 
 
 @dataclass(frozen=True)
@@ -119,8 +146,10 @@ class Passing:
 
     def sight(self, tt_s: np.ndarray) -> Sight:
         """Return both bodies at these times."""
-        tt_s = np.asarray(tt_s, dtype=float)
-        return Sight(tt_s, self.near(self.observer, tt_s), self.far(self.observer, tt_s))
+        tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
+        here_km = places.observer_position_km(self.observer, tt_s)
+        near_km = self.near(self.observer, tt_s, here_km)
+        return Sight(tt_s, near_km, self.far(self.observer, tt_s, here_km))
 
     def radii_rad(self, sight: Sight, inner: bool = False) -> tuple[np.ndarray, np.ndarray]:
         """Return the angular radii of near and far body along the line between their centres.

@@ -22,9 +22,9 @@ LIMB_RELIEF_KM = 2.6 * SMOOTH_LIMB_SIGMA_KM
 SMOOTH_LIMB_TEXT = "smooth, about the centre of figure (1.2 km from the centre of mass)"
 
 
-def limb_track(observer: Observer | None, tt_s: np.ndarray) -> np.ndarray:
+def limb_track(observer: Observer | None, tt_s: np.ndarray, here_km: np.ndarray | None = None) -> np.ndarray:
     """Return the centre of the Moon's smooth limb from the observer, (3, n) in km: 1.2 km from the centre of mass."""
-    return places.direction("moon", observer, tt_s).vector_km + limb_centre_km(tt_s)
+    return places.direction("moon", observer, tt_s, here_km).vector_km + limb_centre_km(tt_s)
 
 
 def limb_disc(observer: Observer | None, tt_s: np.ndarray, radii: str | None) -> discs.SkyDisc:

@@ -9,10 +9,9 @@ from typing import Any
 import numpy as np
 
 from planner.errors import InputError
-from planner.events.besselian import STAR_DISTANCE_KM
 from planner.events.budget import angle_term, ephemeris_term, moments, site_terms
 from planner.events.catalogue import predicted
-from planner.events.contacts import RAD_ARCSEC, Passing, Shape
+from planner.events.contacts import RAD_ARCSEC, Passing, Shape, star_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry, Series
 from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
 from planner.events.limb import contact, crossings
@@ -254,13 +253,7 @@ class MoonOccultsStar:
 
     def _passing(self, star: stars.Star, observer: Observer | None, radii: str | None) -> Passing:
         moon = Shape(bodies.radii_km("moon", radii)[0])
-        return Passing(
-            limb_track,
-            lambda where, tt_s: star.vector(where, tt_s) * STAR_DISTANCE_KM,
-            moon,
-            Shape(0.0),
-            observer,
-        )
+        return Passing(limb_track, star_track(star), moon, Shape(0.0), observer)
 
     def _event(self, name: str, middle_tt_s: float, spec: EventSpec | None = None) -> Event:
         return Event(

@@ -48,9 +48,12 @@ class Occulter:
         """Equatorial radius."""
         return self.shape.equatorial_km
 
-    def track(self, observer: Observer | None, tt_s: np.ndarray) -> np.ndarray:
+    def track(
+        self, observer: Observer | None, tt_s: np.ndarray, here_km: np.ndarray | None = None
+    ) -> np.ndarray:
         """Return vectors (3, n) from the observer, with light-time."""
-        return seen_from(self.state, places.observer_position_km(observer, tt_s), tt_s)[0]
+        here = places.observer_position_km(observer, tt_s) if here_km is None else here_km
+        return seen_from(self.state, here, tt_s)[0]
 
     def place_shifts_rad(self, tt_s: float) -> np.ndarray:
         """Return independent 1-sigma shifts of its geocentric place as vectors (k, 3) on the sky, in radians."""

@@ -143,6 +143,7 @@ class SolarTransit:
             "chord_arcsec": 2.0 * float(np.sqrt(max(0.0, sun_sd**2 - least**2))),
             "rate_arcsec_s": float(moments(passing, greatest, np.array([True])).rate_rad_s[0]) * RAD_ARCSEC,
             "duration_s": float(outer[1] - outer[0]) if crosses else 0.0,
+            "crossing": "none" if not crosses else "whole" if np.isfinite(inner).all() else "partial (graze)",
             **seen,
         }
         return Circumstances(

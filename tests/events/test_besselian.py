@@ -5,8 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from planner.events.besselian import STAR_DISTANCE_KM
-from planner.events.contacts import Passing, Shape
+from planner.events.contacts import Passing, Shape, star_track
 from planner.events.moon import limb_track
 from planner.events.moon_planet import MoonOccultsPlanet
 from planner.events.moon_search import as_table, moon_candidates, zodiac_stars
@@ -37,7 +36,7 @@ def test_contacts_from_polynomials_agree_with_direct_evaluation(year, site):
         star = stars.star(stars.star_names(rows[candidates.star[k] : candidates.star[k] + 1])[0])
         passing = Passing(
             limb_track,
-            lambda where, t, star=star: star.vector(where, t) * STAR_DISTANCE_KM,
+            star_track(star),
             Shape(bodies.radii_km("moon")[0]),
             Shape(0.0),
             site,

@@ -196,3 +196,18 @@ def test_a_date_outside_the_ephemeris_names_its_span():
 
     with pytest.raises(InputError, match=r"event\.date.*allowed is 1550"):
         family(FAMILY).nearest(EventSpec(FAMILY, "venus", -5e10))
+
+
+def test_a_grazing_transit_is_called_partial_and_has_two_contacts():
+    # 1937-05-11: Mercury grazed the Sun's southern limb, seen from southern lands only (handbooks, from memory)
+    one = family(FAMILY)
+    event = one.nearest(spec(FAMILY, "mercury", "1937-05-11"))
+    kinds = {}
+    for latitude in np.arange(-90.0, 91.0, 5.0):
+        found = one.predict(event, Observer("x", latitude, 60.0, 0.0))
+        kinds.setdefault(found.facts["crossing"], found)
+    assert {"none", "partial (graze)"} <= set(kinds)
+    grazing = kinds["partial (graze)"]
+    assert [i.name for i in grazing.instants] == ["contact_1", "greatest", "contact_4"]
+    assert "passes the Sun's limb" in kinds["none"].reason
+    assert not kinds["none"].happens
