@@ -31,7 +31,10 @@ from planner.sky.observer import Observer
 J2000 = 2451545.0
 DAY_S = 86400.0
 YEAR_S = timescale.YEAR_S
-NAMES = {"sun": "sun", "moon": "moon", "mercury": "mercury", "venus": "venus"}
+NAMES = {"sun": "sun", "moon": "moon", "earth": "earth", "mercury": "mercury", "venus": "venus"}
+# Both routes bend light by the Sun alone. Jupiter and Saturn, which skyfield adds by default, move stations of Uranus
+# and Neptune by up to 5 s and 1 s when these stand near them (1950-2050), other planets' by under 0.05 s.
+BENDERS = (10,)
 PLANETS = ("mercury", "venus", "mars", "jupiter", "saturn")
 SITE = Observer("invented site", 34.93, 32.87, 1420.0)
 FURTHER_SITE = Observer("another invented site", -31.2, 149.1, 1100.0)
@@ -57,12 +60,6 @@ class Reference:
         return self.body("earth") + wgs84.latlon(
             observer.latitude_deg, observer.longitude_deg, observer.height_m
         )
-
-
-NAMES["earth"] = "earth"
-# Both routes bend light by the Sun alone. Jupiter and Saturn, which skyfield adds by default, move stations of Uranus and
-# Neptune by up to 5 s and 1 s when these stand near them (1950-2050), other planets' by under 0.05 s.
-BENDERS = (10,)
 
 
 def reference_contacts(reference, origin, near, far, near_km, far_km, start_s, end_s, step_day, limit_rad):
