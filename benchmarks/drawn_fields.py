@@ -80,8 +80,13 @@ class DrawnField:
 
 
 def draw(
-    rig: DrawnRig, rng: np.random.Generator, clouded: bool = False, parity: int | None = None
+    rig: DrawnRig,
+    rng: np.random.Generator,
+    clouded: bool = False,
+    parity: int | None = None,
+    optics: tuple[float, tuple[float, float], float] | None = None,
 ) -> DrawnField:
+    """Draw one field anywhere on the sky; `optics` (k1, axis, focal length in px) holds the lens of a rig."""
     from planner.sky.stars import all_stars
 
     stars = _stars(all_stars)
@@ -93,6 +98,8 @@ def draw(
         (rig.height_px - 1) / 2 + rng.normal(0, 0.005) * half,
     )
     k1 = rng.uniform(-0.01, 0.01)
+    if optics is not None:
+        k1, axis, focal = optics
     radius = np.arctan(half / focal) * 1.1
     inside = np.flatnonzero(stars["vectors"] @ axes[2] > np.cos(radius))
     vectors = stars["vectors"][inside]

@@ -15,6 +15,7 @@ GATE_SIGMAS = 3.5
 _SHARPEST_PX = 0.25  # a detection is never trusted better than this while matching
 _GROWN_ENOUGH = 120  # pairs after which growing ends and the whole catalogue is matched
 _NEIGHBOURS = 6
+_ENOUGH_TESTED, _PROMISING_LOG10 = 12, -0.5  # when a hypothesis is dropped
 _MIX_UP = 0.05  # chance of another detection in the gate up to which a star is matched
 
 
@@ -131,13 +132,13 @@ def grow(
     sky: Sky,
     detection: np.ndarray,
     star: np.ndarray,
-    give_up_log10: float = -2.5,
 ) -> Match | None:
     """Grow the pairs (`detection`, `star`) of a hypothesis over the frame; None when the evidence speaks against it.
 
     Each catalogue star is tested once, when the camera fitted without it predicts it; those predicted best come
-    first. `give_up_log10`: likelihood ratio at which a hypothesis is dropped.
+    first. A hypothesis is dropped when a dozen stars say nothing for it.
     """
+    sky, star, row = _in_reach(start, field, sky, star)
     evidence = Evidence()
     tested = np.zeros(len(sky), dtype=bool)
     tested[star] = True
@@ -165,7 +166,7 @@ def grow(
         used = met & np.isin(nearest, detection)
         evidence.add(met[~used], -np.expm1(-density[~used] * np.pi * gate_now[~used] ** 2))
         tested[now] = True
-        if evidence.log_ratio.max() < give_up_log10 * np.log(10):
+        if evidence.tested >= _ENOUGH_TESTED and evidence.chance_log10(1) > _PROMISING_LOG10:
             return None
         taken = np.flatnonzero(met & ~used)
         taken = taken[np.argsort(distance[taken] / gate_now[taken], kind="stable")]
@@ -178,7 +179,19 @@ def grow(
             bright = _bright(field, sky, detection, star)
         if len(star) >= _GROWN_ENOUGH:
             break
-    return Match(fit, detection, star, evidence, bright)
+    return Match(fit, detection, row[star], evidence, bright)
+
+
+def _in_reach(camera: Camera, field: Field, sky: Sky, star: np.ndarray) -> tuple[Sky, np.ndarray, np.ndarray]:
+    """Return the stars that the frame could show, the hypothesis's own among them, and their rows in `sky`."""
+    if camera.projection == "TAN":
+        radius = np.arctan(1.15 * field.half_diagonal_px / camera.focal_px)
+    else:
+        radius = min(1.15 * field.half_diagonal_px / camera.focal_px, np.pi)
+    near = sky.vectors @ camera.axes[2] > np.cos(radius)
+    near[star] = True
+    row = np.flatnonzero(near)
+    return sky.take(row), np.searchsorted(row, star), row
 
 
 def settle(match: Match, lens: Lens, field: Field, sky: Sky, limit: int = 2500) -> Match:
