@@ -7,6 +7,7 @@ from pathlib import Path
 from typing import Any
 
 from imaging.compose import files, truth
+from imaging.compose.arc import Landscape, arc_over_landscape
 from imaging.compose.choices import Choices
 from imaging.compose.disc_path import disc_path
 from imaging.compose.light import Light
@@ -69,18 +70,23 @@ class Outputs:
             refuse_existing(self.html, self.force)
 
 
-def compose_picture(material: Material, choices: Choices, other: Material | None = None) -> Picture:
+def compose_picture(
+    material: Material, choices: Choices, other: Material | None = None, landscape: Landscape | None = None
+) -> Picture:
     """Return the composite that suits the event, or the registration the user chose; raises InputError.
 
-    `other`: the same event from a second site, laid into the first one's picture.
+    `other`: the same event from a second site, laid into the first one's picture. `landscape`: what to lay a campaign's
+    target over.
     """
     registration = material.reference if choices.registration == "auto" else choices.registration
     light = Light(
         bias_adu=material.plan.rig.sensor.bias_adu,
         colour=choices.colour,
-        ringless=registration == "stars",
+        ringless=registration == "stars" or landscape is not None,
         threads=choices.threads,
     )
+    if landscape is not None:
+        return arc_over_landscape(material, landscape, choices, light)
     if registration == "target":
         return phase_series(material, choices, light)
     if registration == "stars" and material.reference != "stars":

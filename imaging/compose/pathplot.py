@@ -115,7 +115,8 @@ def _metadata(path: Path, data: PathData) -> dict[str, Any]:
 
 def _view(data: PathData) -> tuple[float, float, float, float]:
     if data.on_disc:
-        reach = 1.17 * data.disc_radius_arcsec
+        away = np.hypot(*data.points).max(initial=0.0) / data.disc_radius_arcsec
+        reach = max(1.17, min(away + 0.1, 1.8)) * data.disc_radius_arcsec
         return -reach, reach, -reach, reach
     x, y = data.line
     pad = 0.16 * max(np.ptp(x), np.ptp(y))

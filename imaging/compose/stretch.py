@@ -66,21 +66,23 @@ def background(image: np.ndarray) -> tuple[float, float]:
 
 
 def measured_stretch(image: np.ndarray, tone: str, faintest: float = np.inf) -> Stretch:
-    """Return the stretch for a picture of this tone (`disc`, `stars`, `linear`), measured on it.
+    """Return the stretch for a picture of this tone (`disc`, `stars`, `photograph`, `linear`), measured on it.
 
     Stars: the background goes to a dark grey, the brightest pixels (99.98 %) to white. Disc: what lies off the
     disc goes to black, the brightest hundredth of the disc to just under white; where a body of peak value
-    `faintest` would be lost beside it, the curve bends until it is seen.
+    `faintest` would be lost beside it, the curve bends until it is seen. A photograph keeps its own tones.
     """
     values = _sample(image)
     if not values.size:
         return Stretch("linear", 0.0, 1.0)
     top = float(np.percentile(values, 99.98))
     level, sigma = background(image)
+    if tone == "photograph":
+        return Stretch("srgb", 0.0, 1.0)
     if tone == "linear":
         return Stretch("linear", min(0.0, float(values.min())), max(float(values.max()), 1e-6))
     if tone == "disc":
-        black = float(np.percentile(values, 2.0))
+        black = _sky_beside(values, top)
         half = black + 0.25 * (top - black)
         lit = values[values > half]
         bright = float(np.percentile(lit, 99.0)) if lit.size else top
@@ -93,6 +95,13 @@ def measured_stretch(image: np.ndarray, tone: str, faintest: float = np.inf) -> 
     black = level - 3.0 * max(sigma, 1e-6 * abs(level), 1e-9)
     white = max(top, level + 50 * max(sigma, 1e-9))
     return Stretch("asinh", black, white, _softening(level - black, white - black))
+
+
+def _sky_beside(values: np.ndarray, top: float) -> float:
+    """Return the level of the sky beside a disc: where the darkest tenth of the tones crowds."""
+    low = float(np.percentile(values, 1.0))
+    dark = values[values < low + 0.05 * (top - low)]
+    return float(np.median(dark)) if dark.size > 100 else low
 
 
 def _softening(value: float, span: float, wanted: float = SKY_TONE) -> float:

@@ -86,7 +86,7 @@ def caption(material: Material, picture: Picture) -> str:
     first, last = picture.used[0][0].tt_s, picture.used[0][0].tt_s
     for frame, _ in picture.used:
         first, last = min(first, frame.tt_s), max(last, frame.tt_s)
-    names = {"sun": "the Sun", "moon": "the Moon", "stars": "the stars"}
+    names = {"sun": "the Sun", "moon": "the Moon", "stars": "the stars", "horizon": "the horizon"}
     start, end = utc_iso(first, 0), utc_iso(last, 0)
     span = f"{start[:10]} {start[11:16]} to {end[11:16] if end[:10] == start[:10] else end[:10] + ' ' + end[11:16]} UTC"
     apart = [item.displacement_arcsec for item in picture.drawn if math.isfinite(item.displacement_arcsec)]

@@ -68,6 +68,11 @@ class _Several(click.ParamType):
 )
 @click.option("--second-site", type=click.Path(path_type=Path), nargs=3, metavar="PLAN TRACK FRAMES",
               help="The same transit from another place, drawn on the same disc.")  # fmt: skip
+@click.option(
+    "--landscape", type=click.Path(path_type=Path), help="A photograph to draw a campaign's target over."
+)
+@click.option("--view", metavar="AZ,WIDTH,ROW",
+              help="The landscape's middle azimuth and width in degrees, and the row of the true horizon.")  # fmt: skip
 @click.option("--linear", is_flag=True, help="No stretch: tones proportional to light.")
 @click.option("--formats", type=_Several(PICTURE_FORMATS), default="fits,png", show_default=True)
 @click.option("--plots", type=_Several(PLOT_FORMATS), default="png,svg", show_default=True)
@@ -119,6 +124,7 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     if chosen["second_site"]:
         second_plan, second_track, second_frames = chosen["second_site"]
         other = gather(load_plan(second_plan), second_track, second_frames)
+    landscape = _landscape(chosen["landscape"], chosen["view"])
     zone, zone_label = UTC, "UTC"
     if chosen["local_time"]:
         zone, zone_label = ZoneInfo(document.site.timezone), document.site.timezone
@@ -134,7 +140,7 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
             scratch=chosen["scratch"],
             tick=tick,
         )
-        picture = compose_picture(material, choices, other)
+        picture = compose_picture(material, choices, other, landscape)
         data = path_data(material, choices, zone, zone_label)
     paths, statement = write_picture(material, picture, outputs, data)
     paths += write_plots(data, outputs)
@@ -152,3 +158,20 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     if len(aside) > 10:
         click.echo(f"... and {len(aside) - 10} more, listed in {outputs.statement}", err=True)
     return errors.EXIT_WITH_RESERVATIONS if aside else errors.EXIT_DONE
+
+
+def _landscape(path: Path | None, view: str | None):  # type: ignore[no-untyped-def]
+    """Return the landscape asked for, or None."""
+    if path is None and view is None:
+        return None
+    from imaging.compose.arc import Landscape
+
+    try:
+        azimuth, width, row = (float(part) for part in (view or "").split(","))
+    except ValueError:
+        raise errors.InputError(
+            f"--view: found {view!r}; a landscape needs AZ,WIDTH,ROW, such as 265,40,1980"
+        ) from None
+    if path is None:
+        raise errors.InputError("--view: belongs to --landscape, which is missing")
+    return Landscape(path, azimuth, width, row)

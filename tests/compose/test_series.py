@@ -8,6 +8,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
+from imaging.compose.arc import Landscape
 from imaging.compose.canvas import Canvas
 from imaging.compose.choices import Choices
 from imaging.compose.composing import compose_picture
@@ -211,3 +212,44 @@ def test_a_place_on_the_plane_comes_back_from_a_disc_frame():
     assert pointing.pixel_to_sky(*pointing.sky_to_pixel(ra, dec)) == pytest.approx(
         (float(ra), float(dec)), abs=1e-9
     )
+
+
+def test_the_arc_stands_at_its_altitudes_over_the_landscape(loop, tmp_path):
+    """Each place measured back from the picture with the pinhole formula, and the ground is left as it was."""
+    from PIL import Image
+
+    shown = np.full((900, 1600), 40, np.uint8)
+    shown[700:] = 15
+    Image.fromarray(shown).save(tmp_path / "hill.png")
+    material = material_of(loop)
+    geometry = material.geometry
+    azimuth = float(np.median(geometry.azimuth_deg))
+    landscape = Landscape(
+        tmp_path / "hill.png", azimuth, 100.0, 1500.0
+    )  # Mars culminates near the zenith: look up
+    picture = compose_picture(material, Choices(instants=12), landscape=landscape)
+    focal_px = 800 / np.tan(np.radians(50))
+    assert len(picture.drawn) >= 2
+    tilt = np.arctan((1500 - 449.5) / focal_px)
+    for item in picture.drawn:
+        g = material.geometry_at(np.array([item.frame.tt_s]))
+        alt, az = np.radians(g.altitude_deg[0]), np.radians(g.azimuth_deg[0] - azimuth)
+        forward, right, up = np.cos(alt) * np.cos(az), np.cos(alt) * np.sin(az), np.sin(alt)
+        depth = forward * np.cos(tilt) + up * np.sin(tilt)
+        x = 799.5 + focal_px * right / depth
+        y = 449.5 + focal_px * (up * np.cos(tilt) - forward * np.sin(tilt)) / depth
+        assert (item.x_px, item.y_px) == pytest.approx((x, y), abs=0.01)
+        ground = ((40 / 255 + 0.055) / 1.055) ** 2.4
+        row, column = round(item.y_px), round(item.x_px)
+        assert picture.image[row - 1 : row + 2, column - 1 : column + 2].max() > 2 * ground
+    assert np.median(picture.image[:100]) == pytest.approx(((15 / 255 + 0.055) / 1.055) ** 2.4, rel=1e-3)
+
+
+def test_a_landscape_that_looks_elsewhere_says_where_the_target_is(loop, tmp_path):
+    from PIL import Image
+
+    Image.fromarray(np.zeros((90, 160), np.uint8)).save(tmp_path / "hill.png")
+    with pytest.raises(InputError, match="stands at azimuth"):
+        compose_picture(
+            material_of(loop), Choices(), landscape=Landscape(tmp_path / "hill.png", 0.0, 5.0, 80.0)
+        )
