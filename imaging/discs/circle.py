@@ -123,28 +123,29 @@ def _lags(left: np.ndarray, count: int) -> int:
 
 
 def limb_motion(sectors: Sectors, circle: CircleFit) -> tuple[float, float]:
-    """Return the rms displacement of the limb (px) without photon noise, and its correlation length (px).
+    """Return the rms displacement of points of the limb (px) without photon noise, and its correlation length (px).
 
-    From the autocovariance of residuals between neighbouring sectors, to which photon noise adds nothing:
-    m^2 exp(-(d/L)^2). Zero and the sector's length when neighbours do not move together.
+    The displacement of points is taken as m^2 exp(-(d/L)^2); a sector shows its mean over the sector's length. L
+    follows from how alike neighbouring sectors are, m from the variance of all beyond that of photons. Zero when there
+    is no such excess by three sigma.
     """
     step = 2 * np.pi * circle.radius / sectors.angle.size
     left = np.where(circle.used, circle.residual, np.nan)
-    number = int(np.isfinite(left).sum())
+    number = int(circle.used.sum())
     if number < 12:
         return 0.0, step
-    covariances = []
-    for lag in range(1, 4):
-        product = left * np.roll(left, -lag)
-        covariances.append(float(np.nanmean(product)) if np.isfinite(product).any() else 0.0)
-    total = float(np.nanmean(left**2))
-    first, second = covariances[0], covariances[1]
-    if first < 2 * total / np.sqrt(number):
+    total = float(np.nanmean(left**2)) * number / max(number - 3, 1)
+    photons = float(np.mean(sectors.sigma[circle.used] ** 2))
+    excess = total - photons
+    if excess < 3 * total * np.sqrt(2 / number):
         return 0.0, step
-    if 0 < second < first:
-        # ln(first / second) = 3 step^2 / L^2
-        length = float(np.clip(step * np.sqrt(3 / np.log(first / second)), 0.5 * step, 20 * step))
-    else:
-        length = step if second <= 0 else 20 * step
-    squared = min(first * np.exp((step / length) ** 2), total)
-    return float(np.sqrt(squared)), length
+    product = left * np.roll(left, -1)
+    alike = float(np.nanmean(product)) / excess if np.isfinite(product).any() else 0.0
+    # mean of the law over two pieces of one sector (lag 0) and over one sector and the next (lag 1)
+    lengths = np.geomspace(0.2, 12.0, 60)
+    place = (np.arange(24) + 0.5) / 24
+    apart = place[:, None] - place[None, :]
+    same = np.array([np.mean(np.exp(-((apart / length) ** 2))) for length in lengths])
+    following = np.array([np.mean(np.exp(-(((apart + 1) / length) ** 2))) for length in lengths])
+    chosen = float(np.interp(alike, following / same, lengths))
+    return float(np.sqrt(excess / np.interp(chosen, lengths, same))), chosen * step

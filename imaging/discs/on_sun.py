@@ -24,8 +24,8 @@ def planet_on_sun(
 
     `x_px`, `y_px`: where it is looked for, to within `search_px`. `radius_px`: the expected radius; fitted when
     `radius_free`. `sun`: the limb fit of the same frame, which gives limb and blur. Within 1.5 of the Cramér-
-    Rao bound and unbiased to 0.06" down to a gap of 1" to the limb. Raises NoSolutionError when no dark disc of
-    this size is there.
+    Rao bound and unbiased to 0.06" down to a gap of 1" to the limb; the error stated includes what seeing
+    moves, as the limb shows it. Raises NoSolutionError when no dark disc of this size is there.
     """
     blur = sun.blur
     reach = radius_px + 5 * blur.sigma_px + 3
@@ -49,7 +49,7 @@ def planet_on_sun(
         scene.components,
         start,
         step,
-        lambda model: np.maximum(model, 0.03 * model.max()),
+        lambda model: np.maximum(model, 0.005 * model.max()),
         prior=prior,
         limit=np.array([reach, reach, 1.2, 0.5, 3.0]),
     )
@@ -62,11 +62,12 @@ def planet_on_sun(
     if depth < 0.8:
         notes = (f"the planet is {depth:.2f} as dark as a black disc: haze, stray light or a spot",)
     x, y = float(fit.parameters[0]), float(fit.parameters[1])
+    covariance = fit.covariance[:2, :2] + np.eye(2) * moved_by_seeing(radius_px, sun) ** 2
     radius = radius_px * float(np.exp(fit.parameters[3]))
     return DiscPlace(
         x,
         y,
-        fit.covariance[:2, :2],
+        covariance,
         radius,
         float(radius * np.sqrt(fit.covariance[3, 3])) if radius_free else 0.0,
         Blur(float(np.exp(fit.parameters[2])), blur.wing),
@@ -78,6 +79,19 @@ def planet_on_sun(
         int(stamp.clipped.sum()),
         notes,
     )
+
+
+def moved_by_seeing(radius_px: float, sun: LimbFit) -> float:
+    """Return the rms (px, one coordinate) by which seeing moves a small disc, from how it moves the Sun's limb.
+
+    The centre follows the displacements m of the disc's own outline, alike over the correlation length L as
+    exp(-(d/L)^2): m^2 / pi times the integral of cos^2 a exp(-(2 R sin(a/2) / L)^2) over a turn.
+    """
+    if sun.motion_px <= 0:
+        return 0.0
+    angle = np.linspace(-np.pi, np.pi, 361)[:-1]
+    chord = 2 * radius_px * np.sin(angle / 2) / max(sun.correlation_px, 1e-6)
+    return float(sun.motion_px * np.sqrt(2 * np.mean(np.cos(angle) ** 2 * np.exp(-(chord**2)))))
 
 
 class _Scene:
