@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -85,6 +85,21 @@ def compose_picture(
         ringless=registration == "stars" or landscape is not None,
         threads=choices.threads,
     )
+    picture = _picture(material, registration, choices, light, other, landscape)
+    if len(light.filters) > 1:
+        mixed = f"frames through different filters ({', '.join(sorted(light.filters))}) are combined as if they were one"
+        picture = replace(picture, notes=(*picture.notes, mixed))
+    return picture
+
+
+def _picture(
+    material: Material,
+    registration: str,
+    choices: Choices,
+    light: Light,
+    other: Material | None,
+    landscape: Landscape | None,
+) -> Picture:
     if landscape is not None:
         return arc_over_landscape(material, landscape, choices, light)
     if registration == "target":

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import os
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -26,20 +26,25 @@ class Level:
 
 @dataclass(frozen=True)
 class Light:
-    """How frames are turned into light: the rig's bias, whether colour is kept, stars without dark rings, threads."""
+    """How frames are turned into light: the rig's bias, whether colour is kept, stars without dark rings, threads.
+
+    `filters` collects what the frames read were taken through.
+    """
 
     bias_adu: float = 0.0
     colour: bool = False
     ringless: bool = False
     threads: int = max(1, min(4, os.cpu_count() or 1))
+    filters: set[str] = field(default_factory=set)
 
     def read(self, registered: Registered) -> Frame:
         """Return a frame's pixels; raises FrameSetAside when the file is missing, moved or unreadable."""
         from imaging.frames.reading import read_frame
 
-        return read_frame(
-            registered.path, zone="UTC", index=registered.frame_index, colour=self.colour, file_time=False
-        )
+        frame = read_frame(registered.path, zone="UTC", index=registered.frame_index, colour=self.colour)
+        if frame.filter:
+            self.filters.add(frame.filter)
+        return frame
 
     def on_canvas(
         self,
@@ -65,7 +70,8 @@ class Light:
             return registered.pointing.sky_to_pixel(*plane_to_sky(*anchor_deg, east, north))
 
         if frame.colour is None:
-            return self._warp(frame.data - level.dark, canvas, to_frame, good) / level.unit
+            grey = self._warp(frame.data - level.dark, canvas, to_frame, good) / level.unit
+            return np.repeat(grey[..., None], 3, axis=2) if self.colour else grey
         planes = []
         for plane, (left, low), step in colour_planes(frame):
             mask = None if good is None else _thinned(good, step, plane.shape)

@@ -123,3 +123,18 @@ def test_impossible_choices_name_what_is_possible(copy, tmp_path, capsys, option
     code, _ = composed(copy, tmp_path / "out", *options)
     assert code == 2
     assert words in capsys.readouterr().err
+
+
+def test_frames_through_different_filters_are_said_to_be_mixed(copy, tmp_path):
+    for number, name in enumerate(names(copy)):
+        with fits.open(copy.frames / name, mode="update") as hdus:
+            hdus[0].header["FILTER"] = ("V", "R")[number % 2]
+    code, statement = composed(copy, tmp_path / "out")
+    assert code == 0
+    assert any("different filters (R, V)" in note for note in statement["notes"])
+
+
+def test_colour_asked_of_a_camera_without_is_grey_in_three_planes(copy, tmp_path):
+    code, statement = composed(copy, tmp_path / "out", "--colour")
+    assert code == 0
+    assert len(statement["drawn"]) == 3
