@@ -87,7 +87,7 @@ def compose_picture(
     )
     picture = _picture(material, registration, choices, light, other, landscape)
     if len(light.filters) > 1:
-        mixed = f"frames through different filters ({', '.join(sorted(light.filters))}) are combined as if they were one"
+        mixed = f"frames through different filters ({', '.join(sorted(light.filters))}) are combined as one"
         picture = replace(picture, notes=(*picture.notes, mixed))
     return picture
 
