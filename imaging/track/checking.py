@@ -17,7 +17,7 @@ from imaging.track.measurement import Measurement
 from imaging.track.nominal import Promise
 from imaging.track.path import PredictedPath
 from imaging.track.refinements import camera_findings, clock_findings, frame_findings, majority_camera
-from imaging.track.result import CheckResult, SetAside
+from imaging.track.result import CheckResult, SetAside, proper
 from imaging.track.sightings import Sightings
 from planner.errors import FrameSetAside, InputError, NoSolutionError
 from planner.sequence.models import Plan
@@ -259,7 +259,7 @@ def question_of(promise: Promise, target: str) -> Question:
         plan_middle_tt_s=promise.middle_tt_s,
         other_sites=sites,
         other_bodies=other_bodies(promise, target, reference),
-        target=target,
+        target=proper(target),
         center_sigma_arcsec=CENTER_SIGMA_ARCSEC.get(reference, 0.0),
     )
 

@@ -25,6 +25,7 @@ from planner.events.family import Geometry
 
 RADIUS_TOLERANCE = 0.01  # of a rig file's scale: focus and temperature change a focal length by less
 FULL_PHASE_DEG = 3.0  # below this phase angle the whole limb of the Moon is lit
+POINT_PX = 0.05  # radius of a star as the disc rooms take it: far below any blur
 LIT_HALF_DEG = 80.0  # how far to each side of its middle the lit limb is used
 PHASE_SEEN_DEG = 25.0  # above this phase angle the centre of light tells where the Sun stands
 TURNED_DEG = 15.0  # beyond this difference the light is believed, not the plan
@@ -326,7 +327,7 @@ def _plate(
 def _body(geometry: Geometry, radius_px: float, pixel_angle: Callable[[float], float]) -> Body:
     """Return what is known of the target's disc, turned to the frame; a star is a point."""
     if geometry.target not in geometry.discs:
-        return Body(geometry.target)
+        return Body(geometry.target, POINT_PX)
     disc = geometry.discs[geometry.target]
     return Body(
         name=geometry.target,
@@ -378,7 +379,7 @@ def _hidden(geometry: Geometry, expected: Expected) -> str | None:
         float(expected.reference_semidiameter_arcsec[0]),
         float(expected.target_semidiameter_arcsec[0]),
     )
-    name = geometry.target.capitalize()
+    name = geometry.target.capitalize() if geometry.target.islower() else geometry.target
     if geometry.reference == "sun" and apart > disc - NEAR_ARCSEC:
         where = "off the Sun's disc" if apart > disc + target else "at the Sun's limb"
         return f"{name} {AS_PREDICTED} {where}"

@@ -72,6 +72,7 @@ class Promise:
 
     def of_frame(self, frame: Frame) -> Nominal:
         """Return what is promised of a frame; outside the plan's hours the nearest planned frame speaks."""
+        assert frame.time is not None
         planned = self.planned
         at = int(np.argmin(np.abs(planned.middle_tt_s - frame.time.middle_tt_s)))
         late_s = abs(planned.middle_tt_s[at] - frame.time.middle_tt_s)

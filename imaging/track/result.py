@@ -85,8 +85,8 @@ class CheckResult:
         if not self.rows:
             return "No frame could be used."
         if not self.measured:
-            return f"{self.target.capitalize()} was measured in none of {frames(len(self.rows))}."
-        name = self.target.capitalize()
+            return f"{proper(self.target)} was measured in none of {frames(len(self.rows))}."
+        name = proper(self.target)
         if self.diagnosis is None or not self.diagnosis.explained:
             found = next((f for f in self.findings if f.name in ("unexplained", "ambiguous")), None)
             return found.sentence if found else f"The measured places do not follow the prediction of {name}."
@@ -100,6 +100,11 @@ class CheckResult:
         if not np.isfinite(self.clock_offset_sigma_s):
             return text + "; the clock could not be judged."
         return f"{text}; {clock_words(self.clock_offset_s, self.clock_offset_sigma_s)}."
+
+
+def proper(name: str) -> str:
+    """Return a name as it is written in a sentence: `Mars`, `HIP 92855`."""
+    return name.capitalize() if name.islower() else name
 
 
 def frames(count: int) -> str:

@@ -54,7 +54,7 @@ class Sightings:
         Instants may also be (k n,), k times the frames in turn.
         """
         expected = path.at(tt_s)
-        if self.on_disc:
+        if self.anchor_ra_deg is None or self.anchor_dec_deg is None:
             return np.column_stack([expected.east_arcsec, expected.north_arcsec])
         turns = len(expected.tt_s) // len(self)
         anchors = np.tile(self.anchor_ra_deg, turns), np.tile(self.anchor_dec_deg, turns)

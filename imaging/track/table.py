@@ -94,7 +94,7 @@ def write_track(path: Path, rows: Sequence[TrackRow], meta: dict[str, Any], forc
     for name, item in COLUMNS.items():
         values = [getattr(row, name) for row in rows]
         table[name] = Column(
-            np.array(values, dtype=kinds[item.type]),
+            np.array(values, dtype=kinds[str(item.type)]),
             unit=item.metadata["unit"],
             description=item.metadata["description"],
         )

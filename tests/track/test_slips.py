@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 
+import numpy as np
 import pytest
 
 from planner.cli.main import run_with
@@ -41,6 +42,28 @@ def test_a_slip_in_rendered_frames_is_named(tmp_path, capsys, brief, options, na
     assert told["verdict"] in (tmp_path / "out" / "report.html").read_text(encoding="utf-8").replace(
         "\u00a0", " "
     )
+
+
+def test_the_stated_sigma_of_the_clock_holds_when_seeing_moves_the_limb(tmp_path, capsys):
+    """Ten frames with 0.7 arcsec of limb motion, eight times: no pull beyond 3.5, and their spread near 1.
+
+    (8 runs know a spread to 25 %; 200 runs on tracks are in test_fit.py.)
+    """
+    plan, pulls = tmp_path / "p.plan.yaml", []
+    assert run_with(["plan", str(ROOT / "configs" / f"{TRANSIT}.yaml"), "-o", str(plan)]) == 0
+    for seed in range(8):
+        frames = tmp_path / f"frames{seed}"
+        faults = ["--frames", "12", "--binning", "8", "--limb-motion", "0.7", "--clock-offset", "7.3"]
+        command = ["rehearse", str(plan), "-o", str(frames), "--quiet", "--seed", str(seed + 1), *faults]
+        assert run_with(command) == 0
+        capsys.readouterr()
+        run_with(
+            ["check", str(plan), str(frames), "-o", str(tmp_path / f"out{seed}"), "--json", "--no-pictures"]
+        )
+        told = json.loads(capsys.readouterr().out)
+        pulls.append((told["clock_offset_s"] - 7.3) / told["clock_offset_sigma_s"])
+    assert np.max(np.abs(pulls)) < 3.5
+    assert 0.4 < np.std(pulls) < 1.8
 
 
 def test_a_plan_for_another_body_gets_no_place_from_its_frames(tmp_path, capsys):
