@@ -149,11 +149,6 @@ def test_an_occultation_seen_elsewhere_on_earth_does_not_happen_here_and_says_wh
 def test_a_partial_covering_is_called_one():
     one = family(FAMILY)
     event = one.nearest(spec(FAMILY, "venus", "2021-11-08"))
-    latitudes = np.linspace(10, 60, 200)
-    kinds = {
-        one.predict(event, Observer("x", float(lat), 139.7, 0.0)).facts["coverage"] for lat in latitudes[::10]
-    }
-    assert "complete" in kinds
     # the northern or southern limit: between complete and none lies a band where the limb cuts the disc
     low, high = 10.0, 60.0
     whole = [one.predict(event, Observer("x", lat, 139.7, 0.0)).facts["coverage"] for lat in (low, high)]

@@ -10,6 +10,7 @@ import pytest
 
 from planner.errors import InputError
 from planner.events.catalogue import FAMILIES, family
+from planner.events.moon_star import MoonOccultsStar
 from planner.events.transit import SolarTransit
 from planner.sky import timescale
 from planner.sky.observer import Observer
@@ -19,12 +20,17 @@ SEARCHED = [name for name in FAMILIES if name != "asteroid-occults-star"]
 YEAR_S = timescale.YEAR_S
 
 
+def searcher(name):
+    """Return a family; of stars only the four that are brighter than 1.6 near the ecliptic."""
+    return MoonOccultsStar(1.6) if name == "moon-occults-star" else family(name)
+
+
 @pytest.mark.parametrize("name", SEARCHED)
 @pytest.mark.parametrize("side", ["first", "last"])
 def test_a_search_runs_up_to_the_very_end_of_the_ephemeris(name, side):
     first, last = timescale.SPAN
     span = (first, first + 1.5 * YEAR_S) if side == "first" else (last - 1.5 * YEAR_S, last)
-    one = family(name)
+    one = searcher(name)
     events = one.search(*span)
     assert all(span[0] <= event.middle_tt_s <= span[1] for event in events)
     for event in events[:3]:
@@ -36,15 +42,15 @@ def test_a_search_runs_up_to_the_very_end_of_the_ephemeris(name, side):
 @pytest.mark.parametrize("name", SEARCHED)
 def test_a_search_beyond_the_ephemeris_names_its_span(name):
     with pytest.raises(InputError, match="allowed is 1550-01-0"):
-        family(name).search(timescale.SPAN[0] - YEAR_S, timescale.SPAN[0] + YEAR_S)
+        searcher(name).search(timescale.SPAN[0] - YEAR_S, timescale.SPAN[0] + YEAR_S)
 
 
 @pytest.mark.parametrize("year", [1600, 2600])
 @pytest.mark.parametrize("name", SEARCHED)
 def test_far_centuries_are_searched_like_this_one(name, year):
     start = (year - 2000.0) * YEAR_S
-    events = family(name).search(start, start + 3 * YEAR_S)
-    if name != "solar-transit":
+    events = searcher(name).search(start, start + 3 * YEAR_S)
+    if name not in ("solar-transit", "moon-occults-star"):
         assert events
     assert events == sorted(events, key=lambda event: event.middle_tt_s)
 
@@ -52,9 +58,9 @@ def test_far_centuries_are_searched_like_this_one(name, year):
 @pytest.mark.parametrize("name", SEARCHED)
 def test_a_span_in_two_halves_holds_the_same_events(name):
     start = 27.0 * YEAR_S
-    whole = [round(e.middle_tt_s) for e in family(name).search(start, start + 4 * YEAR_S)]
+    whole = [round(e.middle_tt_s) for e in searcher(name).search(start, start + 4 * YEAR_S)]
     middle = start + 2 * YEAR_S
-    halves = family(name).search(start, middle) + family(name).search(middle, start + 4 * YEAR_S)
+    halves = searcher(name).search(start, middle) + searcher(name).search(middle, start + 4 * YEAR_S)
     # instants found from other starting points agree to a second
     assert np.allclose(whole, [round(e.middle_tt_s) for e in halves], atol=1.0)
 
@@ -86,6 +92,6 @@ def test_mercury_crosses_the_sun_in_may_and_november_only():
 def test_search_reports_its_progress_to_the_end():
     for name in SEARCHED:
         steps = []
-        family(name).search(27 * YEAR_S, 27.3 * YEAR_S, tick=lambda *step, steps=steps: steps.append(step))
+        searcher(name).search(27 * YEAR_S, 27.3 * YEAR_S, tick=lambda *step, steps=steps: steps.append(step))
         assert steps
         assert steps[-1][0] == steps[-1][1]
