@@ -8,7 +8,7 @@ from pathlib import Path
 import numpy as np
 
 from planner.events.family import Circumstances
-from planner.events.listing import as_table
+from planner.events.listing import as_table, body_of
 from planner.outputs import whole_file
 from planner.provenance import content_hash, versions
 from planner.sky import timescale
@@ -31,7 +31,7 @@ def write_ecsv(
         {
             "title": [c.event.title for c, _ in rows],
             "family": [c.event.spec.family for c, _ in rows],
-            "body": [c.event.spec.body for c, _ in rows],
+            "body": [body_of(c.event) for c, _ in rows],
             "instant": [i.name for _, i in rows],
             "utc": [timescale.utc_iso(i.tt_s, 3) for _, i in rows],
             "sigma": np.array([i.sigma_s for _, i in rows]) * u.s,

@@ -9,7 +9,7 @@ from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 from planner.errors import InputError
 from planner.events.against import Comparison
-from planner.events.family import Circumstances, Instant
+from planner.events.family import Circumstances, Event, Instant
 from planner.sky import timescale
 from planner.sky.observer import Observer
 
@@ -47,7 +47,7 @@ def as_object(circumstances: Circumstances, brief: bool = False) -> dict[str, An
     event = circumstances.event
     found: dict[str, Any] = {
         "family": event.spec.family,
-        "body": event.spec.body,
+        "body": body_of(event),
         "title": event.title,
         "site": _site(circumstances.observer),
         "happens": circumstances.happens,
@@ -75,6 +75,11 @@ def as_object(circumstances: Circumstances, brief: bool = False) -> dict[str, An
             for series in circumstances.series
         ]
     return found
+
+
+def body_of(event: Event) -> str:
+    """Return what an event is about: its body, or its star."""
+    return event.spec.star or "" if event.spec.body in ("", "star") else event.spec.body
 
 
 def comparison_object(comparison: Comparison) -> dict[str, Any]:
@@ -196,7 +201,8 @@ def as_list(found: list[Circumstances], observer: Observer | None) -> str:
     zone = zone_of(observer)
     header = ["event", "what", "UTC", "apart"]
     if observer is not None:
-        header += ["civil time", "alt", "az", "Sun", "seen"]
+        header += ["civil time"] if _has_civil(observer) else []
+        header += ["alt", "az", "Sun", "seen"]
     rows = []
     for circumstances in found:
         instant = _foremost(circumstances)
@@ -210,7 +216,8 @@ def as_list(found: list[Circumstances], observer: Observer | None) -> str:
         if observer is not None:
             weeks = instant.name in _MIDDLES
             seen = f"{sum(one.visible for one in circumstances.instants)} of {len(circumstances.instants)}"
-            row += [_civil(instant.tt_s, 0, zone), _angle(instant.altitude_deg), _angle(instant.azimuth_deg)]
+            row += [_civil(instant.tt_s, 0, zone)] if _has_civil(observer) else []
+            row += [_angle(instant.altitude_deg), _angle(instant.azimuth_deg)]
             row += [_angle(dict(instant.extra).get("sun_altitude_deg", math.nan))]
             row = [*row[:-3], "", "", "", "weeks"] if weeks else [*row, seen]
         rows.append(row)
@@ -246,13 +253,19 @@ def _place_line(observer: Observer | None) -> str:
     east = "E" if observer.longitude_deg >= 0 else "W"
     return (
         f"{observer.name}: {abs(observer.latitude_deg):.4f} {north}, {abs(observer.longitude_deg):.4f} {east}, "
-        f"{observer.height_m:.0f} m, times also in {observer.timezone}"
+        f"{observer.height_m:.0f} m"
+        + (f", times also in {observer.timezone}" if _has_civil(observer) else "")
     )
+
+
+def _has_civil(observer: Observer | None) -> bool:
+    """Return whether a site has a civil time of its own."""
+    return observer is not None and observer.timezone != "UTC"
 
 
 def _header(observer: Observer | None, circumstances: Circumstances) -> list[str]:
     header = ["instant", "UTC"]
-    if observer is not None:
+    if _has_civil(observer):
         header.append("civil time")
     header += ["+- s", "largest term"]
     if _has_angles(circumstances):
@@ -275,7 +288,7 @@ def _rows(circumstances: Circumstances) -> list[list[str]]:
         decimals = 0 if instant.sigma_s >= 5.0 else 1
         utc = timescale.utc_iso(instant.tt_s, decimals)
         row = [_label(instant), utc.replace("T", " ").rstrip("Z")]
-        if observer is not None:
+        if _has_civil(observer):
             row.append(_civil(instant.tt_s, decimals, zone))
         row += [_sigma(instant.sigma_s), instant.largest_term or ""]
         extra = dict(instant.extra)
@@ -287,6 +300,7 @@ def _rows(circumstances: Circumstances) -> list[list[str]]:
             row += [_angle(instant.altitude_deg), _angle(instant.azimuth_deg)]
             row += [_angle(extra.get("sun_altitude_deg", math.nan))]
             words = [extra["limb"] + " limb"] if "limb" in extra and instant.name != "closest" else []
+            words = [] if words == [instant.limited_by] else words
             for key, what in _LATER.items():
                 if math.isfinite(extra.get(key, math.nan)):
                     words.append(f"{what} {extra[key]:+.1f} s")
