@@ -25,19 +25,20 @@ def peak_rate_e_s(
     mass = airmass(np.maximum(altitude_deg, 0.0))
     magnitude = radiometry.extinguished(disc.magnitude, mass, site.extinction_mag)
     scale = rig.scale_arcsec_px
-    unblurred = radiometry.disc_rate_e_s_px(
-        through, body, magnitude, disc.semidiameter_arcsec, disc.flattening, disc.phase_angle_deg, scale
-    )
+    radius_px = disc.semidiameter_arcsec / scale
     fwhm_px = radiometry.psf_fwhm_px(rig, site.seeing_arcsec, mass, 0.0)
-    lit = (1 + np.cos(np.radians(disc.phase_angle_deg))) / 2 if body != "sun" else 1.0
-    radius_px = disc.semidiameter_arcsec / scale * np.sqrt(lit)
-    kept = radiometry.blurred_peak_fraction(radius_px, fwhm_px)
-    total = radiometry.rate_e_s(through, magnitude)
-    own_px = radiometry.FWHM_OF_SIGMA * radius_px / 2  # a uniform disc has a variance of r^2 / 4 an axis
-    star_like = total * radiometry.star_peak_fraction(np.hypot(fwhm_px, own_px))
-    # a disc lost in the blur peaks like a star; a large one like its surface
-    resolved = own_px > 1.5 * fwhm_px
-    return np.where(resolved, unblurred * kept, np.minimum(unblurred * kept, star_like))
+    # a pixel blurs by the variance of its square, 1/12
+    blur_px = np.sqrt((fwhm_px / radiometry.FWHM_OF_SIGMA) ** 2 + 1 / 12)
+    shape = (disc.semidiameter_arcsec, disc.flattening, disc.phase_angle_deg)
+    resolved = radiometry.disc_rate_e_s_px(through, body, magnitude, *shape, scale, blur_px)
+    # a disc lost in the blur peaks like a star, a little wider: a uniform disc has a variance of r^2 / 4 an axis
+    own_px = radiometry.FWHM_OF_SIGMA * radius_px / 2
+    star_like = radiometry.rate_e_s(through, magnitude) * radiometry.star_peak_fraction(
+        np.hypot(fwhm_px, own_px)
+    )
+    # between the two, where neither is quite right, the one passes into the other
+    lost = np.clip((blur_px / radius_px - 0.3) / 0.5, 0.0, 1.0)
+    return resolved ** (1 - lost) * star_like**lost
 
 
 def eclipse_light(tt_s: np.ndarray) -> np.ndarray:

@@ -21,11 +21,17 @@ def middles(plan, wanted=lambda shot: True) -> np.ndarray:
     return np.sort(rows)
 
 
-@pytest.mark.parametrize(("name", "crop"), [(TRANSIT, 2700), (OCCULTATION, 2600)])
+@pytest.mark.parametrize(
+    ("name", "crop"),
+    [(TRANSIT, 2700), (OCCULTATION, 2600), ("moon_occults_star_2027", 2600), ("planets_meet_2028", 3600)],
+)
 def test_discs_peak_as_promised(name, crop):
     plan = example_plan(name)
-    rows = middles(plan)[::3]
+    rows = middles(
+        plan, lambda shot: name != "planets_meet_2028" or shot.name.endswith((", disc", ", disc 1"))
+    )[::4]
     scene = Scene.of(plan, rows, cut=Cut(crop_px=(crop, crop)))
+    assert len(rows)
     for position in range(len(rows)):
         peak = float(without_noise(scene, position).max())
         assert peak == pytest.approx(scene.shot(position).peak_e, rel=0.15)
@@ -44,6 +50,14 @@ def test_a_planet_among_stars_peaks_as_promised():
     assert ratios.mean() == pytest.approx(1.0, abs=0.15)
     assert (ratios > 0.5).all()
     assert (ratios < 1.6).all()
+
+
+def test_a_star_peaks_as_promised():
+    """Before the shadow comes: the approach of the example of a minor planet (invented)."""
+    plan = example_plan("asteroid_occults_star_2028")
+    rows = middles(plan, lambda shot: shot.name == "approach")
+    scene = Scene.of(plan, rows, cut=Cut(crop_px=(400, 400)))
+    assert without_noise(scene, 0).max() == pytest.approx(scene.shot(0).peak_e, rel=0.15)
 
 
 @pytest.mark.parametrize(

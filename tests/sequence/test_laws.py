@@ -221,7 +221,8 @@ def test_a_script_takes_turns_too():
 
     from planner.sequence.script import script_text
 
-    script = script_text(build_plan(neptune_beside_a_bright_moon()), "cam {exposure_s}")
+    plan = build_plan(neptune_beside_a_bright_moon())
+    script = script_text(plan, "cam {exposure_s}")
     done = subprocess.run(
         ["sh"],
         input=script,
@@ -234,5 +235,5 @@ def test_a_script_takes_turns_too():
     lines = [line for line in done.stdout.splitlines() if line.startswith("at ")]
     times = [int(line.split()[1].rstrip(":")) for line in lines]
     assert times == sorted(times)
-    assert lines[0].endswith("cam 0.03")
+    assert lines[0].endswith(f"cam {plan.passages[0].shots[0].exposure_s:g}")
     assert lines[1].split()[-1] != lines[0].split()[-1]
