@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 
@@ -30,13 +31,18 @@ class Blur:
         return (1 - self.wing, self.sigma_px), (self.wing, WING_RATIO * self.sigma_px)
 
 
+@lru_cache(maxsize=1)
+def _nodes() -> tuple[np.ndarray, np.ndarray]:
+    return np.polynomial.legendre.leggauss(40)
+
+
 def blurred_powers(offset_px: np.ndarray, radius_px: float, blur: Blur) -> np.ndarray:
     """Return blurred mu^k (k = 0, 1, 2) inside a disc, at distances `radius_px + offset_px` from its centre.
 
     mu = sqrt(1 - (r / radius)^2). One-dimensional blur across the limb, with the first-order effect of the limb's
     curvature, so good to 1e-3 of the step when the disc is ten blurs wide. Shape (3, n).
     """
-    node, weight = np.polynomial.legendre.leggauss(40)
+    node, weight = _nodes()
     out = np.zeros((3, offset_px.size))
     for share, sigma in blur.parts():
         low = np.maximum(offset_px - 6 * sigma, -radius_px)

@@ -67,8 +67,14 @@ def find_disc(data: np.ndarray, radius_px: float | None = None, radius_tolerance
     if support < 10 or arc < 0.06:
         raise NoSolutionError("no circle fits the edges of this frame: no disc, or clouds hide it")
     rival = _rival(smooth, xc - x0, yc - y0, radius)
+    factor_x, factor_y = columns / small.shape[1], rows / small.shape[0]
     return RoughDisc(
-        (xc + 0.5) * factor - 0.5, (yc + 0.5) * factor - 0.5, radius * factor, 0.7 * factor + 1.0, arc, rival
+        (xc + 0.5) * factor_x - 0.5,
+        (yc + 0.5) * factor_y - 0.5,
+        radius * np.sqrt(factor_x * factor_y),
+        0.7 * factor + 1.0,
+        arc,
+        rival,
     )
 
 
@@ -77,8 +83,9 @@ def _shrink(data: np.ndarray, factor: int) -> np.ndarray:
 
     if factor == 1:
         return np.nan_to_num(data).astype(np.float32)
-    rows, columns = data.shape[0] // factor, data.shape[1] // factor
-    part = np.ascontiguousarray(data[: rows * factor, : columns * factor], dtype=np.float32)
+    # whole rows, so that nothing is copied; a side that the factor does not divide stretches by less than 1 in 250
+    rows, columns = max(data.shape[0] // factor, 1), max(data.shape[1] // factor, 1)
+    part = np.ascontiguousarray(data, dtype=np.float32)
     return np.nan_to_num(cv2.resize(part, (columns, rows), interpolation=cv2.INTER_AREA))
 
 
