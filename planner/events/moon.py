@@ -8,7 +8,7 @@ import numpy as np
 
 from planner.events import cautions
 from planner.events.contacts import RAD_ARCSEC
-from planner.sky import discs, places
+from planner.sky import bodies, discs, places
 from planner.sky.moonlimb import SMOOTH_LIMB_SIGMA_KM, limb_centre_km
 from planner.sky.observer import Observer
 
@@ -105,11 +105,12 @@ def earth_shadow(tt_s: np.ndarray) -> tuple[np.ndarray, np.ndarray, np.ndarray, 
     moon = places.direction("moon", None, tt_s)
     sun = places.direction("sun", None, tt_s)
     from_axis = places.separation_arcsec(moon.vector_km, -sun.vector_km) / RAD_ARCSEC
-    moon_parallax = np.arcsin(6378.137 / moon.distance_km) * _EARTH_MEAN_OVER_EQUATORIAL
-    sun_parallax, sun_radius = np.arcsin(6378.137 / sun.distance_km), np.arcsin(695700.0 / sun.distance_km)
+    moon_parallax = np.arcsin(bodies.EARTH_RADIUS_KM / moon.distance_km) * _EARTH_MEAN_OVER_EQUATORIAL
+    sun_parallax = np.arcsin(bodies.EARTH_RADIUS_KM / sun.distance_km)
+    sun_radius = np.arcsin(bodies.SUN_RADIUS_KM / sun.distance_km)
     umbra = _SHADOW_WIDENED * (moon_parallax + sun_parallax - sun_radius)
     penumbra = _SHADOW_WIDENED * (moon_parallax + sun_parallax + sun_radius)
-    return from_axis, umbra, penumbra, np.arcsin(1737.4 / moon.distance_km)
+    return from_axis, umbra, penumbra, np.arcsin(bodies.radii_km("moon", "iau")[0] / moon.distance_km)
 
 
 def limb_words(state: MoonState) -> dict[str, list]:

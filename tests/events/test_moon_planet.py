@@ -140,6 +140,26 @@ def test_waxing_moons_cover_with_the_dark_limb_and_waning_ones_uncover_with_it()
         assert limbs == (["dark", "lit"] if found.facts["moon_waxing"] else ["lit", "dark"])
 
 
+def test_cusp_angles_count_from_the_nearer_horn_and_are_positive_on_the_dark_side():
+    one = family(FAMILY)
+    span = [timescale.tt_s_from_iso(f"{year}-01-01T00:00:00Z") for year in (2024, 2026)]
+    looked_at = 0
+    for event in one.search(*span, bodies=("mars", "saturn", "neptune")):
+        found = one.predict(event)
+        if not 0.1 < found.facts["moon_illuminated_fraction"] < 0.9:
+            continue
+        for instant in found.instants:
+            extra = dict(instant.extra)
+            assert (extra["cusp_angle_deg"] > 0) == (extra["limb"] == "dark")
+            assert abs(extra["cusp_angle_deg"]) <= 90
+            height = np.cos(np.radians(instant.position_angle_deg))
+            # the horns stand within 25 degrees of north and south: nearer to them there is no doubt which is meant
+            if abs(height) > 0.5 and instant.name != "closest":
+                assert extra["cusp"] == ("north" if height > 0 else "south")
+                looked_at += 1
+    assert looked_at > 10
+
+
 def test_an_occultation_seen_elsewhere_on_earth_does_not_happen_here_and_says_why():
     found = predicted(FAMILY, "mars", "2022-12-08", Observer("Canberra", -35.3, 149.1, 580.0))
     assert not found.happens
