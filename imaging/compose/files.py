@@ -38,6 +38,11 @@ def write_fits(path: Path, picture: Picture, truth: dict[str, Any], force: bool 
     largest = truth["largest_displacement_arcsec"]
     if largest is not None:
         header["MAXDISP"] = (largest, "[arcsec] largest drawn minus predicted place")
+    if truth["registration_error_arcsec"] is not None:
+        header["REGERR"] = (
+            truth["registration_error_arcsec"],
+            "[arcsec] rms measured minus predicted, upper limit",
+        )
     header["CREATOR"] = truth["provenance"]["syzygraph"]
     for key, value in truth["provenance"].items():
         header.add_history(f"{key}: {value}")

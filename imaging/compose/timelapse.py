@@ -12,8 +12,9 @@ import numpy as np
 from imaging.compose.canvas import Canvas
 from imaging.compose.ground import sky_surface
 from imaging.compose.light import Light, disc_level, exposure_level
-from imaging.compose.material import Material
+from imaging.compose.material import Material, Registered
 from imaging.compose.orientation import position_angle_deg, up_pa_deg
+from imaging.compose.plane import sky_to_plane
 from imaging.compose.stretch import Stretch, measured_stretch
 from planner.errors import FrameSetAside, InputError
 from planner.outputs import whole_file
@@ -184,7 +185,16 @@ class _Shots:
         wide, tall = 2 * float(span(reach_x)), 2 * float(span(reach_y))
         if self.steady_on in ("sun", "moon"):
             disc = self.material.geometry.discs[self.steady_on]
-            wide = tall = 2.3 * float(disc.semidiameter_arcsec[0])
+            radius = float(disc.semidiameter_arcsec[0])
+            beside = [
+                np.hypot(
+                    *sky_to_plane(f.reference_ra_deg, f.reference_dec_deg, f.target_ra_deg, f.target_dec_deg)
+                )
+                for f in self.frames
+                if f.measured
+            ]
+            # the target beside the disc is shown too, up to half a radius off
+            wide = tall = 2 * max(1.15 * radius, min(1.5 * radius, 1.06 * max(beside, default=0.0)))
         scale = max(wide / width, tall / height, min(frame.scale_arcsec_px for frame in self.frames))
         width, height = min(width, int(wide / scale)) // 2 * 2, min(height, int(tall / scale)) // 2 * 2
         if min(width, height) < 16:
@@ -230,8 +240,20 @@ class _Shots:
             level = disc_level(pixels, frame.limb_px, frame.solved_by.split("-")[0])
         image = self.light.on_canvas(pixels, frame, replace(self.canvas, up_pa_deg=up), anchor, level)
         if self.stretch is None:
-            self.stretch = measured_stretch(image, "stars" if frame.solved_by == "stars" else "disc")
+            tone = "stars" if frame.solved_by == "stars" else "disc"
+            self.stretch = measured_stretch(image, tone, self._peak(image, frame, anchor, up))
         return np.flip(np.round(self.stretch.tones(image) * 255).astype(np.uint8), axis=0)
+
+    def _peak(self, image: np.ndarray, frame: Registered, anchor: tuple[float, float], up: float) -> float:
+        """Return the peak of the target beside the Moon, so that the stretch shows it; infinity elsewhere."""
+        if not (frame.measured and frame.solved_by == "moon-limb"):
+            return float("inf")
+        place = replace(self.canvas, up_pa_deg=up).from_sky(
+            *anchor, frame.target_ra_deg, frame.target_dec_deg
+        )
+        column, row = (round(float(value)) for value in place)
+        box = image[max(0, row - 3) : row + 4, max(0, column - 3) : column + 4]
+        return float(np.nanmax(box)) if box.size and np.isfinite(box).any() else float("inf")
 
 
 def _vector(ra_deg: float, dec_deg: float) -> np.ndarray:

@@ -23,6 +23,8 @@ def statement(material: Material, picture: Picture, stretch: str | None = None) 
     apart = np.array([item.displacement_arcsec for item in picture.drawn], float)
     known = np.isfinite(apart)
     largest = float(apart[known].max()) if known.any() else None
+    every = np.array([frame.displacement_arcsec for frame, _ in _once(picture.used)], float)
+    rms = float(np.sqrt(np.nanmean(every**2))) if np.isfinite(every).any() else None
     aside = [{"file": Path(item.path).name, "reason": item.reason} for item in material.set_aside]
     aside += [{"file": name, "reason": reason} for name, reason in picture.left_out]
     return _plain(
@@ -31,6 +33,12 @@ def statement(material: Material, picture: Picture, stretch: str | None = None) 
             "picture": picture.kind,
             "registered_on": picture.registered_on,
             "registration": registration_sentence(picture),
+            "registration_error_arcsec": rms,
+            "registration_error_px": None if rms is None else rms / scale,
+            "registration_error_is": (
+                "rms distance of the measured target from its prediction over the frames used: an upper limit, for it "
+                "holds the error of measuring the target too"
+            ),
             "blend": picture.blend,
             "scale_arcsec_px": scale,
             "up_position_angle_deg": picture.canvas.up_pa_deg,

@@ -152,6 +152,7 @@ def test_compose_writes_what_it_says_and_readers_agree(transit, tmp_path, capsys
         assert hdus[0].data.dtype == np.dtype(">f4")
         assert len(hdus["FRAMES"].data) == hdus[0].header["NCOMBINE"] == len(kept["frames"])
         assert WCS(hdus[0].header).has_celestial
+        assert hdus[0].header["REGERR"] == pytest.approx(kept["registration_error_arcsec"], rel=1e-6)
         linear = hdus[0].data
     import tifffile
     from PIL import Image, ImageCms
