@@ -9,12 +9,13 @@ import numpy as np
 
 from imaging.stars.camera import ARCSEC_RAD, Camera, Lens, unproject
 from imaging.stars.groups import local_groups
-from imaging.stars.hypotheses import hypotheses, pair_groups
+from imaging.stars.hypotheses import hypotheses, pair_groups, turned_by
 from imaging.stars.prescreen import promising
 from imaging.stars.refine import Field, Match, Sky, grow
 from imaging.stars.verify import ACCEPT_LOG10
 
 SCALE_TOLERANCE = 0.12
+ROLL_TOLERANCE_DEG = 8.0
 
 
 @dataclass(frozen=True)
@@ -68,11 +69,12 @@ def solve_hinted(
     *,
     scale_tolerance: float = SCALE_TOLERANCE,
     parity: int | None = None,
+    rotation_deg: float | None = None,
 ) -> Attempt:
     """Return the match of a field whose centre and scale are roughly known; roll and mirror may be unknown.
 
     `sky_near(radius_rad, stars_per_sr)` gives catalogue stars around `center` (unit vector), brightest first, to
-    about that density (all when it is infinite). Never returns a match whose false-alarm probability is above 1e-9.
+    about that density (all when it is infinite). Never returns a match whose false-alarm probability is above 1e-7.
     """
     focal = ARCSEC_RAD / scale_arcsec_px
     height, width = field.shape
@@ -98,6 +100,8 @@ def solve_hinted(
         pairs = pair_groups(image, groups, scale_tolerance)
         allowed = (focal / (1 + scale_tolerance), focal * (1 + scale_tolerance))
         guesses = hypotheses(field, sky, image, groups, pairs, focal, allowed, parity, lens.projection)
+        if rotation_deg is not None:
+            guesses = guesses.take(turned_by(guesses, rotation_deg) < ROLL_TOLERANCE_DEG)
         trials += len(guesses)
         for i in promising(guesses, field, sky):
             camera = Camera(guesses.axes[i], guesses.focal_px[i], x0, y0, half, projection=lens.projection)

@@ -32,6 +32,25 @@ class Hypotheses:
         """Return the number of hypotheses."""
         return len(self.focal_px)
 
+    def take(self, chosen: np.ndarray) -> Hypotheses:
+        """Return these of the hypotheses."""
+        return Hypotheses(
+            self.image_stars[chosen],
+            self.sky_stars[chosen],
+            self.axes[chosen],
+            self.focal_px[chosen],
+            self.votes[chosen],
+        )
+
+
+def turned_by(guesses: Hypotheses, rotation_deg: float) -> np.ndarray:
+    """Return how far (n,), in degrees, the array's +y of each lies from a position angle (ICRS)."""
+    here, up = guesses.axes[:, 2], guesses.axes[:, 1]
+    east = np.column_stack([-here[:, 1], here[:, 0], np.zeros(len(here))])
+    north = np.cross(here, east)
+    angle = np.degrees(np.arctan2((up * east).sum(axis=1), (up * north).sum(axis=1)))
+    return np.abs((angle - rotation_deg + 180) % 360 - 180)
+
 
 def pair_groups(
     image: Groups, sky: Groups, scale_tolerance: float, limit: int = 60_000, tolerance: float = CODE_TOLERANCE

@@ -15,8 +15,10 @@ from imaging.stars.hinted import SCALE_TOLERANCE, Attempt, solve_hinted
 from imaging.stars.previous import solve_from_previous
 from imaging.stars.refine import Field, field_of, settle
 from imaging.stars.solution import MatchedStars, PlateSolution
+from imaging.stars.sparse import WIDEST_SCALE_TOLERANCE, solve_sparse
 from planner.errors import NoSolutionError
 
+_FISHEYE_DEG = 80.0  # of the diagonal, from which an equidistant lens is tried too
 _CENTROID_FLOOR_PX = 0.01  # below it the model of the star's profile, not noise, limits (measured)
 
 
@@ -88,9 +90,9 @@ def solve_detections(
     """Return where a frame with these stars points; see `solve_frame`."""
     shape = (found.height_px, found.width_px)
     field = _field(found)
-    if len(field.x_px) < 4:
+    if len(field.x_px) < 3:
         raise NoSolutionError(
-            f"{len(field.x_px)} stars found, at least 4 are needed; a longer exposure or a darker sky would help"
+            f"{len(field.x_px)} stars found, at least 3 are needed; a longer exposure or a darker sky would help"
         )
     tried: list[str] = []
     if previous is not None and previous.fit is not None:
@@ -109,21 +111,39 @@ def solve_detections(
     if hint.near is not None and hint.scale_arcsec_px is not None:
         center = vectors_of(np.array(hint.near[0]), np.array(hint.near[1]))
         lens = hint.lens or unknown_lens(3)
+        field_deg = 2 * np.degrees(field.half_diagonal_px * hint.scale_arcsec_px / ARCSEC_RAD)
+        lenses = [lens]
+        if hint.lens is None and field_deg > _FISHEYE_DEG:
+            lenses.append(unknown_lens(5, "ARC"))  # no lens makes a flat picture of so wide a sky
 
         def sky_near(radius_rad: float, stars_per_sr: float):  # type: ignore[no-untyped-def]
             return stars_near(center, radius_rad, tt_s, stars_per_sr)
 
-        attempt = solve_hinted(
-            field,
-            sky_near,
-            center,
-            hint.scale_arcsec_px,
-            lens,
-            scale_tolerance=hint.scale_tolerance,
-            parity=hint.parity,
-        )
-        if attempt.match is not None:
-            return _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "hinted")
+        for lens in lenses:
+            attempt = solve_hinted(
+                field,
+                sky_near,
+                center,
+                hint.scale_arcsec_px,
+                lens,
+                scale_tolerance=hint.scale_tolerance,
+                parity=hint.parity,
+                rotation_deg=hint.rotation_deg,
+            )
+            if attempt.match is not None:
+                return _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "hinted")
+        if hint.scale_tolerance <= WIDEST_SCALE_TOLERANCE:
+            attempt = solve_sparse(
+                field,
+                sky_near,
+                hint.scale_arcsec_px,
+                hint.scale_tolerance,
+                hint.lens or unknown_lens(3),
+                hint.parity,
+                hint.rotation_deg,
+            )
+            if attempt.match is not None:
+                return _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "sparse")
         tried.append(
             f"around {hint.near[0]:.3f} {hint.near[1]:+.3f} at {hint.scale_arcsec_px:.3f} arcsec/px "
             f"(+-{100 * hint.scale_tolerance:.0f} %), best chance 1e{attempt.best_log10:.0f}"
@@ -200,7 +220,7 @@ def _solution(
     for _ in range(
         2
     ):  # the number of pairs decides the order of the distortion, and that the number of pairs
-        prior = lens or unknown_lens(order_for(len(match.star)))
+        prior = lens or unknown_lens(order_for(len(match.star)), camera.projection)
         match = settle(match, prior, field, sky)
     assert prior is not None
     camera = match.fit.camera

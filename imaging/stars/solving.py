@@ -145,7 +145,8 @@ def _center_sigma_arcsec(solution: PlateSolution) -> float:
 def wcs_header(solution: PlateSolution, provenance: dict[str, str]) -> Any:
     """Return the FITS header of a solution: its WCS with SIP, and how well it is known."""
     header = solution.wcs.to_header(relax=True)
-    header["NAXIS1"], header["NAXIS2"] = solution.width_px, solution.height_px
+    header["IMAGEW"] = (solution.width_px, "[pixel] width of the frame")
+    header["IMAGEH"] = (solution.height_px, "[pixel] height of the frame")
     header["STARS"] = (len(solution.matched.x_px), "catalogue stars matched")
     header["RMSPX"] = (round(solution.rms_px, 4), "[pixel] residual, both axes together")
     header["SIGCENPX"] = (
@@ -166,11 +167,6 @@ def write_wcs(solution: PlateSolution, path: Path, force: bool = False) -> None:
     from planner.provenance import versions
 
     header = wcs_header(solution, versions())
-    del header["NAXIS1"], header["NAXIS2"]
-    header["IMAGEW"], header["IMAGEH"] = (
-        (solution.width_px, "[pixel] width of the frame"),
-        (solution.height_px, "[pixel] height of the frame"),
-    )
     with whole_file(path, force) as part:
         fits.PrimaryHDU(header=header).writeto(part, overwrite=True)
 
