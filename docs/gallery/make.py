@@ -38,7 +38,7 @@ JOURNEYS = (
         "mars",
         "mars_retrograde_2027",
         ["--frames", "80", "--binning", "2"],
-        {"mars": [], "mars_level": ["--up", "track"]},
+        {"mars": []},
         ["--fps", "8"],
     ),
 )
