@@ -315,7 +315,7 @@ class Scene:
 
     def _spread(self, shot: Shot, site: Site, air_mass: float, motion: LimbMotion | None) -> PointSpread:
         """Return the blur: seeing, diffraction, optics, and tracking over an exposure longer than a second."""
-        tracking = self.plan.rig.mount.tracking_error_arcsec if shot.exposure_s > 1.0 else 0.0
+        tracking = radiometry.tracking_error_of(self.plan.rig) if shot.exposure_s > 1.0 else 0.0
         width = float(radiometry.psf_fwhm_arcsec(self.rig, site.seeing_arcsec, air_mass, tracking))
         return PointSpread.seeing(float(np.hypot(width / self.rig.scale_arcsec_px, OPTICS_FWHM_PX)))
 

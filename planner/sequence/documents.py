@@ -210,7 +210,9 @@ def _inside(document: strictyaml.Document, key: strictyaml.Key) -> Path:
             "a path may not leave the brief's folder; name it on the command line",
         )
     if not (folder / name).is_file():
-        near = sorted(str(p.relative_to(folder)) for p in folder.glob("**/*.yaml") if len(p.parts) < 40)
+        near = sorted(
+            str(p.relative_to(folder)) for each in ("*.yaml", "*/*.yaml") for p in folder.glob(each)
+        )
         raise DocumentError(
             document.path,
             line,

@@ -5,12 +5,10 @@ Unknown keys are errors. Times are ISO 8601 with `Z` or an offset. Longitudes ar
 
 from __future__ import annotations
 
-from datetime import UTC, date, datetime
+from datetime import UTC, date
 from typing import Annotated, Any, Literal
 
 from pydantic import AfterValidator, AwareDatetime, BaseModel, ConfigDict, Field, model_validator
-
-PLAN_FORMAT = 1
 
 
 class Model(BaseModel):
@@ -457,11 +455,3 @@ class Plan(Model):
     findings: list[Finding] = []
     cautions: list[str] = []
     provenance: dict[str, str]
-
-
-def utc_datetime(text: str) -> datetime:
-    """Return an aware UTC datetime from ISO 8601 text that names its offset; raises ValueError without one."""
-    moment = datetime.fromisoformat(text)
-    if moment.tzinfo is None:
-        raise ValueError(f"{text!r} has no Z and no offset")
-    return moment.astimezone(UTC)

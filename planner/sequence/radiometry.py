@@ -184,11 +184,11 @@ def psf_fwhm_arcsec(
 ) -> np.ndarray:
     """Return the FWHM of seeing, diffraction and tracking together, before pixels integrate it.
 
-    `tracking_error_arcsec` is an rms; the mount's is taken when None.
+    `tracking_error_arcsec` is an rms; the rig's is taken when None.
     """
     seeing = seeing_arcsec * np.asarray(airmass, float) ** SEEING_AIRMASS_POWER
     diffraction = 1.029 * np.degrees(EFFECTIVE_NM * 1e-6 / rig.optics.aperture_mm) * 3600
-    error = rig.mount.tracking_error_arcsec if tracking_error_arcsec is None else tracking_error_arcsec
+    error = tracking_error_of(rig) if tracking_error_arcsec is None else tracking_error_arcsec
     return np.sqrt(seeing**2 + diffraction**2 + (FWHM_OF_SIGMA * error) ** 2)
 
 
@@ -200,9 +200,9 @@ def psf_fwhm_px(
     return np.hypot(sky_px, OPTICS_FWHM_PX)
 
 
-def tracking_blur_arcsec(rig: Rig, exposure_s: float) -> float:
-    """Return the rms of tracking in one exposure: none in a second, in which a mount has no time to err."""
-    if exposure_s <= 1.0 or rig.mount.kind == "fixed":
+def tracking_error_of(rig: Rig) -> float:
+    """Return the rms of tracking over an exposure of some seconds: guided, unguided, or none on a tripod."""
+    if rig.mount.kind == "fixed":
         return 0.0
     return rig.guiding.error_arcsec if rig.guiding.on != "none" else rig.mount.tracking_error_arcsec
 

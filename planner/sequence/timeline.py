@@ -5,7 +5,7 @@ Drawn in greys and line styles, so that it reads by red light and prints in blac
 
 from __future__ import annotations
 
-from datetime import UTC, datetime, timedelta
+from datetime import UTC, timedelta
 from itertools import pairwise
 from typing import Any
 
@@ -220,10 +220,3 @@ def timeline_figure(outlook: Outlook, width_in: float = 9.0, height_in: float = 
     draw_timeline(figure.add_subplot(), outlook)
     figure.suptitle(outlook.plan.title, fontsize=11, x=0.01, ha="left")
     return figure
-
-
-def moment_of(number: float) -> datetime:
-    """Return the moment of a matplotlib date."""
-    import matplotlib.dates as mdates
-
-    return mdates.num2date(number, tz=UTC)

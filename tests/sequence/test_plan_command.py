@@ -102,3 +102,19 @@ def test_a_brief_without_a_solar_filter_is_refused_in_one_line(root, folder, cap
     path = edited(root, folder, "mercury_transit_2032", rig=rig)
     assert run_with(["plan", path]) == 2
     assert "solar_filter" in capsys.readouterr().err
+
+
+def test_a_newcomer_who_copies_the_page_gets_a_plan_and_a_run_sheet(root, folder):
+    """The files and the commands of docs/planning.md, as they stand there."""
+    import re
+    import textwrap
+
+    page = (root / "docs/planning.md").read_text(encoding="utf-8").split("## What you may wish")[0]
+    files = re.findall(r"`([\w/.]+\.yaml)`:\n\n((?:    .*\n)+)", page)
+    assert len(files) == 3
+    for name, text in files:
+        (folder / name).parent.mkdir(exist_ok=True)
+        (folder / name).write_text(textwrap.dedent(text), encoding="utf-8")
+    for line in re.findall(r"^    syzygraph (\S.*?)(?:\s+#.*)?$", page, re.MULTILINE):
+        assert run_with(line.split()) == 0, line
+    assert (folder / "out" / "run_sheet.pdf").exists()

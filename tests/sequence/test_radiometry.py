@@ -157,3 +157,15 @@ def test_the_sun_is_exposed_to_the_fraction_of_the_well_that_is_asked():
         peaks = [s.peak_e / radiometry.saturation_e(plan.rig) for p in plan.passages for s in p.shots]
         assert max(peaks) <= fraction * 1.001
         assert min(peaks) > fraction * 0.75
+
+
+def test_guiding_takes_the_place_of_the_mounts_own_error():
+    rig = rig_of()
+    guided = rig.model_copy(
+        update={"guiding": rig.guiding.model_copy(update={"on": "star", "error_arcsec": 0.5})}
+    )
+    still = rig.model_copy(update={"mount": rig.mount.model_copy(update={"kind": "fixed"})})
+    assert radiometry.tracking_error_of(rig) == rig.mount.tracking_error_arcsec
+    assert radiometry.tracking_error_of(guided) == 0.5
+    assert radiometry.tracking_error_of(still) == 0.0
+    assert radiometry.psf_fwhm_px(guided, 2.0, 1.0) < radiometry.psf_fwhm_px(rig, 2.0, 1.0)
