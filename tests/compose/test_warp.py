@@ -168,3 +168,18 @@ def test_canvas_and_plane_are_inverse_and_the_wcs_says_the_same(up_pa_deg):
 def test_a_picture_too_large_is_refused_with_its_size():
     with pytest.raises(InputError, match="choose a larger --scale"):
         canvas_around(np.array([0.0, 9000.0]), np.array([0.0, 0.0]), 10, 0.1)
+
+
+@pytest.mark.parametrize(("fwhm_px", "cost"), [(1.5, 0.02), (2.0, 0.005), (2.5, 0.001), (4.0, 0.001)])
+def test_taking_out_dark_rings_costs_little_flux(fwhm_px, cost):
+    """Mean over 25 places within a pixel; below 2 pixels of width photometry is better done on the frames."""
+    flux = []
+    for dx in np.linspace(0, 0.8, 5):
+        for dy in np.linspace(0, 0.8, 5):
+            frame = star_image((64, 64), [32.0], [30.0], fwhm_px, 20000.0)
+            frame += np.random.default_rng(1).normal(0, 1, frame.shape).astype(np.float32)
+            canvas = Canvas(64, 64, 1.0, 0.0, 0.0)
+            out = warp(frame, canvas, lambda x, y, dx=dx, dy=dy: (x + dx, y + dy), ringless=True)
+            flux.append(moments(out, 32 - dx, 30 - dy)[0])
+            assert np.nanmin(out) > -6.0
+    assert np.mean(flux) == pytest.approx(20000, rel=cost)
