@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from datetime import timedelta
+from datetime import UTC, datetime, timedelta
 from pathlib import Path
 
 import numpy as np
@@ -89,8 +89,8 @@ def _entry(circumstances: Circumstances, observer: Observer | None, title: str, 
     # to the second: the table in the description holds the rest
     entry.add("dtstart", start.replace(microsecond=0))
     entry.add("dtend", end.replace(microsecond=0))
+    entry.add("dtstamp", datetime.now(UTC).replace(microsecond=0))
     # the same event must keep its identity when it is predicted again, so that a calendar updates it
-    entry.add("dtstamp", timescale.datetime_from_tt_s(circumstances.event.middle_tt_s).replace(microsecond=0))
     key = f"{circumstances.event.title} {_site_text(observer)} {name}"
     entry.add("uid", f"{content_hash(key)}@syzygraph")
     entry.add("location", _site_text(observer))
