@@ -16,9 +16,11 @@ def command(document: str) -> None:
     Example:
       syzygraph schema brief > brief.schema.json
     """
+    from pydantic import BaseModel
+
     from planner.sequence import models
 
-    known = {
+    known: dict[str, type[BaseModel]] = {
         "site": models.Site,
         "rig": models.Rig,
         "brief": models.Brief,
