@@ -25,21 +25,21 @@ JOURNEYS = (
         "mercury_transit_2032",
         ["--frames", "22", "--clock-offset", "7.3"],
         {"transit": [], "transit_zenith": ["--up", "zenith"]},
-        ["--pace", "1200"],
+        ["--pace", "1200", "--size", "1280x720"],
     ),
     (
         "moon",
         "moon_occults_planet_2030",
         ["--frames", "18", "--clock-offset", "7.3"],
         {"moon": [], "moon_among_stars": ["--register", "stars", "--instants", "4", "--scale", "2"]},
-        ["--pace", "300"],
+        ["--pace", "300", "--size", "1280x720"],
     ),
     (
         "mars",
         "mars_retrograde_2027",
         ["--frames", "80", "--binning", "2"],
         {"mars": []},
-        ["--fps", "8"],
+        ["--fps", "8", "--size", "640x360"],
     ),
 )
 

@@ -11,7 +11,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from imaging.compose.plane import sky_to_plane
+from imaging.compose.plane import Values, sky_to_plane
 from planner.errors import InputError
 
 LARGEST_PX = 20000
@@ -31,14 +31,14 @@ class Canvas:
     anchor_y_px: float
     up_pa_deg: float = 0.0
 
-    def to_plane(self, x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    def to_plane(self, x_px: Values, y_px: Values) -> tuple[np.ndarray, np.ndarray]:
         """Return offsets (east_arcsec, north_arcsec) from the anchor of canvas pixels."""
         right = (np.asarray(x_px) - self.anchor_x_px) * self.scale_arcsec_px
         up = (np.asarray(y_px) - self.anchor_y_px) * self.scale_arcsec_px
         sin, cos = np.sin(np.radians(self.up_pa_deg)), np.cos(np.radians(self.up_pa_deg))
         return up * sin - right * cos, up * cos + right * sin
 
-    def from_plane(self, east_arcsec: np.ndarray, north_arcsec: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    def from_plane(self, east_arcsec: Values, north_arcsec: Values) -> tuple[np.ndarray, np.ndarray]:
         """Return canvas pixels (x_px, y_px) of offsets from the anchor."""
         sin, cos = np.sin(np.radians(self.up_pa_deg)), np.cos(np.radians(self.up_pa_deg))
         east, north = np.asarray(east_arcsec), np.asarray(north_arcsec)
@@ -49,7 +49,7 @@ class Canvas:
         )
 
     def from_sky(
-        self, anchor_ra_deg: float, anchor_dec_deg: float, ra_deg: np.ndarray, dec_deg: np.ndarray
+        self, anchor_ra_deg: float, anchor_dec_deg: float, ra_deg: Values, dec_deg: Values
     ) -> tuple[np.ndarray, np.ndarray]:
         """Return canvas pixels of ICRS directions when the anchor is there."""
         return self.from_plane(*sky_to_plane(anchor_ra_deg, anchor_dec_deg, ra_deg, dec_deg))

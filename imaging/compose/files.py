@@ -37,11 +37,11 @@ def write_fits(path: Path, picture: Picture, truth: dict[str, Any], force: bool 
     header["ENLARGE"] = (truth["enlargement"], "bodies are drawn this many times true size")
     largest = truth["largest_displacement_arcsec"]
     if largest is not None:
-        header["MAXDISP"] = (largest, "[arcsec] largest drawn minus predicted place")
+        header["MAXDISP"] = (largest, "[arcsec] largest drawn minus predicted")
     if truth["registration_error_arcsec"] is not None:
         header["REGERR"] = (
             truth["registration_error_arcsec"],
-            "[arcsec] rms measured minus predicted, upper limit",
+            "[arcsec] rms, an upper limit",
         )
     header["CREATOR"] = truth["provenance"]["syzygraph"]
     for key, value in truth["provenance"].items():

@@ -61,9 +61,9 @@ def block_levels(data: np.ndarray, block: int) -> np.ndarray:
     Blocks less than half covered (NaN) are NaN. At most about 512 pixels of a block are looked at.
     """
     ny, nx = data.shape[0] // block, data.shape[1] // block
-    cells = data[: ny * block, : nx * block].reshape(ny, block, nx, block)
+    blocks = data[: ny * block, : nx * block].reshape(ny, block, nx, block)
     step = max(1, block // 22)
-    cells = cells[:, ::step, :, ::step].swapaxes(1, 2).reshape(ny, nx, -1)
+    cells = blocks[:, ::step, :, ::step].swapaxes(1, 2).reshape(ny, nx, -1)
     with np.errstate(invalid="ignore"), warnings.catch_warnings():
         warnings.simplefilter("ignore", RuntimeWarning)
         covered = np.isfinite(cells).mean(axis=-1) > 0.5

@@ -96,7 +96,9 @@ def _stepped(to_frame: PixelMap, left: float, low: float, step: int) -> PixelMap
 
 def _thinned(good: np.ndarray, step: int, shape: tuple[int, ...]) -> np.ndarray:
     rows, columns = shape
-    return good[: rows * step, : columns * step].reshape(rows, step, columns, step).all(axis=(1, 3))
+    return np.asarray(
+        good[: rows * step, : columns * step].reshape(rows, step, columns, step).all(axis=(1, 3))
+    )
 
 
 def colour_planes(frame: Frame) -> list[tuple[np.ndarray, tuple[float, float], int]]:

@@ -189,7 +189,7 @@ class _Folder:
         self.folders = (
             [Path(folder)]
             if folder is not None
-            else [Path(stated)] * bool(stated) + [track_path.parent, track_path.parent.parent]
+            else ([Path(stated)] if stated else []) + [track_path.parent, track_path.parent.parent]
         )
         self.index: dict[str, Path] | None = None
 

@@ -31,14 +31,15 @@ def write_page(
     """Write one self-contained HTML file (no network): `tones` are the picture's, first row at the top."""
     from bokeh.embed import file_html
     from bokeh.layouts import column
-    from bokeh.models import ColumnDataSource, Div, HoverTool, Range1d
+    from bokeh.models import ColumnDataSource, HoverTool, Range1d
+    from bokeh.models.widgets import Div
     from bokeh.plotting import figure
     from bokeh.resources import INLINE
 
     height, width = tones.shape[:2]
     plot = figure(
-        x_range=Range1d(-0.5, width - 0.5),
-        y_range=Range1d(-0.5, height - 0.5),
+        x_range=Range1d(start=-0.5, end=width - 0.5),
+        y_range=Range1d(start=-0.5, end=height - 0.5),
         tools="pan,wheel_zoom,box_zoom,reset,save",
         active_scroll="wheel_zoom",
         match_aspect=True,

@@ -224,7 +224,7 @@ def _path(axes: Any, data: PathData, palette: Palette) -> None:
             zorder=3.1,
         )
     if data.target_radius_arcsec > 2.0 * pixel:
-        middle = data.line[:, data.line.shape[1] // 2]
+        middle = tuple(float(value) for value in data.line[:, data.line.shape[1] // 2])
         axes.add_patch(
             Circle(
                 middle,

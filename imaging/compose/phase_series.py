@@ -45,7 +45,9 @@ def phase_series(material: Material, choices: Choices, light: Light) -> Picture:
     rows = -(-len(visits) // columns)
     planes = (3,) if light.colour else ()
     sheet = np.zeros((rows * cell, columns * cell, *planes), np.float32)
-    drawn, used, left_out = [], [], []
+    drawn: list[Drawn] = []
+    used: list[tuple[Registered, str]] = []
+    left_out: list[tuple[str, str]] = []
     for number, (_, frames) in enumerate(visits):
         choices.tick(number, len(visits))
         stacked = _visit(

@@ -7,11 +7,12 @@ from __future__ import annotations
 
 import numpy as np
 
+Values = np.ndarray | float
 ARCSEC_PER_RADIAN = 206264.80624709636
 
 
 def sky_to_plane(
-    anchor_ra_deg: float, anchor_dec_deg: float, ra_deg: np.ndarray, dec_deg: np.ndarray
+    anchor_ra_deg: float, anchor_dec_deg: float, ra_deg: Values, dec_deg: Values
 ) -> tuple[np.ndarray, np.ndarray]:
     """Return offsets (east_arcsec, north_arcsec) of directions from an anchor; NaN beyond 90 degrees."""
     ra, dec = np.radians(np.asarray(ra_deg) - anchor_ra_deg), np.radians(dec_deg)
@@ -24,7 +25,7 @@ def sky_to_plane(
 
 
 def plane_to_sky(
-    anchor_ra_deg: float, anchor_dec_deg: float, east_arcsec: np.ndarray, north_arcsec: np.ndarray
+    anchor_ra_deg: float, anchor_dec_deg: float, east_arcsec: Values, north_arcsec: Values
 ) -> tuple[np.ndarray, np.ndarray]:
     """Return ICRS (ra_deg in 0..360, dec_deg) of offsets from an anchor."""
     east, north = np.asarray(east_arcsec) / ARCSEC_PER_RADIAN, np.asarray(north_arcsec) / ARCSEC_PER_RADIAN

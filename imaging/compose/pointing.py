@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 
-from imaging.compose.plane import ARCSEC_PER_RADIAN, plane_to_sky, sky_to_plane
+from imaging.compose.plane import ARCSEC_PER_RADIAN, Values, plane_to_sky, sky_to_plane
 
 if TYPE_CHECKING:
     from astropy.wcs import WCS
@@ -18,7 +18,10 @@ if TYPE_CHECKING:
 class Pointing(Protocol):
     """What the warp needs to know of a frame."""
 
-    scale_arcsec_px: float
+    @property
+    def scale_arcsec_px(self) -> float:
+        """Scale in the middle of the field."""
+        ...
 
     def sky_to_pixel(self, ra_deg: np.ndarray, dec_deg: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return 0-based array pixels (x_px, y_px) of ICRS directions; NaN where they do not project."""
@@ -67,7 +70,7 @@ class Air:
         return np.cos(lift) * direction + np.sin(lift) * along
 
 
-def _unit(ra_deg: np.ndarray, dec_deg: np.ndarray) -> np.ndarray:
+def _unit(ra_deg: Values, dec_deg: Values) -> np.ndarray:
     ra, dec = np.radians(ra_deg), np.radians(dec_deg)
     return np.stack([np.cos(dec) * np.cos(ra), np.cos(dec) * np.sin(ra), np.sin(dec)], axis=-1)
 
@@ -99,7 +102,8 @@ class DiscPointing:
         """Return 0-based array pixels of ICRS directions, refracted; the field is taken as undistorted."""
         center = self.ra_deg, self.dec_deg
         if self.air is not None:
-            center = tuple(float(x) for x in _radec(self.air.lifted(_unit(*center))))
+            lifted_ra, lifted_dec = _radec(self.air.lifted(_unit(*center)))
+            center = float(lifted_ra), float(lifted_dec)
             ra_deg, dec_deg = _radec(self.air.lifted(_unit(ra_deg, dec_deg)))
         east, north = sky_to_plane(*center, ra_deg, dec_deg)
         sin, cos = np.sin(np.radians(self.rotation_deg)), np.cos(np.radians(self.rotation_deg))

@@ -179,7 +179,7 @@ def _lay(image: np.ndarray, canvas: Canvas, anchor: tuple[float, float], visit: 
     places = [
         canvas.from_sky(*anchor, f.predicted_ra_deg, f.predicted_dec_deg) for f in visit.frames if f.measured
     ]
-    predicted = np.array(places or [(x_px, y_px)], float).mean(axis=0)
+    predicted = np.array(places, float).mean(axis=0) if places else np.array([x_px, y_px])
     apart = float(np.hypot(x_px - predicted[0], y_px - predicted[1])) * canvas.scale_arcsec_px
     return Drawn(
         visit.frames[len(visit.frames) // 2],

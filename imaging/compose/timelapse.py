@@ -268,7 +268,7 @@ def _zenith(shots: _Shots, index: int) -> np.ndarray:
     frame, altitude_seen = shots.frames[index], float(shots.altitude[index])
     if not np.isfinite(altitude_seen):
         raise InputError("--steady-on horizon: the plan has no site that a horizon could belong to")
-    altitude = np.radians(float(true_altitude_deg(altitude_seen, shots.material.observer)))
+    altitude = np.radians(float(true_altitude_deg(np.array(altitude_seen), shots.material.observer)))
     ra, pa = np.radians(frame.predicted_ra_deg), np.radians(float(shots.zenith_pa[index]))
     target = _vector(frame.predicted_ra_deg, frame.predicted_dec_deg)
     east = np.array([-np.sin(ra), np.cos(ra), 0.0])

@@ -96,7 +96,7 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
       syzygraph compose transit.plan.yaml checked/track.ecsv --frames frames -o picture --up zenith
     """
     import json
-    from datetime import UTC
+    from datetime import UTC, tzinfo
     from zoneinfo import ZoneInfo
 
     from imaging.compose.choices import Choices
@@ -125,7 +125,8 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
         second_plan, second_track, second_frames = chosen["second_site"]
         other = gather(load_plan(second_plan), second_track, second_frames)
     landscape = _landscape(chosen["landscape"], chosen["view"])
-    zone, zone_label = UTC, "UTC"
+    zone: tzinfo = UTC
+    zone_label = "UTC"
     if chosen["local_time"]:
         zone, zone_label = ZoneInfo(document.site.timezone), document.site.timezone
     with bar("composing", quiet) as tick:
