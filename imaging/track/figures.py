@@ -147,8 +147,10 @@ def path_figure(result: CheckResult):  # type: ignore[no-untyped-def]
         radius = disc_radius_arcsec(result)
         if np.isfinite(radius):
             axis.add_patch(Circle((0, 0), radius, fill=False, color=PALE, lw=1.5))
-            axis.set_xlim(-1.15 * radius, 1.15 * radius)
-            axis.set_ylim(-1.15 * radius, 1.15 * radius)
+            far = np.max(np.abs([*mx[np.isfinite(mx)], *my[np.isfinite(my)], radius]))
+            reach = 1.08 * min(far, 4.0 * radius)
+            axis.set_xlim(-reach, reach)
+            axis.set_ylim(-reach, reach)
         axis.set_aspect("equal")
         axis.set_xlabel(f"east of the {result.reference.capitalize()}'s centre (arcsec)")
         axis.set_ylabel(f"north of the {result.reference.capitalize()}'s centre (arcsec)")

@@ -2,14 +2,20 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 
+from imaging.discs.planet import Body
 from imaging.frames.frame import Frame
 from imaging.track.path import PredictedPath
+from planner.events.family import Geometry
 from planner.sequence.frametimes import PlannedFrames, planned_frames
 from planner.sequence.models import Plan, Rig
+
+NEAR_ARCSEC = 15.0  # an ordinary clock, site and camera leave the target this near to where it is expected
+POINT_PX = 0.05  # radius of a star as the disc rooms take it: far below any blur
 
 
 @dataclass(frozen=True)
@@ -88,3 +94,18 @@ class Promise:
             aim_ra_deg=float(planned.ra_deg[at]),
             aim_dec_deg=float(planned.dec_deg[at]),
         )
+
+
+def body_of(geometry: Geometry, radius_px: float, pixel_angle: Callable[[float], float]) -> Body:
+    """Return what is known of the target's disc, turned to the frame; a star is a point."""
+    if geometry.target not in geometry.discs:
+        return Body(geometry.target, POINT_PX)
+    disc = geometry.discs[geometry.target]
+    return Body(
+        name=geometry.target,
+        radius_px=radius_px,
+        phase_angle_deg=float(disc.phase_angle_deg[0]),
+        lit_angle_deg=pixel_angle(float(disc.bright_limb_pa_deg[0])),
+        flattening=float(disc.flattening[0]),
+        pole_angle_deg=pixel_angle(float(disc.pole_pa_deg[0])),
+    )
