@@ -117,10 +117,10 @@ def test_a_template_with_a_count_is_run_once_a_shot():
 
 
 def test_the_script_keeps_time_on_a_real_clock(tmp_path):
-    """Three frames half a second apart, a second from now, each within 0.2 s of its time."""
+    """Three frames a second apart: never early, and late only by what a loaded machine takes to start a command."""
     plan = example_plan(TRANSIT)
     start = datetime.now(UTC) + timedelta(seconds=1.5)
-    shot = plan.passages[0].shots[0].model_copy(update={"start_utc": start, "cadence_s": 0.5, "count": 3})
+    shot = plan.passages[0].shots[0].model_copy(update={"start_utc": start, "cadence_s": 1.0, "count": 3})
     plan = plan.model_copy(
         update={"passages": [plan.passages[0].model_copy(update={"shots": [shot]})], "steps": []}
     )
@@ -129,7 +129,7 @@ def test_the_script_keeps_time_on_a_real_clock(tmp_path):
     times = [float(line) for line in (tmp_path / "times").read_text().split()]
     assert len(times) == 3
     for number, moment in enumerate(times):
-        assert moment - (start.timestamp() + 0.5 * number) == pytest.approx(0.1, abs=0.3)
+        assert -0.02 < moment - (start.timestamp() + number) < 0.9
 
 
 def test_names_cannot_break_out_of_the_script():

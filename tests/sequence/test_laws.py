@@ -14,7 +14,7 @@ from planner.sequence.windows import is_contact
 from planner.sky.timescale import tt_s_from_iso
 from tests.sequence.briefs import CAMPAIGN, EXAMPLES, OCCULTATION, TRANSIT, changed, example, example_plan
 
-few = settings(max_examples=6, deadline=None, suppress_health_check=[HealthCheck.filter_too_much])
+few = settings(max_examples=5, deadline=None, suppress_health_check=[HealthCheck.filter_too_much])
 
 
 def plan_of(brief):
