@@ -38,7 +38,7 @@ def test_solar_parallax_from_rehearsed_frames_of_the_transit_of_2012_at_two_site
         assert run_with(["plan", str(brief), "-o", str(plan)]) == 0
         faults = ["--seed", str(len(plans) + 1), "--limb-motion", "0.3"]
         assert (
-            run_with(["rehearse", str(plan), "-o", str(frames), "--frames", "16", "--binning", "6", *faults])
+            run_with(["rehearse", str(plan), "-o", str(frames), "--frames", "12", "--binning", "8", *faults])
             == 0
         )
         out = tmp_path / f"{name}_checked"
@@ -57,7 +57,7 @@ def test_the_orbit_of_mars_from_rehearsed_frames(tmp_path, capsys):
     """Published mean elements (Standish, JPL; from memory) differ from one epoch's by some 1e-4."""
     plan, frames, out = tmp_path / "mars.plan.yaml", tmp_path / "mars", tmp_path / "checked"
     assert run_with(["plan", str(ROOT / "configs/mars_retrograde_2027.yaml"), "-o", str(plan)]) == 0
-    assert run_with(["rehearse", str(plan), "-o", str(frames), "--frames", "8", "--binning", "3"]) == 0
+    assert run_with(["rehearse", str(plan), "-o", str(frames), "--frames", "6", "--binning", "3"]) == 0
     assert run_with(["check", str(plan), str(frames), "-o", str(out), "--no-pictures"]) == 0
     found = told_by(["orbit", str(plan), str(out / "track.ecsv")], capsys)
     assert found["semi_major_axis_au"]["value"] == pytest.approx(1.52371034, abs=3e-4)
