@@ -104,8 +104,6 @@ def main(work: Path) -> None:
             "-o",
             str(work / f"{name}.mp4"),
             *film,
-            "--size",
-            "1280x720",
         )
         (HERE / f"{name}.mp4").write_bytes((work / f"{name}.mp4").read_bytes())
 

@@ -92,7 +92,12 @@ def write_page(
     plot.toolbar.logo = None
     from html import escape
 
-    style = {"color": INK, "font-family": "sans-serif", "font-size": "15px", "max-width": "70em"}
+    style: dict[str, str | None] = {
+        "color": INK,
+        "font-family": "sans-serif",
+        "font-size": "15px",
+        "max-width": "70em",
+    }
     heading = Div(text=f"<h2 style='margin:0.3em 0'>{escape(material.plan.title)}</h2>", styles=style)
     words = Div(
         text=f"<p>{escape(caption)}</p><p style='color:{PALE}'>Point at a ring for its frame, time and residual; click "

@@ -121,15 +121,16 @@ def path_data(material: Material, choices: Choices, zone: tzinfo = UTC, zone_lab
         target_radius_arcsec=float(semidiameter[PATH_POINTS // 2]),
         up_pa_deg=up,
         zenith_pa_deg=float(geometry.zenith_pa_deg[PATH_POINTS // 2]),
-        north_of_date_pa_deg=float(
-            np.squeeze(
-                north_of_date_pa_deg(*(np.array([angle]) for angle in middle_anchor), np.array([middle]))
-            )
-        ),
+        north_of_date_pa_deg=_north_of_date(middle_anchor, middle),
         phase_angle_deg=float(disc.phase_angle_deg[PATH_POINTS // 2]) if on_disc == "moon" and disc else 0.0,
         bright_limb_pa_deg=float(disc.bright_limb_pa_deg[PATH_POINTS // 2]) if disc else 0.0,
         campaign=last - first > 5 * 86400.0,
     )
+
+
+def _north_of_date(anchor_deg: tuple[float, float], tt_s: float) -> float:
+    ra_deg, dec_deg = (np.array([angle]) for angle in anchor_deg)
+    return float(north_of_date_pa_deg(ra_deg, dec_deg, np.array([tt_s]))[0])
 
 
 def _disc_of(material: Material, choices: Choices) -> str | None:

@@ -224,7 +224,8 @@ def _path(axes: Any, data: PathData, palette: Palette) -> None:
             zorder=3.1,
         )
     if data.target_radius_arcsec > 2.0 * pixel:
-        middle = tuple(float(value) for value in data.line[:, data.line.shape[1] // 2])
+        half = data.line.shape[1] // 2
+        middle = float(data.line[0, half]), float(data.line[1, half])
         axes.add_patch(
             Circle(
                 middle,
@@ -409,6 +410,7 @@ def _stars(
     axes.annotate(
         f"stars to magnitude {faintest:.1f}", (1, 1), xycoords="axes fraction", xytext=(-6, -6),
         textcoords="offset points", ha="right", va="top", fontsize=7.5, color=palette.quiet,
+        bbox={"facecolor": palette.paper, "edgecolor": "none", "pad": 1.5},
     )  # fmt: skip
 
 

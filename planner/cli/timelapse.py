@@ -78,8 +78,10 @@ def command(plan: Path, track: Path, frames: Path | None, output: Path, **chosen
         click.echo(
             f"{output}: {report.pictures} pictures, {report.seconds:.1f} s, {report.exposures} exposures, {report.pace}"
         )
-        for start, end in report.gaps:
-            click.echo(f"  no frame from {start} to {end}: shown dimmed")
+        for start, end in report.gaps[:6]:
+            click.echo(f"  no frame from {start} to {end}: shown in the film")
+        if len(report.gaps) > 6:
+            click.echo(f"  ... and {len(report.gaps) - 6} gaps more, shown in the film")
     for name, reason in aside[:10]:
         click.echo(f"set aside: {name} {reason}", err=True)
     return errors.EXIT_WITH_RESERVATIONS if aside else errors.EXIT_DONE
