@@ -11,7 +11,7 @@ from dataclasses import replace
 from time import process_time
 
 import numpy as np
-from drawn_fields import RIGS, TT_S, detections_of, draw
+from drawn_fields import RIGS, TT_S, detections_of, draw, model_error_px
 from measured import machine, table
 
 from imaging.stars.catalogue import whole_sky
@@ -38,13 +38,15 @@ def main() -> None:
         kind = KINDS[seed % len(KINDS)]
         rng = np.random.default_rng([seed, 1234])
         rig = list(RIGS.values())[seed // len(KINDS) % len(RIGS)]
-        found, hint = case(kind, rig, rng)
+        field, found, hint = case(kind, rig, rng)
         blind = asked.blind and kind != KINDS[-1]
         runs[kind] += 1
         try:
             solution = solve_detections(found, TT_S, "bottom", hint, blind=blind)
         except NoSolutionError:
             continue
+        if kind == KINDS[-1] and model_error_px(solution, field)[1] < 50:
+            continue  # a wide field reaches over the sky to its true place
         false[kind] += 1
         print("FALSE", kind, rig.name, seed, solution.false_alarm_log10, solution.how, flush=True)
     print(
@@ -63,7 +65,7 @@ def case(kind: str, rig, rng):
         center = field.center
         ra = (np.degrees(np.arctan2(center[1], center[0])) + rng.uniform(150, 210)) % 360
         dec = -np.degrees(np.arcsin(center[2]))
-        return found, Hint((float(ra), float(dec)), rig.scale_arcsec_px * rng.uniform(0.9, 1.1))
+        return field, found, Hint((float(ra), float(dec)), rig.scale_arcsec_px * rng.uniform(0.9, 1.1))
     size = np.array([rig.width_px, rig.height_px])
     count = int(rng.integers(4, 400))
     if kind == "random":
@@ -85,7 +87,7 @@ def case(kind: str, rig, rng):
     flux = np.sort(10 ** rng.uniform(2, 5, len(places)))[::-1]
     places = rng.permutation(places)
     found = replace(found, x_px=places[:, 0], y_px=places[:, 1], flux_adu=flux)
-    return found, Hint((ra, float(dec)), rig.scale_arcsec_px)
+    return field, found, Hint((ra, float(dec)), rig.scale_arcsec_px)
 
 
 if __name__ == "__main__":

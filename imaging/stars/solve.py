@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from contextlib import suppress
 from dataclasses import dataclass
 
 import numpy as np
@@ -18,7 +19,8 @@ from imaging.stars.solution import MatchedStars, PlateSolution
 from imaging.stars.sparse import WIDEST_SCALE_TOLERANCE, solve_sparse
 from planner.errors import NoSolutionError
 
-_FISHEYE_DEG = 80.0  # of the diagonal, from which an equidistant lens is tried too
+_ROUGHEST_PX, _ROUGHEST = 2.0, 1e-3  # residuals beyond are no solution: px, half-diagonals
+_FISHEYE_DEG = 75.0  # of the diagonal, from which an equidistant lens is tried too
 _CENTROID_FLOOR_PX = 0.01  # below it the model of the star's profile, not noise, limits (measured)
 
 
@@ -119,6 +121,7 @@ def solve_detections(
         def sky_near(radius_rad: float, stars_per_sr: float):  # type: ignore[no-untyped-def]
             return stars_near(center, radius_rad, tt_s, stars_per_sr)
 
+        solutions = []
         for lens in lenses:
             attempt = solve_hinted(
                 field,
@@ -131,7 +134,12 @@ def solve_detections(
                 rotation_deg=hint.rotation_deg,
             )
             if attempt.match is not None:
-                return _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "hinted")
+                with suppress(NoSolutionError):
+                    solutions.append(
+                        _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "hinted")
+                    )
+        if solutions:  # flat or equidistant: the one that explains more stars
+            return max(solutions, key=lambda one: (len(one.matched.x_px), -one.rms_px))
         if hint.scale_tolerance <= WIDEST_SCALE_TOLERANCE:
             attempt = solve_sparse(
                 field,
@@ -224,6 +232,12 @@ def _solution(
         match = settle(match, prior, field, sky)
     assert prior is not None
     camera = match.fit.camera
+    rms_px = float(np.sqrt((match.fit.residual_px**2).sum(axis=1).mean()))
+    if rms_px > max(_ROUGHEST_PX, _ROUGHEST * field.half_diagonal_px):
+        raise NoSolutionError(
+            f"a pointing was found, but its {len(match.star)} stars scatter by {rms_px:.1f} px: the lens is not of "
+            "the kind assumed; a rough scale nearer to the truth would help"
+        )
     matched = MatchedStars(
         x_px=field.x_px[match.detection],
         y_px=field.y_px[match.detection],
@@ -240,7 +254,7 @@ def _solution(
         width_px=width,
         height_px=height,
         matched=matched,
-        rms_px=float(np.sqrt((match.fit.residual_px**2).sum(axis=1).mean())),
+        rms_px=rms_px,
         false_alarm_log10=attempt.false_alarm_log10,
         how=how,
         sigma_model_px=match.fit.sigma_model_px,
