@@ -60,7 +60,8 @@ def find_disc(data: np.ndarray, radius_px: float | None = None, radius_tolerance
         if best is None or score > best[0]:
             best = (score, radius, column + x0, row + y0, smooth, x0, y0)
     assert best is not None
-    _, radius, xc, yc, smooth, x0, y0 = best
+    radius, xc, yc = float(best[1]), float(best[2]), float(best[3])
+    smooth, x0, y0 = best[4:]
     xc, yc, radius, support, arc = _refined(
         x, y, ux, uy, xc, yc, radius, radius_px is not None, radius_tolerance
     )
@@ -71,7 +72,7 @@ def find_disc(data: np.ndarray, radius_px: float | None = None, radius_tolerance
     return RoughDisc(
         (xc + 0.5) * factor_x - 0.5,
         (yc + 0.5) * factor_y - 0.5,
-        radius * np.sqrt(factor_x * factor_y),
+        radius * float(np.sqrt(factor_x * factor_y)),
         0.7 * factor + 1.0,
         arc,
         rival,

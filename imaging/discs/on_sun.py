@@ -58,7 +58,7 @@ def planet_on_sun(
         raise NoSolutionError(
             f"what is dark there has {depth:.2f} of a planet's depth: a spot or a cloud, not a planet"
         )
-    notes = ()
+    notes: tuple[str, ...] = ()
     if depth < 0.8:
         notes = (f"the planet is {depth:.2f} as dark as a black disc: haze, stray light or a spot",)
     x, y = float(fit.parameters[0]), float(fit.parameters[1])
