@@ -59,10 +59,12 @@ def minnaert(
 ) -> np.ndarray:
     """Return brightness over a sphere, mu0^k mu^(k-1) (Minnaert 1941); k = 1 is Lambert's law, 0 off the lit disc.
 
-    `toward`, `side`: offsets in radii, the first toward the middle of the lit limb.
+    `toward`, `side`: offsets in radii, the first toward the middle of the lit limb. An exponent below 0.05, to which a
+    fit may stray, counts as 0.05: at zero the dark side would be lit.
     """
+    k = np.maximum(exponent, 0.05)
     inside = toward**2 + side**2
     mu = np.sqrt(np.clip(1 - inside, 1e-4, 1))
     angle = np.radians(phase_angle_deg)
     mu0 = np.clip(np.sin(angle) * toward + np.cos(angle) * mu, 0, 1)
-    return np.where(inside < 1, mu0**exponent * mu ** (exponent - 1), 0.0)
+    return np.where(inside < 1, mu0**k * mu ** (k - 1), 0.0)
