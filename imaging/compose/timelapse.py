@@ -109,12 +109,14 @@ def make_film(path: Path, material: Material, film: Film, force: bool = False) -
         raise InputError(f"{path}: a film's name ends in {', '.join(FORMATS)}")
     shots = _Shots(material, film)
     tt_s = np.array([frame.tt_s for frame in shots.frames])
+    if film.pace is not None:
+        count = int((tt_s[-1] - tt_s[0]) * film.fps / film.pace) + 1
+        if count > LONGEST_PICTURES:
+            raise InputError(
+                f"--pace {film.pace:g} makes {count} pictures ({count / film.fps:.0f} s); allowed are "
+                f"{LONGEST_PICTURES}: choose a larger pace"
+            )
     plan = schedule(tt_s, film.pace, film.fps)
-    if len(plan) > LONGEST_PICTURES:
-        raise InputError(
-            f"--pace {film.pace:g} makes {len(plan)} pictures ({len(plan) / film.fps:.0f} s); allowed are "
-            f"{LONGEST_PICTURES}: choose a larger pace"
-        )
     if suffix != ".mp4" and len(plan) > MOST_ANIMATED:
         raise InputError(
             f"{path}: {len(plan)} pictures are too many for an animated picture (at most {MOST_ANIMATED}); "
