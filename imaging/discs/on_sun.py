@@ -62,7 +62,9 @@ def planet_on_sun(
     if depth < 0.8:
         notes = (f"the planet is {depth:.2f} as dark as a black disc: haze, stray light or a spot",)
     x, y = float(fit.parameters[0]), float(fit.parameters[1])
-    covariance = fit.covariance[:2, :2] + np.eye(2) * moved_by_seeing(radius_px, sun) ** 2
+    # few pixels hold a disc this small, and what the blur's shape is not known to then shows (measured on drawn frames)
+    coarse = 0.01 * float(np.clip(2.5 - radius_px, 0, 1))
+    covariance = fit.covariance[:2, :2] + np.eye(2) * (moved_by_seeing(radius_px, sun) ** 2 + coarse**2)
     radius = radius_px * float(np.exp(fit.parameters[3]))
     return DiscPlace(
         x,
