@@ -99,7 +99,9 @@ def run_with(arguments: list[str]) -> int:
     except Exception as defect:
         log = _write_defect_log(arguments)
         click.echo(
-            f"syzygraph: a defect of ours ({type(defect).__name__}: {defect}); details in {log}", err=True
+            f"syzygraph: a defect of ours ({type(defect).__name__}: {' '.join(str(defect).split())[:200]}); "
+            f"details in {log}",
+            err=True,
         )
         return errors.EXIT_DEFECT
 
