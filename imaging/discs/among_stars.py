@@ -217,7 +217,8 @@ def _point(
     tolerance = replace(noise, relative=0.008, brightest_adu=float(stamp.data[stamp.usable].max()))
     x0, y0 = _clipped_centroid(stamp, x0, y0, noise, seen)
     near = 0.5 + 0.5 * seen
-    start, stages = np.array([x0, y0, np.log(seen)]), (0.008,)
+    start = np.array([x0, y0, np.log(seen)])
+    stages: tuple[float, ...] = (0.008,)
     if clipped or seen < 0.8:
         # a saturated or undersampled point has several minima: with large relative errors they are one
         stages = (0.1, 0.008)
@@ -241,7 +242,7 @@ def _point(
     height = float(light.max())
     if height < 3 * np.sqrt(noise.sky_adu2):
         raise NoSolutionError("nothing like a planet stands out of the sky there")
-    x, y = float(fit.parameters[0]), float(fit.parameters[1])
+    light_x, light_y = float(fit.parameters[0]), float(fit.parameters[1])
     dx, dy = body.light_offset_px()
     notes = []
     if body.lit_angle_deg is None and body.phase_angle_deg * body.radius_px > 2:
@@ -251,7 +252,8 @@ def _point(
     if clipped:
         notes.append(f"{clipped} saturated pixels left out")
     return DiscPlace(
-        x - dx, y - dy, fit.covariance[:2, :2], body.radius_px, 0.0, Blur(float(np.exp(fit.parameters[2]))), x, y,
+        light_x - dx, light_y - dy, fit.covariance[:2, :2], body.radius_px, 0.0,
+        Blur(float(np.exp(fit.parameters[2]))), light_x, light_y,
         height / float(np.sqrt(noise.sky_adu2)), fit.chi2, "point spread", clipped, tuple(notes),
     )  # fmt: skip
 
@@ -312,7 +314,7 @@ def _resolved(
     unit = max(float(stamp.data.shape[0]), 1.0)
     u, v = (xs - x0) / unit + 0 * ys, (ys - y0) / unit + 0 * xs
     plane = [np.ones(stamp.data.shape), u, v]
-    clear = 1.0
+    clear: np.ndarray | float = 1.0
     if moon is not None:
         dx, dy = x - moon.x_px, y - moon.y_px
         away = np.hypot(dx, dy) / moon.outline.ratio(np.arctan2(dy, dx)) - moon.radius_px
@@ -345,8 +347,8 @@ def _resolved(
     def components(parameters: np.ndarray) -> np.ndarray:
         return np.array([disc(parameters), *plane])
 
-    dx, dy = body.light_offset_px()
-    start = np.array([x0 - dx, y0 - dy, np.log(max(sigma, 0.3)), 0.0, 0.8])
+    light_dx, light_dy = body.light_offset_px()
+    start = np.array([x0 - light_dx, y0 - light_dy, np.log(max(sigma, 0.3)), 0.0, 0.8])
     fit = fit_stamp(
         stamp,
         components,
@@ -367,7 +369,7 @@ def _resolved(
     return DiscPlace(
         px, py, fit.covariance[:2, :2], float(body.radius_px * np.exp(fit.parameters[3])),
         float(body.radius_px * np.sqrt(fit.covariance[3, 3])), Blur(float(np.exp(fit.parameters[2])), wing),
-        px + dx, py + dy, height / float(np.sqrt(noise.sky_adu2)), fit.chi2, "lit disc", clipped, notes,
+        px + light_dx, py + light_dy, height / float(np.sqrt(noise.sky_adu2)), fit.chi2, "lit disc", clipped, notes,
     )  # fmt: skip
 
 

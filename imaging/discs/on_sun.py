@@ -199,8 +199,8 @@ def _search(
     missing = np.where(stamp.usable, (bare - stamp.data) / surface, 0.0)
     half = int(np.ceil(radius_px + 3 * sun.blur.sigma_px))
     line = np.arange(-half, half + 1)
-    kernel = np.clip(0.5 - (np.hypot(line[None, :], line[:, None]) - radius_px), 0, 1)
-    kernel = cv2.GaussianBlur(kernel, (0, 0), max(sun.blur.sigma_px, 0.3))
+    disc = np.clip(0.5 - (np.hypot(line[None, :], line[:, None]) - radius_px), 0, 1)
+    kernel: np.ndarray = cv2.GaussianBlur(disc, (0, 0), max(sun.blur.sigma_px, 0.3))
     kernel /= np.sum(kernel**2)
     depth = cv2.filter2D(missing, cv2.CV_64F, kernel, borderType=cv2.BORDER_CONSTANT)
     allowed = np.hypot(x - x_px, y - y_px) <= search_px

@@ -10,7 +10,7 @@ import numpy as np
 ARCSEC = np.pi / 648000.0
 
 
-def unit_vector(ra_deg: np.ndarray, dec_deg: np.ndarray) -> np.ndarray:
+def unit_vector(ra_deg: np.ndarray | float, dec_deg: np.ndarray | float) -> np.ndarray:
     """Return unit vectors, shape (3, ...)."""
     ra, dec = np.radians(ra_deg), np.radians(dec_deg)
     return np.stack([np.cos(dec) * np.cos(ra), np.cos(dec) * np.sin(ra), np.sin(dec)])

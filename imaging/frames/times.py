@@ -342,7 +342,7 @@ def _tt_s_of_time(time: Any) -> float:
 
 def _civil(parts: list[int], text: str, zone: Any) -> datetime:
     try:
-        return datetime(*parts, tzinfo=zone).astimezone(UTC)  # type: ignore[misc]
+        return datetime(*parts, tzinfo=zone).astimezone(UTC)  # type: ignore[arg-type, misc]
     except (ValueError, OverflowError):
         raise NoTimeError(f"{text!r} is not a date and time of the calendar") from None
 

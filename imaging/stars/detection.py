@@ -204,7 +204,9 @@ def _local_maxima(
         bad = ~np.isfinite(strip)
         if bad.any():
             strip[bad] = 0.0
-        smooth = cv2.sepFilter2D(strip, -1, kernel_1d, kernel_1d, borderType=cv2.BORDER_REFLECT_101)
+        smooth: np.ndarray = cv2.sepFilter2D(
+            strip, -1, kernel_1d, kernel_1d, borderType=cv2.BORDER_REFLECT_101
+        )
         smooth /= sigma
         if noise is None:  # measured, because interpolation and compression correlate the noise
             sample = smooth[::3, ::3].ravel()

@@ -62,11 +62,11 @@ def scores(guesses: Hypotheses, field: Field, sky: Sky) -> np.ndarray:
     middle_x, middle_y = field.x_px[group].mean(axis=1), field.y_px[group].mean(axis=1)
     zero = np.median(field.magnitude[group] - sky.magnitude[guesses.sky_stars[:count]], axis=1)
     gate = _GATE_PX + _STRETCH * np.hypot(px - middle_x[h], py - middle_y[h])
-    near = min(4, len(field.x_px))
+    nearest = min(4, len(field.x_px))
     distance, index = field.tree.query(
-        np.column_stack([px, py]), k=near, distance_upper_bound=float(gate.max())
+        np.column_stack([px, py]), k=nearest, distance_upper_bound=float(gate.max())
     )
-    distance, index = distance.reshape(len(h), near), index.reshape(len(h), near)
+    distance, index = distance.reshape(len(h), nearest), index.reshape(len(h), nearest)
     index = np.minimum(index, len(field.x_px) - 1)
     away = field.magnitude[index] - (sky.magnitude[n] + zero[h])[:, None]
     bright = (np.abs(away) < _MAGNITUDES) | (field.saturated[index] & (away > 0))

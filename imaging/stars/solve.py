@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from contextlib import suppress
 from dataclasses import dataclass
+from typing import TypedDict
 
 import numpy as np
 
@@ -165,17 +166,17 @@ def solve_detections(
             focal, slack = ARCSEC_RAD / hint.scale_arcsec_px, 1 + hint.scale_tolerance
             ranges.insert(0, (focal / slack, focal * slack))
         for allowed in ranges:
-            lens = hint.lens if allowed is not None else None
+            held = hint.lens if allowed is not None else None
             attempt = solve_blind(
                 field,
                 quad_index(tick),
                 tt_s,
-                lens or unknown_lens(3),
+                held or unknown_lens(3),
                 parity=hint.parity if allowed is not None else None,
                 focal_range_px=allowed,
             )
             if attempt.match is not None:
-                return _solution(attempt, lens, field, shape, tt_s, row_zero, exclude, "blind")
+                return _solution(attempt, held, field, shape, tt_s, row_zero, exclude, "blind")
         tried.append(f"the whole sky, best chance 1e{attempt.best_log10:.0f}")
     raise NoSolutionError(
         f"{len(found)} stars found, no pointing defended; tried {'; '.join(tried) or 'nothing, for want of a hint'}; "
@@ -265,7 +266,15 @@ def _solution(
     )
 
 
-def _orientation(camera: Camera, width: int, height: int, row_zero: str) -> dict[str, float | bool]:
+class _Orientation(TypedDict):
+    center_ra_deg: float
+    center_dec_deg: float
+    scale_arcsec_px: float
+    position_angle_deg: float
+    mirrored: bool
+
+
+def _orientation(camera: Camera, width: int, height: int, row_zero: str) -> _Orientation:
     """Return centre, scale and orientation of the middle of the frame, as a user sees it."""
     x, y = (width - 1) / 2, (height - 1) / 2
     here, right, up = camera.vectors(np.array([x, x + 1, x]), np.array([y, y, y + 1]))

@@ -81,12 +81,14 @@ def rate_e_s(through: Band, magnitude: np.ndarray | float) -> np.ndarray:
     return through.zero_rate_e_s * 10.0 ** (-0.4 * np.asarray(magnitude, float))
 
 
-def extinguished(magnitude: np.ndarray, airmass: np.ndarray, extinction_mag: float) -> np.ndarray:
+def extinguished(
+    magnitude: np.ndarray | float, airmass: np.ndarray | float, extinction_mag: float
+) -> np.ndarray:
     """Return the magnitude under the atmosphere: Bouguer's law."""
     return np.asarray(magnitude, float) + extinction_mag * np.asarray(airmass, float)
 
 
-def sky_rate_e_s_px(through: Band, sky_mag_arcsec2: np.ndarray, scale_arcsec_px: float) -> np.ndarray:
+def sky_rate_e_s_px(through: Band, sky_mag_arcsec2: np.ndarray | float, scale_arcsec_px: float) -> np.ndarray:
     """Return electrons a second in a pixel from the sky; its brightness is as seen, extinction included."""
     return rate_e_s(through, sky_mag_arcsec2) * scale_arcsec_px**2
 

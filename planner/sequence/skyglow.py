@@ -28,19 +28,21 @@ def v_mag_arcsec2(nanolambert: np.ndarray) -> np.ndarray:
     return (_NL_B - np.log(np.asarray(nanolambert, float) / _NL_A)) / _NL_C
 
 
-def scattering_airmass(altitude_deg: np.ndarray) -> np.ndarray:
+def scattering_airmass(altitude_deg: np.ndarray | float) -> np.ndarray:
     """Return X = (1 - 0.96 sin^2 z)^-1/2, equation 3 of the 1991 paper: 5 at the horizon."""
     return 1 / np.sqrt(1 - 0.96 * np.cos(np.radians(np.clip(altitude_deg, 0, 90))) ** 2)
 
 
-def dark_nl(zenith_v_mag_arcsec2: float, altitude_deg: np.ndarray, extinction_mag: float) -> np.ndarray:
+def dark_nl(
+    zenith_v_mag_arcsec2: float, altitude_deg: np.ndarray | float, extinction_mag: float
+) -> np.ndarray:
     """Return the dark sky at an altitude, equation 2: brighter airglow, dimmed by extinction."""
     mass = scattering_airmass(altitude_deg)
     return nanolamberts(zenith_v_mag_arcsec2) * 10 ** (-0.4 * extinction_mag * (mass - 1)) * mass
 
 
 def moonlight_nl(
-    altitude_deg: np.ndarray,
+    altitude_deg: np.ndarray | float,
     moon_altitude_deg: np.ndarray,
     moon_distance_deg: np.ndarray,
     moon_phase_angle_deg: np.ndarray,
@@ -59,7 +61,7 @@ def moonlight_nl(
     )
 
 
-def sunlight_nl(sun_altitude_deg: np.ndarray) -> np.ndarray:
+def sunlight_nl(sun_altitude_deg: np.ndarray | float) -> np.ndarray:
     """Return what the Sun adds, above and below the horizon; nothing from 18 degrees down."""
     altitude = np.asarray(sun_altitude_deg, float)
     zeta = np.clip(-altitude - 5, 0, 10)
@@ -72,8 +74,8 @@ def sunlight_nl(sun_altitude_deg: np.ndarray) -> np.ndarray:
 def sky_v_mag_arcsec2(
     dark_v_mag_arcsec2: float,
     extinction_mag: float,
-    altitude_deg: np.ndarray,
-    sun_altitude_deg: np.ndarray,
+    altitude_deg: np.ndarray | float,
+    sun_altitude_deg: np.ndarray | float,
     moon_altitude_deg: np.ndarray | float = -90.0,
     moon_distance_deg: np.ndarray | float = 90.0,
     moon_phase_angle_deg: np.ndarray | float = 180.0,

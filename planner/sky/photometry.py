@@ -102,7 +102,7 @@ def asteroid_magnitude(
     return h + 5.0 * np.log10(np.asarray(sun_distance_au) * np.asarray(distance_au)) - 2.5 * np.log10(lit)
 
 
-def airmass(apparent_altitude_deg: np.ndarray) -> np.ndarray:
+def airmass(apparent_altitude_deg: np.ndarray | float) -> np.ndarray:
     """Return the airmass: Kasten & Young 1989, Applied Optics 28, 4735; infinite below the horizon."""
     altitude = np.asarray(apparent_altitude_deg, float)
     above = np.maximum(altitude, 0.0)
@@ -110,6 +110,6 @@ def airmass(apparent_altitude_deg: np.ndarray) -> np.ndarray:
     return np.where(altitude < 0.0, np.inf, mass)
 
 
-def extinction_mag(apparent_altitude_deg: np.ndarray, extinction_mag_airmass: float) -> np.ndarray:
+def extinction_mag(apparent_altitude_deg: np.ndarray | float, extinction_mag_airmass: float) -> np.ndarray:
     """Return how many magnitudes the air takes at this altitude."""
     return extinction_mag_airmass * airmass(apparent_altitude_deg)

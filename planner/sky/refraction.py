@@ -25,7 +25,7 @@ _GAS_CONSTANT = 8.314462618 / 28.9644e-3 * 1e-6  # dry air: R / M in km^2 s^-2 K
 _DEEPEST_DEG = -3.0
 
 
-def refraction_arcsec(true_altitude_deg: np.ndarray, observer: Observer | None) -> np.ndarray:
+def refraction_arcsec(true_altitude_deg: np.ndarray | float, observer: Observer | None) -> np.ndarray:
     """Return how much higher than its true altitude a point is seen; 0 without an observer or at pressure 0."""
     altitude = np.asarray(true_altitude_deg, float)
     table = _table_of(observer)
@@ -35,12 +35,12 @@ def refraction_arcsec(true_altitude_deg: np.ndarray, observer: Observer | None) 
     return np.interp(altitude, true_deg, bent_arcsec)
 
 
-def apparent_altitude_deg(true_altitude_deg: np.ndarray, observer: Observer | None) -> np.ndarray:
+def apparent_altitude_deg(true_altitude_deg: np.ndarray | float, observer: Observer | None) -> np.ndarray:
     """Return the altitude at which a point is seen."""
     return np.asarray(true_altitude_deg) + refraction_arcsec(true_altitude_deg, observer) / 3600.0
 
 
-def true_altitude_deg(apparent_altitude_deg: np.ndarray, observer: Observer | None) -> np.ndarray:
+def true_altitude_deg(apparent_altitude_deg: np.ndarray | float, observer: Observer | None) -> np.ndarray:
     """Return the airless altitude of a point seen at this altitude: the inverse of `apparent_altitude_deg`."""
     seen = np.asarray(apparent_altitude_deg, float)
     table = _table_of(observer)

@@ -28,7 +28,7 @@ def frames(path: Path, options: ReadOptions, start: int = 0, stop: int | None = 
     with Image.open(path) as image:
         check_size(path, *image.size)
         is_deep = image.mode.startswith("I;16") or (image.format == "PNG" and image.mode in ("I", "RGB"))
-        pixels = None
+        pixels: np.ndarray | None = None
         if is_deep:  # Pillow reads 16-bit colour as 8-bit; OpenCV keeps it
             import cv2
 
