@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from typing import Any
 
 import numpy as np
 
@@ -21,7 +22,7 @@ def sightings_of(measured: Sequence[Measurement], path: PredictedPath, limb_sigm
     tt_s = np.array([m.time.middle_tt_s for m in measured])
     exposure_s = np.array([m.exposure_s for m in measured])
     if measured[0].stars is not None:
-        places = [m.stars for m in measured]
+        places = [m.stars for m in measured if m.stars is not None]
         return among_stars(
             tt_s,
             exposure_s,
@@ -29,13 +30,15 @@ def sightings_of(measured: Sequence[Measurement], path: PredictedPath, limb_sigm
             np.array([place.dec_deg for place in places]),
             np.stack([place.covariance_arcsec2 for place in places]),
         )
-    offsets = np.array([m.nominal.to_sky(*map(np.float64, m.offset_px)) for m in measured])
+    discs = [m.disc for m in measured if m.disc is not None]
+    pairs = list(zip(measured, discs, strict=True))
+    offsets = np.array([m.nominal.to_sky(*map(np.asarray, m.offset_px)) for m in measured])
     covariance = np.stack(
-        [m.nominal.covariance_to_sky(m.covariance_px2 + m.disc.covariance_px2) for m in measured]
+        [m.nominal.covariance_to_sky(m.covariance_px2 + disc.covariance_px2) for m, disc in pairs]
     )
     semidiameter = path.at(tt_s).reference_semidiameter_arcsec
-    radius = np.array([m.disc.radius_px * m.nominal.scale_arcsec_px for m in measured])
-    sigma = np.array([m.disc.radius_sigma_px / m.disc.radius_px for m in measured])
+    radius = np.array([disc.radius_px * m.nominal.scale_arcsec_px for m, disc in pairs])
+    sigma = np.array([disc.radius_sigma_px / disc.radius_px for disc in discs])
     return Sightings(
         tt_s=tt_s,
         exposure_s=exposure_s,
@@ -62,14 +65,16 @@ def rows_of(
     """
     from planner.sky.timescale import utc_iso
 
+    if not measurements:
+        return []
     tt_s = np.array([m.time.middle_tt_s for m in measurements])
-    stamped = np.atleast_1d(utc_iso(tt_s, 3)) if len(tt_s) else []
-    expected = path.at(tt_s) if len(tt_s) else None
+    stamped = np.atleast_1d(utc_iso(tt_s, 3))
+    expected = path.at(tt_s)
     places = _measured_places(sightings, diagnosis, path) if sightings is not None and diagnosis else {}
     position = {int(index): number for number, index in enumerate(used)}
     rows = []
     for index, m in enumerate(measurements):
-        values = {
+        values: dict[str, Any] = {
             "file": m.file,
             "frame_index": m.frame_index,
             "passage": m.nominal.passage,
@@ -104,7 +109,7 @@ def rows_of(
                 "rotation_deg": m.stars.rotation_deg,
                 "parity": m.stars.parity,
             }
-        if index in position and places:
+        if index in position and places and diagnosis is not None:
             values |= {name: column[position[index]] for name, column in places.items() if name != "off"}
             values |= _camera_of(m, diagnosis)
             off = bool(places["off"][position[index]])

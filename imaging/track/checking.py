@@ -233,7 +233,9 @@ def _diagnosed(sightings: Sightings, question: Question) -> tuple[Diagnosis | No
 def _from_another_site(diagnosis: Diagnosis, promise: Promise, question: Question) -> Diagnosis:
     """Return the diagnosis that the frames come from a place away from the plan's, where that explains them."""
     plain = next((reading for reading in diagnosis.readings if reading.name == "plain"), None)
-    moved = displaced_site(plain, promise, question) if plain else None
+    if plain is None:
+        return diagnosis
+    moved = displaced_site(plain, promise, question)
     if moved is None or moved[1].fit.jitter_arcsec > explained_limit_arcsec(plain.sightings, question):
         return diagnosis
     return replace(diagnosis, reading=moved[1], findings=(moved[0],), explained=True)

@@ -169,7 +169,7 @@ def path_figure(result: CheckResult):  # type: ignore[no-untyped-def]
 
 def save_figures(result: CheckResult, folder: Path, force: bool = False) -> list[Path]:
     """Write each figure as PNG, SVG and PDF and return their paths."""
-    written = []
+    written: list[Path] = []
     if not result.rows:
         return written
     for name, make in (("residuals", residual_figure), ("path", path_figure)):

@@ -296,7 +296,7 @@ def _misfit(s: Sightings, path: PredictedPath, clock_s: float) -> float:
 
 def _still_path(s: Sightings, path: PredictedPath) -> PredictedPath | None:
     """Return a path that stands still where the median of the sightings is."""
-    if s.on_disc:
+    if s.anchor_ra_deg is None or s.anchor_dec_deg is None:
         place = np.median(s.places, axis=0)
     else:
         place = np.array([np.median(s.anchor_ra_deg), np.median(s.anchor_dec_deg)])

@@ -72,9 +72,10 @@ class TrackFit:
     @property
     def rms_arcsec(self) -> tuple[float, float]:
         """Root mean square of the residuals along and across, over the frames used."""
-        return tuple(
+        along, across = (
             float(np.sqrt(np.mean(r[self.used] ** 2))) for r in (self.along_arcsec, self.across_arcsec)
         )
+        return along, across
 
 
 def turn(places: np.ndarray, angle_rad: float) -> np.ndarray:

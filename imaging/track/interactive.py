@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 
 from imaging.track.figures import (
@@ -111,9 +113,10 @@ _TIPS = [
 
 
 def _residuals(result: CheckResult, source):  # type: ignore[no-untyped-def]
-    from bokeh.models import HoverTool, Span, Whisker
+    from bokeh.models.annotations import Span, Whisker
+    from bokeh.models.tools import HoverTool
 
-    made = []
+    made: list[Any] = []
     for part in ("along", "across"):
         shared = {"x_range": made[0].x_range} if made else {}
         low, high = _range(source.data, part)

@@ -36,7 +36,7 @@ class Measurer:
             camera=frame.camera,
             site=frame.site,
             row_zero=frame.row_zero,
-            digest=hashlib.blake2b(np.ascontiguousarray(frame.data), digest_size=12).hexdigest(),
+            digest=hashlib.blake2b(np.ascontiguousarray(frame.data).data, digest_size=12).hexdigest(),
         )
         path = self.promise.path
         try:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 
@@ -92,7 +93,7 @@ class OnDisc:
                 self.promise.path.observer,
             )
         radius = semidiameter / nominal.scale_arcsec_px
-        options = {"outline": outline, "saturation": frame.saturation_adu}
+        options: dict[str, Any] = {"outline": outline, "saturation": frame.saturation_adu}
         if geometry.reference == "moon":
             options["radius_sigma_px"] = RADIUS_TOLERANCE * radius
             if float(disc.phase_angle_deg[0]) > FULL_PHASE_DEG:

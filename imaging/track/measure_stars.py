@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 
@@ -73,7 +74,7 @@ class AmongStars:
     ) -> DiscPlace:
         """Place the planet near its prediction; or, where a far brighter stranger stands elsewhere, place that."""
         strangers = _strangers(found, solution)
-        options = {
+        options: dict[str, Any] = {
             "fwhm_px": float(found.psf_fwhm_px),
             "saturation": frame.saturation_adu,
             "gain_e_adu": frame.gain_e_adu,

@@ -146,6 +146,9 @@ class _Problem:
         from planner.sky.places import observer_position_km
         from planner.sky.timescale import tdb_s
 
+        assert sightings.anchor_ra_deg is not None  # the track was looked at: its places are among stars
+        assert sightings.anchor_dec_deg is not None
+        self.anchor_ra_deg, self.anchor_dec_deg = sightings.anchor_ra_deg, sightings.anchor_dec_deg
         self.s, self.body = sightings, body
         self.tdb_s = np.asarray(tdb_s(sightings.tt_s))
         self.epoch_tt_s = float((sightings.tt_s.min() + sightings.tt_s.max()) / 2.0)
@@ -160,7 +163,7 @@ class _Problem:
     def first_guess(self) -> np.ndarray:
         """Return the state of the circular orbit that fits best, over many distances and both senses of direction."""
         middle = int(np.argmin(np.abs(self.days)))
-        ra, dec = np.radians(self.s.anchor_ra_deg[middle]), np.radians(self.s.anchor_dec_deg[middle])
+        ra, dec = np.radians(self.anchor_ra_deg[middle]), np.radians(self.anchor_dec_deg[middle])
         sight = np.array([np.cos(dec) * np.cos(ra), np.cos(dec) * np.sin(ra), np.sin(dec)])
         here = self.observer_au[middle] - self.sun_au[middle]
         best, best_cost = None, np.inf
@@ -220,7 +223,7 @@ class _Problem:
     def _residuals(self, states: np.ndarray, perturbed: bool) -> np.ndarray:
         vectors = self.directions_au(states, perturbed)
         unit = vectors / np.linalg.norm(vectors, axis=2, keepdims=True)
-        offsets = [tangent_offsets(self.s.anchor_ra_deg, self.s.anchor_dec_deg, each) for each in unit]
+        offsets = [tangent_offsets(self.anchor_ra_deg, self.anchor_dec_deg, each) for each in unit]
         return -np.nan_to_num(np.stack([np.column_stack(each) for each in offsets]), nan=1e6)
 
     def _linear(self, state: np.ndarray, perturbed: bool) -> tuple[np.ndarray, np.ndarray, np.ndarray]:

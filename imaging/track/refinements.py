@@ -170,12 +170,13 @@ def _scale_findings(ratio: float, sigma: float, plan: Plan) -> list[Finding]:
 
 
 def _star_camera(plan: Plan, chosen: Sequence[Measurement]) -> CameraFindings:
-    ratio = np.array([m.stars.scale_arcsec_px / m.nominal.scale_arcsec_px for m in chosen])
-    scale = np.array([m.stars.scale_arcsec_px for m in chosen])
-    n = len(chosen)
+    plates = [(m, m.stars) for m in chosen if m.stars is not None]
+    ratio = np.array([stars.scale_arcsec_px / m.nominal.scale_arcsec_px for m, stars in plates])
+    scale = np.array([stars.scale_arcsec_px for _, stars in plates])
+    n = len(plates)
     sigma = float(np.std(scale, ddof=1) / np.sqrt(n)) if n > 2 else NAN
     findings = _scale_findings(float(np.median(ratio)), max(float(np.std(ratio)), 1e-4), plan)
-    flipped = np.mean([m.stars.parity != m.nominal.parity for m in chosen])
+    flipped = np.mean([stars.parity != m.nominal.parity for m, stars in plates])
     if flipped > 0.5:
         findings.append(
             Finding(
@@ -185,9 +186,9 @@ def _star_camera(plan: Plan, chosen: Sequence[Measurement]) -> CameraFindings:
                 f"(by the stars of {round(flipped * n)} of {n} frames).",
             )
         )
-    turn = np.radians([m.stars.rotation_deg + (180.0 if m.row_zero == "top" else 0.0) for m in chosen])
+    turn = np.radians([stars.rotation_deg + (180.0 if m.row_zero == "top" else 0.0) for m, stars in plates])
     up = float(np.degrees(np.angle(np.mean(np.exp(1j * turn)))) % 360.0)
-    away = np.array([(m.stars.rotation_deg - m.nominal.rotation_deg + 180) % 360 - 180 for m in chosen])
+    away = np.array([(stars.rotation_deg - m.nominal.rotation_deg + 180) % 360 - 180 for m, stars in plates])
     if flipped < 0.5 and abs(np.median(away)) > 5.0:
         findings.append(_rotation_finding(up, NAN, float(abs(np.median(away)))))
     return CameraFindings(float(np.median(scale)), sigma, up, NAN, tuple(findings))

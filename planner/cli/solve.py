@@ -70,7 +70,7 @@ def command(  # type: ignore[no-untyped-def]
                 from imaging.stars.quicklook import write_quicklook
                 from imaging.stars.solve import DEFAULT_EPOCH_TT_S
 
-                time = solved.frame.time
+                time = solved.frame.time if solved.frame is not None else None
                 tt_s = time.middle_tt_s if time is not None else DEFAULT_EPOCH_TT_S
                 write_wcs(solved.solution, output / f"{solved.path.stem}.wcs.fits", force)
                 write_quicklook(solved, output / f"{solved.path.stem}.solved.png", tt_s, force)
