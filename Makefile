@@ -3,7 +3,7 @@ PYTHON ?= python3
 VENV := .venv
 BIN := $(VENV)/bin
 
-.PHONY: demo test test-all check format bench clean
+.PHONY: demo test test-all format bench clean
 
 $(VENV)/.stamp-installed: pyproject.toml
 	$(PYTHON) -c 'import sys; sys.exit(sys.version_info < (3, 11) and "Python 3.11 or later is needed: make PYTHON=python3.11")'
@@ -14,16 +14,14 @@ $(VENV)/.stamp-installed: pyproject.toml
 demo: $(VENV)/.stamp-installed   ## three briefs, from prediction to picture
 	$(BIN)/syzygraph demo
 
-test: $(VENV)/.stamp-installed   ## lint, then all tests but the slow ones
+test: $(VENV)/.stamp-installed   ## lint, types, then all tests but the slow ones
 	$(BIN)/ruff check .
 	$(BIN)/ruff format --check .
+	$(BIN)/mypy
 	OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 $(BIN)/pytest -n 2 --dist worksteal -m 'not slow'
 
 test-all: $(VENV)/.stamp-installed   ## the slow ones too
 	OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 $(BIN)/pytest -n 2 --dist worksteal
-
-check: test                      ## tests and types
-	$(BIN)/mypy
 
 format: $(VENV)/.stamp-installed
 	$(BIN)/ruff check --fix . ; $(BIN)/ruff format .
