@@ -129,7 +129,7 @@ def understand(
     aside += doubles
     measurements, others = _of_one_camera(measurements)
     aside += others
-    measurements = _without_faint_strays(measurements)
+    measurements = _without_lone_strays(_without_faint_strays(measurements))
     findings = frame_findings(measurements, plan)
     measurements.sort(key=lambda m: m.time.middle_tt_s)
     promise = promise or Promise(plan)
@@ -210,6 +210,18 @@ def _without_faint_strays(measurements: Sequence[Measurement]) -> list[Measureme
         replace(m, x_px=float("nan"), reason=reason) if m.measured and m.stray_rate_adu_s < least else m
         for m in measurements
     ]
+
+
+def _without_lone_strays(measurements: Sequence[Measurement]) -> list[Measurement]:
+    """Return the measurements, those unmeasured that took a far point where most frames have the target near.
+
+    A slip of clock, site or camera moves the target in all frames; a star or a spot is taken for it in a few.
+    """
+    far = sum(m.measured and m.far for m in measurements)
+    if 2 * far >= sum(m.measured for m in measurements):
+        return list(measurements)
+    reason = "only a point elsewhere, while most frames have the target where it is predicted"
+    return [replace(m, x_px=float("nan"), reason=reason) if m.measured and m.far else m for m in measurements]
 
 
 def usual_jitter_arcsec(plan: Plan, reference: str) -> float:

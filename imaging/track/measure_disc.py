@@ -72,6 +72,7 @@ class OnDisc:
             y_px=place.y_px,
             covariance_px2=place.covariance,
             stray_rate_adu_s=self._stray_rate,
+            far=bool(np.hypot(*self._shift_px) > self._near_px(frame, radius)),
             reason="; ".join((*limb.notes, *place.notes)),
         )
 
@@ -115,7 +116,7 @@ class OnDisc:
         stray: bool,
     ) -> DiscPlace:
         """Look for the target near its prediction, near where the last frame had it, and if `stray` anywhere."""
-        near = max(NEAR_ARCSEC / self.promise.rig.scale_arcsec_px / frame.binning, 3 * radius_px, 8.0)
+        near = self._near_px(frame, radius_px)
         center = np.array([limb.x_px, limb.y_px])
         tries = [(predicted, near)]
         if np.hypot(*self._shift_px) > near / 2:
@@ -134,6 +135,10 @@ class OnDisc:
                 self._stray_rate = point[1] / max(frame.exposure_s or 1.0, 1e-6)
                 return self._sure(frame, limb, point[0], 3.0, radius_px, geometry)
         raise reason
+
+    def _near_px(self, frame: Frame, radius_px: float) -> float:
+        """Return how far from its prediction the target is looked for first."""
+        return max(NEAR_ARCSEC / self.promise.rig.scale_arcsec_px / frame.binning, 3 * radius_px, 8.0)
 
     def _sure(
         self,

@@ -51,7 +51,7 @@ class Measurement:
     """What one frame gave. `solved_by` is `none` and `x_px` NaN where it gave nothing, with the reason.
 
     `covariance_px2`: (2, 2), of the target. `predicted_px`: where it was expected at the stamped time.
-    `stray_rate_adu_s`: light of a point taken for the target far from where it was expected; NaN otherwise.
+    `far`: found where it was not expected; `stray_rate_adu_s`: light of a point taken for the target there, else NaN.
     """
 
     file: str
@@ -73,6 +73,7 @@ class Measurement:
     row_zero: str = "bottom"
     digest: str = ""
     stray_rate_adu_s: float = NAN
+    far: bool = False
     cutout: Cutout | None = None
 
     @property
