@@ -356,8 +356,7 @@ def _resolved(
         np.array([0.02, 0.02, 0.01, 0.005, 0.02]),
         noise.variance,
         prior=np.array([np.inf, np.inf, 0.2 if moon is not None else 0.5, 0.01, 0.25]),
-        # Minnaert's exponent stays positive: below zero the terminator would outshine the disc
-        limit=np.array([max(6.0, 2 * body.radius_px)] * 2 + [1.5, 0.2, 0.5]),
+        limit=np.array([max(6.0, 2 * body.radius_px)] * 2 + [1.5, 0.2, 1.0]),
         robust=8.0,
         positive=1,
     )
