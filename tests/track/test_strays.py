@@ -12,14 +12,23 @@ from imaging.track.measurement import Measurement
 
 def frames_of(near: int, far: int, lost: int = 0) -> list[Measurement]:
     kinds = ["near"] * near + ["far"] * far + ["lost"] * lost
-    nominal, time = SimpleNamespace(), SimpleNamespace()
+    nominal, time, disc = SimpleNamespace(), SimpleNamespace(), SimpleNamespace()
     return [
         Measurement(
-            f"{kind}_{number}.fits", 0, time, 0.1, nominal, (100, 100), "moon-limb",
-            x_px=float("nan") if kind == "lost" else 50.0, y_px=50.0, far=kind == "far",
-        )  # fmt: skip
+            f"{kind}_{number}.fits",
+            0,
+            time,
+            0.1,
+            nominal,
+            (100, 100),
+            "moon-limb",
+            x_px=float("nan") if kind == "lost" else 50.0,
+            y_px=50.0,
+            far=kind == "far",
+            disc=disc,
+        )
         for number, kind in enumerate(kinds)
-    ]  # fmt: skip
+    ]
 
 
 @pytest.mark.parametrize(("near", "far", "lost"), [(15, 3, 14), (4, 3, 0), (1, 0, 0)])
