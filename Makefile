@@ -12,7 +12,7 @@ $(VENV)/.stamp-installed: pyproject.toml
 	touch $@
 
 demo: $(VENV)/.stamp-installed   ## three briefs, from prediction to picture
-	$(BIN)/syzygraph demo
+	OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 $(BIN)/syzygraph demo
 
 test: $(VENV)/.stamp-installed   ## lint, types, then all tests but the slow ones
 	$(BIN)/ruff check .
