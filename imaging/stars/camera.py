@@ -9,7 +9,7 @@ leave them near zero, or near a lens learned before, and the covariance says wha
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
-from functools import lru_cache
+from functools import cached_property, lru_cache
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -87,12 +87,23 @@ class Camera:
 
 def monomials(u: np.ndarray, v: np.ndarray, terms: tuple[tuple[int, int], ...]) -> np.ndarray:
     """Return u^p v^q of every term, (terms, n)."""
-    top = max((max(term) for term in terms), default=0)
-    power_u, power_v = [np.ones_like(u)], [np.ones_like(v)]
-    for _ in range(top):
-        power_u.append(power_u[-1] * u)
-        power_v.append(power_v[-1] * v)
-    return np.array([power_u[p] * power_v[q] for p, q in terms]).reshape(len(terms), *np.shape(u))
+    p, q = _exponents(terms)
+    top = int(max(p.max(initial=0), q.max(initial=0)))
+    return _powers(u, top)[p] * _powers(v, top)[q]
+
+
+@lru_cache(maxsize=32)
+def _exponents(terms: tuple[tuple[int, int], ...]) -> tuple[np.ndarray, np.ndarray]:
+    table = np.array(terms, dtype=int).reshape(len(terms), 2)
+    return table[:, 0], table[:, 1]
+
+
+def _powers(base: np.ndarray, top: int) -> np.ndarray:
+    out = np.empty((top + 1, *np.shape(base)))
+    out[0] = 1.0
+    for n in range(top):
+        np.multiply(out[n], base, out=out[n + 1])
+    return out
 
 
 def unproject(
@@ -107,7 +118,7 @@ def unproject(
 
 def project(vectors: np.ndarray, focal_px: float, projection: str = "TAN") -> tuple[np.ndarray, np.ndarray]:
     """Return ideal offsets of unit vectors (n, 3) in camera axes; NaN beyond 85 (TAN) or 175 degrees (ARC)."""
-    x, y, z = np.moveaxis(vectors, -1, 0)
+    x, y, z = vectors[..., 0], vectors[..., 1], vectors[..., 2]
     with np.errstate(divide="ignore", invalid="ignore"):
         if projection == "TAN":
             factor = np.where(z > 0.087, focal_px / z, np.nan)
@@ -135,7 +146,7 @@ class CameraFit:
     def covariance_at(self, x_px: np.ndarray, y_px: np.ndarray) -> np.ndarray:
         """Return the (n, 2, 2) covariance in px^2 of where the camera puts a direction seen near these pixels."""
         vectors = self.camera.vectors(x_px, y_px)
-        jacobian = _jacobian(self.camera, np.asarray(x_px, float), np.asarray(y_px, float), vectors)
+        _, jacobian = _linearised(self.camera, np.asarray(x_px, float), np.asarray(y_px, float), vectors)
         carried = jacobian.reshape(-1, jacobian.shape[2]) @ self.covariance
         return carried.reshape(jacobian.shape) @ jacobian.transpose(0, 2, 1)
 
@@ -154,6 +165,16 @@ class Lens:
     axis: np.ndarray
     axis_sigma: np.ndarray
     projection: str = "TAN"
+
+    @cached_property
+    def precision(self) -> np.ndarray:
+        """The inverse covariance of all parameters of a fit; orientation and focal length are free."""
+        size = 6 + 2 * len(self.terms)
+        precision = np.zeros((size, size))
+        precision[range(4), range(4)] = [1e-12, 1e-12, 1e-12, 1e-4]
+        precision[[4, 5], [4, 5]] = 1 / np.maximum(self.axis_sigma, 1e-9) ** 2
+        precision[6:, 6:] = np.linalg.inv(self.covariance)
+        return precision
 
 
 @lru_cache(maxsize=16)
@@ -213,56 +234,50 @@ def fit_camera(
         camera = replace(camera, axis_x_px=float(x), axis_y_px=float(y))
     count = len(x_px)
     sigma_model, weight = 0.0, np.ones(count)
-    prior = _prior_precision(lens)
-    residual = np.zeros((count, 2))
+    prior = lens.precision
+    robust = robust and count >= _ROBUST_STARS
     for iteration in range(iterations):
-        residual = _residual(camera, x_px, y_px, vectors)
-        if iteration and robust and count >= 6:
-            sigma_model = _extra_scatter(residual, sigma_px, count)
-        inverse = 1 / (sigma_px**2 + sigma_model**2)
-        if robust and count >= 6 and iteration:
-            chi2 = (residual**2).sum(axis=1) * inverse
-            weight = 6.0 / (4.0 + chi2)
-        jacobian = _jacobian(camera, x_px, y_px, vectors)
-        root = np.sqrt(weight * inverse)[:, None, None]
+        residual, jacobian = _linearised(camera, x_px, y_px, vectors)
+        if robust and iteration:
+            sigma_model = _extra_scatter(residual, sigma_px)
+            weight = 6.0 / (4.0 + (residual**2).sum(axis=1) / (sigma_px**2 + sigma_model**2))
+        root = np.sqrt(weight / (sigma_px**2 + sigma_model**2))[:, None, None]
         scaled = (jacobian * root).reshape(2 * count, -1)
         normal = scaled.T @ scaled + prior
-        now = np.concatenate(
-            [
-                np.zeros(4),
-                [
-                    (camera.axis_x_px - middle[0]) / half - lens.axis[0],
-                    (camera.axis_y_px - middle[1]) / half - lens.axis[1],
-                ],
-                (np.asarray(camera.coefficients) - lens.coefficients).ravel(),
-            ]
-        )
+        now = np.zeros(len(prior))
+        now[4] = (camera.axis_x_px - middle[0]) / half - lens.axis[0]
+        now[5] = (camera.axis_y_px - middle[1]) / half - lens.axis[1]
+        now[6:] = (np.asarray(camera.coefficients) - lens.coefficients).ravel()
         right = scaled.T @ (residual * root[:, :, 0]).ravel()
         step = np.linalg.solve(normal, right - prior @ now)
         camera = _stepped(camera, step)
         if iteration >= 2 and np.abs(step[3:]).max() < 1e-7:
             break
     residual = _residual(camera, x_px, y_px, vectors)
-    if robust and count >= 6:
-        sigma_model = _extra_scatter(residual, sigma_px, count)
+    if robust:
+        sigma_model = _extra_scatter(residual, sigma_px)
     return CameraFit(camera, np.linalg.inv(normal), sigma_model, residual, weight)
 
 
-def _prior_precision(lens: Lens) -> np.ndarray:
-    size = 6 + 2 * len(lens.terms)
-    precision = np.zeros((size, size))
-    precision[range(4), range(4)] = [1e-12, 1e-12, 1e-12, 1e-4]
-    precision[[4, 5], [4, 5]] = 1 / np.maximum(lens.axis_sigma, 1e-9) ** 2
-    precision[6:, 6:] = np.linalg.inv(lens.covariance)
-    return precision
+_ROBUST_STARS = 6
+_SCATTER_PX = np.concatenate([[0.0], np.geomspace(0.003, 10.0, 33)])
+_SCATTER_PRIOR_PX = 0.1
 
 
-def _extra_scatter(residual: np.ndarray, sigma_px: np.ndarray, count: int) -> float:
-    """Return the scatter to add in quadrature so that the residuals are as large as their errors (robustly)."""
+def _extra_scatter(residual: np.ndarray, sigma_px: np.ndarray) -> float:
+    """Return the scatter to add in quadrature so that the residuals are as large as their errors.
+
+    The most probable one if each residual is Student's t of 4 degrees with its own stated error: a few stars whose
+    motion is unknown do not spoil the weight of those that are known.
+    """
+    count = len(sigma_px)
     dof = max(2 * count - 4, 1) / (2 * count)
-    scatter2 = np.median((residual**2).sum(axis=1)) / 1.386 / dof  # median of chi-square with 2 degrees
-    typical2 = np.median(sigma_px**2)
-    return float(np.sqrt(max(scatter2 - typical2, 0.0)))
+    chosen = slice(None, None, max(1, count // 400))
+    r2 = (residual[chosen] ** 2).sum(axis=1) / dof
+    variance = sigma_px[chosen] ** 2 + _SCATTER_PX[:, None] ** 2
+    likely = -(np.log(variance) + 3 * np.log1p(r2 / (4 * variance))).sum(axis=1)
+    likely -= np.log1p((_SCATTER_PX / _SCATTER_PRIOR_PX) ** 2)
+    return float(_SCATTER_PX[likely.argmax()])
 
 
 def _residual(camera: Camera, x_px: np.ndarray, y_px: np.ndarray, vectors: np.ndarray) -> np.ndarray:
@@ -271,38 +286,46 @@ def _residual(camera: Camera, x_px: np.ndarray, y_px: np.ndarray, vectors: np.nd
     return np.stack([pu - u, pv - v], axis=-1)
 
 
-def _jacobian(camera: Camera, x_px: np.ndarray, y_px: np.ndarray, vectors: np.ndarray) -> np.ndarray:
-    """Return d(ideal pixel - projected direction) / d(parameters), (n, 2, parameters)."""
+def _linearised(
+    camera: Camera, x_px: np.ndarray, y_px: np.ndarray, vectors: np.ndarray
+) -> tuple[np.ndarray, np.ndarray]:
+    """Return projected direction minus ideal pixel (n, 2), and minus its derivatives (n, 2, parameters)."""
     half, focal = camera.half_diagonal_px, camera.focal_px
-    x, y, z = (vectors @ camera.axes.T).T
-    pu, pv = project(np.stack([x, y, z], axis=-1), focal, camera.projection)
-    count = len(pu)
+    cam = vectors @ camera.axes.T
+    pu, pv = project(cam, focal, camera.projection)
     terms = len(camera.terms)
-    out = np.zeros((count, 2, 6 + 2 * terms))
-    eps = 1e-6
-    cam = np.stack([x, y, z], axis=-1)
-    for axis in range(3):  # numerical in the rotation: exact for every projection, and cheap
-        turn = np.zeros(3)
-        turn[axis] = eps
-        du, dv = project(cam + np.cross(np.broadcast_to(turn, cam.shape), cam), focal, camera.projection)
-        out[:, 0, axis], out[:, 1, axis] = -(du - pu) / eps, -(dv - pv) / eps
+    out = np.zeros((len(pu), 2, 6 + 2 * terms))
+    if camera.projection == "TAN":
+        a, b = pu / focal, pv / focal
+        out[:, 0, 0], out[:, 1, 0] = pu * b, focal + pv * b
+        out[:, 0, 1], out[:, 1, 1] = -focal - pu * a, -pu * b
+        out[:, 0, 2], out[:, 1, 2] = pv, -pu
+    else:
+        eps = 1e-6
+        for axis in range(3):  # numerical: exact for every projection
+            turn = np.zeros(3)
+            turn[axis] = eps
+            du, dv = project(cam + np.cross(turn, cam), focal, camera.projection)
+            out[:, 0, axis], out[:, 1, axis] = -(du - pu) / eps, -(dv - pv) / eps
     out[:, 0, 3], out[:, 1, 3] = -pu, -pv
     out[:, 0, 4] = out[:, 1, 5] = -half
-    if terms:
-        u, v = (x_px - camera.axis_x_px) / half, (y_px - camera.axis_y_px) / half
-        basis = half * monomials(u, v, camera.terms)
-        # moving the axis moves the distortion along with it
-        by_u = np.array([p for p, _ in camera.terms])[:, None] * monomials(
-            u, v, tuple((max(p - 1, 0), q) for p, q in camera.terms)
-        )
-        by_v = np.array([q for _, q in camera.terms])[:, None] * monomials(
-            u, v, tuple((p, max(q - 1, 0)) for p, q in camera.terms)
-        )
-        out[:, :, 4] -= half * (np.asarray(camera.coefficients) @ by_u).T
-        out[:, :, 5] -= half * (np.asarray(camera.coefficients) @ by_v).T
-        out[:, 0, 6 : 6 + terms] = basis.T
-        out[:, 1, 6 + terms :] = basis.T
-    return out
+    u_px, v_px = x_px - camera.axis_x_px, y_px - camera.axis_y_px
+    if not terms:
+        return np.stack([pu - u_px, pv - v_px], axis=-1), out
+    p, q = _exponents(camera.terms)
+    top = int(max(p.max(), q.max()))
+    power_u, power_v = _powers(u_px / half, top), _powers(v_px / half, top)
+    basis = half * power_u[p] * power_v[q]
+    coefficients = np.asarray(camera.coefficients)
+    # moving the axis moves the distortion along with it
+    by_u = p[:, None] * power_u[np.maximum(p - 1, 0)] * power_v[q]
+    by_v = q[:, None] * power_u[p] * power_v[np.maximum(q - 1, 0)]
+    out[:, :, 4] -= half * (coefficients @ by_u).T
+    out[:, :, 5] -= half * (coefficients @ by_v).T
+    out[:, 0, 6 : 6 + terms] = basis.T
+    out[:, 1, 6 + terms :] = basis.T
+    shift = coefficients @ basis
+    return np.stack([pu - u_px - shift[0], pv - v_px - shift[1]], axis=-1), out
 
 
 def _stepped(camera: Camera, step: np.ndarray) -> Camera:
@@ -358,22 +381,28 @@ def to_wcs(camera: Camera, width_px: int, height_px: int) -> WCS:
         for i, p, q in higher:
             forward[:, p, q] = inverse_linear @ coefficients[:, i] * half ** (1 - p - q)
         wcs.wcs.ctype = [name + "-SIP" for name in wcs.wcs.ctype]
-        back = _inverse_sip(forward, order, camera, width_px, height_px)
+        axis = camera.axis_x_px, camera.axis_y_px
+        back = inverse_sip(forward, order, axis, half, (width_px, height_px))
         wcs.sip = Sip(forward[0], forward[1], back[0], back[1], wcs.wcs.crpix)
     wcs.wcs.set()
     return wcs
 
 
-def _inverse_sip(
-    forward: np.ndarray, order: int, camera: Camera, width_px: int, height_px: int
+def inverse_sip(
+    forward: np.ndarray,
+    order: int,
+    axis_px: tuple[float, float],
+    half_diagonal_px: float,
+    size_px: tuple[int, int],
 ) -> np.ndarray:
-    top = min(order + 2, 7)
-    x, y = np.meshgrid(np.linspace(0, width_px - 1, 31), np.linspace(0, height_px - 1, 31))
-    u, v = x.ravel() - camera.axis_x_px, y.ravel() - camera.axis_y_px
+    """Return the inverse terms (2, n, n) of forward SIP terms up to an order, fitted on a grid over the frame."""
+    top = min(order + 2, 9)
+    x, y = np.meshgrid(np.linspace(0, size_px[0] - 1, 31), np.linspace(0, size_px[1] - 1, 31))
+    u, v = x.ravel() - axis_px[0], y.ravel() - axis_px[1]
     terms = tuple((p, q) for p in range(order + 1) for q in range(order + 1 - p) if p + q >= 2)
     shift = np.array([[forward[axis, p, q] for p, q in terms] for axis in (0, 1)]) @ monomials(u, v, terms)
     back_terms = tuple((p, q) for p in range(top + 1) for q in range(top + 1 - p) if p + q >= 1)
-    half = camera.half_diagonal_px
+    half = half_diagonal_px
     basis = monomials((u + shift[0]) / half, (v + shift[1]) / half, back_terms)
     found = np.linalg.lstsq(basis.T, -shift.T, rcond=None)[0].T
     back = np.zeros((2, top + 1, top + 1))

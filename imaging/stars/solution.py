@@ -10,6 +10,7 @@ import numpy as np
 if TYPE_CHECKING:
     from astropy.wcs import WCS
 
+    from imaging.stars.air import Air
     from imaging.stars.camera import CameraFit, Lens
 
 
@@ -43,7 +44,8 @@ class PlateSolution:
     `mirrored`: True when, looked at with north up, east is to the right.
     `how`: `hinted`, `blind`, `previous` or `sparse`. `rms_px`: of the residuals (both axes together).
     `sigma_model_px`: scatter of the residuals beyond the stated errors of stars and centroids (one axis).
-    `fit`: the camera with the covariance of its parameters; `fit_lens`: what was held of the lens.
+    `fit`: the camera with the covariance of its parameters; `fit_lens`: what was held of the lens. `air`: when given,
+    the camera was fitted to the stars as this air lifts them; all that is told here is without air.
     """
 
     wcs: WCS
@@ -62,14 +64,22 @@ class PlateSolution:
     covariance_at_center_px2: np.ndarray
     fit: CameraFit | None = None
     fit_lens: Lens | None = None
+    air: Air | None = None
 
     def pixel_to_sky(self, x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return ICRS (ra_deg, dec_deg) of 0-based array pixels."""
+        if self.air is not None and self.fit is not None:
+            x, y, z = np.moveaxis(self.air.unlifted(self.fit.camera.vectors(x_px, y_px)), -1, 0)
+            return np.degrees(np.arctan2(y, x)) % 360.0, np.degrees(np.arctan2(z, np.hypot(x, y)))
         ra_deg, dec_deg = self.wcs.all_pix2world(x_px, y_px, 0)
         return np.asarray(ra_deg), np.asarray(dec_deg)
 
     def sky_to_pixel(self, ra_deg: np.ndarray, dec_deg: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return 0-based array pixels (x_px, y_px) of ICRS directions; NaN where they do not project."""
+        if self.air is not None and self.fit is not None:
+            from imaging.stars.catalogue import vectors_of
+
+            return self.fit.camera.pixels(self.air.lifted(vectors_of(ra_deg, dec_deg)))
         x_px, y_px = self.wcs.all_world2pix(ra_deg, dec_deg, 0, quiet=True)
         return np.asarray(x_px), np.asarray(y_px)
 

@@ -10,6 +10,7 @@ from typing import TypedDict
 import numpy as np
 
 from imaging.frames.frame import Frame
+from imaging.stars.air import Air, fitted_wcs
 from imaging.stars.camera import ARCSEC_RAD, Camera, Lens, order_for, to_wcs, unknown_lens
 from imaging.stars.catalogue import stars_near, vectors_of
 from imaging.stars.detection import Detections, detect
@@ -53,6 +54,7 @@ def solve_frame(
     scale_tolerance: float = SCALE_TOLERANCE,
     lens: Lens | None = None,
     blind: bool | None = None,
+    air: Air | None = None,
     tick: Callable[[int, int], None] | None = None,
 ) -> PlateSolution:
     """Return where a frame points.
@@ -60,8 +62,9 @@ def solve_frame(
     `near`: rough centre (ra_deg, dec_deg, ICRS), within four field radii. `scale_arcsec_px`: within
     `scale_tolerance`. `previous`: the solution of a frame of the same rig shortly before. `rotation_deg`, `parity`:
     of the array, where known. `exclude`: ICRS places of bodies that are not stars, whose light is not matched.
-    `blind`: search the whole sky when the hints fail; by default only without `near` and `previous`. `tick`: progress
-    of the index that the first blind solution builds.
+    `blind`: search the whole sky when the hints fail; by default only without `near` and `previous`. `air`: lifts the
+    stars of a search that is not blind as it does in the frame. `tick`: progress of the index that the first blind
+    solution builds.
     Raises NoSolutionError when no pointing has a false-alarm probability below 1e-7; the message says what was tried.
     """
     found = detections if detections is not None else detect_frame(frame)
@@ -69,7 +72,7 @@ def solve_frame(
     hint = Hint(near, scale_arcsec_px, scale_tolerance, rotation_deg, parity, lens)
     if blind is None:
         blind = near is None and previous is None
-    return solve_detections(found, tt_s, frame.row_zero, hint, previous, exclude, blind, tick)
+    return solve_detections(found, tt_s, frame.row_zero, hint, previous, exclude, blind, air, tick)
 
 
 DEFAULT_EPOCH_TT_S = 25.0 * 365.25 * 86400.0  # a frame without time is solved with the stars of 2025.0
@@ -88,6 +91,7 @@ def solve_detections(
     previous: PlateSolution | None = None,
     exclude: Sequence[tuple[float, float]] = (),
     blind: bool = False,
+    air: Air | None = None,
     tick: Callable[[int, int], None] | None = None,
 ) -> PlateSolution:
     """Return where a frame with these stars points; see `solve_frame`."""
@@ -99,9 +103,10 @@ def solve_detections(
         )
     tried: list[str] = []
     if previous is not None and previous.fit is not None:
-        attempt = solve_from_previous(field, previous, _nearby(tt_s))
+        attempt = solve_from_previous(field, previous, _seen_stars(tt_s, air))
         if attempt.match is not None:
-            return _solution(attempt, previous.fit_lens, field, shape, tt_s, row_zero, exclude, "previous")
+            lens = previous.fit_lens
+            return _solution(attempt, lens, field, shape, tt_s, row_zero, exclude, "previous", air)
         tried.append("from the previous frame")
         hint = Hint(
             hint.near or (previous.center_ra_deg, previous.center_dec_deg),
@@ -112,7 +117,8 @@ def solve_detections(
             hint.lens,
         )
     if hint.near is not None and hint.scale_arcsec_px is not None:
-        center = vectors_of(np.array(hint.near[0]), np.array(hint.near[1]))
+        true_center = vectors_of(np.array(hint.near[0]), np.array(hint.near[1]))
+        center = true_center if air is None else air.lifted(true_center)
         lens = hint.lens or unknown_lens(3)
         field_deg = 2 * np.degrees(field.half_diagonal_px * hint.scale_arcsec_px / ARCSEC_RAD)
         lenses = [lens]
@@ -120,7 +126,8 @@ def solve_detections(
             lenses.append(unknown_lens(5, "ARC"))  # no lens makes a flat picture of so wide a sky
 
         def sky_near(radius_rad: float, stars_per_sr: float):  # type: ignore[no-untyped-def]
-            return stars_near(center, radius_rad, tt_s, stars_per_sr)
+            sky = stars_near(true_center, radius_rad, tt_s, stars_per_sr)
+            return sky if air is None else air.over(sky)
 
         solutions = []
         for lens in lenses:
@@ -137,7 +144,7 @@ def solve_detections(
             if attempt.match is not None:
                 with suppress(NoSolutionError):
                     solutions.append(
-                        _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "hinted")
+                        _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "hinted", air)
                     )
         if solutions:  # flat or equidistant: the one that explains more stars
             return max(solutions, key=lambda one: (len(one.matched.x_px), -one.rms_px))
@@ -152,7 +159,7 @@ def solve_detections(
                 hint.rotation_deg,
             )
             if attempt.match is not None:
-                return _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "sparse")
+                return _solution(attempt, hint.lens, field, shape, tt_s, row_zero, exclude, "sparse", air)
         tried.append(
             f"around {hint.near[0]:.3f} {hint.near[1]:+.3f} at {hint.scale_arcsec_px:.3f} arcsec/px "
             f"(+-{100 * hint.scale_tolerance:.0f} %), best chance 1e{attempt.best_log10:.0f}"
@@ -194,8 +201,11 @@ def _would_help(stars: int, hint: Hint) -> str:
     )
 
 
-def _nearby(tt_s: float):  # type: ignore[no-untyped-def]
-    return lambda center, radius_rad: stars_near(center, radius_rad, tt_s)
+def _seen_stars(tt_s: float, air: Air | None):  # type: ignore[no-untyped-def]
+    """Return a function of a direction, as seen, and a radius that gives the stars about it, as seen."""
+    if air is None:
+        return lambda center, radius_rad: stars_near(center, radius_rad, tt_s)
+    return lambda center, radius_rad: air.over(stars_near(air.unlifted(center), radius_rad, tt_s))
 
 
 def _field(found: Detections) -> Field:
@@ -215,6 +225,7 @@ def _solution(
     row_zero: str,
     exclude: Sequence[tuple[float, float]],
     how: str,
+    air: Air | None = None,
 ) -> PlateSolution:
     """Settle a match over the whole catalogue and write it down."""
     assert attempt.match is not None
@@ -223,8 +234,9 @@ def _solution(
     middle = camera.vectors(np.array([(width - 1) / 2]), np.array([(height - 1) / 2]))[0]
     corners = camera.vectors(np.array([0, width - 1, 0, width - 1]), np.array([0, 0, height - 1, height - 1]))
     radius = float(np.arccos(np.clip((corners @ middle).min(), -1, 1))) * 1.02
-    sky = stars_near(middle, radius, tt_s)
-    field = _without_bodies(field, camera, exclude)
+    catalogue = stars_near(middle if air is None else air.unlifted(middle), radius, tt_s)
+    sky = catalogue if air is None else air.over(catalogue)
+    field = _without_bodies(field, camera, exclude, air)
     prior = lens
     for _ in range(
         2
@@ -242,8 +254,9 @@ def _solution(
     matched = MatchedStars(
         x_px=field.x_px[match.detection],
         y_px=field.y_px[match.detection],
-        ra_deg=np.degrees(np.arctan2(sky.vectors[match.star, 1], sky.vectors[match.star, 0])) % 360,
-        dec_deg=np.degrees(np.arcsin(np.clip(sky.vectors[match.star, 2], -1, 1))),
+        ra_deg=np.degrees(np.arctan2(catalogue.vectors[match.star, 1], catalogue.vectors[match.star, 0]))
+        % 360,
+        dec_deg=np.degrees(np.arcsin(np.clip(catalogue.vectors[match.star, 2], -1, 1))),
         magnitude=sky.magnitude[match.star],
         residual_x_px=match.fit.residual_px[:, 0],
         residual_y_px=match.fit.residual_px[:, 1],
@@ -251,7 +264,7 @@ def _solution(
     )
     center_x, center_y = (width - 1) / 2, (height - 1) / 2
     return PlateSolution(
-        wcs=to_wcs(camera, width, height),
+        wcs=_wcs(camera, width, height, air),
         width_px=width,
         height_px=height,
         matched=matched,
@@ -262,8 +275,20 @@ def _solution(
         covariance_at_center_px2=match.fit.covariance_at(np.array([center_x]), np.array([center_y]))[0],
         fit=match.fit,
         fit_lens=prior,
-        **_orientation(camera, width, height, row_zero),
+        air=air,
+        **_orientation(camera, width, height, row_zero, air),
     )
+
+
+def _wcs(camera: Camera, width: int, height: int, air: Air | None):  # type: ignore[no-untyped-def]
+    if air is None:
+        return to_wcs(camera, width, height)
+
+    def vectors_at(x_px: np.ndarray, y_px: np.ndarray) -> np.ndarray:
+        return air.unlifted(camera.vectors(x_px, y_px))
+
+    axis_px = camera.axis_x_px, camera.axis_y_px
+    return fitted_wcs(vectors_at, axis_px, (width, height), camera.projection)
 
 
 class _Orientation(TypedDict):
@@ -274,10 +299,11 @@ class _Orientation(TypedDict):
     mirrored: bool
 
 
-def _orientation(camera: Camera, width: int, height: int, row_zero: str) -> _Orientation:
+def _orientation(camera: Camera, width: int, height: int, row_zero: str, air: Air | None) -> _Orientation:
     """Return centre, scale and orientation of the middle of the frame, as a user sees it."""
     x, y = (width - 1) / 2, (height - 1) / 2
-    here, right, up = camera.vectors(np.array([x, x + 1, x]), np.array([y, y, y + 1]))
+    seen = camera.vectors(np.array([x, x + 1, x]), np.array([y, y, y + 1]))
+    here, right, up = seen if air is None else air.unlifted(seen)
     ra, dec = np.arctan2(here[1], here[0]), np.arcsin(np.clip(here[2], -1, 1))
     east = np.array([-np.sin(ra), np.cos(ra), 0.0])
     north = np.cross(here, east)
@@ -294,12 +320,15 @@ def _orientation(camera: Camera, width: int, height: int, row_zero: str) -> _Ori
     }
 
 
-def _without_bodies(field: Field, camera: Camera, exclude: Sequence[tuple[float, float]]) -> Field:
+def _without_bodies(
+    field: Field, camera: Camera, exclude: Sequence[tuple[float, float]], air: Air | None
+) -> Field:
     """Return the field without the light of bodies that are not stars."""
     if not len(exclude):
         return field
     places = np.atleast_2d(np.asarray(exclude, dtype=float))
-    x, y = camera.pixels(vectors_of(places[:, 0], places[:, 1]))
+    vectors = vectors_of(places[:, 0], places[:, 1])
+    x, y = camera.pixels(vectors if air is None else air.lifted(vectors))
     keep = np.ones(len(field.x_px), dtype=bool)
     for one_x, one_y in zip(x, y, strict=True):
         if np.isfinite(one_x) and np.isfinite(one_y):

@@ -21,7 +21,7 @@ class Measurer:
 
     def __init__(self, promise: Promise):
         self.promise = promise
-        self._on_disc, self._among_stars = OnDisc(promise), AmongStars()
+        self._on_disc, self._among_stars = OnDisc(promise), AmongStars(promise)
 
     def measure(self, frame: Frame, pictures: bool = False) -> Measurement:
         """Return what a frame gives; a frame that gives nothing says why. The frame must hold a time."""
@@ -46,7 +46,7 @@ class Measurer:
             return replace(blank, reason=f"its time is beyond the ephemeris: {beyond}")
         try:
             if geometry.reference == "stars":
-                done = self._among_stars.measure(frame, blank, geometry)
+                done = self._among_stars.measure(frame, blank, geometry, expected)
             else:
                 done = self._on_disc.measure(frame, blank, geometry, expected)
         except NoSolutionError as none:

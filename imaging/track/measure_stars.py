@@ -10,38 +10,38 @@ import numpy as np
 from imaging.discs.outline import pixel_angle_deg
 from imaging.discs.planet import Body, DiscPlace, planet_among_stars
 from imaging.frames.frame import Frame
+from imaging.stars.air import Air, air_over
 from imaging.stars.detection import Detections
 from imaging.stars.solution import PlateSolution
 from imaging.stars.solve import detect_frame, solve_frame
-from imaging.track.measurement import Measurement, StarReference
-from imaging.track.nominal import NEAR_ARCSEC, body_of
-from imaging.track.path import tangent_offsets, target_place, unit_vectors
+from imaging.track.measurement import AS_PREDICTED, Measurement, StarReference
+from imaging.track.nominal import NEAR_ARCSEC, Nominal, Promise, body_of
+from imaging.track.path import ARCSEC_RAD, Expected, tangent_offsets, target_place, unit_vectors
 from planner.errors import NoSolutionError
 from planner.events.family import Geometry
 
 STRANGER_RATIO = 5.0  # so much brighter than what is near the prediction, a stranger is taken for the target
+KNOWN_SCALE = 0.01  # of a rig file's scale, where the field is too sparse to find it freely
+TOO_SHORT = 0.1  # of the longest exposure of its passage: a frame for the disc, not for the stars
 
 
 class AmongStars:
     """Measures frames of one plan against stars; the solution of one frame is the start of the next."""
 
-    def __init__(self) -> None:
+    def __init__(self, promise: Promise) -> None:
+        self.promise = promise
         self._solution: PlateSolution | None = None
 
-    def measure(self, frame: Frame, blank: Measurement, geometry: Geometry) -> Measurement:
+    def measure(
+        self, frame: Frame, blank: Measurement, geometry: Geometry, expected: Expected
+    ) -> Measurement:
         """Return the target's direction; raises NoSolutionError when the frame cannot be solved."""
-        nominal = blank.nominal
         ra, dec, semidiameter = target_place(geometry)
-        bodies = [(float(disc.ra_deg[0]), float(disc.dec_deg[0])) for disc in geometry.discs.values()]
         found = detect_frame(frame)
-        solution = solve_frame(
-            frame,
-            near=(nominal.aim_ra_deg, nominal.aim_dec_deg),
-            scale_arcsec_px=nominal.scale_arcsec_px,
-            previous=self._solution,
-            exclude=bodies,
-            detections=found,
-        )
+        altitude = float(expected.altitude_deg[0])
+        # a stamp that is hours off puts the field below the horizon: there no air is known
+        air = air_over(self.promise.path.observer, float(expected.tt_s[0])) if altitude > 0 else None
+        solution = self._solved(frame, blank.nominal, geometry, found, air)
         self._solution = solution
         x, y = (float(np.squeeze(v)) for v in solution.sky_to_pixel(ra, dec))
         plate = _plate(solution, frame.row_zero, x, y)
@@ -63,6 +63,39 @@ class AmongStars:
             stars=plate,
             reason="; ".join(place.notes),
         )
+
+    def _solved(
+        self, frame: Frame, nominal: Nominal, geometry: Geometry, found: Detections, air: Air | None
+    ) -> PlateSolution:
+        """Solve freely; then with roll, mirror and scale as planned; then, as stamps may be wrong, without air."""
+        bodies = [(float(disc.ra_deg[0]), float(disc.dec_deg[0])) for disc in geometry.discs.values()]
+        known: dict[str, Any] = {
+            "near": (nominal.aim_ra_deg, nominal.aim_dec_deg),
+            "scale_arcsec_px": nominal.scale_arcsec_px,
+            "exclude": bodies,
+            "detections": found,
+        }
+        planned = {
+            "rotation_deg": nominal.rotation_deg,
+            "parity": nominal.parity,
+            "scale_tolerance": KNOWN_SCALE,
+        }
+        tries: list[dict[str, Any]] = [{"air": air, "previous": self._solution}, {"air": air, **planned}]
+        if air is not None:
+            tries.append({"previous": self._solution})
+        first: NoSolutionError | None = None
+        for one in tries:
+            try:
+                return solve_frame(frame, **known, **one)
+            except NoSolutionError as none:
+                first = first or none
+        if nominal.exposure_share < TOO_SHORT:
+            raise NoSolutionError(
+                f"{geometry.target.capitalize()} {AS_PREDICTED} without stars in so short an exposure "
+                f"({frame.exposure_s:.3g} s), and has no place without them"
+            )
+        assert first is not None
+        raise first
 
     def _found_among_stars(
         self,
@@ -94,13 +127,25 @@ class AmongStars:
 
 def _strangers(found: Detections, solution: PlateSolution) -> np.ndarray:
     """Return the detections that are no catalogue star, as bright as the brighter stars here, brightest first."""
+    from scipy.spatial import cKDTree
+
     matched = solution.matched
-    apart = np.hypot(
-        found.x_px[:, None] - matched.x_px[None, :], found.y_px[:, None] - matched.y_px[None, :]
-    ).min(axis=1)
-    stars = apart < 2.0
+    stars = np.zeros(len(found), dtype=bool)
+    if len(matched.x_px):
+        tree = cKDTree(np.column_stack([matched.x_px, matched.y_px]))
+        apart, _ = tree.query(np.column_stack([found.x_px, found.y_px]), distance_upper_bound=2.0)
+        stars = np.isfinite(apart)
     bright = found.flux_adu > (np.median(found.flux_adu[stars]) if stars.any() else 0.0)
     return np.flatnonzero(~stars & bright & (found.snr > 10))
+
+
+def _seen_scale(solution: PlateSolution) -> float:
+    """Return the scale in the middle of the frame, arcseconds of sky as seen through the air a pixel."""
+    if solution.air is None or solution.fit is None:
+        return solution.scale_arcsec_px
+    x, y = (solution.width_px - 1) / 2, (solution.height_px - 1) / 2
+    here, right, up = solution.fit.camera.vectors(np.array([x, x + 1, x]), np.array([y, y, y + 1]))
+    return float(np.sqrt(np.linalg.norm(np.cross(right - here, up - here))) * ARCSEC_RAD)
 
 
 def _plate(
@@ -121,7 +166,8 @@ def _plate(
         ra_deg=float(ra[0]),
         dec_deg=float(dec[0]),
         covariance_arcsec2=covariance,
-        scale_arcsec_px=solution.scale_arcsec_px,
+        # as the air lets it be seen, so that it may be compared with the rig file's
+        scale_arcsec_px=_seen_scale(solution),
         rotation_deg=(solution.position_angle_deg + (0.0 if up_is_y else 180.0)) % 360.0,
         parity=-1 if solution.mirrored == up_is_y else 1,
         local_rotation_deg=float(np.degrees(np.arctan2(east[1], north[1])) % 360.0),

@@ -20,7 +20,10 @@ POINT_PX = 0.05  # radius of a star as the disc rooms take it: far below any blu
 
 @dataclass(frozen=True)
 class Nominal:
-    """The promise for one frame, in the axes of its array: see DEVELOPERS.md, conventions."""
+    """The promise for one frame, in the axes of its array: see DEVELOPERS.md, conventions.
+
+    `exposure_share`: of the longest exposure that the plan has in this passage.
+    """
 
     passage: str
     scale_arcsec_px: float
@@ -28,6 +31,7 @@ class Nominal:
     parity: int
     aim_ra_deg: float
     aim_dec_deg: float
+    exposure_share: float = 1.0
 
     def to_sky(self, dx_px: np.ndarray, dy_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return (east, north) in arcseconds of pixel offsets."""
@@ -83,6 +87,8 @@ class Promise:
         at = int(np.argmin(np.abs(planned.middle_tt_s - frame.time.middle_tt_s)))
         late_s = abs(planned.middle_tt_s[at] - frame.time.middle_tt_s)
         near = late_s < max(3600.0, 2 * planned.exposure_s[at])
+        longest = planned.exposure_s[planned.passage == planned.passage[at]].max()
+        exposure = planned.exposure_s[at] if frame.exposure_s is None else frame.exposure_s
         rotation, parity = array_orientation(
             float(planned.rotation_deg[at]), planned.parity < 0, frame.row_zero
         )
@@ -93,6 +99,7 @@ class Promise:
             parity=parity,
             aim_ra_deg=float(planned.ra_deg[at]),
             aim_dec_deg=float(planned.dec_deg[at]),
+            exposure_share=float(exposure / longest) if near and longest > 0 else 1.0,
         )
 
 
