@@ -34,7 +34,7 @@ _FIELDS = (
 )
 _PASSES = ((40, 6), (50, 8))  # (brightest stars, neighbours): clean skies, then clouds
 _SURE_VOTES = 3
-_MOST_SURE, _MOST_SCORED, _MOST_GROWN = 20, 250, 80
+_MOST_SURE, _MOST_LIKELY, _MOST_SCORED, _MOST_GROWN = 20, 10, 250, 80
 
 
 def solve_blind(
@@ -57,12 +57,12 @@ def solve_blind(
     height, width = field.shape
     half = field.half_diagonal_px
     x0, y0 = (width - 1) / 2, (height - 1) / 2
-    best, trials = 0.0, 0
+    best, trials, number = 0.0, 0, 0
     for stars, neighbours in _PASSES:
         used = min(stars, len(field.x_px))
         if used < 4:
             break
-        waiting: list[tuple[float, Hypotheses, int]] = []
+        waiting: list[tuple[float, Hypotheses, int, int]] = []
         for assumed_deg, least_deg, most_deg in _FIELDS:
             allowed = (half / tan(radians(most_deg)), half / tan(radians(least_deg)))
             if focal_range_px is not None:
@@ -78,20 +78,26 @@ def solve_blind(
             focal_each = focal * image.longest[first] / longest
             guesses = hypotheses_of(field, sky, image.stars[first], sky_stars, focal_each, allowed, parity)
             trials += len(guesses)
-            turn = [(0.0, guesses, i) for i in np.flatnonzero(guesses.votes >= _SURE_VOTES)[:_MOST_SURE]]
+            number += 1
+            sure = np.flatnonzero(guesses.votes >= _SURE_VOTES)[:_MOST_SURE]
+            likely = np.argsort(-guesses.weight, kind="stable")[:_MOST_SCORED]
+            turn = [(0.0, guesses, int(i), number) for i in [*sure, *likely[:_MOST_LIKELY]]]
             waiting += [
-                (_quick_score(guesses, i, field, sky, tt_s) + float(np.log(guesses.votes[i])), guesses, i)
-                for i in np.flatnonzero(guesses.votes < _SURE_VOTES)[:_MOST_SCORED]
+                (
+                    _quick_score(guesses, i, field, sky, tt_s) + float(np.log(guesses.weight[i])),
+                    guesses,
+                    i,
+                    number,
+                )
+                for i in likely[_MOST_LIKELY:]
                 if process_time() - began < give_up_s / 2
             ]
-            match, log10 = _first_accepted(turn, field, sky, tt_s, lens, trials, began + give_up_s)
+            match, log10 = _first_accepted(turn, field, sky, tt_s, lens, began + give_up_s)
             best = min(best, log10)
             if match is not None:
                 return Attempt(match, best, trials, log10)
         waiting.sort(key=lambda one: -one[0])
-        match, log10 = _first_accepted(
-            waiting[:_MOST_GROWN], field, sky, tt_s, lens, trials, began + give_up_s
-        )
+        match, log10 = _first_accepted(waiting[:_MOST_GROWN], field, sky, tt_s, lens, began + give_up_s)
         best = min(best, log10)
         if match is not None:
             return Attempt(match, best, trials, log10)
@@ -101,18 +107,17 @@ def solve_blind(
 
 
 def _first_accepted(
-    turn: list[tuple[float, Hypotheses, int]],
+    turn: list[tuple[float, Hypotheses, int, int]],
     field: Field,
     sky: Sky,
     tt_s: float,
     lens: Lens,
-    trials: int,
     until_s: float,
 ) -> tuple[Match | None, float]:
     """Grow hypotheses in turn; return the first match that can be defended, and the best evidence seen (log10)."""
     best = 0.0
     height, width = field.shape
-    for _, guesses, i in turn:
+    for _, guesses, i, number in turn:
         if process_time() > until_s:
             break
         focal = guesses.focal_px[i]
@@ -125,7 +130,7 @@ def _first_accepted(
         match = grow(camera, lens, field, sky.take(rows), guesses.image_stars[i], own)
         if match is None:
             continue
-        log10 = match.evidence.chance_log10(trials)
+        log10 = match.evidence.chance_log10(guesses.trials(i, number))
         best = min(best, log10)
         if log10 < ACCEPT_LOG10:
             return match, log10
@@ -144,6 +149,7 @@ def _quick_score(guesses: Hypotheses, i: int, field: Field, sky: Sky, tt_s: floa
         guesses.axes[i : i + 1],
         guesses.focal_px[i : i + 1],
         guesses.votes[i : i + 1],
+        guesses.weight[i : i + 1],
     )
     return float(scores(one, field, sky.take(rows))[0])
 

@@ -14,7 +14,6 @@ _SLOPE_PRIOR = (0.9, 0.35)
 _SCATTER_PRIOR_MAG = 0.4
 _PRIOR_STARS = 4  # how many stars the prior of the scatter counts for
 _OUTER_MAG = 0.25  # never narrower than this
-GATE_SIGMAS = 3.0
 
 
 @dataclass(frozen=True)
@@ -29,10 +28,10 @@ class Brightness:
     slope_variance: float
 
     def expected(self, magnitude: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-        """Return instrumental magnitudes of catalogue magnitudes, and the half-width within which they must lie."""
+        """Return instrumental magnitudes of catalogue magnitudes, and their 1-sigma."""
         away = np.asarray(magnitude) - self.pivot
         sigma2 = self.scatter_mag**2 + self.zero_variance + self.slope_variance * away**2
-        return self.zero + self.slope * away, GATE_SIGMAS * np.sqrt(sigma2)
+        return self.zero + self.slope * away, np.sqrt(sigma2)
 
 
 def fit_brightness(instrumental: np.ndarray, catalogue: np.ndarray, saturated: np.ndarray) -> Brightness:
@@ -56,6 +55,11 @@ def fit_brightness(instrumental: np.ndarray, catalogue: np.ndarray, saturated: n
     return Brightness(
         float(zero), float(slope), pivot, float(max(scatter, _OUTER_MAG)), covariance[0, 0], covariance[1, 1]
     )
+
+
+def likeness(away_sigmas: np.ndarray) -> np.ndarray:
+    """Return how likely a magnitude is that lies so far off, relative to one as expected; colours give it wings."""
+    return 0.85 * np.exp(-0.5 * away_sigmas**2) + 0.15 * np.exp(-0.5 * (away_sigmas / 3) ** 2)
 
 
 def consistent(

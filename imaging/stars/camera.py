@@ -146,12 +146,12 @@ class CameraFit:
     def covariance_at(self, x_px: np.ndarray, y_px: np.ndarray) -> np.ndarray:
         """Return the (n, 2, 2) covariance in px^2 of where the camera puts a direction seen near these pixels."""
         vectors = self.camera.vectors(x_px, y_px)
-        _, jacobian = _linearised(self.camera, np.asarray(x_px, float), np.asarray(y_px, float), vectors)
+        _, jacobian = linearised(self.camera, np.asarray(x_px, float), np.asarray(y_px, float), vectors)
         carried = jacobian.reshape(-1, jacobian.shape[2]) @ self.covariance
         return carried.reshape(jacobian.shape) @ jacobian.transpose(0, 2, 1)
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, eq=False)
 class Lens:
     """What is known of a rig's optics before a frame is fitted: expected values and their widths.
 
@@ -177,6 +177,20 @@ class Lens:
         return precision
 
 
+def radial_direction(terms: tuple[tuple[int, int], ...]) -> dict[int, np.ndarray]:
+    """Return what u (u^2 + v^2)^((n - 1) / 2) and its like in v are in coefficients, by order n."""
+    found = {}
+    for n, pattern in ((3, (1, 1)), (5, (1, 2, 1))):
+        if (n, 0) not in terms:
+            continue
+        direction = np.zeros(2 * len(terms))
+        for k, factor in enumerate(pattern):
+            direction[terms.index((n - 2 * k, 2 * k))] = factor
+            direction[len(terms) + terms.index((2 * k, n - 2 * k))] = factor
+        found[n] = direction
+    return found
+
+
 @lru_cache(maxsize=16)
 def unknown_lens(order: int, projection: str = "TAN") -> Lens:
     """Return the prior of a lens never seen before, with distortion terms up to `order` (1 to 5).
@@ -187,15 +201,8 @@ def unknown_lens(order: int, projection: str = "TAN") -> Lens:
     count = len(terms)
     width = np.array([AFFINE_PRIOR if p + q == 1 else OTHER_PRIOR[p + q] for p, q in terms])
     covariance = np.diag(np.concatenate([width, width]) ** 2)
-    for n, radial in RADIAL_PRIOR.items():
-        if n > order:
-            continue
-        pattern = {1: (1,), 3: (1, 1), 5: (1, 2, 1)}[n]  # u (u^2 + v^2)^((n - 1) / 2)
-        direction = np.zeros(2 * count)
-        for k, factor in enumerate(pattern):
-            direction[terms.index((n - 2 * k, 2 * k))] = factor
-            direction[count + terms.index((2 * k, n - 2 * k))] = factor
-        covariance += radial**2 * np.outer(direction, direction)
+    for n, direction in radial_direction(terms).items():
+        covariance += RADIAL_PRIOR[n] ** 2 * np.outer(direction, direction)
     return Lens(terms, np.zeros((2, count)), covariance, np.zeros(2), np.full(2, AXIS_PRIOR), projection)
 
 
@@ -237,7 +244,7 @@ def fit_camera(
     prior = lens.precision
     robust = robust and count >= _ROBUST_STARS
     for iteration in range(iterations):
-        residual, jacobian = _linearised(camera, x_px, y_px, vectors)
+        residual, jacobian = linearised(camera, x_px, y_px, vectors)
         if robust and iteration:
             sigma_model = _extra_scatter(residual, sigma_px)
             weight = 6.0 / (4.0 + (residual**2).sum(axis=1) / (sigma_px**2 + sigma_model**2))
@@ -250,7 +257,7 @@ def fit_camera(
         now[6:] = (np.asarray(camera.coefficients) - lens.coefficients).ravel()
         right = scaled.T @ (residual * root[:, :, 0]).ravel()
         step = np.linalg.solve(normal, right - prior @ now)
-        camera = _stepped(camera, step)
+        camera = stepped(camera, step)
         if iteration >= 2 and np.abs(step[3:]).max() < 1e-7:
             break
     residual = _residual(camera, x_px, y_px, vectors)
@@ -286,7 +293,7 @@ def _residual(camera: Camera, x_px: np.ndarray, y_px: np.ndarray, vectors: np.nd
     return np.stack([pu - u, pv - v], axis=-1)
 
 
-def _linearised(
+def linearised(
     camera: Camera, x_px: np.ndarray, y_px: np.ndarray, vectors: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray]:
     """Return projected direction minus ideal pixel (n, 2), and minus its derivatives (n, 2, parameters)."""
@@ -328,7 +335,8 @@ def _linearised(
     return np.stack([pu - u_px - shift[0], pv - v_px - shift[1]], axis=-1), out
 
 
-def _stepped(camera: Camera, step: np.ndarray) -> Camera:
+def stepped(camera: Camera, step: np.ndarray) -> Camera:
+    """Return the camera with a step of its parameters added."""
     from scipy.spatial.transform import Rotation
 
     turn = Rotation.from_rotvec(step[:3]).as_matrix()

@@ -74,7 +74,7 @@ def solve_hinted(
     """Return the match of a field whose centre and scale are roughly known; roll and mirror may be unknown.
 
     `sky_near(radius_rad, stars_per_sr)` gives catalogue stars around `center` (unit vector), brightest first, to
-    about that density (all when it is infinite). Never returns a match whose false-alarm probability is above 1e-7.
+    about that density (all when it is infinite). Never returns a match whose false-alarm probability is above 1e-9.
     """
     focal = ARCSEC_RAD / scale_arcsec_px
     height, width = field.shape
@@ -85,7 +85,7 @@ def solve_hinted(
     best, trials = 0.0, 0
     around = sky_near(min(2.2 * radius, np.pi), np.inf)
     per_field = len(around) * field_sr / (2 * np.pi * (1 - np.cos(min(2.2 * radius, np.pi))))
-    for effort in SPARSE_EFFORTS if per_field < _SPARSE else EFFORTS:
+    for turn, effort in enumerate(SPARSE_EFFORTS if per_field < _SPARSE else EFFORTS, 1):
         used = min(effort.image_stars, len(field.x_px))
         if used < 4:
             break
@@ -108,7 +108,7 @@ def solve_hinted(
             match = grow(camera, lens, field, sky, guesses.image_stars[i], guesses.sky_stars[i])
             if match is None:
                 continue
-            log10 = match.evidence.chance_log10(trials)
+            log10 = match.evidence.chance_log10(guesses.trials(i, turn))
             best = min(best, log10)
             if log10 < ACCEPT_LOG10:
                 return Attempt(match, best, trials, log10)

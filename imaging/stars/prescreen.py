@@ -31,7 +31,7 @@ def promising(guesses: Hypotheses, field: Field, sky: Sky) -> list[int]:
 def screened(guesses: Hypotheses, field: Field, sky: Sky) -> np.ndarray:
     """Return indices of hypotheses, the most promising first."""
     score = scores(guesses, field, sky)
-    return np.argsort(-(score + np.log(guesses.votes[: len(score)])), kind="stable")
+    return np.argsort(-(score + np.log(guesses.weight[: len(score)])), kind="stable")
 
 
 def scores(guesses: Hypotheses, field: Field, sky: Sky) -> np.ndarray:

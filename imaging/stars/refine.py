@@ -3,18 +3,22 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Any
 
 import numpy as np
 
-from imaging.stars.brightness import Brightness, consistent, fit_brightness
+from imaging.stars.brightness import Brightness, consistent, fit_brightness, likeness
 from imaging.stars.camera import Camera, CameraFit, Lens, fit_camera
+from imaging.stars.roundness import averaged
 from imaging.stars.verify import Evidence, crowding
 
 GATE_SIGMAS = 3.5
 _SHARPEST_PX = 0.25  # a detection is never trusted better than this while matching
 _GROWN_ENOUGH = 120  # pairs after which growing ends and the whole catalogue is matched
 _NEIGHBOURS = 6
+MAGNITUDE_SIGMAS = 3.0
+_LEAST_RATIO = 1.0  # a detection likelier to be there by chance is not taken for the star
 _ENOUGH_TESTED, _PROMISING_LOG10 = 12, -0.5  # when a hypothesis is dropped
 _MIX_UP = 0.05  # chance of another detection in the gate up to which a star is matched
 
@@ -54,6 +58,14 @@ class Field:
     shape: tuple[int, int]
     tree: Any
 
+    @cached_property
+    def _histogram(self) -> tuple[np.ndarray, np.ndarray]:
+        """Magnitudes in steps of a tenth and how many unsaturated detections have them."""
+        low, high = float(self.magnitude.min()), float(self.magnitude.max())
+        edges = np.linspace(low - 0.05, high + 0.05, max(2, round((high - low) / 0.1) + 2))
+        counts, _ = np.histogram(self.magnitude[~self.saturated], edges)
+        return (edges[1:] + edges[:-1]) / 2, counts.astype(float)
+
     @property
     def half_diagonal_px(self) -> float:
         """Half of the frame's diagonal."""
@@ -87,7 +99,8 @@ class Field:
         distance, index = distance.reshape(len(x), near), index.reshape(len(x), near)
         if bright is None:
             return distance[:, 0], index[:, 0], np.full(len(x), len(self.x_px), dtype=float)
-        expected, half_width = bright.expected(magnitude)
+        expected, sigma = bright.expected(magnitude)
+        half_width = MAGNITUDE_SIGMAS * sigma
         fits = consistent(expected, half_width, self.magnitude[index], self.saturated[index])
         first = fits.argmax(axis=1)
         line = np.arange(len(x))
@@ -97,6 +110,45 @@ class Field:
             ordered, expected - half_width
         )
         return distance, index[line, first], rivals + float(self.saturated.sum())
+
+    def tested(
+        self,
+        x: np.ndarray,
+        y: np.ndarray,
+        sigma_px: np.ndarray,
+        bright: Brightness,
+        magnitude: np.ndarray,
+        used: np.ndarray,
+    ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Look for stars predicted here, so bright, among the detections not `used`.
+
+        Returns the likelihood ratio of each star against chance (see `verify`), the detection that speaks most for it,
+        and whether it may not be tested, because a used detection is there. No two stars share a detection.
+        """
+        near = min(_NEIGHBOURS, len(self.x_px))
+        distance, index = self.tree.query(np.column_stack([x, y]), k=near)
+        distance, index = distance.reshape(len(x), near), index.reshape(len(x), near)
+        gate = GATE_SIGMAS * sigma_px[:, None]
+        taken = np.zeros(len(self.x_px), dtype=bool)
+        taken[used] = True
+        occupied = (taken[index] & (distance < gate)).any(axis=1)
+        expected, sigma = bright.expected(magnitude)
+        away = self.magnitude[index] - expected[:, None]
+        away = np.where(self.saturated[index], np.minimum(away, 0.0), away) / sigma[:, None]
+        steps, counts = self._histogram
+        rivals = likeness((steps - expected[:, None]) / sigma[:, None]) @ counts + self.saturated.sum() + 1.0
+        place = np.exp(-0.5 * (distance / sigma_px[:, None]) ** 2) / (2 * np.pi * sigma_px[:, None] ** 2)
+        each = np.where((distance < gate) & ~taken[index], place * likeness(away), 0.0)
+        best = each.argmax(axis=1)
+        line = np.arange(len(x))
+        crowd = crowding(x, y, self.tree, self.area_px2)
+        ratio = each[line, best] / rivals * self.area_px2 / crowd
+        chosen = index[line, best]
+        ratio[occupied] = 0.0
+        for_it = np.flatnonzero(ratio > 0)
+        first = np.zeros(len(x), dtype=bool)
+        first[for_it[np.unique(chosen[for_it], return_index=True)[1]]] = True
+        return np.where(first, ratio, 0.0), chosen, occupied
 
 
 @dataclass(frozen=True)
@@ -154,23 +206,21 @@ def grow(
             break
         spread2 = np.maximum(np.trace(fit.covariance_at(x[new], y[new]), axis1=1, axis2=2) / 2, 0)
         catalogue_px = sky.sigma_arcsec[new] / fit.camera.scale_arcsec_px
-        gate = GATE_SIGMAS * np.sqrt(spread2 + catalogue_px**2 + _SHARPEST_PX**2 + fit.sigma_model_px**2)
+        sigma = np.sqrt(spread2 + catalogue_px**2 + _SHARPEST_PX**2 + fit.sigma_model_px**2)
+        gate = GATE_SIGMAS * sigma
         order = np.argsort(gate, kind="stable")[: max(3, int(3 * 1.6**step))]
         order = order[gate[order] < (widest if step else 2 * widest)]
         if len(order) == 0:
             break
-        now, gate_now = new[order], gate[order]
-        distance, nearest, rivals = field.nearest(x[now], y[now], bright, sky.magnitude[now])
-        density = (rivals + 1) / field.area_px2 * crowding(x[now], y[now], field.tree, field.area_px2)
-        met = distance < gate_now
-        used = met & np.isin(nearest, detection)
-        evidence.add(met[~used], -np.expm1(-density[~used] * np.pi * gate_now[~used] ** 2))
+        now = new[order]
+        ratio, nearest, occupied = field.tested(
+            x[now], y[now], sigma[order], bright, sky.magnitude[now], detection
+        )
+        evidence.add(ratio[~occupied])
         tested[now] = True
         if evidence.tested >= _ENOUGH_TESTED and evidence.chance_log10(1) > _PROMISING_LOG10:
             return None
-        taken = np.flatnonzero(met & ~used)
-        taken = taken[np.argsort(distance[taken] / gate_now[taken], kind="stable")]
-        taken = taken[np.unique(nearest[taken], return_index=True)[1]]
+        taken = np.flatnonzero(ratio > _LEAST_RATIO)
         if len(taken):
             detection = np.concatenate([detection, nearest[taken]])
             star = np.concatenate([star, now[taken]])
@@ -194,10 +244,13 @@ def _in_reach(camera: Camera, field: Field, sky: Sky, star: np.ndarray) -> tuple
     return sky.take(row), np.searchsorted(row, star), row
 
 
-def settle(match: Match, lens: Lens, field: Field, sky: Sky, limit: int = 2500) -> Match:
+def settle(
+    match: Match, lens: Lens, field: Field, sky: Sky, learned: bool = False, limit: int = 2500
+) -> Match:
     """Match the whole catalogue with the fitted camera, and fit again until the pairs no longer change.
 
-    `sky` may be another list than the one grown on. At most `limit` stars are used, the brightest.
+    `sky` may be another list than the one grown on. At most `limit` stars are used, the brightest. `learned`: the lens
+    is one learned before.
     """
     from planner.errors import NoSolutionError
 
@@ -224,6 +277,17 @@ def settle(match: Match, lens: Lens, field: Field, sky: Sky, limit: int = 2500) 
         same = len(chosen) == len(star) and np.array_equal(inside[chosen], star)
         detection, star = nearest[chosen], inside[chosen]
         fit = _fit(fit.camera, lens, field, sky, detection, star, iterations=5)
+        sigma = np.hypot(field.sigma_px[detection], sky.sigma_arcsec[star] / fit.camera.scale_arcsec_px)
+        fit = averaged(
+            fit,
+            lens,
+            learned,
+            field.x_px[detection],
+            field.y_px[detection],
+            sky.vectors[star],
+            sigma,
+            field.shape,
+        )
         bright = _bright(field, sky, detection, star)
         if same:
             break

@@ -242,7 +242,7 @@ def _solution(
         2
     ):  # the number of pairs decides the order of the distortion, and that the number of pairs
         prior = lens or unknown_lens(order_for(len(match.star)), camera.projection)
-        match = settle(match, prior, field, sky)
+        match = settle(match, prior, field, sky, lens is not None)
     assert prior is not None
     camera = match.fit.camera
     rms_px = float(np.sqrt((match.fit.residual_px**2).sum(axis=1).mean()))

@@ -17,7 +17,7 @@ from imaging.stars.hypotheses import Hypotheses, hypotheses_of, turned_by
 from imaging.stars.prescreen import scores
 from imaging.stars.refine import Field, Sky, grow
 
-ACCEPT_LOG10 = -6.0
+ACCEPT_LOG10 = -7.0
 WIDEST_SCALE_TOLERANCE = 0.02
 _IMAGE_STARS, _SKY_STARS = 28, 80
 _SHORTEST = 0.12  # of the half-diagonal: a close pair says nothing about roll
@@ -66,7 +66,7 @@ def solve_sparse(
         guesses = guesses.take(turned_by(guesses, rotation_deg) < ROLL_TOLERANCE_DEG)
     trials, best = len(guesses), 0.0
     score = scores(guesses, flat, sky) if trials else np.empty(0)
-    for i in np.argsort(-score, kind="stable")[:_MOST_GROWN]:
+    for i in np.argsort(-(score + np.log(guesses.weight[: len(score)])), kind="stable")[:_MOST_GROWN]:
         x0 = (field.shape[1] - 1) / 2 + lens.axis[0] * half
         y0 = (field.shape[0] - 1) / 2 + lens.axis[1] * half
         camera = Camera(
@@ -75,7 +75,7 @@ def solve_sparse(
         match = grow(camera, lens, field, sky, guesses.image_stars[i], guesses.sky_stars[i])
         if match is None:
             continue
-        log10 = match.evidence.chance_log10(trials)
+        log10 = match.evidence.chance_log10(guesses.trials(i, 1))
         best = min(best, log10)
         if log10 < ACCEPT_LOG10:
             return Attempt(match, best, trials, log10)

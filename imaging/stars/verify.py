@@ -1,10 +1,10 @@
 """Is it chance? A sequential test whose error probability holds whenever one stops.
 
-A hypothesis (four matched stars) predicts where further catalogue stars fall. Each is tested once, with a gate fixed
-before it is looked at, and only then used in the fit. Under chance star i is met with probability p_i (the share
-of the ground near it that the gates of detections cover); if the hypothesis is true, with probability d. The
-product of the likelihood ratios is a test martingale, so it exceeds 1/a with probability a at most, at whatever step
-one stops (Ville 1939; Shafer et al. 2011, Statist. Sci. 26, 84). A mean over several d is one too.
+A hypothesis (a few matched stars) predicts where further catalogue stars fall, and how bright. Each is tested once,
+with everything fixed before it is looked at, and only then used in the fit. Its likelihood ratio is that of a star seen
+with probability d, scattered as predicted, against detections of the frame's own brightnesses strewn at random. The
+product of these ratios is a test martingale, so it exceeds 1/a with probability a at most, at whatever step one stops
+(Ville 1939; Shafer et al. 2011, Statist. Sci. 26, 84). A mean over several d is one too.
 """
 
 from __future__ import annotations
@@ -15,7 +15,8 @@ from typing import Any
 import numpy as np
 
 DETECTED_SHARES = (0.03, 0.1, 0.25, 0.5, 0.8, 0.95)
-ACCEPT_LOG10 = -7.0
+ACCEPT_LOG10 = -9.0
+_MOST = 1e7  # one star says no more than this: profiles have wings, and detections come in twos
 
 
 @dataclass
@@ -26,17 +27,15 @@ class Evidence:
     tested: int = 0
     met: int = 0
 
-    def add(self, met: np.ndarray, chance: np.ndarray) -> None:
-        """Add stars tested: `met` (n,) bool, `chance` (n,) their probability of being met by chance."""
+    def add(self, ratio: np.ndarray) -> None:
+        """Add stars tested: `ratio` (n,), how much likelier what is there is for the star than for chance, 0 if empty.
+
+        Its mean under chance must be 1 at most.
+        """
         shares = np.array(DETECTED_SHARES)[:, None]
-        chance = np.clip(chance, 1e-7, 0.999)[None, :]
-        # a true hypothesis meets a star at least as often as chance does
-        likely = shares + (1 - shares) * chance
-        self.log_ratio = self.log_ratio + np.where(
-            met, np.log(likely / chance), np.log((1 - likely) / (1 - chance))
-        ).sum(axis=1)
-        self.tested += len(met)
-        self.met += int(met.sum())
+        self.log_ratio = self.log_ratio + np.log1p(shares * (np.minimum(ratio, _MOST) - 1)).sum(axis=1)
+        self.tested += len(ratio)
+        self.met += int((ratio > 1).sum())
 
     def chance_log10(self, trials: float) -> float:
         """Return log10 of the probability that any of `trials` false hypotheses looks this good."""

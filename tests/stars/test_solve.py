@@ -174,7 +174,7 @@ def test_the_false_alarm_probability_is_true_when_counted():
     for run in range(runs):
         evidence = Evidence()
         for _ in range(12):  # looked at after each few stars, stopped at the best moment
-            evidence.add(rng.random(3) < chance, np.full(3, chance))
+            evidence.add((rng.random(3) < chance) / chance)
             best[run] = min(best[run], evidence.chance_log10(1))
     for level in (0.1, 0.01):
         share = (best < np.log10(level)).mean()
