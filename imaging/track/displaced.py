@@ -22,6 +22,7 @@ CLAIM_SIGMA = 5.0
 LEAST_FRAMES = 6
 SITE_PRIOR_KM = 500.0
 FARTHEST_KM = 3000.0
+AT_THE_SITE = ("plain", "zone", "date", "mirrored")  # readings that leave the site as the plan has it
 EARTH_KM_DEG = 111.19  # a degree of latitude, mean
 
 
@@ -30,7 +31,7 @@ def displaced_site(reading: Reading, promise: Promise, question: Question) -> tu
 
     A displacement along the path looks like a clock error; only what the frames tell apart is claimed.
     """
-    if reading.name != "plain" or reading.fit.used.sum() < LEAST_FRAMES:
+    if reading.name not in AT_THE_SITE or reading.fit.used.sum() < LEAST_FRAMES:
         return None
     priors = question.priors(SMALL_CLOCK_S)
     sigmas = np.array([SITE_PRIOR_KM, SITE_PRIOR_KM])

@@ -15,7 +15,7 @@ import numpy as np
 from imaging.track.fit import Priors, TrackFit, fit_track, start_rotation_deg, turn
 from imaging.track.path import PredictedPath
 from imaging.track.sightings import Sightings
-from planner.errors import NoSolutionError
+from planner.errors import InputError, NoSolutionError
 
 CLAIM_LOG_ODDS = np.log(1e4)
 RIVAL_LOG_ODDS = np.log(1e2)
@@ -255,43 +255,48 @@ def _day_candidates(s: Sightings, q: Question) -> set[float]:
 
 def _closest(s: Sightings, path: PredictedPath, clocks_s: list[float], count: int) -> list[float]:
     """Return the few clock errors, of many, that lay the path best on the sightings, rotation free, scale known."""
-    sample = _sample(s)
-    worth = [(_misfit(sample, path, clock_s), clock_s) for clock_s in clocks_s]
-    return [clock_s for misfit, clock_s in sorted(worth)[:count] if np.isfinite(misfit)]
+    misfit = _misfits(_sample(s), path, np.asarray(clocks_s, float))
+    best = np.argsort(misfit, kind="stable")[:count]
+    return [clocks_s[index] for index in best if np.isfinite(misfit[index])]
 
 
 def _promising(s: Sightings, path: PredictedPath, clock_s: float, q: Question) -> bool:
     """Say whether a reading lays most frames near enough for a fit to be worth its time."""
     own = float(np.sqrt(np.median(np.einsum("nii->n", s.covariance_arcsec2)) / 2.0))
-    return _misfit(_sample(s), path, clock_s) < (PROMISING * np.hypot(q.jitter_arcsec, own)) ** 2
+    misfit = _misfits(_sample(s), path, np.array([clock_s]))[0]
+    return bool(misfit < (PROMISING * np.hypot(q.jitter_arcsec, own)) ** 2)
 
 
 def _sample(s: Sightings, most: int = 25) -> Sightings:
     return s.part(np.unique(np.linspace(0, len(s) - 1, min(len(s), most)).astype(int)))
 
 
-def _misfit(s: Sightings, path: PredictedPath, clock_s: float) -> float:
-    t = s.tt_s - clock_s
-    try:
-        place = s.expected(path, t)
-        later = s.expected(path, t + 60.0)
-    except Exception as beyond:
-        from planner.errors import InputError
+def _misfits(s: Sightings, path: PredictedPath, clocks_s: np.ndarray) -> np.ndarray:
+    """Return the median square distance (k,) of frames from the path, for k clock errors; infinite where there is none.
 
-        if isinstance(beyond, InputError):  # beyond the ephemeris: no such reading
-            return float("inf")
-        raise
-    good = np.isfinite(place).all(axis=1) & np.isfinite(later).all(axis=1)
-    if good.sum() < 2:
-        return float("inf")
+    Ten minutes more or less are left to each clock, and the roll is free on a disc.
+    """
+    t = s.tt_s - clocks_s[:, None]
+    try:
+        both = s.expected(path, np.concatenate([t.ravel(), t.ravel() + 60.0]))
+    except InputError:  # beyond the ephemeris: there is no such reading
+        if clocks_s.size == 1:
+            return np.full(1, np.inf)
+        return np.concatenate([_misfits(s, path, clock) for clock in clocks_s[:, None]])
+    place, later = both.reshape(2, clocks_s.size, len(s), 2)
+    good = np.isfinite(place).all(axis=-1) & np.isfinite(later).all(axis=-1)
     measured = s.places
     if s.on_disc:
         measured = turn(measured, np.radians(start_rotation_deg(s, place)))
-    residual = (measured - place)[good]
-    velocity = ((later - place) / 60.0)[good]
-    slope = np.sum(residual * velocity) / max(np.sum(velocity**2), 1e-30)
-    slope = np.clip(slope, -600.0, 600.0)
-    return float(np.median(np.sum((residual - slope * velocity) ** 2, axis=1)))
+    residual = np.where(good[..., None], measured - place, 0.0)
+    velocity = np.where(good[..., None], (later - place) / 60.0, 0.0)
+    slope = np.sum(residual * velocity, axis=(1, 2)) / np.maximum(np.sum(velocity**2, axis=(1, 2)), 1e-30)
+    slope = np.clip(slope, -600.0, 600.0)[:, None, None]
+    square = np.where(good, np.sum((residual - slope * velocity) ** 2, axis=-1), np.nan)
+    enough = good.sum(axis=1) >= 2
+    misfit = np.full(clocks_s.size, np.inf)
+    misfit[enough] = np.nanmedian(square[enough], axis=1)
+    return misfit
 
 
 def _still_path(s: Sightings, path: PredictedPath) -> PredictedPath | None:

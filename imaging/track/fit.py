@@ -22,6 +22,7 @@ from planner.errors import NoSolutionError
 
 PARAMETERS = ("clock_s", "drift", "rotation_deg", "log_scale", "east_arcsec", "north_arcsec")
 REJECT_SIGMA = 5.0
+MOST_ASKED = 200  # frames that are asked for a first rotation
 
 
 @dataclass(frozen=True)
@@ -78,10 +79,10 @@ class TrackFit:
         return along, across
 
 
-def turn(places: np.ndarray, angle_rad: float) -> np.ndarray:
-    """Return (east, north) places, shape (n, 2), with their position angles increased by an angle."""
+def turn(places: np.ndarray, angle_rad: float | np.ndarray) -> np.ndarray:
+    """Return (east, north) places, (..., n, 2), with their position angles increased by an angle or angles (...,)."""
     cos, sin = np.cos(angle_rad), np.sin(angle_rad)
-    return places @ np.array([[cos, -sin], [sin, cos]])
+    return places @ np.moveaxis(np.array([[cos, -sin], [sin, cos]]), (0, 1), (-2, -1))
 
 
 def motion(sightings: Sightings, path: PredictedPath, tt_s: np.ndarray) -> np.ndarray:
@@ -89,27 +90,35 @@ def motion(sightings: Sightings, path: PredictedPath, tt_s: np.ndarray) -> np.nd
     return sightings.expected_and_motion(path, tt_s)[1]
 
 
-def start_rotation_deg(sightings: Sightings, predicted: np.ndarray) -> float:
-    """Return the rotation about the disc's centre that lays most measured places near the predicted ones.
+def start_rotation_deg(sightings: Sightings, predicted: np.ndarray) -> np.ndarray:
+    """Return the rotations about the disc's centre that lay most measured places near the predicted ones, (...,).
 
-    Of the rotations that single frames ask for, the one that most frames ask for (a mode, not a mean), so that almost
-    half of the frames may be wrong.
+    `predicted`: (..., n, 2), one set of places for each rotation wanted. Of the rotations that single frames ask for,
+    the one that most frames ask for (a mode, not a mean), so that almost half of the frames may be wrong.
     """
     measured = sightings.east_arcsec + 1j * sightings.north_arcsec
-    wanted = predicted[:, 0] + 1j * predicted[:, 1]
-    good = np.flatnonzero(np.isfinite(wanted) & (np.abs(wanted) > 0) & (np.abs(measured) > 0))
-    good = (
-        good[np.unique(np.linspace(0, len(good) - 1, min(len(good), 200)).astype(int))] if len(good) else good
-    )
-    if not len(good):
-        return 0.0
+    wanted = predicted[..., 0] + 1j * predicted[..., 1]
+    if len(sightings) > MOST_ASKED:
+        chosen = np.unique(np.linspace(0, len(sightings) - 1, MOST_ASKED).astype(int))
+        measured, wanted = measured[chosen], wanted[..., chosen]
+    good = np.isfinite(wanted) & (np.abs(wanted) > 0) & (np.abs(measured) > 0)
     # position angles run from north through east: clockwise in the plane of (east, north)
-    asked = np.angle(measured[good] * np.conj(wanted[good]))
-    apart = (asked[:, None] - asked[None, :] + np.pi) % (2 * np.pi) - np.pi
-    width = max(float(np.median(np.abs(apart))), np.radians(0.05))
-    near = np.exp(-0.5 * (apart / (0.5 * width)) ** 2)
-    best = int(np.argmax(near.sum(axis=1)))
-    return float(np.degrees(asked[best] - np.average(apart[best], weights=near[best])))
+    asked = np.where(good, np.angle(measured * np.conj(np.where(good, wanted, 1.0))), 0.0)
+    apart = (asked[..., :, None] - asked[..., None, :] + np.pi) % (2 * np.pi) - np.pi
+    both = good[..., :, None] & good[..., None, :]
+    pairs = np.where(both, np.abs(apart), np.inf).reshape(*asked.shape[:-1], -1)
+    count = np.maximum(both.sum(axis=(-2, -1)), 1)
+    ranked = np.sort(pairs, axis=-1)
+    lower, upper = (
+        np.take_along_axis(ranked, at[..., None], axis=-1)[..., 0] for at in ((count - 1) // 2, count // 2)
+    )
+    width = np.maximum(np.nan_to_num((lower + upper) / 2, posinf=0.0), np.radians(0.05))
+    near = np.where(both, np.exp(-0.5 * (apart / (0.5 * width[..., None, None])) ** 2), 0.0)
+    best = np.argmax(near.sum(axis=-1), axis=-1)[..., None]
+    weight = np.take_along_axis(near, best[..., None], axis=-2)[..., 0, :]
+    away = np.take_along_axis(apart, best[..., None], axis=-2)[..., 0, :]
+    mean = np.sum(away * weight, axis=-1) / np.maximum(weight.sum(axis=-1), 1e-30)
+    return np.degrees(np.take_along_axis(asked, best, axis=-1)[..., 0] - mean)
 
 
 def fit_track(
@@ -150,7 +159,7 @@ class _Solver:
             raise NoSolutionError("the target is nowhere near its reference at the times of the frames")
         x = np.zeros(len(self.prior))
         if self.s.on_disc:
-            x[2] = np.radians(start_rotation_deg(self.s, start))
+            x[2] = float(np.radians(start_rotation_deg(self.s, start)))
         finite = np.isfinite(start).all(axis=1)
         x, used = self._robust_start(x, finite)
         jitter = 0.0
@@ -254,12 +263,16 @@ class _Solver:
     def _robust_start(self, x, finite):
         """Cauchy weights whose width follows the median distance, so that a far start silences nothing."""
         even = np.tile(np.eye(2), (len(self.s), 1, 1))
+        before = np.inf
         for _ in range(15):
             residual = np.nan_to_num(self.s.places - self._model(x, jacobian=False), nan=1e9)
             size2 = np.sum(residual**2, axis=1)
             width2 = max(
                 np.median(size2[finite]) / 1.386, 1e-12
             )  # median of chi-square with 2 degrees of freedom
+            if abs(width2 - before) < 1e-4 * before:
+                break
+            before = width2
             weight = 1.0 / (1.0 + size2 / (2.0 * width2)) / width2
             x = self._converge(x, even * weight[:, None, None], finite, limit=1)
         residual = np.nan_to_num(self.s.places - self._model(x, jacobian=False), nan=1e9)

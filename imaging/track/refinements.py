@@ -45,17 +45,14 @@ class CameraFindings:
 
 
 def clock_findings(reading: Reading, plan: Plan, promise: Promise, question: Question) -> ClockFindings:
-    """Return offset, drift, a start taken for a middle, and a displaced site."""
+    """Return offset, drift, a start taken for a middle, and a displaced site; after a slip, what is wrong beyond it."""
     findings: list[Finding] = []
     offset, sigma = reading.fit.value["clock_s"], reading.fit.sigma["clock_s"]
-    if reading.name not in ("plain", "clock-far-off"):
-        # frames were measured with the air, the phase and the limb of another time, place or camera: first things first
-        return ClockFindings(NAN, NAN, ())
-    if abs(offset) > CLOCK_SIGMA * sigma and reading.name != "clock-far-off":
-        start = _start_for_middle(reading, plan, question)
-        findings.append(start or _offset_finding(offset, sigma))
-    elif reading.name == "clock-far-off":
+    if reading.name == "clock-far-off":
         findings.append(_offset_finding(reading.clock_offset_s, sigma))
+    elif abs(offset) > CLOCK_SIGMA * sigma:
+        start = _start_for_middle(reading, plan, question)
+        findings.append(start or _offset_finding(offset, sigma, beyond=reading.name != "plain"))
     drift, drift_sigma = _drift(reading, question)
     if np.isfinite(drift_sigma) and abs(drift) > CLAIM_SIGMA * drift_sigma:
         way = "gains" if drift > 0 else "loses"
@@ -76,12 +73,15 @@ def clock_findings(reading: Reading, plan: Plan, promise: Promise, question: Que
     return ClockFindings(drift, drift_sigma, tuple(findings))
 
 
-def _offset_finding(offset: float, sigma: float) -> Finding:
+def _offset_finding(offset: float, sigma: float, beyond: bool = False) -> Finding:
+    """Return the finding of a clock error; `beyond`: one that is left when a slip is put right."""
     way = "fast: its stamps are later than UTC" if offset > 0 else "slow: its stamps are earlier than UTC"
     text = (
         f"The frames' clock is {with_sigma(abs(offset), sigma)} s {way}. "
         "`--apply clock` writes a track with the times put right."
     )
+    if beyond:
+        text = text.replace("The frames'", "Beyond that the frames'", 1)
     if abs(offset) >= SMALL_CLOCK_S:
         text = text.replace(" s fast", f" s ({duration_text(abs(offset))}) fast").replace(
             " s slow", f" s ({duration_text(abs(offset))}) slow"

@@ -96,10 +96,23 @@ class CheckResult:
             else f"{self.on_track} of {frames(self.measured)} measured"
         )
         size = np.hypot(self.rms_along_arcsec, self.rms_across_arcsec)
-        text = f"{name} is on its predicted path in {share}, to {size:.2g} arcsec rms"
+        reading = self.diagnosis.reading
+        slip = (
+            next((f.sentence for f in self.findings if f.name == reading.name), "").split(". ")[0].rstrip(".")
+        )
+        if reading.name == "wrong-body":
+            return f"{slip} (in {frames(self.measured)})."
+        if reading.name == "clock-far-off":
+            slip = ""  # the clock is told below, with its number
+        text = f"{slip}; read so, {name}" if slip else name
+        text = f"{text} is on its predicted path in {share}, to {size:.2g} arcsec rms"
         if not np.isfinite(self.clock_offset_sigma_s):
             return text + "; the clock could not be judged."
-        return f"{text}; {clock_words(self.clock_offset_s, self.clock_offset_sigma_s)}."
+        whole = reading.clock_s if reading.name in ("zone", "date") else 0.0
+        words = clock_words(self.clock_offset_s - whole, self.clock_offset_sigma_s)
+        if whole:
+            words = words.replace("the frames' clock", "the clock beyond that", 1)
+        return f"{text}; {words}."
 
 
 def proper(name: str) -> str:

@@ -91,3 +91,35 @@ def test_words_for_a_clock():
     assert "right as far as they tell" in clock_words(1.0, 0.5)
     assert clock_words(7.3, 0.5).endswith("7.30 ± 0.50 s fast")
     assert clock_words(-7.3, 0.5).endswith("7.30 ± 0.50 s slow")
+
+
+@pytest.mark.parametrize("event", ["transit", "occultation"])
+@pytest.mark.parametrize(
+    ("slip", "faults"),
+    [("zone", {"clock_s": 3600.0 + 7.3}), ("zone", {"clock_s": -5.5 * 3600 + 7.3}), ("date", {"clock_s": 86400.0 + 7.3}),
+     ("mirrored", {"clock_s": 7.3, "mirrored": True})],
+)  # fmt: skip
+def test_a_clock_error_is_named_beside_the_slip(event, slip, faults):
+    rng = np.random.default_rng(5)
+    frames = disc_sightings(scene(event)[0].path, times(event, 40, rng), rng, jitter_arcsec=0.1, **faults)
+    found, clock = told(event, frames)
+    assert [finding.name for finding in found.findings] == [slip]
+    assert [finding.name for finding in clock.findings] == ["clock-offset"]
+    assert clock.findings[0].value == pytest.approx(7.3, abs=4 * clock.findings[0].sigma)
+    assert clock.findings[0].sentence.startswith("Beyond that the frames' clock is ")
+
+
+def test_a_drift_and_a_wrong_site_are_named_beside_a_zone():
+    rng = np.random.default_rng(6)
+    promise = scene("occultation")[0]
+    there = replace(observer_of(promise.plan.site), latitude_deg=promise.plan.site.latitude_deg + 0.2)
+    path = PredictedPath.of_plan(promise.plan, there)
+    planned = times("occultation", 40, rng)
+    frames = disc_sightings(path, planned, rng, 3600.0, sigma_arcsec=0.03, jitter_arcsec=0.05)
+    found, clock = told("occultation", frames)
+    assert [finding.name for finding in found.findings] == ["zone"]
+    assert "site-displaced" in [finding.name for finding in clock.findings]
+    drifting = disc_sightings(promise.path, planned, rng, 3600.0, jitter_arcsec=0.05, drift=0.002)
+    found, clock = told("occultation", drifting)
+    assert [finding.name for finding in found.findings] == ["zone"]
+    assert "clock-drift" in [finding.name for finding in clock.findings]
