@@ -6,20 +6,23 @@ step on a Gaussian profile with the noise of each pixel as weight, which reaches
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from dataclasses import dataclass, fields
 
 import numpy as np
 
-if TYPE_CHECKING:
-    from imaging.stars.detection import Background
+from imaging.stars.background import Background
 
+_COLUMNS = ("x", "y", "flux", "vx", "vy", "vxy", "size", "long", "tilt", "line")
+_LINE_RATIO = 5.0  # a thing longer than this many widths is no star, nor two
 _CHUNK = 4000  # stars measured together: bounds the memory of their stamps
 
 
 @dataclass(frozen=True)
 class Measured:
-    """Measurements of n candidates, in their order; `good` says which are stars."""
+    """Measurements of n candidates, in their order; `good` says which are stars, `tilt_rad` along which they are long.
+
+    `on_line`: as bright on both sides along a line as in the middle, such as a satellite's trail.
+    """
 
     x_px: np.ndarray
     y_px: np.ndarray
@@ -32,7 +35,30 @@ class Measured:
     elongation: np.ndarray
     saturated: np.ndarray
     good: np.ndarray
+    tilt_rad: np.ndarray
+    on_line: np.ndarray
+    blended: np.ndarray
     psf_sigma_px: float
+
+    def take(self, rows: np.ndarray) -> Measured:
+        """Return these of the candidates."""
+        return Measured(
+            **{
+                item.name: value[rows] if isinstance(value := getattr(self, item.name), np.ndarray) else value
+                for item in fields(self)
+            }
+        )
+
+    def followed_by(self, others: Measured) -> Measured:
+        """Return these candidates and then the others, of the same frame."""
+        return Measured(
+            **{
+                item.name: np.concatenate([value, getattr(others, item.name)])
+                if isinstance(value := getattr(self, item.name), np.ndarray)
+                else value
+                for item in fields(self)
+            }
+        )
 
 
 def measure(
@@ -51,11 +77,14 @@ def measure(
     if the noise were the sky's alone.
     """
     count = len(x_px)
-    out = {name: np.full(count, np.nan) for name in ("x", "y", "flux", "vx", "vy", "vxy", "size", "long")}
+    out = {
+        name: np.full(count, np.nan)
+        for name in ("x", "y", "flux", "vx", "vy", "vxy", "size", "long", "tilt", "line")
+    }
     saturated = np.zeros(count, dtype=bool)
     for start in range(0, count, _CHUNK):
         part = slice(start, start + _CHUNK)
-        stamps = _stamps(data, sky, x_px[part], y_px[part], max(4, int(np.ceil(4 * width_sigma))))
+        stamps = stamps_of(data, sky, x_px[part], y_px[part], max(4, int(np.ceil(4 * width_sigma))))
         values, hit = _windowed(*stamps, width_sigma, saturation_adu, gain_e_adu)
         for name, value in values.items():
             out[name][part] = value
@@ -64,7 +93,7 @@ def measure(
     out["y"] += y_px
     moved = np.hypot(out["x"] - x_px, out["y"] - y_px)
     good = np.isfinite(out["x"]) & (moved < 2 + 1.5 * width_sigma) & (out["flux"] > 0)
-    good &= ~_doubled(out["x"], out["y"], out["flux"], good, width_sigma)
+    good &= ~doubled(out["x"], out["y"], out["flux"], good, width_sigma)
     clear = good & ~saturated & (snr > 15) & np.isfinite(out["size"]) & (out["size"] > 0.2)
     psf = float(np.median(out["size"][clear])) if clear.sum() >= 3 else width_sigma
     return Measured(
@@ -79,11 +108,14 @@ def measure(
         elongation=np.where(snr > 10, out["long"], np.nan),
         saturated=saturated,
         good=good,
+        tilt_rad=np.nan_to_num(out["tilt"]),
+        on_line=(out["line"] > 0) & (snr > 10) & ~saturated,
+        blended=np.zeros(count, dtype=bool),
         psf_sigma_px=psf,
     )
 
 
-def _stamps(
+def stamps_of(
     data: np.ndarray, sky: Background, x_px: np.ndarray, y_px: np.ndarray, radius: int
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
     """Return (n, s, s) sky-subtracted pixels, their raw maximum (n,), the sky's sigma (n,) and the offsets (s,)."""
@@ -147,6 +179,7 @@ def _windowed(
         half, root = (sxx + syy) / 2, np.hypot((sxx - syy) / 2, sxy)
         # a Gaussian of variance v seen through a window of variance w has v w / (v + w)
         big, small = (1 / (1 / axis - 1 / width_sigma**2) for axis in (half + root, half - root))
+        line = (big <= 0) | ~np.isfinite(big) | (big > _LINE_RATIO**2 * np.maximum(small, 0.04))
         size = np.sqrt(np.sqrt(np.maximum(big, 0) * np.maximum(small, 0)))
         long = np.sqrt(big / small)
         # the window halves a star as wide as itself
@@ -154,10 +187,11 @@ def _windowed(
     hit = peak >= 0.98 * saturation_adu if saturation_adu else np.zeros(len(stamp), dtype=bool)
     ok = total > 0
     values = {"x": x, "y": y, "flux": flux, "vx": vx, "vy": vy, "vxy": vxy, "size": size, "long": long}
+    values |= {"tilt": 0.5 * np.arctan2(2 * sxy, sxx - syy), "line": line.astype(float)}
     return {name: np.where(ok, value, np.nan) for name, value in values.items()}, hit & ok
 
 
-def _doubled(
+def doubled(
     x: np.ndarray, y: np.ndarray, flux: np.ndarray, good: np.ndarray, width_sigma: float
 ) -> np.ndarray:
     """Say which candidates ended on a brighter one (several maxima on one saturated or ragged star)."""

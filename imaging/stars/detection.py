@@ -6,46 +6,18 @@ The matched filter is a Gaussian as wide as the stars (Turin 1960; it maximises 
 
 from __future__ import annotations
 
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, field, fields
 
 import numpy as np
 
+from imaging.stars.background import Background, background
+from imaging.stars.blends import deblend
 from imaging.stars.centroids import measure
+from imaging.stars.trails import Trails, looks_trailed, measure_trails, trail_field
 
-CELL_PX = 64  # side of a background cell: many times a star, a fraction of the vignetting
 _STRIP_ROWS = 768
 _MAX_CANDIDATES = 60_000
 FWHM_PER_SIGMA = 2.3548200450309493  # 2 sqrt(2 ln 2)
-
-
-@dataclass(frozen=True)
-class Background:
-    """The sky on a grid of cells, and its noise; see `level`."""
-
-    grid: np.ndarray
-    sigma_grid: np.ndarray
-    width_px: int
-    height_px: int
-
-    def level(self, top: int, bottom: int, of: np.ndarray | None = None) -> np.ndarray:
-        """Return the sky of the rows `top` to `bottom` as float32, interpolated between cell centres."""
-        grid = _extended(self.grid if of is None else of)
-        rows, columns = grid.shape[0] - 2, grid.shape[1] - 2
-        y = (np.arange(top, bottom) + 0.5) * rows / self.height_px + 0.5
-        x = (np.arange(self.width_px) + 0.5) * columns / self.width_px + 0.5
-        i, j = np.minimum(y.astype(int), rows), np.minimum(x.astype(int), columns)
-        across = (x - j).astype(np.float32)
-        first, last = int(i[0]), int(i[-1]) + 2
-        wide = grid[first:last, j] * (1 - across) + grid[first:last, j + 1] * across
-        down = (y - i).astype(np.float32)[:, None]
-        return wide[i - first] * (1 - down) + wide[i - first + 1] * down
-
-
-def _extended(grid: np.ndarray) -> np.ndarray:
-    """Return the grid with one cell more on every side, continued straight, so that a gradient has no edge."""
-    if min(grid.shape) < 2:
-        return np.pad(grid, 1, mode="edge")
-    return np.pad(grid, 1, mode="reflect", reflect_type="odd")
 
 
 @dataclass(frozen=True)
@@ -54,7 +26,10 @@ class Detections:
 
     `sigma_x_px`, `sigma_y_px`, `covariance_xy_px2`: 1-sigma errors of the centroid. `flux_adu`: of the fitted
     profile. `snr`: of the matched filter. `fwhm_px`, `elongation`: of the star itself, NaN when too faint to tell.
-    `saturated`: holds pixels at the frame's limit. The scalars `psf_fwhm_px` and `noise_adu` are of the frame.
+    `saturated`: holds pixels at the frame's limit. `blended`: shares its light with a neighbour, and was measured
+    together with it. `trail_length_px`, `trail_angle_deg` (from +x towards +y): of stars measured along their trail,
+    whose place is the trail's middle; 0 in a frame that followed the sky. The scalars `psf_fwhm_px` (across a trail)
+    and `noise_adu` are of the frame.
     """
 
     x_px: np.ndarray
@@ -71,6 +46,20 @@ class Detections:
     height_px: int
     psf_fwhm_px: float
     noise_adu: float
+    blended: np.ndarray = field(default_factory=lambda: np.zeros(0, dtype=bool))
+    trail_length_px: np.ndarray = field(default_factory=lambda: np.zeros(0))
+    trail_angle_deg: np.ndarray = field(default_factory=lambda: np.zeros(0))
+
+    def __post_init__(self) -> None:
+        """Fill in what a frame of round, lone stars need not state."""
+        for name, kind in (("blended", bool), ("trail_length_px", float), ("trail_angle_deg", float)):
+            if len(getattr(self, name)) != len(self.x_px):
+                object.__setattr__(self, name, np.zeros(len(self.x_px), dtype=kind))
+
+    @property
+    def trailed(self) -> bool:
+        """True when the stars were measured along their trails."""
+        return bool((self.trail_length_px > 0).any())
 
     def __len__(self) -> int:
         """Return the number of stars."""
@@ -83,41 +72,6 @@ class Detections:
             for item in fields(self)
         }
         return Detections(**chosen)
-
-
-def background(data: np.ndarray, cell_px: int = CELL_PX) -> Background:
-    """Return sky and noise of a frame on a grid, sources left out.
-
-    Each cell gives the median of its pixels within 3 sigma of a first median; sigma comes from the lower half of
-    the pixels, which stars do not touch. A quarter of the pixels is looked at.
-    """
-    import cv2
-
-    height, width = data.shape
-    rows, columns = max(1, round(height / cell_px)), max(1, round(width / cell_px))
-    cell_h, cell_w = height // rows, width // columns
-    step = 2 if min(cell_h, cell_w) >= 24 else 1
-    grid = np.empty((rows, columns), dtype=np.float32)
-    sigma = np.empty_like(grid)
-    top_edges = np.linspace(0, height - cell_h, rows).round().astype(int)
-    left_edges = np.linspace(0, width - cell_w, columns).round().astype(int)
-    take = (left_edges[:, None] + np.arange(0, cell_w, step)[None, :]).ravel()
-    for row, top in enumerate(top_edges):
-        block = data[top : top + cell_h : step][:, take].reshape(-1, columns, len(take) // columns)
-        sample = np.sort(block.transpose(1, 0, 2).reshape(columns, -1), axis=1)  # NaN sort to the end
-        grid[row], sigma[row] = _clipped(sample)
-    good = np.isfinite(grid) & np.isfinite(sigma)
-    if not good.all():
-        fill, spread = (np.median(grid[good]), np.median(sigma[good])) if good.any() else (0.0, 1.0)
-        grid, sigma = (
-            np.where(good, grid, fill).astype(np.float32),
-            np.where(good, sigma, spread).astype(np.float32),
-        )
-    if min(rows, columns) >= 3:
-        grid, sigma = (cv2.medianBlur(_extended(one), 3)[1:-1, 1:-1] for one in (grid, sigma))
-    positive = sigma[sigma > 0]
-    floor = 0.2 * float(np.median(positive)) if positive.size else 1e-3
-    return Background(grid, np.maximum(sigma, max(floor, 1e-6)), width, height)
 
 
 def detect(
@@ -146,8 +100,17 @@ def detect(
             width_sigma = float(np.clip(found, 0.6, 6.0))
             candidates = _local_maxima(data, sky, width_sigma, threshold)
             measured = measure(data, sky, *candidates, width_sigma, saturation_adu, gain_e_adu)
+    clear = (measured.snr > 15) & ~measured.saturated
+    if looks_trailed(measured.elongation, clear):
+        trail = trail_field(data, sky, saturation_adu, gain_e_adu)
+        if trail is not None:
+            trails = measure_trails(
+                data, sky, trail, threshold, saturation_adu, gain_e_adu, min(2 * max_stars, _MAX_CANDIDATES)
+            )
+            return _of_trails(trails, data.shape, trail.sigma_px, sky, max_stars)
+    measured = deblend(data, sky, candidates[0], candidates[1], measured, gain_e_adu)
     order = np.argsort(-measured.flux_adu, kind="stable")
-    order = order[measured.good[order]][:max_stars]
+    order = order[(measured.good & ~measured.on_line)[order]][:max_stars]
     return Detections(
         x_px=measured.x_px[order],
         y_px=measured.y_px[order],
@@ -163,25 +126,36 @@ def detect(
         height_px=data.shape[0],
         psf_fwhm_px=measured.psf_sigma_px * FWHM_PER_SIGMA,
         noise_adu=float(np.median(sky.sigma_grid)),
+        blended=measured.blended[order],
     )
 
 
-def _clipped(sample: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Return clipped median and sigma of each sorted row."""
-    line = np.arange(len(sample))
-    number = np.isfinite(sample).sum(axis=1)
-    last = np.maximum(number - 1, 0)
-    middle, low = sample[line, last // 2], sample[line, (last * 0.1587).astype(int)]
-    spread = middle - low
-    kept_low = (sample < (middle - 3 * spread)[:, None]).sum(axis=1)
-    kept_high = (sample <= (middle + 3 * spread)[:, None]).sum(axis=1)
-    number_kept = np.maximum(kept_high - kept_low, 1)
-    at = np.minimum(kept_low + number_kept // 2, sample.shape[1] - 1)
-    at_low = np.minimum(kept_low + (number_kept * 0.1587).astype(int), sample.shape[1] - 1)
-    middle = sample[line, at]
-    spread = middle - sample[line, at_low]
-    empty = number < 8
-    return np.where(empty, np.nan, middle), np.where(empty, np.nan, spread)
+def _of_trails(
+    trails: Trails, shape: tuple[int, ...], sigma_px: float, sky: Background, max_stars: int
+) -> Detections:
+    order = np.argsort(-trails.flux_adu, kind="stable")
+    order = order[trails.good[order]][:max_stars]
+    covariance = trails.covariance[order]
+    fwhm_px = sigma_px * FWHM_PER_SIGMA
+    count = len(order)
+    return Detections(
+        x_px=trails.x_px[order],
+        y_px=trails.y_px[order],
+        flux_adu=trails.flux_adu[order],
+        snr=trails.snr[order],
+        sigma_x_px=np.sqrt(covariance[:, 1, 1]),
+        sigma_y_px=np.sqrt(covariance[:, 2, 2]),
+        covariance_xy_px2=covariance[:, 1, 2],
+        fwhm_px=np.full(count, fwhm_px),
+        elongation=1 + trails.length_px[order] / fwhm_px,
+        saturated=trails.saturated[order],
+        width_px=shape[1],
+        height_px=shape[0],
+        psf_fwhm_px=fwhm_px,
+        noise_adu=float(np.median(sky.sigma_grid)),
+        trail_length_px=trails.length_px[order],
+        trail_angle_deg=np.degrees(trails.angle_rad[order]),
+    )
 
 
 def _local_maxima(

@@ -7,7 +7,8 @@ import pytest
 from scipy.spatial import cKDTree
 from scipy.special import erf
 
-from imaging.stars.detection import background, detect
+from imaging.stars.background import background
+from imaging.stars.detection import detect
 
 
 def star_stamp(x, y, flux, sigma, reach):
@@ -129,3 +130,65 @@ def test_background_is_the_sky_between_the_stars():
     sky = background(render((600, 800), x, y, np.full(400, 30000.0), 3.0))
     assert np.abs(sky.level(0, 600) - 200).max() < 8
     assert np.median(sky.sigma_grid) == pytest.approx(np.sqrt(200 + 9), rel=0.1)
+
+
+def scattered(count, shape, seed):
+    rng = np.random.default_rng(seed)
+    return (
+        rng.uniform(20, shape[1] - 20, count),
+        rng.uniform(20, shape[0] - 20, count),
+        10 ** rng.uniform(3.6, 5.2, count),
+    )
+
+
+def strangers(found, x, y, within=3.0):
+    """How many detections are none of the stars put in."""
+    distance, _ = cKDTree(np.column_stack([x, y])).query(np.column_stack([found.x_px, found.y_px]))
+    return distance > within
+
+
+@pytest.mark.parametrize("lit", ["burnt out", "a crescent"])
+def test_the_moons_glare_hides_only_what_is_near_it(lit):
+    shape = (1500, 2000)
+    x, y, flux = scattered(300, shape, 4)
+    yy, xx = np.mgrid[0 : shape[0], 0 : shape[1]]
+    away = np.hypot(xx - 900, yy - 700)
+    glare = 15_000 / np.maximum(away / 160, 1) ** 2
+    disc = away < 160 if lit == "burnt out" else (away < 160) & (np.hypot(xx - 960, yy - 700) > 170)
+    rough = 1 + 0.3 * np.random.default_rng(1).normal(size=shape)  # ground that is not smooth
+    light = np.where(disc, 1e6 if lit == "burnt out" else 20_000 * np.abs(rough), glare)
+    frame = render(shape, x, y, flux, 2.8) + np.random.default_rng(2).poisson(light)
+    found = detect(np.minimum(frame, 60_000), saturation_adu=60_000.0, gain_e_adu=1.0)
+    far = np.hypot(x - 900, y - 700) > 2 * 160
+    ok, _ = matched(found, x[far], y[far])
+    assert ok.mean() > 0.97
+    false = strangers(found, x, y)
+    # its limb and its ground are many things that no catalogue knows, but only there
+    assert (np.hypot(found.x_px[false] - 900, found.y_px[false] - 700) > 1.6 * 160).sum() <= 3
+    assert not found.trailed
+
+
+def test_a_planet_is_one_detection_and_its_light_hides_nothing_far():
+    shape = (1000, 1400)
+    x, y, flux = scattered(150, shape, 8)
+    frame = render(shape, np.append(x, 700.3), np.append(y, 500.2), np.append(flux, 5e7), 2.8)
+    found = detect(np.minimum(frame, 60_000), saturation_adu=60_000.0, gain_e_adu=1.0)
+    here = np.hypot(found.x_px - 700.3, found.y_px - 500.2)
+    assert (here < 15).sum() == 1
+    assert found.saturated[here < 15].all()
+    far = np.hypot(x - 700, y - 500) > 30
+    assert matched(found, x[far], y[far])[0].mean() > 0.97
+
+
+def test_a_satellite_is_no_row_of_stars():
+    import cv2
+
+    shape = (1000, 1400)
+    x, y, flux = scattered(150, shape, 9)
+    line = np.zeros(shape, np.float32)
+    cv2.line(line, (0, 120), (1399, 800), 2000, 2, cv2.LINE_AA)
+    found = detect(render(shape, x, y, flux, 2.8) + cv2.GaussianBlur(line, (0, 0), 1.0), gain_e_adu=1.0)
+    assert strangers(found, x, y).sum() <= 3
+    assert not found.trailed
+    distance = np.abs(y - 120 - x * 680 / 1399)
+    assert matched(found, x[distance > 20], y[distance > 20])[0].mean() > 0.97
