@@ -30,8 +30,8 @@ from planner import errors
 @click.option(
     "--after",
     type=click.Path(path_type=Path),
-    metavar="TRACK",
-    help="Keep what this track shows as taken, plan the rest.",
+    metavar="TRACK_OR_LOGBOOK",
+    help="Keep what a track or a logbook shows as taken, plan the rest.",
 )
 @click.option(
     "--of",

@@ -26,16 +26,16 @@ def calendar_text(outlook: Outlook) -> bytes:
     calendar.add("version", "2.0")
     calendar.add("x-wr-calname", plan.title)
     if outlook.campaign:
-        for passage in plan.passages:
-            if passage.done:
+        for passages in plan.visits():
+            if passages[0].done:
                 continue
-            start, end = min(shot.start_utc for shot in passage.shots), end_utc(passage)
-            text = _passage_text(passage)
-            calendar.add_component(
-                _entry(plan, f"{plan.title}: {passage.name}", start - _SET_UP, end, text, _ALARMS)
-            )
-            for number, reserve in enumerate(passage.reserve_utc, 1):
-                title = f"{plan.title}: {passage.name}, reserve {number} (only if it was missed)"
+            start = min(shot.start_utc for passage in passages for shot in passage.shots)
+            end = max(end_utc(passage) for passage in passages)
+            text = "\n".join(_passage_text(passage) for passage in passages)
+            name = f"{plan.title}: visit {passages[0].visit}"
+            calendar.add_component(_entry(plan, name, start - _SET_UP, end, text, _ALARMS))
+            for number, reserve in enumerate(passages[0].reserve_utc, 1):
+                title = f"{name}, reserve {number} (only if it was missed)"
                 calendar.add_component(
                     _entry(plan, title, reserve - _SET_UP, reserve + (end - start), text, ())
                 )

@@ -10,6 +10,7 @@ from typing import Any
 
 import numpy as np
 
+from planner.errors import InputError
 from planner.events.family import Circumstances
 from planner.provenance import content_hash, versions
 from planner.sequence import campaign as campaigns
@@ -19,6 +20,7 @@ from planner.sequence.capacity import end_utc, frame_bytes
 from planner.sequence.cautions import cautions_of
 from planner.sequence.feasibility import judge, judge_together
 from planner.sequence.flips import Pause
+from planner.sequence.guiding import with_guides
 from planner.sequence.models import Brief, Passage, Plan, PredictedPoint
 from planner.sequence.passages import event_passages
 from planner.sequence.setting import Setting, settings_of
@@ -58,15 +60,29 @@ def build_plans(brief: Brief, tick: Tick | None = None, taken: Taken | None = No
         if brief.wish.camera_angle == "best":
             angle = campaigns.best_camera_angle_deg(settings[0], chosen)
             settings = [replace(each, rig=campaigns.rig_at_angle(each.rig, angle)) for each in settings]
+    elif settings[0].wish.mosaic is not None:
+        raise InputError(
+            f"wish.mosaic: found in a brief for {settings[0].family.name}; allowed in campaigns of many nights "
+            "(retrograde-track, apparition-arc): within hours the camera follows what moves"
+        )
+    prepared = [
+        campaigns.prepare(setting, chosen if number == 0 else replace(chosen, done=()))
+        for number, setting in enumerate(settings)
+        if chosen is not None
+    ]
     plans = []
     for number, setting in enumerate(settings):
         pauses: list[Pause] = []
         if chosen is not None:
-            own = chosen if number == 0 else replace(chosen, done=())
-            passages = campaigns.campaign_passages(setting, own, tick if number == 0 else None)
+            together = [
+                each.busy_s for each in prepared if each.setting.rig.mount.name == setting.rig.mount.name
+            ]
+            slowest_s = np.max(together, axis=0)
+            passages = campaigns.campaign_passages(prepared[number], slowest_s, tick if number == 0 else None)
         else:
             passages, pauses = event_passages(setting, clock_sigma_s)
-        plans.append(_plan(setting, with_slack(passages, setting.rig.sensor.readout_s), pauses, settings))
+        passages = with_guides(setting, with_slack(passages, setting.rig.sensor.readout_s))
+        plans.append(_plan(setting, passages, pauses, settings))
     return judge_together(plans)
 
 

@@ -1,4 +1,4 @@
-"""The passages of a campaign: one a visit, framed together, exposed for a plate solution and for the planet."""
+"""The passages of a campaign: one a visit (or a panel of its mosaic), framed together, timed together on one mount."""
 
 from __future__ import annotations
 
@@ -6,20 +6,26 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from datetime import timedelta
 from math import ceil
+from typing import Any
 
 import numpy as np
 
-from planner.sequence import exposure, radiometry
-from planner.sequence.framing import Field, Framing, best_angle_deg, field_of, frame_track, fullest_aim
-from planner.sequence.models import Passage, Rig, Shot
-from planner.sequence.motion import hour_angle_deg, motion_at_rates
-from planner.sequence.nights import Nights, reserve_nights, spread_evenly, usable_nights, wanted_visits
+from planner.errors import InputError
+from planner.sequence.framing import Field, best_angle_deg, field_of, frame_track, fullest_aim
+from planner.sequence.models import Passage, Rig
+from planner.sequence.mosaic import panels_over
+from planner.sequence.motion import hour_angle_deg
+from planner.sequence.nights import (
+    Nights,
+    reserve_nights,
+    spread_evenly,
+    usable_nights,
+    visit_rule,
+    wanted_visits,
+)
 from planner.sequence.passages import next_whole
-from planner.sequence.recipes import tracking_of
 from planner.sequence.setting import Setting
-from planner.sequence.starfield import StarFrames, star_frames
-
-_HALF_STEP_S = 60.0
+from planner.sequence.visit import Exposures, Stops, exposures_at
 
 
 @dataclass(frozen=True)
@@ -49,7 +55,7 @@ def choose_campaign(
     after = max([*taken, after_tt_s if after_tt_s is not None else -np.inf])
     nights = usable_nights(setting, after)
     taken_path = float(np.interp(max(taken), every.tt_s, every.path_arcsec)) if taken else None
-    left = max(1, wanted_visits(setting, every) - len(done))
+    left = max(1, wanted_visits(setting, every) - len({passage.visit for passage in done}))
     chosen = spread_evenly(nights.path_arcsec, left, taken_path, nights.moonlight_mag)
     return Campaign(nights, chosen, reserve_nights(nights, chosen, setting.wish.reserves), done)
 
@@ -60,40 +66,119 @@ def best_camera_angle_deg(setting: Setting, campaign: Campaign) -> float:
     return best_angle_deg(setting.rig, disc.ra_deg, disc.dec_deg)
 
 
-def campaign_passages(
-    setting: Setting, campaign: Campaign, tick: Callable[[int, int], None] | None = None
-) -> list[Passage]:
-    """Return one passage a visit: star frames that also hold the planet, and others where no exposure does both."""
+@dataclass(frozen=True)
+class Prepared:
+    """What one camera does at the visits of a campaign, before cameras on one mount wait for each other."""
+
+    setting: Setting
+    campaign: Campaign
+    stops: Stops
+    exposures: Exposures
+    ground: dict[str, Any] | None
+    busy_s: np.ndarray
+
+
+def prepare(setting: Setting, campaign: Campaign) -> Prepared:
+    """Return a camera's pointings, what it exposes there and how long that takes."""
     visits = campaign.nights.rows(campaign.chosen)
     narrowest = min((setting.rig, *setting.mount_mates), key=lambda rig: field_of(rig).radius_deg)
     angle = setting.rig.camera_angle_deg if narrowest is not setting.rig else None
-    aims, ground = _aims(setting, visits, field_of(narrowest, angle))
-    exposures = _exposures(setting, visits, aims)
+    stops, ground = _stops(setting, visits, field_of(narrowest, angle))
+    exposures = exposures_at(setting, visits, stops)
+    busy_s = np.array([exposures.busy_s(row) for row in range(len(stops))])
+    return Prepared(setting, campaign, stops, exposures, ground, busy_s)
+
+
+def campaign_passages(
+    prepared: Prepared, busy_s: np.ndarray | None = None, tick: Callable[[int, int], None] | None = None
+) -> list[Passage]:
+    """Return one passage a pointing, which is one a visit unless a mosaic is wanted.
+
+    `busy_s`: how long the slowest camera on the mount needs at each pointing; its own time when None.
+    """
+    setting, campaign, stops, exposures = (
+        prepared.setting,
+        prepared.campaign,
+        prepared.stops,
+        prepared.exposures,
+    )
+    busy_s = prepared.busy_s if busy_s is None else busy_s
+    visits = campaign.nights.rows(campaign.chosen)
     hour_angle = hour_angle_deg(setting.observer, visits.disc.ra_deg, visits.disc.dec_deg, visits.tt_s)
     turned = _turned(setting.rig, hour_angle)
-    first = len(campaign.done) + 1
+    starts_s = visits.tt_s - _lead_s(setting, visits, stops, busy_s)
+    done_visits = [passage.visit or 0 for passage in campaign.done]
+    first = max(done_visits, default=0) + 1
     passages = list(campaign.done)
-    for index in range(len(visits)):
-        number = first + index
-        shots = _visit_shots(setting, visits, exposures, index)
+    moment = None
+    for row in range(len(stops)):
+        index = int(stops.visit[row])
+        begins = row == 0 or stops.visit[row - 1] != index
+        if begins:
+            number_in_visit = 0
+            moment, _ = next_whole(float(starts_s[index]), 60.0)
+        assert moment is not None
+        start = moment + timedelta(seconds=ceil(float(stops.slew_s[row]) - 1e-9))
+        shots, _ = exposures.shots(row, start, reverse=number_in_visit % 2 == 1)
+        moment = start + timedelta(seconds=float(busy_s[row]))
+        number_in_visit += 1
+        number, panel = first + index, stops.panel[row]
+        where = f"{visits.path_arcsec[index] / 3600:.2f} degrees of its path"
         passages.append(
             Passage(
-                name=f"visit {number}",
-                purpose=f"{setting.event.spec.body} at {visits.path_arcsec[index] / 3600:.2f} degrees of its path, "
-                f"{visits.altitude_deg[index]:.0f} degrees up",
+                name=f"visit {number}" + (f" {panel}" if panel else ""),
+                purpose=f"{setting.event.spec.body} at {where}, {visits.altitude_deg[index]:.0f} degrees up"
+                if stops.holds_target[row]
+                else f"the stars beside the track, with {setting.event.spec.body} at {where}",
                 visit=number,
+                panel=panel,
+                holds_target=bool(stops.holds_target[row]),
                 flipped=bool(turned[index]),
-                stars_expected=int(exposures.frames.stars[index]),
+                stars_expected=int(exposures.stars[row]),
                 reserve_utc=[
-                    next_whole(float(campaign.nights.tt_s[row]), 60.0)[0] for row in campaign.reserves[index]
-                ],
+                    next_whole(float(campaign.nights.tt_s[night]), 60.0)[0]
+                    for night in campaign.reserves[index]
+                ]
+                if begins
+                else [],
                 shots=shots,
-                **(ground or _field_aim(aims, index)),
+                **(
+                    prepared.ground
+                    or {
+                        "aim": "field",
+                        "aim_ra_deg": round(float(stops.ra_deg[row]) % 360.0, 5),
+                        "aim_dec_deg": round(float(stops.dec_deg[row]), 5),
+                    }
+                ),
             )
         )
         if tick:
-            tick(index + 1, len(visits))
+            tick(row + 1, len(stops))
     return passages
+
+
+def _lead_s(setting: Setting, visits: Nights, stops: Stops, busy_s: np.ndarray) -> np.ndarray:
+    """Return how long before its best moment each visit begins, so that a mosaic does not run into the day.
+
+    The moment is the middle of the mosaic; where that ends or begins unfit, it is the end, or else the beginning.
+    A moment that is fixed (sidereal time, solar depression) is always the beginning.
+    """
+    lead_s = np.zeros(len(visits))
+    if setting.wish.mosaic is None or visit_rule(setting)[0] != "highest":
+        return lead_s
+    total_s = np.bincount(stops.visit, busy_s + stops.slew_s, len(visits))
+    open_still = np.ones(len(visits), bool)
+    for part in (0.5, 1.0, 0.0):
+        begin_s = visits.tt_s - part * total_s
+        fit = open_still & _fit(setting, begin_s) & _fit(setting, begin_s + total_s)
+        lead_s[fit] = part * total_s[fit]
+        open_still &= ~fit
+    return lead_s
+
+
+def _fit(setting: Setting, tt_s: np.ndarray) -> np.ndarray:
+    geometry = setting.geometry(tt_s)
+    return setting.reachable(geometry) & (geometry.sun_altitude_deg < setting.wish.darkness_deg)
 
 
 def _turned(rig: Rig, hour_angle_deg: np.ndarray) -> np.ndarray:
@@ -106,104 +191,66 @@ def _turned(rig: Rig, hour_angle_deg: np.ndarray) -> np.ndarray:
     return west != west[0]
 
 
-def _field_aim(aims: Framing, index: int) -> dict:  # type: ignore[type-arg]
-    return {
-        "aim": "field",
-        "aim_ra_deg": round(float(aims.ra_deg[index]) % 360.0, 5),
-        "aim_dec_deg": round(float(aims.dec_deg[index]), 5),
-    }
-
-
-def _aims(setting: Setting, visits: Nights, field: Field) -> tuple[Framing, dict | None]:  # type: ignore[type-arg]
-    """Return where the camera points among the stars at each visit, and the one direction of a tripod, if it is one."""
-    if setting.rig.mount.kind != "fixed":
-        return frame_track(field, visits.disc.ra_deg, visits.disc.dec_deg), None
-    # a tripod frames the arc over the ground: azimuth runs the other way round than right ascension
-    level = Field(
-        field.half_width_arcsec, field.half_height_arcsec, setting.rig.camera_angle_deg, field.parity
-    )
-    azimuth, altitude = fullest_aim(level, -visits.azimuth_deg, visits.altitude_deg)
-    where = {
-        "aim": "ground",
-        "aim_altitude_deg": round(altitude, 3),
-        "aim_azimuth_deg": round(-azimuth % 360.0, 3),
-    }
-    return Framing(visits.disc.ra_deg, visits.disc.dec_deg, True), where
-
-
-@dataclass(frozen=True)
-class _Exposures:
-    """What is exposed at n visits: the star frames, the planet alone (NaN where not needed), rates; (n,) arrays."""
-
-    frames: StarFrames
-    planet_s: np.ndarray
-    peak_e_s: np.ndarray
-    trail_px_s: np.ndarray
-    gain: float
-
-
-def _exposures(setting: Setting, visits: Nights, aims: Framing) -> _Exposures:
-    gain = setting.gain_for_faint()
-    disc = visits.disc
-    peak = exposure.peak_rate_e_s(
-        setting.rig, setting.site, setting.through, disc.name, disc, visits.altitude_deg
-    )
-    trail = _trail_px_s(setting, visits)
-    frames = star_frames(setting, setting.geometry(visits.tt_s), aims.ra_deg, aims.dec_deg, peak, trail, gain)
-    planet_s = exposure.wanted_exposure_s(setting.rig, peak, setting.wish.well_fraction, gain)
-    needed = frames.clips_too_much | (setting.wish.planet_frames > 0)
-    return _Exposures(frames, np.where(needed, planet_s, np.nan), peak, trail, gain)
-
-
-def _trail_px_s(setting: Setting, visits: Nights) -> np.ndarray:
-    """Return how fast stars and planet trail in the frame, pixels a second at the corner."""
-    from planner.sky.places import offsets_arcsec
-
-    before, after = (
-        setting.geometry(visits.tt_s + step_s).discs[visits.disc.name]
-        for step_s in (-_HALF_STEP_S, _HALF_STEP_S)
-    )
-    east, north = offsets_arcsec(before.ra_deg, before.dec_deg, after.ra_deg, after.dec_deg)
-    rates = (east / (2 * _HALF_STEP_S), north / (2 * _HALF_STEP_S))
-    place = (visits.disc.ra_deg, visits.disc.dec_deg)
-    tracking = tracking_of(setting, "field")
-    moving = motion_at_rates(setting.rig, setting.observer, tracking, place, rates, visits.tt_s)
-    return moving.trail_px(setting.rig, 1.0, corner=True)
-
-
-def _visit_shots(setting: Setting, visits: Nights, plan: _Exposures, row: int) -> list[Shot]:
-    kinds = [
-        ("stars", exposure.rounded_up(float(plan.frames.exposure_s[row])), setting.wish.frames_per_visit)
-    ]
-    if np.isfinite(plan.planet_s[row]):
-        count = setting.wish.planet_frames or setting.wish.frames_per_visit
-        kinds.append(("planet", exposure.rounded_down(float(plan.planet_s[row])), count))
-    if setting.wish.deep_frames:
-        kinds.append(
-            ("deep", exposure.rounded_down(float(plan.frames.longest_s[row])), setting.wish.deep_frames)
+def _stops(setting: Setting, visits: Nights, field: Field) -> tuple[Stops, dict[str, Any] | None]:
+    """Return where the camera points at each visit, and the one direction of a tripod, if it is one."""
+    count = len(visits)
+    each = np.arange(count)
+    if setting.wish.mosaic is not None:
+        return _mosaic_stops(setting, visits, field), None
+    ground = None
+    ra_deg, dec_deg = visits.disc.ra_deg, visits.disc.dec_deg
+    if setting.rig.mount.kind == "fixed":
+        # a tripod frames the arc over the ground: azimuth runs the other way round than right ascension
+        level = Field(
+            field.half_width_arcsec, field.half_height_arcsec, setting.rig.camera_angle_deg, field.parity
         )
-    shots = []
-    start, _ = next_whole(float(visits.tt_s[row]), 60.0)
-    saturation = radiometry.saturation_e(setting.rig, plan.gain)
-    for name, exposure_s, count in kinds:
-        cadence_s = ceil((exposure_s + setting.rig.sensor.readout_s) * 10 - 1e-9) / 10 + 1.0
-        shots.append(
-            Shot(
-                name=name,
-                start_utc=start,
-                cadence_s=round(cadence_s, 3),
-                count=count,
-                exposure_s=exposure_s,
-                gain=plan.gain,
-                filter=setting.filter_name,
-                tracking=tracking_of(setting, "field"),
-                peak_of=visits.disc.name,
-                peak_e=float(f"{min(exposure_s * plan.peak_e_s[row], saturation):.4g}"),
-                trail_px=float(f"{exposure_s * plan.trail_px_s[row]:.2g}"),
-            )
+        azimuth, altitude = fullest_aim(level, -visits.azimuth_deg, visits.altitude_deg)
+        ground = {
+            "aim": "ground",
+            "aim_altitude_deg": round(altitude, 3),
+            "aim_azimuth_deg": round(-azimuth % 360.0, 3),
+        }
+    else:
+        aims = frame_track(field, ra_deg, dec_deg)
+        ra_deg, dec_deg = aims.ra_deg, aims.dec_deg
+    alone = np.ones(count, bool)
+    return Stops(each, (None,) * count, ra_deg, dec_deg, np.zeros(count), alone, alone), ground
+
+
+def _mosaic_stops(setting: Setting, visits: Nights, field: Field) -> Stops:
+    mount, wish = setting.rig.mount, setting.wish
+    if mount.kind != "equatorial":
+        raise InputError(
+            f"wish.mosaic: found a mount that is {mount.kind}; allowed is equatorial, which holds the camera's angle "
+            "from panel to panel"
         )
-        start += timedelta(seconds=ceil(cadence_s * count))
-    return shots
+    grid = None if wish.mosaic == "track" else wish.mosaic
+    track = setting.geometry(np.linspace(setting.event.start_tt_s, setting.event.end_tt_s, 400))
+    disc = track.discs[track.target]
+    used = (disc.ra_deg, disc.dec_deg)
+    if grid is None and setting.family.name == "apparition-arc":
+        # far from the Sun's glare the planet is never seen: the visits alone say what must fit
+        used = (visits.disc.ra_deg, visits.disc.dec_deg)
+    panels = panels_over(field, *used, grid, wish.mosaic_overlap)
+    orders, slews, target, holds = [], [], [], []
+    for ra, dec in zip(visits.disc.ra_deg, visits.disc.dec_deg, strict=True):
+        first = panels.holding(field, float(ra), float(dec))
+        order, slewed_deg = panels.order_from(first)
+        orders.append(order)
+        slews.append(np.where(slewed_deg > 0, slewed_deg / mount.slew_deg_s + mount.settle_s, 0.0))
+        inside = panels.holds(field, float(ra), float(dec))[order]
+        holds.append(inside)
+        target.append((np.arange(len(order)) == 0) & inside)
+    order = np.concatenate(orders)
+    return Stops(
+        np.repeat(np.arange(len(visits)), len(panels)),
+        tuple(panels.names[each] for each in order),
+        panels.ra_deg[order],
+        panels.dec_deg[order],
+        np.concatenate(slews),
+        np.concatenate(target),
+        np.concatenate(holds),
+    )
 
 
 def rig_at_angle(rig: Rig, camera_angle_deg: float) -> Rig:

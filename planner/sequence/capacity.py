@@ -54,9 +54,14 @@ def buffer_load(ready_tt_s: np.ndarray, drain_frames_s: float) -> Load:
     return Load(ready_tt_s, index + 1 - gone)
 
 
-def overlaps(start_tt_s: np.ndarray, exposure_s: np.ndarray, readout_s: float) -> np.ndarray:
-    """Return the indices of frames (in time order) that would begin before the one before them is read out."""
-    free = start_tt_s[:-1] + exposure_s[:-1] + readout_s
+def overlaps(
+    start_tt_s: np.ndarray, exposure_s: np.ndarray, readout_s: float, between_s: np.ndarray | float = 0.0
+) -> np.ndarray:
+    """Return the indices of frames (in time order) that would begin before the one before them is read out.
+
+    `between_s`: what must be done before each but the first beside that, such as changing a filter; shape (n - 1,).
+    """
+    free = start_tt_s[:-1] + exposure_s[:-1] + readout_s + between_s
     return np.flatnonzero(start_tt_s[1:] < free - 1e-4) + 1
 
 

@@ -107,6 +107,12 @@ class Filter(Model):
     transmission: float = Field(default=1.0, gt=0, le=1, description="in its band")
     optical_density: float = Field(default=0.0, ge=0, le=8, description="on top of the transmission")
     bandwidth_nm: float = Field(default=90.0, gt=0)
+    focus_offset_steps: int = Field(
+        default=0, description="focuser steps from the focus of the rig's first filter"
+    )
+    refocus: bool = Field(
+        default=False, description="whether it must be focused anew after each change to it"
+    )
 
 
 class SolarFilter(Model):
@@ -146,6 +152,10 @@ class Guiding(Model):
 
     on: Literal["none", "star", "sun", "moon"] = "none"
     error_arcsec: float = Field(default=1.0, ge=0, description="rms while guiding")
+    faintest_mag: float = Field(default=9.0, ge=-2, le=16, description="V of the faintest star it holds")
+    reach_deg: float = Field(
+        default=0.5, gt=0, le=10, description="how far from the middle of the frame a guide star may stand"
+    )
 
 
 class Power(Model):
@@ -174,6 +184,7 @@ class Rig(Model):
     filters: list[Filter] = Field(default=[])
     solar_filter: SolarFilter | None = None
     filter_change_s: float = Field(default=10.0, ge=0)
+    focus_move_s: float = Field(default=2.0, ge=0, description="moving the focuser by a filter's offset")
     refocus_s: float = Field(default=60.0, ge=0)
     clock: Clock = Clock()
     camera_angle_deg: float = Field(
@@ -191,3 +202,13 @@ class Rig(Model):
     def scale_arcsec_px(self) -> float:
         """Scale in the middle of the field."""
         return 206264.806 * self.sensor.pixel_um * 1e-3 / (self.optics.focal_length_mm * self.optics.reducer)
+
+    def filter_step_s(self, before: str | None, after: str | None) -> float:
+        """Return the time a change of filter takes: the wheel, the focuser's move, a new focus where one is stated."""
+        if before == after:
+            return 0.0
+        known = {each.name: each for each in self.filters}
+        offsets = [known[name].focus_offset_steps if name in known else 0 for name in (before, after)]
+        fresh = after in known and known[after].refocus
+        moved_s = self.refocus_s if fresh else self.focus_move_s if offsets[0] != offsets[1] else 0.0
+        return self.filter_change_s + moved_s

@@ -72,10 +72,16 @@ class Case:
 
 def judge(plan: Plan, setting: Setting) -> list[Finding]:
     """Return the findings of all rules on one plan, errors first."""
-    from planner.sequence import rules_camera, rules_event, rules_pointing, rules_sky
+    from planner.sequence import rules_camera, rules_event, rules_gear, rules_pointing, rules_sky
 
     case = Case(plan, setting)
-    rules = (*rules_event.RULES, *rules_camera.RULES, *rules_pointing.RULES, *rules_sky.RULES)
+    rules = (
+        *rules_event.RULES,
+        *rules_camera.RULES,
+        *rules_gear.RULES,
+        *rules_pointing.RULES,
+        *rules_sky.RULES,
+    )
     found = [finding for rule in rules for finding in rule(case)]
     return sorted(found, key=lambda finding: ("error", "caution", "note").index(finding.level))
 

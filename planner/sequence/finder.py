@@ -95,7 +95,8 @@ def draw_finder(axes: Any, outlook: Outlook, passage: Passage | None = None) -> 
     """
     plan = outlook.plan
     if passage is None:
-        waiting = [each for each in plan.passages if not each.flipped] or plan.passages
+        passages = [visit[0] for visit in plan.visits()] or plan.passages
+        waiting = [each for each in passages if not each.flipped] or passages
         passage = (
             waiting[len(waiting) // 2]
             if outlook.campaign
@@ -108,10 +109,12 @@ def draw_finder(axes: Any, outlook: Outlook, passage: Passage | None = None) -> 
     if outlook.family.reference != "sun":
         _draw_stars(axes, view, float(outlook.frames.start_tt_s[row]))
     _draw_directions(axes, outlook, view, row)
+    _draw_panels(axes, outlook, view, passage)
     _frame_axes(axes, view)
     turns = not outlook.campaign and not passage.flipped and any(each.flipped for each in plan.passages)
+    what = "panel" if passage.panel else "frame"
     axes.set_title(
-        f"{passage.name}: the frame as it looks, {2 * view.frame.half_width_arcsec / 3600:.3g} x "
+        f"{passage.name}: the {what} as it looks, {2 * view.frame.half_width_arcsec / 3600:.3g} x "
         f"{2 * view.frame.half_height_arcsec / 3600:.3g} degrees"
         + ("; after the flip it is upside down" if turns else ""),
         fontsize=9,
@@ -128,9 +131,41 @@ def _view(outlook: Outlook, row: int) -> _View:
         x, y = _path(outlook, view, _track_times(outlook))
         view.left, view.right = min(-wide, x.min() - 0.1 * wide), max(wide, x.max() + 0.1 * wide)
         view.bottom, view.top = min(-high, y.min() - 0.1 * high), max(high, y.max() + 0.1 * high)
+        passage = outlook.plan.passages[int(frames.passage[row])]
+        for _, x, y in _panel_corners(outlook, view, passage):
+            view.left, view.right = min(view.left, x.min()), max(view.right, x.max())
+            view.bottom, view.top = min(view.bottom, y.min()), max(view.top, y.max())
     for side, level in _CORNERS:
         view.take(*view.at(0.82 * side, 0.72 * level), 0.2 * view.width, 0.26 * view.height)
     return view
+
+
+def _panel_corners(
+    outlook: Outlook, view: _View, passage: Passage
+) -> list[tuple[Passage, np.ndarray, np.ndarray]]:
+    """Return the panels of a passage's visit with the corners of each in the view, from top left clockwise."""
+    from planner.sky.places import radec_from_offsets
+
+    if passage.panel is None:
+        return []
+    wide, high = view.frame.half_width_arcsec, view.frame.half_height_arcsec
+    corners = view.frame.on_sky(wide * np.array([-1, 1, 1, -1]), high * np.array([1, 1, -1, -1]))
+    panels = [each for each in outlook.plan.passages if each.visit == passage.visit]
+    return [
+        (each, *view.project(*radec_from_offsets(each.aim_ra_deg or 0.0, each.aim_dec_deg or 0.0, *corners)))
+        for each in panels
+    ]
+
+
+def _draw_panels(axes: Any, outlook: Outlook, view: _View, passage: Passage) -> None:
+    """Draw the outlines of a mosaic's panels, each with its name in its lower right corner."""
+    for each, x, y in _panel_corners(outlook, view, passage):
+        axes.plot([*x, x[0]], [*y, y[0]], color="0.35", lw=0.9, zorder=7)
+        axes.text(
+            0.8 * x[2] + 0.2 * x.mean(), 0.8 * y[2] + 0.2 * y.mean(), each.panel, fontsize=9, ha="center",
+            va="center", color="0.25", bbox=_BOX,
+            zorder=7, weight="bold" if each is passage else "normal",
+        )  # fmt: skip
 
 
 def _frame_axes(axes: Any, view: _View) -> None:
@@ -235,7 +270,8 @@ def _draw_track(axes: Any, outlook: Outlook, view: _View, row: int) -> None:
     tt_s = _track_times(outlook)
     axes.plot(*_path(outlook, view, tt_s), color="black", lw=1.2, ls=(0, (6, 2)), zorder=4)
     if outlook.campaign:
-        moments = [min(shot.start_utc for shot in passage.shots) for passage in outlook.plan.passages]
+        firsts = [visit[0] for visit in outlook.plan.visits()]
+        moments = [min(shot.start_utc for shot in passage.shots) for passage in firsts]
         texts, style = [f"{moment:%d %b}" for moment in moments], {"marker": "o", "ms": 4.5, "mfc": "white"}
     else:
         moments = _round_moments(outlook, (tt_s[-1] - tt_s[0]) / 7)
@@ -318,9 +354,10 @@ def finder_figure(outlook: Outlook, passage: Passage | None = None, width_in: fl
     """Return the finder as a matplotlib figure."""
     from matplotlib.figure import Figure
 
-    sensor = outlook.plan.rig.sensor
-    figure = Figure(
-        figsize=(width_in, width_in * sensor.height_px / sensor.width_px + 0.5), layout="constrained"
-    )
-    draw_finder(figure.add_subplot(), outlook, passage)
+    figure = Figure(layout="constrained")
+    axes = figure.add_subplot()
+    draw_finder(axes, outlook, passage)
+    # what is drawn of a campaign is wider or higher than the frame
+    wide, high = np.ptp(axes.get_xlim()), np.ptp(axes.get_ylim())
+    figure.set_size_inches(width_in, float(np.clip(width_in * high / wide, 2.0, 9.0)) + 0.5)
     return figure

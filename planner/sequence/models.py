@@ -21,6 +21,7 @@ __all__ = [
     "EventRequest",
     "Finding",
     "GainSetting",
+    "Grid",
     "LimbFiles",
     "Mount",
     "OrbitElements",
@@ -54,10 +55,24 @@ class EventRequest(Model):
     limb: LimbFiles | None = None
 
 
+class Grid(Model):
+    """Panels of a mosaic, as the frame looks: columns from left to right, rows from top to bottom."""
+
+    columns: int = Field(ge=1, le=12)
+    rows: int = Field(ge=1, le=12)
+
+
 class Wish(Model):
     """What the pictures are for; everything here has a sensible default."""
 
-    filter: str | None = Field(default=None, description="one of the rig's filters; default: the rig's first")
+    filter: str | None = Field(
+        default=None, description="one of the rig's filters, at contacts too; default: the rig's first"
+    )
+    filters: list[str] = Field(
+        default=[],
+        max_length=12,
+        description="of the rig's, stepped through in turn, each with its own exposure",
+    )
     exposure_s: float | None = Field(default=None, gt=0, description="default: from the brightness")
     gain: float | None = Field(default=None, ge=0, description="default: chosen among the sensor's gains")
     well_fraction: float = Field(default=0.5, gt=0, lt=1, description="peak signal over saturation")
@@ -81,6 +96,11 @@ class Wish(Model):
     camera_angle: Literal["rig", "best"] = Field(
         default="rig", description="`best`: turn the camera to the track"
     )
+    mosaic: Literal["track"] | Grid | None = Field(
+        default=None,
+        description="`track`: panels over the whole track at each visit, or so many; default: the pointing follows",
+    )
+    mosaic_overlap: float = Field(default=0.15, ge=0.02, le=0.6, description="of a panel's side")
     calibration: bool = Field(default=True, description="list the calibration frames")
     visits: int | None = Field(default=None, ge=1, le=1000, description="nights of a campaign")
     reserves: int = Field(default=1, ge=0, le=5, description="reserve nights named for each visit")
@@ -113,6 +133,8 @@ class Wish(Model):
             raise ValueError("visit_when: sidereal-time needs sidereal_time_h")
         if self.visit_when == "solar-depression" and self.solar_depression_deg is None:
             raise ValueError("visit_when: solar-depression needs solar_depression_deg")
+        if len(set(self.filters)) < len(self.filters):
+            raise ValueError("filters: each filter once")
         return self
 
 
@@ -142,7 +164,9 @@ class Shot(Model):
     tracking: Literal["sidereal", "solar", "lunar", "none"] = "sidereal"
     peak_of: str | None = Field(default=None, description="whose brightest pixel `peak_e` is")
     peak_e: float | None = Field(
-        default=None, ge=0, description="electrons expected there, at the middle of the shot"
+        default=None,
+        ge=0,
+        description="electrons expected there, at the middle of the shot; over saturation where it is clipped",
     )
     trail_px: float | None = Field(default=None, ge=0, description="longest trail expected in a frame")
 
@@ -157,6 +181,10 @@ class Passage(Model):
     name: str
     purpose: str
     visit: int | None = None
+    panel: str | None = Field(
+        default=None, description="of a mosaic: column letter from the left, row number from the top"
+    )
+    holds_target: bool = Field(default=True, description="false for panels of a mosaic beside the target")
     aim: str
     aim_ra_deg: float | None = None
     aim_dec_deg: float | None = None
@@ -166,6 +194,7 @@ class Passage(Model):
     stars_expected: int | None = Field(
         default=None, description="stars in the frame good enough for a plate solution"
     )
+    guide: str | None = Field(default=None, description="what to guide on, where the rig guides")
     slack_s: float | None = Field(default=None, description="time left after it before the next passage")
     reserve_utc: list[Utc] = Field(default=[], description="nights to fall back on, best first")
     done: bool = Field(default=False, description="taken already; kept by a new plan")
@@ -233,3 +262,11 @@ class Plan(Model):
     findings: list[Finding] = Field(default=[])
     cautions: list[str] = Field(default=[])
     provenance: dict[str, str]
+
+    def visits(self) -> list[list[Passage]]:
+        """Return the passages of each visit together, in time order; nothing for a plan of hours."""
+        groups: dict[int, list[Passage]] = {}
+        for passage in self.passages:
+            if passage.visit is not None:
+                groups.setdefault(passage.visit, []).append(passage)
+        return list(groups.values())

@@ -12,7 +12,7 @@ import numpy as np
 
 from planner.errors import InputError
 from planner.events.family import Geometry
-from planner.sequence import exposure, radiometry
+from planner.sequence import exposure
 from planner.sequence.flips import Pause, cut, focus_pauses, meridian_pause
 from planner.sequence.models import Passage, Shot
 from planner.sequence.recipes import Recipe, aim_of, place_of, recipes
@@ -86,19 +86,31 @@ def _samples(window: Window) -> np.ndarray:
 def _passage(setting: Setting, window: Window, aim: str, flipped: bool) -> Passage | None:
     sample_s = _samples(window)
     geometry = setting.geometry(sample_s)
-    kinds = recipes(setting, geometry, target_hidden=window.name == "hidden")
-    readout_s = setting.rig.sensor.readout_s
+    # the wheel stands still while a contact is awaited
+    turns = (setting,) if window.burst else setting.in_turn()
+    kinds = [
+        kind for each in turns for kind in recipes(each, geometry, target_hidden=window.name == "hidden")
+    ]
+    rig, readout_s = setting.rig, setting.rig.sensor.readout_s
     star_contact = window.burst and bool(geometry.stars)
     if star_contact:
         # a star goes out in an instant: nothing else is worth a frame then
         kinds = kinds[-1:]
-    # kinds of frame take turns; each slot is as long as its longest exposure
+    # kinds of frame take turns; each slot is as long as its longest exposure and the step to the next filter
     unit_s = 0.01 if window.burst else 0.1
-    slots_s = [unit_s * ceil((float(kind.wanted_s.max()) + readout_s) / unit_s - 1e-6) for kind in kinds]
+    busy_s = [
+        float(kind.wanted_s.max()) + readout_s + rig.filter_step_s(kind.filter, after.filter)
+        for kind, after in zip(kinds, [*kinds[1:], kinds[0]], strict=True)
+    ]
+    slots_s = [unit_s * ceil(each / unit_s - 1e-6) for each in busy_s]
     turn_s = sum(slots_s)
     cadence_s = _cadence_s(setting, window, geometry, turn_s, star_contact)
-    start, start_tt_s = next_whole(sample_s[0], 0.1 if window.burst else 1.0)
-    count = floor((sample_s[-1] - start_tt_s - turn_s) / cadence_s + 1e-9) + 1
+    # before the first and after the last round the wheel stands at the filter of the contacts
+    lead_s = rig.filter_step_s(setting.filter_name, kinds[0].filter)
+    back_s = rig.filter_step_s(kinds[-1].filter, setting.filter_name)
+    last_turn_s = turn_s + max(0.0, back_s - rig.filter_step_s(kinds[-1].filter, kinds[0].filter))
+    start, start_tt_s = next_whole(sample_s[0] + lead_s, 0.1 if window.burst else 1.0)
+    count = floor((sample_s[-1] - start_tt_s - last_turn_s) / cadence_s + 1e-9) + 1
     if count < 1:
         return None
     shots = []
@@ -115,7 +127,7 @@ def _passage(setting: Setting, window: Window, aim: str, flipped: bool) -> Passa
         purpose=window.purpose,
         aim=aim,
         flipped=flipped,
-        stars_expected=kinds[0].stars,
+        stars_expected=min((kind.stars for kind in kinds if kind.stars is not None), default=None),
         shots=shots,
         **aim_place,
     )
@@ -149,8 +161,8 @@ def _shots(
     frame_tt_s = float(tt_s_from_datetime(start)) + np.arange(count) * cadence_s
     wanted_s = np.interp(frame_tt_s, sample_s, kind.wanted_s)
     stretches = exposure.steps(wanted_s)
-    saturation = radiometry.saturation_e(setting.rig, kind.gain)
-    name = window.name if kind.name == "main" else f"{window.name}, {kind.name}"
+    parts = [window.name, kind.filter if setting.cycle and not window.burst else None, kind.name]
+    name = ", ".join(part for part in parts if part and part != "main")
     shots = []
     for number, stretch in enumerate(stretches, 1):
         exposure_s = setting.wish.exposure_s or exposure.rounded_down(float(wanted_s[stretch].min()))
@@ -164,12 +176,10 @@ def _shots(
                 count=stretch.stop - stretch.start,
                 exposure_s=exposure_s,
                 gain=kind.gain,
-                filter=setting.filter_name,
+                filter=kind.filter,
                 tracking=kind.tracking,
                 peak_of=kind.peak_of,
-                peak_e=float(
-                    f"{min(saturation, exposure_s * np.interp(middle_tt_s, sample_s, kind.rate_e_s)):.4g}"
-                ),
+                peak_e=float(f"{exposure_s * np.interp(middle_tt_s, sample_s, kind.rate_e_s):.4g}"),
                 trail_px=float(f"{trail_px:.2g}"),
             )
         )

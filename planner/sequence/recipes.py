@@ -32,6 +32,7 @@ class Recipe:
     tracking: Rate
     motion: Motion
     stars: int | None = None
+    filter: str | None = None
 
 
 def aim_of(setting: Setting) -> str:
@@ -48,14 +49,23 @@ def target_name(setting: Setting) -> str:
 
 
 def tracking_of(setting: Setting, aim: str) -> Rate:
-    """Return the rate at which the mount follows this aim."""
+    """Return the rate at which the mount follows this aim, or what it guides on."""
     if setting.rig.mount.kind == "fixed":
         return "none"
+    if setting.rig.guiding.on == "star":
+        return "sidereal"
     wanted = TRACKING.get(aim, TRACKING.get(setting.family.reference, "sidereal"))
     return wanted if wanted in setting.rig.mount.rates else "sidereal"
 
 
 def recipes(setting: Setting, geometry: Geometry, target_hidden: bool) -> list[Recipe]:
+    """Return what to expose for through the setting's one filter; see `_through_one`."""
+    return [
+        replace(kind, filter=setting.filter_name) for kind in _through_one(setting, geometry, target_hidden)
+    ]
+
+
+def _through_one(setting: Setting, geometry: Geometry, target_hidden: bool) -> list[Recipe]:
     """Return what to expose for at these times, the kind that is measured first; raises InputError when there is none.
 
     Against a disc: the brightest disc, and by itself a target that this leaves too faint. Among stars: the stars, and

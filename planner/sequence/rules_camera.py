@@ -9,11 +9,16 @@ import numpy as np
 from planner.sequence import radiometry
 from planner.sequence.capacity import buffer_load, energy_wh, frame_bytes, overlaps
 from planner.sequence.feasibility import Case
-from planner.sequence.models import Finding
+from planner.sequence.models import Finding, Plan, Shot
 
 _FAINT_WELL_FRACTION = 0.02
 _FINE_SAMPLING, _COARSE_SAMPLING = 6.0, 1.2
 _UTC = "%Y-%m-%d %H:%M:%S"
+
+
+def _kind(shot: Shot) -> str:
+    """Return the last part of a shot's name, which says what kind of frame it is, without its number."""
+    return shot.name.rsplit(", ", 1)[-1].rstrip("0123456789 ")
 
 
 def _utc(tt_s: float) -> str:
@@ -24,18 +29,40 @@ def _utc(tt_s: float) -> str:
 
 def shots_collide(case: Case) -> Iterator[Finding]:
     """A frame would begin before the one before it is read out."""
-    passage, _, start, exposure = case.frames
-    wrong = overlaps(start, exposure, case.plan.rig.sensor.readout_s)
+    passage, shot, start, exposure = case.frames
+    readout_s, between_s = case.plan.rig.sensor.readout_s, _changes_s(case.plan, passage, shot)
+    wrong = overlaps(start, exposure, readout_s, between_s)
     if len(wrong):
         first = int(wrong[0])
-        short = start[first - 1] + exposure[first - 1] + case.plan.rig.sensor.readout_s - start[first]
+        short = start[first - 1] + exposure[first - 1] + readout_s + between_s[first - 1] - start[first]
         yield Finding(
             rule="shots-collide",
             level="error",
             where=f"{case.plan.passages[int(passage[first])].name} at {_utc(start[first])}",
-            sentence=f"{len(wrong)} frames begin before the one before is read out; the first by {short:.2f} s.",
+            sentence=f"{len(wrong)} frames begin before the one before is read out and filter and mount are ready; "
+            f"the first by {short:.2f} s.",
             cure="Lengthen the cadence, or shorten the exposure.",
         )
+
+
+def _changes_s(plan: Plan, passage: np.ndarray, shot: np.ndarray) -> np.ndarray:
+    """Return how long filter and mount need between each frame and the next."""
+    from planner.sky.places import separation_arcsec, unit_vector
+
+    between_s = np.zeros(max(len(passage) - 1, 0))
+    key = passage * 100000 + shot
+    for row in np.flatnonzero(np.diff(key)):
+        before, after = (plan.passages[int(passage[each])] for each in (row, row + 1))
+        filters = (before.shots[int(shot[row])].filter, after.shots[int(shot[row + 1])].filter)
+        between_s[row] = plan.rig.filter_step_s(*filters)
+        if before is not after and before.panel and before.visit == after.visit:
+            places = [
+                unit_vector(np.array([each.aim_ra_deg]), np.array([each.aim_dec_deg]))
+                for each in (before, after)
+            ]
+            slew_s = float(separation_arcsec(*places)[0]) / 3600 / plan.rig.mount.slew_deg_s
+            between_s[row] = max(between_s[row], slew_s + plan.rig.mount.settle_s)
+    return between_s
 
 
 def buffer_overflows(case: Case) -> Iterator[Finding]:
@@ -99,8 +126,8 @@ def saturates(case: Case) -> Iterator[Finding]:
             limit = radiometry.saturation_e(rig, shot.gain)
             if passage.done or shot.peak_e is None or shot.peak_e < 0.999 * limit:
                 continue
-            among_stars = case.setting.family.reference == "stars" and shot.name != "planet"
-            if (among_stars and not shot.name.endswith(", disc")) or shot.name.endswith(", long"):
+            among_stars = case.setting.family.reference == "stars" and _kind(shot) != "planet"
+            if (among_stars and _kind(shot) != "disc") or _kind(shot) == "long":
                 continue
             yield Finding(
                 rule="saturates",
@@ -136,9 +163,11 @@ def too_faint(case: Case) -> Iterator[Finding]:
 
 def no_exposure_does_both(case: Case) -> Iterator[Finding]:
     """The bright body and the faint things about it cannot be had in one exposure."""
-    both = [p for p in case.plan.passages if len({shot.name.rsplit(",")[-1] for shot in p.shots}) > 1]
     doubles = [
-        p for p in both if any(s.name.endswith((", long", ", disc", "planet", "deep")) for s in p.shots)
+        passage
+        for passage in case.plan.passages
+        if len({_kind(shot) for shot in passage.shots}) > 1
+        and any(_kind(shot) in ("long", "disc", "planet", "deep") for shot in passage.shots)
     ]
     if doubles:
         first = doubles[0]
@@ -163,7 +192,7 @@ def planet_clipped(case: Case) -> Iterator[Finding]:
         passage
         for passage in case.plan.passages
         if not passage.done
-        and not any(shot.name == "planet" for shot in passage.shots)
+        and not any(_kind(shot) == "planet" for shot in passage.shots)
         and any((shot.peak_e or 0) >= 0.999 * limit for shot in passage.shots)
     ]
     if clipped:

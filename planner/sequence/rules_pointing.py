@@ -105,13 +105,14 @@ def does_not_fit(case: Case) -> Iterator[Finding]:
             cure="A shorter focal length or a reducer shows the whole disc, which is measured better.",
         )
     aims = {(p.aim_ra_deg, p.aim_dec_deg) for p in case.plan.passages if p.aim == "field"}
-    if len(aims) > 1:
+    if len(aims) > 1 and not any(passage.panel for passage in case.plan.passages):
         yield Finding(
             rule="does-not-fit",
             level="note",
             where=f"{len(aims)} pointings",
             sentence="The track is larger than the frame with its margin, so the pointing moves along it.",
-            cure="The composite becomes a mosaic; camera_angle: best or a shorter focal length may hold it all.",
+            cure="camera_angle: best or a shorter focal length may hold it all; mosaic: track shoots all of it "
+            "at each visit.",
         )
 
 
@@ -122,7 +123,8 @@ def target_leaves_frame(case: Case) -> Iterator[Finding]:
     from planner.sequence.frametimes import planned_frames
 
     frames = planned_frames(case.plan)
-    still = np.isin(frames.start_tt_s, case.frames[2][case.sample_rows])
+    meant = np.array([passage.holds_target for passage in case.plan.passages], bool)
+    still = np.isin(frames.start_tt_s, case.frames[2][case.sample_rows]) & meant[frames.passage]
     rows = np.flatnonzero(still)[: len(case.sample_rows)]
     sky = case.setting.geometry(frames.middle_tt_s[rows])
     held = np.array(

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 
 import numpy as np
@@ -22,7 +22,8 @@ from planner.sky.observer import Observer
 class Setting:
     """One brief, one rig: the event at the site, and the band it is seen through.
 
-    `mount_mates`: the other rigs of the brief that sit on the same mount.
+    `mount_mates`: the other rigs of the brief that sit on the same mount. `cycle`: the bands stepped through in turn
+    away from contacts, beginning with `through` where that is one of them; empty when there is only `through`.
     """
 
     brief: Brief
@@ -35,6 +36,7 @@ class Setting:
     circumstances: Circumstances
     through: Band
     mount_mates: tuple[Rig, ...] = ()
+    cycle: tuple[Band, ...] = ()
 
     @property
     def scale_arcsec_px(self) -> float:
@@ -45,6 +47,10 @@ class Setting:
     def filter_name(self) -> str | None:
         """Name of the filter used, None for none."""
         return None if self.through.name == "none" else self.through.name
+
+    def in_turn(self) -> tuple[Setting, ...]:
+        """Return this setting once for each filter that is stepped through."""
+        return tuple(replace(self, through=band, cycle=()) for band in self.cycle) or (self,)
 
     @cached_property
     def reference_fits(self) -> bool:
@@ -156,12 +162,28 @@ def settings_of(brief: Brief) -> list[Setting]:
     circumstances = family.predict(event, observer)
     settings = []
     for each in rigs:
-        known = [one.name for one in each.filters]
-        # a wish for a filter holds for the rigs that have it, and at least for the first
-        wished = brief.wish.filter if each is rigs[0] or brief.wish.filter in known else None
-        through = radiometry.band(each, wished or (known[0] if known else None), behind_solar_filter=solar)
+        through, cycle = _bands(each, brief.wish, solar, own=each is rigs[0])
         mates = tuple(other for other in rigs if other is not each and other.mount.name == each.mount.name)
         settings.append(
-            Setting(brief, site, each, brief.wish, family, event, observer, circumstances, through, mates)
+            Setting(
+                brief, site, each, brief.wish, family, event, observer, circumstances, through, mates, cycle
+            )
         )
     return settings
+
+
+def _bands(rig: Rig, wish: Wish, solar: bool, own: bool) -> tuple[Band, tuple[Band, ...]]:
+    """Return the band of contacts, and the bands stepped through elsewhere (none where there is but one).
+
+    A wish for filters holds for the rigs that have them, and at least for the brief's own.
+    """
+    known = [one.name for one in rig.filters]
+    turns = [name for name in wish.filters if own or name in known]
+    single = wish.filter if own or wish.filter in known else None
+    single = single or (turns[0] if turns else known[0] if known else None)
+    if single in turns:
+        first = turns.index(single)
+        turns = turns[first:] + turns[:first]
+    through = radiometry.band(rig, single, behind_solar_filter=solar)
+    bands = tuple(radiometry.band(rig, name, behind_solar_filter=solar) for name in turns)
+    return through, bands if len(turns) > 1 else ()

@@ -109,7 +109,7 @@ def _passage_row(passage, zone: str, campaign: bool) -> SheetRow:  # type: ignor
     first = min(shot.start_utc for shot in passage.shots)
     shown = f"{first:%Y-%m-%d %H:%M}" if campaign else f"{first:%H:%M:%S}"
     gains = sorted({shot.gain for shot in passage.shots})
-    filters = sorted({shot.filter or "none" for shot in passage.shots})
+    filters = list(dict.fromkeys(shot.filter or "none" for shot in passage.shots))
     name = passage.name + (" (flipped)" if passage.flipped else "") + (" (taken)" if passage.done else "")
     return SheetRow(
         (

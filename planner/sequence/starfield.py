@@ -43,8 +43,12 @@ def star_frames(
     peak_e_s: np.ndarray,
     trail_px_s: np.ndarray,
     gain: float,
+    exposure_s: np.ndarray | None = None,
 ) -> StarFrames:
-    """Return the exposures at these times and pointings; `peak_e_s` is the brightest body's, 0 where there is none."""
+    """Return the exposures at these times and pointings; `peak_e_s` is the brightest body's, 0 where there is none.
+
+    `exposure_s`: what is exposed, where that is settled already; only the rest is reckoned then.
+    """
     from planner.sky.photometry import airmass
 
     rig, site, through, wish = setting.rig, setting.site, setting.through, setting.wish
@@ -80,7 +84,9 @@ def star_frames(
     chosen_s = np.clip(
         np.maximum(enough_s, np.minimum(bearable_s, longest_s)), sensor.min_exposure_s, longest_s
     )
-    if wish.exposure_s is not None:
+    if exposure_s is not None:
+        chosen_s = exposure_s
+    elif wish.exposure_s is not None:
         chosen_s = np.full(count, wish.exposure_s)
     stars = np.empty(count, int)
     for row, magnitudes in enumerate(fields):

@@ -19,9 +19,11 @@ def steps_of(setting: Setting, passages: list[Passage], pauses: list[Pause]) -> 
 
     steps = []
     if setting.family.campaign:
+        seen: set[int | None] = set()
         for passage in passages:
-            if not passage.done:
+            if not passage.done and passage.visit not in seen:
                 steps += _before(setting, passage)
+            seen.add(passage.visit)
         return steps
     steps += _before(setting, passages[0])
     for pause in pauses:
@@ -84,7 +86,7 @@ def _before(setting: Setting, passage: Passage) -> list[Step]:
             kind="slew",
             start_utc=_whole_second(slew),
             duration_s=180.0 / rig.mount.slew_deg_s,
-            text="slew and centre",
+            text="slew and centre" + (f"; guide on {passage.guide}" if passage.guide else ""),
         )
     )
     if rig.filters and setting.filter_name:
@@ -93,11 +95,26 @@ def _before(setting: Setting, passage: Passage) -> list[Step]:
                 kind="filter",
                 start_utc=_whole_second(change),
                 duration_s=rig.filter_change_s,
-                text=f"filter {setting.filter_name}",
+                text=f"filter {passage.shots[0].filter}" + _in_turn(setting),
             )
         )
     steps.append(Step(kind="focus", start_utc=_whole_second(focus), duration_s=rig.refocus_s, text="focus"))
     return steps
+
+
+def _in_turn(setting: Setting) -> str:
+    """Return what to know of stepping through filters, empty where there is one."""
+    if not setting.cycle:
+        return ""
+    names = [band.name for band in setting.cycle]
+    focus = [each.name for each in setting.rig.filters if each.name in names and each.refocus]
+    offsets = any(each.focus_offset_steps for each in setting.rig.filters if each.name in names)
+    return (
+        f"; then in turn {', '.join(names)}"
+        + (f" (focus anew after {', '.join(focus)})" if focus else "")
+        + ("; check the focuser's offsets" if offsets else "")
+        + ("; contacts in the first alone" if not setting.family.campaign else "")
+    )
 
 
 def _whole_second(moment: datetime) -> datetime:

@@ -153,7 +153,7 @@ def _draw_nights(axes: Any, outlook: Outlook) -> None:
     low = np.where(up < plan.rig.mount.min_altitude_deg, 1.0, 0.0)
     if low.any():
         axes.contourf(dates, hours, low, levels=[0.5, 1.5], colors="none", hatches=["///"], zorder=2)
-    for passage in plan.passages:
+    for passage in (visit[0] for visit in plan.visits()):
         first = min(shot.start_utc for shot in passage.shots)
         hour = ((first - noon).total_seconds() / 3600) % 24
         x = mdates.date2num(first) - hour / 24

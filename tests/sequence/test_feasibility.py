@@ -5,7 +5,7 @@ import re
 import pytest
 
 from planner.errors import InputError
-from planner.sequence import rules_camera, rules_event, rules_pointing, rules_sky
+from planner.sequence import rules_camera, rules_event, rules_gear, rules_pointing, rules_sky
 from planner.sequence.builder import build_plan, build_plans
 from planner.sequence.feasibility import stop_at_errors
 from planner.sequence.models import Brief
@@ -36,6 +36,8 @@ def eclipsed() -> Brief:
 
 
 NARROW = {"width_px": 1200, "height_px": 900}
+WHEEL = {"filters": [{"name": "V"}, {"name": "R"}, {"name": "B"}]}
+LONG = {"focal_length_mm": 300.0, "aperture_mm": 75.0}
 
 # rule, level, brief, and the change that provokes it
 PROVOKED = [
@@ -77,12 +79,21 @@ PROVOKED = [
     ("moon-eclipsed", "caution", eclipsed, {}),
     ("target-low", "note", CAMPAIGN, {"wish": {"visit_when": "solar-depression", "solar_depression_deg": 15.0,
                                                "most_airmass": 20.0}}),
+    ("filters-slow", "note", TRANSIT, {"rig": WHEEL, "wish": {"filters": ["V", "R"]}}),
+    ("filters-slow", "caution", TRANSIT, {"rig": WHEEL, "wish": {"filters": ["V", "R"], "cadence_s": 10.0}}),
+    ("mosaic-long", "note", CAMPAIGN, {"optics": LONG, "wish": {"mosaic": "track", "visits": 6}}),
+    ("panel-out-of-reach", "caution", CAMPAIGN, {"wish": {"mosaic": {"columns": 1, "rows": 9}, "visits": 6},
+                                                 "site": {"horizon": [[0, 45], [360, 45]]}}),
+    ("guide-unfit", "caution", TRANSIT, {"guiding": {"on": "star"}}),
+    ("guide-unfit", "caution", CAMPAIGN, {"guiding": {"on": "moon"}}),
+    ("guide-unfit", "caution", CAMPAIGN, {"guiding": {"on": "star", "faintest_mag": 2.0}, "wish": {"visits": 6}}),
 ]  # fmt: skip
 
 # briefs without that fault, in which the rule must be silent
 INNOCENT = {
     TRANSIT: {each[0] for each in PROVOKED},
-    CAMPAIGN: {"trails", "too-few-stars", "target-leaves-frame", "sun-near", "twilight", "no-exposure-does-both"},
+    CAMPAIGN: {"trails", "too-few-stars", "target-leaves-frame", "sun-near", "twilight", "no-exposure-does-both",
+               "filters-slow", "mosaic-long", "panel-out-of-reach", "guide-unfit"},
 }  # fmt: skip
 
 
@@ -120,6 +131,7 @@ def test_a_brief_provokes_the_rule(rule, level, start, change):
         assert any(character.isdigit() for character in each.sentence) or rule in (
             "does-not-fit",
             "planet-clipped",
+            "guide-unfit",
         )
 
 
@@ -185,7 +197,7 @@ def test_the_documents_name_every_rule(root):
     named = set(re.findall(r"^\| `([a-z-]+)` \|", text, re.MULTILINE))
     source = "".join(
         (root / f"planner/sequence/{name}.py").read_text(encoding="utf-8")
-        for name in ("rules_event", "rules_camera", "rules_pointing", "rules_sky")
+        for name in ("rules_event", "rules_camera", "rules_gear", "rules_pointing", "rules_sky")
     )
     assert named == set(re.findall(r'rule="([a-z-]+)"', source))
 
@@ -193,7 +205,7 @@ def test_the_documents_name_every_rule(root):
 def test_every_rule_is_provoked_somewhere():
     rules = {
         rule.__name__.replace("_", "-")
-        for module in (rules_event, rules_camera, rules_pointing, rules_sky)
+        for module in (rules_event, rules_camera, rules_gear, rules_pointing, rules_sky)
         for rule in module.RULES
     }
     elsewhere = {"event-does-not-happen", "prediction-uncertain"}

@@ -135,6 +135,56 @@ def test_unmeasured_frames_do_not_count_as_taken(tmp_path):
     assert not taken_from(plan, track_of(tmp_path, ["visit 1"], "unmeasured")).passages
 
 
+def logbook_of(tmp_path, rows):
+    """A logbook as DEVELOPERS.md has it, with a column and a table more than a reader needs."""
+    import sqlite3
+    from contextlib import closing
+
+    path = tmp_path / "logbook.db"
+    with closing(sqlite3.connect(path)) as book:
+        book.execute(
+            "CREATE TABLE frames (file TEXT, passage TEXT, shot TEXT, start_utc TEXT, exposure_s REAL, "
+            "state TEXT, verdict TEXT, temperature_c REAL)"
+        )
+        book.execute("CREATE TABLE happenings (utc TEXT, text TEXT)")
+        for number, (passage, state, verdict) in enumerate(rows):
+            row = (f"f{number}.fits", passage, "stars", "2026-12-01T03:00:00Z", 2.0, state, verdict, -10.0)
+            book.execute("INSERT INTO frames VALUES (?, ?, ?, ?, ?, ?, ?, ?)", row)
+        book.commit()
+    return path
+
+
+def test_a_logbook_says_what_was_taken(tmp_path):
+    """Checked frames count by their verdict, unchecked ones when half of a visit was taken."""
+    plan = example_plan(CAMPAIGN)
+    wanted = sum(shot.count for shot in plan.passages[0].shots)
+    rows = [("visit 1", "taken", None)] * wanted
+    rows += [("visit 2", "taken", "on-track"), ("visit 2", "failed", None)]
+    rows += [("visit 3", "taken", "unmeasured")] * wanted  # clouds
+    rows += [("visit 4", "failed", None)] * wanted
+    rows += [("visit 5", "taken", None)] * (wanted // 2 - 1)  # broken off
+    taken = taken_from(plan, logbook_of(tmp_path, rows))
+    assert [passage.name for passage in taken.passages] == ["visit 1", "visit 2"]
+    again = build_plans(example(CAMPAIGN), taken=taken)[0]
+    assert [p.name for p in again.passages if p.done] == ["visit 1", "visit 2"]
+    assert len(again.passages) == len(plan.passages)
+
+
+def test_a_logbook_of_another_kind_or_of_another_plan_is_refused(tmp_path):
+    import sqlite3
+    from contextlib import closing
+
+    other = tmp_path / "other.db"
+    with closing(sqlite3.connect(other)) as book:
+        book.execute("CREATE TABLE frames (name TEXT)")
+        book.commit()
+    with pytest.raises(InputError, match="not a logbook: no such column: passage"):
+        taken_from(example_plan(CAMPAIGN), other)
+    stranger = logbook_of(tmp_path, [("crossing", "taken", "on-track")])
+    with pytest.raises(InputError, match="'crossing' is not in the plan"):
+        taken_from(example_plan(CAMPAIGN), stranger)
+
+
 def test_a_file_that_is_no_track_is_refused(tmp_path):
     plan = example_plan(CAMPAIGN)
     stranger = tmp_path / "x.ecsv"
