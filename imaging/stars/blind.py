@@ -33,8 +33,7 @@ _FIELDS = (
     (38.0, 32.0, 45.0),
 )
 _PASSES = ((40, 6), (50, 8))  # (brightest stars, neighbours): clean skies, then clouds
-_SURE_VOTES = 3
-_MOST_SURE, _MOST_LIKELY, _MOST_SCORED, _MOST_GROWN = 20, 10, 250, 80
+_MOST_LIKELY, _MOST_SCORED, _MOST_GROWN = 10, 250, 80
 
 
 def solve_blind(
@@ -79,9 +78,7 @@ def solve_blind(
             guesses = hypotheses_of(field, sky, image.stars[first], sky_stars, focal_each, allowed, parity)
             trials += len(guesses)
             number += 1
-            sure = np.flatnonzero(guesses.votes >= _SURE_VOTES)[:_MOST_SURE]
-            likely = np.argsort(-guesses.weight, kind="stable")[:_MOST_SCORED]
-            turn = [(0.0, guesses, int(i), number) for i in [*sure, *likely[:_MOST_LIKELY]]]
+            turn = [(0.0, guesses, i, number) for i in range(min(_MOST_LIKELY, len(guesses)))]
             waiting += [
                 (
                     _quick_score(guesses, i, field, sky, tt_s) + float(np.log(guesses.weight[i])),
@@ -89,7 +86,7 @@ def solve_blind(
                     i,
                     number,
                 )
-                for i in likely[_MOST_LIKELY:]
+                for i in range(_MOST_LIKELY, min(_MOST_SCORED, len(guesses)))
                 if process_time() - began < give_up_s / 2
             ]
             match, log10 = _first_accepted(turn, field, sky, tt_s, lens, began + give_up_s)
@@ -148,7 +145,6 @@ def _quick_score(guesses: Hypotheses, i: int, field: Field, sky: Sky, tt_s: floa
         np.searchsorted(rows, guesses.sky_stars[i])[None],
         guesses.axes[i : i + 1],
         guesses.focal_px[i : i + 1],
-        guesses.votes[i : i + 1],
         guesses.weight[i : i + 1],
     )
     return float(scores(one, field, sky.take(rows))[0])

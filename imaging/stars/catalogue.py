@@ -56,8 +56,10 @@ def stars_near(center: np.ndarray, radius_rad: float, tt_s: float, stars_per_sr:
     from planner.sky.stars import stars_in_field
 
     ra_deg, dec_deg = radec_deg(np.asarray(center, float))
-    sky = _as_sky(stars_in_field(float(ra_deg), float(dec_deg), float(np.degrees(radius_rad)), tt_s))
-    return sky.take(np.arange(_number(len(sky), radius_rad, stars_per_sr)))
+    most = None if stars_per_sr is None else _number(np.inf, radius_rad, stars_per_sr)
+    return _as_sky(
+        stars_in_field(float(ra_deg), float(dec_deg), float(np.degrees(radius_rad)), tt_s, brightest=most)
+    )
 
 
 def rows_near(
@@ -73,7 +75,7 @@ def rows_near(
     return rows[: _number(len(rows), radius, stars_per_sr)]
 
 
-def _number(found: int, radius_rad: float, stars_per_sr: float | None) -> int:
+def _number(found: float, radius_rad: float, stars_per_sr: float | None) -> int | None:
     if stars_per_sr is None or not np.isfinite(stars_per_sr):
-        return found
-    return min(found, max(4, round(stars_per_sr * 2 * np.pi * (1 - np.cos(min(radius_rad, np.pi))))))
+        return None if np.isinf(found) else int(found)
+    return int(min(found, max(4, round(stars_per_sr * 2 * np.pi * (1 - np.cos(min(radius_rad, np.pi)))))))

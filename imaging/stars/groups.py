@@ -32,10 +32,17 @@ class Groups:
         return len(self.stars)
 
 
-def local_groups(vectors: np.ndarray, size: int, neighbours: int, longest_limit: float = np.inf) -> Groups:
+def local_groups(
+    vectors: np.ndarray,
+    size: int,
+    neighbours: int,
+    longest_limit: float = np.inf,
+    shortest_limit: float = 0.0,
+) -> Groups:
     """Return the groups of each star with `size` - 1 of its nearest `neighbours`, each group once.
 
-    `vectors`: (n, 3) unit vectors. Groups longer than `longest_limit` (chord, rad) are left out.
+    `vectors`: (n, 3) unit vectors. Groups longer than `longest_limit` or shorter than `shortest_limit`
+    (chord, rad) are left out.
     """
     from scipy.spatial import cKDTree
 
@@ -44,13 +51,13 @@ def local_groups(vectors: np.ndarray, size: int, neighbours: int, longest_limit:
     if near < size - 1:
         return coded(vectors, np.empty((0, size), dtype=int))
     if near == count - 1 and comb(count, size) <= _ALL_GROUPS:
-        return coded(vectors, np.array(list(combinations(range(count), size))), longest_limit)
+        return coded(vectors, np.array(list(combinations(range(count), size))), longest_limit, shortest_limit)
     stars = local_members(cKDTree(vectors), vectors, size, near)
     key = stars[:, 0].astype(np.int64)
     for column in range(1, size):
         key = key * count + stars[:, column]
     _, first = np.unique(key, return_index=True)
-    return coded(vectors, stars[first], longest_limit)
+    return coded(vectors, stars[first], longest_limit, shortest_limit)
 
 
 def local_members(tree: Any, vectors: np.ndarray, size: int, neighbours: int) -> np.ndarray:
@@ -64,16 +71,36 @@ def local_members(tree: Any, vectors: np.ndarray, size: int, neighbours: int) ->
     return np.sort(members, axis=1)
 
 
-def coded(vectors: np.ndarray, stars: np.ndarray, longest_limit: float = np.inf) -> Groups:
+def coded(
+    vectors: np.ndarray, stars: np.ndarray, longest_limit: float = np.inf, shortest_limit: float = 0.0
+) -> Groups:
     """Return groups with their codes and their stars in canonical order (by the sum of distances to the others)."""
     size = stars.shape[1]
-    edge = np.array(list(combinations(range(size), 2)))
-    at_star = np.array([[i for i, ends in enumerate(edge) if star in ends] for star in range(size)])
-    points = vectors[stars]
-    lengths = np.linalg.norm(points[:, edge[:, 0]] - points[:, edge[:, 1]], axis=2)
-    ordered = np.sort(lengths, axis=1)[:, ::-1]
-    keep = (ordered[:, -1] > MIN_EDGE * ordered[:, 0]) & (ordered[:, 0] < longest_limit)
-    stars, lengths, ordered = stars[keep], lengths[keep], ordered[keep]
-    reach = lengths[:, at_star].sum(axis=2)
-    stars = np.take_along_axis(stars, np.argsort(-reach, axis=1), axis=1)
-    return Groups(stars, ordered[:, 1:] / ordered[:, :1], ordered[:, 0])
+    edges = list(combinations(range(size), 2))
+    x, y, z = (vectors[:, axis][stars.T] for axis in range(3))
+    lengths = np.empty((len(edges), len(stars)))
+    for row, (a, b) in zip(lengths, edges, strict=True):
+        np.sqrt((x[a] - x[b]) ** 2 + (y[a] - y[b]) ** 2 + (z[a] - z[b]) ** 2, out=row)
+    longest = lengths.max(axis=0)
+    keep = (lengths.min(axis=0) > MIN_EDGE * longest) & (longest < longest_limit) & (longest > shortest_limit)
+    stars, lengths, longest = stars[keep], lengths[:, keep], longest[keep]
+    reach = [sum(lengths[i] for i, ends in enumerate(edges) if star in ends) for star in range(size)]
+    place = np.zeros((len(stars), size), dtype=np.intp)
+    for a, b in edges:
+        first = reach[a] >= reach[b]
+        place[:, b] += first
+        place[:, a] += ~first
+    ordered = np.empty_like(stars)
+    np.put_along_axis(ordered, place, stars, axis=1)
+    _sort_rows(lengths)
+    return Groups(ordered, (lengths[1:] / longest).T, longest)
+
+
+def _sort_rows(table: np.ndarray) -> None:
+    """Sort each column of a few rows in falling order, in place: a row at a time is faster than a column at a time."""
+    count = len(table)
+    for i in range(count):  # odd-even transposition
+        for a in range(i % 2, count - 1, 2):
+            low = np.minimum(table[a], table[a + 1])
+            np.maximum(table[a], table[a + 1], out=table[a])
+            table[a + 1] = low

@@ -83,7 +83,7 @@ def solve_hinted(
     field_sr = height * width / focal**2 if radius < 0.5 else 2 * np.pi * (1 - np.cos(radius)) * 0.6
     x0, y0 = (width - 1) / 2, (height - 1) / 2
     best, trials = 0.0, 0
-    around = sky_near(min(2.2 * radius, np.pi), np.inf)
+    around = sky_near(min(2.2 * radius, np.pi), 2 * _SPARSE / field_sr)
     per_field = len(around) * field_sr / (2 * np.pi * (1 - np.cos(min(2.2 * radius, np.pi))))
     for turn, effort in enumerate(SPARSE_EFFORTS if per_field < _SPARSE else EFFORTS, 1):
         used = min(effort.image_stars, len(field.x_px))
@@ -94,9 +94,13 @@ def solve_hinted(
         sky = sky_near(min(radius * (1 + effort.reach), np.pi), effort.sky_stars / field_sr)
         if len(sky) < 4:
             continue
-        groups = local_groups(
-            sky.vectors, effort.size, effort.sky_neighbours, 2 * radius * (1 + scale_tolerance)
+        if len(image) == 0:
+            continue
+        least, most = (
+            image.longest.min() / (1.05 + scale_tolerance),
+            image.longest.max() * (1.05 + scale_tolerance),
         )
+        groups = local_groups(sky.vectors, effort.size, effort.sky_neighbours, most, least)
         pairs = pair_groups(image, groups, scale_tolerance)
         allowed = (focal / (1 + scale_tolerance), focal * (1 + scale_tolerance))
         guesses = hypotheses(field, sky, image, groups, pairs, focal, allowed, parity, lens.projection)

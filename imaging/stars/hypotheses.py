@@ -1,4 +1,4 @@
-"""Hypotheses of where a frame points, from groups of stars that look alike, those that agree first."""
+"""Hypotheses of where a frame points, from groups of stars that look alike, the likeliest first."""
 
 from __future__ import annotations
 
@@ -11,9 +11,6 @@ from imaging.stars.groups import Groups
 from imaging.stars.refine import Field, Sky
 
 CODE_TOLERANCE = 0.012  # 1 % of distortion across a frame changes a local quad's ratios by less
-_VOTE_CENTER = 0.04  # of the half-diagonal
-_VOTE_TURN_RAD = 0.03
-_VOTE_SCALE = 0.02
 # of true groups over the fields of benchmarks/drawn_fields.py and real frames: median 4e-4, 95 % below 1.5e-3
 _SHAPE_ERROR, _PLACE_ERROR_PX = 6e-4, 0.3
 _SPREAD_MAG = 0.25
@@ -23,7 +20,7 @@ _MAGNITUDE_SPREAD = 2.2  # of four stars between frame and catalogue: stretched 
 
 @dataclass(frozen=True)
 class Hypotheses:
-    """n guesses, most supported first: pairs of stars (n, k), axes (n, 3, 3), focal length (px), support.
+    """n guesses, the likeliest first: pairs of stars (n, k), axes (n, 3, 3), focal length (px).
 
     `weight`: how much likelier the group's own shape and brightness are for a true pairing, up to a constant factor.
     """
@@ -32,7 +29,6 @@ class Hypotheses:
     sky_stars: np.ndarray
     axes: np.ndarray
     focal_px: np.ndarray
-    votes: np.ndarray
     weight: np.ndarray
 
     def __len__(self) -> int:
@@ -46,7 +42,6 @@ class Hypotheses:
             self.sky_stars[chosen],
             self.axes[chosen],
             self.focal_px[chosen],
-            self.votes[chosen],
             self.weight[chosen],
         )
 
@@ -76,21 +71,38 @@ def pair_groups(
     if len(image) == 0 or len(sky) == 0:
         return np.empty(0, int), np.empty(0, int)
     stretch = tolerance / max(np.log1p(scale_tolerance), 1e-3)
-    sky_tree = cKDTree(
-        np.column_stack([sky.codes, np.log(sky.longest) * stretch]), balanced_tree=False, compact_nodes=False
-    )
     image_points = np.column_stack([image.codes, np.log(image.longest) * stretch])
+    sky_points = np.column_stack([sky.codes, np.log(sky.longest) * stretch])
+    row = np.flatnonzero(_among(sky_points, image_points, tolerance * 1.2))
+    sky_tree = cKDTree(sky_points[row], balanced_tree=False, compact_nodes=False)
     found = sky_tree.query_ball_point(image_points, r=tolerance * 1.2)
     number = np.array([len(one) for one in found])
     first = np.repeat(np.arange(len(image)), number)
     second = (
         np.concatenate([np.asarray(one, dtype=int) for one in found]) if number.sum() else np.empty(0, int)
     )
+    second = row[second]
     if len(first) > limit:
         away = np.abs(image.codes[first] - sky.codes[second]).max(axis=1)
         kept = np.argpartition(away, limit)[:limit]
         first, second = first[kept], second[kept]
     return first, second
+
+
+def _among(points: np.ndarray, others: np.ndarray, reach: float) -> np.ndarray:
+    """Say which points (n, d) lie in a cell next to one of the others, by their last four coordinates."""
+    low = others[:, -4:].min(axis=0) - 2 * reach
+    cells = np.floor((others[:, -4:] - low) / reach).astype(np.int64)
+    size = cells.max(axis=0) + 2
+    occupied = np.zeros(int(size.prod()), dtype=bool)
+    step = np.append(np.cumprod(size[:0:-1])[::-1], 1)
+    around = np.stack(np.meshgrid(*[[-1, 0, 1]] * cells.shape[1], indexing="ij"), -1).reshape(
+        -1, cells.shape[1]
+    )
+    occupied[((cells[:, None] + around) @ step).ravel()] = True
+    mine = np.floor((points[:, -4:] - low) / reach).astype(np.int64)
+    inside = ((mine >= 0) & (mine < size)).all(axis=1)
+    return inside & occupied[np.where(inside, mine @ step, 0)]
 
 
 def as_bright(field: Field, sky: Sky, image_stars: np.ndarray, sky_stars: np.ndarray) -> np.ndarray:
@@ -113,7 +125,7 @@ def hypotheses(
     parity: int | None = None,
     projection: str = "TAN",
 ) -> Hypotheses:
-    """Return the cameras that carry paired groups onto each other, sorted by how many others agree with each.
+    """Return the cameras that carry paired groups onto each other, the likeliest first.
 
     The groups of the image were made with `focal_px`; each hypothesis gets its own focal length, within
     `focal_range_px`. `parity` as in DEVELOPERS.md, None when unknown.
@@ -156,11 +168,8 @@ def hypotheses_of(
     image_stars, sky_stars, axes, focal = image_stars[keep], sky_stars[keep], axes[keep], focal[keep]
     misshapen = np.sqrt((residual[keep] ** 2).mean(axis=1)) / size[keep]
     weight = _weight(field, stars, image_stars, sky_stars, misshapen, size[keep] * focal)
-    votes = _votes(axes, focal, field.half_diagonal_px)
-    order = np.lexsort((-weight, -votes))
-    return Hypotheses(
-        image_stars[order], sky_stars[order], axes[order], focal[order], votes[order], weight[order]
-    )
+    order = np.argsort(-weight, kind="stable")
+    return Hypotheses(image_stars[order], sky_stars[order], axes[order], focal[order], weight[order])
 
 
 def _weight(
@@ -185,29 +194,6 @@ def _weight(
     spread2 = (np.where(counted, away - mean[:, None], 0.0) ** 2).sum(axis=1) / number
     shape_weight = (1 + shape**2) ** -((2 * size - 3) / 2)
     return shape_weight * (1 + spread2 / _SPREAD_MAG**2) ** -(number / 2)
-
-
-def _votes(axes: np.ndarray, focal_px: np.ndarray, half_diagonal_px: float) -> np.ndarray:
-    """Return how many hypotheses agree with each (itself included) on centre, roll, mirror and scale."""
-    from scipy.spatial import cKDTree
-
-    votes = np.ones(len(focal_px), dtype=int)
-    octave = np.floor(np.log2(np.maximum(focal_px, 1e-9)) * 2).astype(int)
-    for one in np.unique(octave):  # the sky is finer where the scale is finer
-        index = np.flatnonzero(octave == one)
-        if len(index) < 2:
-            continue
-        field_rad = np.arctan(half_diagonal_px / np.median(focal_px[index]))
-        place = np.column_stack(
-            [
-                axes[index, 2] / (_VOTE_CENTER * field_rad),
-                axes[index, 0] / _VOTE_TURN_RAD,
-                np.linalg.det(axes[index]),
-                np.log(focal_px[index]) / _VOTE_SCALE,
-            ]
-        )
-        votes[index] = cKDTree(place).query_ball_point(place, r=1.0, return_length=True)
-    return votes
 
 
 def _axes(seen: np.ndarray, true: np.ndarray, parity: int | None) -> np.ndarray:

@@ -14,7 +14,7 @@ import numpy as np
 from imaging.stars.camera import ARCSEC_RAD, Camera, Lens
 from imaging.stars.hinted import Attempt
 from imaging.stars.hypotheses import Hypotheses, hypotheses_of, turned_by
-from imaging.stars.prescreen import scores
+from imaging.stars.prescreen import promising
 from imaging.stars.refine import Field, Sky, grow
 
 ACCEPT_LOG10 = -7.0
@@ -22,7 +22,7 @@ WIDEST_SCALE_TOLERANCE = 0.02
 _IMAGE_STARS, _SKY_STARS = 28, 80
 _SHORTEST = 0.12  # of the half-diagonal: a close pair says nothing about roll
 _MAGNITUDES = 1.2  # difference of brightness of a pair, between frame and catalogue
-_MOST_GROWN = 120
+_MOST_GROWN = 20
 ROLL_TOLERANCE_DEG = 6.0
 
 
@@ -65,8 +65,7 @@ def solve_sparse(
     if rotation_deg is not None:
         guesses = guesses.take(turned_by(guesses, rotation_deg) < ROLL_TOLERANCE_DEG)
     trials, best = len(guesses), 0.0
-    score = scores(guesses, flat, sky) if trials else np.empty(0)
-    for i in np.argsort(-(score + np.log(guesses.weight[: len(score)])), kind="stable")[:_MOST_GROWN]:
+    for i in promising(guesses, flat, sky, _MOST_GROWN):
         x0 = (field.shape[1] - 1) / 2 + lens.axis[0] * half
         y0 = (field.shape[0] - 1) / 2 + lens.axis[1] * half
         camera = Camera(

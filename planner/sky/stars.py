@@ -126,11 +126,17 @@ class Star:
 
 
 def stars_in_field(
-    ra_deg: float, dec_deg: float, radius_deg: float, tt_s: float, magnitude_limit: float | None = None
+    ra_deg: float,
+    dec_deg: float,
+    radius_deg: float,
+    tt_s: float,
+    magnitude_limit: float | None = None,
+    brightest: int | None = None,
 ) -> StarField:
     """Return the stars within a radius of a direction (ICRS), at the date, brightest first.
 
-    `magnitude_limit` is in `magnitude` (V). A field of 20 degrees takes 20 ms.
+    `magnitude_limit` is in `magnitude` (V); `brightest`: about so many of them at most. A field of 20 degrees takes
+    20 ms.
     """
     table = star_list()
     slack = _FASTEST_DEG_YEAR * abs(tt_s - _EPOCH_TT_S) / YEAR_S + 0.001
@@ -139,10 +145,18 @@ def stars_in_field(
     rows = np.arange(low, high)
     if magnitude_limit is not None:
         rows = rows[table["v"][low:high] <= magnitude_limit]
+    reach = np.sin(np.radians(min(radius_deg + slack, 90.0))) / max(np.cos(np.radians(dec_deg)), 1e-9)
+    if (
+        reach < 1.0 and abs(dec_deg) + radius_deg + slack < 90.0
+    ):  # away from the poles a window in right ascension
+        away = np.abs((table["ra_deg"][rows] - ra_deg + 180.0) % 360.0 - 180.0)
+        rows = rows[away <= np.degrees(np.arcsin(reach)) + slack]
     centre = unit_vector(ra_deg, dec_deg)
     near = np.cos(np.radians(min(radius_deg + slack, 180.0)))
     part = unit_vector(table["ra_deg"][rows], dec[rows])
     rows = rows[centre @ part >= near - 1e-12]
+    if brightest is not None and len(rows) > brightest:
+        rows = rows[np.argpartition(np.asarray(table["v"][rows]), brightest - 1)[:brightest]]
     field = _at_date(rows, tt_s)
     place = unit_vector(field.ra_deg, field.dec_deg)
     inside = separation_arcsec(place, np.broadcast_to(centre[:, None], place.shape)) <= radius_deg * 3600.0
