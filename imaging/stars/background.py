@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 CELL_PX = 64  # side of a background cell: many times a star, a fraction of the vignetting
+_STEEP = 0.1  # of a cell's variance that its slope may make
 
 
 @dataclass(frozen=True)
@@ -68,7 +69,20 @@ def background(data: np.ndarray, cell_px: int = CELL_PX) -> Background:
             np.where(good, sigma, spread).astype(np.float32),
         )
     if min(rows, columns) >= 3:
-        grid, sigma = (cv2.medianBlur(_extended(one), 3)[1:-1, 1:-1] for one in (grid, sigma))
+        grid = cv2.medianBlur(_extended(grid), 3)[1:-1, 1:-1]
+        down, across = np.gradient(grid)
+        steep = (down**2 + across**2) / 12 > _STEEP * sigma**2
+        if steep.any():  # near the Moon the slope of the sky within a cell would pass for noise
+            first = Background(grid, sigma, width, height)
+            sigma = sigma.copy()
+            for row in np.flatnonzero(steep.any(axis=1)):
+                top = top_edges[row]
+                block = (data[top : top + cell_h] - first.level(top, top + cell_h))[::step][:, take]
+                block = block.reshape(len(block), columns, -1).transpose(1, 0, 2).reshape(columns, -1)
+                spread = _clipped(np.sort(block, axis=1))[1]
+                better = steep[row] & np.isfinite(spread)
+                sigma[row, better] = spread[better]
+        sigma = cv2.medianBlur(_extended(sigma), 3)[1:-1, 1:-1]
     positive = sigma[sigma > 0]
     floor = 0.2 * float(np.median(positive)) if positive.size else 1e-3
     return Background(grid, np.maximum(sigma, max(floor, 1e-6)), width, height)

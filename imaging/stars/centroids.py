@@ -6,7 +6,8 @@ step on a Gaussian profile with the noise of each pixel as weight, which reaches
 
 from __future__ import annotations
 
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, fields, replace
+from typing import Any
 
 import numpy as np
 
@@ -42,23 +43,19 @@ class Measured:
 
     def take(self, rows: np.ndarray) -> Measured:
         """Return these of the candidates."""
-        return Measured(
-            **{
-                item.name: value[rows] if isinstance(value := getattr(self, item.name), np.ndarray) else value
-                for item in fields(self)
-            }
-        )
+        chosen: dict[str, Any] = {name: column[rows] for name, column in self._columns().items()}
+        return replace(self, **chosen)
 
     def followed_by(self, others: Measured) -> Measured:
         """Return these candidates and then the others, of the same frame."""
-        return Measured(
-            **{
-                item.name: np.concatenate([value, getattr(others, item.name)])
-                if isinstance(value := getattr(self, item.name), np.ndarray)
-                else value
-                for item in fields(self)
-            }
-        )
+        more = others._columns()
+        both: dict[str, Any] = {
+            name: np.concatenate([column, more[name]]) for name, column in self._columns().items()
+        }
+        return replace(self, **both)
+
+    def _columns(self) -> dict[str, np.ndarray]:
+        return {item.name: getattr(self, item.name) for item in fields(self) if item.name != "psf_sigma_px"}
 
 
 def measure(
