@@ -7,17 +7,20 @@ from dataclasses import dataclass
 import numpy as np
 
 CELL_PX = 64  # side of a background cell: many times a star, a fraction of the vignetting
+FINE_CELL_PX = 24  # where the sky is steep: the glare of the Moon
+_STEEP_SHARE = 0.005  # of the cells
 _STEEP = 0.1  # of a cell's variance that its slope may make
 
 
 @dataclass(frozen=True)
 class Background:
-    """The sky on a grid of cells, and its noise; see `level`."""
+    """The sky on a grid of cells, and its noise; see `level`. `steep`: slopes more within a cell than noise does."""
 
     grid: np.ndarray
     sigma_grid: np.ndarray
     width_px: int
     height_px: int
+    steep: bool = False
 
     def level(self, top: int, bottom: int, of: np.ndarray | None = None) -> np.ndarray:
         """Return the sky of the rows `top` to `bottom` as float32, interpolated between cell centres."""
@@ -68,6 +71,7 @@ def background(data: np.ndarray, cell_px: int = CELL_PX) -> Background:
             np.where(good, grid, fill).astype(np.float32),
             np.where(good, sigma, spread).astype(np.float32),
         )
+    steep = np.zeros_like(good)
     if min(rows, columns) >= 3:
         grid = cv2.medianBlur(_extended(grid), 3)[1:-1, 1:-1]
         down, across = np.gradient(grid)
@@ -75,7 +79,7 @@ def background(data: np.ndarray, cell_px: int = CELL_PX) -> Background:
         if steep.any():  # near the Moon the slope of the sky within a cell would pass for noise
             first = Background(grid, sigma, width, height)
             sigma = sigma.copy()
-            for row in np.flatnonzero(steep.any(axis=1)):
+            for row in np.flatnonzero(steep.any(axis=1)).tolist():
                 top = top_edges[row]
                 block = (data[top : top + cell_h] - first.level(top, top + cell_h))[::step][:, take]
                 block = block.reshape(len(block), columns, -1).transpose(1, 0, 2).reshape(columns, -1)
@@ -85,7 +89,9 @@ def background(data: np.ndarray, cell_px: int = CELL_PX) -> Background:
         sigma = cv2.medianBlur(_extended(sigma), 3)[1:-1, 1:-1]
     positive = sigma[sigma > 0]
     floor = 0.2 * float(np.median(positive)) if positive.size else 1e-3
-    return Background(grid, np.maximum(sigma, max(floor, 1e-6)), width, height)
+    return Background(
+        grid, np.maximum(sigma, max(floor, 1e-6)), width, height, bool(steep.mean() > _STEEP_SHARE)
+    )
 
 
 def _clipped(sample: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

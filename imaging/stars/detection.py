@@ -10,7 +10,7 @@ from dataclasses import dataclass, field, fields
 
 import numpy as np
 
-from imaging.stars.background import Background, background
+from imaging.stars.background import FINE_CELL_PX, Background, background
 from imaging.stars.blends import deblend
 from imaging.stars.centroids import measure
 from imaging.stars.trails import Trails, looks_trailed, measure_trails, trail_field
@@ -91,6 +91,8 @@ def detect(
     """
     data = np.ascontiguousarray(data, dtype=np.float32)
     sky = background(data)
+    if sky.steep:
+        sky = background(data, FINE_CELL_PX)
     width_sigma = (fwhm_px or 2.8) / FWHM_PER_SIGMA
     candidates = _local_maxima(data, sky, width_sigma, threshold)
     measured = measure(data, sky, *candidates, width_sigma, saturation_adu, gain_e_adu)
