@@ -22,7 +22,6 @@ from imaging.track.sightings import Sightings, among_stars
 from imaging.track.table import Track
 from planner.errors import InputError, NoSolutionError
 from planner.sky.bodies import AU_KM, EARTH_RADIUS_KM
-from planner.sky.observer import Observer
 
 if TYPE_CHECKING:
     from planner.sequence.models import Plan
@@ -183,7 +182,7 @@ def station_of_contacts(
     """
     from planner.sky.places import direction
 
-    airless = PredictedPath(path.geometry, _without_air(path.observer), path.from_center)
+    airless = path.airless()
     expected = airless.at(tt_s)
     place = np.column_stack([expected.east_arcsec, expected.north_arcsec])
     apart = np.hypot(*place.T)
@@ -205,14 +204,9 @@ def station_of_contacts(
 
 def lever(station: Station) -> np.ndarray:
     """Return the path from the site minus the path from the Earth's centre, (n, 2) in arcseconds, without air."""
-    airless = PredictedPath(station.path.geometry, _without_air(station.path.observer))
     tt_s = station.sightings.tt_s
-    from_site = station.sightings.expected(airless, tt_s)
+    from_site = station.sightings.expected(station.path.airless(), tt_s)
     return from_site - station.sightings.expected(station.path.from_center(), tt_s)
-
-
-def _without_air(observer: Observer | None) -> Observer | None:
-    return None if observer is None else replace(observer, pressure_hpa=0.0)
 
 
 def fit_parallax(stations: Sequence[Station], forecast: bool = False) -> Parallax:

@@ -9,7 +9,7 @@ hours, or try another site or body, at no cost.
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -140,6 +140,8 @@ class PredictedPath:
     ):
         self._geometry, self._centered = geometry, centered
         self.observer = observer
+        self._from_center: PredictedPath | None = None
+        self._airless: PredictedPath | None = None
         self._blocks: dict[int, np.ndarray] = {}
         self._among_stars: bool | None = None
         angle = np.pi * (np.arange(NODES) + 0.5) / NODES
@@ -179,10 +181,21 @@ class PredictedPath:
         return self._geometry(np.atleast_1d(np.asarray(tt_s, dtype=float)))
 
     def from_center(self) -> PredictedPath:
-        """Return the path as the Earth's centre would see it; only of a path made by `of_plan`."""
-        if self._centered is None:
-            raise RuntimeError("the path was not made from a plan")
-        return self._centered()
+        """Return the path as the Earth's centre would see it; only of a path made by `of_plan` or `of_event`."""
+        if self._from_center is None:
+            if self._centered is None:
+                raise RuntimeError("the path was not made from a plan")
+            self._from_center = self._centered()
+        return self._from_center
+
+    def airless(self) -> PredictedPath:
+        """Return the path as the observer would see it without air."""
+        if self.observer is None or self.observer.pressure_here_hpa == 0:
+            return self
+        if self._airless is None:
+            observer = replace(self.observer, pressure_hpa=0.0)
+            self._airless = PredictedPath(self._geometry, observer, self.from_center)
+        return self._airless
 
     def at(self, tt_s: np.ndarray) -> Expected:
         """Return what is expected at instants of shape (n,), from the sampled blocks."""

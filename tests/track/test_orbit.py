@@ -67,14 +67,21 @@ def test_elements_are_the_published_ones(body):
     assert fit.longitude_of_perihelion_deg == pytest.approx(perihelion, abs=1.5)
 
 
-def test_stated_errors_of_an_orbit_are_true():
+@pytest.mark.parametrize(
+    ("runs", "within"),
+    [(16, 0.5), pytest.param(200, 0.1, marks=pytest.mark.slow)],  # known to 18 %, to 5 %
+)
+def test_stated_errors_of_an_orbit_are_true(runs, within):
     pulls = []
-    for seed in range(25):
+    for seed in range(runs):
         fit = fit_orbit(track_of("mars", np.random.default_rng(seed), frames=12), SITE, "mars")
-        truth = elements_of(true_state("mars", fit.epoch_tt_s))
-        pulls.append((fit.elements - truth) / fit.element_sigma)
-    for name, spread in zip(ELEMENT_NAMES, np.std(pulls, axis=0), strict=True):
-        assert spread == pytest.approx(1.0, abs=0.42), name  # known to 14 % from 25 runs
+        state = true_state("mars", fit.epoch_tt_s)
+        distance = np.linalg.norm(state[:3])
+        away = np.append(fit.elements - elements_of(state), fit.heliocentric_distance_au - distance)
+        pulls.append(away / np.append(fit.element_sigma, fit.heliocentric_distance_sigma_au))
+    spread = np.sqrt(np.mean(np.square(pulls), axis=0))
+    for name, one in zip((*ELEMENT_NAMES, "heliocentric_distance_au"), spread, strict=True):
+        assert one == pytest.approx(1.0, abs=within), (name, spread)
 
 
 def test_a_night_tells_no_orbit():

@@ -114,10 +114,11 @@ def test_a_slip_is_named_in_99_of_100_rehearsals(event, kind):
 
 
 @pytest.mark.slow
+@pytest.mark.parametrize("batch", range(4))
 @pytest.mark.parametrize("event", EVENTS)
-def test_no_slip_is_claimed_in_1000_right_rehearsals(event):
+def test_no_slip_is_claimed_in_1000_right_rehearsals(event, batch):
     claimed = 0
-    for seed in range(1000):
+    for seed in range(250 * batch, 250 * (batch + 1)):
         found = diagnose(frames_of(event, np.random.default_rng([seed, 99])), scene(event)[1])
         claimed += bool(found.findings)
     assert claimed == 0

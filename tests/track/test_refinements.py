@@ -96,9 +96,13 @@ def test_words_for_a_clock():
 @pytest.mark.parametrize("event", ["transit", "occultation"])
 @pytest.mark.parametrize(
     ("slip", "faults"),
-    [("zone", {"clock_s": 3600.0 + 7.3}), ("zone", {"clock_s": -5.5 * 3600 + 7.3}), ("date", {"clock_s": 86400.0 + 7.3}),
-     ("mirrored", {"clock_s": 7.3, "mirrored": True})],
-)  # fmt: skip
+    [
+        ("zone", {"clock_s": 3600.0 + 7.3}),
+        ("zone", {"clock_s": -5.5 * 3600 + 7.3}),
+        ("date", {"clock_s": 86400.0 + 7.3}),
+        ("mirrored", {"clock_s": 7.3, "mirrored": True}),
+    ],
+)
 def test_a_clock_error_is_named_beside_the_slip(event, slip, faults):
     rng = np.random.default_rng(5)
     frames = disc_sightings(scene(event)[0].path, times(event, 40, rng), rng, jitter_arcsec=0.1, **faults)
