@@ -37,6 +37,7 @@ class Frame:
     `colour`: (rows, columns, 3) float32 or None; `mosaic`: Bayer pattern such as `RGGB`, or None.
     `row_zero`: `bottom` (FITS) or `top` (rasters): which edge of the picture row 0 is when it is looked at.
     `saturation_adu`: value at and above which a pixel is not linear, or None when unknown.
+    `bias_adu`: the value of no light where known: 0 once the bias was taken off, None when the rig alone can tell.
     `gain_e_adu`, `read_noise_e`: for the noise model, None when unknown.
     `site`: (latitude_deg, longitude_deg, height_m) from the file, or None.
     `time_missing`: why `time` is None, in one line.
@@ -60,3 +61,4 @@ class Frame:
     header: dict[str, Any] = field(default_factory=dict)
     frame_index: int = 0
     time_missing: str | None = None
+    bias_adu: float | None = None

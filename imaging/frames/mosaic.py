@@ -2,7 +2,11 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
+
+from imaging.frames.frame import Frame
 
 PATTERNS = ("RGGB", "BGGR", "GRBG", "GBRG")
 
@@ -33,3 +37,11 @@ def half_size_colour(mosaic: np.ndarray, pattern: str) -> np.ndarray:
         for column in (0, 1):
             planes[pattern[2 * row + column]].append(mosaic[row:rows:2, column:columns:2])
     return np.stack([np.mean(planes[name], axis=0, dtype=np.float32) for name in "RGB"], axis=-1)
+
+
+def taken_apart(frame: Frame, colour: bool) -> Frame:
+    """Return a frame whose data is a mosaic as recorded with its green luminance, and with colour if wanted."""
+    if frame.mosaic is None:
+        return frame
+    planes = half_size_colour(frame.data, frame.mosaic) if colour else None
+    return replace(frame, data=green_luminance(frame.data, frame.mosaic), colour=planes)

@@ -7,13 +7,18 @@ from dataclasses import dataclass, replace
 from datetime import timezone
 from importlib import import_module
 from pathlib import Path
+from typing import TYPE_CHECKING
 from zoneinfo import ZoneInfo
 
 import numpy as np
 
 from imaging.frames.frame import Frame
+from imaging.frames.mosaic import taken_apart
 from imaging.frames.times import time_from_file_date, zone_of
 from planner.errors import FrameSetAside, InputError
+
+if TYPE_CHECKING:
+    from imaging.frames.calibrating import Calibration
 
 MAX_PIXELS = 200_000_000  # a luminance of 0.8 GB; above it a frame is refused before it is read
 MIN_SIDE_PX = 8
@@ -21,10 +26,14 @@ MIN_SIDE_PX = 8
 
 @dataclass(frozen=True)
 class ReadOptions:
-    """What a reader may need from the user: a zone for stamps without one, whether colour is wanted."""
+    """What a reader may need: a zone for stamps without one, whether colour is wanted.
+
+    `as_recorded`: a mosaic is left as the sensor gave it, for calibration before it is taken apart.
+    """
 
     zone: timezone | ZoneInfo | None = None
     colour: bool = False
+    as_recorded: bool = False
 
 
 # One line a dialect: name, module, file suffixes. The first whose `recognises(head, path)` says yes reads.
@@ -48,14 +57,17 @@ def read_frame(
     index: int = 0,
     colour: bool = False,
     file_time: bool = False,
+    calibration: Calibration | None = None,
 ) -> Frame:
     """Return one frame of a file: the frame itself, or number `index` of a cube or a video.
 
     `zone`: of stamps that lack one (`+02:00` or an IANA name). `colour`: keep the colour planes. `file_time`:
-    fall back on the modification time. A frame that tells no time has `time=None` and `time_missing`.
+    fall back on the modification time. `calibration`: what to take off the sensor's values, before a mosaic is taken
+    apart. A frame that tells no time has `time=None` and `time_missing`.
     Raises FrameSetAside with a reason in one line, InputError for a zone that is none.
     """
-    for frame in read_frames(path, zone, colour=colour, file_time=file_time, start=index, stop=index + 1):
+    options = {"colour": colour, "file_time": file_time, "calibration": calibration}
+    for frame in read_frames(path, zone, start=index, stop=index + 1, **options):  # type: ignore[arg-type]
         return frame
     raise FrameSetAside(path, f"has no frame number {index}")
 
@@ -66,18 +78,29 @@ def read_frames(
     *,
     colour: bool = False,
     file_time: bool = False,
+    calibration: Calibration | None = None,
+    as_recorded: bool = False,
     start: int = 0,
     stop: int | None = None,
 ) -> Iterator[Frame]:
-    """Yield the frames of a file, one at a time in memory; see `read_frame`."""
+    """Yield the frames of a file, one at a time in memory; see `read_frame`.
+
+    `as_recorded`: mosaics as the sensor gave them, not taken apart.
+    """
     path = Path(path)
-    options = ReadOptions(zone_of(zone), colour)
+    # colours that are no mosaic cannot be calibrated, and must be seen to say so
+    options = ReadOptions(
+        zone_of(zone), colour or calibration is not None, as_recorded or calibration is not None
+    )
     module = _dialect(path)
     try:
         for frame in module.frames(path, options, start, stop):
             reason = _unusable(frame.data)
             if reason is not None:
                 raise FrameSetAside(path, reason)
+            if calibration is not None:
+                frame = calibration.apply(frame)
+                frame = frame if as_recorded else taken_apart(frame, colour)
             if frame.time is None and file_time:
                 frame = replace(
                     frame, time=time_from_file_date(path.stat().st_mtime, frame.exposure_s), time_missing=None

@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import shutil
 from dataclasses import replace
 
 import numpy as np
 import pytest
 from astropy.io import fits
 
-from imaging.frames.calibration import bad_pixels, calibrate, make_master, outliers_in_time, photon_transfer
+from imaging.frames.calibrating import Calibration, calibration_of
+from imaging.frames.calibration import bad_pixels, calibrate, make_master, outliers_in_time
+from imaging.frames.hotpixels import hot_pixels
+from imaging.frames.photontransfer import photon_transfer
 from imaging.frames.reading import read_frame
 from planner.errors import FrameSetAside, InputError
 
@@ -107,3 +111,134 @@ def test_struck_pixels_are_found_in_time_and_a_sharp_limb_is_kept():
     struck = outliers_in_time(stack, 10.0)
     assert struck[2, 40, 10]
     assert struck.sum() <= 3
+
+
+@pytest.fixture
+def night(camera, tmp_path):
+    """The camera's calibration frames in the folders that a night has, and a cache of its own."""
+    folder = tmp_path / "calibration"
+    for kind in ("bias", "dark", "flat"):
+        (folder / kind).mkdir(parents=True)
+        for path in camera[kind]:
+            path.rename(folder / kind / path.name)
+    return folder, tmp_path / "cache", camera
+
+
+def test_a_folder_of_calibration_frames_makes_frames_flat_and_dark(night):
+    folder, cache, camera = night
+    calibration = calibration_of(folder, cache)
+    frame = read_frame(camera["light"], calibration=calibration)
+    assert np.isfinite(frame.data).all()  # the hot pixel is mended
+    assert frame.data[20, 30] == pytest.approx(np.median(frame.data), rel=0.1)
+    assert frame.data.mean() == pytest.approx(200 * camera["shade"].mean(), rel=0.01)
+    assert np.median(frame.data[:10, :10]) == pytest.approx(np.median(frame.data[55:65, 75:85]), rel=0.02)
+    assert frame.bias_adu == 0.0
+    said = calibration.provenance()
+    assert {"master bias", "master dark 10 s", "master flat", "bad pixels"} <= said.keys()
+
+
+def test_masters_of_a_folder_are_made_once(night):
+    folder, cache, _ = night
+    first = calibration_of(folder, cache).provenance()
+    kept = {path.name: path.stat().st_mtime_ns for path in cache.iterdir()}
+    assert len(kept) == 3
+    assert calibration_of(folder, cache).provenance() == first
+    assert {path.name: path.stat().st_mtime_ns for path in cache.iterdir()} == kept
+    for path in cache.iterdir():  # damaged by whatever: made again
+        path.write_bytes(b"SIMPLE")
+    assert calibration_of(folder, cache).provenance() == first
+
+
+def test_noise_is_measured_where_the_frames_do_not_state_it(tmp_path):
+    rng = np.random.default_rng(8)
+    gain, read = 1.7, 6.0
+
+    def shot(electrons):
+        return (rng.poisson(electrons, SHAPE) + rng.normal(0, read, SHAPE)) / gain + 300
+
+    for kind, electrons, length in (("bias", 0, 0.0), ("flat", 20_000, 2.0)):
+        (tmp_path / kind).mkdir()
+        for i in range(4):
+            write(tmp_path / kind / f"{i}.fits", shot(electrons * (1 + 0.02 * i)), length)
+    calibration = calibration_of(tmp_path, tmp_path / "cache")
+    frame = read_frame(write(tmp_path / "light.fits", shot(500), 2.0), calibration=calibration)
+    assert frame.gain_e_adu == pytest.approx(gain, rel=0.03)
+    assert frame.read_noise_e == pytest.approx(read, rel=0.03)
+
+
+def test_a_mosaic_is_calibrated_before_it_is_taken_apart(tmp_path):
+    rng = np.random.default_rng(9)
+    colours = np.tile(np.array([[3.0, 1.0], [1.0, 0.4]]), (60, 80))
+    shade = np.linspace(1.0, 0.5, SHAPE[1])
+    header = {"EXPTIME": 2.0, "DATE-OBS": "2027-02-19T20:00:00", "BAYERPAT": "RGGB"}
+
+    def save(path, data):
+        fits.PrimaryHDU(data.astype("float32"), fits.Header(header)).writeto(path)
+        return path
+
+    for kind, light in (("bias", 0.0), ("flat", 4000.0)):
+        (tmp_path / kind).mkdir()
+        for i in range(3):
+            save(tmp_path / kind / f"{i}.fits", 300 + light * colours * shade + rng.normal(0, 3, SHAPE))
+    light = save(tmp_path / "light.fits", 300 + 900 * colours * shade + rng.normal(0, 3, SHAPE))
+    frame = read_frame(light, colour=True, calibration=calibration_of(tmp_path, tmp_path / "cache"))
+    # the shade is gone, the colours are the light's own
+    for plane, strength in zip(np.moveaxis(frame.colour, -1, 0), (3.0, 1.0, 0.4), strict=True):
+        assert np.median(plane[:, :20]) == pytest.approx(np.median(plane[:, -20:]), rel=0.03)
+        assert np.median(plane) == pytest.approx(900 * 0.75 * strength, rel=0.03)
+
+
+def test_made_colours_are_set_aside_when_calibration_is_asked_for(night, tmp_path):
+    from PIL import Image
+
+    folder, cache, _ = night
+    picture = np.random.default_rng(1).integers(0, 255, (*SHAPE, 3), dtype="uint8")
+    Image.fromarray(picture).save(tmp_path / "a.png")
+    with pytest.raises(FrameSetAside, match="the values themselves"):
+        read_frame(tmp_path / "a.png", calibration=calibration_of(folder, cache))
+
+
+@pytest.mark.parametrize(
+    ("change", "words"),
+    [
+        (lambda folder: shutil.rmtree(folder / "bias"), None),
+        (
+            lambda folder: [shutil.rmtree(folder / kind) for kind in ("bias", "dark", "flat")],
+            "folders named bias",
+        ),
+        (lambda folder: (folder / "dark" / "notes.txt").write_text("clouds"), "allowed are frames"),
+        (
+            lambda folder: write(folder / "flat" / "small.fits", np.ones((50, 60)) + np.eye(50, 60), 5.0),
+            "one size",
+        ),
+    ],
+)
+def test_a_wrong_calibration_folder_is_one_line(night, change, words):
+    folder, cache, camera = night
+    change(folder)
+    if words is None:  # without a bias a dark cannot be scaled to the frame
+        with pytest.raises(FrameSetAside, match="scaling is not allowed"):
+            read_frame(camera["light"], calibration=calibration_of(folder, cache))
+        return
+    with pytest.raises(InputError, match=words) as wrong:
+        calibration_of(folder, cache)
+    assert "\n" not in str(wrong.value)
+
+
+def test_hot_pixels_are_told_by_time_and_rays_and_stars_are_not(tmp_path):
+    rng = np.random.default_rng(11)
+    yy, xx = np.mgrid[0 : SHAPE[0], 0 : SHAPE[1]]
+    star = 4000 * np.exp(-((xx - 100) ** 2 + (yy - 40) ** 2) / 2 / 0.7**2)  # FWHM 1.6 px, always in one place
+    limb = np.where(np.hypot(xx - 40, yy - 80) < 30, 5000.0, 0.0)
+    paths = []
+    for i in range(6):
+        data = 300 + rng.normal(0, 4, SHAPE) + star + limb
+        data[20, 30] += 900
+        data[5 + 10 * i, 140] += 5000  # a ray
+        paths.append(write(tmp_path / f"{i}.fits", data, 2.0))
+    hot = hot_pixels(paths)
+    assert np.argwhere(hot).tolist() == [[20, 30]]
+    assert hot_pixels(paths[:3]) is None
+    frame = read_frame(paths[0], calibration=Calibration(hot=hot))
+    assert frame.data[20, 30] == pytest.approx(300, abs=20)
+    assert frame.data[40, 100] > 3000

@@ -132,7 +132,7 @@ def _frame(path: Path, plane: np.ndarray, header: Any, options: ReadOptions, ind
             None,
             plane.mean(axis=-1, dtype=np.float32),
         )
-    elif mosaic is not None:
+    elif mosaic is not None and not options.as_recorded:
         from imaging.frames.mosaic import green_luminance, half_size_colour
 
         colour = half_size_colour(plane, mosaic) if options.colour else None

@@ -76,12 +76,12 @@ def frames(path: Path, options: ReadOptions, start: int = 0, stop: int | None = 
         missing = str(error)
     yield Frame(
         path=path,
-        data=green_luminance(mosaic, pattern),
+        data=mosaic if options.as_recorded else green_luminance(mosaic, pattern),
         time=time,
         time_missing=missing,
         exposure_s=length,
         row_zero="top",
-        colour=half_size_colour(mosaic, pattern) if options.colour else None,
+        colour=half_size_colour(mosaic, pattern) if options.colour and not options.as_recorded else None,
         mosaic=pattern,
         saturation_adu=white - float(black.mean()),
         camera=camera_of(tags),

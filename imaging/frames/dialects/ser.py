@@ -69,7 +69,7 @@ def frames(path: Path, options: ReadOptions, start: int = 0, stop: int | None = 
         if planes == 3:
             colour = data[..., ::-1] if colour_id == _BGR else data
             data = data.mean(axis=-1, dtype=np.float32)
-        elif mosaic is not None:
+        elif mosaic is not None and not options.as_recorded:
             colour = half_size_colour(data, mosaic) if options.colour else None
             data = green_luminance(data, mosaic)
         yield Frame(
