@@ -148,7 +148,7 @@ def _piece(
         up_pa_deg=zenith_pa_deg,
     )
     pixels = light.read(frame)
-    level = exposure_level(pixels, frame, light.bias_adu)
+    level = exposure_level(pixels, frame)
     anchor = frame.target_ra_deg, frame.target_dec_deg
     return light.on_canvas(without_sky(pixels, level.dark), frame, small, anchor, level)
 

@@ -80,7 +80,6 @@ def compose_picture(
     """
     registration = material.reference if choices.registration == "auto" else choices.registration
     light = Light(
-        bias_adu=material.plan.rig.sensor.bias_adu,
         colour=choices.colour,
         ringless=registration == "stars" or landscape is not None,
         threads=choices.threads,

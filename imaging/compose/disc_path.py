@@ -12,6 +12,7 @@ from imaging.compose.canvas import Canvas
 from imaging.compose.choices import Choices
 from imaging.compose.choose import evenly_spaced
 from imaging.compose.light import Level, Light, disc_level, limb_steepness
+from imaging.compose.matching import edge_weight
 from imaging.compose.material import Material, Registered
 from imaging.compose.orientation import up_pa_deg
 from imaging.compose.patch import lay_patch, patch_box
@@ -51,16 +52,20 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
         sun = sun_view(semidiameter, float(disc.pole_pa_deg[0]), *anchor, middle)
     base = _ground_frames(material, frames, sharpness, canvas, body)
     planes = (3,) if light.colour else ()
-    stack = new_stack(choices.blend, (canvas.height_px, canvas.width_px, *planes), len(base), choices.scratch)
+    shape = (canvas.height_px, canvas.width_px, *planes)
+    stack = new_stack(choices.blend, shape, len(base), choices.scratch, again=True)
     total = len(base) + len(shown)
     used: list[tuple[Registered, str]] = []
-    for done, index in enumerate(base):
-        frame = frames[index]
-        choices.tick(len(frames) + done, len(frames) + total)
-        surface = None if sun is None else sun.turned(frame.tt_s - middle)
-        pixels = light.read(frame)
-        stack.add(light.on_canvas(pixels, frame, canvas, disc_anchor(frame), levels[index], surface=surface))
-        used.append((frame, "ground"))
+    for turn in stack.turns():
+        for done in turn:
+            frame = frames[base[done]]
+            choices.tick(len(frames) + done, len(frames) + total)
+            surface = None if sun is None else sun.turned(frame.tt_s - middle)
+            image = light.on_canvas(
+                light.read(frame), frame, canvas, disc_anchor(frame), levels[base[done]], surface=surface
+            )
+            stack.add(image, edge_weight(image))
+    used += [(frames[index], "ground") for index in base]
     image, count = stack.result()
     if not np.isfinite(image).any():
         raise InputError("no frame reaches the picture: the track and the frames do not belong together")

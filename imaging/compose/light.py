@@ -26,12 +26,11 @@ class Level:
 
 @dataclass(frozen=True)
 class Light:
-    """How frames are turned into light: the rig's bias, whether colour is kept, stars without dark rings, threads.
+    """How frames are turned into light: whether colour is kept, stars without dark rings, threads.
 
     `filters` collects what the frames read were taken through.
     """
 
-    bias_adu: float = 0.0
     colour: bool = False
     ringless: bool = False
     threads: int = max(1, min(4, os.cpu_count() or 1))
@@ -143,10 +142,10 @@ def disc_level(frame: Frame, limb_px: tuple[float, float, float], body: str) -> 
     return Level(dark, bright - dark)
 
 
-def exposure_level(frame: Frame, registered: Registered, bias_adu: float) -> Level:
+def exposure_level(frame: Frame, registered: Registered) -> Level:
     """Return the level that turns values into counts a second."""
     exposure_s = registered.exposure_s if np.isfinite(registered.exposure_s) else frame.exposure_s
-    return Level(bias_adu, float(exposure_s) if exposure_s and exposure_s > 0 else 1.0)
+    return Level(registered.camera.bias_adu, float(exposure_s) if exposure_s and exposure_s > 0 else 1.0)
 
 
 def limb_steepness(frame: Frame, limb_px: tuple[float, float, float], level: Level) -> float:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -20,6 +20,23 @@ if TYPE_CHECKING:
     from planner.events.family import Geometry
     from planner.sequence.models import Plan
     from planner.sky.observer import Observer
+
+
+@dataclass(frozen=True)
+class Camera:
+    """What a frame's values need: name of the rig, bias, value of saturation, light lost in the corner (0..1)."""
+
+    name: str = ""
+    bias_adu: float = 0.0
+    saturation_adu: float = np.inf
+    vignetting: float = 0.0
+
+    @classmethod
+    def of(cls, plan: Plan) -> Camera:
+        """Return the camera of a plan's rig."""
+        sensor = plan.rig.sensor
+        full = min(2.0**sensor.bit_depth - 1, sensor.full_well_e / sensor.gain_e_adu + sensor.bias_adu)
+        return cls(plan.rig.name, sensor.bias_adu, full, plan.rig.optics.vignetting)
 
 
 @dataclass(frozen=True)
@@ -50,6 +67,7 @@ class Registered:
     exposure_s: float
     verdict: str
     believed: bool = True
+    camera: Camera = Camera()
 
     @property
     def measured(self) -> bool:
@@ -155,12 +173,13 @@ def gather(
         except FrameSetAside as problem:
             aside.append(problem)
     rows.sort(key=lambda item: item[0])
-    frames = []
+    frames, camera = [], Camera.of(plan)
     if rows:
         sky = _Sky(geometry_at(np.array([tt_s for tt_s, _, _ in rows])), observer)
         for place, (tt_s, index, path) in enumerate(rows):
             try:
-                frames.append(_registered(track, index, path, tt_s, sky, place, keep_off_track))
+                frame = _registered(track, index, path, tt_s, sky, place, keep_off_track)
+                frames.append(replace(frame, camera=camera))
             except FrameSetAside as problem:
                 aside.append(problem)
     if not frames:

@@ -102,8 +102,8 @@ def _visit(
     light: Light,
     left_out: list[tuple[str, str]],
 ) -> tuple[np.ndarray, list[Registered]] | None:
-    planes = (3,) if light.colour else ()
-    stack = new_stack(choices.blend, (cell.height_px, cell.width_px, *planes), len(frames), choices.scratch)
+    shape = (cell.height_px, cell.width_px, *((3,) if light.colour else ()))
+    stack = new_stack(choices.blend, shape, len(frames), choices.scratch)
     kept = []
     for frame in frames:
         try:
@@ -114,7 +114,7 @@ def _visit(
         anchor = frame.target_ra_deg, frame.target_dec_deg
         up = up_pa_deg(material, choices.orientation, anchor, frame.tt_s, on_disc=False)
         image = light.on_canvas(
-            pixels, frame, replace(cell, up_pa_deg=up), anchor, exposure_level(pixels, frame, light.bias_adu)
+            pixels, frame, replace(cell, up_pa_deg=up), anchor, exposure_level(pixels, frame)
         )
         stack.add(image - _border_level(image))
         kept.append(frame)

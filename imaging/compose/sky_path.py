@@ -15,13 +15,14 @@ from imaging.compose.canvas import Canvas, canvas_around
 from imaging.compose.choices import Choices
 from imaging.compose.ground import sky_surface
 from imaging.compose.light import Light
+from imaging.compose.matching import Matching, edge_weight
 from imaging.compose.material import Material
 from imaging.compose.orientation import up_pa_deg
 from imaging.compose.patch import lay_patch, patch_box
 from imaging.compose.picture import Drawn, Picture
 from imaging.compose.plane import sky_to_plane
 from imaging.compose.stack import new_stack
-from imaging.compose.visit import PATCH_MOST_PX, Visit, learnt_flat, stacked
+from imaging.compose.visit import PATCH_MOST_PX, Visit, learnt_flats, stacked
 from planner.errors import InputError
 
 PATCH_LEAST_PX = 5.0
@@ -33,7 +34,7 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
     groups = list(material.passages())
     shape = (canvas.height_px, canvas.width_px, *((3,) if light.colour else ()))
     ground = new_stack(choices.blend, shape, len(groups), choices.scratch)
-    flat = learnt_flat(material, material.frames, light)
+    flats, matching = learnt_flats(material.frames, light), Matching()
     left_out: list[tuple[str, str]] = []
     visits: list[Visit] = []
     done = 0
@@ -44,10 +45,15 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
         done += 1
 
     for _, frames in groups:
-        visit = stacked(material, frames, canvas, anchor, choices, light, flat, left_out, tick)
+        visit = stacked(frames, canvas, anchor, choices, light, flats, left_out, tick)
         if visit is not None:
-            ground.add(_level(visit.stars))
-            visits.append(replace(visit, stars=np.zeros((0, 0), np.float32)))
+            stars = np.full(shape, np.nan, np.float32)
+            stars[visit.box] = _level(visit.stars)
+            stars, gain = matching.matched(stars)
+            weight = np.zeros(shape[:2], np.float32)
+            weight[visit.box] = edge_weight(stars[visit.box])
+            ground.add(stars, weight)
+            visits.append(replace(visit, stars=np.zeros((0, 0), np.float32), patch=gain * visit.patch))
     if not visits:
         why = f"; the first: {left_out[0][0]} {left_out[0][1]}" if left_out else ""
         raise InputError(f"no frame registered on stars is left{why}")
@@ -60,7 +66,12 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
         f"the stars are a {choices.blend} blend of {len(visits)} visits",
         "the target of each visit is stacked on itself and laid in at its measured place, with a soft edge",
         "values are counts a second above a smooth background, which was taken off every frame",
-        f"vignetting {100 * (flat.a + flat.b):.0f} % in the corner, {flat.source}, was divided out",
+        *(
+            f"vignetting {100 * (flat.a + flat.b):.0f} % in the corner, {flat.source}, was divided out"
+            for flat in flats.values()
+        ),
+        f"starlight of each visit was brought to that of the first where they overlap: factors "
+        f"{min(matching.gains):.2f} to {max(matching.gains):.2f}; their edges are feathered",
     ]
     if max(visit.merged for visit in visits) > 1:
         notes.append(

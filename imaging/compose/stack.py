@@ -1,34 +1,47 @@
-"""Blending many warped frames into one: each frame is seen once, and what is kept does not grow with their number.
+"""Blending many warped frames into one; what is kept in memory does not grow with their number.
 
-Mean, minimum and maximum keep one picture in memory. Median and clipped mean need every value of a pixel at once:
-they keep the frames in memory while those fit, else in a scratch file, and work through it in bands of rows.
-NaN means "this frame does not reach here" and takes no part.
+Mean, minimum and maximum keep one picture. Median and clipped mean need every value of a pixel: they keep the
+frames while those fit in memory, else in a scratch file that they work through in bands of rows, else (many large
+frames) they have the frames come round again; see `rounds`. NaN means "this frame does not reach here".
 """
 
 from __future__ import annotations
 
 import shutil
 import tempfile
-from collections.abc import Callable
+from collections.abc import Iterator, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Protocol
 
 import numpy as np
 
+from imaging.compose.reductions import clipped_mean, median
+from imaging.compose.rounds import ClippedRounds, MedianRounds
 from planner.errors import InputError
 
 BLENDS = ("mean", "median", "clipped", "min", "max")
 MEMORY_BYTES = 1_200_000_000
+SCRATCH_BYTES = 4_000_000_000  # beyond it, reading frames again costs less than their copies on a disk
 BAND_BYTES = 150_000_000
 PIECE_BYTES = 2_000_000
+FULL_WEIGHT = 250  # weights are kept in bytes
 
 
 class Stack(Protocol):
-    """Something that frames are added to, one at a time."""
+    """Something that frames are added to: for every turn, the frames it names, one at a time.
 
-    def add(self, image: np.ndarray) -> None:
-        """Take in one warped frame."""
+    `how`: where values are kept, in words.
+    """
+
+    how: str
+
+    def turns(self) -> Iterator[Sequence[int]]:
+        """Yield the indices of the frames to add now; a stack that keeps no values asks for them several times."""
+        ...
+
+    def add(self, image: np.ndarray, weight: np.ndarray | None = None) -> None:
+        """Take in one warped frame; `weight` (rows, columns) in 0..1 counts in means."""
         ...
 
     def result(self) -> tuple[np.ndarray, np.ndarray]:
@@ -42,44 +55,60 @@ def new_stack(
     frames: int,
     scratch: Path | None = None,
     memory_bytes: int = MEMORY_BYTES,
-    kappa: float = 3.0,
+    again: bool = False,
 ) -> Stack:
     """Return a stack for up to `frames` frames of this shape.
 
-    Raises InputError when the blend is unknown, or when the scratch folder has no room, before any frame is read.
+    `again`: the caller can give every frame several times (`turns`), so that no large scratch file is needed.
+    `scratch`: the user's folder for one, used whatever its size. Raises InputError when the blend is unknown, or when
+    the scratch folder has no room, before any frame is read.
     """
     if blend == "mean":
-        return _Mean(shape)
+        return _Mean(shape, frames)
     if blend in ("min", "max"):
-        return _Extreme(shape, np.fmin if blend == "min" else np.fmax)
+        return _Extreme(shape, frames, np.fmin if blend == "min" else np.fmax)
     if blend not in BLENDS:
         raise InputError(f"--blend: found {blend!r}; allowed are {', '.join(BLENDS)}")
-    reduce = median if blend == "median" else lambda cube: clipped_mean(cube, kappa)
-    return _Banded(shape, frames, reduce, scratch, memory_bytes)
+    needed = 4 * frames * int(np.prod(shape))
+    if again and scratch is None and needed > memory_bytes:
+        if needed > SCRATCH_BYTES or not has_room(Path(tempfile.gettempdir()), needed):
+            rounds = MedianRounds if blend == "median" else ClippedRounds
+            return rounds(shape, frames, memory_bytes)
+    return _Banded(shape, frames, blend, scratch, memory_bytes)
 
 
 class _Mean:
-    def __init__(self, shape: tuple[int, ...]):
+    def __init__(self, shape: tuple[int, ...], frames: int):
         self.total = np.zeros(shape, np.float64)
-        self.count = np.zeros(shape, np.int32)
+        self.share = np.zeros(shape, np.float32)
+        self.count = np.zeros(shape, np.uint16 if frames < 65536 else np.uint32)
+        self.frames, self.how = frames, "sums are kept in memory"
 
-    def add(self, image: np.ndarray) -> None:
+    def turns(self) -> Iterator[Sequence[int]]:
+        yield range(self.frames)
+
+    def add(self, image: np.ndarray, weight: np.ndarray | None = None) -> None:
         reached = np.isfinite(image)
-        np.add(self.total, image, out=self.total, where=reached)
+        heavy = np.float32(1) if weight is None else spread_over(weight, image)
+        np.add(self.total, image * heavy, out=self.total, where=reached)
+        np.add(self.share, heavy, out=self.share, where=reached)
         self.count += reached
 
     def result(self) -> tuple[np.ndarray, np.ndarray]:
         with np.errstate(invalid="ignore"):
-            return (self.total / np.where(self.count, self.count, np.nan)).astype(np.float32), self.count
+            return (self.total / np.where(self.share, self.share, np.nan)).astype(np.float32), self.count
 
 
 class _Extreme:
-    def __init__(self, shape: tuple[int, ...], choose: np.ufunc):
+    def __init__(self, shape: tuple[int, ...], frames: int, choose: np.ufunc):
         self.best = np.full(shape, np.nan, np.float32)
-        self.count = np.zeros(shape, np.int32)
-        self.choose = choose
+        self.count = np.zeros(shape, np.uint16 if frames < 65536 else np.uint32)
+        self.choose, self.frames, self.how = choose, frames, "the extreme is kept in memory"
 
-    def add(self, image: np.ndarray) -> None:
+    def turns(self) -> Iterator[Sequence[int]]:
+        yield range(self.frames)
+
+    def add(self, image: np.ndarray, weight: np.ndarray | None = None) -> None:
         self.choose(self.best, image, out=self.best)
         self.count += np.isfinite(image)
 
@@ -88,31 +117,47 @@ class _Extreme:
 
 
 class _Banded:
-    def __init__(
-        self,
-        shape: tuple[int, ...],
-        frames: int,
-        reduce: Callable[[np.ndarray], tuple[np.ndarray, np.ndarray]],
-        scratch: Path | None,
-        memory_bytes: int,
-    ):
-        self.shape, self.reduce, self.added = shape, reduce, 0
-        needed = 4 * frames * int(np.prod(shape))
-        self.file = None
-        if needed <= memory_bytes:
-            self.cube = np.empty((frames, *shape), np.float32)
-        else:
-            folder = Path(scratch) if scratch else Path(tempfile.gettempdir())
-            require_room(folder, needed, f"blending {frames} frames by median or clipped mean")
-            self.file = tempfile.TemporaryFile(dir=folder)
-            self.file.truncate(needed)
+    """Every value is kept, in memory or in a scratch file; weights as bytes beside them."""
 
-    def add(self, image: np.ndarray) -> None:
-        if self.file is None:
+    def __init__(
+        self, shape: tuple[int, ...], frames: int, blend: str, scratch: Path | None, memory_bytes: int
+    ):
+        self.shape, self.blend, self.frames, self.added = shape, blend, frames, 0
+        values = frames * int(np.prod(shape))
+        self.weighted: bool | None = None
+        self.in_memory = 4 * values <= memory_bytes
+        self.how = f"all values are kept in memory ({4 * values / 1e9:.2g} GB)"
+        if self.in_memory:
+            self.cube = np.empty((frames, *shape), np.float32)
+            return
+        self.folder = Path(scratch) if scratch else Path(tempfile.gettempdir())
+        require_room(self.folder, 5 * values, f"blending {frames} frames by median or clipped mean")
+        self.file = tempfile.TemporaryFile(dir=self.folder)
+        self.file.truncate(4 * values)
+        self.how = f"all values are kept in a scratch file ({4 * values / 1e9:.2g} GB)"
+
+    def turns(self) -> Iterator[Sequence[int]]:
+        yield range(self.frames)
+
+    def add(self, image: np.ndarray, weight: np.ndarray | None = None) -> None:
+        if self.weighted is None:
+            self.weighted = weight is not None and self.blend == "clipped"
+            if self.weighted and self.in_memory:
+                self.weights = np.empty((self.frames, *self.shape[:2]), np.uint8)
+            elif self.weighted:
+                self.weight_file = tempfile.TemporaryFile(dir=self.folder)
+        if self.in_memory:
             self.cube[self.added] = image
         else:
             # written, not mapped: mapped pages of the scratch file would count as memory of the process
             self.file.write(np.ascontiguousarray(image, np.float32).data)
+        if self.weighted:
+            assert weight is not None
+            heavy = np.ceil(FULL_WEIGHT * weight).astype(np.uint8)
+            if self.in_memory:
+                self.weights[self.added] = heavy
+            else:
+                self.weight_file.write(heavy.data)
         self.added += 1
 
     def result(self) -> tuple[np.ndarray, np.ndarray]:
@@ -123,125 +168,78 @@ class _Banded:
             rows = max(1, BAND_BYTES // (4 * self.added * row_values))
             for first in range(0, self.shape[0], rows):
                 band = slice(first, min(first + rows, self.shape[0]))
-                cube = self._band(band, row_values)
+                cube, weight = self._band(band)
                 # small pieces stay in the processor's cache, and two threads share them
                 step = max(1, PIECE_BYTES // (4 * self.added * row_values))
 
-                def piece(low: int, cube: np.ndarray = cube, first: int = first, step: int = step) -> None:
+                def piece(
+                    low: int,
+                    cube: np.ndarray = cube,
+                    weight: np.ndarray | None = weight,
+                    first: int = first,
+                    step: int = step,
+                ) -> None:
                     high = min(low + step, cube.shape[1])
                     into = slice(first + low, first + high)
-                    image[into], count[into] = self.reduce(cube[:, low:high])
+                    part = None if weight is None else weight[:, low:high]
+                    image[into], count[into] = self._reduced(cube[:, low:high], part)
 
                 with ThreadPoolExecutor(2) as pool:
                     list(pool.map(piece, range(0, cube.shape[1], step)))
-        if self.file is not None:
+        if not self.in_memory:
             self.file.close()
+            if self.weighted:
+                self.weight_file.close()
         return image, count
 
-    def _band(self, band: slice, row_values: int) -> np.ndarray:
-        if self.file is None:
-            return self.cube[: self.added, band]
+    def _reduced(self, cube: np.ndarray, weight: np.ndarray | None) -> tuple[np.ndarray, np.ndarray]:
+        if self.blend == "median":
+            return median(cube)
+        if weight is not None:
+            weight = np.broadcast_to(
+                weight.reshape(weight.shape + (1,) * (cube.ndim - weight.ndim)).astype(np.float32), cube.shape
+            )
+        return clipped_mean(cube, weight=weight)
+
+    def _band(self, band: slice) -> tuple[np.ndarray, np.ndarray | None]:
+        """Return the values, and the weights if any, of these rows of every frame."""
+        if self.in_memory:
+            return self.cube[: self.added, band], self.weights[: self.added, band] if self.weighted else None
         cube = np.empty((self.added, band.stop - band.start, *self.shape[1:]), np.float32)
-        frame_values = self.shape[0] * row_values
+        self._read(self.file, cube, self.shape, band)
+        if not self.weighted:
+            return cube, None
+        weight = np.empty(cube.shape[:3], np.uint8)
+        self._read(self.weight_file, weight, self.shape[:2], band)
+        return cube, weight
+
+    def _read(self, file, into: np.ndarray, shape: tuple[int, ...], band: slice) -> None:  # type: ignore[no-untyped-def]
+        row = int(np.prod(shape[1:]))
         for index in range(self.added):
-            self.file.seek(4 * (index * frame_values + band.start * row_values))
-            self.file.readinto(cube[index].data)
-        return cube
+            file.seek(into.itemsize * row * (index * shape[0] + band.start))
+            file.readinto(into[index].data)
+
+
+def spread_over(weight: np.ndarray, image: np.ndarray) -> np.ndarray:
+    """Return a weight (rows, columns) in a shape that multiplies an image of one or three planes."""
+    return weight if image.ndim == 2 else weight[..., None]
+
+
+def _free_bytes(folder: Path) -> int:
+    while not folder.exists():
+        folder = folder.parent
+    return shutil.disk_usage(folder).free
+
+
+def has_room(folder: Path, needed_bytes: int) -> bool:
+    """Return whether the disk of `folder` has room for as much and a twentieth."""
+    return _free_bytes(folder) >= 1.05 * needed_bytes
 
 
 def require_room(folder: Path, needed_bytes: int, purpose: str) -> None:
     """Raise InputError when the disk of `folder` has less room than needed and a twentieth."""
-    while not folder.exists():
-        folder = folder.parent
-    free = shutil.disk_usage(folder).free
-    if free < 1.05 * needed_bytes:
+    if not has_room(folder, needed_bytes):
         raise InputError(
-            f"{folder}: {purpose} needs {needed_bytes / 1e9:.1f} GB of disk, {free / 1e9:.1f} GB are free; "
-            "choose fewer frames, a coarser --scale, --scratch on a larger disk, or --blend mean"
+            f"{folder}: {purpose} needs {needed_bytes / 1e9:.1f} GB of disk, {_free_bytes(folder) / 1e9:.1f} GB are "
+            "free; choose fewer frames, a coarser --scale, --scratch on a larger disk, or --blend mean"
         )
-
-
-def _sorted(cube: np.ndarray) -> np.ndarray:
-    """Return the cube sorted along axis 0, NaN last as infinity.
-
-    Up to 40 planes by Batcher's merge exchange (Knuth 1998, The Art of Computer Programming 3, 5.2.2, algorithm M):
-    every exchange is a minimum and a maximum of whole planes, several times faster here than sorting pixel by pixel.
-    """
-    ordered = np.where(np.isfinite(cube), cube, np.float32(np.inf))
-    n = len(ordered)
-    if n > 40:
-        ordered.sort(axis=0)
-        return ordered
-    top = 1 << max(0, (n - 1).bit_length() - 1)
-    p = top if n > 1 else 0
-    low = np.empty(ordered.shape[1:], ordered.dtype)
-    while p > 0:
-        q, r, d = top, 0, p
-        while d > 0:
-            for i in range(n - d):
-                if i & p == r:
-                    np.minimum(ordered[i], ordered[i + d], out=low)
-                    np.maximum(ordered[i], ordered[i + d], out=ordered[i + d])
-                    ordered[i] = low
-            d, q, r = q - p, q >> 1, p
-        p >>= 1
-    return ordered
-
-
-def _middle(ordered: np.ndarray, count: np.ndarray) -> np.ndarray:
-    """Return the median along axis 0 of sorted values of which the first `count` are finite."""
-    n = len(ordered)
-    if count.min() == n:
-        return 0.5 * (ordered[(n - 1) // 2] + ordered[n // 2])
-    low = np.take_along_axis(ordered, np.maximum((count - 1) // 2, 0)[None], axis=0)[0]
-    high = np.take_along_axis(ordered, np.minimum(count // 2, n - 1)[None], axis=0)[0]
-    return np.where(count > 0, 0.5 * (low + high), np.nan)
-
-
-def median(cube: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Return the median along axis 0 without NaN, and the number of values."""
-    count = np.isfinite(cube).sum(axis=0)
-    with np.errstate(invalid="ignore"):
-        return _middle(_sorted(cube), count).astype(np.float32), count
-
-
-def clipped_mean(cube: np.ndarray, kappa: float = 3.0, rounds: int = 3) -> tuple[np.ndarray, np.ndarray]:
-    """Return the mean along axis 0 of what lies within `kappa` sigma of the median, and the number of values.
-
-    The first sigma is 1.4826 times the median absolute deviation, not below 0.8 of its median over the cube (a
-    handful of values that happen to agree would else reject their neighbours); later ones are the standard
-    deviation of what is left, corrected for the cut. Pixels with fewer than 3 values are plain means.
-    """
-    cube = np.asarray(cube, np.float32)
-    finite = np.isfinite(cube)
-    count = finite.sum(axis=0, dtype=np.int32)
-    filled = np.where(finite, cube, np.float32(0))
-    with np.errstate(invalid="ignore", divide="ignore"):
-        if len(cube) < 3:
-            return (filled.sum(axis=0) / np.where(count, count, np.nan)).astype(np.float32), count
-        center = _middle(_sorted(cube), count).astype(np.float32)
-        sigma = 1.4826 * _middle(_sorted(np.abs(cube - center)), count)
-        enough = count >= 3
-        if enough.any():
-            sigma = np.maximum(sigma, 0.8 * np.median(sigma[enough]))
-        # about the median, so that squares of large levels do not drown small spreads in float32
-        away = np.where(finite, cube - center, np.float32(0))
-        limit = np.maximum(kappa * sigma, 1e-6 * np.abs(center))
-        limit = np.where(enough, limit, np.inf).astype(np.float32)
-        keep = (np.abs(away) <= limit) & finite
-        used, mean = count, np.zeros_like(center)
-        for _ in range(rounds):
-            used = keep.sum(axis=0, dtype=np.int32)
-            kept = np.where(keep, away, np.float32(0))
-            mean = kept.sum(axis=0) / np.maximum(used, 1)
-            variance = np.einsum("i...,i...->...", kept, kept) / np.maximum(used, 1) - mean**2
-            spread = np.sqrt(np.maximum(variance, 0) * used / np.maximum(used - 1, 1))
-            limit = np.maximum(kappa * np.maximum(1.03 * spread, 0.8 * sigma), 1e-6 * np.abs(center))
-            limit = np.where(enough, limit, np.inf).astype(np.float32)
-            again = (np.abs(away - mean) <= limit) & finite
-            if np.array_equal(again, keep):
-                break
-            keep = again
-        used = keep.sum(axis=0, dtype=np.int32)
-        mean = np.where(keep, away, np.float32(0)).sum(axis=0) / np.maximum(used, 1)
-        return np.where(count > 0, center + mean, np.nan).astype(np.float32), used

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+SKY_ABOVE_BLACK = 6.0  # sigmas of the background: grain stays quiet, also where fewer frames reach
 SKY_TONE = 0.10  # of 0 (black) to 1 (white): a dark grey, so that faint stars have a ground to stand on
 WHITE_TONE = 0.97
 FAINT_TONE = 0.45  # where the faintest body that must be seen goes
@@ -68,14 +69,14 @@ def background(image: np.ndarray) -> tuple[float, float]:
 def measured_stretch(image: np.ndarray, tone: str, faintest: float = np.inf) -> Stretch:
     """Return the stretch for a picture of this tone (`disc`, `stars`, `photograph`, `linear`), measured on it.
 
-    Stars: the background goes to a dark grey, the brightest pixels (99.98 %) to white. Disc: what lies off the
+    Stars: the background goes to a dark grey, the brightest pixels (0.05 %) to white. Disc: what lies off the
     disc goes to black, the brightest hundredth of the disc to just under white; where a body of peak value
     `faintest` would be lost beside it, the curve bends until it is seen. A photograph keeps its own tones.
     """
     values = _sample(image)
     if not values.size:
         return Stretch("linear", 0.0, 1.0)
-    top = float(np.percentile(values, 99.98))
+    top = float(np.percentile(values, 99.98 if tone != "stars" else 99.95))
     level, sigma = background(image)
     if tone == "photograph":
         return Stretch("srgb", 0.0, 1.0)
@@ -92,7 +93,7 @@ def measured_stretch(image: np.ndarray, tone: str, faintest: float = np.inf) -> 
         if not 0 < share < _light_of(FAINT_TONE):
             return Stretch("srgb", black, white)
         return Stretch("asinh", black, white, _softening(faintest - black, white - black, FAINT_TONE))
-    black = level - 3.0 * max(sigma, 1e-6 * abs(level), 1e-9)
+    black = level - SKY_ABOVE_BLACK * max(sigma, 1e-6 * abs(level), 1e-9)
     white = max(top, level + 50 * max(sigma, 1e-9))
     return Stretch("asinh", black, white, _softening(level - black, white - black))
 

@@ -155,9 +155,7 @@ class _Shots:
             if not frames:
                 raise InputError(f"--steady-on {self.steady_on}: no frame is registered on it")
         self.frames = frames
-        self.light = Light(
-            material.plan.rig.sensor.bias_adu, threads=film.threads, ringless=material.reference == "stars"
-        )
+        self.light = Light(threads=film.threads, ringless=material.reference == "stars")
         self.left_out: list[tuple[str, str]] = []
         self.stretch: Stretch | None = None
         geometry = material.geometry_at(np.array([frame.tt_s for frame in frames]))
@@ -236,7 +234,7 @@ class _Shots:
         anchor, up = self.view(index)
         pixels = self.light.read(frame)
         if frame.solved_by == "stars":
-            level = exposure_level(pixels, frame, self.light.bias_adu)
+            level = exposure_level(pixels, frame)
             pixels = replace(pixels, data=pixels.data - sky_surface(pixels.data - level.dark, order=2))
         else:
             level = disc_level(pixels, frame.limb_px, frame.solved_by.split("-")[0])

@@ -12,7 +12,8 @@ from imaging.compose.choices import Choices
 from imaging.compose.exposures import by_exposure, merged, not_burnt_out
 from imaging.compose.ground import falloff, measured_falloff, sky_surface
 from imaging.compose.light import Light, exposure_level
-from imaging.compose.material import Material, Registered
+from imaging.compose.matching import edge_weight
+from imaging.compose.material import Camera, Registered
 from imaging.compose.plane import plane_to_sky, sky_to_plane
 from imaging.compose.stack import new_stack
 from imaging.frames.frame import Frame
@@ -23,13 +24,14 @@ PATCH_MOST_PX = 60.0
 
 @dataclass(frozen=True)
 class Visit:
-    """What a visit gives: stars on the picture's canvas, the target on a small canvas of its own.
+    """What a visit gives: stars in a `box` (rows, columns) of the picture, the target on a small canvas of its own.
 
     `target_deg`: mean measured direction. `merged`: number of exposure lengths that the target's patch is made of.
     """
 
     frames: tuple[Registered, ...]
     stars: np.ndarray
+    box: tuple[slice, slice]
     patch: np.ndarray
     patch_canvas: Canvas
     target_deg: tuple[float, float]
@@ -56,31 +58,37 @@ class Flat:
         return replace(frame, data=(frame.data - dark) / share + dark, colour=colour)
 
 
-def learnt_flat(material: Material, frames: tuple[Registered, ...], light: Light, most: int = 8) -> Flat:
+def learnt_flats(frames: tuple[Registered, ...], light: Light) -> dict[Camera, Flat]:
+    """Return the vignetting of each camera."""
+    cameras = dict.fromkeys(frame.camera for frame in frames)
+    return {
+        camera: _learnt_flat(camera, [frame for frame in frames if frame.camera == camera], light)
+        for camera in cameras
+    }
+
+
+def _learnt_flat(camera: Camera, frames: list[Registered], light: Light, most: int = 8) -> Flat:
     """Return the vignetting that the sky of a few frames shows, else the one that the rig states."""
     chosen = np.unique(np.linspace(0, len(frames) - 1, most).astype(int))
     skies = []
     for index in chosen.tolist():
         try:
-            skies.append(light.read(frames[index]).data - light.bias_adu)
+            skies.append(light.read(frames[index]).data - camera.bias_adu)
         except FrameSetAside:
             continue
     measured = measured_falloff(skies) if skies else None
     if measured is None:
-        return Flat(
-            material.plan.rig.optics.vignetting, 0.0, "as the rig states it, the sky being too faint to tell"
-        )
+        return Flat(camera.vignetting, 0.0, "as the rig states it, the sky being too faint to tell")
     return Flat(*measured, f"measured on the sky of {len(skies)} frames")
 
 
 def stacked(
-    material: Material,
     frames: list[Registered],
     canvas: Canvas,
     anchor_deg: tuple[float, float],
     choices: Choices,
     light: Light,
-    flat: Flat,
+    flats: dict[Camera, Flat],
     left_out: list[tuple[str, str]],
     tick: Callable[[], None],
 ) -> Visit | None:
@@ -94,38 +102,76 @@ def stacked(
     patch_shape = (patch_canvas.height_px, patch_canvas.width_px, *planes)
     groups = by_exposure(frames)
     layers, kept, stars, whole = [], [], None, None
+    box = _covered(canvas, anchor_deg, groups[0], light)
+    window = canvas.window(*box)
     for number, group in enumerate(groups):
-        star_stack = None
-        if number == 0:
-            star_shape = (canvas.height_px, canvas.width_px, *planes)
-            star_stack = new_stack("clipped", star_shape, len(group), choices.scratch)
         patch = new_stack("clipped", patch_shape, len(group))
         bright = new_stack("clipped", patch_shape, len(group))
-        for frame in group:
-            tick()
-            try:
-                pixels = light.read(frame)
-            except FrameSetAside as problem:
-                left_out.append((frame.path.name, problem.reason))
-                continue
-            level = exposure_level(pixels, frame, light.bias_adu)
-            good = not_burnt_out(pixels, _saturation_adu(material)) if len(groups) > 1 else None
-            pixels = without_sky(flat.applied(pixels, level.dark), level.dark)
-            if star_stack is not None:
-                star_stack.add(light.on_canvas(pixels, frame, canvas, anchor_deg, level))
-            place = frame.target_ra_deg, frame.target_dec_deg
-            patch.add(light.on_canvas(pixels, frame, patch_canvas, place, level, good))
-            if number == len(groups) - 1 and good is not None:
-                bright.add(light.on_canvas(pixels, frame, patch_canvas, place, level))
-            kept.append(frame)
-        if star_stack is not None:
-            stars = star_stack.result()[0]
+        last = number == len(groups) - 1 and len(groups) > 1
+        stack = patch
+        if number == 0:
+            star_shape = (window.height_px, window.width_px, *planes)
+            stack = new_stack("clipped", star_shape, len(group), choices.scratch, again=True)
+        seen: set[int] = set()
+        for turn in stack.turns():
+            for index in turn:
+                frame, new = group[index], index not in seen
+                seen.add(index)
+                if new:
+                    tick()
+                try:
+                    pixels = light.read(frame)
+                except FrameSetAside as problem:
+                    if new:
+                        left_out.append((frame.path.name, problem.reason))
+                    continue
+                level = exposure_level(pixels, frame)
+                good = not_burnt_out(pixels, frame.camera.saturation_adu) if len(groups) > 1 else None
+                pixels = without_sky(flats[frame.camera].applied(pixels, level.dark), level.dark)
+                if number == 0:
+                    image = light.on_canvas(pixels, frame, window, anchor_deg, level)
+                    stack.add(image, edge_weight(image))
+                if not new:
+                    continue
+                place = frame.target_ra_deg, frame.target_dec_deg
+                patch.add(light.on_canvas(pixels, frame, patch_canvas, place, level, good))
+                if last:
+                    bright.add(light.on_canvas(pixels, frame, patch_canvas, place, level))
+                kept.append(frame)
+        if number == 0:
+            stars = stack.result()[0]
         layers.append(patch.result()[0])
-        whole = bright.result()[0] if number == len(groups) - 1 and len(groups) > 1 else None
+        whole = bright.result()[0] if last else None
     if not kept or stars is None:
         return None
     kept.sort(key=lambda frame: frame.tt_s)
-    return Visit(tuple(kept), stars, merged(layers, whole), patch_canvas, target, len(groups))
+    return Visit(tuple(kept), stars, box, merged(layers, whole), patch_canvas, target, len(groups))
+
+
+def _covered(
+    canvas: Canvas, anchor_deg: tuple[float, float], frames: list[Registered], light: Light
+) -> tuple[slice, slice]:
+    """Return the (rows, columns) of the picture that the frames reach; all of it when they differ in scale."""
+    whole = slice(0, canvas.height_px), slice(0, canvas.width_px)
+    first = frames[0]
+    if any(abs(frame.scale_arcsec_px / first.scale_arcsec_px - 1) > 0.01 for frame in frames):
+        return whole
+    try:
+        rows, columns = light.read(first).data.shape
+    except FrameSetAside:
+        return whole
+    edge = np.linspace(0, 1, 9)
+    rim_x = np.concatenate([edge, edge, 0 * edge, 0 * edge + 1]) * columns
+    rim_y = np.concatenate([0 * edge, 0 * edge + 1, edge, edge]) * rows
+    places = [canvas.from_sky(*anchor_deg, *frame.pointing.pixel_to_sky(rim_x, rim_y)) for frame in frames]
+    x_px, y_px = np.concatenate(places, axis=1)
+    if not np.isfinite([x_px, y_px]).all():
+        return whole
+    low, high = int(y_px.min()) - 8, int(y_px.max()) + 9
+    left, right = int(x_px.min()) - 8, int(x_px.max()) + 9
+    if low >= canvas.height_px or left >= canvas.width_px or high <= 0 or right <= 0:
+        return slice(0, 1), slice(0, 1)
+    return slice(max(0, low), min(high, canvas.height_px)), slice(max(0, left), min(right, canvas.width_px))
 
 
 def without_sky(frame: Frame, dark: float) -> Frame:
@@ -135,11 +181,6 @@ def without_sky(frame: Frame, dark: float) -> Frame:
     if colour is not None:
         colour = np.stack([plane - sky_surface(plane - dark) for plane in np.moveaxis(colour, 2, 0)], axis=2)
     return replace(frame, data=data, colour=colour)
-
-
-def _saturation_adu(material: Material) -> float:
-    sensor = material.plan.rig.sensor
-    return min(2.0**sensor.bit_depth - 1, sensor.full_well_e / sensor.gain_e_adu + sensor.bias_adu)
 
 
 def _patch_canvas(

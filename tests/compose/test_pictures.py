@@ -16,7 +16,6 @@ from imaging.compose.stretch import background
 from imaging.discs.limb import fit_limb
 from planner.cli.main import run_with
 from planner.sequence.documents import load_plan
-from planner.sky.stars import stars_in_field
 
 
 def material_of(rehearsal, **options):
@@ -93,35 +92,6 @@ def test_the_moon_is_registered_on_its_limb_and_uranus_stands_beside_it(occultat
     )
     assert fit.x_px == pytest.approx(picture.canvas.anchor_x_px, abs=0.1)
     assert fit.y_px == pytest.approx(picture.canvas.anchor_y_px, abs=0.1)
-
-
-def test_stars_lie_at_their_catalogue_places(loop):
-    """Star registration: 0.05 px rms of the truth is required. Catalogue: Gaia DR3 at the middle date."""
-    picture = compose_picture(material_of(loop), Choices())
-    field = stars_in_field(picture.anchor_ra_deg, picture.anchor_dec_deg, 9.0, picture.reference_tt_s, 6.8)
-    x, y = picture.canvas.from_sky(picture.anchor_ra_deg, picture.anchor_dec_deg, field.ra_deg, field.dec_deg)
-    apart = []
-    for cx, cy in zip(x, y, strict=True):
-        lonely = np.sort(np.hypot(x - cx, y - cy))[1] > 12
-        planet = min(np.hypot(item.x_px - cx, item.y_px - cy) for item in picture.drawn) < 40
-        row, column = round(float(cy)), round(float(cx))
-        if (
-            planet
-            or not lonely
-            or not (6 < row < picture.image.shape[0] - 7 and 6 < column < picture.image.shape[1] - 7)
-        ):
-            continue
-        cut = picture.image[row - 3 : row + 4, column - 3 : column + 4].astype(float)
-        if not np.isfinite(cut).all() or picture.count[row, column] < 3:
-            continue
-        light = np.clip(cut - np.median(cut), 0, None)
-        gy, gx = np.mgrid[row - 3 : row + 4, column - 3 : column + 4]
-        apart.append(((light * gx).sum() / light.sum() - cx, (light * gy).sum() / light.sum() - cy))
-    apart = np.array(apart)
-    assert len(apart) > 15
-    # stars of 1 pixel's width, measured by their moments: the mean is the registration, the scatter mostly the measure
-    assert np.abs(np.median(apart, axis=0)).max() < 0.05
-    assert np.sqrt(np.mean(apart**2)) < 0.25
 
 
 def test_the_path_of_mars_has_one_place_a_visit_and_none_in_the_ground(loop):
