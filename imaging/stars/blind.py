@@ -18,7 +18,7 @@ from imaging.stars.hypotheses import Hypotheses, hypotheses_of
 from imaging.stars.index import QuadIndex
 from imaging.stars.prescreen import scores
 from imaging.stars.refine import Field, Match, Sky, grow
-from imaging.stars.verify import ACCEPT_LOG10
+from imaging.stars.verify import ACCEPT_LOG10, Tally
 
 TOLERANCE = 0.013
 GIVE_UP_S = 8.0
@@ -56,7 +56,7 @@ def solve_blind(
     height, width = field.shape
     half = field.half_diagonal_px
     x0, y0 = (width - 1) / 2, (height - 1) / 2
-    best, trials, number = 0.0, 0, 0
+    best, trials, number, tally = 0.0, 0, 0, Tally()
     for stars, neighbours in _PASSES:
         used = min(stars, len(field.x_px))
         if used < 4:
@@ -89,12 +89,14 @@ def solve_blind(
                 for i in range(_MOST_LIKELY, min(_MOST_SCORED, len(guesses)))
                 if process_time() - began < give_up_s / 2
             ]
-            match, log10 = _first_accepted(turn, field, sky, tt_s, lens, began + give_up_s)
+            match, log10 = _first_accepted(turn, field, sky, tt_s, lens, tally, began + give_up_s)
             best = min(best, log10)
             if match is not None:
                 return Attempt(match, best, trials, log10)
         waiting.sort(key=lambda one: -one[0])
-        match, log10 = _first_accepted(waiting[:_MOST_GROWN], field, sky, tt_s, lens, began + give_up_s)
+        match, log10 = _first_accepted(
+            waiting[:_MOST_GROWN], field, sky, tt_s, lens, tally, began + give_up_s
+        )
         best = min(best, log10)
         if match is not None:
             return Attempt(match, best, trials, log10)
@@ -109,6 +111,7 @@ def _first_accepted(
     sky: Sky,
     tt_s: float,
     lens: Lens,
+    tally: Tally,
     until_s: float,
 ) -> tuple[Match | None, float]:
     """Grow hypotheses in turn; return the first match that can be defended, and the best evidence seen (log10)."""
@@ -127,7 +130,8 @@ def _first_accepted(
         match = grow(camera, lens, field, sky.take(rows), guesses.image_stars[i], own)
         if match is None:
             continue
-        log10 = match.evidence.chance_log10(guesses.trials(i, number))
+        log_share = guesses.log_share(i) - float(np.log(number * (number + 1)))
+        log10, match = tally.add(match, sky.index[rows], log_share)
         best = min(best, log10)
         if log10 < ACCEPT_LOG10:
             return match, log10

@@ -12,7 +12,7 @@ from imaging.stars.groups import local_groups
 from imaging.stars.hypotheses import hypotheses, pair_groups, turned_by
 from imaging.stars.prescreen import promising
 from imaging.stars.refine import Field, Match, Sky, grow
-from imaging.stars.verify import ACCEPT_LOG10
+from imaging.stars.verify import ACCEPT_LOG10, Tally
 
 SCALE_TOLERANCE = 0.12
 ROLL_TOLERANCE_DEG = 8.0
@@ -82,7 +82,7 @@ def solve_hinted(
     radius = half / focal if lens.projection != "TAN" else np.arctan(half / focal)
     field_sr = height * width / focal**2 if radius < 0.5 else 2 * np.pi * (1 - np.cos(radius)) * 0.6
     x0, y0 = (width - 1) / 2, (height - 1) / 2
-    best, trials = 0.0, 0
+    best, trials, tally = 0.0, 0, Tally()
     around = sky_near(min(2.2 * radius, np.pi), 2 * _SPARSE / field_sr)
     per_field = len(around) * field_sr / (2 * np.pi * (1 - np.cos(min(2.2 * radius, np.pi))))
     for turn, effort in enumerate(SPARSE_EFFORTS if per_field < _SPARSE else EFFORTS, 1):
@@ -106,13 +106,15 @@ def solve_hinted(
         guesses = hypotheses(field, sky, image, groups, pairs, focal, allowed, parity, lens.projection)
         if rotation_deg is not None:
             guesses = guesses.take(turned_by(guesses, rotation_deg) < ROLL_TOLERANCE_DEG)
+        guesses = guesses.near(center, radius, effort.reach + 0.3)
         trials += len(guesses)
         for i in promising(guesses, field, sky):
             camera = Camera(guesses.axes[i], guesses.focal_px[i], x0, y0, half, projection=lens.projection)
             match = grow(camera, lens, field, sky, guesses.image_stars[i], guesses.sky_stars[i])
             if match is None:
                 continue
-            log10 = match.evidence.chance_log10(guesses.trials(i, turn))
+            # over the sets tried the odds are shared out as 1 / (n (n + 1)), which sums to one
+            log10, match = tally.add(match, sky.index, guesses.log_share(i) - np.log(turn * (turn + 1)))
             best = min(best, log10)
             if log10 < ACCEPT_LOG10:
                 return Attempt(match, best, trials, log10)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -14,6 +14,7 @@ CODE_TOLERANCE = 0.012  # 1 % of distortion across a frame changes a local quad'
 # of true groups over the fields of benchmarks/drawn_fields.py and real frames: median 4e-4, 95 % below 1.5e-3
 _SHAPE_ERROR, _PLACE_ERROR_PX = 6e-4, 0.3
 _SPREAD_MAG = 0.25
+_POINTED = 0.3  # how near to the hint, in radii of the field, all places are alike
 _LOOSEST = 0.05  # residual of a group, in its own radius
 _MAGNITUDE_SPREAD = 2.2  # of four stars between frame and catalogue: stretched pictures, colours, thin cloud
 
@@ -45,12 +46,16 @@ class Hypotheses:
             self.weight[chosen],
         )
 
-    def trials(self, i: int, turn: int) -> float:
-        """Return for how many hypotheses one must answer when the i-th is accepted, in the n-th set tried (from 1).
+    def near(self, center: np.ndarray, radius_rad: float, reach: float) -> Hypotheses:
+        """Return those whose middle lies within `reach` radii of a direction; the nearer, the likelier beforehand."""
+        away = np.arccos(np.clip(self.axes[:, 2] @ center, -1, 1)) / radius_rad
+        weighed = replace(self, weight=self.weight / (_POINTED**2 + away**2))
+        kept = np.flatnonzero(away < reach)
+        return weighed.take(kept[np.argsort(-weighed.weight[kept], kind="stable")])
 
-        The odds of error are shared out by weight, not evenly, and over sets as 1 / (n (n + 1)), which sums to one.
-        """
-        return float(self.weight.sum() / self.weight[i]) * turn * (turn + 1)
+    def log_share(self, i: int) -> float:
+        """Return the logarithm of the share of the odds that the i-th hypothesis has beforehand."""
+        return float(np.log(self.weight[i]) - np.log(self.weight.sum()))
 
 
 def turned_by(guesses: Hypotheses, rotation_deg: float) -> np.ndarray:

@@ -14,7 +14,7 @@ from imaging.stars.roundness import averaged
 from imaging.stars.verify import Evidence, crowding
 
 GATE_SIGMAS = 3.5
-_SHARPEST_PX = 0.25  # a detection is never trusted better than this while matching
+SHARPEST_PX = 0.25  # a detection is never trusted better than this while matching
 _GROWN_ENOUGH = 120  # pairs after which growing ends and the whole catalogue is matched
 _NEIGHBOURS = 6
 MAGNITUDE_SIGMAS = 3.0
@@ -184,11 +184,12 @@ def grow(
     sky: Sky,
     detection: np.ndarray,
     star: np.ndarray,
+    sharpest_px: float = SHARPEST_PX,
 ) -> Match | None:
     """Grow the pairs (`detection`, `star`) of a hypothesis over the frame; None when the evidence speaks against it.
 
     Each catalogue star is tested once, when the camera fitted without it predicts it; those predicted best come
-    first. A hypothesis is dropped when a dozen stars say nothing for it.
+    first. A hypothesis is dropped when a dozen stars say nothing for it. No place is trusted better than `sharpest_px`.
     """
     sky, star, row = _in_reach(start, field, sky, star)
     evidence = Evidence()
@@ -206,9 +207,9 @@ def grow(
             break
         spread2 = np.maximum(np.trace(fit.covariance_at(x[new], y[new]), axis1=1, axis2=2) / 2, 0)
         catalogue_px = sky.sigma_arcsec[new] / fit.camera.scale_arcsec_px
-        sigma = np.sqrt(spread2 + catalogue_px**2 + _SHARPEST_PX**2 + fit.sigma_model_px**2)
+        sigma = np.sqrt(spread2 + catalogue_px**2 + sharpest_px**2 + fit.sigma_model_px**2)
         gate = GATE_SIGMAS * sigma
-        order = np.argsort(gate, kind="stable")[: max(3, int(3 * 1.6**step))]
+        order = np.argsort(gate, kind="stable")[: int(1.5 * 1.6**step)]
         order = order[gate[order] < (widest if step else 2 * widest)]
         if len(order) == 0:
             break
@@ -328,7 +329,7 @@ def _without_outliers(
     fit: CameraFit, field: Field, sky: Sky, detection: np.ndarray, star: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray]:
     """Drop pairs far off the fit (6 sigma), never below six."""
-    sigma2 = field.sigma_px[detection] ** 2 + fit.sigma_model_px**2 + _SHARPEST_PX**2
+    sigma2 = field.sigma_px[detection] ** 2 + fit.sigma_model_px**2 + SHARPEST_PX**2
     sigma2 = sigma2 + (sky.sigma_arcsec[star] / fit.camera.scale_arcsec_px) ** 2
     keep = (fit.residual_px**2).sum(axis=1) < 36 * sigma2
     return (detection[keep], star[keep]) if keep.sum() >= 6 else (detection, star)

@@ -152,6 +152,7 @@ def solve_detections(
             attempt = solve_sparse(
                 field,
                 sky_near,
+                center,
                 hint.scale_arcsec_px,
                 hint.scale_tolerance,
                 hint.lens or unknown_lens(3),

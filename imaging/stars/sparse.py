@@ -16,19 +16,25 @@ from imaging.stars.hinted import Attempt
 from imaging.stars.hypotheses import Hypotheses, hypotheses_of, turned_by
 from imaging.stars.prescreen import promising
 from imaging.stars.refine import Field, Sky, grow
+from imaging.stars.roundness import narrowed
+from imaging.stars.verify import Tally
 
-ACCEPT_LOG10 = -7.0
+ACCEPT_LOG10 = -6.0
 WIDEST_SCALE_TOLERANCE = 0.02
-_IMAGE_STARS, _SKY_STARS = 28, 80
+_IMAGE_STARS, _SKY_STARS = 45, 160
+_RANK = 8  # detections up to about this rank are alike; further down a catalogue star is ever less likely
 _SHORTEST = 0.12  # of the half-diagonal: a close pair says nothing about roll
 _MAGNITUDES = 1.2  # difference of brightness of a pair, between frame and catalogue
 _MOST_GROWN = 20
+_LITTLE_AIR = 0.1  # of the width of the linear terms: what the air does to a field of a degree at 45 degrees
+_SHARPEST_PX = 0.1
 ROLL_TOLERANCE_DEG = 6.0
 
 
 def solve_sparse(
     field: Field,
     sky_near: Callable[[float, float], Sky],
+    center: np.ndarray,
     scale_arcsec_px: float,
     scale_tolerance: float,
     lens: Lens,
@@ -64,20 +70,41 @@ def solve_sparse(
     )
     if rotation_deg is not None:
         guesses = guesses.take(turned_by(guesses, rotation_deg) < ROLL_TOLERANCE_DEG)
+    ranked = guesses.weight / (_RANK + guesses.image_stars).prod(axis=1)
+    guesses = replace(guesses, weight=ranked).near(center, radius, reach)
     trials, best = len(guesses), 0.0
-    for i in promising(guesses, flat, sky, _MOST_GROWN):
-        x0 = (field.shape[1] - 1) / 2 + lens.axis[0] * half
-        y0 = (field.shape[0] - 1) / 2 + lens.axis[1] * half
-        camera = Camera(
-            guesses.axes[i], guesses.focal_px[i], x0, y0, half, lens.terms, lens.coefficients, lens.projection
-        )
-        match = grow(camera, lens, field, sky, guesses.image_stars[i], guesses.sky_stars[i])
-        if match is None:
-            continue
-        log10 = match.evidence.chance_log10(guesses.trials(i, 1))
-        best = min(best, log10)
-        if log10 < ACCEPT_LOG10:
-            return Attempt(match, best, trials, log10)
+    x0 = (field.shape[1] - 1) / 2 + lens.axis[0] * half
+    y0 = (field.shape[0] - 1) / 2 + lens.axis[1] * half
+    tally = Tally()
+    turns = promising(guesses, flat, sky, _MOST_GROWN)
+    # little refraction first, then as much as there may be: the odds of error are halved between the two
+    for held in (narrowed(lens, _LITTLE_AIR, 1.0), lens):
+        for i in turns:
+            camera = Camera(
+                guesses.axes[i],
+                guesses.focal_px[i],
+                x0,
+                y0,
+                half,
+                lens.terms,
+                lens.coefficients,
+                lens.projection,
+            )
+            match = grow(
+                camera,
+                held,
+                field,
+                sky,
+                guesses.image_stars[i],
+                guesses.sky_stars[i],
+                sharpest_px=_SHARPEST_PX,
+            )
+            if match is None:
+                continue
+            log10, match = tally.add(match, sky.index, guesses.log_share(i) - np.log(2))
+            best = min(best, log10)
+            if log10 < ACCEPT_LOG10:
+                return Attempt(match, best, trials, log10)
     return Attempt(None, best, trials)
 
 

@@ -16,6 +16,7 @@ import numpy as np
 
 DETECTED_SHARES = (0.03, 0.1, 0.25, 0.5, 0.8, 0.95)
 ACCEPT_LOG10 = -9.0
+_SHARED = 3  # pairs that make two matches the same
 _MOST = 1e7  # one star says no more than this: profiles have wings, and detections come in twos
 
 
@@ -37,11 +38,44 @@ class Evidence:
         self.tested += len(ratio)
         self.met += int((ratio > 1).sum())
 
+    def log_mean(self) -> float:
+        """Return the natural logarithm of the likelihood ratio, averaged over the shares of stars detected."""
+        top = self.log_ratio.max()
+        return float(top + np.log(np.mean(np.exp(self.log_ratio - top))))
+
     def chance_log10(self, trials: float) -> float:
         """Return log10 of the probability that any of `trials` false hypotheses looks this good."""
-        top = self.log_ratio.max()
-        mean = top + np.log(np.mean(np.exp(self.log_ratio - top)))
-        return float(min(0.0, (-mean + np.log(max(trials, 1.0))) / np.log(10)))
+        return float(min(0.0, (-self.log_mean() + np.log(max(trials, 1.0))) / np.log(10)))
+
+
+@dataclass
+class Tally:
+    """The evidence of many hypotheses, those that come to the same pairs of stars taken together.
+
+    Each likelihood ratio counts with the share that its hypothesis had beforehand. Shares sum to one, so the mean of
+    the sum under chance is one at most, and it exceeds 1/a with probability a at most (Markov).
+    """
+
+    pairs: list[set[tuple[int, int]]] = field(default_factory=list)
+    log_sum: list[float] = field(default_factory=list)
+    best: list[tuple[float, Any]] = field(default_factory=list)
+
+    def add(self, match: Any, names: np.ndarray, log_share: float) -> tuple[float, Any]:
+        """Add a match, its stars by `names`; return log10 of the false-alarm probability of its like, and the best."""
+        log_ratio = log_share + match.evidence.log_mean()
+        own = set(zip(match.detection.tolist(), names[match.star].tolist(), strict=True))
+        for i, others in enumerate(self.pairs):
+            if len(own & others) >= _SHARED:
+                self.log_sum[i] = float(np.logaddexp(self.log_sum[i], log_ratio))
+                if log_ratio > self.best[i][0]:
+                    self.pairs[i], self.best[i] = own, (log_ratio, match)
+                break
+        else:
+            i = len(self.pairs)
+            self.pairs.append(own)
+            self.log_sum.append(log_ratio)
+            self.best.append((log_ratio, match))
+        return min(0.0, -self.log_sum[i] / np.log(10)), self.best[i][1]
 
 
 def crowding(x_px: np.ndarray, y_px: np.ndarray, tree: Any, area_px2: float) -> np.ndarray:
