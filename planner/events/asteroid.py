@@ -11,13 +11,13 @@ import numpy as np
 
 from planner.errors import InputError
 from planner.events import cautions
+from planner.events.against_stars import geometry_among_stars
 from planner.events.budget import angle_term, moments, site_terms
 from planner.events.contacts import RAD_ARCSEC, Passing, Shape, star_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
-from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
+from planner.events.instants import InstantMaker, civil_day, nearest_of
 from planner.events.occulter import Occulter, disc_of, magnitude_drop, occulter_of, star_of
 from planner.events.shadow import ShadowPath, shadow_path
-from planner.events.visibility import sun_altitude_deg, view
 from planner.sky import bodies, places, stars, timescale
 from planner.sky.observer import Observer
 from planner.sky.timescale import DAY_S
@@ -218,19 +218,9 @@ class AsteroidOccultsStar:
         tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
         occulter, star = occulter_of(event.spec), star_of(event.spec)
         vector = star.vector(observer, tt_s)
-        seen = view(vector, observer, tt_s)
-        ra_deg, dec_deg = places.radec_deg(vector)
-        return Geometry(
-            tt_s=tt_s,
-            discs={occulter.body: disc_of(occulter, observer, tt_s, event.spec.radii)},
-            target=star.name,
-            reference="stars",
-            altitude_deg=seen.altitude_deg,
-            azimuth_deg=seen.azimuth_deg,
-            zenith_pa_deg=zenith_pa_deg(vector, observer, tt_s),
-            sun_altitude_deg=sun_altitude_deg(observer, tt_s),
-            stars=((star.name, ra_deg, dec_deg, star.magnitude),),
-        )
+        shown = {occulter.body: disc_of(occulter, observer, tt_s, event.spec.radii)}
+        point = (star.name, *places.radec_deg(vector), star.magnitude)
+        return geometry_among_stars(star.name, vector, shown, observer, tt_s, (point,))
 
     def _checked(self, body: str) -> str:
         if body not in self.targets:

@@ -10,10 +10,11 @@ import numpy as np
 
 from planner.errors import InputError
 from planner.events import cautions
+from planner.events.against_stars import geometry_among_stars
 from planner.events.budget import EPHEMERIS_SIGMA_KM, angle_term, moments, site_terms
 from planner.events.contacts import RAD_ARCSEC, Passing, body_track
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
-from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
+from planner.events.instants import InstantMaker, civil_day, nearest_of
 from planner.events.moon_planet import planet_shape
 from planner.events.roots import changes_of_sign, minima_near, samples
 from planner.events.visibility import darkness_needed_deg, sun_altitude_deg, view
@@ -155,18 +156,8 @@ class PlanetsMeet:
         """Return both planets as discs at these times; the target is the nearer one."""
         tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
         near, far, passing = self._passing(event, observer)
-        vector_km = passing.near(observer, tt_s)
-        seen = view(vector_km, observer, tt_s)
-        return Geometry(
-            tt_s=tt_s,
-            discs={body: discs.sky_disc(body, observer, tt_s, event.spec.radii) for body in (near, far)},
-            target=near,
-            reference="stars",
-            altitude_deg=seen.altitude_deg,
-            azimuth_deg=seen.azimuth_deg,
-            zenith_pa_deg=zenith_pa_deg(vector_km, observer, tt_s),
-            sun_altitude_deg=sun_altitude_deg(observer, tt_s),
-        )
+        shown = {body: discs.sky_disc(body, observer, tt_s, event.spec.radii) for body in (near, far)}
+        return geometry_among_stars(near, passing.near(observer, tt_s), shown, observer, tt_s)
 
     def _checked(self, body: str, key: str = "event.body") -> str:
         if body not in self.targets:

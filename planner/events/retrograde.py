@@ -9,12 +9,12 @@ import numpy as np
 
 from planner.errors import InputError
 from planner.events import cautions, conjunctions
+from planner.events.against_stars import planet_among_stars
 from planner.events.apparent import apparent_syzygies, mean_motion, motion, true_motion
 from planner.events.budget import EPHEMERIS_SIGMA_KM
 from planner.events.family import Circumstances, Event, EventSpec, Geometry
-from planner.events.instants import InstantMaker, civil_day, nearest_of, zenith_pa_deg
+from planner.events.instants import InstantMaker, civil_day, nearest_of
 from planner.events.roots import roots_between
-from planner.events.visibility import sun_altitude_deg, view
 from planner.sky import bodies, discs, places, timescale
 from planner.sky.observer import Observer
 
@@ -124,20 +124,7 @@ class RetrogradeTrack:
 
     def geometry(self, event: Event, observer: Observer | None, tt_s: np.ndarray) -> Geometry:
         """Return the planet as a disc among the stars at these times."""
-        tt_s = np.atleast_1d(np.asarray(tt_s, dtype=float))
-        body = event.spec.body
-        vector_km = places.direction(body, observer, tt_s).vector_km
-        seen = view(vector_km, observer, tt_s)
-        return Geometry(
-            tt_s=tt_s,
-            discs={body: discs.sky_disc(body, observer, tt_s)},
-            target=body,
-            reference="stars",
-            altitude_deg=seen.altitude_deg,
-            azimuth_deg=seen.azimuth_deg,
-            zenith_pa_deg=zenith_pa_deg(vector_km, observer, tt_s),
-            sun_altitude_deg=sun_altitude_deg(observer, tt_s),
-        )
+        return planet_among_stars(event.spec.body, observer, tt_s)
 
     def _checked(self, body: str) -> str:
         if body not in self.targets:
