@@ -19,6 +19,7 @@ from imaging.stars.index import QuadIndex
 from imaging.stars.prescreen import scores
 from imaging.stars.refine import Field, Match, Sky, grow
 from imaging.stars.verify import ACCEPT_LOG10, Tally
+from planner.sky.starlist import rows_in_force
 
 TOLERANCE = 0.013
 GIVE_UP_S = 8.0
@@ -52,7 +53,7 @@ def solve_blind(
     """
     began = process_time()
     sky = whole_sky(tt_s)
-    row_of = _rows_by_index(sky.index)
+    row_of = _rows_by_index(sky.index)[rows_in_force()]  # the index is of the installed stars
     height, width = field.shape
     half = field.half_diagonal_px
     x0, y0 = (width - 1) / 2, (height - 1) / 2

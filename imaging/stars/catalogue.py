@@ -9,6 +9,7 @@ import numpy as np
 
 from imaging.stars.refine import Sky
 from planner.sky.places import radec_deg
+from planner.sky.starlist import list_in_force
 
 if TYPE_CHECKING:
     from planner.sky.stars import StarField
@@ -20,7 +21,7 @@ _WIDE_RAD = 0.7  # up to here a field alone is brought to the date, in a hundred
 
 
 @lru_cache(maxsize=4)
-def _whole(epoch: int) -> tuple[Sky, Any]:
+def _whole(epoch: int, in_force: int) -> tuple[Sky, Any]:
     from scipy.spatial import cKDTree
 
     from planner.sky.stars import all_stars
@@ -46,7 +47,7 @@ def vectors_of(ra_deg: np.ndarray, dec_deg: np.ndarray) -> np.ndarray:
 
 def whole_sky(tt_s: float) -> Sky:
     """Return all catalogue stars at a date, brightest first."""
-    return _whole(round(tt_s / _EPOCH_STEP_S))[0]
+    return _whole(round(tt_s / _EPOCH_STEP_S), list_in_force())[0]
 
 
 def stars_near(center: np.ndarray, radius_rad: float, tt_s: float, stars_per_sr: float | None = None) -> Sky:
@@ -66,7 +67,7 @@ def rows_near(
     center: np.ndarray, radius_rad: float, tt_s: float, stars_per_sr: float | None = None
 ) -> np.ndarray:
     """Return the rows of `whole_sky` within a radius of a unit vector, ascending, to about a mean density."""
-    sky, tree = _whole(round(tt_s / _EPOCH_STEP_S))
+    sky, tree = _whole(round(tt_s / _EPOCH_STEP_S), list_in_force())
     radius = min(radius_rad, np.pi)
     if radius >= np.pi - 1e-6:
         rows = np.arange(len(sky))

@@ -66,7 +66,8 @@ class MoonOccultsStar:
         rows = zodiac_stars(self.magnitude_limit)
         table = starlist.star_list()[rows]
         found = happening(start_tt_s, end_tt_s, observer, star_table=table, tick=tick)
-        names = stars.star_names(rows[np.array([index for _, index, _ in found], dtype=int)])
+        chosen = rows[np.array([index for _, index, _ in found], dtype=int)]
+        names = stars.star_names(starlist.rows_in_force()[chosen])
         events = [self._event(name, middle) for name, (_, _, middle) in zip(names, found, strict=True)]
         return [event for event in events if predicted(event, observer).happens]
 

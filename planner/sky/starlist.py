@@ -2,14 +2,16 @@
 
 Proper motions are the difference between the Gaia (2016.0) and Hipparcos-2 (1991.25) positions, parallaxes are those of
 Hipparcos-2; a star in Gaia alone has an unknown motion, which its sigma says. Stars of Hipparcos that Gaia's package
-lacks are added. The list is a file in the user's cache folder when that can be written, memory mapped; otherwise it
-is built in memory (1.5 s).
+lacks are added; so are those of a catalogue that the user names. The list is a file in the user's cache folder when
+that can be written, memory mapped; otherwise it is built in memory (1.5 s).
 """
 
 from __future__ import annotations
 
-from contextlib import suppress
+from collections.abc import Iterator
+from contextlib import contextmanager, suppress
 from functools import lru_cache
+from itertools import count
 from pathlib import Path
 
 import numpy as np
@@ -21,7 +23,7 @@ _HIPPARCOS_YEAR = 1991.25
 _FORMAT = 6
 _MAS = np.pi / 648e6
 # 1-sigma of a motion that nobody measured, mas/yr: half of the median total motion of stars of this brightness
-_UNKNOWN_MOTION_MAS_YEAR = 20.0
+UNKNOWN_MOTION_MAS_YEAR = 20.0
 
 STAR = np.dtype(
     [
@@ -42,6 +44,7 @@ STAR = np.dtype(
         ("v", "<f4"),
     ]
 )
+IN_FORCE = np.dtype([*STAR.descr, ("installed", "?")])
 _GAIA = np.dtype(
     [("source", "<i8"), ("ra", "<f8"), ("dec", "<f8"), ("g", "<f4"), ("bp", "<f4"), ("rp", "<f4")]
 )
@@ -70,6 +73,78 @@ def star_list() -> np.ndarray:
             _write(cached, table)
     table.setflags(write=False)
     return table
+
+
+_deeper: np.ndarray | None = (
+    None  # the installed list with the stars of a user's catalogue, while one is in force
+)
+_turns = count(1)
+_turn = 0
+
+
+def list_in_force() -> int:
+    """Return a number that changes with what `stars_in_force` returns, for caches of what was made of it."""
+    return _turn
+
+
+def stars_in_force() -> np.ndarray:
+    """Return all stars, those of a user's catalogue included, a structured array sorted by declination (read only)."""
+    return star_list() if _deeper is None else _deeper
+
+
+def rows_in_force() -> np.ndarray:
+    """Return the row in `stars_in_force` of each row of `star_list`."""
+    if _deeper is None:
+        return np.arange(len(star_list()))
+    return np.flatnonzero(_deeper["installed"])
+
+
+@contextmanager
+def deeper_catalogue(path: Path | None) -> Iterator[None]:
+    """Add the stars of a catalogue file (see `planner.sky.usercatalogue`) to all that is asked of the star list.
+
+    A star that is installed already (within 3 arcsec and 2 magnitudes) stays one star, and takes the catalogue's motion
+    where nobody had measured its own. The blind index stays that of the installed stars.
+    None changes nothing. Raises InputError when the file is no catalogue.
+    """
+    global _deeper, _turn
+    if path is None:
+        yield
+        return
+    from planner.sky.usercatalogue import read_catalogue
+
+    before = _deeper, _turn
+    try:
+        _deeper, _turn = _with(star_list(), read_catalogue(path)), next(_turns)
+        yield
+    finally:
+        _deeper, _turn = before
+
+
+def _with(installed: np.ndarray, added: np.ndarray) -> np.ndarray:
+    from scipy.spatial import cKDTree
+
+    both = np.zeros(len(installed), IN_FORCE)
+    for name in STAR.names or ():
+        both[name] = installed[name]
+    both["installed"] = True
+    places = [_triads(np.radians(one["ra_deg"]), np.radians(one["dec_deg"]))[0] for one in (installed, added)]
+    distance, row = cKDTree(places[0], balanced_tree=False, compact_nodes=False).query(
+        places[1], distance_upper_bound=3.0 * 1000 * _MAS
+    )
+    same = np.isfinite(distance)
+    same[same] &= np.abs(installed["v"][row[same]] - added["v"][same]) < 2.0
+    better = same & (added["sigma_pm"] < UNKNOWN_MOTION_MAS_YEAR)
+    better[better] &= installed["sigma_pm"][row[better]] >= UNKNOWN_MOTION_MAS_YEAR
+    for name in ("pm_ra", "pm_dec", "sigma_pm"):
+        both[name][row[better]] = added[name][better]
+    new = np.zeros(int((~same).sum()), IN_FORCE)
+    for name in STAR.names or ():
+        new[name] = added[name][~same]
+    stars = np.concatenate([both, new])
+    stars = stars[np.argsort(stars["dec_deg"], kind="stable")]
+    stars.setflags(write=False)
+    return stars
 
 
 def _cache_file() -> Path | None:
@@ -174,7 +249,7 @@ def _merge(gaia: np.ndarray, hip: dict[str, np.ndarray]) -> np.ndarray:
     both["bp"] = np.where(known, gaia["bp"], np.nan)
     both["rp"] = np.where(known, gaia["rp"], np.nan)
     both["sigma_mas"], both["sigma_year"] = 0.2, EPOCH_YEAR
-    both["sigma_pm"] = _UNKNOWN_MOTION_MAS_YEAR
+    both["sigma_pm"] = UNKNOWN_MOTION_MAS_YEAR
     both["v"] = _v_magnitude(both["g"], both["bp"], both["rp"])
     into = row[chosen]
     # projection of the displacement on the sky at the Hipparcos position

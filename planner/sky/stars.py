@@ -1,7 +1,8 @@
 """Stars at a date: all stars in a field, and one star by name, with proper motion and parallax.
 
-To G = 10 everywhere on the sky. Positions are accurate to what `sigma_mas` says: 0.2 mas at 2016.0, then growing
-with the uncertainty of the motion (0.05 mas/yr where Hipparcos saw the star, 20 mas/yr where nobody did).
+To G = 10 everywhere on the sky, and as deep as a catalogue that the user names (`deeper_catalogue`). Positions are
+accurate to what `sigma_mas` says: 0.2 mas at 2016.0, then growing with the uncertainty of the motion (0.05 mas/yr where
+Hipparcos saw the star, 20 mas/yr where nobody did).
 """
 
 from __future__ import annotations
@@ -17,7 +18,7 @@ from planner.sky.bodies import AU_KM
 from planner.sky.ephemeris import position_km
 from planner.sky.observer import Observer
 from planner.sky.places import observer_position_km, radec_deg, separation_arcsec, unit_vector
-from planner.sky.starlist import EPOCH_YEAR, STAR, star_list
+from planner.sky.starlist import EPOCH_YEAR, STAR, stars_in_force
 from planner.sky.timescale import YEAR_S, tdb_s
 
 _MAS = np.pi / 648e6
@@ -74,7 +75,7 @@ class StarField:
 
     def stars(self) -> list[Star]:
         """Return each as a `Star`, with its motion."""
-        return [_star(star_list()[row]) for row in self.index]
+        return [_star(stars_in_force()[row]) for row in self.index]
 
 
 @dataclass(frozen=True)
@@ -138,7 +139,7 @@ def stars_in_field(
     `magnitude_limit` is in `magnitude` (V); `brightest`: about so many of them at most. A field of 20 degrees takes
     20 ms.
     """
-    table = star_list()
+    table = stars_in_force()
     slack = _FASTEST_DEG_YEAR * abs(tt_s - _EPOCH_TT_S) / YEAR_S + 0.001
     dec = table["dec_deg"]
     low, high = np.searchsorted(dec, [dec_deg - radius_deg - slack, dec_deg + radius_deg + slack])
@@ -165,7 +166,7 @@ def stars_in_field(
 
 def all_stars(tt_s: float, magnitude_limit: float | None = None) -> StarField:
     """Return all stars at the date, brightest first, to a limit of `magnitude` (V)."""
-    table = star_list()
+    table = stars_in_force()
     rows = np.arange(len(table))
     if magnitude_limit is not None:
         rows = rows[np.asarray(table["v"]) <= magnitude_limit]
@@ -173,7 +174,7 @@ def all_stars(tt_s: float, magnitude_limit: float | None = None) -> StarField:
 
 
 def _at_date(rows: np.ndarray, tt_s: float) -> StarField:
-    table = star_list()[rows]
+    table = stars_in_force()[rows]
     order = np.argsort(table["v"], kind="stable")
     table, rows = table[order], rows[order]
     years = (tt_s - _EPOCH_TT_S) / YEAR_S
@@ -210,11 +211,18 @@ def _at_date(rows: np.ndarray, tt_s: float) -> StarField:
 
 def star_names(index: np.ndarray) -> tuple[str, ...]:
     """Return the names of rows of the star list: `HIP 21421`, or `Gaia DR3 ...`."""
-    return tuple(_name(row) for row in star_list()[index])
+    return tuple(_name(row) for row in stars_in_force()[index])
 
 
 def _name(row: np.void) -> str:
-    return f"HIP {row['hip']}" if row["hip"] > 0 else f"Gaia DR3 {row['source']}"
+    if row["hip"] > 0:
+        return f"HIP {row['hip']}"
+    own = (
+        "installed" in (row.dtype.names or ()) and not row["installed"]
+    )  # of a catalogue that the user named
+    if not own:
+        return f"Gaia DR3 {row['source']}"
+    return str(row["source"]) if row["source"] > 0 else f"{row['ra_deg']:.5f},{row['dec_deg']:+.5f}"
 
 
 def _star(row: np.void) -> Star:
@@ -255,7 +263,7 @@ def star(
         return _given_star(text, epoch_year, pm_mas_yr, parallax_mas, magnitude, sigma_mas)
     if epoch_year is not None or pm_mas_yr is not None:
         raise InputError(f"star: found {name!r} with an epoch or a motion; allowed only with RA,DEC")
-    table = star_list()
+    table = stars_in_force()
     hip = re.fullmatch(r"hip\s*(\d{1,6})", text, re.IGNORECASE)
     number = int(hip[1]) if hip else NAMED.get(text.lower())
     if number is not None:
