@@ -16,7 +16,7 @@ from imaging.frames.render import Cut, Faults, Picture, Scene, Truth
 from planner.outputs import refuse_existing, whole_file
 from planner.provenance import versions
 from planner.sequence.documents import observer_of
-from planner.sequence.models import Plan
+from planner.sequence.models import Plan, Site
 from planner.sky.observer import itrs_position_km
 from planner.sky.timescale import utc_iso
 
@@ -186,10 +186,17 @@ def _write_truth(
     table["stamped_utc_mid"] = [utc_iso(truth.stamped_tt_s, 6) for truth in truths]
     for column in columns:
         table[column] = [getattr(truth, column) for truth in truths]
-    told = {key: value for key, value in asdict(faults).items() if not isinstance(value, dict)}
+    told = {key: _plain(value) for key, value in asdict(faults).items()}
     table.meta = {"plan": plan.title, "seed": seed, "faults": told, "provenance": versions()}
     with whole_file(path, force) as part:
         table.write(part, format="ascii.ecsv", overwrite=True)
+
+
+def _plain(value: Any) -> Any:
+    """Return a fault as the header of a table can hold it: a site by where it is."""
+    if isinstance(value, Site):
+        return f"{value.latitude_deg}, {value.longitude_deg}, {value.height_m} m"
+    return value
 
 
 def _ascii(text: str) -> str:

@@ -13,12 +13,13 @@ from imaging.track.contacts import time_contacts
 from imaging.track.displaced import displaced_site
 from imaging.track.findings import Diagnosis, Finding, Question, diagnose, explained_limit_arcsec
 from imaging.track.measure import Measurer
-from imaging.track.measurement import Measurement
+from imaging.track.measurement import AS_PREDICTED, LIGHT_ONLY, Measurement
 from imaging.track.nominal import Promise
 from imaging.track.path import PredictedPath
 from imaging.track.refinements import camera_findings, clock_findings, frame_findings, majority_camera
 from imaging.track.result import CheckResult, SetAside, proper
 from imaging.track.sightings import Sightings
+from imaging.track.startimes import time_star
 from planner.errors import FrameSetAside, InputError, NoSolutionError
 from planner.sequence.models import Plan
 
@@ -144,6 +145,12 @@ def understand(
         if diagnosis is not None and not diagnosis.explained:
             diagnosis = _from_another_site(diagnosis, promise, question)
         findings += [problem] if problem else list(diagnosis.findings) if diagnosis else []
+    star = None
+    if promise.times_a_star:
+        star, told = time_star(measurements, promise, proper(geometry.target))
+        findings += told
+        if star is not None and star.timings:
+            measurements = [_light_only(m) for m in measurements]
     rows = rows_of(measurements, used, promise.path, sightings, diagnosis)
     result = CheckResult(
         title=plan.title,
@@ -156,12 +163,21 @@ def understand(
         set_aside=tuple(aside),
         diagnosis=diagnosis,
         findings=tuple(findings),
+        contacts=star.timings if star is not None else (),
+        star=star,
         line=_line(promise, measurements),
         provenance=_provenance(plan),
     )
     if diagnosis is not None and question is not None:
         result = _with_fit(result, plan, promise, question, diagnosis, [measurements[i] for i in used])
     return result, measurements
+
+
+def _light_only(m: Measurement) -> Measurement:
+    """Return a measurement that says, where it has no place, that it serves for the star's light all the same."""
+    if m.measured or m.star is None or AS_PREDICTED in m.reason:
+        return m
+    return replace(m, reason=LIGHT_ONLY + m.reason)
 
 
 def _one_kind(measurements: Sequence[Measurement], reference: str) -> np.ndarray:
@@ -327,7 +343,7 @@ def _with_fit(
         rotation_sigma_deg=camera.up_pa_sigma_deg,
         scale_arcsec_px=camera.scale_arcsec_px,
         scale_sigma_arcsec_px=camera.scale_sigma_arcsec_px,
-        contacts=time_contacts(reading, promise, plan, camera.scale_arcsec_px),
+        contacts=result.contacts or time_contacts(reading, promise, plan, camera.scale_arcsec_px),
         findings=result.findings + clock.findings + camera.findings,
     )
 

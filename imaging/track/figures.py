@@ -36,9 +36,13 @@ def _axes(rows: int, size: tuple[float, float], sharex: bool = True):  # type: i
 
 
 def _times(result: CheckResult) -> np.ndarray:
+    return _moments(result.times_tt_s)
+
+
+def _moments(tt_s: np.ndarray) -> np.ndarray:
     from planner.sky.timescale import datetime_from_tt_s
 
-    moments = datetime_from_tt_s(np.atleast_1d(result.times_tt_s))
+    moments = datetime_from_tt_s(np.atleast_1d(tt_s))
     return np.array(
         [moment.replace(tzinfo=None) for moment in np.atleast_1d(moments)], dtype="datetime64[us]"
     )
@@ -167,12 +171,55 @@ def path_figure(result: CheckResult):  # type: ignore[no-untyped-def]
     return figure
 
 
+def light_figure(result: CheckResult):  # type: ignore[no-untyped-def]
+    """Return the figure of the target star's light: the whole curve, and each instant close up, prediction marked.
+
+    Bars across are exposures; the line is the fit, each frame as the camera averages it.
+    """
+    star = result.star
+    assert star is not None
+    figure, axes = _axes(1 + len(star.timings), (8.0, 3.2 + 2.6 * len(star.timings)), sharex=False)
+    when = _moments(star.start_tt_s + star.exposure_s / 2)
+    axes[0].plot(when, star.flux, ".", ms=4, color=MEASURED)
+    axes[0].plot(when, star.model, color=INK, lw=0.8)
+    for axis, timing in zip(axes[1:], star.timings, strict=True):
+        late = star.start_tt_s - timing.stamped_tt_s
+        order = np.argsort(np.abs(late))[:60]
+        reach = max(float(np.abs(late[order]).max()), 1e-3)
+        near = np.abs(late) <= reach
+        middle, half = late[near] + star.exposure_s[near] / 2, star.exposure_s[near] / 2
+        axis.errorbar(
+            middle, star.flux[near], xerr=half, fmt=".", ms=5, color=MEASURED, ecolor=PALE, label="frames"
+        )
+        axis.plot(middle, star.model[near], color=INK, lw=1.0, drawstyle="steps-mid", label="fit")
+        axis.axvspan(
+            -timing.sigma_s, timing.sigma_s, color=INK, alpha=0.25, lw=0, label=f"{timing.name}, 1 sigma"
+        )
+        early = timing.predicted_tt_s - timing.stamped_tt_s
+        if np.isfinite(early) and abs(early) < reach:
+            axis.axvline(early, color=OFF, lw=1.2, ls="--", label="predicted")
+        axis.set_xlim(-reach, reach)
+        axis.set_xlabel(f"seconds from the {timing.name} as timed")
+    for axis in axes:
+        axis.axhline(0.0, color=PALE, lw=0.8)
+        axis.set_ylabel("star's light")
+        axis.grid(color=PALE, alpha=0.25, lw=0.6)
+        if axis.get_legend_handles_labels()[0]:
+            axis.legend(loc="best", fontsize=8, facecolor=PAPER, edgecolor=PALE, labelcolor=INK)
+    _time_axis(axes[0])
+    axes[0].set_xlabel("mid-exposure as stamped, UTC")
+    return figure
+
+
 def save_figures(result: CheckResult, folder: Path, force: bool = False) -> list[Path]:
     """Write each figure as PNG, SVG and PDF and return their paths."""
     written: list[Path] = []
     if not result.rows:
         return written
-    for name, make in (("residuals", residual_figure), ("path", path_figure)):
+    made = {"residuals": residual_figure, "path": path_figure} if result.measured else {}
+    if result.star is not None:
+        made["light_curve"] = light_figure
+    for name, make in made.items():
         figure = make(result)
         for kind in FORMATS:
             path = folder / f"{name}.{kind}"

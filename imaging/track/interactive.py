@@ -26,15 +26,68 @@ def plots(result: CheckResult) -> tuple[str, str, str]:
     from bokeh.embed import components
     from bokeh.layouts import column as stacked
     from bokeh.models import ColumnDataSource, CustomJS
-    from bokeh.resources import Resources
 
     source = ColumnDataSource(_data(result))
     figures = _residuals(result, source)
     figures.append(_path(result, source))
     source.selected.js_on_change("indices", CustomJS(args={"source": source}, code=_ON_SELECT))
     script, div = components(stacked(*figures, sizing_mode="stretch_width"))
-    inline = Resources(mode="inline", components=["bokeh"])
-    return inline.render(), div, script
+    return head(), div, script
+
+
+def head() -> str:
+    """Return what a page without network needs to show plots."""
+    from bokeh.resources import Resources
+
+    return str(Resources(mode="inline", components=["bokeh"]).render())
+
+
+def light_plot(result: CheckResult) -> tuple[str, str]:
+    """Return (body, script) of the target star's light curve; needs `head`."""
+    from bokeh.embed import components
+    from bokeh.models import ColumnDataSource
+    from bokeh.models.annotations import Span
+    from bokeh.models.tools import HoverTool
+
+    from planner.sky.timescale import datetime_from_tt_s, utc_iso
+
+    star = result.star
+    assert star is not None
+
+    def unix_ms(tt_s: np.ndarray) -> np.ndarray:
+        moments = np.atleast_1d(datetime_from_tt_s(np.atleast_1d(tt_s)))
+        return np.array([moment.timestamp() * _TT_TO_UNIX_MS for moment in moments])
+
+    good = np.isfinite(star.flux)
+    middle = (star.start_tt_s + star.exposure_s / 2)[good]
+    data = {
+        "when": unix_ms(middle).tolist(),
+        "begin": unix_ms(star.start_tt_s[good]).tolist(),
+        "end": unix_ms((star.start_tt_s + star.exposure_s)[good]).tolist(),
+        "utc": [str(each) for each in np.atleast_1d(utc_iso(middle, 3))],
+        "flux": star.flux[good].tolist(),
+        "model": star.model[good].tolist(),
+    }
+    source = ColumnDataSource(data)
+    plot = _styled(height=300, x_axis_type="datetime", min_border_left=64)
+    plot.add_layout(Span(location=0, dimension="width", line_color=PALE))
+    for timing in star.timings:
+        for tt_s, colour, dash in (
+            (timing.stamped_tt_s, INK, "solid"),
+            (timing.predicted_tt_s, OFF, "dashed"),
+        ):
+            if np.isfinite(tt_s):
+                place = float(unix_ms(np.array([tt_s]))[0])
+                plot.add_layout(Span(location=place, dimension="height", line_color=colour, line_dash=dash))
+    plot.segment("begin", "flux", "end", "flux", source=source, line_color=PALE)
+    plot.line("when", "model", source=source, line_color=INK)
+    points = plot.scatter("when", "flux", source=source, size=6, color=MEASURED)
+    tips = [("mid-exposure", "@utc"), ("light", "@flux{0.000}"), ("fit", "@model{0.000}")]
+    plot.add_tools(HoverTool(renderers=[points], tooltips=tips))
+    plot.yaxis.axis_label = "star's light"
+    plot.xaxis.axis_label = "mid-exposure as stamped, UTC"
+    script, div = components(plot)
+    return div, script
 
 
 _ON_SELECT = """

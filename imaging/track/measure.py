@@ -13,6 +13,7 @@ from imaging.track.measure_disc import OnDisc
 from imaging.track.measure_stars import AmongStars
 from imaging.track.measurement import Measurement
 from imaging.track.nominal import Promise
+from imaging.track.starlight import StarCatcher
 from planner.errors import InputError, NoSolutionError
 
 
@@ -22,6 +23,7 @@ class Measurer:
     def __init__(self, promise: Promise):
         self.promise = promise
         self._on_disc, self._among_stars = OnDisc(promise), AmongStars(promise)
+        self._catcher = StarCatcher(promise) if promise.times_a_star else None
 
     def measure(self, frame: Frame, pictures: bool = False) -> Measurement:
         """Return what a frame gives; a frame that gives nothing says why. The frame must hold a time."""
@@ -51,6 +53,9 @@ class Measurer:
                 done = self._on_disc.measure(frame, blank, geometry, expected)
         except NoSolutionError as none:
             done = replace(blank, reason=str(none))
+        if self._catcher is not None:
+            found = self._among_stars.found if geometry.reference == "stars" else None
+            done = replace(done, star=self._catcher.piece(frame, done, geometry, found))
         return replace(done, cutout=_picture(frame, done)) if pictures else done
 
 

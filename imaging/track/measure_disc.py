@@ -50,6 +50,8 @@ class OnDisc:
             limb.radius_px,
             limb.covariance[:2, :2],
             float(np.sqrt(limb.covariance[2, 2])),
+            limb.contrast_adu,
+            limb.seeing_fwhm_px,
         )
         blank = replace(
             blank,

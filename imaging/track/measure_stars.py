@@ -31,20 +31,25 @@ class AmongStars:
     def __init__(self, promise: Promise) -> None:
         self.promise = promise
         self._solution: PlateSolution | None = None
+        self.found: Detections | None = None  # of the last frame
 
     def measure(
         self, frame: Frame, blank: Measurement, geometry: Geometry, expected: Expected
     ) -> Measurement:
         """Return the target's direction; raises NoSolutionError when the frame cannot be solved."""
         ra, dec, semidiameter = target_place(geometry)
-        found = detect_frame(frame)
+        self.found = found = detect_frame(frame)
         altitude = float(expected.altitude_deg[0])
         # a stamp that is hours off puts the field below the horizon: there no air is known
         air = air_over(self.promise.path.observer, float(expected.tt_s[0])) if altitude > 0 else None
         solution = self._solved(frame, blank.nominal, geometry, found, air)
         self._solution = solution
         x, y = (float(np.squeeze(v)) for v in solution.sky_to_pixel(ra, dec))
-        plate = _plate(solution, frame.row_zero, x, y)
+        plate = replace(
+            _plate(solution, frame.row_zero, x, y),
+            fwhm_px=float(found.psf_fwhm_px),
+            zero_point_adu=_zero_point_adu(found, solution, (x, y)),
+        )
         blank = replace(blank, solved_by="stars", predicted_px=(x, y), stars=plate)
         radius_px = float(semidiameter[0]) / plate.scale_arcsec_px
         body = body_of(
@@ -54,7 +59,11 @@ class AmongStars:
             place = self._found_among_stars(frame, found, solution, (x, y), body)
         except NoSolutionError as none:
             return replace(blank, reason=str(none))
-        plate = _plate(solution, frame.row_zero, place.x_px, place.y_px, place.covariance)
+        plate = replace(
+            _plate(solution, frame.row_zero, place.x_px, place.y_px, place.covariance),
+            fwhm_px=plate.fwhm_px,
+            zero_point_adu=plate.zero_point_adu,
+        )
         return replace(
             blank,
             x_px=place.x_px,
@@ -123,6 +132,22 @@ class AmongStars:
                 x, y = float(found.x_px[strangers[0]]), float(found.y_px[strangers[0]])
                 return planet_among_stars(frame.data, x, y, body, search_px=3.0, **options)
         return planet_among_stars(frame.data, *predicted, body, search_px=search, **options)
+
+
+def _zero_point_adu(found: Detections, solution: PlateSolution, target: tuple[float, float]) -> float:
+    """Return the light of a star of magnitude 0 by the brighter matched stars but the target: what clouds dim alike."""
+    from scipy.spatial import cKDTree
+
+    stars = solution.matched
+    apart, at = cKDTree(np.column_stack([found.x_px, found.y_px])).query(
+        np.column_stack([stars.x_px, stars.y_px]), distance_upper_bound=2.0
+    )
+    known = np.isfinite(apart) & (np.hypot(stars.x_px - target[0], stars.y_px - target[1]) > 8.0)
+    bright = np.flatnonzero(known)[np.argsort(stars.magnitude[known])[:8]]
+    if not bright.size:
+        return float("nan")
+    # the light of all over what the catalogue has: the brightest count most, as their light is known best
+    return float(found.flux_adu[at[bright]].sum() / np.sum(10 ** (-0.4 * stars.magnitude[bright])))
 
 
 def _strangers(found: Detections, solution: PlateSolution) -> np.ndarray:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -10,19 +11,28 @@ from imaging.frames.frame import FrameTime
 from imaging.track.cutout import Cutout
 from imaging.track.nominal import Nominal
 
+if TYPE_CHECKING:
+    from imaging.track.starlight import StarPiece
+
 NAN = float("nan")
+LIGHT_ONLY = "its light is timed, its place is not measured: "  # of a frame too short to be solved
 AS_PREDICTED = "is, as predicted,"  # marks the reason of a frame in which the target was not to be seen
 
 
 @dataclass(frozen=True)
 class DiscReference:
-    """The fitted disc that positions count from; `covariance_px2` of its centre, (2, 2)."""
+    """The fitted disc that positions count from; `covariance_px2` of its centre, (2, 2).
+
+    `contrast_adu`: brightness of the limb above the sky, `seeing_fwhm_px` its blur; NaN when not known.
+    """
 
     x_px: float
     y_px: float
     radius_px: float
     covariance_px2: np.ndarray
     radius_sigma_px: float
+    contrast_adu: float = NAN
+    seeing_fwhm_px: float = NAN
 
 
 @dataclass(frozen=True)
@@ -31,7 +41,8 @@ class StarReference:
 
     `ra_deg`, `dec_deg`: measured place of the target, with `covariance_arcsec2` of (east, north), plate included.
     `header`: the solution as the text of a FITS header. `rotation_deg` and `parity` are of the array, as in
-    `Nominal`, in the middle of the frame; `local_rotation_deg` at the target, which differs in a wide field.
+    `Nominal`, in the middle of the frame; `local_rotation_deg` at the target, which differs in a wide field. `fwhm_px`
+    is of the stars, `zero_point_adu` the light of a star of magnitude 0 by all but the target; NaN when not known.
     """
 
     ra_deg: float
@@ -44,6 +55,8 @@ class StarReference:
     stars: int
     rms_px: float
     header: str
+    fwhm_px: float = NAN
+    zero_point_adu: float = NAN
 
 
 @dataclass(frozen=True)
@@ -51,6 +64,7 @@ class Measurement:
     """What one frame gave. `solved_by` is `none` and `x_px` NaN where it gave nothing, with the reason.
 
     `covariance_px2`: (2, 2), of the target. `predicted_px`: where it was expected at the stamped time.
+    `star`: the target star's light, in families that time it.
     `far`: found where it was not expected; `stray_rate_adu_s`: light of a point taken for the target there, else NaN.
     """
 
@@ -75,6 +89,7 @@ class Measurement:
     stray_rate_adu_s: float = NAN
     far: bool = False
     cutout: Cutout | None = None
+    star: StarPiece | None = None
 
     @property
     def measured(self) -> bool:

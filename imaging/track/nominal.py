@@ -76,6 +76,11 @@ class Promise:
         self.planned: PlannedFrames = planned_frames(plan)
 
     @property
+    def times_a_star(self) -> bool:
+        """True when the event is a star that goes out and comes back: its light is measured in every frame."""
+        return self.plan.event.family in ("moon-occults-star", "asteroid-occults-star")
+
+    @property
     def middle_tt_s(self) -> float:
         """Middle of the frames that were planned."""
         return float(np.median(self.planned.middle_tt_s))

@@ -12,7 +12,8 @@ import numpy as np
 from imaging.track.figures import save_figures
 from imaging.track.measurement import Measurement
 from imaging.track.report import write_report
-from imaging.track.result import CheckResult
+from imaging.track.result import CheckResult, ContactTiming
+from imaging.track.startimes import StarCurve
 from imaging.track.table import write_track
 from planner.errors import NoSolutionError
 from planner.outputs import refuse_existing, whole_file
@@ -136,12 +137,49 @@ def header_of(result: CheckResult) -> dict[str, Any]:
                 "stamped_utc": str(utc_iso(contact.stamped_tt_s, 2)),
                 "difference_s": _plain(contact.stamped_tt_s - contact.predicted_tt_s),
                 "sigma_s": _plain(contact.sigma_s),
+                **_of_light(contact),
             }
             for contact in result.contacts
         ],
+        "light_curve": _light_curve(result.star),
         "set_aside": [{"file": aside.file, "reason": aside.reason} for aside in result.set_aside],
         "provenance": dict(result.provenance),
     }
+
+
+def _of_light(contact: ContactTiming) -> dict[str, Any]:
+    """Return what a contact read off a light curve has to tell besides."""
+    from planner.sky.timescale import utc_iso
+
+    if not np.isfinite(contact.false_alarm_log10):
+        return {}
+    return {
+        "stamped_utc": str(utc_iso(contact.stamped_tt_s, 3)),
+        "predicted_sigma_s": _plain(contact.predicted_sigma_s),
+        "false_alarm_log10": contact.false_alarm_log10,
+        "signal_to_noise": contact.signal_to_noise,
+        "note": contact.note,
+    }
+
+
+def _light_curve(star: StarCurve | None) -> dict[str, Any] | None:
+    """Return the target star's light for the header: one value a frame that holds its place, in time order."""
+    from planner.sky.timescale import utc_iso
+
+    if star is None:
+        return None
+    return {
+        "told": star.told,
+        "begin_utc": [str(each) for each in np.atleast_1d(utc_iso(star.start_tt_s, 4))],
+        "exposure_s": [float(each) for each in star.exposure_s],
+        "flux": [_rounded(each) for each in star.flux],
+        "compared": star.compared,
+        "aperture_px": star.aperture_px,
+    }
+
+
+def _rounded(value: float) -> float | None:
+    return round(float(value), 5) if np.isfinite(value) else None
 
 
 def json_of(result: CheckResult) -> dict[str, Any]:

@@ -11,7 +11,7 @@ from pathlib import Path
 import numpy as np
 
 from imaging.track.cutout import Cutout
-from imaging.track.interactive import plots
+from imaging.track.interactive import head, light_plot, plots
 from imaging.track.result import CheckResult, frames, with_sigma
 from planner.outputs import whole_file
 
@@ -28,7 +28,10 @@ def write_report(
 
 def page(result: CheckResult, cutouts: Mapping[int, Cutout]) -> str:
     """Return the page as HTML that needs nothing from outside."""
-    head, body, script = plots(result) if result.measured else ("", "", "")
+    in_head, body, script = plots(result) if result.measured else ("", "", "")
+    light, light_script = light_plot(result) if result.star is not None else ("", "")
+    if light and not in_head:
+        in_head = head()
     pictures = {
         number: [
             cut.data_uri,
@@ -42,7 +45,7 @@ def page(result: CheckResult, cutouts: Mapping[int, Cutout]) -> str:
 <meta name="viewport" content="width=device-width, initial-scale=1">
 <title>{escape(result.title)}: checked</title>
 <style>{_STYLE}</style>
-{head}
+{in_head}
 </head><body>
 <header>
 <p class="title">{escape(result.title)} <button id="red" type="button" aria-pressed="false">red light</button></p>
@@ -51,6 +54,7 @@ def page(result: CheckResult, cutouts: Mapping[int, Cutout]) -> str:
 {_numbers(result)}
 </header>
 <main>
+{_light_section(result, light)}
 {_plots_section(body, pictures)}
 {_contacts(result)}
 {_set_aside(result)}
@@ -60,6 +64,7 @@ def page(result: CheckResult, cutouts: Mapping[int, Cutout]) -> str:
 <script>const CUTOUTS = {json.dumps(pictures, separators=(",", ":"))};
 {_SCRIPT}</script>
 {script}
+{light_script}
 </body></html>
 """
 
@@ -121,9 +126,46 @@ def _plots_section(body: str, pictures: dict) -> str:  # type: ignore[type-arg]
 <figcaption></figcaption></figure></section>"""
 
 
+def _light_section(result: CheckResult, body: str) -> str:
+    if not body or result.star is None:
+        return ""
+    how = (
+        "divided by a comparison" if result.star.compared else "no comparison was steady enough to divide by"
+    )
+    return f"""<section><h2>The star's light</h2><p class="quiet">Summed in {result.star.aperture_px:.1f} px about its
+place, sky taken off, {how}; 1 is the whole star. A bar is an exposure, the full line the instant as timed, the broken
+one as predicted.</p>
+<div class="plots">{body}</div></section>"""
+
+
+def _star_contacts(result: CheckResult) -> str:
+    from planner.sky.timescale import utc_iso
+
+    rows = ""
+    for contact in result.contacts:
+        late = contact.stamped_tt_s - contact.predicted_tt_s
+        spread = float(np.hypot(contact.sigma_s, contact.predicted_sigma_s))
+        texts = (
+            contact.name,
+            f"{utc_iso(contact.stamped_tt_s, 3)} ± {contact.sigma_s:.2g} s",
+            f"{utc_iso(contact.predicted_tt_s, 2)} ± {contact.predicted_sigma_s:.2g} s",
+            f"{with_sigma(late, spread)} s",
+            f"1 in 10^{-contact.false_alarm_log10:.0f}",
+            contact.note,
+        )
+        rows += "<tr><td>" + "</td><td>".join(escape(text) for text in texts) + "</td></tr>"
+    titles = "</th><th>".join(
+        ("contact", "measured, frames' clock", "predicted, UTC", "difference", "chance of noise alone", "")
+    )
+    return f"""<section><h2>Contacts</h2><p class="quiet">Read off the light curve; errors hold the frames' clock.</p>
+<div class="wide"><table><tr><th>{titles}</th></tr>{rows}</table></div></section>"""
+
+
 def _contacts(result: CheckResult) -> str:
     if not result.contacts:
         return ""
+    if result.star is not None:
+        return _star_contacts(result)
     from planner.sky.timescale import utc_iso
 
     rows = "".join(

@@ -3,13 +3,16 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from imaging.track.findings import Diagnosis, Finding
-from imaging.track.measurement import AS_PREDICTED
+from imaging.track.measurement import AS_PREDICTED, LIGHT_ONLY
 from imaging.track.table import TrackRow
+
+if TYPE_CHECKING:
+    from imaging.track.startimes import StarCurve
 
 
 @dataclass(frozen=True)
@@ -22,12 +25,19 @@ class SetAside:
 
 @dataclass(frozen=True)
 class ContactTiming:
-    """One contact as the frames tell it: by their own clock, and with the fitted clock error taken off."""
+    """One contact as the frames tell it, by their own clock.
+
+    A star's is read off its light curve, with the chance that noise alone shows as much; others off the chord.
+    """
 
     name: str
     predicted_tt_s: float
     stamped_tt_s: float
     sigma_s: float
+    predicted_sigma_s: float = float("nan")
+    false_alarm_log10: float = float("nan")
+    signal_to_noise: float = float("nan")
+    note: str = ""
 
 
 @dataclass(frozen=True)
@@ -61,6 +71,7 @@ class CheckResult:
     rms_across_arcsec: float = float("nan")
     jitter_arcsec: float = float("nan")
     contacts: tuple[ContactTiming, ...] = ()
+    star: StarCurve | None = None
     line: np.ndarray = field(default_factory=lambda: np.empty((0, 2)))
     provenance: dict[str, Any] = field(default_factory=dict)
 
@@ -76,14 +87,26 @@ class CheckResult:
 
     @property
     def failed(self) -> int:
-        """Number of frames without a measured place in which one was to be seen."""
-        return sum(row.verdict == "unmeasured" and AS_PREDICTED not in row.reason for row in self.rows)
+        """Number of frames without a measured place in which one was to be seen; a star's light is enough."""
+        excused = (AS_PREDICTED, LIGHT_ONLY)
+        return sum(
+            row.verdict == "unmeasured" and not any(words in row.reason for words in excused)
+            for row in self.rows
+        )
 
     @property
     def verdict(self) -> str:
-        """The verdict in one sentence, with the numbers that matter."""
+        """The verdict in one sentence, with the numbers that matter; a star's instants before its places."""
         if not self.rows:
             return "No frame could be used."
+        if self.star is None:
+            return self._verdict_on_places
+        if not self.measured:
+            return self.star.told
+        return f"{self.star.told} {self._verdict_on_places}"
+
+    @property
+    def _verdict_on_places(self) -> str:
         if not self.measured:
             return f"{proper(self.target)} was measured in none of {frames(len(self.rows))}."
         name = proper(self.target)

@@ -70,7 +70,7 @@ def command(  # type: ignore[no-untyped-def]
         click.echo(json.dumps(json_of(result), indent=2, allow_nan=False))
     else:
         _print(result, written)
-    reserved = bool(result.set_aside) or result.failed > 0 or not result.measured
+    reserved = bool(result.set_aside) or result.failed > 0 or not (result.measured or result.contacts)
     if strict and result.findings:
         reserved = True
     return errors.EXIT_WITH_RESERVATIONS if reserved else errors.EXIT_DONE
