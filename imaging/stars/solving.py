@@ -9,6 +9,7 @@ from typing import Any
 
 import numpy as np
 
+from imaging.frames.calibrating import Calibration
 from imaging.frames.frame import Frame
 from imaging.frames.reading import read_frame
 from imaging.stars.detection import Detections
@@ -57,15 +58,16 @@ def solve_files(
     blind: bool = True,
     tick: Callable[[int, int], None] | None = None,
     index_tick: Callable[[int, int], None] | None = None,
+    calibration: Calibration | None = None,
 ) -> Iterator[Solved]:
     """Yield what became of each file, in order; a frame that cannot be used does not stop the run.
 
     A frame is tried from the one solved before it, then with the hint, then blind. `index_tick` reports the
-    building of the blind index.
+    building of the blind index. `calibration`: what is taken off each frame first.
     """
     previous: PlateSolution | None = None
     for number, path in enumerate(paths):
-        solved = _solve_one(path, hint, previous, zone, blind, index_tick)
+        solved = _solve_one(path, hint, previous, zone, blind, index_tick, calibration)
         previous = solved.solution or previous
         if tick is not None:
             tick(number + 1, len(paths))
@@ -79,10 +81,11 @@ def _solve_one(
     zone: str | None,
     blind: bool,
     index_tick: Callable[[int, int], None] | None,
+    calibration: Calibration | None,
 ) -> Solved:
     frame, found = None, None
     try:
-        frame = read_frame(path, zone)
+        frame = read_frame(path, zone, calibration=calibration)
         found = detect_frame(frame)
         if hint.scale_arcsec_px is None and frame.scale_hint_arcsec_px is not None:
             hint = replace(hint, scale_arcsec_px=frame.scale_hint_arcsec_px)

@@ -24,6 +24,10 @@ from planner import errors
     "--learn", is_flag=True, help="Learn the rig's lens from these frames, into a file beside the rig."
 )
 @click.option("--zone", metavar="ZONE", help="Zone of stamps that name none: +02:00 or Europe/Madrid.")
+@click.option("--catalogue", metavar="FILE", type=click.Path(dir_okay=False, path_type=Path),
+              help="A deeper star catalogue (FITS, VOTable, ECSV, CSV), beside the installed one.")  # fmt: skip
+@click.option("--calibration", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
+              help="Folder of bias, dark and flat folders, to calibrate the frames with.")  # fmt: skip
 @click.option("--no-blind", is_flag=True, help="Do not search the whole sky when the hints fail.")
 @click.option("-o", "--output", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
               help="Write the solution (NAME.wcs.fits) and a quick-look picture (NAME.solved.png) there.")  # fmt: skip
@@ -31,7 +35,21 @@ from planner import errors
 @click.option("--json", "as_json", is_flag=True, help="Print a list for a machine.")
 @click.option("--force", is_flag=True, help="Replace outputs that exist.")
 def command(  # type: ignore[no-untyped-def]
-    frames, near, scale, focal_mm, pixel_um, rig, learn, zone, no_blind, output, copy, as_json, force
+    frames,
+    near,
+    scale,
+    focal_mm,
+    pixel_um,
+    rig,
+    learn,
+    zone,
+    catalogue,
+    calibration,
+    no_blind,
+    output,
+    copy,
+    as_json,
+    force,
 ) -> int:
     """Find where FRAMES point, from their stars. Without a hint the whole sky is searched.
 
@@ -41,11 +59,13 @@ def command(  # type: ignore[no-untyped-def]
     Example:
       syzygraph solve night/*.fits --rig configs/rigs/lens_135mm.yaml -o solved
       syzygraph solve picture.jpg --json
+      syzygraph solve narrow/*.fits --near 83.8,-5.4 --scale 0.78 --catalogue field.fits --calibration tonight
     """
     from imaging.stars.solve import Hint
     from imaging.stars.solving import solve_files, write_copy, write_wcs
-    from planner.cli.progress import bar
+    from planner.cli.progress import bars
     from planner.outputs import refuse_existing
+    from planner.sky.starlist import deeper_catalogue
 
     scale, learned, model = _scale_and_lens(scale, focal_mm, pixel_um, rig, learn)
     hint = Hint(near=_near(near), scale_arcsec_px=scale)
@@ -59,8 +79,14 @@ def command(  # type: ignore[no-untyped-def]
     elif copy:
         raise errors.InputError("--copy: found without -o; allowed is with a folder to write to")
     results, solutions = [], []
-    with bar("solving", quiet=as_json) as tick:
-        for solved in solve_files(files, hint, zone, not no_blind, tick, tick):
+    titles = "solving", "building the star index (once)", "making calibration masters"
+    with deeper_catalogue(catalogue), bars(*titles, quiet=as_json) as (tick, index_tick, master_tick):
+        night = None
+        if calibration is not None:
+            from imaging.frames.calibrating import calibration_of
+
+            night = calibration_of(calibration, tick=master_tick)
+        for solved in solve_files(files, hint, zone, not no_blind, tick, index_tick, night):
             results.append(solved.as_object())
             if solved.solution is None:
                 continue
