@@ -1,4 +1,4 @@
-"""A narrow field that the installed catalogue cannot solve is solved with the user's own; frames are calibrated first."""
+"""A narrow field that the installed catalogue cannot solve is solved with the user's; frames are calibrated first."""
 
 from __future__ import annotations
 
@@ -34,7 +34,8 @@ def narrow(tmp_path_factory):
     years = 2027.0 - 2016.0
     table = Table(
         {"RA_ICRS": now_ra - pm[0] * years / 3.6e6 / np.cos(np.radians(now_dec)),
-         "DE_ICRS": now_dec - pm[1] * years / 3.6e6, "Gmag": magnitude, "pmRA": pm[0], "pmDE": pm[1], "epoch": np.full(120, 2016.0)}
+         "DE_ICRS": now_dec - pm[1] * years / 3.6e6, "Gmag": magnitude,
+         "pmRA": pm[0], "pmDE": pm[1], "epoch": np.full(120, 2016.0)}
     )  # fmt: skip
     table.write(folder / "field.csv")
     on = (x > 0) & (x < SHAPE[1] - 1) & (y > 0) & (y < SHAPE[0] - 1)
