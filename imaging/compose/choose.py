@@ -4,51 +4,92 @@ from __future__ import annotations
 
 import numpy as np
 
+NEAR = 0.1  # of the spacing: how far from its instant a frame may be for the sake of sharpness
+ENDS = 8  # frames at either end that are tried as first and last
+
 
 def evenly_spaced(
     tt_s: np.ndarray, wanted: int, merit: np.ndarray | None = None, usable: np.ndarray | None = None
 ) -> np.ndarray:
-    """Return indices of about `wanted` frames at evenly spaced instants, first and last included.
+    """Return indices of about `wanted` frames at evenly spaced instants.
 
     Around each instant the frame of highest `merit` within a tenth of the spacing is taken (NaN counts as lowest),
     else the nearest in time; an instant with no usable frame within half the spacing is left out: a gap stays a
-    gap. Where frames are few, up to a third fewer instants are taken if that makes the spacing more even.
+    gap. Where frames are few, up to two fifths fewer instants are taken, and the first and last of them up to half a
+    spacing further in, if that makes the spacing more even.
     """
     candidates = np.flatnonzero(np.ones(len(tt_s), bool) if usable is None else usable)
     if not candidates.size or wanted < 1:
         return np.zeros(0, int)
-    best, best_unevenness = np.zeros(0, int), np.inf
-    for number in range(wanted, max(1, wanted - wanted // 3) - 1, -1):
-        chosen, unevenness = _spaced(tt_s, candidates, number, merit)
-        if unevenness < best_unevenness - 0.05:
-            best, best_unevenness = chosen, unevenness
+    times = tt_s[candidates]
+    value = np.zeros(candidates.size) if merit is None else np.nan_to_num(merit[candidates], nan=-np.inf)
+    if wanted == 1 or times[-1] == times[0]:
+        middle = 0.5 * (times[0] + times[-1])
+        return candidates[_taken(times, np.array([middle]), max(float(np.ptp(times)), 1.0), value)[0]]
+    best, least = candidates[:0], np.inf
+    for number in range(wanted, max(2, wanted - 2 * wanted // 5) - 1, -1):
+        for first, last in _ends(times, number):
+            instants = np.linspace(first, last, number)
+            spacing = float(instants[1] - instants[0])
+            chosen, worst = _taken(times, instants, spacing, value)
+            lost = 1 - (last - first) / (times[-1] - times[0])
+            cost = worst + 0.5 * lost + 0.4 * (1 - len(chosen) / wanted)
+            if cost < least - 1e-9:
+                best, least = candidates[chosen], cost
     return best
 
 
-def _spaced(
-    tt_s: np.ndarray, candidates: np.ndarray, wanted: int, merit: np.ndarray | None
+def _ends(times: np.ndarray, number: int) -> list[tuple[float, float]]:
+    """Return pairs of first and last instants to try: at frames within half a spacing of the ends."""
+    reach = 0.5 * (times[-1] - times[0]) / (number - 1)
+    early = times[times <= times[0] + reach]
+    late = times[times >= times[-1] - reach]
+    early = early[np.unique(np.linspace(0, early.size - 1, ENDS).astype(int))]
+    late = late[np.unique(np.linspace(0, late.size - 1, ENDS).astype(int))]
+    return [(float(a), float(b)) for a in early for b in late[::-1] if b > a]
+
+
+def _taken(
+    times: np.ndarray, instants: np.ndarray, spacing: float, value: np.ndarray
 ) -> tuple[np.ndarray, float]:
-    """Return the frames nearest to `wanted` instants, and how far the worst is off in units of the spacing."""
-    times = tt_s[candidates]
-    if wanted == 1 or times[-1] == times[0]:
-        instants = np.array([0.5 * (times[0] + times[-1])])
-        spacing = max(float(times[-1] - times[0]), 1.0)
-    else:
-        instants = np.linspace(times[0], times[-1], wanted)
-        spacing = float(instants[1] - instants[0])
-    value = np.zeros(candidates.size) if merit is None else np.nan_to_num(merit[candidates], nan=-np.inf)
-    chosen: list[int] = []
-    worst = 0.0
-    for instant in instants:
-        away = np.abs(times - instant)
-        near = np.flatnonzero(away <= 0.1 * spacing)
-        if near.size and merit is not None:
-            place = int(near[np.lexsort((away[near], -value[near]))[0]])
-        else:
-            place = int(np.argmin(away))
-            if away[place] > 0.5 * spacing:
-                continue
-        worst = max(worst, float(away[place]) / spacing if away[place] > 0.1 * spacing else 0.0)
-        if candidates[place] not in chosen:
-            chosen.append(int(candidates[place]))
-    return np.array(sorted(chosen), int), worst
+    """Return the places of the frames taken, and how far the worst is off its instant in units of the spacing."""
+    away = np.abs(times[None, :] - instants[:, None])
+    nearest = away.argmin(axis=1)
+    off = away.min(axis=1)
+    near = away <= NEAR * spacing
+    # the highest value among the near ones; of equal ones the nearest
+    rank = np.where(near, value[None, :], -np.inf)
+    top = rank.max(axis=1, keepdims=True)
+    sharpest = np.where(near & (rank == top), away, np.inf).argmin(axis=1)
+    taken = np.where(near.any(axis=1), sharpest, nearest)[off <= 0.5 * spacing]
+    within = off[off <= 0.5 * spacing]
+    worst = float(np.where(within > NEAR * spacing, within, 0.0).max(initial=0.0)) / spacing
+    return np.unique(taken), worst
+
+
+def spacing_sentence(tt_s: np.ndarray) -> str | None:
+    """Return how far apart the instants drawn are, and where frames are missing; None for fewer than three."""
+    if len(tt_s) < 3:
+        return None
+    from planner.sky.timescale import utc_iso
+
+    steps = np.diff(tt_s)
+    typical = float(np.median(steps))
+    gap = steps > 1.6 * typical
+    low, high = float(steps[~gap].min()), float(steps[~gap].max())
+    apart = _length(typical) if high - low < 0.25 * typical else f"{_length(low)} to {_length(high)}"
+    sentence = f"the instants drawn are {apart} apart"
+    if gap.any():
+        spans = [
+            f"{utc_iso(float(tt_s[i]), 0)} and {utc_iso(float(tt_s[i + 1]), 0)}"
+            for i in np.flatnonzero(gap)[:4]
+        ]
+        sentence += f"; no frame shows the target between {', between '.join(spans)}"
+    return sentence
+
+
+def _length(seconds: float) -> str:
+    for unit, size in (("days", 86400.0), ("h", 3600.0), ("min", 60.0)):
+        if seconds >= 1.5 * size:
+            return f"{seconds / size:.3g} {unit}"
+    return f"{seconds:.3g} s"

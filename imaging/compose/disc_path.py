@@ -10,7 +10,7 @@ import numpy as np
 
 from imaging.compose.canvas import Canvas
 from imaging.compose.choices import Choices
-from imaging.compose.choose import evenly_spaced
+from imaging.compose.choose import evenly_spaced, spacing_sentence
 from imaging.compose.light import Level, Light, disc_level, limb_steepness
 from imaging.compose.matching import edge_weight
 from imaging.compose.material import Material, Registered
@@ -91,7 +91,9 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
         tone="disc",
         notes=(
             f"the {body.capitalize()} is a {choices.blend} blend of {len(base)} frames",
+            stack.how,
             "the target is laid in at its own place from one frame an instant, with a soft edge",
+            *filter(None, [spacing_sentence(tt_s[shown])]),
             *(
                 ["the Sun's rotation was undone: spots are where they were at the reference instant"]
                 if sun

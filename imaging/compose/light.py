@@ -18,10 +18,15 @@ from planner.errors import FrameSetAside
 
 @dataclass(frozen=True)
 class Level:
-    """What is taken off a frame's values, and what they are divided by, so that frames match."""
+    """What is taken off a frame's values, and what they are divided by, so that frames match.
+
+    `of_surface`: the unit is light in a pixel of the frame, and a value is brightness of a surface, whatever the scale
+    of the frame; else a value is light in a pixel of the picture.
+    """
 
     dark: float
     unit: float
+    of_surface: bool = False
 
 
 @dataclass(frozen=True)
@@ -59,8 +64,11 @@ class Light:
 
         Each colour of a mosaic is warped from its own pixels, at the place where these lie, so that no colour is
         shifted. `surface` moves places on the canvas to where they were at the frame's time. Values are in units of
-        the level, for the area of a canvas pixel.
+        the level, for the area of a canvas pixel unless they are of a surface.
         """
+        unit = level.unit
+        if level.of_surface:
+            unit *= (canvas.scale_arcsec_px / registered.scale_arcsec_px) ** 2
 
         def to_frame(x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
             east, north = canvas.to_plane(x_px, y_px)
@@ -69,14 +77,14 @@ class Light:
             return registered.pointing.sky_to_pixel(*plane_to_sky(*anchor_deg, east, north))
 
         if frame.colour is None:
-            grey = self._warp(frame.data - level.dark, canvas, to_frame, good) / level.unit
+            grey = self._warp(frame.data - level.dark, canvas, to_frame, good) / unit
             return np.repeat(grey[..., None], 3, axis=2) if self.colour else grey
         planes = []
         for plane, (left, low), step in colour_planes(frame):
             mask = None if good is None else _thinned(good, step, plane.shape)
             image = self._warp(plane - level.dark, canvas, _stepped(to_frame, left, low, step), mask)
             # a plane pixel stands for `step` x `step` frame pixels: its light is that of one of them
-            planes.append(image * (step**2 / level.unit))
+            planes.append(image * (step**2 / unit))
         return np.stack(planes, axis=-1)
 
     def _warp(
@@ -139,7 +147,7 @@ def disc_level(frame: Frame, limb_px: tuple[float, float, float], body: str) -> 
         raise FrameSetAside(frame.path, f"has the {body.capitalize()} burnt out")
     if not bright - dark > 0:
         raise FrameSetAside(frame.path, f"shows no light of the {body.capitalize()} (clouds?)")
-    return Level(dark, bright - dark)
+    return Level(dark, bright - dark, of_surface=True)
 
 
 def exposure_level(frame: Frame, registered: Registered) -> Level:

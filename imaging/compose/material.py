@@ -105,6 +105,7 @@ class Material:
     """A plan, its track, and the frames that can be used, in time order.
 
     `geometry_at(tt_s)` is the family's prediction for the plan's site; `set_aside` lists what cannot be used.
+    `notes`: what was chosen among the frames. `other_tracks`: of further rigs.
     """
 
     plan: Plan
@@ -114,6 +115,8 @@ class Material:
     set_aside: tuple[FrameSetAside, ...]
     geometry_at: Callable[[np.ndarray], Geometry]
     observer: Observer | None
+    notes: tuple[str, ...] = ()
+    other_tracks: tuple[Path, ...] = ()
 
     @cached_property
     def geometry(self) -> Geometry:

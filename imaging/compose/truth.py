@@ -59,7 +59,7 @@ def statement(material: Material, picture: Picture, stretch: str | None = None) 
                 "up": "position angle of the picture's up direction, from ICRS north through east",
                 "discs": "refraction is taken out: a low Sun or Moon is drawn round, as without air",
             },
-            "notes": list(picture.notes),
+            "notes": [*material.notes, *picture.notes],
             "drawn": [_drawn(item, scale) for item in picture.drawn],
             "frames": [_frame(frame, role) for frame, role in _once(picture.used)],
             "set_aside": aside,
@@ -67,6 +67,10 @@ def statement(material: Material, picture: Picture, stretch: str | None = None) 
                 **versions(),
                 "plan_hash": content_hash(material.plan.model_dump_json()),
                 "track_hash": content_hash(material.track_path.read_bytes()),
+                **{
+                    f"track_hash_{number}": content_hash(path.read_bytes())
+                    for number, path in enumerate(material.other_tracks, 2)
+                },
             },
         }
     )

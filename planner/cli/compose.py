@@ -66,6 +66,10 @@ class _Several(click.ParamType):
 @click.option(
     "--keep-off-track", is_flag=True, help="Draw the target also where the check found it off its track."
 )
+@click.option("--filter", "through", metavar="NAME",
+              help="Frames through this filter, or all; default: the filter of most frames.")  # fmt: skip
+@click.option("--also", type=click.Path(path_type=Path), nargs=3, multiple=True, metavar="PLAN TRACK FRAMES",
+              help="Frames of another rig on the same event, combined; may be repeated.")  # fmt: skip
 @click.option("--second-site", type=click.Path(path_type=Path), nargs=3, metavar="PLAN TRACK FRAMES",
               help="The same transit from another place, drawn on the same disc.")  # fmt: skip
 @click.option(
@@ -103,6 +107,7 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     from imaging.compose.composing import Outputs, compose_picture, write_picture, write_plots
     from imaging.compose.material import gather
     from imaging.compose.pathdata import path_data
+    from imaging.compose.selection import joined, through_filter
     from planner.cli.progress import bar
     from planner.sequence.documents import load_plan
 
@@ -120,10 +125,19 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     outputs.refuse_existing()
     document = load_plan(plan)
     material = gather(document, track, frames, keep_off_track=chosen["keep_off_track"])
+    material = joined(
+        through_filter(material, chosen["through"]),
+        [
+            through_filter(
+                gather(load_plan(a), b, c, keep_off_track=chosen["keep_off_track"]), chosen["through"]
+            )
+            for a, b, c in chosen["also"]
+        ],
+    )
     other = None
     if chosen["second_site"]:
         second_plan, second_track, second_frames = chosen["second_site"]
-        other = gather(load_plan(second_plan), second_track, second_frames)
+        other = through_filter(gather(load_plan(second_plan), second_track, second_frames), chosen["through"])
     landscape = _landscape(chosen["landscape"], chosen["view"])
     zone: tzinfo = UTC
     zone_label = "UTC"

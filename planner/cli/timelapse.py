@@ -34,6 +34,8 @@ from planner import errors
               help="How many times faster than true; default: every exposure once.")  # fmt: skip
 @click.option("--fps", type=click.IntRange(1, 120), default=25, show_default=True)
 @click.option("--size", default="1920x1080", show_default=True, metavar="WxH", help="At most.")
+@click.option("--filter", "through", metavar="NAME",
+              help="Frames through this filter, or all; default: the filter of most frames.")  # fmt: skip
 @click.option("--no-stamp", is_flag=True, help="No time in the picture.")
 @click.option("--force", is_flag=True, help="Replace a film that exists.")
 @click.option("--quiet", is_flag=True)
@@ -50,6 +52,7 @@ def command(plan: Path, track: Path, frames: Path | None, output: Path, **chosen
     from dataclasses import asdict
 
     from imaging.compose.material import gather
+    from imaging.compose.selection import through_filter
     from imaging.compose.timelapse import Film, make_film
     from planner.cli.progress import bar
     from planner.outputs import refuse_existing
@@ -59,7 +62,7 @@ def command(plan: Path, track: Path, frames: Path | None, output: Path, **chosen
     if size is None:
         raise errors.InputError(f"--size: found {chosen['size']!r}; allowed is WxH, such as 1920x1080")
     refuse_existing(output, chosen["force"])
-    material = gather(load_plan(plan), track, frames)
+    material = through_filter(gather(load_plan(plan), track, frames), chosen["through"])
     with bar("filming", chosen["quiet"] or chosen["as_json"]) as tick:
         film = Film(
             steady_on=chosen["steady_on"],

@@ -7,7 +7,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from imaging.compose.choose import evenly_spaced
+from imaging.compose.choose import evenly_spaced, spacing_sentence
 
 
 def test_dense_frames_give_the_instants_asked_for():
@@ -29,6 +29,37 @@ def test_few_frames_are_thinned_evenly():
     tt_s = np.arange(14) * 20.0
     steps = np.diff(tt_s[evenly_spaced(tt_s, 9)])
     assert steps.max() / steps.min() <= 1.5
+
+
+def test_instants_of_a_thinned_run_are_even_to_a_tenth():
+    """Frames every 11 minutes with crowds at both ends, as a rehearsal thins a transit."""
+    minutes = np.concatenate(
+        [
+            np.arange(2.0, 4.0, 0.35),
+            8.0 + 10.95 * np.arange(15),
+            186.0 + 10.95 * np.arange(8),
+            np.arange(266.5, 268, 0.35),
+        ]
+    )
+    tt_s = 60 * minutes
+    steps = np.diff(tt_s[evenly_spaced(tt_s, 9)])
+    assert len(steps) >= 6
+    assert steps.max() / steps.min() < 1.12
+
+
+def test_what_is_missing_is_said():
+    from planner.sky.timescale import tt_s_from_iso
+
+    start = float(tt_s_from_iso("2032-11-13T07:00:00Z"))
+    even = start + 1800.0 * np.arange(6)
+    assert spacing_sentence(even) == "the instants drawn are 30 min apart"
+    broken = np.delete(even, 3)
+    assert spacing_sentence(broken) == (
+        "the instants drawn are 30 min apart; no frame shows the target between 2032-11-13T08:00:00Z and "
+        "2032-11-13T09:00:00Z"
+    )
+    assert "25 min to 35 min apart" in spacing_sentence(even + np.array([0, 100, 0, 300, 0, 0]))
+    assert spacing_sentence(even[:2]) is None
 
 
 def test_a_hidden_stretch_is_not_filled():
