@@ -315,7 +315,11 @@ class Scene:
 
     def _spread(self, shot: Shot, site: Site, air_mass: float, motion: LimbMotion | None) -> PointSpread:
         """Return the blur: seeing, diffraction, optics, and tracking over an exposure longer than a second."""
-        tracking = radiometry.tracking_error_of(self.plan.rig) if shot.exposure_s > 1.0 else 0.0
+        tracking = (
+            radiometry.tracking_error_of(self.plan.rig)
+            if shot.exposure_s > radiometry.TRACKED_FROM_S
+            else 0.0
+        )
         width = float(radiometry.psf_fwhm_arcsec(self.rig, site.seeing_arcsec, air_mass, tracking))
         return PointSpread.seeing(float(np.hypot(width / self.rig.scale_arcsec_px, OPTICS_FWHM_PX)))
 
@@ -375,6 +379,8 @@ def _trailed(rate: np.ndarray, trail_px: tuple[float, float]) -> np.ndarray:
     """Smear a picture along a straight line."""
     import cv2
 
+    # sharing light between the pixels next to a point spreads it: the line is shortened until its variance is right
+    trail_px = tuple(_shortened(each) for each in trail_px)  # type: ignore[assignment]
     length = float(np.hypot(*trail_px))
     half = int(np.ceil(length / 2)) + 1
     steps = max(int(length * 4), 2)
@@ -387,6 +393,15 @@ def _trailed(rate: np.ndarray, trail_px: tuple[float, float]) -> np.ndarray:
                 kernel[y0 + dy, x0 + dx] += wx * wy / steps
     # filter2D correlates: turn the kernel round
     return cv2.filter2D(rate, -1, kernel[::-1, ::-1].copy(), borderType=cv2.BORDER_REPLICATE)
+
+
+def _shortened(length_px: float) -> float:
+    """Return the length whose linear interpolation has the variance of a line of this length, which is L^2 / 12.
+
+    Points spread over L < 2 pixels and shared linearly have a variance of L / 4, over more of L^2 / 12 + 1/6.
+    """
+    short = length_px**2 / 3 if abs(length_px) < np.sqrt(6) else np.sqrt(length_px**2 - 2)
+    return float(np.copysign(short, length_px))
 
 
 def choose(total: int, thin: int | None = None, count: int | None = None) -> np.ndarray:

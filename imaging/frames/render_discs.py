@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -17,10 +17,13 @@ from imaging.frames.render_light import (
 from imaging.frames.render_pointing import ARCSEC, PlaneMap, Pointing, unit_vector
 from imaging.frames.render_seeing import LimbMotion
 from imaging.frames.render_stars import draw_points
-from planner.sky.discs import SkyDisc
+from planner.sky.bodies import SATURN_RINGS_KM, radii_km
+from planner.sky.discs import SkyDisc, ring_share, ring_sine
 
 # Discs smaller than this radius are drawn as so many points each way.
 _SMALL_PX, _SMALL_POINTS = 2.0, 13
+# Inner and outer edge of Saturn's bright rings in radii of its globe.
+_RINGS = tuple(SATURN_RINGS_KM[edge] / radii_km("saturn")[0] for edge in ("b_inner", "a_outer"))
 
 
 @dataclass(frozen=True)
@@ -35,6 +38,8 @@ class Ball:
     phase_angle_deg: float
     bright_limb_pa_deg: float
     magnitude: float
+    ring_share: float = 0.0
+    ring_sine: float = 0.0
 
     @classmethod
     def of(cls, disc: SkyDisc, index: int) -> Ball:
@@ -53,7 +58,17 @@ class Ball:
             )
         ]
         radius = np.tan(pick[2] * ARCSEC) / ARCSEC
-        return cls(disc.name, unit_vector(pick[0], pick[1]), radius, *pick[3:])
+        ball = cls(disc.name, unit_vector(pick[0], pick[1]), radius, *pick[3:])
+        if disc.name != "saturn":
+            return ball
+        return replace(
+            ball, ring_share=float(ring_share(disc)[index]), ring_sine=float(ring_sine(disc)[index])
+        )
+
+    @property
+    def reach_arcsec(self) -> float:
+        """Radius of all that shines, rings included."""
+        return self.radius_arcsec * (_RINGS[1] if self.ring_share > 0 else 1.0)
 
 
 def _coordinates(low: int, high: int, finer: int) -> np.ndarray:
@@ -93,6 +108,29 @@ def _lit(ball: Ball, east: np.ndarray, north: np.ndarray) -> np.ndarray:
     toward = along_pole * np.cos(angle) + across * np.sin(angle)
     side = across * np.cos(angle) - along_pole * np.sin(angle)
     return sphere_brightness(ball.name, toward, side, ball.phase_angle_deg)
+
+
+def _rings(ball: Ball, east: np.ndarray, north: np.ndarray) -> np.ndarray:
+    """Saturn's rings, evenly bright; what crosses the globe is left to the globe."""
+    pole = np.radians(ball.pole_pa_deg)
+    along_pole = (east * np.sin(pole) + north * np.cos(pole)) / ball.radius_arcsec
+    across = (east * np.cos(pole) - north * np.sin(pole)) / ball.radius_arcsec
+    radius2 = across**2 + (along_pole / max(ball.ring_sine, 1e-3)) ** 2
+    bright = (
+        (radius2 > _RINGS[0] ** 2) & (radius2 < _RINGS[1] ** 2) & (_inside_outline(ball, east, north) >= 1)
+    )
+    return bright.astype(float)
+
+
+def _shining(ball: Ball, east: np.ndarray, north: np.ndarray) -> np.ndarray:
+    """Brightness over a body and its rings, in sum 1 over an even grid that holds all of it; zeros where it is dark."""
+    globe = _lit(ball, east, north)
+    total = globe / max(globe.sum(), 1e-300)
+    if ball.ring_share > 0:
+        rings = _rings(ball, east, north)
+        if rings.any():
+            total = (1 - ball.ring_share) * total + ball.ring_share * rings / rings.sum()
+    return total
 
 
 def draw_sun(
@@ -164,7 +202,7 @@ def draw_ball(
     in_front: Ball | None = None,
 ) -> None:
     """Add a planet (`electrons_s` when nothing hides it) to `rate`, cut by the Moon `in_front` of it."""
-    radius_px = ball.radius_arcsec / pointing.scale_arcsec_px
+    radius_px = ball.reach_arcsec / pointing.scale_arcsec_px
     box = _box(pointing, ball, radius_px + spread.reach_px + 2)
     if box is None:
         return
@@ -172,7 +210,8 @@ def draw_ball(
     small = radius_px < _SMALL_PX
     if small:
         # a grid on the disc alone, drawn as points: a grid fine enough for the disc over the whole blur costs seconds
-        across = radius_px * 1.02 * np.linspace(-1, 1, _SMALL_POINTS)
+        points = _SMALL_POINTS if ball.ring_share == 0 else 3 * _SMALL_POINTS
+        across = radius_px * 1.02 * np.linspace(-1, 1, points)
         x_mid, y_mid = pointing.project(ball.vector)
         x, y = float(x_mid) + across, float(y_mid) + across
         finer = 1
@@ -184,9 +223,8 @@ def draw_ball(
     if step is not None:
         east += step[0]
         north += step[1]
-    light = _lit(ball, east, north)
-    whole = light.sum() / finer**2
-    if whole <= 0:
+    light = _shining(ball, east, north)
+    if not light.any():
         return
     if in_front is not None:
         moon_east, moon_north = PlaneMap.about(pointing, in_front.vector, box).grid(x, y)
@@ -198,10 +236,11 @@ def draw_ball(
             return
     if small:
         rows, columns = np.nonzero(light)
-        share = electrons_s * light[rows, columns] / whole
+        share = electrons_s * light[rows, columns]
         draw_points(rate, x[columns], y[rows], share, spread, faintest_e_s=1e-6 * electrons_s / share.size)
         return
-    _add(rate, _shrink(spread.finer(finer).blur(light), finer), x_low, y_low, electrons_s / whole)
+    # the mean that a pixel takes of its sub-pixels is turned back into their sum
+    _add(rate, _shrink(spread.finer(finer).blur(light), finer), x_low, y_low, electrons_s * finer**2)
 
 
 def draw_moon(

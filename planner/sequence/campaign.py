@@ -199,6 +199,7 @@ def _stops(setting: Setting, visits: Nights, field: Field) -> tuple[Stops, dict[
         return _mosaic_stops(setting, visits, field), None
     ground = None
     ra_deg, dec_deg = visits.disc.ra_deg, visits.disc.dec_deg
+    off_axis_deg = np.zeros(count)
     if setting.rig.mount.kind == "fixed":
         # a tripod frames the arc over the ground: azimuth runs the other way round than right ascension
         level = Field(
@@ -210,11 +211,23 @@ def _stops(setting: Setting, visits: Nights, field: Field) -> tuple[Stops, dict[
             "aim_altitude_deg": round(altitude, 3),
             "aim_azimuth_deg": round(-azimuth % 360.0, 3),
         }
+        off_axis_deg = _apart_deg(azimuth, altitude, -visits.azimuth_deg, visits.altitude_deg)
     else:
         aims = frame_track(field, ra_deg, dec_deg)
         ra_deg, dec_deg = aims.ra_deg, aims.dec_deg
+        off_axis_deg = _apart_deg(ra_deg, dec_deg, visits.disc.ra_deg, visits.disc.dec_deg)
     alone = np.ones(count, bool)
-    return Stops(each, (None,) * count, ra_deg, dec_deg, np.zeros(count), alone, alone), ground
+    return Stops(each, (None,) * count, ra_deg, dec_deg, np.zeros(count), alone, alone, off_axis_deg), ground
+
+
+def _apart_deg(
+    a_deg: np.ndarray | float, b_deg: np.ndarray | float, c_deg: np.ndarray, d_deg: np.ndarray
+) -> np.ndarray:
+    """Return the angles between directions (a, b) and (c, d), each a longitude and a latitude."""
+    from planner.sky.places import separation_arcsec, unit_vector
+
+    first, second = unit_vector(np.asarray(a_deg), np.asarray(b_deg)), unit_vector(c_deg, d_deg)
+    return separation_arcsec(first.reshape(3, -1), second) / 3600
 
 
 def _mosaic_stops(setting: Setting, visits: Nights, field: Field) -> Stops:
@@ -250,6 +263,12 @@ def _mosaic_stops(setting: Setting, visits: Nights, field: Field) -> Stops:
         np.concatenate(slews),
         np.concatenate(target),
         np.concatenate(holds),
+        _apart_deg(
+            panels.ra_deg[order],
+            panels.dec_deg[order],
+            np.repeat(visits.disc.ra_deg, len(panels)),
+            np.repeat(visits.disc.dec_deg, len(panels)),
+        ),
     )
 
 

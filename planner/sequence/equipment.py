@@ -76,6 +76,9 @@ class Sensor(Model):
     rolling_readout_s: float = Field(
         default=0.0, ge=0, description="from the first row's start to the last row's"
     )
+    rolling_from: Literal["top", "bottom"] = Field(
+        default="top", description="edge of the picture, as it is looked at, whose row is exposed first"
+    )
     bayer: Literal["RGGB", "BGGR", "GRBG", "GBRG"] | None = None
     min_exposure_s: float = Field(default=1e-4, gt=0)
     max_exposure_s: float = Field(default=3600, gt=0)

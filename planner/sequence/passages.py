@@ -179,7 +179,9 @@ def _shots(
                 filter=kind.filter,
                 tracking=kind.tracking,
                 peak_of=kind.peak_of,
-                peak_e=float(f"{exposure_s * np.interp(middle_tt_s, sample_s, kind.rate_e_s):.4g}"),
+                peak_e=float(
+                    f"{exposure_s * np.interp(middle_tt_s, sample_s, kind.rate_at(exposure_s)):.4g}"
+                ),
                 trail_px=float(f"{trail_px:.2g}"),
             )
         )
@@ -253,4 +255,5 @@ def _named_apart(passages: list[Passage]) -> list[Passage]:
 
 def rows_of_disc(disc: SkyDisc, rows: slice | np.ndarray) -> SkyDisc:
     """Return the same disc at fewer times."""
-    return replace(disc, **{f.name: getattr(disc, f.name)[rows] for f in fields(disc) if f.name != "name"})
+    arrays = {f.name: getattr(disc, f.name) for f in fields(disc) if f.name != "name"}
+    return replace(disc, **{name: array[rows] for name, array in arrays.items() if array is not None})

@@ -28,6 +28,7 @@ FWHM_OF_SIGMA = 2.0 * np.sqrt(2.0 * np.log(2.0))
 # MNRAS 328, 977): least squares, within 0.5 % of the peak; sigmas in units of the FWHM.
 SEEING_WEIGHT = np.array([0.3667, 0.5370, 0.0963])
 SEEING_SIGMA = np.array([0.36388, 0.54576, 0.89341])
+TRACKED_FROM_S = 1.0  # longer exposures are blurred by the mount's error, shorter ones only moved
 OPTICS_FWHM_PX = 0.8  # a good lens or telescope focused on its sensor; common practice, no source
 SEEING_AIRMASS_POWER = 0.6  # Kolmogorov turbulence: r0 falls as airmass**-0.6 (Fried 1966)
 

@@ -22,17 +22,25 @@ LEAST_SIGNAL_TO_NOISE = 20.0
 
 @dataclass(frozen=True)
 class Recipe:
-    """What one kind of frame is exposed for, sampled at n times: the rates are of the brightest pixel."""
+    """What one kind of frame is exposed for, sampled at n times: the rates are of the brightest pixel.
+
+    `tracked_rate_e_s`: of exposures that the mount's error blurs.
+    """
 
     name: str
     peak_of: str
     rate_e_s: np.ndarray
+    tracked_rate_e_s: np.ndarray
     wanted_s: np.ndarray
     gain: float
     tracking: Rate
     motion: Motion
     stars: int | None = None
     filter: str | None = None
+
+    def rate_at(self, exposure_s: float) -> np.ndarray:
+        """Return the rates of exposures of this length."""
+        return self.tracked_rate_e_s if exposure_s > radiometry.TRACKED_FROM_S else self.rate_e_s
 
 
 def aim_of(setting: Setting) -> str:
@@ -78,19 +86,22 @@ def _through_one(setting: Setting, geometry: Geometry, target_hidden: bool) -> l
     main = _brightest_disc(setting, geometry)
     found: list[Recipe] = []
     if main is not None:
-        name, rate = main
+        name, rate, tracked = main
         gain = setting.gain_for_bright()
         wanted = exposure.wanted_exposure_s(setting.rig, rate, setting.wish.well_fraction, gain)
-        found.append(Recipe("main", name, rate, _bounded(setting, moving, wanted), gain, tracking, moving))
+        found.append(
+            Recipe("main", name, rate, tracked, _bounded(setting, moving, wanted), gain, tracking, moving)
+        )
     if geometry.reference == "stars" and not geometry.stars:
         return [_star_recipe(setting, geometry, found[0], ra_deg, dec_deg), replace(found[0], name="disc")]
     if not found or (geometry.reference != "sun" and not target_hidden):
         faint = _faint_target(setting, geometry, found[0] if found else None)
         if faint is not None:
-            name, rate, wanted = faint
+            name, rate, tracked, wanted = faint
             gain = setting.gain_for_faint()
             wanted = _bounded(setting, moving, wanted)
-            found.append(Recipe("long" if found else "main", name, rate, wanted, gain, tracking, moving))
+            kind = "long" if found else "main"
+            found.append(Recipe(kind, name, rate, tracked, wanted, gain, tracking, moving))
     if not found:
         raise InputError(f"event.family: {setting.family.name} shows neither a disc nor a star to expose for")
     return found
@@ -106,6 +117,7 @@ def _star_recipe(
         "main",
         disc.peak_of,
         disc.rate_e_s,
+        disc.tracked_rate_e_s,
         frames.exposure_s,
         gain,
         disc.tracking,
@@ -131,31 +143,32 @@ def _bounded(setting: Setting, moving: Motion, wanted_s: np.ndarray) -> np.ndarr
     return np.clip(wanted_s, sensor.min_exposure_s, np.minimum(longest, sensor.max_exposure_s))
 
 
-def _brightest_disc(setting: Setting, geometry: Geometry) -> tuple[str, np.ndarray] | None:
+def _brightest_disc(setting: Setting, geometry: Geometry) -> tuple[str, np.ndarray, np.ndarray] | None:
+    """Return (name, peak rate, peak rate when tracked) of the disc that is brightest at most of the times, or None."""
     names = ["sun"] if geometry.reference == "sun" else [n for n in geometry.discs if n != "sun"]
     if geometry.reference == "stars" and geometry.stars:
         # a small body before a star: the star is what is exposed for, unless the body outshines it
         limit = min(star[3] for star in geometry.stars)
         names = [name for name in names if np.median(geometry.discs[name].magnitude) < limit]
-    rates = {}
+    rates: dict[str, list[np.ndarray]] = {}
     for name in names:
         disc = geometry.discs[name]
-        if np.isfinite(disc.magnitude).all():
-            rates[name] = exposure.peak_rate_e_s(
-                setting.rig, setting.site, setting.through, name, disc, geometry.altitude_deg
-            )
-            if name == "moon":
-                rates[name] = rates[name] * exposure.eclipse_light(geometry.tt_s)
+        if not np.isfinite(disc.magnitude).all():
+            continue
+        lit = exposure.eclipse_light(geometry.tt_s) if name == "moon" else 1.0
+        seen = (setting.rig, setting.site, setting.through, name, disc, geometry.altitude_deg)
+        rates[name] = [exposure.peak_rate_e_s(*seen, tracked) * lit for tracked in (False, True)]
     if not rates:
         return None
-    brightest = max(rates, key=lambda name: float(np.median(rates[name])))
-    return brightest, np.max(list(rates.values()), axis=0)
+    brightest = max(rates, key=lambda name: float(np.median(rates[name][0])))
+    still, tracked = (np.max([each[kind] for each in rates.values()], axis=0) for kind in (0, 1))
+    return brightest, still, tracked
 
 
 def _faint_target(
     setting: Setting, geometry: Geometry, main: Recipe | None
-) -> tuple[str, np.ndarray, np.ndarray] | None:
-    """Return (name, peak rate, exposure) for a target that the main exposure leaves too faint, or None."""
+) -> tuple[str, np.ndarray, np.ndarray, np.ndarray] | None:
+    """Return (name, peak rate, the same tracked, exposure) for a target too faint in the main exposure, or None."""
     from planner.sky.photometry import airmass
 
     rig, site, name = setting.rig, setting.site, geometry.target
@@ -163,14 +176,16 @@ def _faint_target(
     star = next((s for s in geometry.stars if s[0] == name or not geometry.discs.get(name)), None)
     if name in geometry.discs and np.isfinite(geometry.discs[name].magnitude).all():
         magnitude = geometry.discs[name].magnitude
-        peak = exposure.peak_rate_e_s(
-            rig, site, setting.through, name, geometry.discs[name], geometry.altitude_deg
-        )
+        seen = (rig, site, setting.through, name, geometry.discs[name], geometry.altitude_deg)
+        peak, tracked = (exposure.peak_rate_e_s(*seen, tracked) for tracked in (False, True))
     elif star is not None:
         name, magnitude = star[0], np.full(len(geometry.tt_s), star[3])
-        fwhm_px = radiometry.psf_fwhm_px(rig, site.seeing_arcsec, mass, 0.0)
         dimmed = radiometry.extinguished(magnitude, mass, site.extinction_mag)
-        peak = radiometry.rate_e_s(setting.through, dimmed) * radiometry.star_peak_fraction(fwhm_px)
+        peak, tracked = (
+            radiometry.rate_e_s(setting.through, dimmed)
+            * radiometry.star_peak_fraction(radiometry.psf_fwhm_px(rig, site.seeing_arcsec, mass, error))
+            for error in (0.0, None)
+        )
     else:
         return None
     total = radiometry.rate_e_s(
@@ -195,4 +210,4 @@ def _faint_target(
         total, pixels * (sky + rig.sensor.dark_e_s), pixels * noise_e**2, 2 * LEAST_SIGNAL_TO_NOISE
     )
     full = exposure.wanted_exposure_s(rig, peak, setting.wish.well_fraction, setting.gain_for_faint())
-    return name, peak, np.minimum(wanted, full)
+    return name, peak, tracked, np.minimum(wanted, full)

@@ -8,7 +8,8 @@ from math import ceil
 
 import numpy as np
 
-from planner.sequence import exposure
+from planner.sequence import exposure, radiometry
+from planner.sequence.framing import field_of
 from planner.sequence.models import Shot
 from planner.sequence.motion import motion_at_rates
 from planner.sequence.nights import Nights
@@ -25,6 +26,7 @@ class Stops:
 
     `visit`: row among the visits. `slew_s`: before it, settling included; 0 where a visit begins. `target`: whether
     it is the pointing that the target's own frames are taken at; `holds_target`: whether the target is in its field.
+    `off_axis_deg`: of the target from the middle of the frame.
     """
 
     visit: np.ndarray
@@ -34,6 +36,7 @@ class Stops:
     slew_s: np.ndarray
     target: np.ndarray
     holds_target: np.ndarray
+    off_axis_deg: np.ndarray
 
     def __len__(self) -> int:
         """Give the number of pointings."""
@@ -48,6 +51,7 @@ class _Through:
     frames: StarFrames
     planet_s: np.ndarray
     peak_e_s: np.ndarray
+    tracked_e_s: np.ndarray
 
 
 @dataclass(frozen=True)
@@ -107,7 +111,8 @@ class Exposures:
     ) -> Shot:
         setting = self.setting
         cadence_s = ceil((exposure_s + setting.rig.sensor.readout_s) * 10 - 1e-9) / 10 + 1.0
-        peak_e_s = float(through.peak_e_s[row])
+        peaks = through.tracked_e_s if exposure_s > radiometry.TRACKED_FROM_S else through.peak_e_s
+        peak_e_s = float(peaks[row])
         return Shot(
             name=name if len(self.through) == 1 else f"{through.filter}, {name}",
             start_utc=start_utc,
@@ -137,9 +142,9 @@ def exposures_at(setting: Setting, visits: Nights, stops: Stops) -> Exposures:
     trail = _trail_px_s(setting, visits)[rows]
     through = []
     for each in setting.in_turn():
-        peak = exposure.peak_rate_e_s(
-            each.rig, each.site, each.through, disc.name, disc, geometry.altitude_deg
-        )
+        seen = (each.rig, each.site, each.through, disc.name, disc, geometry.altitude_deg)
+        corner = radiometry.vignetting_factor(each.rig, stops.off_axis_deg / field_of(each.rig).radius_deg)
+        peak, tracked = (exposure.peak_rate_e_s(*seen, long) * corner for long in (False, True))
         there = replace(geometry, altitude_deg=np.maximum(altitude_deg, 1.0))
         frames = star_frames(each, there, stops.ra_deg, stops.dec_deg, peak, trail, gain)
         if any(stops.panel):
@@ -149,12 +154,12 @@ def exposures_at(setting: Setting, visits: Nights, stops: Stops) -> Exposures:
                 _of_visits(np.minimum, frames.longest_s, rows),
             )
             frames = star_frames(each, there, stops.ra_deg, stops.dec_deg, peak, trail, gain, alike_s)
-        peak = np.where(stops.holds_target, peak, 0.0)
+        peak, tracked = (np.where(stops.holds_target, rate, 0.0) for rate in (peak, tracked))
         needed = stops.target & (frames.clips_too_much | (each.wish.planet_frames > 0))
         planet_s = exposure.wanted_exposure_s(
             each.rig, np.maximum(peak, 1e-12), each.wish.well_fraction, gain
         )
-        through.append(_Through(each.filter_name, frames, np.where(needed, planet_s, np.nan), peak))
+        through.append(_Through(each.filter_name, frames, np.where(needed, planet_s, np.nan), peak, tracked))
     return Exposures(setting, disc.name, tuple(through), trail, gain)
 
 

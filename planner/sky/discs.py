@@ -27,7 +27,8 @@ class SkyDisc:
     `ra_deg`, `dec_deg`: un-aberrated topocentric direction, ICRS axes. `semidiameter_arcsec`: equatorial.
     `flattening`: apparent, (a - b) / a of the ellipse on the sky. `pole_pa_deg`: of the projected north pole.
     `phase_angle_deg`: Sun-body-observer. `bright_limb_pa_deg`: of the middle of the lit limb.
-    `magnitude`: apparent V, out of the atmosphere. `distance_km`: from the observer.
+    `magnitude`: apparent V, out of the atmosphere; `globe_magnitude`: without Saturn's rings, None like `magnitude`.
+    `distance_km`: from the observer.
     """
 
     name: str
@@ -40,6 +41,7 @@ class SkyDisc:
     phase_angle_deg: np.ndarray
     bright_limb_pa_deg: np.ndarray
     magnitude: np.ndarray
+    globe_magnitude: np.ndarray | None = None
 
 
 def sky_disc(body: str, observer: Observer | None, tt_s: np.ndarray, radii: str | None = None) -> SkyDisc:
@@ -67,6 +69,9 @@ def sky_disc(body: str, observer: Observer | None, tt_s: np.ndarray, radii: str 
     sin_latitude = -(pole * sight).sum(axis=0)
     eccentricity2 = 1.0 - (polar_km / equatorial_km) ** 2
     flattening = 1.0 - np.sqrt(1.0 - eccentricity2 * (1.0 - sin_latitude**2))
+    magnitude, globe = _magnitudes(
+        body, place.distance_km, to_sun_km, phase, sin_latitude, sun_from_body, pole, tt_s
+    )
     return SkyDisc(
         name=body,
         ra_deg=place.ra_deg,
@@ -77,10 +82,23 @@ def sky_disc(body: str, observer: Observer | None, tt_s: np.ndarray, radii: str 
         pole_pa_deg=position_angle_deg(sight, pole),
         phase_angle_deg=phase,
         bright_limb_pa_deg=limb_pa,
-        magnitude=_magnitude(
-            body, place.distance_km, to_sun_km, phase, sin_latitude, sun_from_body, pole, tt_s
-        ),
+        magnitude=magnitude,
+        globe_magnitude=globe,
     )
+
+
+def ring_share(disc: SkyDisc) -> np.ndarray:
+    """Return the part of a body's light that its rings send, (n,): 0 for all but Saturn, 0.6 at its widest."""
+    if disc.globe_magnitude is None:
+        return np.zeros_like(disc.magnitude)
+    return np.clip(1.0 - 10.0 ** (-0.4 * (disc.globe_magnitude - disc.magnitude)), 0.0, 1.0)
+
+
+def ring_sine(disc: SkyDisc) -> np.ndarray:
+    """Return the sine of the angle at which Saturn's ring plane is seen, from the flattening of its outline."""
+    equatorial_km, polar_km = radii_km("saturn")
+    eccentricity2 = 1.0 - (polar_km / equatorial_km) ** 2
+    return np.sqrt(np.clip(1.0 - (1.0 - (1.0 - disc.flattening) ** 2) / eccentricity2, 0.0, 1.0))
 
 
 def _angle(a: np.ndarray, b: np.ndarray) -> np.ndarray:
@@ -88,7 +106,7 @@ def _angle(a: np.ndarray, b: np.ndarray) -> np.ndarray:
     return np.arctan2(np.sqrt((cross**2).sum(axis=0)), (a * b).sum(axis=0))
 
 
-def _magnitude(
+def _magnitudes(
     body: str,
     distance_km: np.ndarray,
     to_sun_km: np.ndarray,
@@ -97,21 +115,31 @@ def _magnitude(
     sun_from_body: np.ndarray | None,
     pole: np.ndarray,
     tt_s: np.ndarray,
-) -> np.ndarray:
+) -> tuple[np.ndarray, np.ndarray]:
+    """Return the magnitude, and that of the globe alone, without rings."""
     if body == "sun" or sun_from_body is None:
-        return sun_magnitude(distance_km / AU_KM)
+        return _alone(sun_magnitude(distance_km / AU_KM))
     if body == "moon":
-        return moon_magnitude(phase_deg, distance_km)
+        return _alone(moon_magnitude(phase_deg, distance_km))
     if body in ("pluto",):
-        return np.full_like(distance_km, np.nan)
+        return _alone(np.full_like(distance_km, np.nan))
     sin_sun = (pole * sun_from_body).sum(axis=0) / to_sun_km
     latitude, sun_latitude = np.degrees(np.arcsin(sin_latitude)), np.degrees(np.arcsin(sin_sun))
-    return planet_magnitude(
-        body,
-        to_sun_km / AU_KM,
-        distance_km / AU_KM,
-        phase_deg,
-        sub_observer_latitude_deg=latitude,
-        sub_solar_latitude_deg=sun_latitude,
-        year=2000.0 + tt_s / YEAR_S,
-    )
+
+    def seen(rings: bool) -> np.ndarray:
+        return planet_magnitude(
+            body,
+            to_sun_km / AU_KM,
+            distance_km / AU_KM,
+            phase_deg,
+            sub_observer_latitude_deg=latitude,
+            sub_solar_latitude_deg=sun_latitude,
+            year=2000.0 + tt_s / YEAR_S,
+            rings=rings,
+        )
+
+    return (seen(True), seen(False)) if body == "saturn" else _alone(seen(True))
+
+
+def _alone(magnitude: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    return magnitude, magnitude

@@ -41,5 +41,7 @@ def test_guiding_on_a_star_lets_the_moon_trail():
 
 
 def test_a_star_is_named_for_each_visit():
-    plan = build_plan(changed(example(CAMPAIGN), guiding={"on": "star", "reach_deg": 2.0}, wish={"visits": 6}))
+    plan = build_plan(
+        changed(example(CAMPAIGN), guiding={"on": "star", "reach_deg": 2.0}, wish={"visits": 6})
+    )
     assert all(passage.guide and "arcmin from the middle" in passage.guide for passage in plan.passages)

@@ -169,3 +169,40 @@ def test_guiding_takes_the_place_of_the_mounts_own_error():
     assert radiometry.tracking_error_of(guided) == 0.5
     assert radiometry.tracking_error_of(still) == 0.0
     assert radiometry.psf_fwhm_px(guided, 2.0, 1.0) < radiometry.psf_fwhm_px(rig, 2.0, 1.0)
+
+
+def saturn_on(*date):
+    from datetime import UTC, datetime
+
+    from planner.sky.discs import sky_disc
+    from planner.sky.timescale import tt_s_from_datetime
+
+    return sky_disc("saturn", None, np.atleast_1d(tt_s_from_datetime(datetime(*date, tzinfo=UTC))))
+
+
+def test_the_rings_send_more_than_half_of_saturns_light_when_open_and_none_when_edge_on():
+    """Opposition on 2017 June 15, rings open by 26.5 degrees; edge-on on 2025 March 23 (almanacs; from memory).
+
+    Mallama & Hilton 2018, by hand at phase angle 0: -8.914 - (1.825 + 0.378) sin 26.5 deg against -8.95; the day's phase
+    angle, up to a tenth of a degree, takes up to 0.02 magnitudes of the surge.
+    """
+    from planner.sky.discs import ring_share, ring_sine
+
+    wide, edge = saturn_on(2017, 6, 15), saturn_on(2025, 3, 23)
+    assert np.degrees(np.arcsin(ring_sine(wide))) == pytest.approx(26.5, abs=0.2)
+    assert np.degrees(np.arcsin(ring_sine(edge))) < 1.0
+    by_hand = 1 - 10 ** (-0.4 * (-8.95 + 8.914 + 2.203 * np.sin(np.radians(26.5))))
+    assert ring_share(wide) == pytest.approx(by_hand, abs=0.02)
+    assert ring_share(wide) > 0.5
+    assert ring_share(edge) < 0.03
+
+
+def test_saturns_globe_has_the_surface_brightness_that_handbooks_give():
+    """6.9 V magnitudes a square arcsecond at mean opposition (Cox 2000, Allen's Astrophysical Quantities; from memory).
+
+    With the light of the open rings put on the globe it would come out 0.9 magnitudes too bright.
+    """
+    disc = saturn_on(2017, 6, 15)
+    area = np.pi * disc.semidiameter_arcsec**2 * (1 - disc.flattening)
+    assert disc.globe_magnitude + 2.5 * np.log10(area) == pytest.approx(6.9, abs=0.15)
+    assert disc.globe_magnitude - disc.magnitude > 0.8
