@@ -35,6 +35,11 @@ def _axes(rows: int, size: tuple[float, float], sharex: bool = True):  # type: i
     return figure, axes
 
 
+def time_axes(rows: int, size: tuple[float, float]):  # type: ignore[no-untyped-def]
+    """Return (figure, axes) in the report's own look, each with its own time."""
+    return _axes(rows, size, sharex=False)
+
+
 def _times(result: CheckResult) -> np.ndarray:
     return _moments(result.times_tt_s)
 

@@ -21,6 +21,7 @@ COMMANDS = {
     "rehearse": ("planner.cli.rehearse", "Render the frames of a plan as the rig would record them."),
     "solve": ("planner.cli.solve", "Where frames point, from their stars."),
     "check": ("planner.cli.check", "Measure frames and compare them with the prediction."),
+    "lightcurve": ("planner.cli.lightcurve", "When a star went out and came back, in frames or a video."),
     "compose": ("planner.cli.compose", "Make the composite picture and the path plot."),
     "timelapse": ("planner.cli.timelapse", "Make a film of the frames, registered and at a stated pace."),
     "parallax": ("planner.cli.parallax", "The distance of a body from the tracks of two sites."),
