@@ -7,11 +7,12 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from imaging.stars.camera import ARCSEC_RAD, Camera, Lens, unproject
+from imaging.stars.camera import ARCSEC_RAD, Camera, Lens, unknown_lens, unproject
 from imaging.stars.groups import local_groups
 from imaging.stars.hypotheses import hypotheses, pair_groups, turned_by
 from imaging.stars.prescreen import promising
 from imaging.stars.refine import Field, Match, Sky, grow
+from imaging.stars.roundness import narrowed
 from imaging.stars.verify import ACCEPT_LOG10, Tally
 
 SCALE_TOLERANCE = 0.12
@@ -33,8 +34,8 @@ class Effort:
 # From the cheap and likely to the dear and rare: nearby and clean, clouded, far off, far off and clouded.
 EFFORTS = (
     Effort(1.2, 40, 60, 5, 6),
-    Effort(1.2, 40, 130, 6, 10),
     Effort(4.0, 50, 70, 6, 7),
+    Effort(1.2, 40, 130, 6, 10),
     Effort(2.0, 70, 250, 6, 11),
     Effort(4.0, 50, 130, 6, 10),
     Effort(1.2, 40, 150, 39, 14, size=3),
@@ -43,10 +44,15 @@ EFFORTS = (
 # Where the catalogue has few stars: every triple of the brightest, as hot pixels and planets are among them.
 SPARSE_EFFORTS = (
     Effort(1.2, 24, 200, 23, 12, size=3),
-    Effort(1.2, 45, 200, 44, 16, size=3),
     Effort(4.0, 24, 200, 23, 10, size=3),
+    Effort(1.2, 45, 200, 44, 16, size=3),
     Effort(4.0, 40, 200, 39, 14, size=3),
+    Effort(4.0, 30, 30, 29, 22, size=3),
 )
+# 1 % of distortion across a frame changes the ratios of a local group by less; of triples there are more
+_QUADS, _TRIPLES = 0.012, 0.008
+_ROUND = (0.2, 0.25)  # of the widths of linear and other terms
+_FEW_GROWN, _HOPEFUL_LOG10 = 8, -1.0  # when further hypotheses are grown
 _SPARSE = 60  # catalogue stars a field
 
 
@@ -85,7 +91,10 @@ def solve_hinted(
     best, trials, tally = 0.0, 0, Tally()
     around = sky_near(min(2.2 * radius, np.pi), 2 * _SPARSE / field_sr)
     per_field = len(around) * field_sr / (2 * np.pi * (1 - np.cos(min(2.2 * radius, np.pi))))
-    for turn, effort in enumerate(SPARSE_EFFORTS if per_field < _SPARSE else EFFORTS, 1):
+    sparse = per_field < _SPARSE
+    # with few stars a lens is taken for a round one first, then for any
+    kinds = [narrowed(lens, *_ROUND), lens] if sparse and lens is unknown_lens(3) else [lens]
+    for turn, effort in enumerate(SPARSE_EFFORTS if sparse else EFFORTS, 1):
         used = min(effort.image_stars, len(field.x_px))
         if used < 4:
             break
@@ -101,21 +110,31 @@ def solve_hinted(
             image.longest.max() * (1.05 + scale_tolerance),
         )
         groups = local_groups(sky.vectors, effort.size, effort.sky_neighbours, most, least)
-        pairs = pair_groups(image, groups, scale_tolerance)
+        pairs = pair_groups(
+            image, groups, scale_tolerance, tolerance=_TRIPLES if effort.size == 3 else _QUADS
+        )
         allowed = (focal / (1 + scale_tolerance), focal * (1 + scale_tolerance))
         guesses = hypotheses(field, sky, image, groups, pairs, focal, allowed, parity, lens.projection)
         if rotation_deg is not None:
             guesses = guesses.take(turned_by(guesses, rotation_deg) < ROLL_TOLERANCE_DEG)
         guesses = guesses.near(center, radius, effort.reach + 0.3)
         trials += len(guesses)
-        for i in promising(guesses, field, sky):
-            camera = Camera(guesses.axes[i], guesses.focal_px[i], x0, y0, half, projection=lens.projection)
-            match = grow(camera, lens, field, sky, guesses.image_stars[i], guesses.sky_stars[i])
-            if match is None:
-                continue
-            # over the sets tried the odds are shared out as 1 / (n (n + 1)), which sums to one
-            log10, match = tally.add(match, sky.index, guesses.log_share(i) - np.log(turn * (turn + 1)))
-            best = min(best, log10)
-            if log10 < ACCEPT_LOG10:
-                return Attempt(match, best, trials, log10)
+        best_here = 0.0
+        for rank, i in enumerate(promising(guesses, field, sky)):
+            if rank >= _FEW_GROWN and best_here > _HOPEFUL_LOG10:
+                break
+            for held in kinds:
+                camera = Camera(
+                    guesses.axes[i], guesses.focal_px[i], x0, y0, half, projection=lens.projection
+                )
+                match = grow(camera, held, field, sky, guesses.image_stars[i], guesses.sky_stars[i])
+                if match is None or match.evidence.chance_log10(1) > _HOPEFUL_LOG10:
+                    break
+                # over the sets tried the odds are shared out as 1 / (n (n + 1)), which sums to one
+                log_share = guesses.log_share(i) - np.log(turn * (turn + 1) * len(kinds))
+                log10, match = tally.add(match, sky.index, log_share)
+                best_here = min(best_here, log10)
+                if log10 < ACCEPT_LOG10:
+                    return Attempt(match, log10, trials, log10)
+        best = min(best, best_here)
     return Attempt(None, best, trials)

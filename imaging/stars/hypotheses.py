@@ -10,7 +10,6 @@ from imaging.stars.camera import unproject
 from imaging.stars.groups import Groups
 from imaging.stars.refine import Field, Sky
 
-CODE_TOLERANCE = 0.012  # 1 % of distortion across a frame changes a local quad's ratios by less
 # of true groups over the fields of benchmarks/drawn_fields.py and real frames: median 4e-4, 95 % below 1.5e-3
 _SHAPE_ERROR, _PLACE_ERROR_PX = 6e-4, 0.3
 _SPREAD_MAG = 0.25
@@ -68,7 +67,7 @@ def turned_by(guesses: Hypotheses, rotation_deg: float) -> np.ndarray:
 
 
 def pair_groups(
-    image: Groups, sky: Groups, scale_tolerance: float, limit: int = 60_000, tolerance: float = CODE_TOLERANCE
+    image: Groups, sky: Groups, scale_tolerance: float, tolerance: float, limit: int = 20_000
 ) -> tuple[np.ndarray, np.ndarray]:
     """Return indices (image group, sky group) of groups of like shape and, within the tolerance, like size."""
     from scipy.spatial import cKDTree
@@ -79,13 +78,12 @@ def pair_groups(
     image_points = np.column_stack([image.codes, np.log(image.longest) * stretch])
     sky_points = np.column_stack([sky.codes, np.log(sky.longest) * stretch])
     row = np.flatnonzero(_among(sky_points, image_points, tolerance * 1.2))
-    sky_tree = cKDTree(sky_points[row], balanced_tree=False, compact_nodes=False)
-    found = sky_tree.query_ball_point(image_points, r=tolerance * 1.2)
-    number = np.array([len(one) for one in found])
-    first = np.repeat(np.arange(len(image)), number)
-    second = (
-        np.concatenate([np.asarray(one, dtype=int) for one in found]) if number.sum() else np.empty(0, int)
+    image_tree, sky_tree = (
+        cKDTree(points, balanced_tree=False, compact_nodes=False)
+        for points in (image_points, sky_points[row])
     )
+    near = image_tree.sparse_distance_matrix(sky_tree, tolerance * 1.2, output_type="ndarray")
+    first, second = near["i"], near["j"]
     second = row[second]
     if len(first) > limit:
         away = np.abs(image.codes[first] - sky.codes[second]).max(axis=1)
