@@ -183,8 +183,8 @@ def saturn_on(*date):
 def test_the_rings_send_more_than_half_of_saturns_light_when_open_and_none_when_edge_on():
     """Opposition on 2017 June 15, rings open by 26.5 degrees; edge-on on 2025 March 23 (almanacs; from memory).
 
-    Mallama & Hilton 2018, by hand at phase angle 0: -8.914 - (1.825 + 0.378) sin 26.5 deg against -8.95; the day's phase
-    angle, up to a tenth of a degree, takes up to 0.02 magnitudes of the surge.
+    Mallama & Hilton 2018, by hand at phase angle 0: -8.914 - (1.825 + 0.378) sin 26.5 deg against -8.95; the phase
+    angle of the day, up to a tenth of a degree, takes up to 0.02 magnitudes of the surge.
     """
     from planner.sky.discs import ring_share, ring_sine
 
