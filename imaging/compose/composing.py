@@ -13,8 +13,9 @@ from imaging.compose.disc_path import disc_path
 from imaging.compose.light import Light
 from imaging.compose.material import Material
 from imaging.compose.page import write_page
+from imaging.compose.palette import DARK, LIGHT
 from imaging.compose.pathdata import PathData
-from imaging.compose.pathplot import DARK, LIGHT, write_path_plot
+from imaging.compose.pathplot import write_path_plot
 from imaging.compose.phase_series import phase_series
 from imaging.compose.picture import Picture
 from imaging.compose.sky_path import sky_path
@@ -37,7 +38,7 @@ class Outputs:
     linear: bool = False
     caption: bool = True
     page: bool = True
-    dpi: int = 200
+    dpi: int = 300
     force: bool = False
 
     def picture(self, suffix: str) -> Path:

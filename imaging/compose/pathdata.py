@@ -15,6 +15,7 @@ from imaging.compose.choices import Choices
 from imaging.compose.material import Material, Registered
 from imaging.compose.orientation import up_pa_deg
 from imaging.track.path import target_place
+from planner.errors import InputError
 from planner.events.family import Geometry
 from planner.sky.places import north_of_date_pa_deg
 from planner.sky.timescale import datetime_from_tt_s
@@ -48,12 +49,23 @@ class Residuals:
 
 
 @dataclass(frozen=True)
+class SecondPath:
+    """The same target from another site: its name, predicted path (2, m), measured places (2, n), their 1-sigma."""
+
+    site: str
+    line: np.ndarray
+    points: np.ndarray
+    point_sigma: np.ndarray
+
+
+@dataclass(frozen=True)
 class PathData:
     """Everything a path plot draws.
 
     `line`: predicted path (2, m), right and up in arcsec. `points`, `sigma`: measured places (2, n) and their 1-sigma.
     `disc_radius_arcsec`: of the reference disc about the origin, NaN among stars.
-    `anchor_deg`: ICRS direction of the origin (of the disc, at the middle of the path).
+    `anchor_deg`: ICRS direction of the origin (of the disc, at the middle of the path); where `horizontal`, minus its
+    azimuth and its altitude.
     """
 
     title: str
@@ -79,10 +91,22 @@ class PathData:
     phase_angle_deg: float
     bright_limb_pa_deg: float
     campaign: bool
+    horizontal: bool = False
+    second: SecondPath | None = None
+    star_limit: float | None = None
 
 
-def path_data(material: Material, choices: Choices, zone: tzinfo = UTC, zone_label: str = "UTC") -> PathData:
-    """Return the path plot's data for the whole span of the frames and a little beyond."""
+def path_data(
+    material: Material,
+    choices: Choices,
+    zone: tzinfo = UTC,
+    zone_label: str = "UTC",
+    other: Material | None = None,
+) -> PathData:
+    """Return the path plot's data for the whole span of the frames and a little beyond.
+
+    `other`: the same event from a second site, drawn beside. Raises InputError when the grid asked for does not suit.
+    """
     frames = material.frames
     first, last = frames[0].tt_s, frames[-1].tt_s
     span = max(last - first, 60.0)
@@ -101,7 +125,7 @@ def path_data(material: Material, choices: Choices, zone: tzinfo = UTC, zone_lab
     measured = [frame for frame in frames if frame.measured]
     points = np.array([_of_frame(canvas, f, on_disc, middle_anchor) for f in measured]).reshape(-1, 2).T
     disc = geometry.discs.get(on_disc or "")
-    return PathData(
+    data = PathData(
         title=material.plan.title,
         site=_site_line(material),
         body=material.target,
@@ -114,7 +138,7 @@ def path_data(material: Material, choices: Choices, zone: tzinfo = UTC, zone_lab
         points=points,
         point_sigma=np.array([frame.sigma_arcsec for frame in measured]),
         residuals=_residuals(canvas, measured, on_disc, middle_anchor, tt_s, line),
-        ticks=_ticks(tt_s, line, zone, last - first > 5 * 86400.0),
+        ticks=time_ticks(tt_s, line, zone, last - first > 5 * 86400.0),
         zone=zone,
         zone_label=zone_label,
         disc_radius_arcsec=float(disc.semidiameter_arcsec[PATH_POINTS // 2]) if disc is not None else np.nan,
@@ -125,7 +149,40 @@ def path_data(material: Material, choices: Choices, zone: tzinfo = UTC, zone_lab
         phase_angle_deg=float(disc.phase_angle_deg[PATH_POINTS // 2]) if on_disc == "moon" and disc else 0.0,
         bright_limb_pa_deg=float(disc.bright_limb_pa_deg[PATH_POINTS // 2]) if disc else 0.0,
         campaign=last - first > 5 * 86400.0,
+        second=None if other is None else _second(other, canvas, on_disc, middle_anchor),
+        star_limit=choices.star_limit,
     )
+    _require_grid(choices.grid, data)
+    if choices.grid == "altaz":
+        from imaging.compose.horizontal import over_horizon
+
+        return over_horizon(data, material)
+    return data
+
+
+def _require_grid(grid: str, data: PathData) -> None:
+    suits = ("auto", "disc" if data.on_disc else "radec", "altaz")
+    if grid not in suits:
+        raise InputError(f"--grid: found {grid!r}; this path can be drawn with {', '.join(suits)}")
+
+
+def _second(
+    other: Material, canvas: Canvas, on_disc: str | None, anchor_deg: tuple[float, float]
+) -> SecondPath:
+    """Return the path of another site in the same plane."""
+    first, last = other.frames[0].tt_s, other.frames[-1].tt_s
+    geometry = other.geometry_at(np.linspace(first, last, PATH_POINTS))
+    ra, dec, _ = target_place(geometry)
+    anchors = (
+        (geometry.discs[on_disc].ra_deg, geometry.discs[on_disc].dec_deg)
+        if on_disc is not None
+        else tuple(np.full(ra.shape, value) for value in anchor_deg)
+    )
+    places = [_plane(canvas, a, d, r, e) for a, d, r, e in zip(*anchors, ra, dec, strict=True)]
+    measured = [frame for frame in other.frames if frame.measured]
+    points = np.array([_of_frame(canvas, f, on_disc, anchor_deg) for f in measured]).reshape(-1, 2).T
+    sigma = np.array([frame.sigma_arcsec for frame in measured])
+    return SecondPath(other.plan.site.name, np.array(places, float).T, points, sigma)
 
 
 def _north_of_date(anchor_deg: tuple[float, float], tt_s: float) -> float:
@@ -208,7 +265,7 @@ def _site_line(material: Material) -> str:
     return f"{site.name}, {north} {east}, {site.height_m:.0f} m"
 
 
-def _ticks(tt_s: np.ndarray, line: np.ndarray, zone: tzinfo, campaign: bool) -> tuple[TimeTick, ...]:
+def time_ticks(tt_s: np.ndarray, line: np.ndarray, zone: tzinfo, campaign: bool) -> tuple[TimeTick, ...]:
     """Return about ten ticks at round instants of the zone."""
     start: datetime = datetime_from_tt_s(float(tt_s[0])).astimezone(zone)  # type: ignore[union-attr]
     span = float(tt_s[-1] - tt_s[0])

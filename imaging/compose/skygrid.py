@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -24,10 +25,27 @@ class GridLine:
     kind: str
 
 
-def radec_grid(
-    canvas: Canvas, anchor_deg: tuple[float, float], view: tuple[float, float, float, float], lines: int = 6
-) -> list[GridLine]:
+View = tuple[float, float, float, float]
+
+
+def radec_grid(canvas: Canvas, anchor_deg: tuple[float, float], view: View, lines: int = 6) -> list[GridLine]:
     """Return RA and Dec lines through a view (left, right, low, high in arcsec from the anchor)."""
+    return _grid(canvas, anchor_deg, view, lines, _RA_STEPS_DEG, ra_label)
+
+
+def altaz_grid(canvas: Canvas, anchor_deg: tuple[float, float], view: View, lines: int = 6) -> list[GridLine]:
+    """Return lines of azimuth and altitude; the anchor is (minus azimuth, altitude), so that azimuth runs right."""
+    return _grid(canvas, anchor_deg, view, lines, _DEC_STEPS_DEG, azimuth_label)
+
+
+def _grid(
+    canvas: Canvas,
+    anchor_deg: tuple[float, float],
+    view: View,
+    lines: int,
+    steps_deg: tuple[float, ...],
+    label: Callable[[float, float], str],
+) -> list[GridLine]:
     edge = np.linspace(0, 1, 60)
     left, right, low, high = view
     rim_x = np.concatenate([left + (right - left) * edge, np.full(60, right), right + (left - right) * edge,
@@ -39,14 +57,14 @@ def radec_grid(
     turn = (ra - anchor_deg[0] + 180.0) % 360.0 - 180.0
     ra_low, ra_high, dec_low, dec_high = turn.min(), turn.max(), dec.min(), dec.max()
     found = []
-    ra_step = _step(_RA_STEPS_DEG, ra_high - ra_low, lines)
+    ra_step = _step(steps_deg, ra_high - ra_low, lines)
     dec_step = _step(_DEC_STEPS_DEG, dec_high - dec_low, lines)
     decs = np.linspace(max(-89.9, dec_low - dec_step), min(89.9, dec_high + dec_step), 300)
     ras = np.linspace(ra_low - ra_step, ra_high + ra_step, 300) + anchor_deg[0]
     first = np.ceil((ra_low + anchor_deg[0]) / ra_step)
     for value in np.arange(first, np.floor((ra_high + anchor_deg[0]) / ra_step) + 1) * ra_step:
         points = np.array(canvas.from_sky(*anchor_deg, np.full(300, value), decs))
-        found.append(GridLine(points, ra_label(value, ra_step), "ra"))
+        found.append(GridLine(points, label(value, ra_step), "ra"))
     for value in np.arange(np.ceil(dec_low / dec_step), np.floor(dec_high / dec_step) + 1) * dec_step:
         points = np.array(canvas.from_sky(*anchor_deg, ras, np.full(300, value)))
         found.append(GridLine(points, dec_label(value, dec_step), "dec"))
@@ -65,6 +83,16 @@ def ra_label(ra_deg: float, step_deg: float) -> str:
     if step_deg < 15:
         text += f" {minutes:02d}m"
     return text + (f" {left:02d}s" if step_deg < 0.25 else "")
+
+
+def azimuth_label(minus_azimuth_deg: float, step_deg: float) -> str:
+    """Return azimuth from north through east, with the name of the direction where it has one."""
+    azimuth = -minus_azimuth_deg % 360.0
+    names = ("N", "NE", "E", "SE", "S", "SW", "W", "NW")
+    text = dec_label(azimuth, step_deg).lstrip("+")
+    return (
+        f"{text} {names[round(azimuth / 45.0) % 8]}" if abs((azimuth + 22.5) % 45.0 - 22.5) < 1e-6 else text
+    )
 
 
 def dec_label(dec_deg: float, step_deg: float) -> str:

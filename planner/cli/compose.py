@@ -80,11 +80,16 @@ class _Several(click.ParamType):
 @click.option("--linear", is_flag=True, help="No stretch: tones proportional to light.")
 @click.option("--formats", type=_Several(PICTURE_FORMATS), default="fits,png", show_default=True)
 @click.option("--plots", type=_Several(PLOT_FORMATS), default="png,svg", show_default=True)
+@click.option("--grid", type=click.Choice(("auto", "radec", "altaz", "disc")), default="auto", show_default=True,
+              help="Of the path plot: sky coordinates, the horizon's, or position angles about the disc.")  # fmt: skip
+@click.option(
+    "--star-limit", type=click.FloatRange(-2, 11), metavar="MAG", help="Faintest star of the path plot."
+)
 @click.option("--local-time", is_flag=True, help="Label plots in the site's time zone instead of UTC.")
 @click.option("--no-caption", is_flag=True, help="No caption band below PNG and JPEG.")
 @click.option("--no-page", is_flag=True, help="No interactive page.")
 @click.option("--scratch", type=click.Path(path_type=Path), help="Folder for large temporary files.")
-@click.option("--dpi", type=click.IntRange(50, 1200), default=200, show_default=True)
+@click.option("--dpi", type=click.IntRange(50, 1200), default=300, show_default=True)
 @click.option("--force", is_flag=True, help="Replace outputs that exist.")
 @click.option("--quiet", is_flag=True)
 @click.option("--json", "as_json", is_flag=True, help="Print the statement of truth.")
@@ -151,12 +156,14 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
             instants=chosen["instants"],
             scale_arcsec_px=chosen["scale"],
             colour=chosen["colour"],
+            grid=chosen["grid"],
+            star_limit=chosen["star_limit"],
             enlarge=chosen["enlarge"],
             scratch=chosen["scratch"],
             tick=tick,
         )
         picture = compose_picture(material, choices, other, landscape)
-        data = path_data(material, choices, zone, zone_label)
+        data = path_data(material, choices, zone, zone_label, other)
     paths, statement = write_picture(material, picture, outputs, data)
     paths += write_plots(data, outputs)
     aside = statement["set_aside"]

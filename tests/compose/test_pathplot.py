@@ -16,10 +16,14 @@ from imaging.compose.choices import Choices
 from imaging.compose.files import captioned, round_length
 from imaging.compose.labels import Crowd
 from imaging.compose.material import gather
+from imaging.compose.palette import DARK, LIGHT
 from imaging.compose.pathdata import path_data
-from imaging.compose.pathplot import DARK, LIGHT, draw_path_plot
-from imaging.compose.skygrid import dec_label, edge_crossing, ra_label, radec_grid
+from imaging.compose.pathplot import draw_path_plot
+from imaging.compose.plane import plane_to_sky
+from imaging.compose.plot_marks import star_places
+from imaging.compose.skygrid import altaz_grid, dec_label, edge_crossing, ra_label, radec_grid
 from imaging.compose.stretch import Stretch, background, measured_stretch
+from planner.errors import InputError
 from planner.sequence.documents import load_plan
 
 
@@ -27,18 +31,61 @@ def material_of(rehearsal):
     return gather(load_plan(rehearsal.plan), rehearsal.track, rehearsal.frames)
 
 
-@pytest.mark.parametrize("event", ["transit", "occultation", "loop"])
-@pytest.mark.parametrize("palette", [LIGHT, DARK])
-def test_no_two_labels_cover_each_other(event, palette, request):
-    data = path_data(material_of(request.getfixturevalue(event)), Choices())
+@pytest.mark.parametrize(
+    ("event", "grid", "palette"),
+    [
+        ("transit", "auto", LIGHT),
+        ("occultation", "auto", DARK),
+        ("loop", "auto", LIGHT),
+        ("occultation", "altaz", LIGHT),
+    ],
+)
+def test_no_two_words_cover_each_other_and_no_star_runs_under_them(event, grid, palette, request):
+    data = path_data(material_of(request.getfixturevalue(event)), Choices(grid=grid))
     figure = draw_path_plot(data, palette)
     figure.canvas.draw()
     axes = figure.axes[0]
-    boxes = [(text.get_text(), text.get_window_extent()) for text in axes.texts if text.get_text()]
+    words = [*axes.texts, *figure.texts, *figure.legends[0].get_texts()]
+    for panel in figure.axes[1:]:
+        low, high = panel.get_ylim()
+        ticks = zip(panel.get_yticks(), panel.get_yticklabels(), strict=True)
+        words += [panel.yaxis.label, *(label for value, label in ticks if low <= value <= high)]
+    boxes = [(text.get_text(), text.get_window_extent()) for text in words if text.get_text()]
     assert len(boxes) > 10
     for (one, a), (other, b) in combinations(boxes, 2):
         wide, tall = min(a.x1, b.x1) - max(a.x0, b.x0), min(a.y1, b.y1) - max(a.y0, b.y0)
         assert not (wide > 1 and tall > 1), f"{one!r} covers {other!r}"
+    ornaments = [*figure.texts, *figure.legends[0].get_texts()]
+    for stars in axes.collections:
+        if not hasattr(stars, "get_sizes") or len(stars.get_offsets()) < 20:
+            continue
+        x, y = axes.transData.transform(stars.get_offsets()).T
+        for text in [*ornaments, *(t for t in axes.texts if t.get_text() in "NE")]:
+            box = text.get_window_extent()
+            assert not ((x > box.x0) & (x < box.x1) & (y > box.y0) & (y < box.y1)).any(), text.get_text()
+
+
+def test_over_the_horizon_the_path_is_where_the_site_has_it(occultation):
+    """Altitude and azimuth measured back from the plot's plane against the geometry; azimuth runs to the right."""
+    material = material_of(occultation)
+    data = path_data(material, Choices(grid="altaz"))
+    geometry = material.geometry_at(data.line_tt_s)
+    minus_azimuth, altitude = plane_to_sky(*data.anchor_deg, *data.canvas.to_plane(*data.line))
+    assert altitude == pytest.approx(geometry.altitude_deg, abs=1e-6)
+    assert -minus_azimuth % 360 == pytest.approx(geometry.azimuth_deg % 360, abs=1e-6)
+    assert data.line[0, -1] > data.line[0, 0]  # toward the west, looking west
+    labels = [line.label for line in altaz_grid(data.canvas, data.anchor_deg, (-4e4, 4e4, -4e4, 4e4))]
+    assert "270° W" in labels
+    with pytest.raises(InputError, match="--grid"):
+        path_data(material, Choices(grid="radec"))
+
+
+def test_stars_are_drawn_to_the_limit_asked_for(loop):
+    data = path_data(material_of(loop), Choices(star_limit=6.0))
+    places = star_places(data, (-30000.0, 30000.0, -20000.0, 20000.0))
+    assert 5 < len(places.magnitude) < 60
+    assert places.faintest <= 6.0
+    assert places.magnitude[0] == pytest.approx(1.36, abs=0.1)  # Regulus, V 1.36: from memory
 
 
 def test_ticks_are_at_round_instants_of_the_zone(transit, loop):
@@ -75,8 +122,6 @@ def test_placed_labels_never_overlap_while_there_is_room(points):
 def test_grid_lines_run_where_the_sky_has_them():
     canvas = Canvas(1, 1, 1.0, 0.0, 0.0, 20.0)
     lines = radec_grid(canvas, (150.0, 20.0), (-20000.0, 20000.0, -15000.0, 15000.0))
-    from imaging.compose.plane import plane_to_sky
-
     for line in lines:
         ra, dec = plane_to_sky(150.0, 20.0, *canvas.to_plane(*line.points))
         constant = ra if line.kind == "ra" else dec
