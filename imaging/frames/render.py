@@ -28,7 +28,7 @@ from planner.sequence.skyglow import sky_v_mag_arcsec2
 from planner.sky.discs import SkyDisc, sky_disc
 from planner.sky.observer import local_axes
 from planner.sky.photometry import airmass
-from planner.sky.places import altaz
+from planner.sky.places import altaz, direction
 from planner.sky.refraction import refraction_arcsec
 
 SIDEREAL_ARCSEC_S = 15.041
@@ -118,6 +118,7 @@ class Scene:
     zenith: np.ndarray
     moon: SkyDisc
     moon_altitude_deg: np.ndarray
+    sun_azimuth_deg: np.ndarray
     _stars: dict[tuple[float, ...], object] = field(default_factory=dict)
 
     @classmethod
@@ -146,7 +147,10 @@ class Scene:
         zenith = local_axes(observer, middle)[:, 2, :]
         moon = sky_disc("moon", observer, middle)
         moon_altitude, _ = altaz((moon.ra_deg, moon.dec_deg), observer, middle)
-        return cls(plan, faults, cut, seed, frames, chosen, rig, geometry, zenith, moon, moon_altitude)
+        _, sun_azimuth = altaz(direction("sun", observer, middle).vector_km, observer, middle)
+        return cls(
+            plan, faults, cut, seed, frames, chosen, rig, geometry, zenith, moon, moon_altitude, sun_azimuth
+        )
 
     def __len__(self) -> int:
         """Give the number of frames chosen."""
@@ -340,6 +344,7 @@ class Scene:
                 # the law of scattering diverges at the Moon itself
                 max(float(away), 1.0),
                 float(moon.phase_angle_deg[position]),
+                float(self.geometry.azimuth_deg[position] - self.sun_azimuth_deg[position]),
             )
         )
 

@@ -85,7 +85,7 @@ class Setting:
     def sky_mag_arcsec2(self, geometry: Geometry) -> np.ndarray:
         """Return the brightness of the sky at the target: dark, twilight and moonlight."""
         from planner.sky.discs import sky_disc
-        from planner.sky.places import altaz, separation_arcsec, unit_vector
+        from planner.sky.places import altaz, direction, separation_arcsec, unit_vector
 
         moon = geometry.discs.get("moon") or sky_disc("moon", self.observer, geometry.tt_s)
         target_ra, target_dec = _target_place(geometry)
@@ -94,6 +94,8 @@ class Setting:
             separation_arcsec(unit_vector(moon.ra_deg, moon.dec_deg), unit_vector(target_ra, target_dec))
             / 3600
         )
+        sun = direction("sun", self.observer, geometry.tt_s)
+        _, sun_azimuth = altaz(sun.vector_km, self.observer, geometry.tt_s)
         return sky_v_mag_arcsec2(
             self.site.sky_brightness_mag_arcsec2,
             self.site.extinction_mag,
@@ -102,6 +104,7 @@ class Setting:
             moon_altitude,
             apart,
             moon.phase_angle_deg,
+            geometry.azimuth_deg - sun_azimuth,
         )
 
     def gain_for_bright(self) -> float:

@@ -92,7 +92,7 @@ def test_the_sun_behind_its_filter_is_exposed_as_eclipse_guides_say(f_number):
 
 @pytest.mark.parametrize("magnitude", [17.0, 20.0, 22.0])
 def test_the_night_sky_has_the_luminance_of_another_conversion(magnitude):
-    """10.8e4 x 10^(-0.4 m) cd / m2, as sky meters are read (common practice, no source); 1 lambert is 1e4 / pi cd / m2."""
+    """10.8e4 x 10^(-0.4 m) cd / m2, as sky meters are read: common practice, no source. A lambert: 1e4 / pi cd / m2."""
     candela_m2 = float(skyglow.nanolamberts(magnitude)) * 1e-9 * 1e4 / np.pi
     assert candela_m2 == pytest.approx(10.8e4 * 10 ** (-0.4 * magnitude), rel=0.01)
 
@@ -100,8 +100,8 @@ def test_the_night_sky_has_the_luminance_of_another_conversion(magnitude):
 def test_a_dark_sky_fills_a_fast_lens_in_minutes():
     """At f/2.8 and ISO 1600 under V = 21.5 the sky stands at a third of the camera's histogram after two minutes.
 
-    Common practice, no source, held to a factor of 3. A third on the screen is 0.33^2.2 of the linear range, which at ISO
-    1600 is a sixteenth of the 60 000 electrons at ISO 100.
+    Common practice, no source, held to a factor of 3. A third on the screen is 0.33^2.2 of the linear range, which at
+    ISO 1600 is a sixteenth of the 60 000 electrons at ISO 100.
     """
     rig = camera(50.0, 50.0 / 2.8)
     rate = float(radiometry.sky_rate_e_s_px(radiometry.band(rig), 21.5, rig.scale_arcsec_px))
