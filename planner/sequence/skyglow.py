@@ -4,9 +4,9 @@ Dark sky and moonlight: Krisciunas & Schaefer 1991, PASP 103, 1033, good to abou
 Twilight: Patat, Ugolnikov & Postylyakov 2006, A&A 455, 385, table 2 (V, zenith), 5 to 15 degrees of solar depression.
 By day: from measured luminances (sky at the zenith 3.9, horizon Sun 7.0 mag; common practice, no source).
 Towards and away from the Sun: the clear sky of CIE S 011/E:2003 (ISO 15469:2004), type 12, relative to the zenith, with
-the Sun held on the horizon once it has set. Against light scattered once (docs/notes/twilight_direction.py) it is within
-1.1 magnitudes to 6 degrees of depression on the Sun's side. Later, the glow low over the Sun may be brighter by some
-magnitudes, and the sky opposite to it darker by as much. Haze and cloud are left out.
+the Sun held on the horizon once it has set. Against light scattered once (docs/notes/twilight_direction.py) it is
+within 1.1 magnitudes to 6 degrees of depression on the Sun's side. Later, the glow low over the Sun may be brighter by
+some magnitudes, and the sky opposite to it darker by as much. Haze and cloud are left out.
 """
 
 from __future__ import annotations
