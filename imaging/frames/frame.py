@@ -6,11 +6,14 @@ the centre of a pixel is an integer: the same numbers that `astropy.wcs` calls o
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
+
+if TYPE_CHECKING:
+    from planner.sequence.models import Sensor
 
 
 @dataclass(frozen=True)
@@ -27,6 +30,47 @@ class FrameTime:
     sigma_s: float
     source: str
     notes: tuple[str, ...] = ()
+
+    def later(self, delay_s: float, why: str) -> FrameTime:
+        """Return the times of a part of the frame that was exposed `delay_s` after what the stamp tells of."""
+        if delay_s == 0:
+            return self
+        return replace(
+            self,
+            begin_tt_s=self.begin_tt_s + delay_s,
+            middle_tt_s=self.middle_tt_s + delay_s,
+            end_tt_s=self.end_tt_s + delay_s,
+            source=f"{self.source}; {why}",
+        )
+
+    def at_row(self, y_px: float, rows: int, row_zero: str, shutter: Shutter) -> FrameTime:
+        """Return beginning, middle and end at a row of the array, read line by line (rolling shutter).
+
+        The stamp tells of the row that is read first (common practice, no source). `rows` of the frame, `row_zero` as
+        in `Frame`. A row beyond the frame, or NaN, counts as the nearest, or the middle one.
+        """
+        return self.later(shutter.delay_s(y_px, rows, row_zero), "rolling shutter, at the target's row")
+
+
+@dataclass(frozen=True)
+class Shutter:
+    """How a sensor is read: `line_s` from a row to the next (0: all at once), from which edge of the picture."""
+
+    line_s: float = 0.0
+    first: str = "top"
+
+    @classmethod
+    def of(cls, sensor: Sensor, binning: int = 1) -> Shutter:
+        """Return that of a rig's sensor, for frames of `binning` pixels a side summed."""
+        if sensor.shutter != "rolling":
+            return cls()
+        line_s = sensor.rolling_readout_s / max(sensor.height_px - 1, 1) * binning
+        return cls(line_s, sensor.rolling_from)
+
+    def delay_s(self, y_px: float, rows: int, row_zero: str) -> float:
+        """Return how much later than the first row of a frame a row is exposed; see `FrameTime.at_row`."""
+        y = (rows - 1) / 2 if y_px != y_px else min(max(y_px, 0.0), rows - 1.0)
+        return self.line_s * (y if row_zero == self.first else rows - 1 - y)
 
 
 @dataclass(frozen=True)

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import numpy as np
 
@@ -22,6 +23,10 @@ from imaging.track.sightings import Sightings
 from imaging.track.startimes import time_star
 from planner.errors import FrameSetAside, InputError, NoSolutionError
 from planner.sequence.models import Plan
+from planner.sky.starlist import deeper_catalogue
+
+if TYPE_CHECKING:
+    from imaging.frames.calibrating import Calibration
 
 Outcome = Measurement | SetAside
 # What fitted radii of a frame may all be off by: spread between published solar radii is 0.3" (see
@@ -35,11 +40,16 @@ STRAY_SHARE = 0.4
 
 @dataclass(frozen=True)
 class CheckOptions:
-    """How frames are read: `zone` of stamps without one, `pictures` keeps a cut-out a frame."""
+    """How frames are read: `zone` of stamps without one, `pictures` keeps a cut-out a frame.
+
+    `calibration`: what is taken off each frame first. `catalogue`: a deeper star catalogue of the user's.
+    """
 
     zone: str | None = None
     pictures: bool = True
     jobs: int = 1
+    calibration: Calibration | None = None
+    catalogue: Path | None = None
 
 
 def frame_files(folder: Path) -> list[Path]:
@@ -58,12 +68,13 @@ def measure_file(measurer: Measurer, path: Path, options: CheckOptions) -> list[
 
     outcomes: list[Outcome] = []
     try:
-        for frame in read_frames(path, options.zone):
-            name = path.name if frame.frame_index == 0 else f"{path.name}[{frame.frame_index}]"
-            if frame.time is None:
-                outcomes.append(SetAside(name, frame.time_missing or "tells no time"))
-                continue
-            outcomes.append(measurer.measure(frame, pictures=options.pictures))
+        with deeper_catalogue(options.catalogue):
+            for frame in read_frames(path, options.zone, calibration=options.calibration):
+                name = path.name if frame.frame_index == 0 else f"{path.name}[{frame.frame_index}]"
+                if frame.time is None:
+                    outcomes.append(SetAside(name, frame.time_missing or "tells no time"))
+                    continue
+                outcomes.append(measurer.measure(frame, pictures=options.pictures))
     except FrameSetAside as aside:
         outcomes.append(SetAside(path.name, aside.reason))
     return outcomes
@@ -112,8 +123,26 @@ def check_frames(
     tick: Callable[[int, int], None] | None = None,
 ) -> tuple[CheckResult, list[Measurement]]:
     """Measure files and understand them together; see `understand`."""
-    outcomes = measure_files(plan, files, options, tick)
-    return understand(plan, plan_name, outcomes)
+    options = with_hot_pixels(options, files)
+    result, measurements = understand(plan, plan_name, measure_files(plan, files, options, tick))
+    return replace(result, provenance={**result.provenance, **told(options)}), measurements
+
+
+def with_hot_pixels(options: CheckOptions, files: Sequence[Path]) -> CheckOptions:
+    """Return options whose calibration mends the pixels that a few of the frames themselves show to be hot."""
+    from imaging.frames.calibrating import Calibration
+    from imaging.frames.hotpixels import hot_pixels
+
+    hot = hot_pixels(files)
+    if hot is None:
+        return options
+    return replace(options, calibration=replace(options.calibration or Calibration(), hot=hot))
+
+
+def told(options: CheckOptions) -> dict[str, str]:
+    """Return what the header of a result says of how its frames were prepared."""
+    said = options.calibration.provenance() if options.calibration is not None else {}
+    return said | ({"catalogue": str(options.catalogue)} if options.catalogue is not None else {})
 
 
 def understand(

@@ -7,7 +7,7 @@ from dataclasses import replace
 
 import numpy as np
 
-from imaging.frames.frame import Frame
+from imaging.frames.frame import Frame, FrameTime, Shutter
 from imaging.track.cutout import Cutout, cut_out
 from imaging.track.measure_disc import OnDisc
 from imaging.track.measure_stars import AmongStars
@@ -56,7 +56,17 @@ class Measurer:
         if self._catcher is not None:
             found = self._among_stars.found if geometry.reference == "stars" else None
             done = replace(done, star=self._catcher.piece(frame, done, geometry, found))
+        done = replace(done, time=self._time_at_target(frame, done))
         return replace(done, cutout=_picture(frame, done)) if pictures else done
+
+    def _time_at_target(self, frame: Frame, m: Measurement) -> FrameTime:
+        """Return when the target's own row was exposed: measured, else expected (rolling shutter)."""
+        assert frame.time is not None
+        y_px = m.y_px if m.measured else m.predicted_px[1]
+        if not np.isfinite(y_px) and m.star is not None:
+            y_px = m.star.y_px
+        shutter = Shutter.of(self.promise.rig.sensor, frame.binning)
+        return frame.time.at_row(y_px, frame.data.shape[0], frame.row_zero, shutter)
 
 
 def _picture(frame: Frame, m: Measurement) -> Cutout | None:

@@ -29,7 +29,7 @@ _POINTING_SIGMAS = 5.0
 class StarPiece:
     """What one frame holds about a star's expected place, the glow of the Moon's limb taken off; NaN where nothing.
 
-    `dx_px`, `dy_px`: the expected place from the middle pixel. `row_part`: how far down the readout it lies, 0 to 1.
+    `dx_px`, `dy_px`: the expected place from the middle pixel. `y_px`: its row.
     `fwhm_px`: of a star, NaN when not known. `comparison`: light that clouds dim alike, NaN when there is none.
     `placed`: the frame's own stars or limb say where the star is.
     """
@@ -37,7 +37,7 @@ class StarPiece:
     data: np.ndarray
     dx_px: float
     dy_px: float
-    row_part: float
+    y_px: float
     fwhm_px: float
     comparison: float
     placed: bool
@@ -80,11 +80,7 @@ class StarCatcher:
         data = _cut(frame.data, column, row)
         if m.disc is not None:
             data = data - _glow(data, column, row, m, x, y, fwhm)
-        part = y / max(rows - 1, 1)
-        return StarPiece(
-            data.astype(np.float32), x - column, y - row,
-            part if frame.row_zero == "top" else 1.0 - part, fwhm, comparison, placed,
-        )  # fmt: skip
+        return StarPiece(data.astype(np.float32), x - column, y - row, y, fwhm, comparison, placed)
 
     def _laid_on(
         self, frame: Frame, m: Measurement, geometry: Geometry, found: Detections

@@ -57,9 +57,6 @@ def time_star(
     frames, pieces = [m for m, _ in held], [piece for _, piece in held]
     exposure = np.array([max(m.exposure_s, 1e-6) for m in frames])
     begin = np.array([m.time.middle_tt_s for m in frames]) - exposure / 2
-    sensor = promise.rig.sensor
-    if sensor.shutter == "rolling":
-        begin = begin + sensor.rolling_readout_s * np.array([piece.row_part for piece in pieces])
     try:
         flux, was_compared, radius = _light(frames, pieces, exposure)
     except NoSolutionError as none:

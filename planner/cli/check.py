@@ -14,6 +14,10 @@ import click
 @click.option("-o", "--output", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
               help="Where track.ecsv and report.html go [beside the frames].")  # fmt: skip
 @click.option("--zone", metavar="ZONE", help="Zone of stamps that name none: +02:00 or Europe/Madrid.")
+@click.option("--calibration", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
+              help="Folder of bias, dark and flat folders, to calibrate the frames with.")  # fmt: skip
+@click.option("--catalogue", metavar="FILE", type=click.Path(dir_okay=False, path_type=Path),
+              help="A deeper star catalogue (FITS, VOTable, ECSV, CSV), beside the installed one.")  # fmt: skip
 @click.option("--apply", "apply_what", type=click.Choice(["clock"]),
               help="Also write track_clock.ecsv, with the fitted clock offset taken off the times.")  # fmt: skip
 @click.option("--follow", is_flag=True, help="Measure each new frame as it arrives, until Ctrl-C.")
@@ -24,7 +28,20 @@ import click
 @click.option("--strict", is_flag=True, help="Exit code 1 when anything was found, too.")
 @click.option("--force", is_flag=True, help="Replace outputs that exist.")
 def command(  # type: ignore[no-untyped-def]
-    plan_path, folder, output, zone, apply_what, follow, idle, jobs, no_pictures, as_json, strict, force
+    plan_path,
+    folder,
+    output,
+    zone,
+    calibration,
+    catalogue,
+    apply_what,
+    follow,
+    idle,
+    jobs,
+    no_pictures,
+    as_json,
+    strict,
+    force,
 ) -> int:
     """Measure every frame of FRAMES_FOLDER and compare it with the prediction of PLAN.
 
@@ -34,16 +51,25 @@ def command(  # type: ignore[no-untyped-def]
     Example:
       syzygraph check transit.plan.yaml frames -o checked
       syzygraph check transit.plan.yaml incoming --follow
+      syzygraph check mars.plan.yaml frames --calibration tonight --catalogue field.fits
     """
+    from imaging.frames.calibrating import calibration_of
     from imaging.track.checking import CheckOptions, check_frames, frame_files
     from imaging.track.output import json_of, refuse_outputs, write_outputs
     from planner import errors
-    from planner.cli.progress import bar
+    from planner.cli.progress import bar, bars
     from planner.sequence.documents import load_plan
+    from planner.sky.starlist import deeper_catalogue
 
     plan = load_plan(plan_path)
     output = output or folder.with_name(folder.name + "_checked")
-    options = CheckOptions(zone=zone, pictures=not no_pictures, jobs=jobs)
+    with deeper_catalogue(catalogue):  # a wrong file is said before any work
+        pass
+    night = None
+    if calibration is not None:
+        with bars("making calibration masters", quiet=as_json) as (tick,):
+            night = calibration_of(calibration, tick=tick)
+    options = CheckOptions(zone, not no_pictures, jobs, night, catalogue)
     if follow:
         from imaging.track.follow import follow_folder
 

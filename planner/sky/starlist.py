@@ -111,14 +111,21 @@ def deeper_catalogue(path: Path | None) -> Iterator[None]:
     if path is None:
         yield
         return
-    from planner.sky.usercatalogue import read_catalogue
-
     before = _deeper, _turn
     try:
-        _deeper, _turn = _with(star_list(), read_catalogue(path)), next(_turns)
+        stat = path.stat() if path.is_file() else None
+        _deeper, _turn = _merged(path, stat and (stat.st_mtime_ns, stat.st_size))
         yield
     finally:
         _deeper, _turn = before
+
+
+@lru_cache(maxsize=1)
+def _merged(path: Path, state: tuple[int, int] | None) -> tuple[np.ndarray, int]:
+    """Return the list with a file's stars, and its number; read again when the file has changed."""
+    from planner.sky.usercatalogue import read_catalogue
+
+    return _with(star_list(), read_catalogue(path)), next(_turns)
 
 
 def _with(installed: np.ndarray, added: np.ndarray) -> np.ndarray:
