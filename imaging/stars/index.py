@@ -13,16 +13,17 @@ from collections.abc import Callable
 from contextlib import suppress
 from dataclasses import dataclass
 from functools import lru_cache
+from math import comb
 from pathlib import Path
 
 import numpy as np
 
 from imaging.stars.groups import coded, local_members
 
-FORMAT = 4
+FORMAT = 5
 CODE_STEPS = 255  # codes are kept as 8-bit fractions: an error of 0.001, a tenth of the tolerance
-CELL = 0.04  # side of a cell of code space
-_CELLS = 26  # cells a side
+CELL = 0.02  # side of a cell of code space
+_CELLS = 51  # cells a side
 _CHUNK = 50_000  # stars, or quads, worked on together: bounds the memory
 
 
@@ -178,9 +179,14 @@ def build_index(tick: Callable[[int, int], None] | None = None) -> QuadIndex:
     ra, dec = np.radians(table["ra_deg"]), np.radians(table["dec_deg"])
     vectors = np.column_stack([np.cos(dec) * np.cos(ra), np.cos(dec) * np.sin(ra), np.sin(dec)])
     by_magnitude = np.argsort(table["v"], kind="stable")
-    keys: list[np.ndarray] = []
-    codes: list[np.ndarray] = []
-    stars: list[np.ndarray] = []
+    most = sum(min(level.stars, len(table)) * comb(level.neighbours, 3) for level in LEVELS)
+    # filled from the front: what is never written to takes no memory
+    keys, codes, stars = (
+        np.empty(most, np.uint32),
+        np.empty((most, 5), np.uint8),
+        np.empty((most, 4), np.uint32),
+    )
+    count = 0
     total = sum(min(level.stars, len(table)) for level in LEVELS)
     done = 0
     for level in LEVELS:
@@ -190,18 +196,20 @@ def build_index(tick: Callable[[int, int], None] | None = None) -> QuadIndex:
         for part in range(0, len(members), _CHUNK):
             groups = coded(here, members[part : part + _CHUNK])
             keep = groups.codes[:, -1] > 0.12  # flat or cramped quads are the first to be lost to noise
-            keys.append(_cell_keys(groups.codes[keep]))
-            codes.append(np.round(groups.codes[keep] * CODE_STEPS).astype(np.uint8))
-            stars.append(rows[groups.stars[keep]].astype(np.uint32))
+            new = slice(count, count + int(keep.sum()))
+            keys[new] = _cell_keys(groups.codes[keep])
+            codes[new] = np.round(groups.codes[keep] * CODE_STEPS)
+            stars[new] = rows[groups.stars[keep]]
+            count = new.stop
             if tick is not None:
                 tick(done + len(rows) * min(part + _CHUNK, len(members)) // len(members), total)
         done += len(rows)
-    all_keys = np.concatenate(keys)
-    keys.clear()
-    order = np.argsort(all_keys, kind="stable").astype(np.uint32)
-    place = np.empty_like(order)
-    place[order] = np.arange(len(order), dtype=np.uint32)
-    return QuadIndex(all_keys[order], _scattered(codes, place), _scattered(stars, place))
+    del vectors, members, here
+    order = np.argsort(keys[:count], kind="stable").astype(np.uint32)
+    for table_part in (keys[:, None], codes, stars):  # a column at a time, in place
+        for column in table_part.T:
+            column[:count] = column[:count][order]
+    return QuadIndex(keys[:count], codes[:count], stars[:count])
 
 
 def _members(vectors: np.ndarray, neighbours: int) -> np.ndarray:
@@ -209,24 +217,13 @@ def _members(vectors: np.ndarray, neighbours: int) -> np.ndarray:
     from scipy.spatial import cKDTree
 
     tree = cKDTree(vectors)
-    parts = [
-        local_members(tree, vectors[first : first + _CHUNK], 4, neighbours)
-        for first in range(0, len(vectors), _CHUNK)
-    ]
-    members = np.concatenate(parts)
+    each = comb(neighbours, 3)
+    members = np.empty((len(vectors) * each, 4), np.int32)
+    for first in range(0, len(vectors), _CHUNK):
+        part = local_members(tree, vectors[first : first + _CHUNK], 4, neighbours)
+        members[first * each : first * each + len(part)] = part
     _, unique = np.unique(_mixed(members), return_index=True)
     return members[unique]
-
-
-def _scattered(parts: list[np.ndarray], place: np.ndarray) -> np.ndarray:
-    """Return the rows of all parts at their places; the parts are freed on the way."""
-    out = np.empty((len(place), parts[0].shape[1]), dtype=parts[0].dtype)
-    first = 0
-    while parts:
-        part = parts.pop(0)
-        out[place[first : first + len(part)]] = part
-        first += len(part)
-    return out
 
 
 def _cell_keys(codes: np.ndarray) -> np.ndarray:
