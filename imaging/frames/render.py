@@ -119,6 +119,7 @@ class Scene:
     moon: SkyDisc
     moon_altitude_deg: np.ndarray
     sun_azimuth_deg: np.ndarray
+    delay_s: np.ndarray
     _stars: dict[tuple[float, ...], object] = field(default_factory=dict)
 
     @classmethod
@@ -148,9 +149,15 @@ class Scene:
         moon = sky_disc("moon", observer, middle)
         moon_altitude, _ = altaz((moon.ra_deg, moon.dec_deg), observer, middle)
         _, sun_azimuth = altaz(direction("sun", observer, middle).vector_km, observer, middle)
-        return cls(
-            plan, faults, cut, seed, frames, chosen, rig, geometry, zenith, moon, moon_altitude, sun_azimuth
-        )
+        scene = cls(
+            plan, faults, cut, seed, frames, chosen, rig, geometry, zenith, moon, moon_altitude, sun_azimuth,
+            np.zeros(chosen.size),
+        )  # fmt: skip
+        if rig.sensor.shutter == "rolling":  # the frame is drawn as it was when the target's row was exposed
+            scene.delay_s = scene._row_delay_s()
+            family = catalogue.family(plan.event.family)
+            scene.geometry = family.geometry(planned_event(plan), observer, middle + scene.delay_s)
+        return scene
 
     def __len__(self) -> int:
         """Give the number of frames chosen."""
@@ -357,25 +364,42 @@ class Scene:
         right, up = pointing.pixel_steps()
         return float(-length * right[0]), float(-length * up[0])
 
-    def _truth(self, position: int, pointing: Pointing, balls: dict[str, Ball], middle: float) -> Truth:
+    def _row_delay_s(self) -> np.ndarray:
+        """Return how much later than the first row read the target's row is exposed, for each frame.
+
+        Row 0 is the bottom of the picture; a part cut out is read as if there were nothing else.
+        """
+        sensor, rows = self.rig.sensor, self.size_px()[1]
+        y = np.array([self._target_px(i, self.pointing(i))[1] for i in range(len(self))])
+        y = np.clip(y, 0, rows - 1)
+        lines = y if sensor.rolling_from == "bottom" else rows - 1 - y
+        return sensor.rolling_readout_s * lines / (sensor.height_px - 1)
+
+    def _target_px(self, position: int, pointing: Pointing) -> tuple[float, float]:
+        """Return the target's place (x, y) in the frame."""
         geometry = self.geometry
-        faults = self.faults
-        stamp = middle + faults.clock_offset_s
-        stamp += faults.clock_drift_s_day * (middle - float(self.frames.start_tt_s[0])) / 86400
-        if geometry.target in balls:
-            target = balls[geometry.target].vector
+        if geometry.target in geometry.discs:
+            target = Ball.of(geometry.discs[geometry.target], position).vector
         else:
             star = next(
                 star for star in geometry.stars if star[0] == geometry.target or geometry.target == "star"
             )
             target = unit_vector(float(star[1][position]), float(star[2][position]))
         x, y = pointing.project(target)
+        return float(x), float(y)
+
+    def _truth(self, position: int, pointing: Pointing, balls: dict[str, Ball], middle: float) -> Truth:
+        geometry = self.geometry
+        faults = self.faults
+        stamp = middle + faults.clock_offset_s
+        stamp += faults.clock_drift_s_day * (middle - float(self.frames.start_tt_s[0])) / 86400
+        x, y = self._target_px(position, pointing)
         reference = balls.get(geometry.reference)
         rx, ry = pointing.project(reference.vector) if reference is not None else (np.nan, np.nan)
         radius = reference.radius_arcsec / pointing.scale_arcsec_px if reference is not None else np.nan
         ra, dec, rotation, scale = pointing.measured_at_middle()
         return Truth(
-            middle, stamp, float(x), float(y), float(rx), float(ry), float(radius),
+            middle + float(self.delay_s[position]), stamp, x, y, float(rx), float(ry), float(radius),
             ra, dec, rotation % 360.0, pointing.parity, scale,
         )  # fmt: skip
 
