@@ -20,7 +20,7 @@ from planner.errors import InputError
 
 EPOCH_YEAR = 2016.0
 _HIPPARCOS_YEAR = 1991.25
-_FORMAT = 6
+_FORMAT = 7
 _MAS = np.pi / 648e6
 # 1-sigma of a motion that nobody measured, mas/yr: half of the median total motion of stars of this brightness
 UNKNOWN_MOTION_MAS_YEAR = 20.0
@@ -276,9 +276,14 @@ def _merge(gaia: np.ndarray, hip: dict[str, np.ndarray]) -> np.ndarray:
     both["sigma_parallax"][into] = error["e_parallax"]
     by_hipparcos = gaia["source"] < 0
     both["hip"][by_hipparcos] = -gaia["source"][by_hipparcos]
-    # such a position is Hipparcos's own, carried to 2016
+    # such a position is Hipparcos's own, carried to 2016 (here, because that of Polaris was left at 1991.25)
     carried = np.zeros(len(gaia), bool)
     carried[into] = by_hipparcos[into]
+    own = chosen[by_hipparcos[into]]
+    rows = into[by_hipparcos[into]]
+    both["ra_deg"][rows] = np.degrees(np.arctan2(moved[own, 1], moved[own, 0])) % 360.0
+    both["dec_deg"][rows] = np.degrees(np.arcsin(moved[own, 2]))
+    both["pm_ra"][rows], both["pm_dec"][rows] = hip["pm_ra"][own], hip["pm_dec"][own]
     motion_error = np.zeros(len(gaia))
     motion_error[into] = noise / np.sqrt(2.0)
     both["sigma_pm"][carried] = motion_error[carried]

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -229,3 +231,24 @@ def test_every_name_is_that_of_a_bright_star():
         assert table["v"][row[hip]] < 6.0, name
         assert stars.star(name.upper()).name == f"HIP {hip}"
     assert stars.star(" deneb algedi ").name == "HIP 107556"
+
+
+def test_named_stars_stand_where_published_lists_have_them(root):
+    """Catalogue positions against lists of their own: tests/authorities/named_stars.csv tells the source of each."""
+    import csv
+
+    from astropy import units as u
+    from astropy.coordinates import SkyCoord
+
+    with open(root / "tests" / "authorities" / "named_stars.csv", newline="") as file:
+        rows = list(csv.DictReader(file))
+    assert len(rows) > 20
+    for row in rows:
+        published = SkyCoord(row["ra_h_m_s"], row["dec_d_m_s"], unit=(u.hourangle, u.deg))
+        one = stars.star(row["name"])
+        assert one.name == f"HIP {row['hip']}"
+        ra_deg, dec_deg = replace(one, parallax_mas=0.0).place(
+            None, np.array([0.0])
+        )  # lists have no parallax
+        away = published.separation(SkyCoord(ra_deg[0] * u.deg, dec_deg[0] * u.deg)).arcsec
+        assert away < float(row["resolution_arcsec"]), row["name"]
