@@ -77,15 +77,16 @@ def coded(
     """Return groups with their codes and their stars in canonical order (by the sum of distances to the others)."""
     size = stars.shape[1]
     edges = list(combinations(range(size), 2))
-    x, y, z = (vectors[:, axis][stars.T] for axis in range(3))
-    lengths = np.empty((len(edges), len(stars)))
+    # single precision is 1e-4 of the shortest chord in a field of 0.3 degrees, a fiftieth of the codes' tolerance
+    x, y, z = (vectors[:, axis].astype(np.float32)[stars.T] for axis in range(3))
+    lengths = np.empty((len(edges), len(stars)), dtype=np.float32)
     for row, (a, b) in zip(lengths, edges, strict=True):
         np.sqrt((x[a] - x[b]) ** 2 + (y[a] - y[b]) ** 2 + (z[a] - z[b]) ** 2, out=row)
     longest = lengths.max(axis=0)
     keep = (lengths.min(axis=0) > MIN_EDGE * longest) & (longest < longest_limit) & (longest > shortest_limit)
     stars, lengths, longest = stars[keep], lengths[:, keep], longest[keep]
     reach = [sum(lengths[i] for i, ends in enumerate(edges) if star in ends) for star in range(size)]
-    place = np.zeros((len(stars), size), dtype=np.intp)
+    place = np.zeros((len(stars), size), dtype=np.int64)
     for a, b in edges:
         first = reach[a] >= reach[b]
         place[:, b] += first
