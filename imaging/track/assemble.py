@@ -48,6 +48,7 @@ def sightings_of(measured: Sequence[Measurement], path: PredictedPath, limb_sigm
         log_scale=np.log(semidiameter / radius),
         log_scale_sigma=sigma,
         limb_sigma_arcsec=limb_sigma_arcsec,
+        semidiameter_arcsec=semidiameter,
     )
 
 
@@ -100,6 +101,7 @@ def rows_of(
                 "reference_x_px": m.disc.x_px,
                 "reference_y_px": m.disc.y_px,
                 "reference_radius_px": m.disc.radius_px,
+                "reference_sigma_px": float(np.sqrt(np.trace(m.disc.covariance_px2) / 2)),
             }
         if m.stars is not None:
             values |= {
@@ -111,7 +113,7 @@ def rows_of(
             }
         if index in position and places and diagnosis is not None:
             values |= {name: column[position[index]] for name, column in places.items() if name != "off"}
-            values |= _camera_of(m, diagnosis)
+            values |= _camera_of(m, diagnosis, position[index])
             off = bool(places["off"][position[index]])
             values["verdict"] = "off-track" if off else "on-track"
             if off:
@@ -120,16 +122,18 @@ def rows_of(
     return rows
 
 
-def _camera_of(m: Measurement, diagnosis: Diagnosis) -> dict[str, float | int]:
+def _camera_of(m: Measurement, diagnosis: Diagnosis, number: int) -> dict[str, float | int]:
     """Return scale, rotation and parity of a disc frame as the fit has them."""
     if m.disc is None:
         return {}
     reading = diagnosis.reading
     value = reading.fit.value
     flipped = reading.name == "mirrored"
+    rolled = reading.sightings.rolled_deg
+    nominal_deg = m.nominal.rotation_deg + (0.0 if rolled is None else float(rolled[number]))
     return {
         "scale_arcsec_px": m.nominal.scale_arcsec_px * float(np.exp(value["log_scale"])),
-        "rotation_deg": _rotation(m.nominal.rotation_deg, value["rotation_deg"], flipped),
+        "rotation_deg": _rotation(nominal_deg, value["rotation_deg"], flipped),
         "parity": -m.nominal.parity if flipped else m.nominal.parity,
     }
 

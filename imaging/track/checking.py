@@ -320,6 +320,7 @@ def question_of(promise: Promise, target: str) -> Question:
         other_bodies=other_bodies(promise, target, reference),
         target=proper(target),
         center_sigma_arcsec=CENTER_SIGMA_ARCSEC.get(reference, 0.0),
+        roll_deg=promise.roll_deg,
     )
 
 
@@ -372,7 +373,8 @@ def _with_fit(
         rotation_sigma_deg=camera.up_pa_sigma_deg,
         scale_arcsec_px=camera.scale_arcsec_px,
         scale_sigma_arcsec_px=camera.scale_sigma_arcsec_px,
-        contacts=result.contacts or time_contacts(reading, promise, plan, camera.scale_arcsec_px),
+        contacts=result.contacts
+        or time_contacts(reading, promise, plan, camera.scale_arcsec_px, question.center_sigma_arcsec),
         findings=result.findings + clock.findings + camera.findings,
     )
 

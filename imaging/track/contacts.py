@@ -34,12 +34,13 @@ CONTACTS = {
 
 
 def time_contacts(
-    reading: Reading, promise: Promise, plan: Plan, scale_arcsec_px: float
+    reading: Reading, promise: Promise, plan: Plan, scale_arcsec_px: float, center_sigma_arcsec: float = 0.0
 ) -> tuple[ContactTiming, ...]:
     """Return the contacts that the frames reach, in time order; none on a path among stars.
 
-    Sigmas hold the measured scatter, and what the fitted limb's radius may be off by in all frames alike
-    (LIMB_SIGMA_PX at the frames' own scale), which moves contacts on one side later and on the other earlier.
+    Sigmas hold the measured scatter, and what the fitted limb may be off by in all frames alike: its radius
+    (LIMB_SIGMA_PX at the frames' own scale), which moves contacts on one side later and on the other earlier, and its
+    centre (`center_sigma_arcsec`).
     """
     sightings, used = reading.sightings, reading.fit.used
     if not sightings.on_disc or used.sum() < LEAST_FRAMES:
@@ -53,7 +54,7 @@ def time_contacts(
     if not instants:
         return ()
     s = sightings.part(used)
-    chord = _Chord(s, promise, reading, LIMB_SIGMA_PX * scale_arcsec_px)
+    chord = _Chord(s, reading, float(np.hypot(LIMB_SIGMA_PX * scale_arcsec_px, center_sigma_arcsec)))
     timings = []
     span = max(i.tt_s for i in instants) - min(i.tt_s for i in instants)
     for instant in instants:
@@ -70,7 +71,7 @@ def time_contacts(
 class _Chord:
     """The fitted parabola of squared distance, observed minus predicted."""
 
-    def __init__(self, s, promise: Promise, reading: Reading, limb_sigma_arcsec: float):  # type: ignore[no-untyped-def]
+    def __init__(self, s, reading: Reading, limb_sigma_arcsec: float):  # type: ignore[no-untyped-def]
         self.path, self.clock_s = reading.path, reading.clock_offset_s
         radius = _radius_arcsec(s, self.path)
         self.limb_share = limb_sigma_arcsec / float(np.median(radius))
@@ -130,7 +131,9 @@ class _Chord:
 
 def _radius_arcsec(s, path) -> np.ndarray:  # type: ignore[no-untyped-def]
     """Return the limb's radius on the nominal scale of the sightings, by the radii of all frames together."""
-    semidiameter = path.at(s.tt_s).reference_semidiameter_arcsec
+    semidiameter = s.semidiameter_arcsec
+    if semidiameter is None:
+        semidiameter = path.at(s.tt_s).reference_semidiameter_arcsec
     good = np.isfinite(s.log_scale) & (s.log_scale_sigma > 0)
     weight = s.log_scale_sigma[good] ** -2.0
     return semidiameter * np.exp(-np.average(s.log_scale[good], weights=weight))

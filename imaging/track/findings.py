@@ -8,6 +8,7 @@ Laplace evidence and by how often such a slip happens; odds are against the plai
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -65,7 +66,8 @@ class Question:
     `other_sites`: name to path, for a flipped sign. `other_bodies`: body to path. `plan_middle_tt_s`: the middle
     of the frames the plan asked for. `jitter_arcsec`: scatter usual for this rig and seeing. `clock_sigma_s`: what the
     rig's clock promises.
-    `center_sigma_arcsec`: what the centre of the reference disc may be off by in all frames alike.
+    `center_sigma_arcsec`: what the centre of the reference disc may be off by in all frames alike. `roll_deg`: the
+    camera's roll as planned at instants (n,): a mount that flips at the meridian turns it by 180 degrees.
     """
 
     path: PredictedPath
@@ -76,6 +78,13 @@ class Question:
     other_bodies: dict[str, PredictedPath]
     target: str = "the target"
     center_sigma_arcsec: float = 0.0
+    roll_deg: Callable[[np.ndarray], np.ndarray] | None = None
+
+    def turned_by(self, tt_s: np.ndarray, clock_s: np.ndarray | float) -> np.ndarray:
+        """Return by how much the planned roll differs between instants as stamped and with a clock error taken off."""
+        if self.roll_deg is None:
+            return np.zeros(np.shape(tt_s - clock_s))
+        return self.roll_deg(tt_s - clock_s) - self.roll_deg(tt_s)
 
     def priors(self, clock_s: float) -> Priors:
         """Return what is known before the frames speak, with a clock that may be off by so much."""
@@ -173,6 +182,8 @@ def _readings(s: Sightings, q: Question):  # type: ignore[no-untyped-def]
     def tried(name, path, clock_s=0.0, log_prior=0.0, sightings=s, sentence="", priors=priors, look=True):
         if name != "plain" and look and not _promising(sightings, path, clock_s, q):
             return None
+        if clock_s and s.on_disc:
+            sightings = sightings.rolled(q.turned_by(s.tt_s, clock_s))
         try:
             fit = fit_track(sightings, path, priors, start_clock_s=clock_s)
         except (NoSolutionError, np.linalg.LinAlgError, ValueError):
@@ -184,10 +195,10 @@ def _readings(s: Sightings, q: Question):  # type: ignore[no-untyped-def]
     if len(s) < 2:
         return
     hours = [n * 1800.0 for n in HALF_HOURS]
-    for clock_s in _closest(s, q.path, hours, 2):
+    for clock_s in _closest(s, q, hours, 2):
         yield tried("zone", q.path, clock_s, SLIP - np.log(len(hours)), sentence=_zone_sentence(clock_s))
     days = sorted(_day_candidates(s, q))
-    for clock_s in _closest(s, q.path, days, 2):
+    for clock_s in _closest(s, q, days, 2):
         yield tried("date", q.path, clock_s, SLIP - np.log(40.0), sentence=_date_sentence(clock_s))
         for hour in (-1.0, 1.0, -2.0, 2.0):
             both = clock_s + 3600.0 * hour
@@ -213,7 +224,7 @@ def _readings(s: Sightings, q: Question):  # type: ignore[no-untyped-def]
         if stray and np.hypot(stray.fit.value["east_arcsec"], stray.fit.value["north_arcsec"]) > STRAY_ARCSEC:
             yield stray
     anywhere = replace(priors, clock_s=DAY_S / 2)
-    for clock_s in _closest(s, q.path, list(np.arange(-12.0, 12.01, 0.25) * 3600.0), 1):
+    for clock_s in _closest(s, q, list(np.arange(-12.0, 12.01, 0.25) * 3600.0), 1):
         sentence = "The frames' clock is off by an odd amount."
         yield tried("clock-far-off", q.path, clock_s, SLIP, sentence=sentence, priors=anywhere)
 
@@ -253,9 +264,9 @@ def _day_candidates(s: Sightings, q: Question) -> set[float]:
     return {day * DAY_S for day in all_days if day}
 
 
-def _closest(s: Sightings, path: PredictedPath, clocks_s: list[float], count: int) -> list[float]:
+def _closest(s: Sightings, q: Question, clocks_s: list[float], count: int) -> list[float]:
     """Return the few clock errors, of many, that lay the path best on the sightings, rotation free, scale known."""
-    misfit = _misfits(_sample(s), path, np.asarray(clocks_s, float))
+    misfit = _misfits(_sample(s), q.path, np.asarray(clocks_s, float), q)
     best = np.argsort(misfit, kind="stable")[:count]
     return [clocks_s[index] for index in best if np.isfinite(misfit[index])]
 
@@ -263,7 +274,7 @@ def _closest(s: Sightings, path: PredictedPath, clocks_s: list[float], count: in
 def _promising(s: Sightings, path: PredictedPath, clock_s: float, q: Question) -> bool:
     """Say whether a reading lays most frames near enough for a fit to be worth its time."""
     own = float(np.sqrt(np.median(np.einsum("nii->n", s.covariance_arcsec2)) / 2.0))
-    misfit = _misfits(_sample(s), path, np.array([clock_s]))[0]
+    misfit = _misfits(_sample(s), path, np.array([clock_s]), q)[0]
     return bool(misfit < (PROMISING * np.hypot(q.jitter_arcsec, own)) ** 2)
 
 
@@ -271,7 +282,7 @@ def _sample(s: Sightings, most: int = 25) -> Sightings:
     return s.part(np.unique(np.linspace(0, len(s) - 1, min(len(s), most)).astype(int)))
 
 
-def _misfits(s: Sightings, path: PredictedPath, clocks_s: np.ndarray) -> np.ndarray:
+def _misfits(s: Sightings, path: PredictedPath, clocks_s: np.ndarray, q: Question) -> np.ndarray:
     """Return the median square distance (k,) of frames from the path, for k clock errors; infinite where there is none.
 
     Ten minutes more or less are left to each clock, and the roll is free on a disc.
@@ -282,18 +293,27 @@ def _misfits(s: Sightings, path: PredictedPath, clocks_s: np.ndarray) -> np.ndar
     except InputError:  # beyond the ephemeris: there is no such reading
         if clocks_s.size == 1:
             return np.full(1, np.inf)
-        return np.concatenate([_misfits(s, path, clock) for clock in clocks_s[:, None]])
+        return np.concatenate([_misfits(s, path, clock, q) for clock in clocks_s[:, None]])
     place, later = both.reshape(2, clocks_s.size, len(s), 2)
     good = np.isfinite(place).all(axis=-1) & np.isfinite(later).all(axis=-1)
     measured = s.places
     if s.on_disc:
-        measured = turn(measured, np.radians(start_rotation_deg(s, place)))
+        by = np.radians(q.turned_by(s.tt_s, clocks_s[:, None]))
+        # turned back instead, the predictions ask the measured places for one roll that all frames share
+        asked_deg = start_rotation_deg(s, turn(place[..., None, :], -by)[..., 0, :])
+        measured = turn(
+            np.broadcast_to(measured, place.shape)[..., None, :], np.radians(asked_deg)[:, None] + by
+        )
+        measured = measured[..., 0, :]
     residual = np.where(good[..., None], measured - place, 0.0)
     velocity = np.where(good[..., None], (later - place) / 60.0, 0.0)
-    slope = np.sum(residual * velocity, axis=(1, 2)) / np.maximum(np.sum(velocity**2, axis=(1, 2)), 1e-30)
+    # what single frames ask of the clock, in the middle: half of them may show something else
+    asked = np.sum(residual * velocity, axis=-1) / np.maximum(np.sum(velocity**2, axis=-1), 1e-30)
+    enough = good.sum(axis=1) >= 2
+    slope = np.zeros(clocks_s.size)
+    slope[enough] = np.nanmedian(np.where(good, asked, np.nan)[enough], axis=1)
     slope = np.clip(slope, -600.0, 600.0)[:, None, None]
     square = np.where(good, np.sum((residual - slope * velocity) ** 2, axis=-1), np.nan)
-    enough = good.sum(axis=1) >= 2
     misfit = np.full(clocks_s.size, np.inf)
     misfit[enough] = np.nanmedian(square[enough], axis=1)
     return misfit

@@ -152,6 +152,7 @@ class _Solver:
         self.free = np.flatnonzero(self.prior > 0)
         self.fixed_jitter = fixed_jitter
         self.scale_at = np.flatnonzero(self.free == PARAMETERS.index("log_scale"))
+        self.log_scale = sightings.log_scale_by(path, self.t0) if self.scale_at.size else sightings.log_scale
 
     def solve(self) -> TrackFit:
         start = self.s.expected(self.path, self.t0)
@@ -202,11 +203,11 @@ class _Solver:
         """One datum: the scale that the radii tell, with what they may be off by in common."""
         if not self.scale_at.size:
             return None
-        good = used & np.isfinite(self.s.log_scale) & (self.s.log_scale_sigma > 0)
+        good = used & np.isfinite(self.log_scale) & (self.s.log_scale_sigma > 0)
         if not good.any():
             return None
         weight = self.s.log_scale_sigma[good] ** -2.0
-        values = self.s.log_scale[good]
+        values = self.log_scale[good]
         mean = np.average(values, weights=weight)
         formal = weight.sum() ** -0.5
         scatter = np.sqrt(np.average((values - mean) ** 2, weights=weight) / max(good.sum() - 1, 1))

@@ -64,7 +64,9 @@ class OnDisc:
         hidden = _hidden(geometry, expected)
         self._stray_rate = float("nan")
         try:
-            place = self._found(frame, limb, center + offset, radius, geometry, stray=hidden is None)
+            # a stamp outside the plan's hours says nothing of what was to be seen: the target is looked for all over
+            stray = hidden is None or not nominal.passage
+            place = self._found(frame, limb, center + offset, radius, geometry, stray)
         except NoSolutionError as none:
             return replace(blank, reason=hidden or str(none))
         self._shift_px = np.array([place.x_px, place.y_px]) - center - offset

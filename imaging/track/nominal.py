@@ -85,6 +85,15 @@ class Promise:
         """Middle of the frames that were planned."""
         return float(np.median(self.planned.middle_tt_s))
 
+    def roll_deg(self, tt_s: np.ndarray) -> np.ndarray:
+        """Return the planned roll at instants (...,): that of the nearest planned frame."""
+        middle = self.planned.middle_tt_s
+        after = np.clip(np.searchsorted(middle, tt_s), 1, max(len(middle) - 1, 1))
+        before = after - 1
+        after = np.minimum(after, len(middle) - 1)
+        nearest = np.where(np.abs(middle[before] - tt_s) <= np.abs(middle[after] - tt_s), before, after)
+        return self.planned.rotation_deg[nearest]
+
     def of_frame(self, frame: Frame) -> Nominal:
         """Return what is promised of a frame; outside the plan's hours the nearest planned frame speaks."""
         assert frame.time is not None

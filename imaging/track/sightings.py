@@ -18,9 +18,10 @@ class Sightings:
     `tt_s`: mid-exposure as stamped. `exposure_s`: for the hypothesis that a start was taken for a middle.
     On a disc, `east_arcsec` and `north_arcsec` are offsets from the reference disc's centre, turned to the sky with the
     *nominal* rotation, parity and scale; `log_scale`, `log_scale_sigma` is the logarithm of the true scale over the
-    nominal one as the disc's radius tells it, and `limb_sigma_arcsec` what every radius may be off by in common.
+    nominal one as the disc's radius tells it, and `limb_sigma_arcsec` what every radius may be off by in common;
+    `semidiameter_arcsec` is what the disc was taken to be for it, at the stamped times from the plan's site.
     Among stars they are the measured directions relative to the anchors (`anchor_ra_deg`, `anchor_dec_deg`).
-    `covariance_arcsec2`: (n, 2, 2), of (east, north).
+    `covariance_arcsec2`: (n, 2, 2), of (east, north). `rolled_deg`: what was added to the nominal rotation since.
     """
 
     tt_s: np.ndarray
@@ -33,6 +34,8 @@ class Sightings:
     limb_sigma_arcsec: float = 0.0
     anchor_ra_deg: np.ndarray | None = None
     anchor_dec_deg: np.ndarray | None = None
+    semidiameter_arcsec: np.ndarray | None = None
+    rolled_deg: np.ndarray | None = None
 
     @property
     def on_disc(self) -> bool:
@@ -67,6 +70,12 @@ class Sightings:
         places = self.expected(path, np.concatenate([tt_s, tt_s + step, tt_s - step]))
         return places[:n], (places[n : 2 * n] - places[2 * n :]) / (2 * step)
 
+    def log_scale_by(self, path: PredictedPath, tt_s: np.ndarray) -> np.ndarray:
+        """Return `log_scale` as it is when the frames were taken at other instants, or elsewhere: the disc differs."""
+        if self.semidiameter_arcsec is None:
+            return self.log_scale
+        return self.log_scale + np.log(path.at(tt_s).reference_semidiameter_arcsec / self.semidiameter_arcsec)
+
     def mirrored(self) -> Sightings:
         """Return the same as the opposite parity would have it (any axis will do: rotation is fitted)."""
         flip = np.array([[-1.0, 0.0], [0.0, 1.0]])
@@ -74,6 +83,20 @@ class Sightings:
             self,
             east_arcsec=-self.east_arcsec,
             covariance_arcsec2=flip @ self.covariance_arcsec2 @ flip,
+        )
+
+    def rolled(self, turn_deg: np.ndarray) -> Sightings:
+        """Return the same as cameras turned by `turn_deg` (n,) against what was taken as their nominal roll saw it."""
+        angle = np.radians(turn_deg)
+        cos, sin = np.cos(angle), np.sin(angle)
+        matrix = np.array([[cos, sin], [-sin, cos]]).transpose(2, 0, 1)  # position angles grow by the angle
+        places = np.einsum("nij,nj->ni", matrix, self.places)
+        return replace(
+            self,
+            east_arcsec=places[:, 0],
+            north_arcsec=places[:, 1],
+            covariance_arcsec2=matrix @ self.covariance_arcsec2 @ matrix.transpose(0, 2, 1),
+            rolled_deg=turn_deg if self.rolled_deg is None else self.rolled_deg + turn_deg,
         )
 
     def part(self, keep: np.ndarray) -> Sightings:
@@ -94,6 +117,8 @@ class Sightings:
             },
             anchor_ra_deg=None if self.anchor_ra_deg is None else self.anchor_ra_deg[keep],
             anchor_dec_deg=None if self.anchor_dec_deg is None else self.anchor_dec_deg[keep],
+            semidiameter_arcsec=None if self.semidiameter_arcsec is None else self.semidiameter_arcsec[keep],
+            rolled_deg=None if self.rolled_deg is None else self.rolled_deg[keep],
         )
 
 

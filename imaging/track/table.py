@@ -40,6 +40,7 @@ class TrackRow:
     reference_x_px: float = _column("pix", "centre of the reference disc, column")
     reference_y_px: float = _column("pix", "centre of the reference disc, row")
     reference_radius_px: float = _column("pix", "radius of the reference disc")
+    reference_sigma_px: float = _column("pix", "1-sigma of the centre of the reference disc, one axis")
     scale_arcsec_px: float = _column("arcsec", "scale of the frame, arcseconds a pixel")
     rotation_deg: float = _column("deg", "position angle of the array's +y direction")
     parity: int = _column(None, "+1 the sky as seen (in a FITS array), -1 mirrored", 0)
@@ -61,6 +62,7 @@ class TrackRow:
 
 
 COLUMNS = {item.name: item for item in fields(TrackRow)}
+LATER = ("reference_sigma_px",)  # columns that tracks written before they were thought of do without
 
 
 @dataclass(frozen=True)
@@ -116,6 +118,9 @@ def read_track(path: str | Path) -> Track:
         ) from None
     except Exception as error:
         raise InputError(f"{path}: is not a track ({' '.join(str(error).split())[:120]})") from None
+    for name in LATER:
+        if name not in table.colnames:
+            table[name] = np.full(len(table), np.nan)
     missing = [name for name in COLUMNS if name not in table.colnames]
     if missing:
         raise InputError(f"{path}: is not a track: column {missing[0]!r} is missing")

@@ -8,8 +8,10 @@ import shutil
 
 import numpy as np
 import pytest
+from astropy import units as u
 from astropy.io import fits
 from astropy.table import Table
+from astropy.time import Time
 
 from imaging.track.table import COLUMNS, read_track
 from planner.cli.main import run_with
@@ -168,6 +170,120 @@ def test_what_cannot_be_used_is_set_aside_with_its_reason(rehearsed, tmp_path, c
     assert "same pixels" in reasons["zz_copy.fits"]
     assert told["measured"] >= 4
     assert abs(told["clock_offset_s"] - CLOCK_S) < 3 * told["clock_offset_sigma_s"]
+
+
+def told_of(plan, folder, out, capsys):
+    """What `check` tells of a folder, and its exit code."""
+    capsys.readouterr()
+    code = run_with(["check", str(plan), str(folder), "-o", str(out), "--json", "--no-pictures"])
+    return json.loads(capsys.readouterr().out), code
+
+
+def test_frames_out_of_order_are_sorted_by_time_and_it_is_said(rehearsed, checked, tmp_path, capsys):
+    plan, frames = rehearsed("transit")
+    files = sorted(frames.glob("*.fits"))
+    for number, path in enumerate(reversed(files)):
+        shutil.copy(path, tmp_path / f"shuffled_{number:02d}.fits")
+    told, code = told_of(plan, tmp_path, tmp_path / "out", capsys)
+    _, before, _ = checked("transit", capsys)
+    assert code == 0
+    assert [finding["name"] for finding in told["findings"]] == ["out-of-order", "clock-offset"]
+    assert told["clock_offset_s"] == pytest.approx(
+        before["clock_offset_s"], abs=0.5 * before["clock_offset_sigma_s"]
+    )
+    times = read_track(tmp_path / "out" / "track.ecsv")["utc_mid"].tolist()
+    assert times == sorted(times)
+
+
+def test_frames_of_two_cameras_are_not_mixed(rehearsed, tmp_path, capsys):
+    """The same size and sky, but another name in the header: a second rig needs a plan of its own."""
+    plan, frames = rehearsed("transit")
+    shutil.copytree(frames, tmp_path / "frames")
+    others = sorted((tmp_path / "frames").glob("*.fits"))[::4]
+    for path in others:
+        fits.setval(path, "INSTRUME", value="Second camera (invented)")
+    told, code = told_of(plan, tmp_path / "frames", tmp_path / "out", capsys)
+    assert code == 1
+    assert {aside["file"] for aside in told["set_aside"]} == {path.name for path in others}
+    assert all("another camera" in aside["reason"] for aside in told["set_aside"])
+    assert abs(told["clock_offset_s"] - CLOCK_S) < 4 * told["clock_offset_sigma_s"]
+
+
+def test_a_plan_for_another_date_is_named_with_the_days(rehearsed, tmp_path, capsys):
+    """A camera whose calendar is 40 days late: the frames fit the plan but for that."""
+    plan, frames = rehearsed("transit")
+    shutil.copytree(frames, tmp_path / "frames")
+    for path in sorted((tmp_path / "frames").glob("*.fits")):
+        with fits.open(path, mode="update") as hdus:
+            header = hdus[0].header
+            for key in ("DATE-OBS", "DATE-BEG", "DATE-AVG", "DATE-END"):
+                if key in header:
+                    header[key] = (Time(header[key]) + 40 * u.day).isot
+            for key in [key for key in header if key.startswith("MJD")]:
+                header[key] += 40.0
+    told, _ = told_of(plan, tmp_path / "frames", tmp_path / "out", capsys)
+    findings = {finding["name"]: finding for finding in told["findings"]}
+    assert list(findings)[:2] == ["another-date", "date"]
+    assert "40 days after the last planned frame" in findings["another-date"]["sentence"].replace(
+        "39.9", "40"
+    )
+    assert "40 days later than it was" in findings["date"]["sentence"]
+
+
+def pictures_that_are_none_of_the_sun(shape, radius, sky=2000.0, light=30000.0):
+    rng = np.random.default_rng(1)
+    rows, columns = shape
+    y, x = np.mgrid[:rows, :columns]
+    r = np.hypot(x - columns / 2, y - rows / 2)
+    waves = sum(
+        np.sin(2 * np.pi * (x * np.cos(a) / p + y * np.sin(a) / p) + a)
+        for a, p in ((0.3, 300), (1.9, 170), (4.0, 520))
+    )
+    yield "clouds", sky + 1500 * waves
+    yield "landscape", np.where(y > rows * 0.45 + 30 * np.sin(x / 40), 400.0, light) + 300 * waves
+    yield "ring", sky + (light - sky) * ((r < radius) & (r > 0.55 * radius))
+    yield "wider", np.where(np.hypot(x - columns / 2, y + 9 * rows) < 9.6 * rows, light, sky)
+    apart = 0.55 * radius
+    two = (np.hypot(x - columns / 2 - apart, y - rows / 2) < 0.5 * radius) | (
+        np.hypot(x - columns / 2 + apart, y - rows / 2) < 0.5 * radius
+    )
+    yield "two", np.where(two, light, sky)
+    yield "nothing", np.full(shape, sky) + rng.normal(0, 20, shape)
+
+
+def test_what_is_no_disc_gets_no_number_and_harms_no_other_frame(rehearsed, tmp_path, capsys):
+    plan, frames = rehearsed("transit")
+    shutil.copytree(frames, tmp_path / "frames")
+    good = sorted((tmp_path / "frames").glob("*.fits"))
+    with fits.open(good[5]) as hdus:
+        header, shape = hdus[0].header.copy(), hdus[0].data.shape
+    noise = np.random.default_rng(2)
+    names = []
+    for name, picture in pictures_that_are_none_of_the_sun(shape, radius=0.46 * min(shape)):
+        data = np.clip(picture + noise.normal(0, 30, shape), 0, 65535).astype(np.uint16)
+        fits.writeto(tmp_path / "frames" / f"zz_{name}.fits", data, header)
+        names.append(f"zz_{name}.fits")
+    told, code = told_of(plan, tmp_path / "frames", tmp_path / "out", capsys)
+    assert code == 1
+    track = read_track(tmp_path / "out" / "track.ecsv")
+    aside = {one["file"] for one in told["set_aside"]}
+    for name in names:
+        rows = np.flatnonzero(track["file"] == name)
+        assert name in aside or (track["verdict"][rows] == "unmeasured").all(), name
+        assert name in aside or all(track["reason"][rows]), name
+    assert abs(told["clock_offset_s"] - CLOCK_S) < 3 * told["clock_offset_sigma_s"]
+    assert told["on_track"] == told["measured"] >= 4
+
+
+def test_the_track_says_how_well_the_reference_disc_is_known(checked, capsys, tmp_path):
+    folder, _, _ = checked("transit", capsys)
+    track = read_track(folder / "track.ecsv")
+    sigma = track["reference_sigma_px"][track.measured]
+    assert ((sigma > 1e-4) & (sigma < 0.1)).all()
+    table = Table.read(folder / "track.ecsv", format="ascii.ecsv")
+    table.remove_column("reference_sigma_px")  # as tracks were before
+    table.write(tmp_path / "old.ecsv", format="ascii.ecsv")
+    assert np.isnan(read_track(tmp_path / "old.ecsv")["reference_sigma_px"]).all()
 
 
 def test_nothing_of_the_users_is_overwritten(rehearsed, tmp_path, capsys):
