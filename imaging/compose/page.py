@@ -16,6 +16,12 @@ from planner.outputs import whole_file
 from planner.sky.timescale import utc_iso
 
 LARGEST_PX = 1800
+ASK = "Point at a ring, or touch it, for its frame, time and residual."
+TELL = """
+const i = source.selected.indices[0], d = source.data;
+if (i !== undefined)
+  told.text = `${d.file[i]}, ${d.utc[i]}<br>along ${d.along[i]}, across ${d.across[i]}, ${d.verdict[i]}`;
+"""
 PAPER, INK, PALE, LINE, POINT = "#14110f", "#f2e6d8", "#8d8379", "#79b4e3", "#f2a65a"
 
 
@@ -31,7 +37,7 @@ def write_page(
     """Write one self-contained HTML file (no network): `tones` are the picture's, first row at the top."""
     from bokeh.embed import file_html
     from bokeh.layouts import column
-    from bokeh.models import ColumnDataSource, HoverTool, Range1d
+    from bokeh.models import ColumnDataSource, CustomJS, HoverTool, Range1d, TapTool
     from bokeh.models.widgets import Div
     from bokeh.plotting import figure
     from bokeh.resources import INLINE
@@ -45,12 +51,18 @@ def write_page(
         match_aspect=True,
         sizing_mode="scale_width",
         aspect_ratio=width / height,
+        # whatever stands beside the frame would squeeze the picture: the Sun must stay round
+        toolbar_inner=True,
+        toolbar_location="below",
+        min_border=0,
+        styles={"max-width": f"calc((100vh - 10em) * {width / height:.4f})"},
         background_fill_color=PAPER,
         border_fill_color=PAPER,
         outline_line_color=PALE,
     )
     plot.axis.visible = plot.grid.visible = False
     plot.image_url(url=[_as_url(tones)], x=-0.5, y=height - 0.5, w=width, h=height)
+    told = Div(text=ASK, styles={"color": INK, "font": "15px sans-serif", "min-height": "3em"})
     line_x, line_y = _on_canvas(picture, data, data.line)
     line = ColumnDataSource({"x": line_x, "y": line_y, "utc": utc_iso(data.line_tt_s, 0)})
     plot.line(
@@ -73,7 +85,7 @@ def write_page(
         )
         points = plot.scatter(
             "x", "y", source=source, size=9, fill_color=None, line_color=POINT, line_width=1.5,
-            legend_label="measured",
+            legend_label="measured", nonselection_line_alpha=1.0, selection_line_width=3.0,
         )  # fmt: skip
         plot.add_tools(
             HoverTool(
@@ -82,14 +94,18 @@ def write_page(
                     ("frame", "@file"), ("UTC", "@utc"), ("along", "@along"), ("across", "@across"),
                     ("verdict", "@verdict"),
                 ],
-            )
+            ),
+            TapTool(renderers=[points]),
         )  # fmt: skip
+        source.selected.js_on_change("indices", CustomJS(args={"source": source, "told": told}, code=TELL))
+    plot.legend.location = _free_corner(width, height, line_x, line_y)
     plot.legend.click_policy = "hide"
     plot.legend.background_fill_color = PAPER
     plot.legend.background_fill_alpha = 0.6
     plot.legend.label_text_color = INK
     plot.legend.border_line_alpha = 0
     plot.toolbar.logo = None
+    plot.toolbar.autohide = True
     from html import escape
 
     style: dict[str, str | None] = {
@@ -100,11 +116,10 @@ def write_page(
     }
     heading = Div(text=f"<h2 style='margin:0.3em 0'>{escape(material.plan.title)}</h2>", styles=style)
     words = Div(
-        text=f"<p>{escape(caption)}</p><p style='color:{PALE}'>Point at a ring for its frame, time and residual; click "
-        "a name in the legend to hide it.</p>",
+        text=f"<p>{escape(caption)}</p><p style='color:{PALE}'>Click a name in the legend to hide it.</p>",
         styles=style,
     )
-    page = column(heading, plot, words, sizing_mode="stretch_width", styles={"background": PAPER})
+    page = column(heading, plot, told, words, sizing_mode="stretch_width", styles={"background": PAPER})
     html = file_html(page, INLINE, title=material.plan.title)
     html = html.replace(
         "<head>",
@@ -124,8 +139,17 @@ def _on_canvas(picture: Picture, data: PathData, plane: np.ndarray) -> tuple[np.
     return picture.canvas.from_sky(*anchor, *plane_to_sky(*data.anchor_deg, east, north))
 
 
+def _free_corner(width: int, height: int, x_px: np.ndarray, y_px: np.ndarray) -> str:
+    """Return the corner of the picture that the line keeps furthest away from; the tools stand at the lower right."""
+    corners = {"top_right": (width, height), "top_left": (0, height), "bottom_left": (0, 0)}
+    away = {name: float(np.hypot(x_px - x, y_px - y).min()) for name, (x, y) in corners.items()}
+    return max(away, key=lambda name: away[name])
+
+
 def _signed(value: np.ndarray, sigma: np.ndarray) -> list[str]:
-    return [f"{v:+.2f} ± {s:.2f} ″" for v, s in zip(value, sigma, strict=True)]
+    known = sigma[np.isfinite(sigma) & (sigma > 0)]
+    digits = int(np.clip(1 - np.floor(np.log10(np.median(known))), 2, 4)) if known.size else 2
+    return [f"{v:+.{digits}f} ± {s:.{digits}f} ″" for v, s in zip(value, sigma, strict=True)]
 
 
 def _as_url(tones: np.ndarray) -> str:
