@@ -6,7 +6,11 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
+from imaging.compose.stack import require_room
+
 ORIENTATIONS = ("north", "zenith", "ecliptic", "track")
+BYTES_A_PIXEL = 8  # FITS 4, TIFF 2, PNG 1, JPEG and the page less
+PLOTS_BYTES = 12_000_000
 GRIDS = ("auto", "radec", "altaz", "disc")
 REGISTRATIONS = ("auto", "sun", "moon", "stars", "target")
 
@@ -32,5 +36,13 @@ class Choices:
     star_limit: float | None = None
     enlarge: float = 1.0
     scratch: Path | None = None
+    output: Path | None = None
     threads: int = 2
     tick: Callable[[int, int], None] = lambda done, total: None
+
+    def require_room(self, width_px: int, height_px: int) -> None:
+        """Raise InputError when the folder of the `output` has no room for the pictures, before any is made."""
+        if self.output is not None:
+            planes = 3 if self.colour else 1
+            needed = BYTES_A_PIXEL * planes * width_px * height_px + PLOTS_BYTES
+            require_room(self.output, needed, "writing the pictures")

@@ -46,6 +46,7 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
     seen = away[np.array([frame.measured for frame in frames]) & (away < WIDEST_MARGIN)]
     margin = max(DISC_MARGIN, float(seen.max()) + 0.04) if seen.size else DISC_MARGIN
     canvas = _disc_canvas(material, choices, frames, semidiameter * margin, anchor, middle)
+    choices.require_room(canvas.width_px, canvas.height_px)
     shown = _instants(material, frames, sharpness, choices, away < margin - 0.01)
     sun = None
     if body == "sun":

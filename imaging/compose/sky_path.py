@@ -31,6 +31,7 @@ PATCH_LEAST_PX = 5.0
 def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
     """Return the composite registered on stars; raises InputError when no frame is left."""
     anchor, canvas = _canvas(material, choices)
+    choices.require_room(canvas.width_px, canvas.height_px)
     groups = list(material.passages())
     shape = (canvas.height_px, canvas.width_px, *((3,) if light.colour else ()))
     ground = new_stack(choices.blend, shape, len(groups), choices.scratch)

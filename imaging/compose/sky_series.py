@@ -36,6 +36,7 @@ def sky_series(material: Material, choices: Choices, light: Light) -> Picture:
     up = up_pa_deg(material, choices.orientation, anchor, middle.tt_s, on_disc=False)
     east, north = np.append(places[:, 0], 0.0), np.append(places[:, 1], 0.0)
     canvas = canvas_around(east, north, 1.15 * radius, scale, up, choices.largest_px)
+    choices.require_room(canvas.width_px, canvas.height_px)
     image = np.full((canvas.height_px, canvas.width_px, *((3,) if light.colour else ())), np.nan, np.float32)
     count = np.zeros(image.shape, np.int32)
     drawn, used, left_out = [], [], []

@@ -160,6 +160,7 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
             star_limit=chosen["star_limit"],
             enlarge=chosen["enlarge"],
             scratch=chosen["scratch"],
+            output=output,
             tick=tick,
         )
         picture = compose_picture(material, choices, other, landscape)

@@ -138,3 +138,40 @@ def test_colour_asked_of_a_camera_without_is_grey_in_three_planes(copy, tmp_path
     code, statement = composed(copy, tmp_path / "out", "--colour")
     assert code == 0
     assert len(statement["drawn"]) == 3
+
+
+def test_a_disk_too_small_is_named_before_any_picture_is_made(copy, tmp_path, capsys, monkeypatch):
+    import shutil as disk
+
+    usage = disk.disk_usage(tmp_path)
+    monkeypatch.setattr("shutil.disk_usage", lambda folder: usage._replace(free=1_000_000))
+    code, statement = composed(copy, tmp_path / "out")
+    said = capsys.readouterr().err.strip()
+    assert (code, statement) == (2, None)
+    assert "of disk, 0.0 GB are free" in said
+    assert said.count("\n") == 0
+    assert not (tmp_path / "out").exists()
+
+
+def test_a_film_that_exists_is_kept(copy, tmp_path, capsys):
+    film = tmp_path / "film.mp4"
+    film.write_bytes(b"mine")
+    assert run_with(["timelapse", *copy.arguments, "-o", str(film)]) == 2
+    assert "--force" in capsys.readouterr().err
+    assert film.read_bytes() == b"mine"
+
+
+@pytest.mark.parametrize("shape", [(60, 80), (300, 330)])
+def test_a_frame_of_another_size_is_laid_by_its_own_solution(copy, tmp_path, shape):
+    """One frame cut or padded at its top and right: pixels keep their numbers, so does its solution."""
+    name = names(copy)[8]
+    with fits.open(copy.frames / name, mode="update") as hdus:
+        data = hdus[0].data
+        rows, columns = min(shape[0], data.shape[0]), min(shape[1], data.shape[1])
+        other = np.full(shape, np.median(data), np.float32)
+        other[:rows, :columns] = data[:rows, :columns]
+        hdus[0].data = other
+    code, statement = composed(copy, tmp_path / "out")
+    assert code in (0, 1)
+    assert statement["largest_displacement_px"] < 0.05
+    assert all(name == item["file"] for item in statement["set_aside"])
