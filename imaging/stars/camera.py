@@ -206,6 +206,11 @@ def unknown_lens(order: int, projection: str = "TAN") -> Lens:
     return Lens(terms, np.zeros((2, count)), covariance, np.zeros(2), np.full(2, AXIS_PRIOR), projection)
 
 
+def is_unknown(lens: Lens) -> bool:
+    """Say whether this is the prior of a lens never seen before."""
+    return any(lens is unknown_lens(order, lens.projection) for order in range(1, 6))
+
+
 def order_for(stars: int) -> int:
     """Return the order of distortion that this many stars support."""
     return 3 if stars < 80 else 4 if stars < 250 else 5

@@ -54,13 +54,40 @@ def stars_near(center: np.ndarray, radius_rad: float, tt_s: float, stars_per_sr:
     """Return the stars within a radius of a unit vector at the date, brightest first, to about a mean density."""
     if radius_rad >= _WIDE_RAD:
         return whole_sky(tt_s).take(rows_near(center, radius_rad, tt_s, stars_per_sr))
+    center = np.asarray(center, float)
+    for about, reach, when, density, sky in _RECENT:  # frames of a sequence ask for nearly the same
+        away = np.arccos(np.clip(about @ center, -1, 1))
+        if _alike(density, stars_per_sr) and abs(when - tt_s) < _SAME_S and away + radius_rad <= reach:
+            return sky.take(np.flatnonzero(sky.vectors @ center > np.cos(radius_rad)))
+    wide = radius_rad * _SPARE
+    sky = _in_field(center, wide, tt_s, stars_per_sr)
+    _RECENT.insert(0, (center, wide, tt_s, stars_per_sr, sky))
+    del _RECENT[4:]
+    return sky.take(np.flatnonzero(sky.vectors @ center > np.cos(radius_rad)))
+
+
+_SAME_S = 6 * 3600.0  # in which no star moves by more than 0.01 arcsec
+_SPARE = 1.12
+_RECENT: list[tuple[np.ndarray, float, float, float | None, Sky]] = []
+
+
+def _alike(one: float | None, other: float | None) -> bool:
+    return one == other or (one is not None and other is not None and abs(one - other) < 0.05 * other)
+
+
+def _in_field(center: np.ndarray, radius_rad: float, tt_s: float, stars_per_sr: float | None) -> Sky:
     from planner.sky.stars import stars_in_field
 
-    ra_deg, dec_deg = radec_deg(np.asarray(center, float))
+    ra_deg, dec_deg = radec_deg(center)
     most = None if stars_per_sr is None else _number(np.inf, radius_rad, stars_per_sr)
     return _as_sky(
         stars_in_field(float(ra_deg), float(dec_deg), float(np.degrees(radius_rad)), tt_s, brightest=most)
     )
+
+
+def density_of(stars: int, radius_rad: float) -> float:
+    """Return the density, per steradian, at which a cone of this radius holds so many stars."""
+    return stars / (2 * np.pi * (1 - np.cos(min(radius_rad, np.pi))))
 
 
 def rows_near(

@@ -8,8 +8,9 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from imaging.stars.catalogue import density_of
 from imaging.stars.hinted import Attempt
-from imaging.stars.refine import Field, Sky, grow
+from imaging.stars.refine import STARS_LOOKED_AT, Field, Sky, grow
 from imaging.stars.verify import ACCEPT_LOG10
 
 if TYPE_CHECKING:
@@ -21,12 +22,12 @@ _MOST_SHIFTS = 5
 
 
 def solve_from_previous(
-    field: Field, previous: PlateSolution, sky_near: Callable[[np.ndarray, float], Sky]
+    field: Field, previous: PlateSolution, sky_near: Callable[[np.ndarray, float, float], Sky]
 ) -> Attempt:
     """Return the match of a field that lies near the previous one, by the shift that most star pairs agree on.
 
-    `sky_near(center, radius_rad)` gives the catalogue around a unit vector. Shifts of up to half a frame, turns of a
-    few tenths of a degree.
+    `sky_near(center, radius_rad, stars_per_sr)` gives the catalogue around a unit vector, brightest first.
+    Shifts of up to half a frame, turns of a few tenths of a degree.
     """
     assert previous.fit is not None
     camera, lens = previous.fit.camera, previous.fit_lens
@@ -35,22 +36,24 @@ def solve_from_previous(
     middle = camera.vectors(np.array([(width - 1) / 2]), np.array([(height - 1) / 2]))[0]
     corner = camera.vectors(np.array([0.0]), np.array([0.0]))[0]
     radius = float(np.arccos(np.clip(middle @ corner, -1, 1)))
-    sky = sky_near(middle, 1.5 * radius)
-    sky = sky.take(np.arange(min(len(sky), 4 * max(len(field.x_px), 30))))
-    x, y = camera.pixels(sky.vectors)
-    bright = np.flatnonzero((np.abs(x - width / 2) < width) & (np.abs(y - height / 2) < height))[
-        : 2 * _BRIGHTEST
-    ]
-    if len(bright) < 4 or len(field.x_px) < 4:
+    if len(field.x_px) < 4:
         return Attempt(None, 0.0, 0)
     seen = slice(0, _BRIGHTEST)
-    dx = field.x_px[seen, None] - x[None, bright]
-    dy = field.y_px[seen, None] - y[None, bright]
-    reachable = (np.abs(dx) < width / 2) & (np.abs(dy) < height / 2)
     trials, best = 0, 0.0
     # near the previous place first: a tracked sequence moves little
     for limit in (0.02, 0.5):
-        inside = reachable & (np.hypot(dx, dy) < limit * np.hypot(width, height))
+        sky = sky_near(middle, (1.0 + limit) * radius * 1.02, density_of(STARS_LOOKED_AT, radius))
+        x, y = camera.pixels(sky.vectors)
+        near = (np.abs(x - width / 2) < (0.5 + limit) * width) & (
+            np.abs(y - height / 2) < (0.5 + limit) * height
+        )
+        bright = np.flatnonzero(near)[: 2 * _BRIGHTEST]
+        if len(bright) < 4:
+            continue
+        dx = field.x_px[seen, None] - x[None, bright]
+        dy = field.y_px[seen, None] - y[None, bright]
+        inside = (np.abs(dx) < width / 2) & (np.abs(dy) < height / 2)
+        inside &= np.hypot(dx, dy) < limit * np.hypot(width, height)
         for shift_x, shift_y in _shifts(dx[inside], dy[inside]):
             trials += max(1, int(inside.sum()))
             close = np.hypot(dx - shift_x, dy - shift_y) < _BIN_PX

@@ -15,6 +15,8 @@ from imaging.stars.verify import Evidence, crowding
 
 GATE_SIGMAS = 3.5
 SHARPEST_PX = 0.25  # a detection is never trusted better than this while matching
+MOST_STARS = 1000  # of a solution: more make it slower, not better
+STARS_LOOKED_AT = 2500  # of the catalogue, in a frame
 _GROWN_ENOUGH = 120  # pairs after which growing ends and the whole catalogue is matched
 _NEIGHBOURS = 6
 MAGNITUDE_SIGMAS = 3.0
@@ -245,13 +247,10 @@ def _in_reach(camera: Camera, field: Field, sky: Sky, star: np.ndarray) -> tuple
     return sky.take(row), np.searchsorted(row, star), row
 
 
-def settle(
-    match: Match, lens: Lens, field: Field, sky: Sky, learned: bool = False, limit: int = 2500
-) -> Match:
+def settle(match: Match, lens: Lens, field: Field, sky: Sky, limit: int = MOST_STARS) -> Match:
     """Match the whole catalogue with the fitted camera, and fit again until the pairs no longer change.
 
-    `sky` may be another list than the one grown on. At most `limit` stars are used, the brightest. `learned`: the lens
-    is one learned before.
+    `sky` may be another list than the one grown on. At most `limit` stars are used, the brightest.
     """
     from planner.errors import NoSolutionError
 
@@ -277,12 +276,11 @@ def settle(
             break
         same = len(chosen) == len(star) and np.array_equal(inside[chosen], star)
         detection, star = nearest[chosen], inside[chosen]
-        fit = _fit(fit.camera, lens, field, sky, detection, star, iterations=5)
+        fit = _fit(fit.camera, lens, field, sky, detection, star, iterations=2)
         sigma = np.hypot(field.sigma_px[detection], sky.sigma_arcsec[star] / fit.camera.scale_arcsec_px)
         fit = averaged(
             fit,
             lens,
-            learned,
             field.x_px[detection],
             field.y_px[detection],
             sky.vectors[star],

@@ -11,7 +11,15 @@ from functools import lru_cache
 
 import numpy as np
 
-from imaging.stars.camera import RADIAL_PRIOR, CameraFit, Lens, linearised, radial_direction, stepped
+from imaging.stars.camera import (
+    RADIAL_PRIOR,
+    CameraFit,
+    Lens,
+    is_unknown,
+    linearised,
+    radial_direction,
+    stepped,
+)
 
 # factors on the widths of (linear terms, other terms that are not radial), equally likely beforehand
 KINDS = ((1.0, 1.0), (1.0, 0.25), (1.0, 0.06), (0.2, 0.25), (0.2, 0.06), (0.05, 0.25), (0.05, 0.06))
@@ -22,7 +30,6 @@ _TURNS = 6
 def averaged(
     fit: CameraFit,
     lens: Lens,
-    learned: bool,
     x_px: np.ndarray,
     y_px: np.ndarray,
     vectors: np.ndarray,
@@ -31,7 +38,7 @@ def averaged(
 ) -> CameraFit:
     """Return the fit averaged over kinds of lens, each weighed by its marginal likelihood (Laplace; linear here).
 
-    `learned`: the lens is known but for its linear terms, which refraction changes. The covariance holds the scatter
+    A lens learned before is known but for its linear terms, which refraction changes. The covariance holds the scatter
     between kinds. Stars weigh as in Student's t by their distance from the fit that the others alone would give, so
     that a precise but blended one cannot bend the fit to itself.
     """
@@ -45,7 +52,7 @@ def averaged(
     now[4] = (camera.axis_x_px - (shape[1] - 1) / 2) / half - lens.axis[0]
     now[5] = (camera.axis_y_px - (shape[0] - 1) / 2) / half - lens.axis[1]
     now[6:] = (np.asarray(camera.coefficients) - lens.coefficients).ravel()
-    priors, volumes = _priors(lens, learned)
+    priors, volumes = _priors(lens)
     pulled = priors @ now
     cost_now = pulled @ now
     weight = np.ones(count)
@@ -80,9 +87,9 @@ def averaged(
 
 
 @lru_cache(maxsize=32)
-def _priors(lens: Lens, learned: bool) -> tuple[np.ndarray, np.ndarray]:
+def _priors(lens: Lens) -> tuple[np.ndarray, np.ndarray]:
     """Return the precisions (kinds, parameters, parameters) and the logarithms of their determinants."""
-    kinds = sorted({(linear, 1.0) for linear, _ in KINDS}) if learned else KINDS
+    kinds = sorted({(linear, 1.0) for linear, _ in KINDS}) if not is_unknown(lens) else KINDS
     priors = np.array([narrowed(lens, *kind).precision for kind in kinds])
     return priors, np.linalg.slogdet(priors)[1]
 

@@ -12,11 +12,11 @@ import numpy as np
 from imaging.frames.frame import Frame
 from imaging.stars.air import Air, fitted_wcs
 from imaging.stars.camera import ARCSEC_RAD, Camera, Lens, order_for, to_wcs, unknown_lens
-from imaging.stars.catalogue import stars_near, vectors_of
+from imaging.stars.catalogue import density_of, stars_near, vectors_of
 from imaging.stars.detection import Detections, detect
 from imaging.stars.hinted import SCALE_TOLERANCE, Attempt, solve_hinted
 from imaging.stars.previous import solve_from_previous
-from imaging.stars.refine import Field, field_of, settle
+from imaging.stars.refine import STARS_LOOKED_AT, Field, field_of, settle
 from imaging.stars.solution import MatchedStars, PlateSolution
 from imaging.stars.sparse import WIDEST_SCALE_TOLERANCE, solve_sparse
 from planner.errors import NoSolutionError
@@ -203,10 +203,12 @@ def _would_help(stars: int, hint: Hint) -> str:
 
 
 def _seen_stars(tt_s: float, air: Air | None):  # type: ignore[no-untyped-def]
-    """Return a function of a direction, as seen, and a radius that gives the stars about it, as seen."""
+    """Return a function of a direction, as seen, a radius and a density that gives the stars about it, as seen."""
     if air is None:
-        return lambda center, radius_rad: stars_near(center, radius_rad, tt_s)
-    return lambda center, radius_rad: air.over(stars_near(air.unlifted(center), radius_rad, tt_s))
+        return lambda center, radius_rad, per_sr: stars_near(center, radius_rad, tt_s, per_sr)
+    return lambda center, radius_rad, per_sr: air.over(
+        stars_near(air.unlifted(center), radius_rad, tt_s, per_sr)
+    )
 
 
 def _field(found: Detections) -> Field:
@@ -235,16 +237,17 @@ def _solution(
     middle = camera.vectors(np.array([(width - 1) / 2]), np.array([(height - 1) / 2]))[0]
     corners = camera.vectors(np.array([0, width - 1, 0, width - 1]), np.array([0, 0, height - 1, height - 1]))
     radius = float(np.arccos(np.clip((corners @ middle).min(), -1, 1))) * 1.02
-    catalogue = stars_near(middle if air is None else air.unlifted(middle), radius, tt_s)
+    catalogue = stars_near(
+        middle if air is None else air.unlifted(middle), radius, tt_s, density_of(STARS_LOOKED_AT, radius)
+    )
     sky = catalogue if air is None else air.over(catalogue)
     field = _without_bodies(field, camera, exclude, air)
-    prior = lens
-    for _ in range(
-        2
-    ):  # the number of pairs decides the order of the distortion, and that the number of pairs
-        prior = lens or unknown_lens(order_for(len(match.star)), camera.projection)
-        match = settle(match, prior, field, sky, lens is not None)
-    assert prior is not None
+    # the number of pairs decides the order of the distortion, and that the number of pairs
+    prior = lens or unknown_lens(order_for(min(len(field.x_px), len(sky)) // 2), camera.projection)
+    match = settle(match, prior, field, sky)
+    if lens is None and order_for(len(match.star)) != max(p + q for p, q in prior.terms):
+        prior = unknown_lens(order_for(len(match.star)), camera.projection)
+        match = settle(match, prior, field, sky)
     camera = match.fit.camera
     rms_px = float(np.sqrt((match.fit.residual_px**2).sum(axis=1).mean()))
     if rms_px > max(_ROUGHEST_PX, _ROUGHEST * field.half_diagonal_px):
