@@ -178,6 +178,9 @@ def _instants(
             "read the check's report, or draw it all the same with --keep-off-track"
         )
     chosen = evenly_spaced(tt_s, choices.instants, sharpness, usable)
+    seen_s = tt_s[usable]
+    if seen_s.size < 2 or np.diff(seen_s).max() < 1.6 * np.ptp(seen_s) / max(choices.instants - 1, 1):
+        return chosen  # it hides nowhere: fewer instants are the more even ones
     clear_s = 0.4 * _time_to_clear_s(material, frames)
     for wanted in range(choices.instants + 1, 4 * choices.instants):
         finer = evenly_spaced(tt_s, wanted, sharpness, usable)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import base64
 import io
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
@@ -85,7 +86,7 @@ def write_page(
         )
         points = plot.scatter(
             "x", "y", source=source, size=9, fill_color=None, line_color=POINT, line_width=1.5,
-            legend_label="measured", nonselection_line_alpha=1.0, selection_line_width=3.0,
+            legend_label="measured", nonselection_line_alpha=1.0,
         )  # fmt: skip
         plot.add_tools(
             HoverTool(
@@ -139,7 +140,7 @@ def _on_canvas(picture: Picture, data: PathData, plane: np.ndarray) -> tuple[np.
     return picture.canvas.from_sky(*anchor, *plane_to_sky(*data.anchor_deg, east, north))
 
 
-def _free_corner(width: int, height: int, x_px: np.ndarray, y_px: np.ndarray) -> str:
+def _free_corner(width: int, height: int, x_px: np.ndarray, y_px: np.ndarray) -> Any:
     """Return the corner of the picture that the line keeps furthest away from; the tools stand at the lower right."""
     corners = {"top_right": (width, height), "top_left": (0, height), "bottom_left": (0, 0)}
     away = {name: float(np.hypot(x_px - x, y_px - y).min()) for name, (x, y) in corners.items()}

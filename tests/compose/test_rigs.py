@@ -42,6 +42,7 @@ def other_rig(tmp_path_factory, root):
     return plan, track_from_truth(load_plan(plan), frames, folder / "checked"), frames
 
 
+@pytest.mark.slow
 def test_two_rigs_make_one_sun_with_mercury_in_place(transit, other_rig):
     first = gather(load_plan(transit.plan), transit.track, transit.frames)
     plan, track, frames = other_rig
