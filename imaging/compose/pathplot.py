@@ -21,7 +21,7 @@ from imaging.compose.plot_marks import (
     write_limb_angles,
     write_tick_labels,
 )
-from imaging.compose.plot_ornaments import draw_compass, draw_legend, draw_scale_bar
+from imaging.compose.plot_ornaments import draw_compass, draw_inset, draw_legend, draw_scale_bar
 from imaging.compose.plot_residuals import draw_residuals
 from imaging.compose.skygrid import View, altaz_grid, edge_crossing, radec_grid
 from planner.outputs import whole_file
@@ -70,6 +70,8 @@ def draw_path_plot(data: PathData, palette: Palette = LIGHT, stars: bool = True,
     if not data.horizontal:
         draw_compass(axes, data, palette, crowd)
     draw_scale_bar(axes, view, palette, crowd)
+    if data.second is not None:
+        draw_inset(axes, data, view, palette, crowd)
     if field is not None:
         draw_stars(axes, field, palette, crowd)
     note = None if field is None else f"stars to magnitude {field.faintest:.1f}"

@@ -88,3 +88,58 @@ def draw_legend(
             box.x1 / figure.bbox.width, top - 3 * figure.dpi / 72 / tall, note, ha="right", va="top", fontsize=8,
             color=palette.quiet,
         )  # fmt: skip
+
+
+def draw_inset(
+    axes: Any, data: PathData, view: tuple[float, float, float, float], palette: Palette, crowd: Crowd
+) -> None:
+    """Show both sites' paths enlarged about the middle of the first, in the corner that the path keeps off."""
+    from matplotlib.patches import Circle, Rectangle
+
+    assert data.second is not None
+    middle = data.line[:, data.line.shape[1] // 2]
+    apart = float(np.hypot(*(data.second.line - middle[:, None])).min())
+    half = max(4.0 * apart, 2.5 * data.target_radius_arcsec, 1.0)
+    share = 0.25
+    enlarged = share * (view[1] - view[0]) / (2 * half)
+    if enlarged < 2.5:  # the two paths can be told apart as they are
+        return
+    corners = {(0.02, 0.02): (view[0], view[2]), (0.73, 0.70): (view[1], view[3])}
+    away = {
+        at: float(np.hypot(*(data.line - np.array(place)[:, None])).min()) for at, place in corners.items()
+    }
+    at = max(away, key=lambda key: away[key])
+    inset = axes.inset_axes((*at, share, share), zorder=6.5)
+    inset.set_facecolor(palette.disc if data.on_disc == "sun" else palette.paper)
+    inset.set_xticks([])
+    inset.set_yticks([])
+    inset.set_aspect("equal")
+    inset.set_xlim(middle[0] - half, middle[0] + half)
+    inset.set_ylim(middle[1] - half, middle[1] + half)
+    for spine in inset.spines.values():
+        spine.set_color(palette.quiet)
+        spine.set_linewidth(0.8)
+    paths = ((data.line, data.points, palette.predicted, palette.measured, "-", "o"),
+             (data.second.line, data.second.points, palette.other, palette.other, (0, (5, 2)), "s"))  # fmt: skip
+    for line, points, colour, dots, style, marker in paths:
+        inset.plot(*line, color=colour, linewidth=1.2, linestyle=style)
+        inset.plot(*points, color=dots, marker=marker, markersize=4.0, linestyle="none")
+        nearest = line[:, np.hypot(*(line - middle[:, None])).argmin()]
+        inset.add_patch(
+            Circle(nearest, data.target_radius_arcsec, fill=False, edgecolor=colour, linewidth=0.8)
+        )
+    length, label = round_length(0.8 * half)
+    x, y = middle[0] + 0.9 * half, middle[1] - 0.85 * half
+    inset.plot([x - length, x], [y, y], color=palette.ink, linewidth=1.4, solid_capstyle="butt")
+    inset.annotate(label, (x - length / 2, y), xytext=(0, 2), textcoords="offset points", ha="center", va="bottom",
+                   fontsize=7.5, color=palette.ink)  # fmt: skip
+    inset.annotate(f"enlarged ×{enlarged:.0f}", (0, 1), xycoords="axes fraction", xytext=(4, -4),
+                   textcoords="offset points", ha="left", va="top", fontsize=7.5, color=palette.quiet)  # fmt: skip
+    axes.add_patch(
+        Rectangle(
+            middle - half, 2 * half, 2 * half, fill=False, edgecolor=palette.quiet, linewidth=0.7, zorder=4.5
+        )
+    )
+    box = axes.get_window_extent()
+    left, low = box.x0 + at[0] * box.width, box.y0 + at[1] * box.height
+    crowd.boxes.append((left, low, left + share * box.width, low + share * box.height))

@@ -16,6 +16,8 @@ from imaging.compose.exposures import by_exposure, merged
 from imaging.compose.ground import falloff, measured_falloff, sky_surface
 from imaging.compose.light import Level, Light
 from imaging.compose.material import Registered, gather
+from imaging.compose.pathdata import path_data
+from imaging.compose.pathplot import draw_path_plot
 from imaging.compose.phase_series import phase_series
 from imaging.compose.plane import plane_to_sky
 from imaging.compose.pointing import DiscPointing
@@ -88,6 +90,10 @@ def test_two_sites_see_mercury_apart_by_its_parallax(transit, far_transit, monke
             offsets.append((float(east[0]), float((planet.dec_deg - sun.dec_deg)[0] * 3600)))
         expected.append(np.hypot(*np.subtract(*offsets)))
     assert said == pytest.approx(np.mean(expected), abs=0.6)
+    data = path_data(material, Choices(), other=far)
+    across = [np.hypot(*(data.line - place[:, None])).min() for place in data.second.line[:, 200:500:50].T]
+    assert 2.0 < np.mean(across) <= np.mean(expected) + 0.3  # the part of it across the track
+    assert draw_path_plot(data).axes[0].child_axes  # enlarged in a corner
     assert picture.kind == "two-sites"
     assert "parallax" in caption(material, picture)
     assert len(picture.drawn) > 5
