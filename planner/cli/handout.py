@@ -25,7 +25,8 @@ def command(plan: Path, output: Path | None, capture: str | None, force: bool) -
     """Make the run sheet, calendar, frame table, pictures and script of a plan.
 
     The capture command is run once a frame with its placeholders filled in: {exposure_s}, {exposure_ms}, {gain},
-    {filter}, {tracking}, {passage}, {shot}, {start_utc}, {name}; or once a shot if it holds {count} (and {cadence_s}).
+    {filter}, {tracking}, {passage}, {panel}, {ra_deg}, {dec_deg} (of fixed fields), {shot}, {start_utc}, {name}; or
+    once a shot if it holds {count} (and {cadence_s}).
 
     \b
     Example:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from planner.events.cautions import NIGHT
+from planner.events.cautions import NIGHT, SUN_NEAR
 from planner.sequence.setting import Setting
 
 PRECEDENCE = (
@@ -21,7 +21,9 @@ LASER = "No pointing lasers near airfields or traffic; elsewhere only by those w
 
 def cautions_of(setting: Setting) -> list[str]:
     """Return the cautions of a plan: those of the event, of the Sun or the night, of power, and who has precedence."""
-    said = list(setting.circumstances.cautions)
+    # over months the Sun comes near at some time; whether it does at a visit is told by the rule `sun-near`
+    passing = SUN_NEAR[0].split("{")[0] if setting.family.campaign else None
+    said = [text for text in setting.circumstances.cautions if not (passing and text.startswith(passing))]
     if setting.family.reference == "sun":
         said += SUN
     else:

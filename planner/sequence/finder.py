@@ -14,8 +14,10 @@ from planner.sequence.outlook import Outlook
 
 _STARS_SHOWN = 500
 _NAMES_SHOWN = 6
+_WIDTH_IN = 7.0
 _BOX = {"facecolor": "white", "edgecolor": "none", "pad": 0.6, "alpha": 0.8}
-_CORNERS = ((-1, 1), (1, 1), (-1, -1.12))  # belong to the arrows and to the scale bar
+# Corners that arrows and the scale bar may have; the bar stands at the bottom.
+_UPPER, _LOWER = ((-1, 1), (1, 1)), ((-1, -1), (1, -1))
 
 
 @dataclass
@@ -30,6 +32,8 @@ class _View:
     bottom: float
     top: float
     taken: list[tuple[float, float, float, float]] = field(default_factory=list)
+    corners: dict[str, tuple[int, int]] = field(default_factory=dict)
+    enlarged: float = 1.0  # how much larger labels are than in a picture seven inches wide
 
     @property
     def width(self) -> float:
@@ -44,6 +48,16 @@ class _View:
     def at(self, x: float, y: float) -> tuple[float, float]:
         """Return a place given from -1 to 1 across the view."""
         return (self.left + self.right + x * self.width) / 2, (self.bottom + self.top + y * self.height) / 2
+
+    @property
+    def arrow(self) -> float:
+        """Length of an arrow in arcminutes."""
+        return 0.10 * min(self.width, self.height)
+
+    def corner_middle(self, corner: tuple[int, int]) -> tuple[float, float]:
+        """Return where an arrow in a corner begins, so that it and its name stay in the view."""
+        x, y = self.at(*corner)
+        return x - corner[0] * 2.1 * self.arrow, y - corner[1] * 1.8 * self.arrow
 
     def project(self, ra_deg: Any, dec_deg: Any) -> tuple[np.ndarray, np.ndarray]:
         """Return (right, up) in arcminutes of directions."""
@@ -65,7 +79,7 @@ class _View:
         """Write beside a point where there is room, or not at all."""
         if not self.holds(x, y):
             return
-        wide, high = 0.0115 * self.width * len(text), 0.034 * self.height
+        wide, high = 0.0115 * self.width * len(text) * self.enlarged, 0.034 * self.height * self.enlarged
         gap_x, gap_y = 0.010 * self.width, 0.012 * self.height
         for side, level in ((1, 1), (-1, -1), (1, -1), (-1, 1)):
             middle_x, middle_y = x + side * (gap_x + wide / 2), y + level * (gap_y + high / 2)
@@ -104,12 +118,15 @@ def draw_finder(axes: Any, outlook: Outlook, passage: Passage | None = None) -> 
         )
     row = int(np.flatnonzero(outlook.frames.passage == plan.passages.index(passage))[0])
     view = _view(outlook, row)
+    inches = axes.get_position().width * axes.figure.get_figwidth()
+    view.enlarged = float(np.clip(_WIDTH_IN / inches, 1.0, 2.5))
+    axes.set_anchor("NW")
+    _draw_panels(axes, outlook, view, passage)
     _draw_discs(axes, outlook, view, row)
     _draw_track(axes, outlook, view, row)
     if outlook.family.reference != "sun":
         _draw_stars(axes, view, float(outlook.frames.start_tt_s[row]))
     _draw_directions(axes, outlook, view, row)
-    _draw_panels(axes, outlook, view, passage)
     _frame_axes(axes, view)
     turns = not outlook.campaign and not passage.flipped and any(each.flipped for each in plan.passages)
     what = "panel" if passage.panel else "frame"
@@ -135,9 +152,27 @@ def _view(outlook: Outlook, row: int) -> _View:
         for _, x, y in _panel_corners(outlook, view, passage):
             view.left, view.right = min(view.left, x.min()), max(view.right, x.max())
             view.bottom, view.top = min(view.bottom, y.min()), max(view.top, y.max())
-    for side, level in _CORNERS:
-        view.take(*view.at(0.82 * side, 0.72 * level), 0.2 * view.width, 0.26 * view.height)
+    _share_corners(outlook, view)
     return view
+
+
+def _share_corners(outlook: Outlook, view: _View) -> None:
+    """Give the emptiest corners to the scale bar (a lower one), to north and east, and to the zenith."""
+    x, y = _path(outlook, view, _track_times(outlook))
+
+    def crowd(corner: tuple[int, int]) -> int:
+        middle, half = view.corner_middle(corner), 1.9 * view.arrow
+        return int(((np.abs(x - middle[0]) < half) & (np.abs(y - middle[1]) < half)).sum())
+
+    left = [*_UPPER, *_LOWER]
+    for what, choice in (("scale", _LOWER), ("north", left), ("zenith", left)):
+        corner = min((each for each in choice if each in left), key=crowd)
+        left.remove(corner)
+        view.corners[what] = corner
+        high = 0.12 * view.height if what == "scale" else 3.6 * view.arrow
+        wide = 0.22 * view.width if what == "scale" else 3.6 * view.arrow
+        edge = view.at(*corner)
+        view.take(edge[0] - corner[0] * wide / 2, edge[1] - corner[1] * high / 2, wide, high)
 
 
 def _panel_corners(
@@ -158,11 +193,14 @@ def _panel_corners(
 
 
 def _draw_panels(axes: Any, outlook: Outlook, view: _View, passage: Passage) -> None:
-    """Draw the outlines of a mosaic's panels, each with its name in its lower right corner."""
+    """Draw the outlines of a mosaic's panels, each with its name low in it, away from the scale bar."""
     for each, x, y in _panel_corners(outlook, view, passage):
         axes.plot([*x, x[0]], [*y, y[0]], color="0.35", lw=0.9, zorder=7)
+        low = 2 if view.corners["scale"][0] < 0 else 3
+        place = float(0.55 * x[low] + 0.45 * x.mean()), float(0.55 * y[low] + 0.45 * y.mean())
+        view.take(*place, 0.035 * view.width * view.enlarged, 0.06 * view.height * view.enlarged)
         axes.text(
-            0.8 * x[2] + 0.2 * x.mean(), 0.8 * y[2] + 0.2 * y.mean(), each.panel, fontsize=9, ha="center",
+            *place, each.panel, fontsize=9, ha="center",
             va="center", color="0.25", bbox=_BOX,
             zorder=7, weight="bold" if each is passage else "normal",
         )  # fmt: skip
@@ -181,7 +219,9 @@ def _frame_axes(axes: Any, view: _View) -> None:
     for spine in axes.spines.values():
         spine.set_color("0.7")
     length = _round_length(view.width / 5)
-    x, y = view.at(-0.95, -0.94)
+    x, y = view.at(0.95 * view.corners["scale"][0], -0.94)
+    if view.corners["scale"][0] > 0:
+        x -= length
     axes.plot([x, x + length], [y, y], color="black", lw=2.5, zorder=9)
     text = f"{length:g} arcmin" if length < 60 else f"{length / 60:g} degrees"
     axes.text(x, y + 0.012 * view.height, text, fontsize=8, va="bottom", zorder=9, bbox=_BOX)
@@ -258,7 +298,8 @@ def _track_times(outlook: Outlook) -> np.ndarray:
         return np.asarray(
             tt_s_from_datetime([passage.shots[0].start_utc for passage in outlook.plan.passages])
         )
-    if outlook.campaign:
+    if outlook.campaign and outlook.family.name != "apparition-arc":
+        # an apparition's rest is spent by day, far from what is shot
         first, last = min(first, outlook.event.start_tt_s), max(last, outlook.event.end_tt_s)
     return np.linspace(first, last, 400)
 
@@ -328,14 +369,20 @@ def _over_ground(
 
 
 def _draw_directions(axes: Any, outlook: Outlook, view: _View, row: int) -> None:
-    """Draw arrows to celestial north and east and to the zenith, in the upper corners."""
-    length = 0.10 * min(view.width, view.height)
+    """Draw arrows to celestial north and east and to the zenith, in corners that are free."""
+    from matplotlib.patches import Circle
+
+    length = view.arrow
+    origins = {what: view.corner_middle(view.corners[what]) for what in ("north", "zenith")}
+    for origin in origins.values():
+        # stars behind an arrow and its name are taken away, tracks and frames are not
+        axes.add_patch(Circle(origin, 1.7 * length, color="white", alpha=0.9, lw=0, zorder=3.5))
     sky = outlook.geometry(outlook.frames.middle_tt_s[row : row + 1])
     for label, angle in (("N", 0.0), ("E", np.pi / 2)):
-        _arrow(axes, view.frame, view.at(0.84, 0.70), length, angle, label, "-")
+        _arrow(axes, view.frame, origins["north"], length, angle, label, "-")
     zenith = np.radians(float(sky.zenith_pa_deg[0]))
     if np.isfinite(zenith):
-        _arrow(axes, view.frame, view.at(-0.80, 0.70), length, zenith, "zenith", ":")
+        _arrow(axes, view.frame, origins["zenith"], length, zenith, "zenith", ":")
 
 
 def _arrow(
@@ -350,7 +397,7 @@ def _arrow(
     axes.text(*end, label, fontsize=8.5, ha="center", va="center", zorder=9, bbox=_BOX)
 
 
-def finder_figure(outlook: Outlook, passage: Passage | None = None, width_in: float = 7.0) -> Any:
+def finder_figure(outlook: Outlook, passage: Passage | None = None, width_in: float = _WIDTH_IN) -> Any:
     """Return the finder as a matplotlib figure."""
     from matplotlib.figure import Figure
 

@@ -22,18 +22,23 @@ th { text-align: left; font-weight: normal; font-size: 0.8em; color: var(--faint
 td, th { padding: 0.1rem 0.45rem 0.1rem 0; border-bottom: 1px solid var(--line); vertical-align: top; }
 tr.strong td { font-weight: 700; } .wide { overflow-x: auto; }
 .caution { border: 2px solid var(--ink); padding: 0.3rem 0.6rem; margin: 0.5rem 0; }
-.pictures { display: flex; flex-wrap: wrap; gap: 0.6rem; align-items: flex-start; }
-.pictures svg { width: 100%; height: auto; } .pictures div { flex: 1 1 22rem; min-width: 0; background: #fff; }
-#night { position: absolute; right: 0.8rem; top: 0.8rem; } label[for=night] { float: right; font-size: 0.85em; }
+td:not(:last-child) { white-space: nowrap; }
+.pictures svg { width: 100%; height: auto; display: block; }
+.pictures div { margin: 0.6rem 0; background: #fff; overflow-x: auto; }
+.night { float: right; font-size: 0.85em; padding: 0.3rem; } .night input { accent-color: #a02010; }
 /* at night: dark red on black; nothing in the sheet is told by colour alone */
 body:has(#night:checked) { --paper: #000; --ink: #e03020; --faint: #b02818; --line: #601008; }
 html:has(#night:checked) { background: #000; }
 body:has(#night:checked) .pictures div { background: #000; filter: none; }
 body:has(#night:checked) .pictures svg { filter: url(#red); }
-@media (max-width: 32rem) { body { font-size: 14px; }
-  td { white-space: nowrap; } td:last-child { white-space: normal; } }
-@media print { body { font-size: 9.4px; max-width: none; padding: 0; } #night, label[for=night] { display: none; }
-  .pictures div { flex: 1 1 45%; } h2 { margin: 0.4rem 0 0.1rem; } details { display: none; } }
+/* a picture that is shrunk to a phone cannot be read: it is pushed sideways instead */
+@media (max-width: 40rem) { body { font-size: 14px; } .pictures svg { width: 40rem; }
+  .steps th { display: none; } .steps tr { display: flex; flex-wrap: wrap; } .steps td { border: 0; }
+  .steps td:last-child { flex: 1 1 100%; padding-left: 1.3rem; border-bottom: 1px solid var(--line); } }
+@media print { html { font-size: 10px; } body { font-size: 9.4px; max-width: none; padding: 0; }
+  .night { display: none; } h1 { font-size: 1.5rem; }
+  .pictures { display: flex; gap: 3mm; align-items: flex-start; } .pictures div { flex: 1 1 45%; min-width: 0; }
+  h2 { margin: 0.4rem 0 0.1rem; } details { display: none; } }
 @page { size: A4; margin: 11mm; }
 """
 
@@ -48,13 +53,14 @@ def sheet_html(outlook: Outlook) -> str:
     """Return the page."""
     sheet = sheet_of(outlook)
     pictures = "".join(
-        f"<div>{_svg(figure)}</div>" for figure in (timeline_figure(outlook), finder_figure(outlook))
+        f"<div>{_svg(figure)}</div>"
+        for figure in (timeline_figure(outlook, 7.4, 3.9), finder_figure(outlook, width_in=7.4))
     )
     parts = [
         "<!doctype html><html lang='en'><head><meta charset='utf-8'>",
         "<meta name='viewport' content='width=device-width, initial-scale=1'>",
         f"<title>{escape(sheet.title)}</title><style>{_STYLE}</style></head><body>",
-        "<input type='checkbox' id='night'><label for='night'>red light&nbsp;&nbsp;&nbsp;&nbsp;&nbsp;</label>",
+        "<label class='night'><input type='checkbox' id='night'> red light</label>",
         _RED,
         f"<h1>{escape(sheet.title)}</h1>",
         f"<p>{escape(sheet.subtitle)}. {'<br>'.join(escape(fact) for fact in sheet.facts)}</p>",
@@ -63,7 +69,7 @@ def sheet_html(outlook: Outlook) -> str:
         _table(INSTANT_HEAD, sheet.instants),
         f"<div class='pictures'>{pictures}</div>",
         "<h2>To do</h2>",
-        _table(STEP_HEAD, sheet.steps),
+        _table(STEP_HEAD, sheet.steps, "wide steps"),
         "<h2>Frames</h2>",
         _table(PASSAGE_HEAD, sheet.passages),
         _list("Calibration", sheet.calibration),
@@ -86,7 +92,7 @@ def _list(title: str, texts: tuple[str, ...]) -> str:
     return f"<h2>{title}</h2><ul>{_items(texts)}</ul>" if texts else ""
 
 
-def _table(head: tuple[str, ...], rows: tuple[SheetRow, ...]) -> str:
+def _table(head: tuple[str, ...], rows: tuple[SheetRow, ...], kind: str = "wide") -> str:
     kept = [column for column in range(len(head)) if any(row.cells[column] for row in rows)]
     top = "".join(f"<th>{escape(head[column])}</th>" for column in kept)
     lines = "".join(
@@ -95,7 +101,7 @@ def _table(head: tuple[str, ...], rows: tuple[SheetRow, ...]) -> str:
         + "</tr>"
         for row in rows
     )
-    return f"<div class='wide'><table><tr>{top}</tr>{lines}</table></div>" if rows else ""
+    return f"<div class='{kind}'><table><tr>{top}</tr>{lines}</table></div>" if rows else ""
 
 
 def _svg(figure: Any) -> str:

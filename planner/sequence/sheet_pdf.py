@@ -13,7 +13,8 @@ from planner.sequence.timeline import draw_timeline
 
 _A4_IN = (8.27, 11.69)
 _LINE = 0.0122  # height of a line, in page heights
-_ONE_COLUMN, _MOST_ROWS = 14, 64
+_ONE_COLUMN = 14
+_LARGE, _SMALL = 7.6, 6.2
 _SHORT = (0, 1, 2, 3, 5)
 
 
@@ -49,7 +50,9 @@ def sheet_figure(outlook: Outlook) -> Any:
     width = min(0.5, height * _A4_IN[1] / _A4_IN[0] * sensor.width_px / sensor.height_px)
     top = page.y
     with matplotlib.rc_context({"font.size": 7}):
-        draw_finder(figure.add_axes((0.05, top - height, width, height)), outlook)
+        finder = figure.add_axes((0.05, top - height, width, height))
+        draw_finder(finder, outlook)
+        finder.apply_aspect()
     right = _Page(figure, left=0.08 + width, width=0.87 - width)
     right.y = top
     right.text("To do", size=9, weight="bold")
@@ -60,38 +63,39 @@ def sheet_figure(outlook: Outlook) -> Any:
             weight="bold" if row.strong else "normal",
             hang=5,
         )
-    page.y = min(top - height - 0.012, right.y)
+    page.y = min(float(finder.get_position().y0) - 0.012, right.y)
     page.text("Caution", size=9, weight="bold")
     for caution in sheet.cautions:
         page.text(caution, size=6.4, hang=2, bullet="! ")
-    page.text("Frames", size=9, weight="bold")
-    if len(sheet.passages) <= _ONE_COLUMN:
-        page.table(PASSAGE_HEAD, sheet.passages, (0.0, 0.24, 0.42, 0.58, 0.65, 0.72, 0.88, 0.94))
-    else:
-        _two_columns(page, sheet.passages)
-    page.gap(0.3)
     for finding in sheet.findings:
         page.text(finding, size=6.4, hang=2, bullet="- ")
     for each in sheet.calibration:
         page.text(each, size=6.4, hang=2, bullet="+ ")
+    page.gap(0.3)
+    page.text("Frames", size=9, weight="bold")
+    if len(sheet.passages) <= min(_ONE_COLUMN, page.rows_left(_LARGE) - 1):
+        page.table(PASSAGE_HEAD, sheet.passages, (0.0, 0.24, 0.42, 0.58, 0.65, 0.72, 0.88, 0.94))
+    else:
+        _two_columns(page, sheet.passages)
     page.foot(sheet.foot)
     return figure
 
 
 def _two_columns(page: _Page, passages: tuple[SheetRow, ...]) -> None:
-    """Write a long table of passages in two columns, without what is the same for all."""
-    shown = passages[:_MOST_ROWS]
+    """Write a long table of passages in two columns, as far as the page goes, without what is the same for all."""
+    room = 2 * max(page.rows_left(_SMALL) - 2, 1)
+    shown = passages[:room]
     rows = [SheetRow(tuple(row.cells[i] for i in _SHORT), row.strong) for row in shown]
     half = (len(rows) + 1) // 2
     top, lowest = page.y, page.y
     for left, part in ((page.left, rows[:half]), (page.left + 0.47, rows[half:])):
         column = _Page(page.figure, left=left, width=0.43)
         column.y = top
-        column.table(tuple(PASSAGE_HEAD[i] for i in _SHORT), tuple(part), (0.0, 0.25, 0.49, 0.79, 0.88))
+        column.table(tuple(PASSAGE_HEAD[i] for i in _SHORT), tuple(part), (0.0, 0.25, 0.49, 0.77, 0.89))
         lowest = min(lowest, column.y)
     page.y = lowest
-    if len(passages) > _MOST_ROWS:
-        page.text(f"and {len(passages) - _MOST_ROWS} more, see the HTML sheet", size=7)
+    if len(passages) > len(shown):
+        page.text(f"and {len(passages) - len(shown)} more, see the HTML sheet", size=7)
 
 
 class _Page:
@@ -116,7 +120,7 @@ class _Page:
 
     def table(self, head: tuple[str, ...], rows: tuple[SheetRow, ...], columns: tuple[float, ...]) -> None:
         """Write a table with columns at these parts of the width; long tables are set smaller."""
-        size = 7.6 if len(rows) <= _ONE_COLUMN and self.width > 0.6 else 6.2
+        size = _LARGE if len(rows) <= _ONE_COLUMN and self.width > 0.6 else _SMALL
         step = size / 72 / _A4_IN[1] * 1.32
         for text, column in zip(head, columns, strict=True):
             self.figure.text(
@@ -130,6 +134,10 @@ class _Page:
                     self.left + column * self.width, self.y, text, fontsize=size, va="top", fontweight=weight
                 )
             self.y -= step
+
+    def rows_left(self, size: float) -> int:
+        """Return how many rows of a table at this size have room above the foot."""
+        return int((self.y - 0.034) / (size / 72 / _A4_IN[1] * 1.32))
 
     def foot(self, text: str) -> None:
         self.figure.text(self.left, 0.018, text, fontsize=6, color="0.35")

@@ -31,7 +31,7 @@ def draw_strip(axes: Any, outlook: Outlook) -> None:
         axes.add_patch(Rectangle((column, 0), 1, 1, facecolor=str(grey), edgecolor="black", lw=0.6))
         clipped = part >= 0.999
         axes.text(
-            column + 0.5, 0.5, "clipped" if clipped else f"{100 * part:.0f} %", ha="center", va="center",
+            column + 0.5, 0.5, "clipped" if clipped else f"{100 * part:.2g} %", ha="center", va="center",
             fontsize=7.5, rotation=90, color="black" if grey > 0.5 else "white",
         )  # fmt: skip
         axes.text(
@@ -58,8 +58,11 @@ def draw_strip(axes: Any, outlook: Outlook) -> None:
 
 
 def _short(passage: str, shot: str) -> str:
-    name = shot if shot.startswith(passage.rsplit(" ", 1)[0]) else f"{passage}, {shot}"
-    return name if len(name) < 26 else name[:25] + "…"
+    """Return the passage's name with what the shot's adds to it."""
+    # a passage that a pause has cut in two has a number, which its shots do not repeat
+    base = passage if shot.startswith(passage) else passage.rsplit(" ", 1)[0]
+    name = f"{passage}{shot.removeprefix(base)}" if shot.startswith(base) else f"{passage}, {shot}"
+    return name if len(name) < 34 else name[:33] + "…"
 
 
 def strip_figure(outlook: Outlook) -> Any:

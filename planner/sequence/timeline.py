@@ -16,6 +16,7 @@ from planner.sequence.outlook import Outlook
 
 _TWILIGHTS = ((-18.0, "0.68"), (-12.0, "0.77"), (-6.0, "0.86"), (-0.833, "0.94"))
 _BOX = {"facecolor": "white", "edgecolor": "none", "pad": 0.8, "alpha": 0.85}
+_HOURS_CLOSE = 3.0
 DAY_COLOUR, NIGHT_COLOUR = "1.0", "0.58"
 
 
@@ -153,9 +154,11 @@ def _draw_nights(axes: Any, outlook: Outlook) -> None:
     low = np.where(up < plan.rig.mount.min_altitude_deg, 1.0, 0.0)
     if low.any():
         axes.contourf(dates, hours, low, levels=[0.5, 1.5], colors="none", hatches=["///"], zorder=2)
+    visited = []
     for passage in (visit[0] for visit in plan.visits()):
         first = min(shot.start_utc for shot in passage.shots)
         hour = ((first - noon).total_seconds() / 3600) % 24
+        visited.append(hour)
         x = mdates.date2num(first) - hour / 24
         axes.plot(
             x, hour, "s" if passage.done else "o", ms=6.5, mfc="black" if passage.done else "white", mec="black",
@@ -166,15 +169,19 @@ def _draw_nights(axes: Any, outlook: Outlook) -> None:
             axes.plot(
                 mdates.date2num(reserve) - hour / 24, hour, "x", ms=4.5, color="black", mew=1.0, zorder=4
             )
-    night = (sun < 0).any(axis=1)
-    axes.set_ylim(hours[night].min() - 0.5, hours[night].max() + 0.5)
+    shown = hours[(sun < 0).any(axis=1)]
+    if np.ptp(visited) < _HOURS_CLOSE:
+        # visits at one time of the evening are looked at closely
+        shown = np.array([min(visited) - 1.0, max(visited) + 1.0])
+    axes.set_ylim(shown.min() - 0.5, shown.max() + 0.5)
     axes.set_xlim(dates[0], dates[-1])
     offset = (noon - noon.replace(hour=0)).total_seconds() / 3600
 
     def clock(hour: float, _position: object = None) -> str:
-        return f"{round(hour + offset) % 24:02d}:00"
+        minutes = round((hour + offset) * 60) % 1440
+        return f"{minutes // 60:02d}:{minutes % 60:02d}"
 
-    axes.yaxis.set_major_locator(MultipleLocator(2))
+    axes.yaxis.set_major_locator(MultipleLocator(2 if np.ptp(shown) > _HOURS_CLOSE + 2 else 0.5))
     axes.yaxis.set_major_formatter(clock)
     axes.set_ylabel("UTC")
     axes.xaxis.set_major_locator(mdates.AutoDateLocator(minticks=4, maxticks=9))
