@@ -12,6 +12,7 @@ if TYPE_CHECKING:
 
     from imaging.stars.air import Air
     from imaging.stars.camera import CameraFit, Lens
+    from imaging.stars.memory import Memory
 
 
 @dataclass(frozen=True)
@@ -29,10 +30,11 @@ class MatchedStars:
 
     @property
     def name(self) -> tuple[str, ...]:
-        """Names of the stars, made when asked for: `HIP 21421`, or `Gaia DR3 ...`."""
+        """Names of the stars, made when asked for: `HIP 21421`, `Gaia DR3 ...`, or `learned` from earlier frames."""
         from planner.sky.stars import star_names
 
-        return star_names(self.index)
+        names = iter(star_names(self.index[self.index >= 0]))
+        return tuple(next(names) if row >= 0 else "learned" for row in self.index)
 
 
 @dataclass(frozen=True)
@@ -44,7 +46,8 @@ class PlateSolution:
     `mirrored`: True when, looked at with north up, east is to the right.
     `how`: `hinted`, `blind`, `previous` or `sparse`. `rms_px`: of the residuals (both axes together).
     `sigma_model_px`: scatter of the residuals beyond the stated errors of stars and centroids (one axis).
-    `fit`: the camera with the covariance of its parameters; `fit_lens`: what was held of the lens. `air`: when given,
+    `fit`: the camera with the covariance of its parameters; `fit_lens`: what was held of the lens.
+    `memory`: what this frame and those before it show beyond the catalogue. `air`: when given,
     the camera was fitted to the stars as this air lifts them; all that is told here is without air.
     """
 
@@ -65,6 +68,7 @@ class PlateSolution:
     fit: CameraFit | None = None
     fit_lens: Lens | None = None
     air: Air | None = None
+    memory: Memory | None = None
 
     def pixel_to_sky(self, x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return ICRS (ra_deg, dec_deg) of 0-based array pixels."""

@@ -15,14 +15,16 @@ from imaging.stars.camera import ARCSEC_RAD, Camera, Lens, order_for, to_wcs, un
 from imaging.stars.catalogue import density_of, stars_near, vectors_of
 from imaging.stars.detection import Detections, detect
 from imaging.stars.hinted import SCALE_TOLERANCE, Attempt, solve_hinted
+from imaging.stars.memory import Memory, remembered, together
 from imaging.stars.previous import solve_from_previous
-from imaging.stars.refine import STARS_LOOKED_AT, Field, field_of, settle
+from imaging.stars.refine import STARS_LOOKED_AT, Field, Sky, field_of, settle
 from imaging.stars.solution import MatchedStars, PlateSolution
 from imaging.stars.sparse import WIDEST_SCALE_TOLERANCE, solve_sparse
 from planner.errors import NoSolutionError
 
 _ROUGHEST_PX, _ROUGHEST = 2.0, 1e-3  # residuals beyond are no solution: px, half-diagonals
 _FISHEYE_DEG = 75.0  # of the diagonal, from which an equidistant lens is tried too
+_WELL_MATCHED = 60  # catalogue stars, from which on nothing need be learned
 _CENTROID_FLOOR_PX = 0.01  # below it the model of the star's profile, not noise, limits (measured)
 
 
@@ -103,11 +105,33 @@ def solve_detections(
         )
     tried: list[str] = []
     if previous is not None and previous.fit is not None:
-        attempt = solve_from_previous(field, previous, _seen_stars(tt_s, air))
+        lens, near = previous.fit_lens, _seen_stars(tt_s, air)
+        attempt = solve_from_previous(field, previous, near)
         if attempt.match is not None:
-            lens = previous.fit_lens
-            return _solution(attempt, lens, field, shape, tt_s, row_zero, exclude, "previous", air)
-        tried.append("from the previous frame")
+            return _solution(
+                attempt, lens, field, shape, tt_s, row_zero, exclude, "previous", air, previous.memory
+            )
+        learned = None if previous.memory is None else previous.memory.stars(previous.scale_arcsec_px)
+        if learned is not None and len(learned) >= 3:
+            extra = learned if air is None else air.over(learned)
+            attempt = solve_from_previous(field, previous, lambda *cone: together(near(*cone), extra))
+            if attempt.match is not None:
+                return _solution(
+                    attempt,
+                    lens,
+                    field,
+                    shape,
+                    tt_s,
+                    row_zero,
+                    exclude,
+                    "previous",
+                    air,
+                    previous.memory,
+                    learned,
+                )
+            tried.append(f"from the previous frame, with {len(learned)} stars learned on the way")
+        else:
+            tried.append("from the previous frame")
         hint = Hint(
             hint.near or (previous.center_ra_deg, previous.center_dec_deg),
             previous.scale_arcsec_px,
@@ -229,6 +253,8 @@ def _solution(
     exclude: Sequence[tuple[float, float]],
     how: str,
     air: Air | None = None,
+    memory: Memory | None = None,
+    learned: Sky | None = None,
 ) -> PlateSolution:
     """Settle a match over the whole catalogue and write it down."""
     assert attempt.match is not None
@@ -240,6 +266,8 @@ def _solution(
     catalogue = stars_near(
         middle if air is None else air.unlifted(middle), radius, tt_s, density_of(STARS_LOOKED_AT, radius)
     )
+    if learned is not None:
+        catalogue = together(catalogue, learned)
     sky = catalogue if air is None else air.over(catalogue)
     field = _without_bodies(field, camera, exclude, air)
     # the number of pairs decides the order of the distortion, and that the number of pairs
@@ -280,6 +308,7 @@ def _solution(
         fit=match.fit,
         fit_lens=prior,
         air=air,
+        memory=remembered(memory, match, field, air) if len(match.star) < _WELL_MATCHED else memory,
         **_orientation(camera, width, height, row_zero, air),
     )
 
