@@ -3,43 +3,24 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from itertools import pairwise
 
 import numpy as np
 from scipy.special import erf
 
 from imaging.discs.edge import FWHM_OVER_SIGMA, WING_RATIO, Blur
 from imaging.discs.limb import LimbFit
-from imaging.discs.phase import law_of, light_offset_radii, minnaert
+from imaging.discs.lit import RING_EDGES, Body, LitCells, from_the_light, lit_cells, ring_distance
+from imaging.discs.phase import law_of, minnaert
 from imaging.discs.stamp import DiscPlace, Stamp, blurred, coverage, fit_stamp, projected_cost, sub_pixels
 from planner.errors import NoSolutionError
 
 # Widths of the round Gaussians that together are any point spread: in units of the narrowest, and, for the aureole,
 # of the stamp's half side.
-_WIDTHS, _AUREOLE = (1.0, 1.6, 2.6, 4.5), (0.25, 0.6)
-
-
-@dataclass(frozen=True)
-class Body:
-    """What is known of a planet beforehand. Angles are polar, in the array, from +x toward +y.
-
-    `radius_px`: equatorial. `lit_angle_deg`: toward the middle of the lit limb; None when not known, then no
-    correction for phase is made. `pole_angle_deg`: of the projected pole, for a flattened disc.
-    """
-
-    name: str = "planet"
-    radius_px: float = 0.0
-    phase_angle_deg: float = 0.0
-    lit_angle_deg: float | None = None
-    flattening: float = 0.0
-    pole_angle_deg: float = 90.0
-
-    def light_offset_px(self) -> tuple[float, float]:
-        """Return the centre of light minus the centre of figure (x, y)."""
-        if self.lit_angle_deg is None:
-            return 0.0, 0.0
-        size = self.radius_px * light_offset_radii(self.phase_angle_deg, law_of(self.name))
-        angle = np.radians(self.lit_angle_deg)
-        return float(size * np.cos(angle)), float(size * np.sin(angle))
+# What the model of an image is not known to, however bright it is: measured on drawn points and discs.
+MODEL_FLOOR_PX = 0.006
+_LOST = 0.2  # of a disc's area: so much of it saturated, its own shape is not seen
+_WIDTHS, _AUREOLE = (1.0, 1.6, 2.6, 4.5), (0.12, 0.2, 0.33, 0.6)
 
 
 @dataclass(frozen=True)
@@ -86,8 +67,11 @@ def planet_among_stars(
     clipped = int(stamp.clipped.sum())
     sigma = fwhm_px / FWHM_OVER_SIGMA
     if body.radius_px > 1.5 * sigma and body.radius_px > 1.2:
-        return _resolved(stamp, x0, y0, body, sigma, noise, None, clipped)
-    return _point(stamp, x0, y0, body, sigma, noise, clipped)
+        if clipped < _LOST * np.pi * body.radius_px**2:
+            return _resolved(stamp, x0, y0, body, sigma, noise, None, clipped)
+        # of a disc that is lost to saturation only the skirt is left: its shape is the point spread's
+        return _point(stamp, x0, y0, body, sigma, noise, clipped, lit_cells(body))
+    return _point(stamp, x0, y0, body, sigma, noise, clipped, None)
 
 
 def planet_beside_moon(
@@ -152,7 +136,7 @@ def _locate(
     """Find the brightest thing near a place; returns its middle, the half size of the stamp it needs, the noise."""
     import cv2
 
-    reach = body.radius_px + 3 * fwhm_px + 4
+    reach = body.reach_px + 3 * fwhm_px + 4
     wide = Stamp.cut(data, x_px, y_px, search_px + 2 * reach, saturation)
     noise = _sky_noise(wide, gain_e_adu)
     sigma = max(np.hypot(fwhm_px / FWHM_OVER_SIGMA, 0.5 * body.radius_px), 0.6)
@@ -194,9 +178,19 @@ def _without_bled_columns(stamp: Stamp) -> Stamp:
 
 
 def _point(
-    stamp: Stamp, x0: float, y0: float, body: Body, sigma: float, noise: Noise, clipped: int
+    stamp: Stamp,
+    x0: float,
+    y0: float,
+    body: Body,
+    sigma: float,
+    noise: Noise,
+    clipped: int,
+    disc: LitCells | None,
 ) -> DiscPlace:
-    """Fit a round point spread of free shape: five Gaussians of fixed ratio, integrated over pixels."""
+    """Fit a round point spread of free shape: six Gaussians of fixed ratio, integrated over pixels.
+
+    `disc`: what is spread, where it is no point; its centre of light is what is fitted.
+    """
     x, y = stamp.grid()
     unit = max(float(stamp.data.shape[0]), 1.0)
     plane = [np.ones(stamp.data.shape), (x - x0) / unit + 0 * y, (y - y0) / unit + 0 * x]
@@ -204,20 +198,28 @@ def _point(
     def share(offset: np.ndarray, width: float) -> np.ndarray:
         return 0.5 * (erf((offset + 0.5) / (np.sqrt(2) * width)) - erf((offset - 0.5) / (np.sqrt(2) * width)))
 
+    def spread(px: float, py: float, width: float) -> np.ndarray:
+        if disc is None:
+            return share(y - py, width) * share(x - px, width)
+        columns = share(x[0, :, None] - px - (disc.x_px - disc.centre_px[0]), width)
+        rows = share(y[:, 0, None] - py - (disc.y_px - disc.centre_px[1]), width)
+        return rows @ disc.light @ columns.T
+
     reach = 0.5 * min(stamp.data.shape)
     count = len(_WIDTHS) + len(_AUREOLE)
     seen = np.hypot(sigma, body.radius_px / 2)
+    wide = seen if disc is None else sigma
 
     def components(parameters: np.ndarray) -> np.ndarray:
         px, py, log_sigma = parameters
         widths = [ratio * np.exp(log_sigma) for ratio in _WIDTHS] + [part * reach for part in _AUREOLE]
-        return np.array([share(y - py, width) * share(x - px, width) for width in widths] + plane)
+        return np.array([spread(px, py, width) for width in widths] + plane)
 
     core = np.hypot(x - x0, y - y0) < 2 * FWHM_OVER_SIGMA * seen
     tolerance = replace(noise, relative=0.008, brightest_adu=float(stamp.data[stamp.usable].max()))
     x0, y0 = _clipped_centroid(stamp, x0, y0, noise, seen)
     near = 0.5 + 0.5 * seen
-    start = np.array([x0, y0, np.log(seen)])
+    start = np.array([x0, y0, np.log(wide)])
     stages: tuple[float, ...] = (0.008,)
     if clipped or seen < 0.8:
         # a saturated or undersampled point has several minima: with large relative errors they are one
@@ -243,16 +245,20 @@ def _point(
     if height < 3 * np.sqrt(noise.sky_adu2):
         raise NoSolutionError("nothing like a planet stands out of the sky there")
     light_x, light_y = float(fit.parameters[0]), float(fit.parameters[1])
-    dx, dy = body.light_offset_px()
+    dx, dy = body.light_offset_px() if disc is None else disc.centre_px
+    covariance = fit.covariance[:2, :2] + np.eye(2) * MODEL_FLOOR_PX**2
+    if disc is not None:
+        covariance = covariance + disc.law_covariance_px2
     notes = []
     if body.lit_angle_deg is None and body.phase_angle_deg * body.radius_px > 2:
         notes.append("the phase is not corrected: the direction to the lit limb is not known")
     elif np.hypot(dx, dy) > 0.01:
-        notes.append(f"centre of figure from the centre of light by the law of {law_of(body.name)}")
+        law = law_of(body.name) if disc is None else "lambert"
+        notes.append(f"centre of figure from the centre of light by the law of {law}")
     if clipped:
         notes.append(f"{clipped} saturated pixels left out")
     return DiscPlace(
-        light_x - dx, light_y - dy, fit.covariance[:2, :2], body.radius_px, 0.0,
+        light_x - dx, light_y - dy, covariance, body.radius_px, 0.0,
         Blur(float(np.exp(fit.parameters[2]))), light_x, light_y,
         height / float(np.sqrt(noise.sky_adu2)), fit.chi2, "point spread", clipped, tuple(notes),
     )  # fmt: skip
@@ -307,8 +313,6 @@ def _resolved(
     wing = moon.blur.wing if moon is not None else 0.1
     margin = min(int(np.ceil(4 * WING_RATIO * sigma)) + 1, 24)
     x, y = stamp.grid(finer, margin)
-    pole = np.radians(body.pole_angle_deg)
-    lit = np.radians(body.lit_angle_deg if body.lit_angle_deg is not None else body.pole_angle_deg)
     phase = body.phase_angle_deg if body.lit_angle_deg is not None else 0.0
     xs, ys = stamp.grid()
     unit = max(float(stamp.data.shape[0]), 1.0)
@@ -331,21 +335,28 @@ def _resolved(
     def disc(parameters: np.ndarray) -> np.ndarray:
         px, py, log_sigma, log_radius, exponent = parameters
         radius = body.radius_px * np.exp(log_radius)
-        dx, dy = x - px, y - py
-        along = (dx * np.cos(pole) + dy * np.sin(pole)) / (radius * (1 - body.flattening))
-        across = (dx * np.sin(pole) - dy * np.cos(pole)) / radius
-        turn = lit - pole
-        toward = along * np.cos(turn) - across * np.sin(turn)
-        side = along * np.sin(turn) + across * np.cos(turn)
-        distance = np.hypot(along, across)
+        toward, side, distance = from_the_light(x - px, y - py, body, radius)
         # pixels on the outline count by the part inside; brightness there is that just inside
         shrink = np.minimum(1.0, 0.995 / np.maximum(distance, 1e-6))
         bright = minnaert(toward * shrink, side * shrink, phase, exponent)
         seen = bright * coverage((distance - 1) * radius, finer) * clear
         return blurred(seen, Blur(float(np.exp(log_sigma)), wing), finer, margin)
 
+    def rings(parameters: np.ndarray) -> list[np.ndarray]:
+        px, py, log_sigma, log_radius, _ = parameters
+        if body.ring_sine <= 0:
+            return []
+        radius = body.radius_px * np.exp(log_radius)
+        distance, slope = ring_distance(x - px, y - py, body, radius)
+        _, _, globe = from_the_light(x - px, y - py, body, radius)
+        within = [coverage((distance - edge) / slope, finer) for edge in RING_EDGES]
+        # what crosses the globe is left to the globe, whose light is free
+        off = (1 - coverage((globe - 1) * radius, finer)) * clear
+        blur = Blur(float(np.exp(log_sigma)), wing)
+        return [blurred((outer - inner) * off, blur, finer, margin) for inner, outer in pairwise(within)]
+
     def components(parameters: np.ndarray) -> np.ndarray:
-        return np.array([disc(parameters), *plane])
+        return np.array([disc(parameters), *rings(parameters), *plane])
 
     light_dx, light_dy = body.light_offset_px()
     start = np.array([x0 - light_dx, y0 - light_dy, np.log(max(sigma, 0.3)), 0.0, 0.8])
@@ -358,15 +369,16 @@ def _resolved(
         prior=np.array([np.inf, np.inf, 0.2 if moon is not None else 0.5, 0.01, 0.25]),
         limit=np.array([max(6.0, 2 * body.radius_px)] * 2 + [1.5, 0.2, 1.0]),
         robust=8.0,
-        positive=1,
+        positive=1 if body.ring_sine <= 0 else 1 + len(RING_EDGES) - 1,
     )
     px, py = float(fit.parameters[0]), float(fit.parameters[1])
     height = float((fit.amplitudes[0] * disc(fit.parameters)).max())
     if height < 5 * np.sqrt(noise.sky_adu2):
         raise NoSolutionError("nothing like the planet's disc stands out there")
     notes = (f"{clipped} saturated pixels left out",) if clipped else ()
+    covariance = fit.covariance[:2, :2] + np.eye(2) * MODEL_FLOOR_PX**2
     return DiscPlace(
-        px, py, fit.covariance[:2, :2], float(body.radius_px * np.exp(fit.parameters[3])),
+        px, py, covariance, float(body.radius_px * np.exp(fit.parameters[3])),
         float(body.radius_px * np.sqrt(fit.covariance[3, 3])), Blur(float(np.exp(fit.parameters[2])), wing),
         px + light_dx, py + light_dy, height / float(np.sqrt(noise.sky_adu2)), fit.chi2, "lit disc", clipped, notes,
     )  # fmt: skip

@@ -8,7 +8,7 @@ the true radius: an inflection point would be biased inward by the blur (0.08-0.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -18,8 +18,12 @@ from imaging.discs.find import find_disc
 from imaging.discs.outline import Outline
 from imaging.discs.profile import ProfileFit, fit_sectors
 from imaging.discs.ring import Circles, Lit, Ring, Template, collect, crossings
+from imaging.discs.surface import evened
 from planner.errors import NoSolutionError
 
+# By what part of itself the correction for the law of scattering may be wrong (assumed: between Lommel-Seeliger's law
+# and Lambert's the correction differs by a third).
+LAW_SHARE = 0.3
 # Pixels used until the fit has settled, and in the last turn: more cost time and seeing hides what they would add.
 _SETTLING_PIXELS, _FINAL_PIXELS = 40_000, 160_000
 
@@ -70,6 +74,7 @@ def fit_limb(
     saturation: float | None = None,
     lit_angle_deg: float | None = None,
     lit_half_deg: float = 180.0,
+    phase_angle_deg: float | None = None,
     avoid: Circles = (),
 ) -> LimbFit:
     """Fit the limb of the one bright disc in a frame.
@@ -77,7 +82,8 @@ def fit_limb(
     data: (rows, columns), any unit. `radius_px`: expected true radius; with `radius_sigma_px` it is a prior
     (give both for the Moon and for discs cut by the frame: the radius is held when the arc is short).
     `guess_px`: rough centre. `outline`: refraction. `lit_angle_deg`, `lit_half_deg`: polar angle (+x toward +y)
-    of the middle of the lit limb and how far to each side it may be used; give them for the Moon. `avoid`:
+    of the middle of the lit limb and how far to each side it may be used; give them for the Moon, and its phase
+    angle, by which the surface near the limb is evened. `avoid`:
     circles (x, y, radius) to leave out. Raises NoSolutionError with a reason when the data do not defend a
     number. The centre is unbiased to 0.01 px on clean frames; the error stated includes seeing as far as the
     limb itself shows it.
@@ -104,6 +110,7 @@ def fit_limb(
 
     shifts: np.ndarray | None = None
     edge: EdgeFit | None = None
+    fit: ProfileFit | None = None
     width = float(np.clip(8 * blur_px, 7.0, max(0.3 * radius, 7.0)))
     ring = gather(width + 2, _SETTLING_PIXELS)
     final = False
@@ -111,7 +118,14 @@ def fit_limb(
         inner_blur = None
         if lit.angle_deg is not None:
             inner_blur = edge.blur if edge is not None else Blur(blur_px)
-        fit = fit_sectors(ring, x, y, radius, width, outline, lit, shifts, inner_blur)
+        even = ring
+        if lit_angle_deg is not None and phase_angle_deg is not None and fit is not None and edge is not None:
+            level = float(np.median(fit.sectors.level[fit.sectors.good]))
+            even = evened(
+                ring, x, y, radius + edge.shift_px, outline, lit_angle_deg, phase_angle_deg, edge.blur, level
+            )
+        before = shifts
+        fit = fit_sectors(even, x, y, radius, width, outline, lit, shifts, inner_blur)
         if prior is not None or final or turn == 0:
             edge = _true_edge(fit.template, radius, blur_px, 6.0 if lit.angle_deg is None else 12.0)
         held = prior
@@ -120,6 +134,11 @@ def fit_limb(
             held = (prior[0] - edge.shift_px, prior[1])
         circle = fit_circle(fit.sectors, x, y, radius, held, outline, correlated=True)
         dx, dy, dr = circle.x - x, circle.y - y, circle.radius - radius
+        if final and even is not ring:
+            rough = fit_sectors(ring, x, y, radius, width, outline, lit, before, inner_blur)
+            plain = fit_circle(rough.sectors, x, y, radius, held, outline)
+            moved = np.array([circle.x - plain.x, circle.y - plain.y, circle.radius - plain.radius])
+            circle = replace(circle, covariance=circle.covariance + LAW_SHARE**2 * np.outer(moved, moved))
         angle = fit.sectors.angle
         own = fit.sectors.shift - (dx * np.cos(angle) + dy * np.sin(angle) + dr)
         shifts = np.where(circle.used, np.clip(own, -width / 3, width / 3), 0.0)
@@ -130,6 +149,7 @@ def fit_limb(
             final = True
             ring = gather(width + 2, _FINAL_PIXELS)
     assert edge is not None
+    assert fit is not None
     return _defended(circle, fit, edge, ring, outline, prior)
 
 

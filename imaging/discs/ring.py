@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from imaging.discs.outline import Outline
+from imaging.discs.stamp import NEARLY_FULL
 from planner.errors import NoSolutionError
 
 Circles = tuple[tuple[float, float, float], ...]
@@ -124,7 +125,7 @@ def collect(
     for ax, ay, ar in avoid:
         keep &= (column - ax) ** 2 + (row - ay) ** 2 > ar**2
     row, column, value = row[keep], column[keep], value[keep].astype(float)
-    clipped = value >= saturation if saturation is not None else np.zeros(value.size, bool)
+    clipped = value >= NEARLY_FULL * saturation if saturation is not None else np.zeros(value.size, bool)
     if value.size < 200:
         raise NoSolutionError("the disc's limb lies outside the frame")
     return Ring(column.astype(float), row.astype(float), value, clipped)

@@ -10,6 +10,9 @@ import numpy as np
 from imaging.discs.edge import Blur
 from planner.errors import NoSolutionError
 
+# Read noise leaves half of the saturated pixels below the stated level: this much of it counts as saturated.
+NEARLY_FULL = 0.985
+
 
 @dataclass(frozen=True)
 class DiscPlace:
@@ -65,7 +68,7 @@ class Stamp:
             raise NoSolutionError("the place looked at is at or beyond the frame's edge")
         data = np.asarray(frame[y_low:y_high, x_low:x_high], float)
         usable = np.isfinite(data)
-        clipped = (data >= saturation) if saturation is not None else np.zeros(data.shape, bool)
+        clipped = (data >= NEARLY_FULL * saturation) if saturation is not None else np.zeros(data.shape, bool)
         return cls(np.where(usable, data, 0.0), x_low, y_low, usable & ~clipped, clipped)
 
     def grid(self, finer: int = 1, margin: int = 0) -> tuple[np.ndarray, np.ndarray]:

@@ -108,6 +108,7 @@ class OnDisc:
                     frame.data, radius, promised, float(disc.phase_angle_deg[0])
                 )
                 options["lit_half_deg"] = LIT_HALF_DEG
+                options["phase_angle_deg"] = float(disc.phase_angle_deg[0])
         return fit_limb(frame.data, radius, **options)
 
     def _found(

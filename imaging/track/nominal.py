@@ -13,6 +13,7 @@ from imaging.track.path import PredictedPath
 from planner.events.family import Geometry
 from planner.sequence.frametimes import PlannedFrames, planned_frames
 from planner.sequence.models import Plan, Rig
+from planner.sky.discs import ring_sine
 
 NEAR_ARCSEC = 15.0  # an ordinary clock, site and camera leave the target this near to where it is expected
 POINT_PX = 0.05  # radius of a star as the disc rooms take it: far below any blur
@@ -129,4 +130,5 @@ def body_of(geometry: Geometry, radius_px: float, pixel_angle: Callable[[float],
         lit_angle_deg=pixel_angle(float(disc.bright_limb_pa_deg[0])),
         flattening=float(disc.flattening[0]),
         pole_angle_deg=pixel_angle(float(disc.pole_pa_deg[0])),
+        ring_sine=float(ring_sine(disc)[0]) if geometry.target == "saturn" else 0.0,
     )

@@ -43,18 +43,36 @@ def moon(phase_angle_deg, lit_pa_deg, seed=0, electrons_s=4e8, shift=(0.31, -0.4
 
 @pytest.mark.parametrize("phase", [10.0, 60.0, 96.0, 140.0])
 @pytest.mark.parametrize("lit_pa", [75.0, 260.0])
-def test_lit_limb_gives_the_centre_to_a_tenth_of_a_pixel(phase, lit_pa):
+def test_lit_limb_gives_the_centre_to_a_fiftieth_of_a_pixel_and_the_radius_too(phase, lit_pa):
     image, x, y, lit_angle, radius = moon(phase, lit_pa)
+    fit = fit_limb(image, radius, 0.1, lit_angle_deg=lit_angle, lit_half_deg=80.0, phase_angle_deg=phase)
+    away = np.hypot(fit.x_px - x, fit.y_px - y)
+    # a mean profile for all of the limb would lie 0.09 px to the dark side
+    assert away < 0.02
+    assert away < 3 * np.hypot(*fit.sigma_px)
+    assert fit.radius_px == pytest.approx(radius, abs=0.03)
+
+
+@pytest.mark.parametrize("phase", [30.0, 96.0])
+def test_another_law_of_scattering_is_covered_by_the_stated_error(phase, monkeypatch):
+    monkeypatch.setattr("imaging.frames.render_light.disc_law", lambda body: "lambert")
+    image, x, y, lit_angle, radius = moon(phase, 260.0)
+    fit = fit_limb(image, radius, 0.1, lit_angle_deg=lit_angle, lit_half_deg=80.0, phase_angle_deg=phase)
+    away = np.array([fit.x_px - x, fit.y_px - y])
+    assert np.hypot(*away) < 0.04
+    assert away @ np.linalg.inv(fit.covariance[:2, :2]) @ away < 9
+
+
+def test_lit_limb_without_a_phase_is_good_to_a_tenth_of_a_pixel():
+    image, x, y, lit_angle, radius = moon(60.0, 75.0)
     fit = fit_limb(image, radius, 0.1, lit_angle_deg=lit_angle, lit_half_deg=80.0)
-    # 0.1 px is 0.3"; the method's bias at 3"/px was 0.07-0.56" with a plain radius held
-    assert np.hypot(fit.x_px - x, fit.y_px - y) < (0.12 if phase < 120 else 0.2)
-    assert fit.radius_px == pytest.approx(radius, abs=0.3)
+    assert np.hypot(fit.x_px - x, fit.y_px - y) < 0.12
 
 
 def test_maria_do_not_pull_the_centre():
     image, x, y, lit_angle, radius = moon(60.0, 260.0, texture=0.15)
-    fit = fit_limb(image, radius, 0.1, lit_angle_deg=lit_angle, lit_half_deg=80.0)
-    assert np.hypot(fit.x_px - x, fit.y_px - y) < 0.15
+    fit = fit_limb(image, radius, 0.1, lit_angle_deg=lit_angle, lit_half_deg=80.0, phase_angle_deg=60.0)
+    assert np.hypot(fit.x_px - x, fit.y_px - y) < 0.06
 
 
 def test_terminator_is_not_taken_for_the_limb_when_the_light_is_not_told():
