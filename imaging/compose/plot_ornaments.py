@@ -124,7 +124,8 @@ def draw_inset(
     for line, points, colour, dots, style, marker in paths:
         inset.plot(*line, color=colour, linewidth=1.2, linestyle=style)
         inset.plot(*points, color=dots, marker=marker, markersize=4.0, linestyle="none")
-        nearest = line[:, np.hypot(*(line - middle[:, None])).argmin()]
+        near = line[:, np.hypot(*(line - middle[:, None])).argmin()]
+        nearest = float(near[0]), float(near[1])
         inset.add_patch(
             Circle(nearest, data.target_radius_arcsec, fill=False, edgecolor=colour, linewidth=0.8)
         )
@@ -137,7 +138,13 @@ def draw_inset(
                    textcoords="offset points", ha="left", va="top", fontsize=7.5, color=palette.quiet)  # fmt: skip
     axes.add_patch(
         Rectangle(
-            middle - half, 2 * half, 2 * half, fill=False, edgecolor=palette.quiet, linewidth=0.7, zorder=4.5
+            (float(middle[0] - half), float(middle[1] - half)),
+            2 * half,
+            2 * half,
+            fill=False,
+            edgecolor=palette.quiet,
+            linewidth=0.7,
+            zorder=4.5,
         )
     )
     box = axes.get_window_extent()
