@@ -22,6 +22,7 @@ if TYPE_CHECKING:
 
 MAX_PIXELS = 200_000_000  # a luminance of 0.8 GB; above it a frame is refused before it is read
 MIN_SIDE_PX = 8
+MOST_SATURATED = 0.9
 
 
 @dataclass(frozen=True)
@@ -95,7 +96,7 @@ def read_frames(
     module = _dialect(path)
     try:
         for frame in module.frames(path, options, start, stop):
-            reason = _unusable(frame.data)
+            reason = _unusable(frame.data, frame.saturation_adu)
             if reason is not None:
                 raise FrameSetAside(path, reason)
             if calibration is not None:
@@ -164,7 +165,7 @@ def _dialect(path: Path):  # type: ignore[no-untyped-def]
     raise FrameSetAside(path, f"is none of the formats read here ({', '.join(DIALECTS)})")
 
 
-def _unusable(data: np.ndarray) -> str | None:
+def _unusable(data: np.ndarray, saturation_adu: float | None) -> str | None:
     """Return why an array cannot be measured, or None."""
     sample = data[:: max(1, data.shape[0] // 512), :: max(1, data.shape[1] // 512)]
     low, high = np.nanmin(data, initial=np.inf), np.nanmax(data, initial=-np.inf)
@@ -174,6 +175,8 @@ def _unusable(data: np.ndarray) -> str | None:
         return "is all black (every pixel is 0)" if low == 0 else f"is constant (every pixel is {low:g})"
     if np.isfinite(sample).mean() < 0.25:
         return f"is mostly blank ({100 * (1 - np.isfinite(sample).mean()):.0f} % of the pixels)"
+    if saturation_adu is not None and (full := float((sample >= saturation_adu).mean())) > MOST_SATURATED:
+        return f"is saturated ({100 * full:.0f} % of the pixels are at {saturation_adu:g})"
     return None
 
 
