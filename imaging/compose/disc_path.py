@@ -33,8 +33,16 @@ GROUND_TURNS = 24
 DRIFT_ARCSEC_S = 8.0 / 3600.0
 
 
-def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
-    """Return the composite registered on the Sun or Moon; raises InputError when no frame is left."""
+SAME_INSTANT_S = 60.0
+
+
+def disc_path(
+    material: Material, choices: Choices, light: Light, only_near_tt_s: np.ndarray | None = None
+) -> Picture:
+    """Return the composite registered on the Sun or Moon; raises InputError when no frame is left.
+
+    `only_near_tt_s`: the target is drawn at instants within a minute of these only.
+    """
     body = material.reference
     frames, levels, sharpness, left_out = survey(material, light, body, choices)
     tt_s = np.array([frame.tt_s for frame in frames])
@@ -47,7 +55,10 @@ def disc_path(material: Material, choices: Choices, light: Light) -> Picture:
     margin = max(DISC_MARGIN, float(seen.max()) + 0.04) if seen.size else DISC_MARGIN
     canvas = _disc_canvas(material, choices, frames, semidiameter * margin, anchor, middle)
     choices.require_room(canvas.width_px, canvas.height_px)
-    shown = _instants(material, frames, sharpness, choices, away < margin - 0.01)
+    inside = away < margin - 0.01
+    if only_near_tt_s is not None and only_near_tt_s.size:
+        inside &= np.abs(tt_s[:, None] - only_near_tt_s).min(axis=1) < SAME_INSTANT_S
+    shown = _instants(material, frames, sharpness, choices, inside)
     sun = None
     if body == "sun":
         sun = sun_view(semidiameter, float(disc.pole_pa_deg[0]), *anchor, middle)

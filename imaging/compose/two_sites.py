@@ -7,14 +7,12 @@ from dataclasses import replace
 import numpy as np
 
 from imaging.compose.choices import Choices
-from imaging.compose.disc_path import disc_anchor, disc_path, lay_target, survey
+from imaging.compose.disc_path import SAME_INSTANT_S, disc_anchor, disc_path, lay_target, survey
 from imaging.compose.light import Light
 from imaging.compose.material import Material
 from imaging.compose.picture import Picture
 from imaging.compose.plane import sky_to_plane
 from planner.errors import InputError
-
-SAME_INSTANT_S = 60.0
 
 
 def two_sites(material: Material, other: Material, choices: Choices, light: Light) -> Picture:
@@ -30,13 +28,18 @@ def two_sites(material: Material, other: Material, choices: Choices, light: Ligh
             f"--second-site: found {other.plan.event.family} of {other.plan.event.body}; the first plan has "
             f"{material.plan.event.family} of {material.plan.event.body}"
         )
-    picture = disc_path(material, choices, light)
     body = material.reference
     frames, levels, _, left_out = survey(other, light, body, choices)
     measured = np.array([frame.measured for frame in frames])
     tt_s = np.array([frame.tt_s for frame in frames])
     if not measured.any():
         raise InputError(f"{other.track_path}: the target was measured in no frame of the second site")
+    first_tt_s = np.array([frame.tt_s for frame in material.frames if frame.measured])
+    if np.abs(first_tt_s[:, None] - tt_s[measured]).min(initial=np.inf) >= SAME_INSTANT_S:
+        raise InputError(
+            f"{other.track_path}: no frame of the second site lies within {SAME_INSTANT_S:.0f} s of one of the first's"
+        )
+    picture = disc_path(material, choices, light, tt_s[measured])
     image = picture.image.copy()
     drawn, used, apart = list(picture.drawn), list(picture.used), []
     for item in picture.drawn:
@@ -54,10 +57,7 @@ def two_sites(material: Material, other: Material, choices: Choices, light: Ligh
         drift = _motion(material, item.frame.tt_s, frame.tt_s)
         apart.append(float(np.hypot(*(there - here - drift))))
     if not apart:
-        raise InputError(
-            f"{other.track_path}: no frame of the second site lies within {SAME_INSTANT_S:.0f} s of an instant drawn; "
-            "choose more --instants"
-        )
+        raise InputError(f"{other.track_path}: at no instant do frames of both sites show the target on the disc")
     note = (
         f"the two tracks lie {np.mean(apart):.1f} arcsec apart (mean of {len(apart)} instants): the parallax of "
         f"{material.plan.event.body.capitalize()} against the {body.capitalize()} "

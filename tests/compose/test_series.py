@@ -77,6 +77,7 @@ def test_two_sites_see_mercury_apart_by_its_parallax(transit, far_transit, monke
     far = gather(load_plan(plan), track, frames)
     # these few frames are up to 15 minutes apart; the motion in between is taken off by the prediction
     monkeypatch.setattr("imaging.compose.two_sites.SAME_INSTANT_S", 900.0)
+    monkeypatch.setattr("imaging.compose.disc_path.SAME_INSTANT_S", 900.0)
     picture = compose_picture(material, Choices(instants=5), far)
     said = float(picture.notes[-1].split(" arcsec apart")[0].rsplit(" ", 1)[1])
     expected = []
