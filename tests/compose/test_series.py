@@ -7,11 +7,14 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+import tifffile
+from astropy.io import fits
+from PIL import Image
 
 from imaging.compose.arc import Landscape
 from imaging.compose.canvas import Canvas
 from imaging.compose.choices import Choices
-from imaging.compose.composing import compose_picture
+from imaging.compose.composing import Outputs, compose_picture, write_picture
 from imaging.compose.exposures import by_exposure, merged
 from imaging.compose.ground import falloff, measured_falloff, sky_surface
 from imaging.compose.light import Level, Light
@@ -120,7 +123,7 @@ class InMemory(Light):
         return self.frames[registered.path.name]  # type: ignore[attr-defined]
 
 
-def test_a_series_of_discs_keeps_their_size_and_order_and_says_what_is_enlarged(loop, monkeypatch):
+def test_a_series_of_discs_keeps_their_size_and_order_and_says_what_is_enlarged(loop, tmp_path):
     """Discs of 8, 6 and 4 px radius, enlarged three times: measured back from the sheet within 2 %."""
     material = material_of(loop)
     base = material.frames[0].tt_s
@@ -143,6 +146,17 @@ def test_a_series_of_discs_keeps_their_size_and_order_and_says_what_is_enlarged(
     assert picture.enlargement == 3
     assert "drawn 3 times their true size" in caption(material, picture)
     assert [item.x_px for item in picture.drawn] == sorted(item.x_px for item in picture.drawn)
+    # what is exaggerated is told in every file that leaves the house
+    _, statement = write_picture(
+        material, picture, Outputs(tmp_path, ("fits", "tiff", "png", "jpg"), page=False)
+    )
+    assert statement["enlargement"] == 3
+    assert "3 times their true size" in statement["exaggeration"]
+    assert fits.getheader(tmp_path / "composite.fits")["ENLARGE"] == 3
+    with Image.open(tmp_path / "composite.png") as png, Image.open(tmp_path / "composite.jpg") as jpg:
+        assert "drawn 3 times their true size" in png.text["Description"]
+        assert "drawn 3 times their true size" in jpg.getexif()[0x010E]
+    assert "drawn 3 times" in tifffile.TiffFile(tmp_path / "composite.tiff").pages[0].description
 
 
 @pytest.mark.parametrize("pattern", ["RGGB", "BGGR", "GRBG", "GBRG"])
@@ -223,8 +237,6 @@ def test_a_place_on_the_plane_comes_back_from_a_disc_frame():
 
 def test_the_arc_stands_at_its_altitudes_over_the_landscape(loop, tmp_path):
     """Each place measured back from the picture with the pinhole formula, and the ground is left as it was."""
-    from PIL import Image
-
     shown = np.full((900, 1600), 40, np.uint8)
     shown[700:] = 15
     Image.fromarray(shown).save(tmp_path / "hill.png")
@@ -253,8 +265,6 @@ def test_the_arc_stands_at_its_altitudes_over_the_landscape(loop, tmp_path):
 
 
 def test_a_landscape_that_looks_elsewhere_says_where_the_target_is(loop, tmp_path):
-    from PIL import Image
-
     Image.fromarray(np.zeros((90, 160), np.uint8)).save(tmp_path / "hill.png")
     with pytest.raises(InputError, match="stands at azimuth"):
         compose_picture(
