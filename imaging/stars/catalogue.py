@@ -55,20 +55,26 @@ def stars_near(center: np.ndarray, radius_rad: float, tt_s: float, stars_per_sr:
     if radius_rad >= _WIDE_RAD:
         return whole_sky(tt_s).take(rows_near(center, radius_rad, tt_s, stars_per_sr))
     center = np.asarray(center, float)
-    for about, reach, when, density, sky in _RECENT:  # frames of a sequence ask for nearly the same
+    here = list_in_force()
+    for held, about, reach, when, density, sky in _RECENT:  # frames of a sequence ask for nearly the same
         away = np.arccos(np.clip(about @ center, -1, 1))
-        if _alike(density, stars_per_sr) and abs(when - tt_s) < _SAME_S and away + radius_rad <= reach:
+        if (
+            held == here
+            and _alike(density, stars_per_sr)
+            and abs(when - tt_s) < _SAME_S
+            and away + radius_rad <= reach
+        ):
             return sky.take(np.flatnonzero(sky.vectors @ center > np.cos(radius_rad)))
     wide = radius_rad * _SPARE
     sky = _in_field(center, wide, tt_s, stars_per_sr)
-    _RECENT.insert(0, (center, wide, tt_s, stars_per_sr, sky))
+    _RECENT.insert(0, (here, center, wide, tt_s, stars_per_sr, sky))
     del _RECENT[4:]
     return sky.take(np.flatnonzero(sky.vectors @ center > np.cos(radius_rad)))
 
 
 _SAME_S = 6 * 3600.0  # in which no star moves by more than 0.01 arcsec
 _SPARE = 1.12
-_RECENT: list[tuple[np.ndarray, float, float, float | None, Sky]] = []
+_RECENT: list[tuple[int, np.ndarray, float, float, float | None, Sky]] = []
 
 
 def _alike(one: float | None, other: float | None) -> bool:
