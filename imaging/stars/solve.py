@@ -67,7 +67,8 @@ def solve_frame(
     `blind`: search the whole sky when the hints fail; by default only without `near` and `previous`. `air`: lifts the
     stars of a search that is not blind as it does in the frame. `tick`: progress of the index that the first blind
     solution builds.
-    Raises NoSolutionError when no pointing has a false-alarm probability below 1e-7; the message says what was tried.
+    Raises NoSolutionError when no pointing has a false-alarm probability below 1e-7 (1e-6 for a calibrated rig); the
+    message says what was tried and what would help.
     """
     found = detections if detections is not None else detect_frame(frame)
     tt_s = frame.time.middle_tt_s if frame.time is not None else DEFAULT_EPOCH_TT_S
@@ -209,7 +210,10 @@ def solve_detections(
             )
             if attempt.match is not None:
                 return _solution(attempt, held, field, shape, tt_s, row_zero, exclude, "blind")
-        tried.append(f"the whole sky, best chance 1e{attempt.best_log10:.0f}")
+        tried.append(
+            f"the whole sky, for fields of 0.2 to 90 degrees of a lens that is no fisheye, best chance "
+            f"1e{attempt.best_log10:.0f}"
+        )
     raise NoSolutionError(
         f"{len(found)} stars found, no pointing defended; tried {'; '.join(tried) or 'nothing, for want of a hint'}; "
         f"{_would_help(len(found), hint)}"
@@ -220,10 +224,10 @@ def _would_help(stars: int, hint: Hint) -> str:
     if stars < 12:
         return "more stars would help: a longer exposure, better focus, less cloud"
     if hint.near is None or hint.scale_arcsec_px is None:
-        return "a rough centre and scale would help (--near, --scale or --rig)"
-    return (
-        "a lens learned from better frames of the rig would help (--learn), or a field with more bright stars"
-    )
+        return "a rough centre and scale would help (--near, --scale or --rig), for a fisheye both are needed"
+    if hint.lens is None:
+        return "a lens learned from better frames of the rig would help (--learn), or a field with more bright stars"
+    return "the roll, or a frame solved shortly before, would help, or a field with more bright stars"
 
 
 def _seen_stars(tt_s: float, air: Air | None):  # type: ignore[no-untyped-def]

@@ -59,15 +59,17 @@ def solve_files(
     tick: Callable[[int, int], None] | None = None,
     index_tick: Callable[[int, int], None] | None = None,
     calibration: Calibration | None = None,
+    file_time: bool = False,
 ) -> Iterator[Solved]:
     """Yield what became of each file, in order; a frame that cannot be used does not stop the run.
 
     A frame is tried from the one solved before it, then with the hint, then blind. `index_tick` reports the
-    building of the blind index. `calibration`: what is taken off each frame first.
+    building of the blind index. `calibration`: what is taken off each frame first. `file_time`: fall back on
+    the modification time of a file that tells no time.
     """
     previous: PlateSolution | None = None
     for number, path in enumerate(paths):
-        solved = _solve_one(path, hint, previous, zone, blind, index_tick, calibration)
+        solved = _solve_one(path, hint, previous, zone, blind, index_tick, calibration, file_time)
         previous = solved.solution or previous
         if tick is not None:
             tick(number + 1, len(paths))
@@ -82,10 +84,11 @@ def _solve_one(
     blind: bool,
     index_tick: Callable[[int, int], None] | None,
     calibration: Calibration | None,
+    file_time: bool,
 ) -> Solved:
     frame, found = None, None
     try:
-        frame = read_frame(path, zone, calibration=calibration)
+        frame = read_frame(path, zone, calibration=calibration, file_time=file_time)
         found = detect_frame(frame)
         if hint.scale_arcsec_px is None and frame.scale_hint_arcsec_px is not None:
             hint = replace(hint, scale_arcsec_px=frame.scale_hint_arcsec_px)

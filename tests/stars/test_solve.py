@@ -270,6 +270,13 @@ def test_a_fisheye_is_solved_and_written_as_standard_wcs(drawn, diagonal_deg):
     assert solution.rms_px < 0.3
 
 
+@pytest.mark.slow
+def test_a_fisheye_without_a_hint_is_told_what_was_tried_and_what_would_help(drawn, blind_index):
+    found, _, _ = fisheye(drawn, 150, 1)
+    with pytest.raises(NoSolutionError, match=r"no fisheye, best chance .* for a fisheye both are needed"):
+        solve_detections(found, drawn.TT_S, "top", Hint(), blind=True)
+
+
 def test_a_sparse_field_solves_with_a_lens_learned_before(drawn, tmp_path):
     from imaging.stars.lens import learn_lens, read_lens, write_lens
 
