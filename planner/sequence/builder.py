@@ -54,36 +54,43 @@ def build_plans(brief: Brief, tick: Tick | None = None, taken: Taken | None = No
     settings = settings_of(brief)
     clock_sigma_s = max(setting.rig.clock.sigma_s for setting in settings)
     chosen = None
+    prepared: list[campaigns.Prepared] = []
     if settings[0].family.campaign:
         taken = taken or Taken(())
         chosen = campaigns.choose_campaign(settings[0], taken.passages, taken.after_tt_s)
+        prepared = _prepared(settings, chosen)
+        visit_s = campaigns.longest_visit_s(prepared)
+        if visit_s > campaigns.LONG_VISIT_S:
+            chosen = campaigns.choose_campaign(settings[0], taken.passages, taken.after_tt_s, visit_s)
+            prepared = _prepared(settings, chosen)
         if brief.wish.camera_angle == "best":
             angle = campaigns.best_camera_angle_deg(settings[0], chosen)
             settings = [replace(each, rig=campaigns.rig_at_angle(each.rig, angle)) for each in settings]
+            prepared = _prepared(settings, chosen)
     elif settings[0].wish.mosaic is not None:
         raise InputError(
             f"wish.mosaic: found in a brief for {settings[0].family.name}; allowed in campaigns of many nights "
             "(retrograde-track, apparition-arc): within hours the camera follows what moves"
         )
-    prepared = [
-        campaigns.prepare(setting, chosen if number == 0 else replace(chosen, done=()))
-        for number, setting in enumerate(settings)
-        if chosen is not None
-    ]
     plans = []
     for number, setting in enumerate(settings):
         pauses: list[Pause] = []
         if chosen is not None:
-            together = [
-                each.busy_s for each in prepared if each.setting.rig.mount.name == setting.rig.mount.name
-            ]
-            slowest_s = np.max(together, axis=0)
+            slowest_s = campaigns.slowest_s(prepared, setting.rig.mount.name)
             passages = campaigns.campaign_passages(prepared[number], slowest_s, tick if number == 0 else None)
         else:
             passages, pauses = event_passages(setting, clock_sigma_s)
         passages = with_guides(setting, with_slack(passages, setting.rig.sensor.readout_s))
         plans.append(_plan(setting, passages, pauses, settings))
     return judge_together(plans)
+
+
+def _prepared(settings: list[Setting], chosen: campaigns.Campaign) -> list[campaigns.Prepared]:
+    """Return what each camera does; what was taken already is kept in the plan of the first."""
+    return [
+        campaigns.prepare(setting, chosen if number == 0 else replace(chosen, done=()))
+        for number, setting in enumerate(settings)
+    ]
 
 
 def _plan(setting: Setting, passages: list[Passage], pauses: list[Pause], settings: list[Setting]) -> Plan:

@@ -27,6 +27,9 @@ from planner.sequence.passages import next_whole
 from planner.sequence.setting import Setting
 from planner.sequence.visit import Exposures, Stops, exposures_at
 
+# A visit longer than this is centred on its best moment, and its night chosen for all of it.
+LONG_VISIT_S = 600.0
+
 
 @dataclass(frozen=True)
 class Campaign:
@@ -39,13 +42,19 @@ class Campaign:
 
 
 def choose_campaign(
-    setting: Setting, done: tuple[Passage, ...] = (), after_tt_s: float | None = None
+    setting: Setting,
+    done: tuple[Passage, ...] = (),
+    after_tt_s: float | None = None,
+    visit_s: float = 0.0,
 ) -> Campaign:
-    """Return the visits of a campaign; what was taken is kept and the rest of the path is spread anew."""
+    """Return the visits of a campaign; what was taken is kept and the rest of the path is spread anew.
+
+    `visit_s`: how long the longest visit lasts, where that is known.
+    """
     from planner.sky.timescale import tt_s_from_datetime
 
     if not done and after_tt_s is None:
-        nights = usable_nights(setting)
+        nights = usable_nights(setting, visit_s=visit_s)
         chosen = spread_evenly(
             nights.path_arcsec, wanted_visits(setting, nights), moonlight_mag=nights.moonlight_mag
         )
@@ -53,7 +62,7 @@ def choose_campaign(
     every = usable_nights(setting)
     taken = [float(tt_s_from_datetime(passage.shots[0].start_utc)) for passage in done]
     after = max([*taken, after_tt_s if after_tt_s is not None else -np.inf])
-    nights = usable_nights(setting, after)
+    nights = usable_nights(setting, after, visit_s)
     taken_path = float(np.interp(max(taken), every.tt_s, every.path_arcsec)) if taken else None
     left = max(1, wanted_visits(setting, every) - len({passage.visit for passage in done}))
     chosen = spread_evenly(nights.path_arcsec, left, taken_path, nights.moonlight_mag)
@@ -157,28 +166,28 @@ def campaign_passages(
     return passages
 
 
-def _lead_s(setting: Setting, visits: Nights, stops: Stops, busy_s: np.ndarray) -> np.ndarray:
-    """Return how long before its best moment each visit begins, so that a mosaic does not run into the day.
+def slowest_s(prepared: list[Prepared], mount: str) -> np.ndarray:
+    """Return how long the slowest camera on a mount needs at each pointing."""
+    return np.max([each.busy_s for each in prepared if each.setting.rig.mount.name == mount], axis=0)
 
-    The moment is the middle of the mosaic; where that ends or begins unfit, it is the end, or else the beginning.
+
+def longest_visit_s(prepared: list[Prepared]) -> float:
+    """Return how long the longest visit of any camera lasts, those on one mount waiting for each other."""
+    lengths = []
+    for each in prepared:
+        busy_s = slowest_s(prepared, each.setting.rig.mount.name)
+        lengths.append(np.bincount(each.stops.visit, busy_s + each.stops.slew_s).max())
+    return float(max(lengths))
+
+
+def _lead_s(setting: Setting, visits: Nights, stops: Stops, busy_s: np.ndarray) -> np.ndarray:
+    """Return how long before its best moment each visit begins: a long one has it in its middle.
+
     A moment that is fixed (sidereal time, solar depression) is always the beginning.
     """
-    lead_s = np.zeros(len(visits))
-    if setting.wish.mosaic is None or visit_rule(setting)[0] != "highest":
-        return lead_s
     total_s = np.bincount(stops.visit, busy_s + stops.slew_s, len(visits))
-    open_still = np.ones(len(visits), bool)
-    for part in (0.5, 1.0, 0.0):
-        begin_s = visits.tt_s - part * total_s
-        fit = open_still & _fit(setting, begin_s) & _fit(setting, begin_s + total_s)
-        lead_s[fit] = part * total_s[fit]
-        open_still &= ~fit
-    return lead_s
-
-
-def _fit(setting: Setting, tt_s: np.ndarray) -> np.ndarray:
-    geometry = setting.geometry(tt_s)
-    return setting.reachable(geometry) & (geometry.sun_altitude_deg < setting.wish.darkness_deg)
+    centred = (visit_rule(setting)[0] == "highest") & (total_s > LONG_VISIT_S)
+    return np.where(centred, total_s / 2, 0.0)
 
 
 def _turned(rig: Rig, hour_angle_deg: np.ndarray) -> np.ndarray:

@@ -10,7 +10,7 @@ import numpy as np
 from planner.errors import DocumentError, InputError
 from planner.sequence import radiometry, strictyaml
 from planner.sequence.documents import load_rig, load_site
-from planner.sequence.models import Brief, Plan, Rig
+from planner.sequence.models import Brief, Plan, Rig, Wish
 from planner.sequence.wording import duration_text, exposure_range_text
 
 
@@ -49,7 +49,9 @@ def variants(
         data = strictyaml.read(path).data
         if isinstance(data, dict) and "sensor" in data:
             rig = load_rig(path)
-            found[_fresh(rig.name, found)] = alone.model_copy(update={"rig": rig})
+            found[_fresh(rig.name, found)] = alone.model_copy(
+                update={"rig": rig, "wish": _wish_of(alone, rig)}
+            )
         elif isinstance(data, dict) and "latitude_deg" in data:
             site = load_site(path)
             found[_fresh(site.name, found)] = alone.model_copy(update={"site": site})
@@ -63,6 +65,18 @@ def variants(
         wish = alone.wish.model_copy(update={"exposure_s": exposure_s})
         found[_fresh(f"{exposure_s:g} s", found)] = alone.model_copy(update={"wish": wish})
     return found
+
+
+def _wish_of(brief: Brief, rig: Rig) -> Wish:
+    """Return the brief's wish as far as another rig has the filters for it."""
+    known = {each.name for each in rig.filters}
+    wish = brief.wish
+    return wish.model_copy(
+        update={
+            "filters": [name for name in wish.filters if name in known],
+            "filter": wish.filter if wish.filter in known else None,
+        }
+    )
 
 
 def _fresh(name: str, taken: dict[str, Brief]) -> str:

@@ -5,6 +5,7 @@ Units are in the keys; every value but the essential has a default, and a plan l
 
 from __future__ import annotations
 
+import re
 from typing import Annotated, Literal
 
 from pydantic import AfterValidator, Field
@@ -20,6 +21,12 @@ def _known_zone(name: str) -> str:
     except (ZoneInfoNotFoundError, ValueError, OSError):
         raise ValueError("an IANA time zone is needed, such as Europe/Berlin or UTC") from None
     return name
+
+
+def _offset_or_zone(name: str) -> str:
+    if re.fullmatch(r"[+-]\d{1,2}(:?\d{2})?|Z|UTC", name.strip()):
+        return name.strip()
+    return _known_zone(name)
 
 
 class Site(Model):
@@ -174,6 +181,9 @@ class Clock(Model):
 
     source: str = "computer"
     sigma_s: float = Field(default=0.5, gt=0)
+    zone: Annotated[str, AfterValidator(_offset_or_zone)] | None = Field(
+        default=None, description="of stamps that name none: an offset such as +02:00, UTC, or an IANA name"
+    )
 
 
 class Rig(Model):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, fields
+from math import ceil
 
 import numpy as np
 
@@ -50,10 +51,11 @@ class Nights:
         return Nights(**arrays, disc=rows_of_disc(self.disc, rows))
 
 
-def usable_nights(setting: Setting, after_tt_s: float | None = None) -> Nights:
+def usable_nights(setting: Setting, after_tt_s: float | None = None, visit_s: float = 0.0) -> Nights:
     """Return every night of the event that the wish allows, each at its best time; raises InputError when none is.
 
-    Best is highest, or the one moment of the fixed sidereal time or solar depression that the wish names.
+    Best is highest, or the one moment of the fixed sidereal time or solar depression that the wish names. A visit that
+    lasts `visit_s` about its highest moment must be dark and high from its beginning to its end.
     """
     from planner.sky.discs import sky_disc
     from planner.sky.photometry import airmass
@@ -76,13 +78,17 @@ def usable_nights(setting: Setting, after_tt_s: float | None = None) -> Nights:
         dark = np.ones(len(tt_s), bool)
     away = moon_deg > wish.moon_distance_deg
     later = tt_s > (after_tt_s if after_tt_s is not None else -np.inf)
-    usable = high & dark & away & later
+    lasting = np.ones(len(tt_s), bool)
+    if when == "highest":
+        lasting = _lasting(high & dark, ceil(visit_s / 2 / STEP_S))
+    usable = high & dark & away & later & lasting
     if not usable.any():
         counts = {
             "high enough": high,
             "dark enough": dark,
             "far enough from the Moon": away,
             "still to come": later,
+            f"followed by the {visit_s / 60:.0f} minutes that a visit takes": lasting,
         }
         failing = min(counts, key=lambda name: int((high & counts[name]).sum()))
         raise InputError(
@@ -108,6 +114,12 @@ def usable_nights(setting: Setting, after_tt_s: float | None = None) -> Nights:
         path,
         target,
     ).rows(best)
+
+
+def _lasting(fit: np.ndarray, steps: int) -> np.ndarray:
+    """Return where a condition holds so many steps before and after as well."""
+    padded = np.concatenate([np.zeros(steps, bool), fit, np.zeros(steps, bool)])
+    return padded[: len(fit)] & fit & padded[2 * steps :]
 
 
 def _apart_deg(a: SkyDisc, b: SkyDisc) -> np.ndarray:

@@ -75,6 +75,27 @@ def test_a_visit_stays_in_the_dark(plan):
     }
 
 
+def test_a_visit_of_hours_is_dark_from_its_first_frame_to_its_last():
+    """Four frames of a minute through two filters on eight panels: nights and hours are chosen for all of it."""
+    from planner.sequence.capacity import end_utc
+    from planner.sky import places
+    from planner.sky.timescale import tt_s_from_datetime
+
+    brief = changed(
+        mosaic_brief(exposure_s=60.0, frames_per_visit=4, filters=["V", "R"], trail_px=9.0),
+        rig={"filters": [{"name": "V"}, {"name": "R"}]},
+    )
+    plan = build_plan(brief)
+    observer = documents.observer_of(plan.site)
+    for visit in plan.visits():
+        moments = [visit[0].shots[0].start_utc, end_utc(visit[-1])]
+        assert (moments[1] - moments[0]).total_seconds() > 3600
+        tt_s = np.asarray(tt_s_from_datetime(moments))
+        sun = places.direction("sun", observer, tt_s)
+        assert (places.altaz(sun.vector_km, observer, tt_s, refracted=False)[0] < -11.5).all()
+    assert "twilight" not in {finding.rule for finding in plan.findings}
+
+
 def test_the_panels_of_a_visit_are_exposed_alike(plan):
     for visit in plan.visits():
         assert (
