@@ -23,7 +23,6 @@ LEAST_FRAMES = 6
 SITE_PRIOR_KM = 500.0
 FARTHEST_KM = 3000.0
 AT_THE_SITE = ("plain", "zone", "date", "mirrored")  # readings that leave the site as the plan has it
-EARTH_KM_DEG = 111.19  # a degree of latitude, mean
 
 
 def displaced_site(reading: Reading, promise: Promise, question: Question) -> tuple[Finding, Reading] | None:
@@ -89,11 +88,19 @@ def _path_at(promise: Promise, north_km: float, east_km: float) -> PredictedPath
     from planner.sequence.documents import observer_of
 
     observer = observer_of(promise.plan.site)
-    latitude = float(np.clip(observer.latitude_deg + north_km / EARTH_KM_DEG, -89.9, 89.9))
-    per_degree = EARTH_KM_DEG * max(np.cos(np.radians(observer.latitude_deg)), 0.01)
-    longitude = (observer.longitude_deg + east_km / per_degree + 180.0) % 360.0 - 180.0
+    north_km_deg, east_km_deg = km_per_degree(observer.latitude_deg)
+    latitude = float(np.clip(observer.latitude_deg + north_km / north_km_deg, -89.9, 89.9))
+    longitude = (observer.longitude_deg + east_km / max(east_km_deg, 1.0) + 180.0) % 360.0 - 180.0
     moved = replace(observer, latitude_deg=latitude, longitude_deg=longitude)
     return PredictedPath.of_plan(promise.plan, moved)
+
+
+def km_per_degree(latitude_deg: float) -> tuple[float, float]:
+    """Return kilometres a degree of latitude and of longitude at sea level (WGS 84, series to 10 m)."""
+    phi = np.radians(latitude_deg)
+    return 111.1329 - 0.5598 * float(np.cos(2 * phi)), 111.4128 * float(np.cos(phi)) - 0.0935 * float(
+        np.cos(3 * phi)
+    )
 
 
 def compass(bearing_deg: float) -> str:

@@ -9,7 +9,7 @@ from pathlib import Path
 
 import numpy as np
 
-from imaging.track.result import CheckResult
+from imaging.track.result import CheckResult, frames
 from planner.outputs import whole_file
 
 INK, PALE, PAPER = "#f2e6d8", "#8d8379", "#14110f"
@@ -122,6 +122,10 @@ def _scale_to(axis, value, sigma, verdict) -> None:  # type: ignore[no-untyped-d
     low, high = min(low, 0.0), max(high, 0.0)
     margin = 0.25 * (high - low)
     axis.set_ylim(low - margin, high + margin)
+    beyond = int(np.sum((value < low - margin) | (value > high + margin)))
+    if beyond:
+        text = f"{frames(beyond)} off the track outside these limits"
+        axis.text(0.01, 0.97, text, transform=axis.transAxes, va="top", color=OFF, fontsize=8)
 
 
 def clock_shift_arcsec(result: CheckResult) -> np.ndarray:

@@ -372,6 +372,14 @@ class _Solver:
         return log_like + log_prior + 0.5 * float(np.linalg.slogdet(covariance)[1])
 
 
+def widening(chi2_dof: float, freedom: int) -> float:
+    """Return by what a covariance grows when residuals are larger than their errors, beyond two sigma of chance.
+
+    Within chance they say nothing: growing by every excess above 1 would overstate errors by 6 % with a dozen frames.
+    """
+    return chi2_dof if chi2_dof > 1.0 + 2.0 * np.sqrt(2.0 / freedom) else 1.0
+
+
 def along_across(
     residual: np.ndarray, covariance: np.ndarray, velocity: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:

@@ -16,7 +16,7 @@ from imaging.track.figures import (
     column,
     disc_radius_arcsec,
 )
-from imaging.track.result import CheckResult
+from imaging.track.result import CheckResult, frames
 
 _TT_TO_UNIX_MS = 1000.0
 
@@ -196,9 +196,38 @@ def _residuals(result: CheckResult, source):  # type: ignore[no-untyped-def]
         )
         plot.add_tools(HoverTool(renderers=[points], tooltips=_TIPS))
         plot.yaxis.axis_label = f"O − C {part} (arcsec)"
+        plot.xaxis.ticker.desired_num_ticks = 4
+        plot.xaxis.formatter = _dates()
+        beyond = sum(not low <= value <= high for value in source.data[part])
+        if beyond:
+            plot.title.text = (
+                f"{frames(beyond)} off the track lie{'s' if beyond == 1 else ''} outside these limits"
+            )
+            plot.title.text_color, plot.title.text_font_style = OFF, "normal"
         made.append(plot)
     made[-1].xaxis.axis_label = "mid-exposure as stamped, UTC"
     return made
+
+
+def _dates():  # type: ignore[no-untyped-def]
+    """Return how times are written along an axis: short enough for a phone, the year beneath."""
+    from bokeh.models import DatetimeTickFormatter
+
+    day, year = "%d %b %Y", "%Y"
+    beneath = DatetimeTickFormatter(
+        seconds=day, minsec=day, minutes=day, hourmin=day, hours=day, days=year, months=year
+    )
+    return DatetimeTickFormatter(
+        seconds="%H:%M:%S",
+        minsec="%H:%M:%S",
+        minutes="%H:%M",
+        hourmin="%H:%M",
+        hours="%H:%M",
+        days="%d %b",
+        months="%b",
+        context=beneath,
+        context_which="start",
+    )
 
 
 def _range(data, part: str) -> tuple[float, float]:  # type: ignore[no-untyped-def]

@@ -164,13 +164,21 @@ def _strangers(found: Detections, solution: PlateSolution) -> np.ndarray:
     return np.flatnonzero(~stars & bright & (found.snr > 10))
 
 
-def _seen_scale(solution: PlateSolution) -> float:
-    """Return the scale in the middle of the frame, arcseconds of sky as seen through the air a pixel."""
+def _as_seen(solution: PlateSolution, row_zero: str) -> tuple[float, float]:
+    """Return scale and rotation of the array in the middle of the frame, of the sky as it is seen through the air.
+
+    That is where the rig file's scale holds and a mount keeps its roll; near the horizon the sky itself is sheared by a
+    degree against it.
+    """
     if solution.air is None or solution.fit is None:
-        return solution.scale_arcsec_px
+        up_is_y = row_zero == "bottom"
+        return solution.scale_arcsec_px, (solution.position_angle_deg + (0.0 if up_is_y else 180.0)) % 360.0
     x, y = (solution.width_px - 1) / 2, (solution.height_px - 1) / 2
     here, right, up = solution.fit.camera.vectors(np.array([x, x + 1, x]), np.array([y, y, y + 1]))
-    return float(np.sqrt(np.linalg.norm(np.cross(right - here, up - here))) * ARCSEC_RAD)
+    scale = float(np.sqrt(np.linalg.norm(np.cross(right - here, up - here))) * ARCSEC_RAD)
+    east = np.cross([0.0, 0.0, 1.0], here)
+    rotation = np.degrees(np.arctan2((up - here) @ east, (up - here) @ np.cross(here, east))) % 360.0
+    return scale, float(rotation)
 
 
 def _plate(
@@ -186,15 +194,14 @@ def _plate(
         covariance = np.full((2, 2), np.nan)
     else:
         covariance = axes @ (covariance_px2 + solution.covariance_px2(x_px, y_px)) @ axes.T
-    up_is_y = row_zero == "bottom"
+    scale, rotation = _as_seen(solution, row_zero)
     return StarReference(
         ra_deg=float(ra[0]),
         dec_deg=float(dec[0]),
         covariance_arcsec2=covariance,
-        # as the air lets it be seen, so that it may be compared with the rig file's
-        scale_arcsec_px=_seen_scale(solution),
-        rotation_deg=(solution.position_angle_deg + (0.0 if up_is_y else 180.0)) % 360.0,
-        parity=-1 if solution.mirrored == up_is_y else 1,
+        scale_arcsec_px=scale,
+        rotation_deg=rotation,
+        parity=-1 if solution.mirrored == (row_zero == "bottom") else 1,
         local_rotation_deg=float(np.degrees(np.arctan2(east[1], north[1])) % 360.0),
         stars=len(solution.matched.x_px),
         rms_px=solution.rms_px,

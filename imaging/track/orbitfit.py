@@ -15,6 +15,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from imaging.track.fit import widening
 from imaging.track.path import PredictedPath, tangent_offsets
 from imaging.track.sightings import Sightings
 from imaging.track.table import Track
@@ -109,7 +110,7 @@ def fit_orbit(sightings: Sightings, observer: Observer | None, body: str, foreca
     freedom = max(2 * len(sightings) - 6, 1)
     chi2_dof = float("nan") if forecast else chi2 / freedom
     if not forecast:
-        covariance = covariance * max(1.0, chi2_dof)
+        covariance = covariance * widening(chi2_dof, freedom)
     distance = float(np.linalg.norm(state[:3]))
     toward = np.concatenate([state[:3] / distance, np.zeros(3)])
     distance_sigma = float(np.sqrt(toward @ covariance @ toward))

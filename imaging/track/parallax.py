@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from imaging.track.fit import motion
+from imaging.track.fit import motion, widening
 from imaging.track.path import PredictedPath
 from imaging.track.sightings import Sightings, among_stars
 from imaging.track.table import Track
@@ -53,8 +53,8 @@ class Station:
 class Parallax:
     """What the stations together say. `kappa`: measured over assumed parallax; distances are geocentric, at mid-time.
 
-    `chi2_dof`: of the fit; sigmas are scaled up by its root when it is above 1. `baseline_km`: largest distance between
-    sites across the line of sight, mean over the frames.
+    `chi2_dof`: of the fit; sigmas are scaled up by its root when it is above 1 by more than chance. `baseline_km`:
+    largest distance between sites across the line of sight, mean over the frames.
     """
 
     body: str
@@ -238,7 +238,7 @@ def fit_parallax(stations: Sequence[Station], forecast: bool = False) -> Paralla
     if not forecast:
         freedom = max(rows - len(solution), 1)
         chi2_dof = (chi2 - float(vector @ solution)) / freedom
-        stretch = max(1.0, float(np.sqrt(chi2_dof)))
+        stretch = float(np.sqrt(widening(chi2_dof, freedom)))
     kappa, sigma = 1.0 + float(solution[0]), float(np.sqrt(covariance[0, 0])) * stretch
     if not np.isfinite(sigma) or (not forecast and kappa < 3 * sigma):
         raise NoSolutionError(

@@ -9,7 +9,7 @@ from itertools import pairwise
 
 import numpy as np
 
-from imaging.track.displaced import EARTH_KM_DEG, displaced_site
+from imaging.track.displaced import displaced_site, km_per_degree
 from imaging.track.findings import DAY_S, MOST_ODDS, SLIP, SMALL_CLOCK_S, Finding, Question, Reading, odds
 from imaging.track.fit import Priors, fit_track
 from imaging.track.measurement import Measurement
@@ -186,12 +186,17 @@ def _star_camera(plan: Plan, chosen: Sequence[Measurement]) -> CameraFindings:
                 f"(by the stars of {round(flipped * n)} of {n} frames).",
             )
         )
-    turn = np.radians([stars.rotation_deg + (180.0 if m.row_zero == "top" else 0.0) for m, stars in plates])
-    up = float(np.degrees(np.angle(np.mean(np.exp(1j * turn)))) % 360.0)
     away = np.array([(stars.rotation_deg - m.nominal.rotation_deg + 180) % 360 - 180 for m, stars in plates])
+    # a mount that flips turns the frames by 180 degrees, and the plan knows it: the difference does not
+    first = plates[0][0]
+    up = first.nominal.rotation_deg + float(np.mean(away)) + (180.0 if first.row_zero == "top" else 0.0)
+    up_sigma = float(np.std(away, ddof=1) / np.sqrt(n)) if n > 2 else NAN
+    if flipped > 0:
+        up, up_sigma = plates[0][1].rotation_deg + (180.0 if first.row_zero == "top" else 0.0), NAN
+    up %= 360.0
     if flipped < 0.5 and abs(np.median(away)) > 5.0:
-        findings.append(_rotation_finding(up, NAN, float(abs(np.median(away)))))
-    return CameraFindings(float(np.median(scale)), sigma, up, NAN, tuple(findings))
+        findings.append(_rotation_finding(up, up_sigma, float(abs(np.median(away)))))
+    return CameraFindings(float(np.mean(scale)), sigma, up, up_sigma, tuple(findings))
 
 
 def frame_findings(measurements: Sequence[Measurement], plan: Plan) -> list[Finding]:
@@ -234,9 +239,9 @@ def _date_findings(measurements: Sequence[Measurement], plan: Plan) -> list[Find
 
 
 def _away_km(site: tuple[float, float, float], plan: Plan) -> float:
-    north = (site[0] - plan.site.latitude_deg) * EARTH_KM_DEG
+    north_km_deg, east_km_deg = km_per_degree(plan.site.latitude_deg)
     lon = (site[1] - plan.site.longitude_deg + 180.0) % 360.0 - 180.0
-    return float(np.hypot(north, lon * EARTH_KM_DEG * np.cos(np.radians(plan.site.latitude_deg))))
+    return float(np.hypot((site[0] - plan.site.latitude_deg) * north_km_deg, lon * east_km_deg))
 
 
 def majority_camera(measurements: Sequence[Measurement]) -> tuple[str | None, tuple[int, int]] | None:

@@ -12,7 +12,7 @@ import numpy as np
 
 from imaging.track.cutout import Cutout
 from imaging.track.interactive import head, light_plot, plots
-from imaging.track.result import CheckResult, frames, with_sigma
+from imaging.track.result import CheckResult, duration_text, frames, with_sigma
 from planner.outputs import whole_file
 
 ROWS_SHOWN = 400
@@ -99,9 +99,10 @@ def _numbers(result: CheckResult) -> str:
         cells.append(("set aside", frames(len(result.set_aside))))
     if np.isfinite(result.clock_offset_sigma_s):
         offset = with_sigma(result.clock_offset_s, result.clock_offset_sigma_s)
-        cells.append(("clock, stamps − UTC", f"{offset} s"))
+        size = f" ({duration_text(result.clock_offset_s)})" if abs(result.clock_offset_s) >= 120 else ""
+        cells.append(("clock, stamps − UTC", f"{offset} s{size}"))
     if np.isfinite(result.rms_along_arcsec):
-        rms = f"{result.rms_along_arcsec:.2f}″ along, {result.rms_across_arcsec:.2f}″ across"
+        rms = f"{result.rms_along_arcsec:.2g}″ along, {result.rms_across_arcsec:.2g}″ across"
         cells.append(("residual rms after the fit", rms))
     if np.isfinite(result.scale_arcsec_px):
         scale = with_sigma(result.scale_arcsec_px, result.scale_sigma_arcsec_px)
@@ -235,7 +236,7 @@ _POLICY = (
 )
 _STYLE = """
 :root{color-scheme:dark}
-body{margin:0 auto;max-width:60rem;padding:1rem;background:#14110f;color:#f2e6d8;
+body{margin:0 auto;max-width:72rem;padding:1rem;background:#14110f;color:#f2e6d8;
 font:1rem/1.5 system-ui,sans-serif}
 body.red::after{content:"";position:fixed;inset:0;background:#f00;mix-blend-mode:multiply;pointer-events:none;z-index:99}
 .title{margin:0;color:#c9bcae}

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import html
 import json
+import re
 
 import numpy as np
 import pytest
@@ -39,9 +41,11 @@ def test_a_slip_in_rendered_frames_is_named(tmp_path, capsys, brief, options, na
     told = json.loads(capsys.readouterr().out)
     assert told["findings"][0]["name"] == name
     assert told["findings"][0]["odds"] is None or told["findings"][0]["odds"] > 1e4
-    assert told["verdict"] in (tmp_path / "out" / "report.html").read_text(encoding="utf-8").replace(
+    page = html.unescape((tmp_path / "out" / "report.html").read_text(encoding="utf-8")).replace(
         "\u00a0", " "
     )
+    assert told["verdict"] in page
+    assert told["findings"][0]["sentence"].replace("`", "") in re.sub("</?code>", "", page)
 
 
 def test_the_stated_sigma_of_the_clock_holds_when_seeing_moves_the_limb(tmp_path, capsys):
