@@ -35,6 +35,7 @@ _GPS_BEHIND_TAI_S = (
     19.0  # FITS standard 4.0, table 30: GPS runs (approximately) synchronously with TAI - 19 s
 )
 
+_TIME_UNITS_S = {"s": 1.0, "min": 60.0, "h": 3600.0, "d": 86400.0, "a": 31557600.0}
 _BEGIN = ("DATE-BEG", "DATE-OBS", "DATE_OBS", "MJD-BEG", "MJD-OBS", "JD")
 _MIDDLE = ("DATE-AVG", "DATE-MID", "MJD-AVG", "MJD-MID", "JD-MID")
 _END = ("DATE-END", "MJD-END")
@@ -140,6 +141,47 @@ def time_from_fits(header: Any, zone: timezone | ZoneInfo | None = None) -> Fram
     if begin is None and middle is None and end is None:
         raise NoTimeError("no DATE-OBS, DATE-BEG, DATE-AVG, MJD-OBS or like keyword tells when it was taken")
     return _combine(begin, middle, end, length, notes)
+
+
+def time_of_fits_plane(
+    header: Any, index: int, total: int, zone: timezone | ZoneInfo | None = None
+) -> FrameTime:
+    """Return the time of plane `index` of a cube whose third axis is time (FITS standard 4.0, section 9.2 and 9.5).
+
+    The axis tells the middle of each plane, counted from MJDREF, JDREF or DATEREF, else from DATE-BEG or DATE-OBS;
+    a plane lasts as long as the exposure, else as the step. Raises NoTimeError for another axis, or with the reason.
+    """
+    kind = str(header.get("CTYPE3") or "").strip().upper()
+    if kind != "TIME" and kind not in _SCALES:
+        raise NoTimeError(f"the header tells no time for plane {index} of {total}")
+    unit = str(header.get("CUNIT3") or "s").strip()
+    step = _number(header.get("CDELT3"))
+    if unit not in _TIME_UNITS_S or step is None:
+        raise NoTimeError(
+            f"the time axis of the cube has the unit {unit!r} and the step {header.get('CDELT3')!r}"
+        )
+    away = (_number(header.get("CRVAL3")) or 0.0) + (
+        index + 1 - (_number(header.get("CRPIX3")) or 0.0)
+    ) * step
+    scale = str(kind if kind != "TIME" else header.get("TIMESYS") or "UTC").strip().upper()
+    day = _number(header.get("MJDREF"))
+    if day is None and header.get("MJDREFI") is not None:
+        day = (_number(header.get("MJDREFI")) or 0.0) + (_number(header.get("MJDREFF")) or 0.0)
+    if day is None and header.get("JDREF") is not None:
+        day = (_number(header.get("JDREF")) or 0.0) - 2400000.5
+    if day is not None and scale in (*_SCALES, "GPS"):
+        origin, source = _tt_s_of_mjd(day, scale), "MJDREF"
+    elif header.get("DATEREF"):
+        origin, source = (
+            time_from_fits({"DATE-OBS": header["DATEREF"], "TIMESYS": scale}, zone).begin_tt_s,
+            "DATEREF",
+        )
+    else:
+        first = time_from_fits(header, zone)
+        origin, source = first.begin_tt_s, first.source
+    length = exposure_s(header)
+    middle = _Stamp(origin + away * _TIME_UNITS_S[unit], 1e-3, f"{source} and time axis, plane {index}")
+    return _combine(None, middle, None, abs(step) * _TIME_UNITS_S[unit] if length is None else length, [])
 
 
 def time_from_exif(

@@ -43,6 +43,7 @@ class CheckOptions:
     """How frames are read: `zone` of stamps without one, `pictures` keeps a cut-out a frame.
 
     `calibration`: what is taken off each frame first. `catalogue`: a deeper star catalogue of the user's.
+    `file_time`: fall back on the modification time of a file that tells no time.
     """
 
     zone: str | None = None
@@ -50,6 +51,7 @@ class CheckOptions:
     jobs: int = 1
     calibration: Calibration | None = None
     catalogue: Path | None = None
+    file_time: bool = False
 
 
 def frame_files(folder: Path) -> list[Path]:
@@ -69,7 +71,9 @@ def measure_file(measurer: Measurer, path: Path, options: CheckOptions) -> list[
     outcomes: list[Outcome] = []
     try:
         with deeper_catalogue(options.catalogue):
-            for frame in read_frames(path, options.zone, calibration=options.calibration):
+            for frame in read_frames(
+                path, options.zone, file_time=options.file_time, calibration=options.calibration
+            ):
                 name = path.name if frame.frame_index == 0 else f"{path.name}[{frame.frame_index}]"
                 if frame.time is None:
                     outcomes.append(SetAside(name, frame.time_missing or "tells no time"))

@@ -13,7 +13,10 @@ import click
 @click.argument("folder", metavar="FRAMES_FOLDER", type=click.Path(file_okay=False, path_type=Path))
 @click.option("-o", "--output", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
               help="Where track.ecsv and report.html go [beside the frames].")  # fmt: skip
-@click.option("--zone", metavar="ZONE", help="Zone of stamps that name none: +02:00 or Europe/Madrid.")
+@click.option(
+    "--zone", metavar="ZONE", help="Zone of stamps that name none: +02:00 or Europe/Madrid [the rig's clock]."
+)
+@click.option("--file-time", is_flag=True, help="Take a file's modification time where it tells no other.")
 @click.option("--calibration", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
               help="Folder of bias, dark and flat folders, to calibrate the frames with.")  # fmt: skip
 @click.option("--catalogue", metavar="FILE", type=click.Path(dir_okay=False, path_type=Path),
@@ -32,6 +35,7 @@ def command(  # type: ignore[no-untyped-def]
     folder,
     output,
     zone,
+    file_time,
     calibration,
     catalogue,
     apply_what,
@@ -69,7 +73,7 @@ def command(  # type: ignore[no-untyped-def]
     if calibration is not None:
         with bars("making calibration masters", quiet=as_json) as (tick,):
             night = calibration_of(calibration, tick=tick)
-    options = CheckOptions(zone, not no_pictures, jobs, night, catalogue)
+    options = CheckOptions(zone or plan.rig.clock.zone, not no_pictures, jobs, night, catalogue, file_time)
     if follow:
         from imaging.track.follow import follow_folder
 

@@ -23,7 +23,10 @@ from planner import errors
 @click.option(
     "--learn", is_flag=True, help="Learn the rig's lens from these frames, into a file beside the rig."
 )
-@click.option("--zone", metavar="ZONE", help="Zone of stamps that name none: +02:00 or Europe/Madrid.")
+@click.option(
+    "--zone", metavar="ZONE", help="Zone of stamps that name none: +02:00 or Europe/Madrid [the rig's clock]."
+)
+@click.option("--file-time", is_flag=True, help="Take a file's modification time where it tells no other.")
 @click.option("--catalogue", metavar="FILE", type=click.Path(dir_okay=False, path_type=Path),
               help="A deeper star catalogue (FITS, VOTable, ECSV, CSV), beside the installed one.")  # fmt: skip
 @click.option("--calibration", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
@@ -43,6 +46,7 @@ def command(  # type: ignore[no-untyped-def]
     rig,
     learn,
     zone,
+    file_time,
     catalogue,
     calibration,
     no_blind,
@@ -68,6 +72,7 @@ def command(  # type: ignore[no-untyped-def]
     from planner.sky.starlist import deeper_catalogue
 
     scale, learned, model = _scale_and_lens(scale, focal_mm, pixel_um, rig, learn)
+    zone = zone or (model.clock.zone if model is not None else None)
     hint = Hint(near=_near(near), scale_arcsec_px=scale)
     if learned is not None:
         hint = Hint(hint.near, learned.scale_arcsec_px, 0.005, parity=learned.parity, lens=learned.lens)
@@ -86,7 +91,7 @@ def command(  # type: ignore[no-untyped-def]
             from imaging.frames.calibrating import calibration_of
 
             night = calibration_of(calibration, tick=master_tick)
-        for solved in solve_files(files, hint, zone, not no_blind, tick, index_tick, night):
+        for solved in solve_files(files, hint, zone, not no_blind, tick, index_tick, night, file_time):
             results.append(solved.as_object())
             if solved.solution is None:
                 continue

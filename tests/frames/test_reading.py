@@ -141,7 +141,20 @@ def test_rasters_keep_their_depth_and_their_top(tmp_path, suffix, depth, planes)
     assert (frame.colour is None) == (planes == 1)
 
 
-@pytest.mark.parametrize(("flag", "corner"), [(1, (0, 0)), (3, (-1, -1)), (6, (0, -1)), (8, (-1, 0))])
+# Exif 2.31, tag 0x0112: where the stored first corner lies in the picture
+@pytest.mark.parametrize(
+    ("flag", "corner"),
+    [
+        (1, (0, 0)),
+        (2, (0, -1)),
+        (3, (-1, -1)),
+        (4, (-1, 0)),
+        (5, (0, 0)),
+        (6, (0, -1)),
+        (7, (-1, -1)),
+        (8, (-1, 0)),
+    ],
+)
 def test_the_orientation_flag_turns_the_picture_upright(tmp_path, flag, corner):
     from PIL import Image
 
@@ -153,10 +166,74 @@ def test_the_orientation_flag_turns_the_picture_upright(tmp_path, flag, corner):
     exif[0x0112] = flag
     image.save(tmp_path / "a.jpg", exif=exif, quality=95)
     frame = read_frame(tmp_path / "a.jpg")
-    assert frame.data.shape == ((32, 48) if flag in (1, 3) else (48, 32))
+    assert frame.data.shape == ((32, 48) if flag <= 4 else (48, 32))
     rows = slice(0, 6) if corner[0] == 0 else slice(-6, None)
     columns = slice(0, 6) if corner[1] == 0 else slice(-6, None)
     assert frame.data[rows, columns].mean() > 200
+
+
+def exif_directory(at):
+    """An Exif directory as TIFF 6.0 writes one, at this place of a file: exposure 4 s, date, offset, sub-seconds."""
+    date, offset = b"2027:02:19 22:15:30\0", b"+02:00\0\0"
+    data = at + 2 + 4 * 12 + 4
+    rows = [
+        struct.pack("<HHII", 0x829A, 5, 1, data),
+        struct.pack("<HHII", 0x9003, 2, 20, data + 8),
+        struct.pack("<HHII", 0x9011, 2, 7, data + 28),
+        struct.pack("<HHI4s", 0x9291, 2, 3, b"25\0\0"),
+    ]
+    return struct.pack("<H", 4) + b"".join(rows) + bytes(4) + struct.pack("<II", 4, 1) + date + offset
+
+
+def write_tiff_with_exif(path, picture):
+    import tifffile
+
+    tags = [(271, "s", 0, "Invented", True), (272, "s", 0, "Camera", True), (65000, "I", 1, 0, True)]
+    tifffile.imwrite(path, picture, extratags=tags, metadata=None, byteorder="<")
+    at = path.stat().st_size + path.stat().st_size % 2
+    with tifffile.TiffFile(path, mode="r+b") as file:
+        place = next(tag.offset for tag in file.pages[0].tags if tag.code == 65000)
+    with open(path, "r+b") as file:
+        file.seek(place)  # the entry that leads to the directory, which the library would not write
+        file.write(struct.pack("<HHII", 34665, 4, 1, at))
+        file.seek(at)
+        file.write(exif_directory(at))
+
+
+@pytest.mark.parametrize("suffix", ["jpg", "tif", "png"])
+def test_exif_of_a_picture_tells_its_time(tmp_path, suffix):
+    from PIL import Image
+    from PIL.TiffImagePlugin import IFDRational
+
+    from planner.sky.timescale import utc_iso
+
+    exif = Image.Exif()
+    exif[0x010F], exif[0x0110] = "Invented", "Camera"
+    inner = exif.get_ifd(0x8769)
+    inner[0x9003], inner[0x9291], inner[0x9011], inner[0x829A] = (
+        "2027:02:19 22:15:30",
+        "25",
+        "+02:00",
+        IFDRational(4, 1),
+    )
+    picture = np.random.default_rng(1).integers(0, 250, (40, 60), dtype="uint8")
+    if suffix == "tif":
+        write_tiff_with_exif(tmp_path / "a.tif", picture)
+    else:
+        Image.fromarray(picture).save(tmp_path / f"a.{suffix}", exif=exif)
+    frame = read_frame(tmp_path / f"a.{suffix}")
+    assert frame.exposure_s == 4.0
+    assert frame.camera == "Invented Camera"
+    assert utc_iso(frame.time.middle_tt_s, 3) == "2027-02-19T20:15:32.250Z"
+
+
+def test_pages_of_a_tiff_are_frames(tmp_path):
+    import tifffile
+
+    pages = np.stack([sky(seed=i) for i in range(3)]).astype("uint16")
+    tifffile.imwrite(tmp_path / "a.tif", pages, photometric="minisblack")
+    assert frame_count(tmp_path / "a.tif") == 3
+    assert np.array_equal(read_frame(tmp_path / "a.tif", index=2).data, pages[2])
 
 
 def write_ser(path, frames, depth=8, colour=0, stamps=True, byteorder="<"):

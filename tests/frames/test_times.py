@@ -6,7 +6,7 @@ import pytest
 from astropy.io import fits
 from astropy.time import Time
 
-from imaging.frames.times import NoTimeError, time_from_exif, time_from_fits, zone_of
+from imaging.frames.times import NoTimeError, time_from_exif, time_from_fits, time_of_fits_plane, zone_of
 from planner.errors import InputError
 from planner.sky.timescale import utc_iso
 
@@ -130,3 +130,28 @@ def test_exif_without_a_date_has_no_time(tags):
 def test_a_zone_must_be_one(text):
     with pytest.raises(InputError):
         zone_of(text)
+
+
+# FITS standard 4.0, table 30 and section 9.2: CTYPEn TIME, and MJDREF, JDREF or DATEREF as its zero
+@pytest.mark.parametrize(
+    ("cards", "expected"),
+    [
+        ({"MJDREF": 61455.0, "CRVAL3": 72930.0}, "2027-02-19T20:15:30.500Z"),
+        ({"MJDREFI": 61455, "MJDREFF": 0.5, "CRVAL3": 29730.0}, "2027-02-19T20:15:30.500Z"),
+        ({"DATEREF": "2027-02-19T20:15:00", "CRVAL3": 30.0}, "2027-02-19T20:15:30.500Z"),
+        ({"DATE_OBS": "2027-02-19T20:15:30"}, "2027-02-19T20:15:30.500Z"),
+        ({"DATE_OBS": "2027-02-19T20:15:30", "CUNIT3": "d", "CDELT3": 1.0}, "2027-02-21T20:15:30.000Z"),
+    ],
+)
+def test_planes_of_a_cube_have_the_times_of_its_axis(cards, expected):
+    axis = {"CTYPE3": "TIME", "CUNIT3": "s", "CRPIX3": 1.0, "CRVAL3": 0.0, "CDELT3": 0.25} | cards
+    time = time_of_fits_plane(header(**axis), 2, 10)
+    assert utc_iso(time.middle_tt_s, 3) == expected
+    assert time.end_tt_s - time.begin_tt_s == pytest.approx(
+        axis["CDELT3"] * (86400 if axis["CUNIT3"] == "d" else 1)
+    )
+
+
+def test_a_cube_of_another_axis_tells_no_time_for_its_planes():
+    with pytest.raises(NoTimeError, match="plane 2 of 10"):
+        time_of_fits_plane(header(CTYPE3="FREQ", DATE_OBS="2027-02-19T20:15:30"), 2, 10)

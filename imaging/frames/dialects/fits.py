@@ -11,7 +11,7 @@ import numpy as np
 
 from imaging.frames.frame import Frame
 from imaging.frames.reading import ReadOptions, check_size
-from imaging.frames.times import NoTimeError, exposure_s, time_from_fits
+from imaging.frames.times import NoTimeError, exposure_s, time_from_fits, time_of_fits_plane
 from planner.errors import FrameSetAside
 
 _BAYER = ("BAYERPAT", "COLORTYP", "CFA-PAT", "MOSAIC")
@@ -121,8 +121,9 @@ def _frame(path: Path, plane: np.ndarray, header: Any, options: ReadOptions, ind
     time, missing = None, None
     try:
         if total > 1:
-            raise NoTimeError(f"the header tells no time for plane {index} of {total}")
-        time = time_from_fits(header, options.zone)
+            time = time_of_fits_plane(header, index, total, options.zone)
+        else:
+            time = time_from_fits(header, options.zone)
     except NoTimeError as error:
         missing = str(error)
     colour, mosaic, luminance = None, _mosaic(header), plane
