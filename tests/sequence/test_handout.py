@@ -246,3 +246,41 @@ def test_comparison_names_what_differs(root):
         alone["signal-to-noise of the brightest pixel"]
     )
     assert alone["frames within 1 sigma of contact 1"] == short["frames within 1 sigma of contact 1"]
+
+
+def test_sites_and_several_exposures_are_compared_too(root, tmp_path):
+    import json
+
+    import yaml
+
+    from planner.cli.plan import command
+
+    site = tmp_path / "elsewhere.yaml"
+    site.write_text(
+        yaml.safe_dump(
+            {"name": "Elsewhere (invented)", "latitude_deg": 35.0, "longitude_deg": -25.0, "height_m": 10.0}
+        ),
+        encoding="utf-8",
+    )
+    brief = str(root / "configs/mercury_transit_2032.yaml")
+    arguments = [brief, "--compare", str(site), "--exposure", "0.001", "--exposure", "0.002", "--json"]
+    shown = CliRunner().invoke(command, arguments)
+    assert shown.exit_code == 0, shown.output
+    own, elsewhere, fast, slow = json.loads(shown.output).values()
+    # ingress happens before sunrise there
+    assert elsewhere["frames within 1 sigma of contact 1"] == "0"
+    assert int(own["frames within 1 sigma of contact 1"]) > 3
+    key = "signal-to-noise of the brightest pixel"
+    assert float(slow[key]) / float(fast[key]) == pytest.approx(2**0.5, rel=0.03)
+
+
+def test_another_rig_is_compared_with_the_filters_it_has(root):
+    from planner.sequence.comparison import compare, variants
+    from tests.sequence.briefs import changed, example
+
+    wheel = {"filters": [{"name": "L"}, {"name": "R"}]}
+    brief = changed(example(CAMPAIGN), rig=wheel, wish={"filters": ["L", "R"], "visits": 6})
+    table = compare(variants(brief, (root / "configs/rigs/lens_135mm.yaml",)))
+    assert not table.reasons
+    frames = next(row for row in table.rows if row.label == "frames")
+    assert int(frames.values[0]) == 2 * int(frames.values[1])

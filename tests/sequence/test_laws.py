@@ -10,6 +10,7 @@ from planner.sequence import documents
 from planner.sequence.builder import build_plan
 from planner.sequence.capacity import overlaps
 from planner.sequence.frametimes import frame_starts, planned_frames
+from planner.sequence.rules_camera import _changes_s
 from planner.sequence.windows import is_contact
 from planner.sky.timescale import tt_s_from_iso
 from tests.sequence.briefs import CAMPAIGN, EXAMPLES, OCCULTATION, TRANSIT, changed, example, example_plan
@@ -40,7 +41,17 @@ def plans(draw):
             sensor={"readout_s": draw(st.floats(0.0, 8.0))},
             clock={"sigma_s": draw(st.floats(0.01, 20.0))},
             mount={"kind": draw(st.sampled_from(["equatorial", "altazimuth", "fixed"]))},
+            rig={
+                "filters": [
+                    {"name": "V"},
+                    {"name": "R", "focus_offset_steps": 9},
+                    {"name": "N", "refocus": True},
+                ],
+                "filter_change_s": draw(st.floats(0.0, 30.0)),
+            },
             wish={
+                "filters": draw(st.sampled_from([[], ["V", "R"], ["R", "N", "V"]])),
+                "filter": draw(st.sampled_from([None, "V", "N"])),
                 "burst_cadence_s": draw(st.none() | st.floats(0.05, 5.0)),
                 "cadence_s": draw(st.none() | st.floats(1.0, 90.0)),
                 "separate_discs": draw(st.booleans()),
@@ -52,8 +63,8 @@ def plans(draw):
 @few
 @given(plans())
 def test_no_two_frames_overlap_on_one_camera_and_the_plan_survives_yaml(plan):
-    _, _, start, exposure = frame_starts(plan)
-    assert not len(overlaps(start, exposure, plan.rig.sensor.readout_s))
+    passage, shot, start, exposure = frame_starts(plan)
+    assert not len(overlaps(start, exposure, plan.rig.sensor.readout_s, _changes_s(plan, passage, shot)))
     assert all(passage.slack_s is None or passage.slack_s >= -1e-3 for passage in plan.passages)
     document = documents.strictyaml.parse(documents.dump_plan(plan))
     assert documents._as(type(plan), document) == plan
