@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 _BRIGHTEST = 60
 _BIN_PX = 6.0  # a turn of 0.1 degree smears a shift by this over a frame
 _MOST_SHIFTS = 5
+_MOST_STARS = 500  # the brightest of the catalogue are enough to know the place
 
 
 def solve_from_previous(
@@ -43,6 +44,7 @@ def solve_from_previous(
     # near the previous place first: a tracked sequence moves little
     for limit in (0.02, 0.5):
         sky = sky_near(middle, (1.0 + limit) * radius * 1.02, density_of(STARS_LOOKED_AT, radius))
+        sky = sky.take(np.arange(min(len(sky), int(_MOST_STARS * (1.0 + limit) ** 2))))
         x, y = camera.pixels(sky.vectors)
         near = (np.abs(x - width / 2) < (0.5 + limit) * width) & (
             np.abs(y - height / 2) < (0.5 + limit) * height
