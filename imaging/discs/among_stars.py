@@ -68,47 +68,14 @@ def planet_among_stars(
     sigma = fwhm_px / FWHM_OVER_SIGMA
     if body.radius_px > 1.5 * sigma and body.radius_px > 1.2:
         if clipped < _LOST * np.pi * body.radius_px**2:
-            return _resolved(stamp, x0, y0, body, sigma, noise, None, clipped)
+            return resolved(stamp, x0, y0, body, sigma, noise, None, clipped)
         # of a disc that is lost to saturation only the skirt is left: its shape is the point spread's
-        return _point(stamp, x0, y0, body, sigma, noise, clipped, lit_cells(body))
-    return _point(stamp, x0, y0, body, sigma, noise, clipped, None)
+        return spread_point(stamp, x0, y0, body, sigma, noise, clipped, lit_cells(body))
+    return spread_point(stamp, x0, y0, body, sigma, noise, clipped, None)
 
 
-def planet_beside_moon(
-    data: np.ndarray,
-    x_px: float,
-    y_px: float,
-    body: Body,
-    moon: LimbFit,
-    search_px: float = 12.0,
-    saturation: float | None = None,
-    gain_e_adu: float | None = None,
-) -> DiscPlace:
-    """Place a planet near or partly behind the Moon, whose limb fit says where the planet is cut and how
-    blurred it is.
-
-    The Moon's limb and glare in the stamp are modelled with it. Raises NoSolutionError when less than a tenth of the
-    planet's disc is clear of the Moon, or nothing stands out there.
-    """
-    gap = np.hypot(x_px - moon.x_px, y_px - moon.y_px) - moon.radius_px
-    if gap < -0.8 * body.radius_px - 0.5 * search_px:
-        raise NoSolutionError("the planet is behind the Moon")
-    sigma = moon.blur.sigma_px
-    reach = body.radius_px + 5 * sigma + 3
-    wide = Stamp.cut(data, x_px, y_px, search_px + reach, saturation)
-    noise = _sky_noise(wide, gain_e_adu)
-    x0, y0 = _peak_off_moon(wide, x_px, y_px, body, moon, search_px, noise)
-    stamp = Stamp.cut(data, x0, y0, reach, saturation)
-    place = _resolved(stamp, x0, y0, body, sigma, noise, moon, int(stamp.clipped.sum()))
-    gap = np.hypot(place.x_px - moon.x_px, place.y_px - moon.y_px) - moon.radius_px
-    if place.chi2 > 8 or max(place.sigma_px) > max(2.0, body.radius_px):
-        raise NoSolutionError("the Moon's light drowns the planet: nothing there has a planet's shape")
-    if gap < -0.8 * max(body.radius_px, 1.0):
-        raise NoSolutionError("less than a tenth of the planet is clear of the Moon")
-    return place
-
-
-def _sky_noise(stamp: Stamp, gain_e_adu: float | None) -> Noise:
+def sky_noise(stamp: Stamp, gain_e_adu: float | None) -> Noise:
+    """Return level and noise of the sky in a stamp without what shines in it; raises NoSolutionError without pixels."""
     values = stamp.data[stamp.usable]
     if values.size < 30:
         raise NoSolutionError("too few usable pixels where the planet is looked for")
@@ -138,7 +105,7 @@ def _locate(
 
     reach = body.reach_px + 3 * fwhm_px + 4
     wide = Stamp.cut(data, x_px, y_px, search_px + 2 * reach, saturation)
-    noise = _sky_noise(wide, gain_e_adu)
+    noise = sky_noise(wide, gain_e_adu)
     sigma = max(np.hypot(fwhm_px / FWHM_OVER_SIGMA, 0.5 * body.radius_px), 0.6)
     light = np.where(wide.usable | wide.clipped, wide.data - noise.level_adu, 0.0)
     smooth = cv2.GaussianBlur(light, (0, 0), sigma, borderType=cv2.BORDER_REPLICATE)
@@ -177,7 +144,7 @@ def _without_bled_columns(stamp: Stamp) -> Stamp:
     return Stamp(stamp.data, stamp.x_low, stamp.y_low, usable, stamp.clipped)
 
 
-def _point(
+def spread_point(
     stamp: Stamp,
     x0: float,
     y0: float,
@@ -298,7 +265,7 @@ def _best_start(  # type: ignore[no-untyped-def]
     return best
 
 
-def _resolved(
+def resolved(
     stamp: Stamp,
     x0: float,
     y0: float,
@@ -382,30 +349,3 @@ def _resolved(
         float(body.radius_px * np.sqrt(fit.covariance[3, 3])), Blur(float(np.exp(fit.parameters[2])), wing),
         px + light_dx, py + light_dy, height / float(np.sqrt(noise.sky_adu2)), fit.chi2, "lit disc", clipped, notes,
     )  # fmt: skip
-
-
-def _peak_off_moon(
-    stamp: Stamp, x_px: float, y_px: float, body: Body, moon: LimbFit, search_px: float, noise: Noise
-) -> tuple[float, float]:
-    """Return the brightest place off the Moon, its glare (by distance from the limb) taken away."""
-    import cv2
-
-    x, y = stamp.grid()
-    dx, dy = x - moon.x_px, y - moon.y_px
-    away = np.hypot(dx, dy) / moon.outline.ratio(np.arctan2(dy, dx)) - moon.radius_px
-    step = np.clip(np.floor(away).astype(int) + 40, 0, 400)
-    light = np.where(stamp.usable, stamp.data, np.nan)
-    glare = np.zeros(401)
-    for one in np.unique(step):
-        values = light[step == one]
-        glare[one] = np.nanmedian(values) if np.isfinite(values).any() else noise.level_adu
-    rest = np.nan_to_num(light - glare[step])
-    sigma = max(np.hypot(moon.blur.sigma_px, 0.5 * body.radius_px), 0.6)
-    smooth = cv2.GaussianBlur(rest, (0, 0), sigma, borderType=cv2.BORDER_REPLICATE)
-    allowed = (np.hypot(x - x_px, y - y_px) <= search_px) & (away > -0.8 * body.radius_px)
-    if not allowed.any():
-        raise NoSolutionError("the planet is behind the Moon")
-    row, column = np.unravel_index(np.argmax(np.where(allowed, smooth, -np.inf)), smooth.shape)
-    if smooth[row, column] * np.sqrt(4 * np.pi) * sigma < 6 * np.sqrt(noise.sky_adu2):
-        raise NoSolutionError("nothing stands out of the Moon's glare where the planet is expected")
-    return float(column + stamp.x_low), float(row + stamp.y_low)

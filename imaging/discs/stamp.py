@@ -71,6 +71,16 @@ class Stamp:
         clipped = (data >= NEARLY_FULL * saturation) if saturation is not None else np.zeros(data.shape, bool)
         return cls(np.where(usable, data, 0.0), x_low, y_low, usable & ~clipped, clipped)
 
+    def part(self, x_px: float, y_px: float, half_px: float) -> Stamp:
+        """Return the piece of this stamp about a place of the frame, as far as it reaches."""
+        half = int(np.ceil(half_px))
+        column, row = round(x_px) - self.x_low, round(y_px) - self.y_low
+        low_x, low_y = max(column - half, 0), max(row - half, 0)
+        part = slice(low_y, max(row + half + 1, 0)), slice(low_x, max(column + half + 1, 0))
+        return Stamp(
+            self.data[part], self.x_low + low_x, self.y_low + low_y, self.usable[part], self.clipped[part]
+        )
+
     def grid(self, finer: int = 1, margin: int = 0) -> tuple[np.ndarray, np.ndarray]:
         """Return (x, y) of sub-pixel middles as a row and a column, with `margin` whole pixels around."""
         rows, columns = self.data.shape
