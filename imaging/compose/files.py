@@ -122,6 +122,10 @@ def captioned(
     from matplotlib import font_manager
     from PIL import Image, ImageDraw, ImageFont
 
+    short = NARROWEST_PX - image.shape[1]
+    if short > 0:  # room for words beside a small picture
+        sides = ((0, 0), (short // 2, short - short // 2), *([(0, 0)] if image.ndim == 3 else []))
+        image = np.pad(image, sides, constant_values=18 / 255)
     height, width = image.shape[:2]
     size = max(11, min(round(width / 62), 44))
     font = ImageFont.truetype(font_manager.findfont("DejaVu Sans"), size)
@@ -149,6 +153,7 @@ def _arrows(draw: Any, font: Any, x: float, y: float, length: float, up_pa_deg: 
         draw.text((x + 1.42 * dx, y + 1.42 * dy), label, fill=225, font=font, anchor="mm")
 
 
+NARROWEST_PX = 480
 ROUND_LENGTHS_ARCSEC = (1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200, 18000, 36000)
 
 

@@ -16,21 +16,21 @@ from imaging.compose.choices import Choices
 from imaging.compose.ground import sky_surface
 from imaging.compose.light import Light
 from imaging.compose.matching import Matching, edge_weight
-from imaging.compose.material import Material
+from imaging.compose.material import Material, Registered
 from imaging.compose.orientation import up_pa_deg
 from imaging.compose.patch import lay_patch, patch_box
 from imaging.compose.picture import Drawn, Picture
 from imaging.compose.plane import sky_to_plane
 from imaging.compose.stack import new_stack
 from imaging.compose.visit import PATCH_MOST_PX, Visit, learnt_flats, stacked
-from planner.errors import InputError
+from planner.errors import FrameSetAside, InputError
 
 PATCH_LEAST_PX = 5.0
 
 
 def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
     """Return the composite registered on stars; raises InputError when no frame is left."""
-    anchor, canvas = _canvas(material, choices)
+    anchor, canvas = _canvas(material, choices, light)
     choices.require_room(canvas.width_px, canvas.height_px)
     groups = list(material.passages())
     shape = (canvas.height_px, canvas.width_px, *((3,) if light.colour else ()))
@@ -59,7 +59,7 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
         why = f"; the first: {left_out[0][0]} {left_out[0][1]}" if left_out else ""
         raise InputError(f"no frame registered on stars is left{why}")
     image, count = ground.result()
-    image, count, canvas = _inner_crop(image, count, canvas, visits, anchor)
+    image, count, canvas = _inner_crop(image, count, canvas, visits, anchor, _companions(material))
     drawn = [_lay(image, canvas, anchor, visit) for visit in visits]
     choices.tick(len(material.frames), len(material.frames))
     middle = 0.5 * (material.frames[0].tt_s + material.frames[-1].tt_s)
@@ -108,11 +108,23 @@ def _level(stars: np.ndarray) -> np.ndarray:
 
 
 def _inner_crop(
-    image: np.ndarray, count: np.ndarray, canvas: Canvas, visits: list[Visit], anchor: tuple[float, float]
+    image: np.ndarray,
+    count: np.ndarray,
+    canvas: Canvas,
+    visits: list[Visit],
+    anchor: tuple[float, float],
+    companions: list[tuple[float, float]],
 ) -> tuple[np.ndarray, np.ndarray, Canvas]:
-    """Return the picture without its empty corners, as far as the path allows with a margin of 4 % of its length."""
+    """Return the picture without its empty corners, as far as the path allows with a margin of 4 % of its length.
+
+    What meets the target (`companions`, ICRS degrees) stays in it where a frame reaches.
+    """
     covered = np.isfinite(image if image.ndim == 2 else image.sum(axis=2))
     places = np.array([canvas.from_sky(*anchor, *visit.target_deg) for visit in visits], float)
+    for companion in companions:
+        x, y = (float(value) for value in canvas.from_sky(*anchor, *companion))
+        if 0 <= x < covered.shape[1] and 0 <= y < covered.shape[0] and covered[int(y), int(x)]:
+            places = np.append(places, [(x, y)], axis=0)
     margin = 0.04 * max(float(np.ptp(places, axis=0).max()), 200.0)
     keep = (
         max(0, int(places[:, 1].min() - margin)),
@@ -123,6 +135,17 @@ def _inner_crop(
     low, high, left, right = full_rectangle(covered, keep)
     rows, columns = slice(low, high), slice(left, right)
     return image[rows, columns].copy(), count[rows, columns].copy(), canvas.window(rows, columns)
+
+
+def _companions(material: Material) -> list[tuple[float, float]]:
+    """Return where the other planets and stars of the event stand in the middle of the frames' times."""
+    geometry, middle = material.geometry, len(material.frames) // 2
+    found = [
+        (float(disc.ra_deg[middle]), float(disc.dec_deg[middle]))
+        for name, disc in geometry.discs.items()
+        if name not in ("sun", "moon", material.target)
+    ]
+    return found + [(float(ra[middle]), float(dec[middle])) for _, ra, dec, _ in geometry.stars]
 
 
 def full_rectangle(covered: np.ndarray, keep: tuple[int, int, int, int]) -> tuple[int, int, int, int]:
@@ -148,8 +171,11 @@ def full_rectangle(covered: np.ndarray, keep: tuple[int, int, int, int]) -> tupl
         right -= step * (worst == "right")
 
 
-def _canvas(material: Material, choices: Choices) -> tuple[tuple[float, float], Canvas]:
-    """Return the anchor and the canvas: the whole path, with a margin of a tenth of it or a fifth of a frame."""
+def _canvas(material: Material, choices: Choices, light: Light) -> tuple[tuple[float, float], Canvas]:
+    """Return the anchor and the canvas: the whole path with a margin of a fifth of it, or the field of a frame.
+
+    A path that is short in its frames is shown in the whole of a frame, for what it passes by.
+    """
     frames = [frame for frame in material.frames if frame.solved_by == "stars"]
     if not frames:
         raise InputError("no frame was solved by its stars; registration on stars is not possible")
@@ -169,8 +195,24 @@ def _canvas(material: Material, choices: Choices) -> tuple[tuple[float, float], 
     scale = choices.scale_arcsec_px or min(frame.scale_arcsec_px for frame in frames)
     east, north = sky_to_plane(*anchor, ra, dec)
     extent = max(float(np.ptp(east)), float(np.ptp(north)), 200 * scale)
-    up = up_pa_deg(material, choices.orientation, anchor, frames[len(frames) // 2].tt_s, on_disc=False)
+    middle = frames[len(frames) // 2]
+    up = up_pa_deg(material, choices.orientation, anchor, middle.tt_s, on_disc=False)
+    field = _field(middle, anchor, light)
+    if field is not None and extent < 0.35 * min(np.ptp(field[0]), np.ptp(field[1])):
+        return anchor, canvas_around(*field, 0.0, scale, up, choices.largest_px)
     return anchor, canvas_around(east, north, 0.22 * extent, scale, up, choices.largest_px)
+
+
+def _field(
+    frame: Registered, anchor: tuple[float, float], light: Light
+) -> tuple[np.ndarray, np.ndarray] | None:
+    """Return the corners of a frame as offsets (east, north) from the anchor; None when it cannot be read."""
+    try:
+        rows, columns = light.read(frame).data.shape
+    except FrameSetAside:
+        return None
+    corners = frame.pointing.pixel_to_sky(np.array([0, columns, columns, 0]), np.array([0, 0, rows, rows]))
+    return sky_to_plane(*anchor, *corners)
 
 
 def _lay(image: np.ndarray, canvas: Canvas, anchor: tuple[float, float], visit: Visit) -> Drawn | None:

@@ -57,7 +57,9 @@ def two_sites(material: Material, other: Material, choices: Choices, light: Ligh
         drift = _motion(material, item.frame.tt_s, frame.tt_s)
         apart.append(float(np.hypot(*(there - here - drift))))
     if not apart:
-        raise InputError(f"{other.track_path}: at no instant do frames of both sites show the target on the disc")
+        raise InputError(
+            f"{other.track_path}: at no instant do frames of both sites show the target on the disc"
+        )
     note = (
         f"the two tracks lie {np.mean(apart):.1f} arcsec apart (mean of {len(apart)} instants): the parallax of "
         f"{material.plan.event.body.capitalize()} against the {body.capitalize()} "
