@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from imaging.compose.stack import require_room
+from imaging.frames.calibrating import Calibration
 
 ORIENTATIONS = ("north", "zenith", "ecliptic", "track")
 BYTES_A_PIXEL = 8  # FITS 4, TIFF 2, PNG 1, JPEG and the page less
@@ -20,9 +21,9 @@ class Choices:
     """Choices with sensible defaults.
 
     `instants`: how many times the target is drawn. `scale_arcsec_px`: None for the finest scale of the frames.
-    `blend`: of the ground (the disc, or the stars). `enlarge`: of bodies
-    registered on themselves; it is declared in the picture. `grid`: of the path plot, which
-    shows stars to magnitude `star_limit` (None: as many as stand apart). `tick(done, total)` reports progress.
+    `calibration`: of the frames of the plan's rig. `blend`: of the ground (the disc, or the stars). `enlarge`: of
+    bodies registered on themselves; it is declared in the picture. `grid`: of the path plot, which shows stars to
+    magnitude `star_limit` (None: as many as stand apart). `tick(done, total)` reports progress.
     """
 
     registration: str = "auto"
@@ -38,6 +39,7 @@ class Choices:
     scratch: Path | None = None
     output: Path | None = None
     threads: int = 2
+    calibration: Calibration | None = None
     tick: Callable[[int, int], None] = lambda done, total: None
 
     def require_room(self, width_px: int, height_px: int) -> None:

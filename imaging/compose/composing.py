@@ -84,8 +84,13 @@ def compose_picture(
         colour=choices.colour,
         ringless=registration == "stars" or landscape is not None,
         threads=choices.threads,
+        calibration=choices.calibration,
+        calibrated=material.plan.rig.name,
     )
     picture = _picture(material, registration, choices, light, other, landscape)
+    if choices.calibration is not None:
+        used = ", ".join(f"{name} ({what})" for name, what in choices.calibration.provenance().items())
+        picture = replace(picture, notes=(f"frames were calibrated: {used}", *picture.notes))
     if len(light.filters) > 1:
         mixed = f"frames through different filters ({', '.join(sorted(light.filters))}) are combined as one"
         picture = replace(picture, notes=(*picture.notes, mixed))

@@ -8,10 +8,11 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from imaging.compose.canvas import Canvas
-from imaging.compose.material import Registered
+from imaging.compose.material import Camera, Registered
 from imaging.compose.plane import plane_to_sky
 from imaging.compose.sun_surface import Surface
 from imaging.compose.warp import PixelMap, warp
+from imaging.frames.calibrating import Calibration
 from imaging.frames.frame import Frame
 from planner.errors import FrameSetAside
 
@@ -33,19 +34,32 @@ class Level:
 class Light:
     """How frames are turned into light: whether colour is kept, stars without dark rings, threads.
 
-    `filters` collects what the frames read were taken through.
+    `filters` collects what the frames read were taken through. `calibration` is taken off the frames of the rig
+    `calibrated`, whose masters it holds.
     """
 
     colour: bool = False
     ringless: bool = False
     threads: int = max(1, min(4, os.cpu_count() or 1))
     filters: set[str] = field(default_factory=set)
+    calibration: Calibration | None = None
+    calibrated: str = ""
+
+    def calibration_of(self, camera: Camera) -> Calibration | None:
+        """Return what is taken off the frames of a camera."""
+        return self.calibration if camera.name == self.calibrated else None
 
     def read(self, registered: Registered) -> Frame:
         """Return a frame's pixels; raises FrameSetAside when the file is missing, moved or unreadable."""
         from imaging.frames.reading import read_frame
 
-        frame = read_frame(registered.path, zone="UTC", index=registered.frame_index, colour=self.colour)
+        frame = read_frame(
+            registered.path,
+            zone="UTC",
+            index=registered.frame_index,
+            colour=self.colour,
+            calibration=self.calibration_of(registered.camera),
+        )
         if frame.filter:
             self.filters.add(frame.filter)
         return frame
@@ -150,10 +164,17 @@ def disc_level(frame: Frame, limb_px: tuple[float, float, float], body: str) -> 
     return Level(dark, bright - dark, of_surface=True)
 
 
+def bias_of(frame: Frame, camera: Camera) -> float:
+    """Return a frame's value of no light: its own where it is calibrated, else the rig's."""
+    return camera.bias_adu if frame.bias_adu is None else frame.bias_adu
+
+
 def exposure_level(frame: Frame, registered: Registered) -> Level:
     """Return the level that turns values into counts a second."""
     exposure_s = registered.exposure_s if np.isfinite(registered.exposure_s) else frame.exposure_s
-    return Level(registered.camera.bias_adu, float(exposure_s) if exposure_s and exposure_s > 0 else 1.0)
+    return Level(
+        bias_of(frame, registered.camera), float(exposure_s) if exposure_s and exposure_s > 0 else 1.0
+    )
 
 
 def limb_steepness(frame: Frame, limb_px: tuple[float, float, float], level: Level) -> float:

@@ -11,7 +11,7 @@ from imaging.compose.canvas import Canvas
 from imaging.compose.choices import Choices
 from imaging.compose.exposures import by_exposure, merged, not_burnt_out
 from imaging.compose.ground import falloff, measured_falloff, sky_surface
-from imaging.compose.light import Light, exposure_level
+from imaging.compose.light import Light, bias_of, exposure_level
 from imaging.compose.matching import edge_weight
 from imaging.compose.material import Camera, Registered
 from imaging.compose.plane import plane_to_sky, sky_to_plane
@@ -69,11 +69,15 @@ def learnt_flats(frames: tuple[Registered, ...], light: Light) -> dict[Camera, F
 
 def _learnt_flat(camera: Camera, frames: list[Registered], light: Light, most: int = 8) -> Flat:
     """Return the vignetting that the sky of a few frames shows, else the one that the rig states."""
+    night = light.calibration_of(camera)
+    if night is not None and night.flats:
+        return Flat(0.0, 0.0, "by the master flat")
     chosen = np.unique(np.linspace(0, len(frames) - 1, most).astype(int))
     skies = []
     for index in chosen.tolist():
         try:
-            skies.append(light.read(frames[index]).data - camera.bias_adu)
+            frame = light.read(frames[index])
+            skies.append(frame.data - bias_of(frame, camera))
         except FrameSetAside:
             continue
     measured = measured_falloff(skies) if skies else None

@@ -77,6 +77,8 @@ class _Several(click.ParamType):
 )
 @click.option("--view", metavar="AZ,WIDTH,ROW",
               help="The landscape's middle azimuth and width in degrees, and the row of the true horizon.")  # fmt: skip
+@click.option("--calibration", metavar="FOLDER", type=click.Path(path_type=Path),
+              help="Folder of bias, dark and flat folders, to calibrate the frames of PLAN with.")  # fmt: skip
 @click.option("--linear", is_flag=True, help="No stretch: tones proportional to light.")
 @click.option("--formats", type=_Several(PICTURE_FORMATS), default="fits,png", show_default=True)
 @click.option("--plots", type=_Several(PLOT_FORMATS), default="png,svg", show_default=True)
@@ -113,7 +115,7 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     from imaging.compose.material import gather
     from imaging.compose.pathdata import path_data
     from imaging.compose.selection import joined, through_filter
-    from planner.cli.progress import bar
+    from planner.cli.progress import bars
     from planner.sequence.documents import load_plan
 
     quiet = chosen["quiet"] or chosen["as_json"]
@@ -148,7 +150,12 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     zone_label = "UTC"
     if chosen["local_time"]:
         zone, zone_label = ZoneInfo(document.site.timezone), document.site.timezone
-    with bar("composing", quiet) as tick:
+    with bars("composing", "making calibration masters", quiet=quiet) as (tick, master_tick):
+        night = None
+        if chosen["calibration"] is not None:
+            from imaging.frames.calibrating import calibration_of
+
+            night = calibration_of(chosen["calibration"], tick=master_tick)
         choices = Choices(
             registration=chosen["registration"],
             orientation=chosen["orientation"],
@@ -160,6 +167,7 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
             star_limit=chosen["star_limit"],
             enlarge=chosen["enlarge"],
             scratch=chosen["scratch"],
+            calibration=night,
             output=output,
             tick=tick,
         )
