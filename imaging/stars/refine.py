@@ -276,7 +276,7 @@ def settle(match: Match, lens: Lens, field: Field, sky: Sky, limit: int = MOST_S
             break
         same = len(chosen) == len(star) and np.array_equal(inside[chosen], star)
         detection, star = nearest[chosen], inside[chosen]
-        fit = _fit(fit.camera, lens, field, sky, detection, star, iterations=2)
+        fit = _fit(fit.camera, lens, field, sky, detection, star, iterations=3)
         sigma = np.hypot(field.sigma_px[detection], sky.sigma_arcsec[star] / fit.camera.scale_arcsec_px)
         fit = averaged(
             fit,

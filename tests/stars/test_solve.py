@@ -220,6 +220,7 @@ def test_real_frames_point_where_independent_solutions_say(real_frames, name, ho
     assert solution.scale_arcsec_px == pytest.approx(scale, rel=2e-3)
     assert not solution.mirrored
     assert solution.how == how
+    assert solution.rms_px < 0.25  # of stretched, compressed pictures
 
 
 @pytest.mark.slow
