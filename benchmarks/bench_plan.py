@@ -18,6 +18,7 @@ from measured import machine, table
 
 from planner.sequence.builder import build_plan
 from planner.sequence.documents import dump_plan, load_brief
+from planner.sequence.equipment import Filter, Guiding
 from planner.sequence.models import Brief
 
 CONFIGS = Path(__file__).resolve().parent.parent / "configs"
@@ -81,6 +82,16 @@ def main() -> None:
         seconds = cpu_s(lambda brief=brief: build_plan(brief))
         days = (plan.passages[-1].shots[0].start_utc - plan.passages[0].shots[0].start_utc).days
         rows.append((f"campaign of {days} days, {len(plan.passages)} visits", f"{seconds:.2f}", "", ""))
+    lens, wheel = campaign.rig.optics, [Filter(name=name) for name in ("V", "R", "B")]
+    optics = lens.model_copy(update={"focal_length_mm": 300.0, "aperture_mm": 75.0})
+    rig = campaign.rig.model_copy(update={"optics": optics, "filters": wheel, "guiding": Guiding(on="star")})
+    brief = wished(
+        campaign.model_copy(update={"rig": rig}), mosaic="track", filters=["V", "R", "B"], visits=30
+    )
+    plan = build_plan(brief)
+    seconds = cpu_s(lambda: build_plan(brief))
+    panels = len(plan.visits()[0])
+    rows.append((f"the same, 30 visits of {panels} panels, 3 filters, guided", f"{seconds:.2f}", "", ""))
     plan = build_plan(wished(transit, cadence_s=3.7))
     rows.append(("writing the plan of 5,000 frames as YAML", f"{cpu_s(lambda: dump_plan(plan)):.2f}", "", ""))
     print(machine())

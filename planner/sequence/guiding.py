@@ -14,31 +14,49 @@ _NOT_THE_TARGET_ARCSEC = 60.0
 
 def with_guides(setting: Setting, passages: list[Passage]) -> list[Passage]:
     """Return the passages, each with what to guide on; None where the rig does not guide or finds nothing."""
-    if setting.rig.guiding.on == "none":
+    guiding, reference = setting.rig.guiding, setting.family.reference
+    waiting = [passage for passage in passages if not passage.done]
+    if guiding.on == "none" or not waiting:
         return passages
+    if guiding.on != "star":
+        found: list[str | None] = [
+            f"the {guiding.on.capitalize()}'s limb" if guiding.on == reference else None
+        ] * len(waiting)
+    elif reference == "sun":
+        found = [None] * len(waiting)
+    else:
+        found = _stars(setting, waiting)
+    guides = iter(found)
     return [
-        passage if passage.done else passage.model_copy(update={"guide": _guide(setting, passage)})
+        passage if passage.done else passage.model_copy(update={"guide": next(guides)})
         for passage in passages
     ]
 
 
-def _guide(setting: Setting, passage: Passage) -> str | None:
+def _stars(setting: Setting, passages: list[Passage]) -> list[str | None]:
+    """Return a guide star for each passage, None where there is none in reach or nothing is followed."""
     from planner.sequence.frametimes import aim_place
     from planner.sky.timescale import tt_s_from_datetime
 
-    guiding, reference = setting.rig.guiding, setting.family.reference
-    if guiding.on != "star":
-        return f"the {guiding.on.capitalize()}'s limb" if guiding.on == reference else None
-    if reference == "sun" or passage.aim == "ground":
-        return None
-    tt_s = float(tt_s_from_datetime(min(shot.start_utc for shot in passage.shots)))
-    geometry = setting.geometry(np.array([tt_s]))
-    target = tuple(float(each[0]) for each in aim_place(geometry, geometry.target))
-    if passage.aim == "field":
-        aim = (passage.aim_ra_deg or 0.0, passage.aim_dec_deg or 0.0)
-    else:
-        aim = tuple(float(each[0]) for each in aim_place(geometry, passage.aim))  # type: ignore[assignment]
-    return guide_star(aim, target, guiding.reach_deg, guiding.faintest_mag, tt_s)  # type: ignore[arg-type]
+    tt_s = np.atleast_1d(
+        tt_s_from_datetime([min(shot.start_utc for shot in passage.shots) for passage in passages])
+    )
+    geometry = setting.geometry(tt_s)
+    target = aim_place(geometry, geometry.target)
+    found: list[str | None] = []
+    for row, passage in enumerate(passages):
+        if passage.aim == "ground":
+            found.append(None)
+            continue
+        if passage.aim == "field":
+            aim = (passage.aim_ra_deg or 0.0, passage.aim_dec_deg or 0.0)
+        else:
+            ra_deg, dec_deg = aim_place(geometry, passage.aim)
+            aim = (float(ra_deg[row]), float(dec_deg[row]))
+        here = (float(target[0][row]), float(target[1][row]))
+        guiding = setting.rig.guiding
+        found.append(guide_star(aim, here, guiding.reach_deg, guiding.faintest_mag, float(tt_s[row])))
+    return found
 
 
 @lru_cache(maxsize=512)

@@ -76,6 +76,12 @@ class Wish(Model):
     exposure_s: float | None = Field(default=None, gt=0, description="default: from the brightness")
     gain: float | None = Field(default=None, ge=0, description="default: chosen among the sensor's gains")
     well_fraction: float = Field(default=0.5, gt=0, lt=1, description="peak signal over saturation")
+    signal_to_noise: float | None = Field(
+        default=None,
+        gt=0,
+        le=10000,
+        description="wanted of a disc's brightest pixel or of a star; no longer exposure is made than it needs",
+    )
     trail_px: float = Field(default=1.0, gt=0, description="longest trail borne in a frame")
     cadence_s: float | None = Field(
         default=None, gt=0, description="of regular frames; default: from the motion"

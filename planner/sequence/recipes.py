@@ -89,6 +89,8 @@ def _through_one(setting: Setting, geometry: Geometry, target_hidden: bool) -> l
         name, rate, tracked = main
         gain = setting.gain_for_bright()
         wanted = exposure.wanted_exposure_s(setting.rig, rate, setting.wish.well_fraction, gain)
+        if setting.wish.signal_to_noise is not None:
+            wanted = np.minimum(wanted, _for_signal_s(setting, geometry, rate, gain))
         found.append(
             Recipe("main", name, rate, tracked, _bounded(setting, moving, wanted), gain, tracking, moving)
         )
@@ -105,6 +107,22 @@ def _through_one(setting: Setting, geometry: Geometry, target_hidden: bool) -> l
     if not found:
         raise InputError(f"event.family: {setting.family.name} shows neither a disc nor a star to expose for")
     return found
+
+
+def _for_signal_s(setting: Setting, geometry: Geometry, rate_e_s: np.ndarray, gain: float) -> np.ndarray:
+    """Return the exposures in which a pixel of this rate reaches the signal-to-noise that is wished for."""
+    sensor = setting.rig.sensor
+    sky = np.zeros_like(rate_e_s)
+    if geometry.reference != "sun":
+        sky = radiometry.sky_rate_e_s_px(
+            setting.through, setting.sky_mag_arcsec2(geometry), setting.scale_arcsec_px
+        )
+    read_e = radiometry.at_gain(setting.rig, gain).read_noise_e
+    wanted = setting.wish.signal_to_noise or LEAST_SIGNAL_TO_NOISE
+    seconds = exposure.time_for_signal_to_noise_s(
+        rate_e_s, sky + sensor.dark_e_s, np.full_like(rate_e_s, read_e**2), wanted
+    )
+    return np.clip(seconds, sensor.min_exposure_s, sensor.max_exposure_s)
 
 
 def _star_recipe(
@@ -207,7 +225,10 @@ def _faint_target(
         if float(np.median(reached)) >= LEAST_SIGNAL_TO_NOISE:
             return None
     wanted = exposure.time_for_signal_to_noise_s(
-        total, pixels * (sky + rig.sensor.dark_e_s), pixels * noise_e**2, 2 * LEAST_SIGNAL_TO_NOISE
+        total,
+        pixels * (sky + rig.sensor.dark_e_s),
+        pixels * noise_e**2,
+        setting.wish.signal_to_noise or 2 * LEAST_SIGNAL_TO_NOISE,
     )
     full = exposure.wanted_exposure_s(rig, peak, setting.wish.well_fraction, setting.gain_for_faint())
     return name, peak, tracked, np.minimum(wanted, full)

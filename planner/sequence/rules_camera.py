@@ -161,6 +161,30 @@ def too_faint(case: Case) -> Iterator[Finding]:
                 return
 
 
+def signal_short(case: Case) -> Iterator[Finding]:
+    """The signal-to-noise that is wished for is not reached within saturation, trailing and what the camera can do."""
+    rig, wanted = case.plan.rig, case.setting.wish.signal_to_noise
+    if wanted is None or case.setting.family.campaign:
+        return
+    for passage in case.plan.passages:
+        for shot in passage.shots:
+            if passage.done or shot.peak_e is None or shot.peak_of not in case.sky.discs:
+                continue
+            read_e = radiometry.at_gain(rig, shot.gain).read_noise_e
+            reached = shot.peak_e / np.sqrt(shot.peak_e + read_e**2)
+            if reached < 0.9 * wanted:
+                yield Finding(
+                    rule="signal-short",
+                    level="caution",
+                    where=f"{passage.name}, {shot.name}",
+                    sentence=f"The brightest pixel reaches a signal-to-noise of {reached:.0f}; "
+                    f"{wanted:g} is asked for.",
+                    cure="Raise well_fraction or trail_px, track better, or stack "
+                    f"{np.ceil((wanted / reached) ** 2):.0f} frames.",
+                )
+                return
+
+
 def no_exposure_does_both(case: Case) -> Iterator[Finding]:
     """The bright body and the faint things about it cannot be had in one exposure."""
     doubles = [
@@ -244,6 +268,7 @@ RULES = (
     battery_short,
     saturates,
     too_faint,
+    signal_short,
     no_exposure_does_both,
     planet_clipped,
     sampling_poor,

@@ -70,7 +70,7 @@ def star_frames(
         radiometry.rate_e_s(through, radiometry.extinguished(faintest, mass, site.extinction_mag)),
         pixels * (sky + sensor.dark_e_s),
         pixels * read_e**2,
-        STAR_SIGNAL_TO_NOISE,
+        wish.signal_to_noise or STAR_SIGNAL_TO_NOISE,
     )
     longest_s = np.minimum.reduce(
         [

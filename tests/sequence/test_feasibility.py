@@ -55,6 +55,7 @@ PROVOKED = [
     ("battery-short", "caution", TRANSIT, {"power": {"battery_wh": 50.0, "draw_w": 30.0}}),
     ("saturates", "caution", TRANSIT, {"wish": {"exposure_s": 0.05}}),
     ("too-faint", "caution", OCCULTATION, {"wish": {"exposure_s": 0.00012}}),
+    ("signal-short", "caution", TRANSIT, {"wish": {"signal_to_noise": 300.0}}),
     ("rolling-shutter", "caution", TRANSIT, {"sensor": {"shutter": "rolling", "rolling_readout_s": 0.1}}),
     ("sampling-poor", "note", TRANSIT, {"site": {"seeing_arcsec": 12.0}}),
     ("planet-clipped", "note", CAMPAIGN, {}),

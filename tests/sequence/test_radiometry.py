@@ -206,3 +206,16 @@ def test_saturns_globe_has_the_surface_brightness_that_handbooks_give():
     area = np.pi * disc.semidiameter_arcsec**2 * (1 - disc.flattening)
     assert disc.globe_magnitude + 2.5 * np.log10(area) == pytest.approx(6.9, abs=0.15)
     assert disc.globe_magnitude - disc.magnitude > 0.8
+
+
+def test_a_signal_to_noise_may_be_wished_for():
+    """A signal-to-noise of 50 takes 2500 electrons and a few for the read noise; two digits are kept of exposures."""
+    from planner.sequence.builder import build_plan
+
+    plan = build_plan(changed(example(TRANSIT), wish={"signal_to_noise": 50.0}))
+    for passage in plan.passages:
+        for shot in passage.shots:
+            assert shot.peak_e / np.sqrt(shot.peak_e + plan.rig.sensor.read_noise_e**2) == pytest.approx(
+                50, rel=0.12
+            )
+    assert "signal-short" not in {finding.rule for finding in plan.findings}
