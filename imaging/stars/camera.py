@@ -250,7 +250,8 @@ def fit_camera(
     robust = robust and count >= _ROBUST_STARS
     for iteration in range(iterations):
         residual, jacobian = linearised(camera, x_px, y_px, vectors)
-        if robust and (iteration or start.terms):  # a start without terms is a guess, whose residuals say nothing
+        # a start without terms is a guess, whose residuals say nothing
+        if robust and (iteration or start.terms):
             sigma_model = _extra_scatter(residual, sigma_px)
             weight = 6.0 / (4.0 + (residual**2).sum(axis=1) / (sigma_px**2 + sigma_model**2))
         root = np.sqrt(weight / (sigma_px**2 + sigma_model**2))[:, None, None]
