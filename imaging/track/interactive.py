@@ -149,6 +149,9 @@ def _styled(**options):  # type: ignore[no-untyped-def]
         axis.axis_label_text_color = axis.major_label_text_color = INK
         axis.axis_line_color = axis.major_tick_line_color = axis.minor_tick_line_color = PALE
         axis.axis_label_text_font_style = "normal"
+    if options.get("x_axis_type") == "datetime":
+        plot.xaxis.ticker.desired_num_ticks = 4  # as many as fit on a phone
+        plot.xaxis.formatter = _dates()
     plot.grid.grid_line_color = PALE
     plot.grid.grid_line_alpha = 0.25
     plot.toolbar.logo = None
@@ -196,8 +199,6 @@ def _residuals(result: CheckResult, source):  # type: ignore[no-untyped-def]
         )
         plot.add_tools(HoverTool(renderers=[points], tooltips=_TIPS))
         plot.yaxis.axis_label = f"O − C {part} (arcsec)"
-        plot.xaxis.ticker.desired_num_ticks = 4
-        plot.xaxis.formatter = _dates()
         beyond = sum(not low <= value <= high for value in source.data[part])
         if beyond:
             plot.title.text = (

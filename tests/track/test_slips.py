@@ -48,6 +48,38 @@ def test_a_slip_in_rendered_frames_is_named(tmp_path, capsys, brief, options, na
     assert told["findings"][0]["sentence"].replace("`", "") in re.sub("</?code>", "", page)
 
 
+FAULTS = [
+    (TRANSIT, "--frames 10 --binning 8 --clock-offset 1800", {}, ["zone"]),
+    (TRANSIT, "--frames 10 --binning 8 --clock-offset 3607.3", {}, ["zone"]),
+    (TRANSIT, "--frames 12 --binning 8 --clock-offset 60", {}, ["clock-offset"]),
+    (TRANSIT, "--frames 16 --binning 8 --clock-drift 600", {}, ["clock-drift"]),
+    (TRANSIT, "--frames 10 --binning 8", {"focal_length_mm: 1000.0": "focal_length_mm: 1015.0"}, ["scale"]),
+    (TRANSIT, "--frames 10 --binning 8 --pointing-error 200 --drift 60", {}, []),
+    (MOON, "--frames 24 --binning 4 --from-site 35.43,32.87,1420", {}, ["site-displaced"]),
+]
+
+
+@pytest.mark.parametrize(("brief", "options", "changed", "names"), FAULTS)
+def test_a_fault_in_rendered_frames_is_named(tmp_path, capsys, brief, options, changed, names):
+    """Also: a mount that points and tracks badly is no finding, because places count from the disc."""
+    plan, frames = tmp_path / "p.plan.yaml", tmp_path / "frames"
+    assert run_with(["plan", str(ROOT / "configs" / f"{brief}.yaml"), "-o", str(plan)]) == 0
+    assert run_with(["rehearse", str(plan), "-o", str(frames), "--quiet", *options.split()]) == 0
+    text = plan.read_text(encoding="utf-8")
+    for old, new in changed.items():
+        assert old in text
+        text = text.replace(old, new)
+    plan.write_text(text, encoding="utf-8")
+    capsys.readouterr()
+    run_with(["check", str(plan), str(frames), "-o", str(tmp_path / "out"), "--json", "--no-pictures"])
+    told = json.loads(capsys.readouterr().out)
+    found = [finding["name"] for finding in told["findings"]]
+    assert set(names) <= set(found), told["findings"]
+    assert names or not found
+    page = html.unescape((tmp_path / "out" / "report.html").read_text(encoding="utf-8"))
+    assert all(f"<b>{name}</b>" in page for name in names)
+
+
 def test_the_stated_sigma_of_the_clock_holds_when_seeing_moves_the_limb(tmp_path, capsys):
     """Ten frames with 0.7 arcsec of limb motion, eight times: no pull beyond 3.5, and their spread near 1.
 
