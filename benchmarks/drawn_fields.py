@@ -115,7 +115,8 @@ def draw(
     # stars that the catalogue lacks: counts grow 2.5 times a magnitude (Allen's Astrophysical Quantities, from memory)
     on = (x > 0) & (x < rig.width_px) & (y > 0) & (y < rig.height_px)
     number = min(rng.poisson(max(on.sum(), 3) * (2.5 ** max(rig.limit_mag - 10.0, 0) - 1)), 4500)
-    faint = np.minimum(10.0 + rng.exponential(1.0, number) / np.log(2.5) * 0.9, rig.limit_mag)
+    bright, dim = 2.5**10.0, 2.5 ** max(rig.limit_mag, 10.0)
+    faint = np.log(bright + rng.random(number) * (dim - bright)) / np.log(2.5)
     x, y = (
         np.append(x, rng.uniform(0, rig.width_px, number)),
         np.append(y, rng.uniform(0, rig.height_px, number)),
