@@ -194,11 +194,12 @@ def _canvas(material: Material, choices: Choices, light: Light) -> tuple[tuple[f
     )
     scale = choices.scale_arcsec_px or min(frame.scale_arcsec_px for frame in frames)
     east, north = sky_to_plane(*anchor, ra, dec)
-    extent = max(float(np.ptp(east)), float(np.ptp(north)), 200 * scale)
+    length = max(float(np.ptp(east)), float(np.ptp(north)))
+    extent = max(length, 200 * scale)
     middle = frames[len(frames) // 2]
     up = up_pa_deg(material, choices.orientation, anchor, middle.tt_s, on_disc=False)
     field = _field(middle, anchor, light)
-    if field is not None and extent < 0.35 * min(np.ptp(field[0]), np.ptp(field[1])):
+    if field is not None and length < 0.35 * min(np.ptp(field[0]), np.ptp(field[1])):
         return anchor, canvas_around(*field, 0.0, scale, up, choices.largest_px)
     return anchor, canvas_around(east, north, 0.22 * extent, scale, up, choices.largest_px)
 

@@ -16,6 +16,7 @@ from imaging.compose.stretch import background
 from imaging.discs.limb import fit_limb
 from planner.cli.main import run_with
 from planner.sequence.documents import load_plan
+from tests.compose.conftest import rehearse
 
 
 def material_of(rehearsal, **options):
@@ -101,6 +102,24 @@ def test_the_path_of_mars_has_one_place_a_visit_and_none_in_the_ground(loop):
     for item in picture.drawn:
         assert picture.image[round(item.y_px), round(item.x_px)] > 20 * background(picture.image)[1]
         assert item.displacement_arcsec < 0.1 * picture.canvas.scale_arcsec_px
+
+
+def test_a_short_path_is_shown_in_the_field_of_a_frame_with_what_it_passes(tmp_path):
+    """Venus moves by an arcminute in a field of a degree; Jupiter stays in the picture when a frame holds it."""
+    rehearsal = rehearse(tmp_path, "planets_meet_2028", "--binning", "8", "--frames", "4")
+    material = material_of(rehearsal)
+    picture = compose_picture(material, Choices())
+    rows, columns = fits.getdata(material.frames[0].path).shape
+    assert picture.image.size > 0.5 * rows * columns
+    assert np.isfinite(picture.image).mean() > 0.99
+    pointing, disc = material.frames[2].pointing, material.geometry.discs["jupiter"]
+    x, y = pointing.sky_to_pixel(disc.ra_deg[2:3], disc.dec_deg[2:3])
+    held = bool((0 < x) & (x < columns) & (0 < y) & (y < rows))
+    place = picture.canvas.from_sky(
+        picture.anchor_ra_deg, picture.anchor_dec_deg, float(disc.ra_deg[2]), float(disc.dec_deg[2])
+    )
+    shown = 0 < place[0] < picture.canvas.width_px and 0 < place[1] < picture.canvas.height_px
+    assert shown == held
 
 
 def test_compose_writes_what_it_says_and_readers_agree(transit, tmp_path, capsys):
