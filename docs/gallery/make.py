@@ -25,7 +25,7 @@ CONFIGS = HERE.parent.parent / "configs"
 class Journey:
     """A brief, options of `rehearse`, pictures (name: options of `compose`), options of `timelapse`.
 
-    `site`, `rig`: others than the brief's. `path`: which version of the path plot is kept.
+    `site`: another than the brief's. `path`: which version of the path plot is kept.
     """
 
     name: str
@@ -34,7 +34,6 @@ class Journey:
     pictures: dict[str, tuple[str, ...]]
     film: tuple[str, ...] = ()
     site: Path | None = None
-    rig: Path | None = None
     path: str = "light"
     needs: tuple[str, ...] = field(default=())
 
@@ -74,7 +73,7 @@ JOURNEYS = (
         "mars",
         CONFIGS / "mars_retrograde_2027.yaml",
         ("--frames", "80", "--binning", "2"),
-        {"mars": ()},
+        {"mars": ("--scale", "16")},
         ("--fps", "8", "--size", "480x270"),
     ),
     Journey(
@@ -98,14 +97,6 @@ JOURNEYS = (
         {"arc": ("--landscape", "{work}/plate.png", "--view", "245,40,1015", "--instants", "16", "--grid", "altaz")},
         ("--fps", "8", "--size", "480x270"),
     ),
-    Journey(
-        "phases",
-        HERE / "venus_phases.yaml",
-        ("--thin", "2"),
-        {"phases": ("--register", "target", "--instants", "12", "--enlarge", "4")},
-        site=CONFIGS / "sites" / "kestrel_ridge.yaml",
-        rig=HERE / "lens_400mm.yaml",
-    ),
 )  # fmt: skip
 
 
@@ -126,7 +117,7 @@ def shown(picture: Path, name: str, longest_px: int, quality: int = 88) -> None:
         image.save(HERE / f"{name}.jpg", quality=quality, optimize=True)
 
 
-def detail(folder: Path, name: str, half_px: int = 130) -> None:
+def detail(folder: Path, name: str, half_px: int = 110) -> None:
     """Keep pieces of the picture at 100 %: about three of the places drawn."""
     drawn = json.loads((folder / "composite.truth.json").read_text())
     with Image.open(folder / "composite.png") as image:
@@ -166,7 +157,6 @@ def make(journey: Journey, work: Path) -> None:
     """Go one journey and keep what the page shows."""
     plan, track, frames = _files(work, journey.name)
     place = ["--site", str(journey.site)] if journey.site else []
-    place += ["--rig", str(journey.rig)] if journey.rig else []
     step(plan, "plan", str(journey.brief), "-o", str(plan), *place)
     step(
         frames.with_name(f"{frames.name}.truth.ecsv"),
@@ -185,6 +175,7 @@ def make(journey: Journey, work: Path) -> None:
     for picture, options in journey.pictures.items():
         folder = work / f"{picture}_pic"
         asked = [words.get(option, option.replace("{work}", str(work))) for option in options]
+        asked += ["--formats", "png", "--plots", "png", "--dpi", "160", "--no-page"]
         step(folder / "composite.truth.json", "compose", *common, "-o", str(folder), *asked)
         shown(folder / "composite.png", picture, 1400)
         statement = json.loads((folder / "composite.truth.json").read_text())
