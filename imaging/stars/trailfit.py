@@ -99,7 +99,7 @@ def _fit_chunk(
             light = (stamp * model).sum(axis=(1, 2)) / np.maximum((model * model).sum(axis=(1, 2)), 1e-30)
             values[:, 0] = np.maximum(light, 0.0)
         expected = values[:, 0, None, None] * model
-        variance = noise[:, None, None] ** 2 + (expected / gain_e_adu if gain_e_adu else 0.0)
+        variance = noise[:, None, None] ** 2 + (np.maximum(expected, 0) / gain_e_adu if gain_e_adu else 0.0)
         weight = near / variance
         rest = stamp - expected
         cost = (weight * rest**2).sum(axis=(1, 2)) + np.where(near, np.log(variance), 0.0).sum(axis=(1, 2))
