@@ -36,7 +36,7 @@ class Sheet:
 
 
 INSTANT_HEAD = ("instant", "UTC", "local", "±", "PA", "alt", "az", "")
-PASSAGE_HEAD = ("passage", "from UTC", "local", "frames", "every", "exposure", "gain", "filter")
+PASSAGE_HEAD = ("passage", "from UTC", "local", "frames", "every", "exposure", "gain", "filter", "guide on")
 STEP_HEAD = ("", "by UTC", "local", "do")
 
 
@@ -121,6 +121,7 @@ def _passage_row(passage, zone: str, campaign: bool) -> SheetRow:  # type: ignor
             exposure_range_text([shot.exposure_s for shot in passage.shots]),
             "/".join(f"{gain:g}" for gain in gains),
             "/".join(filters),
+            passage.guide or "",
         ),
         strong=passage.shots[0].cadence_s < 5 and not campaign,
     )
@@ -144,7 +145,14 @@ def _step_rows(outlook: Outlook) -> tuple[SheetRow, ...]:
     first = min(shot.start_utc for shot in waiting[0].shots)
     before = [step for step in plan.steps if step.start_utc < first]
     rows = [
-        SheetRow(("☐", f"{(first - step.start_utc).total_seconds() / 60:.0f} min before", "", step.text))
+        SheetRow(
+            (
+                "☐",
+                f"{(first - step.start_utc).total_seconds() / 60:.0f} min before",
+                "",
+                step.text.replace(f"guide on {waiting[0].guide}", "guide on what is named for the visit"),
+            )
+        )
         for step in before
     ]
     return (*rows, SheetRow(("☐", "afterwards", "", "cover the optics; calibration frames; copy the data")))

@@ -74,7 +74,9 @@ def sheet_figure(outlook: Outlook) -> Any:
     page.gap(0.3)
     page.text("Frames", size=9, weight="bold")
     if len(sheet.passages) <= min(_ONE_COLUMN, page.rows_left(_LARGE) - 1):
-        page.table(PASSAGE_HEAD, sheet.passages, (0.0, 0.24, 0.42, 0.58, 0.65, 0.72, 0.88, 0.94))
+        # what to guide on is in the steps and in the HTML sheet
+        rows = tuple(SheetRow(row.cells[:8], row.strong) for row in sheet.passages)
+        page.table(PASSAGE_HEAD[:8], rows, (0.0, 0.24, 0.42, 0.58, 0.65, 0.72, 0.88, 0.94))
     else:
         _two_columns(page, sheet.passages)
     page.foot(sheet.foot)

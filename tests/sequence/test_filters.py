@@ -83,7 +83,7 @@ def test_flats_are_listed_for_every_filter_used(transit):
 def test_sheet_table_and_script_name_the_filter_of_each_frame(transit):
     sheet = sheet_of(Outlook(transit))
     crossing = next(row for row in sheet.passages if row.cells[0].startswith("crossing"))
-    assert crossing.cells[-1] == "V/R/narrow"
+    assert crossing.cells[7] == "V/R/narrow"
     steps = " ".join(row.cells[-1] for row in sheet.steps)
     assert "in turn V, R, narrow (focus anew after narrow); check the focuser's offsets" in steps
     rows = list(csv.DictReader(io.StringIO(frames_csv(Outlook(transit)))))

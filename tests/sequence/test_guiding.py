@@ -40,8 +40,14 @@ def test_guiding_on_a_star_lets_the_moon_trail():
     assert trails[1] > 2 * trails[0]
 
 
-def test_a_star_is_named_for_each_visit():
+def test_a_star_is_named_for_each_visit_in_plan_and_sheet():
+    from planner.sequence.outlook import Outlook
+    from planner.sequence.sheet import sheet_of
+
     plan = build_plan(
         changed(example(CAMPAIGN), guiding={"on": "star", "reach_deg": 2.0}, wish={"visits": 6})
     )
     assert all(passage.guide and "arcmin from the middle" in passage.guide for passage in plan.passages)
+    sheet = sheet_of(Outlook(plan))
+    assert [row.cells[-1] for row in sheet.passages] == [passage.guide for passage in plan.passages]
+    assert any("guide on what is named for the visit" in row.cells[-1] for row in sheet.steps)
