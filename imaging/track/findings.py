@@ -209,7 +209,7 @@ def _readings(s: Sightings, q: Question):  # type: ignore[no-untyped-def]
     if s.on_disc:
         yield tried("mirrored", q.path, log_prior=SLIP, sightings=s.mirrored(), sentence=_MIRRORED)
     for body, path in q.other_bodies.items():
-        sentence = f"What was measured moves as {body} does: it is {body}, not {q.target}."
+        sentence = f"What was measured moves as {body.title()} does: it is {body.title()}, not {q.target}."
         yield tried("wrong-body", path, log_prior=SLIP - np.log(8.0), sentence=sentence)
     still = _still_path(s, q.path)
     if still is not None and len(s) >= 3:
