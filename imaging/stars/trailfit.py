@@ -84,15 +84,17 @@ def _fit_chunk(
     x0, y0 = np.rint(values[:, 1]), np.rint(values[:, 2])
     stamp, peak, noise, reach = stamps_of(data, sky, x0, y0, radius)
     near = _near_line(reach, values[:, 1] - x0, values[:, 2] - y0, values)
-    highest = np.where(near, stamp, -np.inf).max(axis=(1, 2)) + peak - stamp.max(axis=(1, 2))
-    saturated = highest >= (np.inf if saturation_adu is None else 0.98 * saturation_adu)
+    raw = stamp + (peak - stamp.max(axis=(1, 2)))[:, None, None]
+    full = near & (raw >= (np.inf if saturation_adu is None else 0.98 * saturation_adu))
+    saturated = full.any(axis=(1, 2))
+    near &= ~full
     values = values.copy()
     values[:, 1] -= x0
     values[:, 2] -= y0
     best = values.copy()
     damping = np.full(len(values), 1e-3 if free > 3 else 0.0)
     last = np.full(len(values), np.inf)
-    normal = np.zeros((len(values), free, free))
+    normal, chi2 = np.zeros((len(values), free, free)), np.zeros(len(values))
     for turn in range(rounds):
         model, slopes = profile(reach, values, free)
         if turn == 0:  # light by linear fit at the first place
@@ -102,7 +104,8 @@ def _fit_chunk(
         variance = noise[:, None, None] ** 2 + (np.maximum(expected, 0) / gain_e_adu if gain_e_adu else 0.0)
         weight = near / variance
         rest = stamp - expected
-        cost = (weight * rest**2).sum(axis=(1, 2)) + np.where(near, np.log(variance), 0.0).sum(axis=(1, 2))
+        chi2 = (weight * rest**2).sum(axis=(1, 2))
+        cost = chi2 + np.where(near, np.log(variance), 0.0).sum(axis=(1, 2))
         better = cost <= last
         best[better], last[better] = values[better], cost[better]
         damping = np.where(better, damping * 0.3, np.maximum(damping, 1e-4) * 10)
@@ -133,6 +136,9 @@ def _fit_chunk(
         scale = np.sqrt(np.maximum(np.einsum("naa->na", normal), 1e-30))
         scaled = normal / scale[:, :, None] / scale[:, None, :] + 1e-10 * np.eye(free)
         covariance = np.linalg.inv(scaled) / scale[:, :, None] / scale[:, None, :]
+        # what the profile does not explain is no noise of the sky's, but it moves the place all the same
+        unexplained = chi2 / np.maximum(near.sum(axis=(1, 2)) - free, 1)
+        covariance *= np.where(saturated, np.maximum(unexplained, 1.0), 1.0)[:, None, None]
     values[:, 1] += x0
     values[:, 2] += y0
     return values, covariance, saturated

@@ -7,6 +7,7 @@ from typing import Any
 
 import numpy as np
 
+from imaging.discs.on_trail import planet_on_trail
 from imaging.discs.outline import pixel_angle_deg
 from imaging.discs.planet import Body, DiscPlace, planet_among_stars
 from imaging.frames.frame import Frame
@@ -116,11 +117,21 @@ class AmongStars:
     ) -> DiscPlace:
         """Place the planet near its prediction; or, where a far brighter stranger stands elsewhere, place that."""
         strangers = _strangers(found, solution)
-        options: dict[str, Any] = {
-            "fwhm_px": float(found.psf_fwhm_px),
-            "saturation": frame.saturation_adu,
-            "gain_e_adu": frame.gain_e_adu,
-        }
+
+        def placed(x: float, y: float, search_px: float) -> DiscPlace:
+            if found.trailed:
+                return planet_on_trail(found, x, y, body, search_px)
+            return planet_among_stars(
+                frame.data,
+                x,
+                y,
+                body,
+                float(found.psf_fwhm_px),
+                search_px,
+                frame.saturation_adu,
+                frame.gain_e_adu,
+            )
+
         search = max(NEAR_ARCSEC / solution.scale_arcsec_px, 6.0)
         away = np.hypot(found.x_px[strangers] - predicted[0], found.y_px[strangers] - predicted[1])
         if strangers.size and not (away[0] < search):
@@ -130,8 +141,8 @@ class AmongStars:
             )
             if brighter:
                 x, y = float(found.x_px[strangers[0]]), float(found.y_px[strangers[0]])
-                return planet_among_stars(frame.data, x, y, body, search_px=3.0, **options)
-        return planet_among_stars(frame.data, *predicted, body, search_px=search, **options)
+                return placed(x, y, 3.0)
+        return placed(*predicted, search)
 
 
 def _zero_point_adu(found: Detections, solution: PlateSolution, target: tuple[float, float]) -> float:
