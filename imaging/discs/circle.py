@@ -12,6 +12,7 @@ from planner.errors import NoSolutionError
 
 # Sectors further apart than this never count as moving together.
 _MOST_LAGS = 12
+_WAVES = range(2, 5)
 
 
 @dataclass(frozen=True)
@@ -85,7 +86,13 @@ def fit_circle(
     bread = np.linalg.inv(design.T @ (design * slope[:, None]) + np.diag(extra) + 1e-12 * np.eye(3))
     covariance = bread
     if correlated:
-        covariance = bread @ (_shared(design, base * weight, residual, good) + np.diag(extra)) @ bread
+        middle = _shared(design, base * weight, residual, good)
+        apart = (design * (base * weight * residual)[:, None] ** 2).T @ design
+        most = float(np.trace(middle) / max(np.trace(apart), 1e-300))
+        middle = middle * max(
+            1.0, _slow_waves(angle, design, np.sqrt(base * weight), residual) / max(most, 1e-9)
+        )
+        covariance = bread @ (middle + np.diag(extra)) @ bread
     return CircleFit(
         x + float(solution[0]), y + float(solution[1]), radius + float(solution[2]), covariance, used, left, rms
     )  # fmt: skip
@@ -108,6 +115,24 @@ def _shared(design: np.ndarray, weight: np.ndarray, residual: np.ndarray, good: 
         part = np.roll(moment, -lag, axis=0).T @ moment
         total += (1 - lag / (lags + 1)) * (part + part.T)
     return total * count / max(count - 3 * (lags + 1), 0.3 * count)
+
+
+def _slow_waves(angle: np.ndarray, design: np.ndarray, root: np.ndarray, residual: np.ndarray) -> float:
+    """Return the power of the residuals in slow waves along the limb over that in all: 1 for independent sectors.
+
+    Clouds, spots and seeing move the limb slowly along it, and what moves a centre is the slowest wave of all, which no
+    residual shows: the next ones, two to four waves a turn, tell what to expect of it.
+    """
+    waves = np.concatenate([[np.cos(m * angle), np.sin(m * angle)] for m in _WAVES]).T
+    basis, _ = np.linalg.qr(design * root[:, None])
+    waves = waves * root[:, None]
+    left = waves - basis @ (basis.T @ waves)
+    u, size, _ = np.linalg.svd(left, full_matrices=False)
+    # on a short arc some waves are what a circle can do, or what another wave is
+    u = u[:, size > 0.2 * size.max()]
+    scaled = root * residual
+    freedom = max(angle.size - 3, 1)
+    return float(np.mean((u.T @ scaled) ** 2) / max(float(scaled @ scaled) / freedom, 1e-300))
 
 
 def _lags(left: np.ndarray, count: int) -> int:
