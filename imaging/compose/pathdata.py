@@ -21,6 +21,7 @@ from planner.sky.places import north_of_date_pa_deg
 from planner.sky.timescale import datetime_from_tt_s
 
 PATH_POINTS = 721
+STANDS_STILL_ARCSEC = 2.0
 # Steps of time ticks in seconds, or days for campaigns: round to who reads a clock or a calendar
 _STEPS_S = (10, 30, 60, 120, 300, 600, 900, 1800, 3600, 7200, 10800, 21600, 43200)
 _STEPS_DAYS = (1, 2, 5, 10, 15, 30, 60, 90)
@@ -266,7 +267,9 @@ def _site_line(material: Material) -> str:
 
 
 def time_ticks(tt_s: np.ndarray, line: np.ndarray, zone: tzinfo, campaign: bool) -> tuple[TimeTick, ...]:
-    """Return about ten ticks at round instants of the zone."""
+    """Return about ten ticks at round instants of the zone; none along a path that is a point."""
+    if np.ptp(line, axis=1).max() < STANDS_STILL_ARCSEC:
+        return ()
     start: datetime = datetime_from_tt_s(float(tt_s[0])).astimezone(zone)  # type: ignore[union-attr]
     span = float(tt_s[-1] - tt_s[0])
     if campaign:

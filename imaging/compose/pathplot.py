@@ -11,7 +11,7 @@ from typing import Any
 import numpy as np
 
 from imaging.compose.palette import DARK, LIGHT, Palette
-from imaging.compose.pathdata import PathData
+from imaging.compose.pathdata import STANDS_STILL_ARCSEC, PathData
 from imaging.compose.plot_marks import (
     arcsec_a_point,
     at_pa,
@@ -110,7 +110,9 @@ def _view(data: PathData) -> View:
         reach = max(1.17, min(away + 0.1, 1.8)) * data.disc_radius_arcsec
         return -reach, reach, -reach, reach
     x, y = data.line
-    length = max(np.ptp(x), np.ptp(y), 60.0)
+    length = max(np.ptp(x), np.ptp(y))
+    # a target that stands still, a star, is shown in its neighbourhood
+    length = max(length, 60.0) if length > STANDS_STILL_ARCSEC else 7200.0
     low, high = float(y.min()), float(y.max())
     if data.horizontal:
         horizon = -data.anchor_deg[1] * 3600.0

@@ -14,12 +14,15 @@ from imaging.compose.ground import falloff, measured_falloff, sky_surface
 from imaging.compose.light import Light, bias_of, exposure_level
 from imaging.compose.matching import edge_weight
 from imaging.compose.material import Camera, Registered
+from imaging.compose.patch import patch_box
 from imaging.compose.plane import plane_to_sky, sky_to_plane
 from imaging.compose.stack import new_stack
 from imaging.frames.frame import Frame
 from planner.errors import FrameSetAside
 
 PATCH_MOST_PX = 60.0
+GLOW_PX = 50.0  # as far as the glow about a burnt-out planet is taken to reach
+TRAIL_PX = 3.0
 
 
 @dataclass(frozen=True)
@@ -108,6 +111,10 @@ def stacked(
     layers, kept, stars, whole = [], [], None, None
     box = _covered(canvas, anchor_deg, groups[0], light)
     window = canvas.window(*box)
+    trails = _moved_px(groups[0], window, anchor_deg) > TRAIL_PX
+    behind = new_stack(
+        "mean", (window.height_px, window.width_px, *planes) if trails else (1, 1), len(groups[0])
+    )
     for number, group in enumerate(groups):
         patch = new_stack("clipped", patch_shape, len(group))
         bright = new_stack("clipped", patch_shape, len(group))
@@ -134,6 +141,10 @@ def stacked(
                 pixels = without_sky(flats[frame.camera].applied(pixels, level.dark), level.dark)
                 if number == 0:
                     image = light.on_canvas(pixels, frame, window, anchor_deg, level)
+                    if trails:
+                        if new:
+                            behind.add(image)
+                        _without_target(image, frame, window, anchor_deg)
                     stack.add(image, edge_weight(image))
                 if not new:
                     continue
@@ -144,12 +155,32 @@ def stacked(
                 kept.append(frame)
         if number == 0:
             stars = stack.result()[0]
+            if trails:  # where the target stood in every frame there is nothing else to show
+                hole = ~np.isfinite(stars)
+                stars[hole] = behind.result()[0][hole]
         layers.append(patch.result()[0])
         whole = bright.result()[0] if last else None
     if not kept or stars is None:
         return None
     kept.sort(key=lambda frame: frame.tt_s)
     return Visit(tuple(kept), stars, box, merged(layers, whole), patch_canvas, target, len(groups))
+
+
+def _moved_px(frames: list[Registered], canvas: Canvas, anchor_deg: tuple[float, float]) -> float:
+    """Return how far the target moves over the picture while the frames last."""
+    places = [canvas.from_sky(*anchor_deg, frame.target_ra_deg, frame.target_dec_deg) for frame in frames]
+    return float(np.hypot(*np.ptp(np.array(places, float), axis=0)))
+
+
+def _without_target(
+    image: np.ndarray, frame: Registered, canvas: Canvas, anchor_deg: tuple[float, float]
+) -> None:
+    """Leave the target and its glow out of a frame of the stars, in place: other frames show what is behind."""
+    x_px, y_px = canvas.from_sky(*anchor_deg, frame.target_ra_deg, frame.target_dec_deg)
+    box = patch_box(image.shape, float(x_px), float(y_px), GLOW_PX)
+    if box is not None:
+        y, x = np.ogrid[box[0], box[1]]
+        image[box][np.hypot(x - x_px, y - y_px) < GLOW_PX] = np.nan
 
 
 def _covered(
