@@ -40,6 +40,12 @@ from planner import errors
     metavar="PLAN",
     help="With --after: the plan it was taken with.",
 )
+@click.option(
+    "--catalogue",
+    type=click.Path(path_type=Path),
+    metavar="FILE",
+    help="A deeper star catalogue, for what will be there to solve with.",
+)
 @click.option("--from", "from_date", metavar="DATE", help="With --after: plan the rest from this date on.")
 @click.option("--strict", is_flag=True, help="Exit with 1 when the plan carries cautions of its rules.")
 @click.option("--force", is_flag=True, help="Replace an output that exists.")
@@ -53,6 +59,7 @@ def command(
     exposures_s: tuple[float, ...],
     after: Path | None,
     old_plan: Path | None,
+    catalogue: Path | None,
     from_date: str | None,
     strict: bool,
     force: bool,
@@ -73,6 +80,7 @@ def command(
     from planner.sequence.builder import build_plans
     from planner.sequence.documents import dump_plan, load_brief, load_plan, load_rig, load_site
     from planner.sequence.feasibility import stop_at_errors
+    from planner.sky.starlist import deeper_catalogue
 
     site = load_site(site_path) if site_path else None
     rig = load_rig(rig_path) if rig_path else None
@@ -90,7 +98,7 @@ def command(
         if old_plan is None:
             raise errors.InputError("--after and --from need --of PLAN: the plan that was being followed")
         taken = taken_from(load_plan(old_plan), after, from_date)
-    with bar("planning", quiet=as_json) as tick:
+    with deeper_catalogue(catalogue), bar("planning", quiet=as_json) as tick:
         plans = build_plans(wanted, tick, taken)
     for plan in plans:
         stop_at_errors(plan)
