@@ -73,6 +73,19 @@ def test_the_calendar_warns_before_each_contact():
         assert timedelta(minutes=-10) in [alarm.decoded("trigger") for alarm in entry.walk("VALARM")]
 
 
+@pytest.mark.parametrize("name", [TRANSIT, OCCULTATION])
+def test_the_calendar_says_the_same_to_another_reader(name):
+    import vobject  # does not share code with the library that writes the calendar
+    from icalendar import Calendar
+
+    text = calendar_text(Outlook(example_plan(name)))
+    own = Calendar.from_ical(text).walk("VEVENT")
+    theirs = vobject.readOne(text.decode() if isinstance(text, bytes) else text).vevent_list
+    assert [(str(e["summary"]), e.decoded("dtstart"), len(e.walk("VALARM"))) for e in own] == [
+        (e.summary.value, e.dtstart.value, len(e.contents.get("valarm", []))) for e in theirs
+    ]
+
+
 def test_the_frame_table_has_a_line_a_frame():
     plan = example_plan(OCCULTATION)
     rows = list(csv.DictReader(io.StringIO(frames_csv(Outlook(plan)))))
