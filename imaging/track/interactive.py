@@ -139,6 +139,7 @@ def _data(result: CheckResult) -> dict[str, np.ndarray]:
 
 
 def _styled(**options):  # type: ignore[no-untyped-def]
+    from bokeh.models import DatetimeTicker
     from bokeh.plotting import figure
 
     tools = "pan,wheel_zoom,box_zoom,tap,reset"
@@ -150,7 +151,7 @@ def _styled(**options):  # type: ignore[no-untyped-def]
         axis.axis_line_color = axis.major_tick_line_color = axis.minor_tick_line_color = PALE
         axis.axis_label_text_font_style = "normal"
     if options.get("x_axis_type") == "datetime":
-        plot.xaxis.ticker.desired_num_ticks = 4  # as many as fit on a phone
+        plot.xaxis.ticker = DatetimeTicker(desired_num_ticks=4)  # as many as fit on a phone
         plot.xaxis.formatter = _dates()
     plot.grid.grid_line_color = PALE
     plot.grid.grid_line_alpha = 0.25
