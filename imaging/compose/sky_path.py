@@ -230,6 +230,9 @@ def _lay(image: np.ndarray, canvas: Canvas, anchor: tuple[float, float], visit: 
     radius_px = glow_radius_px(visit.patch, visit.patch_canvas.anchor_x_px, visit.patch_canvas.anchor_y_px)
     # the feather lies inside the glow: beyond it the patch has only the noise of one visit to add
     x, y = x_px - box[1].start, y_px - box[0].start
+    # where the target stood in every frame of a visit there are no stars to see, only its own frames
+    hole = ~np.isfinite(image[box])
+    image[box][hole] = visit.patch[cut][hole]
     lay_patch(image[box], visit.patch[cut], x, y, 0.55 * radius_px, 0.45 * radius_px)
     places = [
         canvas.from_sky(*anchor, f.predicted_ra_deg, f.predicted_dec_deg) for f in visit.frames if f.measured

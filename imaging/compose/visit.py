@@ -20,8 +20,8 @@ from imaging.compose.stack import new_stack
 from imaging.frames.frame import Frame
 from planner.errors import FrameSetAside
 
-PATCH_MOST_PX = 60.0
-GLOW_PX = 50.0  # as far as the glow about a burnt-out planet is taken to reach
+PATCH_MOST_PX = 90.0
+GLOW_PX = 56.0  # as far as the glow about a burnt-out planet is taken to reach
 TRAIL_PX = 3.0
 
 
@@ -112,9 +112,6 @@ def stacked(
     box = _covered(canvas, anchor_deg, groups[0], light)
     window = canvas.window(*box)
     trails = _moved_px(groups[0], window, anchor_deg) > TRAIL_PX
-    behind = new_stack(
-        "mean", (window.height_px, window.width_px, *planes) if trails else (1, 1), len(groups[0])
-    )
     for number, group in enumerate(groups):
         patch = new_stack("clipped", patch_shape, len(group))
         bright = new_stack("clipped", patch_shape, len(group))
@@ -142,8 +139,6 @@ def stacked(
                 if number == 0:
                     image = light.on_canvas(pixels, frame, window, anchor_deg, level)
                     if trails:
-                        if new:
-                            behind.add(image)
                         _without_target(image, frame, window, anchor_deg)
                     stack.add(image, edge_weight(image))
                 if not new:
@@ -155,9 +150,6 @@ def stacked(
                 kept.append(frame)
         if number == 0:
             stars = stack.result()[0]
-            if trails:  # where the target stood in every frame there is nothing else to show
-                hole = ~np.isfinite(stars)
-                stars[hole] = behind.result()[0][hole]
         layers.append(patch.result()[0])
         whole = bright.result()[0] if last else None
     if not kept or stars is None:
