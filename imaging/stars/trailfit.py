@@ -12,7 +12,7 @@ from imaging.stars.centroids import stamps_of
 
 LONGEST_PX = 250.0
 _PIXEL_VARIANCE = 1 / 12  # of a pixel's own width
-_CHUNK_PIXELS = 2_000_000  # worked on together: bounds the memory
+_CHUNK_PIXELS = 400_000  # worked on together: bounds the memory
 
 
 def shaped(
