@@ -282,7 +282,7 @@ def _fitted(  # type: ignore[no-untyped-def]
     show with the star and without.
     """
     _require_frames(curve)
-    near = _near(curve, kind, window_s)
+    near = _near(curve, expected or kind, window_s)
     _require_frames(near)
     flux, count = near.flux, near.flux.size
     times = _instants(near.start_s, near.exposure_s, window_s)

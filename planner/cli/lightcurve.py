@@ -43,12 +43,25 @@ from planner import errors
     type=click.FloatRange(0.0, min_open=True),
     help="With --start: from one frame's start to the next.",
 )
+@click.option("--diffraction", metavar="M_S,KM[,NM,NM,MAS]",
+              help="Fit an edge's fringes: speed across it, its distance [, wavelength, bandwidth, star].")  # fmt: skip
 @click.option("-o", "--output", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
               help="Write light_curve.ecsv and light_curve.png there.")  # fmt: skip
 @click.option("--json", "as_json", is_flag=True, help="Print the result for a machine.")
 @click.option("--force", is_flag=True, help="Replace outputs that exist.")
 def command(  # type: ignore[no-untyped-def]
-    frames, star, comparison, radius, rolling_readout, zone, start, cadence, output, as_json, force
+    frames,
+    star,
+    comparison,
+    radius,
+    rolling_readout,
+    zone,
+    start,
+    cadence,
+    diffraction,
+    output,
+    as_json,
+    force,
 ) -> int:
     """Time a star that goes out or comes back in FRAMES: files of one frame each, cubes, SER or video.
 
@@ -70,6 +83,8 @@ def command(  # type: ignore[no-untyped-def]
     if output is not None:
         for name in ("light_curve.ecsv", "light_curve.png"):
             refuse_existing(output / name, force)
+    if diffraction is not None:
+        _numbers(diffraction)
     place = _pair("--star", star)
     others = [_pair("--comparison", each) for each in comparison]
     with bar("following the star", quiet=as_json) as tick:
@@ -79,6 +94,8 @@ def command(  # type: ignore[no-untyped-def]
     events, reason = [], None
     try:
         events = list(find_events(followed.curve))
+        if diffraction is not None:
+            events = [_with_fringes(followed.curve, event, _numbers(diffraction)) for event in events]
     except errors.NoSolutionError as none:
         reason = str(none)
     if output is not None:
@@ -121,6 +138,33 @@ def _stamps(start, cadence):  # type: ignore[no-untyped-def]
             f"--start: found {start!r}; allowed is a time with Z or an offset: 2027-08-13T18:52:00Z"
         )
     return Stamps(float(tt_s_from_datetime([moment])[0]), cadence)
+
+
+def _numbers(text: str) -> list[float]:
+    try:
+        numbers = [float(part) for part in text.split(",")]
+    except ValueError:
+        numbers = []
+    if not 2 <= len(numbers) <= 5 or min(numbers) < 0 or min(numbers[:2]) <= 0:
+        raise errors.InputError(
+            f"--diffraction: found {text!r}; allowed is speed in m/s, distance in km [, wavelength, bandwidth in nm, "
+            "diameter of the star in mas]: 620,378000,550,90,2"
+        )
+    return numbers + [550.0, 100.0, 0.0][len(numbers) - 2 :]
+
+
+def _with_fringes(curve, event, numbers):  # type: ignore[no-untyped-def]
+    """Return an event timed by the fringes about where the step was found."""
+    from imaging.discs.lightcurve import fit_fresnel
+
+    speed_m_s, distance_km, wavelength_nm, bandwidth_nm, star_mas = numbers
+    # forty times the first fringe's scale, sqrt(wavelength distance / 2)
+    reach = 40 * (wavelength_nm * 1e-9 * distance_km * 1e3 / 2) ** 0.5 / speed_m_s
+    reach = max(reach, 5 * event.sigma_s)
+    window = event.time_s - reach, event.time_s + reach
+    return fit_fresnel(
+        curve, event.kind, speed_m_s, distance_km * 1e3, wavelength_nm, bandwidth_nm, star_mas, window
+    )
 
 
 def _pair(option: str, text: str) -> tuple[float, float]:

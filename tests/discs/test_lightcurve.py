@@ -182,6 +182,19 @@ def test_fresnel_fit_finds_the_geometric_edge_where_a_step_is_biased():
     assert abs(fit_step(made).time_s - instant) > 2 * abs(fit.time_s - instant)
 
 
+def test_fresnel_fit_finds_a_reappearance_too():
+    generator = np.random.default_rng(5)
+    start, speed, distance, instant = np.arange(400) * 0.002, 600.0, 3.8e8, 0.4013
+    fine = np.linspace(0, 0.002, 21)
+    light = np.mean(
+        [straight_edge((start + shift - instant) * speed, distance, 550, 90) for shift in fine], axis=0
+    )
+    made = LightCurve(start, np.full(start.size, 0.002), 5 + 40 * light + generator.normal(0, 2, start.size))
+    fit = fit_fresnel(made, "reappearance", speed, distance, 550, 90)
+    assert fit.kind == "reappearance"
+    assert fit.time_s == pytest.approx(instant, abs=max(4 * fit.sigma_s, 2e-4))
+
+
 def test_aperture_photometry_takes_off_sky_and_clouds():
     generator = np.random.default_rng(0)
     y, x = np.mgrid[:60, :80]

@@ -75,6 +75,14 @@ def test_rolling_shutter_reads_the_star_later_than_the_frame(tmp_path, capsys):
     assert abs(seconds(rolled["events"][0]) - GONE) < 4 * rolled["events"][0]["sigma_s"]
 
 
+def test_fringes_are_fitted_when_asked_for(tmp_path, capsys):
+    """Frames of 40 ms do not show them: the instant stays where the step has it, to its error."""
+    made = cube(tmp_path / "d.fits")
+    _, told = timed(made, capsys, "--comparison", "26,39", "--diffraction", "620,378000")
+    for event, truth in zip(told["events"], (GONE, BACK), strict=True):
+        assert abs(seconds(event) - truth) < 0.02
+
+
 def test_star_that_shines_on_through_clouds_shows_no_event(tmp_path, capsys):
     made = cube(tmp_path / "n.fits", gone=99.0, back=99.0)
     code, told = timed(made, capsys, "--comparison", "26,39")
@@ -89,6 +97,7 @@ def test_star_that_shines_on_through_clouds_shows_no_event(tmp_path, capsys):
         (["--star", "9999,3"], "allowed is X,Y within the frame"),
         (["--star", "3"], "allowed is X,Y in pixels"),
         (["--star", "61,30", "--start", "2027-08-13T18:52:00"], "both together"),
+        (["--star", "61,30", "--diffraction", "fast"], "allowed is speed in m/s"),
         (["--star", "61,30", "--start", "noon", "--cadence", "1"], "allowed is a time with Z"),
     ],
 )
