@@ -73,7 +73,7 @@ JOURNEYS = (
         "mars",
         CONFIGS / "mars_retrograde_2027.yaml",
         ("--frames", "80", "--binning", "2"),
-        {"mars": ("--scale", "16")},
+        {"mars": ()},
         ("--fps", "8", "--size", "480x270"),
     ),
     Journey(
@@ -93,7 +93,7 @@ JOURNEYS = (
     Journey(
         "arc",
         CONFIGS / "apparition_arc_2027.yaml",
-        ("--frames", "60", "--binning", "2"),
+        ("--frames", "32", "--binning", "2"),
         {"arc": ("--landscape", "{work}/plate.png", "--view", "245,40,1015", "--instants", "16", "--grid", "altaz")},
         ("--fps", "8", "--size", "480x270"),
     ),
