@@ -6,6 +6,7 @@ import json
 import shutil
 
 import numpy as np
+import pytest
 from astropy.io import fits
 
 from planner.cli.main import run_with
@@ -71,3 +72,34 @@ def test_a_wrong_calibration_folder_is_one_line(transit, tmp_path, capsys):
     )
     assert code == 2
     assert "allowed are folders named bias, dark, flat" in capsys.readouterr().err
+
+
+@pytest.mark.slow
+def test_a_check_of_spoiled_frames_is_as_good_as_of_clean_ones_once_they_are_calibrated(
+    transit, tmp_path, monkeypatch
+):
+    from astropy.table import Table
+
+    monkeypatch.setenv("XDG_CACHE_HOME", str(tmp_path / "cache"))
+    shape = fits.getdata(next(iter(sorted(transit.frames.glob("*.fits"))))).shape
+    shade = np.ones(shape) * (1.0 - 0.5 * np.arange(shape[0])[:, None] / shape[0])
+    hot = np.random.default_rng(5).random(shape) < 2e-3
+    spoiled(transit.frames, tmp_path / "frames", shade, hot)
+    night(tmp_path / "night", shape, shade, hot)
+    truth = Table.read(transit.frames.with_name("frames.truth.ecsv"), format="ascii.ecsv")
+    places = {row["file"]: (row["target_x_px"], row["target_y_px"]) for row in truth}
+    code = run_with(
+        ["check", str(transit.plan), str(tmp_path / "frames"), "-o", str(tmp_path / "out"), "--no-pictures",
+         "--calibration", str(tmp_path / "night")]
+    )  # fmt: skip
+    assert code in (0, 1)
+    track = Table.read(tmp_path / "out" / "track.ecsv", format="ascii.ecsv")
+    assert "master flat" in track.meta["provenance"]
+    measured = [row for row in track if row["verdict"] == "on-track"]
+    assert len(measured) >= 8
+    away = [
+        np.hypot(row["x_px"] - places[row["file"]][0], row["y_px"] - places[row["file"]][1])
+        for row in measured
+    ]
+    assert np.median(away) < 0.1
+    assert abs(track.meta["clock_offset_s"]) < 4 * track.meta["clock_offset_sigma_s"]
