@@ -52,7 +52,8 @@ def test_a_global_shutter_exposes_all_rows_at_once():
     assert TIME.at_row(77, 101, "top", Shutter.of(sensor())) is TIME
 
 
-@pytest.mark.parametrize("first", [pytest.param("top", marks=pytest.mark.slow), "bottom"])
+@pytest.mark.slow
+@pytest.mark.parametrize("first", ["top", "bottom"])
 def test_a_check_times_the_target_at_its_row(root, tmp_path, first):
     """A slow readout, and a target that lies high in the frame: without its row the clock would seem seconds off."""
     plan = tmp_path / "plan.yaml"
