@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 NEAR = 0.1  # of the spacing: how far from its instant a frame may be for the sake of sharpness
+GAP = 1.6  # typical spacings
 ENDS = 8  # frames at either end that are tried as first and last
 
 
@@ -25,15 +26,14 @@ def evenly_spaced(
     value = np.zeros(candidates.size) if merit is None else np.nan_to_num(merit[candidates], nan=-np.inf)
     if wanted == 1 or times[-1] == times[0]:
         middle = 0.5 * (times[0] + times[-1])
-        return candidates[_taken(times, np.array([middle]), max(float(np.ptp(times)), 1.0), value)[0]]
+        return candidates[_taken(times, np.array([middle]), max(float(np.ptp(times)), 1.0), value)]
     best, least = candidates[:0], np.inf
     for number in range(wanted, max(2, wanted - 2 * wanted // 5) - 1, -1):
         for first, last in _ends(times, number):
             instants = np.linspace(first, last, number)
-            spacing = float(instants[1] - instants[0])
-            chosen, worst = _taken(times, instants, spacing, value)
+            chosen = _taken(times, instants, float(instants[1] - instants[0]), value)
             lost = 1 - (last - first) / (times[-1] - times[0])
-            cost = worst + 0.5 * lost + 0.4 * (1 - len(chosen) / wanted)
+            cost = _unevenness(times[chosen]) + 0.25 * lost + 0.3 * (1 - len(chosen) / wanted)
             if cost < least - 1e-9:
                 best, least = candidates[chosen], cost
     return best
@@ -49,10 +49,8 @@ def _ends(times: np.ndarray, number: int) -> list[tuple[float, float]]:
     return [(float(a), float(b)) for a in early for b in late[::-1] if b > a]
 
 
-def _taken(
-    times: np.ndarray, instants: np.ndarray, spacing: float, value: np.ndarray
-) -> tuple[np.ndarray, float]:
-    """Return the places of the frames taken, and how far the worst is off its instant in units of the spacing."""
+def _taken(times: np.ndarray, instants: np.ndarray, spacing: float, value: np.ndarray) -> np.ndarray:
+    """Return the places of the frames taken."""
     away = np.abs(times[None, :] - instants[:, None])
     nearest = away.argmin(axis=1)
     off = away.min(axis=1)
@@ -61,10 +59,14 @@ def _taken(
     rank = np.where(near, value[None, :], -np.inf)
     top = rank.max(axis=1, keepdims=True)
     sharpest = np.where(near & (rank == top), away, np.inf).argmin(axis=1)
-    taken = np.where(near.any(axis=1), sharpest, nearest)[off <= 0.5 * spacing]
-    within = off[off <= 0.5 * spacing]
-    worst = float(np.where(within > NEAR * spacing, within, 0.0).max(initial=0.0)) / spacing
-    return np.unique(taken), worst
+    return np.unique(np.where(near.any(axis=1), sharpest, nearest)[off <= 0.5 * spacing])
+
+
+def _unevenness(times: np.ndarray) -> float:
+    """Return half the range of the steps in units of their mean, gaps left out; a fiftieth does not count."""
+    steps = np.diff(times)
+    steps = steps[steps <= GAP * np.median(steps)] if steps.size else steps
+    return max(float(np.ptp(steps) / (2 * steps.mean())) - 0.02, 0.0) if steps.size else 0.0
 
 
 def spacing_sentence(tt_s: np.ndarray) -> str | None:
@@ -75,7 +77,7 @@ def spacing_sentence(tt_s: np.ndarray) -> str | None:
 
     steps = np.diff(tt_s)
     typical = float(np.median(steps))
-    gap = steps > 1.6 * typical
+    gap = steps > GAP * typical
     low, high = float(steps[~gap].min()), float(steps[~gap].max())
     apart = _length(typical) if high - low < 0.25 * typical else f"{_length(low)} to {_length(high)}"
     sentence = f"the instants drawn are {apart} apart"
