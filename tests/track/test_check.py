@@ -251,6 +251,7 @@ def pictures_that_are_none_of_the_sun(shape, radius, sky=2000.0, light=30000.0):
     yield "nothing", np.full(shape, sky) + rng.normal(0, 20, shape)
 
 
+@pytest.mark.slow
 def test_what_is_no_disc_gets_no_number_and_harms_no_other_frame(rehearsed, tmp_path, capsys):
     plan, frames = rehearsed("transit")
     shutil.copytree(frames, tmp_path / "frames")
