@@ -6,6 +6,8 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+
 from imaging.compose import files, truth
 from imaging.compose.arc import Landscape, arc_over_landscape
 from imaging.compose.choices import Choices
@@ -137,6 +139,7 @@ def write_picture(
     caption = truth.caption(material, picture)
     statement["caption"] = caption
     written = []
+    has_sky = bool(np.isfinite(picture.anchor_ra_deg))
     tones = files.tones(picture, stretch)
     for suffix in outputs.picture_formats:
         path = outputs.picture(suffix)
@@ -148,7 +151,10 @@ def write_picture(
             shown = tones
             if outputs.caption:
                 shown = files.captioned(
-                    tones, caption, picture.canvas.up_pa_deg, picture.canvas.scale_arcsec_px
+                    tones,
+                    caption,
+                    picture.canvas.up_pa_deg if has_sky else None,
+                    picture.canvas.scale_arcsec_px,
                 )
             files.write_raster(path, shown, stretch, material.plan.title, caption, outputs.force)
         written.append(path)

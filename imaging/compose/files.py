@@ -116,7 +116,7 @@ def _ascii(text: str) -> str:
 
 
 def captioned(
-    image: np.ndarray, caption: str, up_pa_deg: float, scale_arcsec_px: float, mirrored: bool = False
+    image: np.ndarray, caption: str, up_pa_deg: float | None, scale_arcsec_px: float, mirrored: bool = False
 ) -> np.ndarray:
     """Return tones with a band below that holds the caption, north and east arrows, and a scale bar."""
     from matplotlib import font_manager
@@ -137,7 +137,8 @@ def captioned(
     draw = ImageDraw.Draw(strip)
     for number, line in enumerate(lines):
         draw.text((size, int((0.7 + 1.35 * number) * size)), line, fill=225, font=font)
-    _arrows(draw, font, width - 5.2 * size, 3.0 * size, 1.7 * size, up_pa_deg)
+    if up_pa_deg is not None:  # a landscape and a sheet of discs have no celestial north
+        _arrows(draw, font, width - 5.2 * size, 3.0 * size, 1.7 * size, up_pa_deg)
     strip_array = np.asarray(strip, np.float32) / 255
     if image.ndim == 3:
         strip_array = np.repeat(strip_array[..., None], 3, axis=2)
