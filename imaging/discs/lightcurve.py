@@ -144,7 +144,7 @@ def find_events(curve: LightCurve) -> tuple[EventFit, ...]:
     """Find what a whole curve shows: a disappearance, a reappearance, or both with the star hidden between.
 
     Of the three, the one that noise would show least is fitted, each edge with the frames on its own side of the
-    middle of the hidden time. Raises NoSolutionError when there is no event.
+    middle of the hidden time, or of the other edge where those are few. Raises NoSolutionError when there is no event.
     """
     curve = curve.usable()
     _require_frames(curve)
@@ -153,9 +153,11 @@ def find_events(curve: LightCurve) -> tuple[EventFit, ...]:
     # the box is taken for as much more than a step as a second edge in noise would not give
     if boxes is None or boxes.chance_log10 > steps.chance_log10 + FALSE_ALARM_LOG10:
         return (fit_step(curve),)
-    middle = curve.start_s[(boxes.first + boxes.last) // 2]
+    count, enough = curve.flux.size, 2 * _LEAST_FRAMES + 2
+    middle = (boxes.first + boxes.last) // 2
+    until, since = max(middle + 1, min(enough, boxes.last)), min(middle, max(count - enough, boxes.first))
     found = []
-    for part, kind in ((curve.start_s <= middle, "disappearance"), (curve.start_s >= middle, "reappearance")):
+    for part, kind in ((slice(0, until), "disappearance"), (slice(since, count), "reappearance")):
         found.append(fit_step(curve.part(part), kind))  # type: ignore[arg-type]
     return tuple(found)
 
@@ -234,13 +236,17 @@ def _instants(
     start: np.ndarray, exposure: np.ndarray, window_s: tuple[float, float] | None, steps: int = _STEPS_A_FRAME
 ) -> np.ndarray:
     """Return trial instants that leave the least number of frames on each side."""
-    low, high = start[_LEAST_FRAMES], start[-_LEAST_FRAMES - 1] + exposure[-_LEAST_FRAMES - 1]
+    low, high = start[_LEAST_FRAMES - 1] + exposure[_LEAST_FRAMES - 1], start[-_LEAST_FRAMES]
     if window_s is not None:
         low, high = max(low, window_s[0]), min(high, window_s[1])
     if high <= low:
         raise NoSolutionError("the curve has too few frames in the time where the event may be")
-    cadence = float(np.median(np.diff(start)))
-    return np.linspace(low, high, int(np.clip((high - low) / cadence * steps, 40, _MOST_INSTANTS)) + 1)
+    # by frames, not by seconds: where the cadence changes, even steps would pass over a frame
+    steps = int(np.clip(_MOST_INSTANTS // start.size, 1, steps))
+    edges = np.append(start, start[-1] + exposure[-1])
+    times = np.interp(np.arange(start.size * steps + 1) / steps, np.arange(edges.size), edges)
+    times = np.concatenate([[low], times[(times > low) & (times < high)], [high]])
+    return times if times.size > 40 else np.union1d(times, np.linspace(low, high, 41))
 
 
 def _centred(shape: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -266,6 +272,10 @@ def _near(curve: LightCurve, kind: Kind | None, window_s: tuple[float, float] | 
     low = int(slow[slow < at - _LEAST_FRAMES].max(initial=-1)) + 1
     high = int(slow[slow >= at + _LEAST_FRAMES].min(initial=count)) + 1
     low, high = max(low, at - _NEAREST_FRAMES), min(high, at + _NEAREST_FRAMES)
+    # slow or not, frames that are needed to tell the levels stay
+    enough = 2 * _LEAST_FRAMES + 2
+    low, high = min(low, max(at - _LEAST_FRAMES - 1, 0)), max(high, min(at + _LEAST_FRAMES + 1, count))
+    low, high = max(min(low, high - enough), 0), max(high, low + enough)
     return curve.part(slice(low, high))
 
 
@@ -306,9 +316,10 @@ def _fitted(  # type: ignore[no-untyped-def]
             f"no event: noise alone shows as much in one curve of {10 ** min(-log10, 12):.0f}"
         )
     variance = float(left @ left) / max(count - 3, 1)
+    _require_inside(near, kind, window_s, float(gain[best]))
     likely = np.flatnonzero(gain > gain[best] - 2 * _LIKELY * variance * shared)
-    at_best, step = shape[best], times[1] - times[0]
-    low, high = times[likely[0]] - step, times[likely[-1]] + step
+    at_best = shape[best]
+    low, high = times[max(likely[0] - 1, 0)], times[min(likely[-1] + 1, times.size - 1)]
     if window_s is not None:
         low, high = max(low, window_s[0]), min(high, window_s[1])
     cadence = float(np.median(near.exposure_s))
@@ -329,6 +340,24 @@ def _fitted(  # type: ignore[no-untyped-def]
         found, time, spread, float(max(ends)), float(min(ends)), signal, log10,
         float(np.median(near.exposure_s)) / signal, not inside.any(),
     )  # fmt: skip
+
+
+def _require_inside(
+    near: LightCurve, kind: Kind | None, window_s: tuple[float, float] | None, gain: float
+) -> None:
+    """Refuse a fit of `gain` where an edge within the least frames of an end explains far more."""
+    centred, count = near.flux - near.flux.mean(), near.flux.size
+    edge = np.array([*range(1, _LEAST_FRAMES), *range(count - _LEAST_FRAMES + 1, count)])
+    sums = np.cumsum(centred)[edge - 1]
+    allowed = np.full(edge.size, True) if kind is None else (sums > 0) == (kind == "disappearance")
+    if window_s is not None:
+        allowed &= (near.start_s[edge] >= window_s[0]) & (near.start_s[edge - 1] <= window_s[1])
+    outer = float(np.where(allowed, sums**2 * count / (edge * (count - edge)), 0.0).max())
+    variance = max(float(centred @ centred) - outer, 0.0) / max(count - 3, 1)
+    if outer > gain + 2 * _LIKELY * variance:
+        raise NoSolutionError(
+            f"its light changes within {_LEAST_FRAMES - 1} frames of an end: too few to tell a star from a spark"
+        )
 
 
 def _two_noises(flux: np.ndarray, left: np.ndarray, shape: np.ndarray, shared: float) -> tuple[float, float]:

@@ -20,6 +20,7 @@ from planner.events.family import Circumstances
 LEAST_FRAMES = 8
 APERTURES = (0.8, 1.2, 1.7)  # radii in widths of a star
 NEIGHBOURS = 15  # frames nearest in time that tell how the star lies from where it is expected
+DIM_SIGNAL = 10.0  # light over noise, from which half of the light is no noise in thousands of frames
 LEAST_DEPTH = 0.5  # of the dimming expected; less is a cloud, or another star's
 FAR_SIGMA = 5.0  # from the prediction, in its own and the timing's sigma together
 
@@ -116,8 +117,11 @@ def _steadiness(flux: np.ndarray) -> float:
     if good.size < LEAST_FRAMES:
         return -np.inf
     high = float(np.quantile(good, 0.9))
-    scatter = 1.48 * float(np.median(np.abs(np.diff(good)))) / np.sqrt(2)
-    return high / max(scatter, 1e-9)
+    return high / max(_scatter(good), 1e-9)
+
+
+def _scatter(flux: np.ndarray) -> float:
+    return 1.48 * float(np.median(np.abs(np.diff(flux)))) / np.sqrt(2)
 
 
 def _shifts(frames: Sequence[Measurement], pieces: Sequence[StarPiece]) -> np.ndarray:
@@ -236,8 +240,15 @@ def _findings(
         and curve.start_tt_s[0] + 30 < instant.tt_s < curve.start_tt_s[-1] - 30
     ]
     if missing and not timings:
-        sentence = f"{name} shows no {' and no '.join(i.name for i in missing)} in {len(curve.flux)} frames"
-        found.append(Finding("no-event", float("nan"), f"{sentence}: {words}." if words else f"{sentence}."))
+        names = " and no ".join(i.name for i in missing)
+        dim = _dim_frames(curve.flux)
+        if dim:
+            sentence = f"{name} is dim in {dim} of {len(curve.flux)} frames, but no {names} can be told"
+        else:
+            sentence = f"{name} shows no {names} in {len(curve.flux)} frames"
+        # what visibly dims is not called steady
+        kind = "event-unclear" if dim else "no-event"
+        found.append(Finding(kind, float("nan"), f"{sentence}: {words}." if words else f"{sentence}."))
     elif missing:
         names = " and ".join(i.name for i in missing)
         found.append(
@@ -246,11 +257,24 @@ def _findings(
     return tuple(found)
 
 
+def _dim_frames(flux: np.ndarray) -> int:
+    """Return how many frames show less than half of the star's whole light, where noise does not."""
+    good = flux[np.isfinite(flux)]
+    if good.size < LEAST_FRAMES:
+        return 0
+    # a star that goes within two frames of an end shines there alone
+    whole = max(float(np.quantile(good, 0.9)), float(good[:2].max()), float(good[-2:].max()))
+    return int(np.sum(good < 0.5 * whole)) if whole > DIM_SIGNAL * _scatter(good) else 0
+
+
 def _told(name: str, curve: StarCurve, words: str) -> str:
     """Return the verdict on the curve in one sentence."""
     from planner.sky.timescale import utc_iso
 
     if not curve.timings:
+        dim = _dim_frames(curve.flux)
+        if dim:
+            return f"{name} is dim in {dim} of {len(curve.flux)} frames, but no instant can be told: {words}."
         return f"{name} neither went out nor came back in {len(curve.flux)} frames" + (
             f": {words}." if words else "."
         )
