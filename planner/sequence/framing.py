@@ -67,12 +67,21 @@ def frame_track(field: Field, ra_deg: np.ndarray, dec_deg: np.ndarray, margin: f
     ra0, dec0 = (float(angle[0]) for angle in radec_deg(middle))
     right, up = field.along(*offsets_arcsec(ra0, dec0, ra_deg, dec_deg))
     reach_x, reach_y = field.half_width_arcsec * (1 - 2 * margin), field.half_height_arcsec * (1 - 2 * margin)
-    middle_x, middle_y = (right.min() + right.max()) / 2, (up.min() + up.max()) / 2
+    # places 90 degrees and more from the middle are on no tangent plane (NaN)
+    flat = np.isfinite(right) & np.isfinite(up)
+    if not flat.any():
+        return Framing(np.array(ra_deg, float), np.array(dec_deg, float), False)
+    middle_x = (right[flat].min() + right[flat].max()) / 2
+    middle_y = (up[flat].min() + up[flat].max()) / 2
     whole = bool(np.ptp(right) <= 2 * reach_x and np.ptp(up) <= 2 * reach_y)
     aim_x = middle_x + _excess(right - middle_x, reach_x)
     aim_y = middle_y + _excess(up - middle_y, reach_y)
     ra_aim, dec_aim = radec_from_offsets(ra0, dec0, *field.on_sky(aim_x, aim_y))
-    return Framing(ra_aim, dec_aim, whole)
+    # far from the middle up is another direction than there, or none: frames that miss are centred on their place
+    held = inside(field, ra_aim, dec_aim, ra_deg, dec_deg)
+    return Framing(
+        np.where(held, ra_aim, ra_deg), np.where(held, dec_aim, dec_deg), whole and bool(held.all())
+    )
 
 
 def fullest_aim(

@@ -10,6 +10,7 @@ from hypothesis import strategies as st
 from planner.events.family import BudgetTerm, Circumstances, Event, EventSpec, Instant
 from planner.sequence import exposure
 from planner.sequence.builder import build_plan
+from planner.sequence.frametimes import planned_frames
 from planner.sequence.framing import Field, frame_track, inside
 from planner.sequence.nights import usable_nights
 from planner.sequence.setting import settings_of
@@ -145,6 +146,26 @@ def test_every_place_of_a_track_is_framed_inside_the_margin(places):
         assert held.all()
     if framing.whole:
         assert np.ptp(framing.dec_deg) < 1e-6
+
+
+@given(st.lists(st.tuples(st.floats(0, 360), st.floats(-89, 89)), min_size=1, max_size=20))
+def test_places_all_over_the_sky_are_framed_each_in_a_pointing_of_its_own(places):
+    field = Field(4 * 3600.0, 3 * 3600.0, 25.0)
+    ra_deg, dec_deg = (np.array(column) for column in zip(*places, strict=True))
+    framing = frame_track(field, ra_deg, dec_deg)
+    assert inside(field, framing.ra_deg, framing.dec_deg, ra_deg, dec_deg).all()
+
+
+def test_an_apparition_of_venus_crosses_half_the_sky_and_is_planned_through_a_telescope():
+    """Evening after evening for most of a year: no tangent plane holds such a track."""
+    arc = example("apparition_arc_2027")
+    event = type(arc.event).model_validate(
+        {"family": "apparition-arc", "body": "venus", "date": "2028-03-01"}
+    )
+    brief = arc.model_copy(update={"event": event, "rig": example("planets_meet_2028").rig})
+    frames = planned_frames(build_plan(brief))
+    assert np.ptp(np.unwrap(np.radians(frames.ra_deg))) > np.pi
+    assert np.isfinite(frames.dec_deg).all()
 
 
 def test_a_field_turns_offsets_there_and_back():
