@@ -123,6 +123,7 @@ def draw_finder(axes: Any, outlook: Outlook, passage: Passage | None = None) -> 
     axes.set_anchor("NW")
     _draw_panels(axes, outlook, view, passage)
     _draw_discs(axes, outlook, view, row)
+    _draw_pair(axes, outlook, view, row)
     _draw_track(axes, outlook, view, row)
     if outlook.family.reference != "sun":
         _draw_stars(axes, view, float(outlook.frames.start_tt_s[row]))
@@ -266,6 +267,19 @@ def _draw_discs(axes: Any, outlook: Outlook, view: _View, row: int) -> None:
         axes.add_patch(Circle((x, y), radius, facecolor="0.93", edgecolor="black", lw=1.0, zorder=1))
         if name != "sun":
             _draw_phase(axes, view.frame, disc, x, y, radius)
+
+
+def _draw_pair(axes: Any, outlook: Outlook, view: _View, row: int) -> None:
+    """Mark the other planet of a meeting, and name both."""
+    sky = outlook.geometry(outlook.frames.middle_tt_s[row : row + 1])
+    if sky.reference != "stars" or len(sky.discs) < 2:
+        return
+    for name, disc in sky.discs.items():
+        x, y = (float(each[0]) for each in view.project(disc.ra_deg, disc.dec_deg))
+        if name != sky.target and view.holds(x, y):
+            axes.plot(x, y, "o", ms=5.5, mfc="black", mec="white", mew=0.8, zorder=6)
+        view.take(x, y, 0.012 * view.width, 0.016 * view.height)
+        view.write(axes, x, y, name.capitalize(), fontsize=8.5, weight="bold", zorder=7)
 
 
 def _draw_phase(axes: Any, frame: Field, disc: Any, x: float, y: float, radius: float) -> None:

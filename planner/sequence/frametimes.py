@@ -141,7 +141,16 @@ def _ground_place(plan: Plan, passage: Passage, tt_s: np.ndarray) -> tuple[np.nd
 
 
 def aim_place(geometry: Geometry, aim: str) -> tuple[np.ndarray, np.ndarray]:
-    """Return (ra_deg, dec_deg) of a disc or a star of the geometry; raises InputError when it has neither."""
+    """Return (ra_deg, dec_deg) of a disc, of the middle of two (`venus+jupiter`), or of a star of the geometry.
+
+    Raises InputError when the geometry does not have it.
+    """
+    one, plus, two = aim.partition("+")
+    if plus and one in geometry.discs and two in geometry.discs:
+        from planner.sky.places import radec_deg, unit_vector
+
+        ends = (unit_vector(geometry.discs[name].ra_deg, geometry.discs[name].dec_deg) for name in (one, two))
+        return radec_deg(sum(ends))
     if aim in geometry.discs:
         return geometry.discs[aim].ra_deg, geometry.discs[aim].dec_deg
     for name, ra_deg, dec_deg, _ in geometry.stars:

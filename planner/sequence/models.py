@@ -180,8 +180,9 @@ class Shot(Model):
 class Passage(Model):
     """A stretch of a plan with one purpose, in which the camera has one aim.
 
-    `aim`: what the middle of the frame follows: a disc of the geometry (`sun`, `moon`, `mars`), `field` with
-    `aim_ra_deg`, `aim_dec_deg` (ICRS), or `ground` with `aim_altitude_deg`, `aim_azimuth_deg`, which follows nothing.
+    `aim`: what the middle of the frame follows: a disc of the geometry (`sun`, `moon`, `mars`), the middle of two
+    (`venus+jupiter`), `field` with `aim_ra_deg`, `aim_dec_deg` (ICRS), or `ground` with `aim_altitude_deg`,
+    `aim_azimuth_deg`, which follows nothing.
     """
 
     name: str

@@ -15,6 +15,7 @@ from planner.events.family import Geometry
 from planner.sequence import exposure
 from planner.sequence.flips import Pause, cut, focus_pauses, meridian_pause
 from planner.sequence.models import Passage, Shot
+from planner.sequence.pair import middle_told
 from planner.sequence.recipes import Recipe, aim_of, place_of, recipes
 from planner.sequence.setting import Setting
 from planner.sequence.windows import Window, event_windows
@@ -44,7 +45,8 @@ def event_passages(setting: Setting, clock_sigma_s: float | None = None) -> tupl
         setting.wish.burst_s,
     )
     windows = [piece for window in windows for piece in _reachable(setting, window)]
-    aim = aim_of(setting)
+    sample_s = [_samples(window) for window in windows] or [np.array([setting.event.middle_tt_s])]
+    aim = aim_of(setting, setting.geometry(np.concatenate(sample_s)))
     flip = meridian_pause(setting, windows, aim)
     pauses = ([flip] if flip else []) + focus_pauses(setting, windows, flip)
     pauses.sort(key=lambda pause: pause.start_tt_s)
@@ -89,7 +91,7 @@ def _passage(setting: Setting, window: Window, aim: str, flipped: bool) -> Passa
     # the wheel stands still while a contact is awaited
     turns = (setting,) if window.burst else setting.in_turn()
     kinds = [
-        kind for each in turns for kind in recipes(each, geometry, target_hidden=window.name == "hidden")
+        kind for each in turns for kind in recipes(each, geometry, aim, target_hidden=window.name == "hidden")
     ]
     rig, readout_s = setting.rig, setting.rig.sensor.readout_s
     star_contact = window.burst and bool(geometry.stars)
@@ -119,12 +121,15 @@ def _passage(setting: Setting, window: Window, aim: str, flipped: bool) -> Passa
         shots += _shots(
             setting, window, kind, start + timedelta(seconds=offset_s), cadence_s, count, sample_s
         )
+    purpose = window.purpose
+    if "+" in aim:
+        purpose += f", {middle_told(geometry, aim)}"
     aim_place: dict[str, Any] = {}
     if setting.rig.mount.kind == "fixed":
         aim, aim_place = "ground", _ground_aim(setting, geometry, aim)
     return Passage(
         name=window.name,
-        purpose=window.purpose,
+        purpose=purpose,
         aim=aim,
         flipped=flipped,
         stars_expected=min((kind.stars for kind in kinds if kind.stars is not None), default=None),

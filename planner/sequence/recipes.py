@@ -11,6 +11,7 @@ from planner.errors import InputError
 from planner.events.family import Geometry
 from planner.sequence import exposure, radiometry
 from planner.sequence.motion import Motion, motion
+from planner.sequence.pair import pair_aim
 from planner.sequence.setting import Setting
 from planner.sequence.starfield import star_frames
 
@@ -43,17 +44,14 @@ class Recipe:
         return self.tracked_rate_e_s if exposure_s > radiometry.TRACKED_FROM_S else self.rate_e_s
 
 
-def aim_of(setting: Setting) -> str:
-    """Return what the middle of the frame follows: the reference disc where it fits the field, else the target."""
-    reference = setting.family.reference
-    if reference in ("sun", "moon"):
-        return reference if setting.reference_fits else target_name(setting)
-    return target_name(setting)
+def aim_of(setting: Setting, geometry: Geometry) -> str:
+    """Return what the middle of the frame follows at all these times.
 
-
-def target_name(setting: Setting) -> str:
-    """Return the name under which the geometry holds the moving point."""
-    return setting.geometry(np.array([setting.event.middle_tt_s])).target
+    The reference disc where it fits the field, the middle of two planets that meet where both fit, else the target.
+    """
+    if geometry.reference in ("sun", "moon"):
+        return geometry.reference if setting.reference_fits else geometry.target
+    return pair_aim(setting, geometry) or geometry.target
 
 
 def tracking_of(setting: Setting, aim: str) -> Rate:
@@ -66,23 +64,25 @@ def tracking_of(setting: Setting, aim: str) -> Rate:
     return wanted if wanted in setting.rig.mount.rates else "sidereal"
 
 
-def recipes(setting: Setting, geometry: Geometry, target_hidden: bool) -> list[Recipe]:
+def recipes(setting: Setting, geometry: Geometry, aim: str, target_hidden: bool) -> list[Recipe]:
     """Return what to expose for through the setting's one filter; see `_through_one`."""
     return [
-        replace(kind, filter=setting.filter_name) for kind in _through_one(setting, geometry, target_hidden)
+        replace(kind, filter=setting.filter_name)
+        for kind in _through_one(setting, geometry, aim, target_hidden)
     ]
 
 
-def _through_one(setting: Setting, geometry: Geometry, target_hidden: bool) -> list[Recipe]:
+def _through_one(setting: Setting, geometry: Geometry, aim: str, target_hidden: bool) -> list[Recipe]:
     """Return what to expose for at these times, the kind that is measured first; raises InputError when there is none.
 
     Against a disc: the brightest disc, and by itself a target that this leaves too faint. Among stars: the stars, and
     the brightest disc where the star frames clip it.
     """
-    aim = aim_of(setting)
     tracking = tracking_of(setting, aim)
     ra_deg, dec_deg = place_of(geometry, aim)
-    moving = motion(setting.rig, setting.observer, tracking, ra_deg, dec_deg, geometry.tt_s)
+    # the middle of two planets is nothing that could trail
+    moves = place_of(geometry, aim.partition("+")[0])
+    moving = motion(setting.rig, setting.observer, tracking, *moves, geometry.tt_s)
     main = _brightest_disc(setting, geometry)
     found: list[Recipe] = []
     if main is not None:

@@ -9,8 +9,9 @@ import numpy as np
 
 from planner.events.family import Geometry
 from planner.sequence.feasibility import Case
-from planner.sequence.framing import field_of, inside
+from planner.sequence.framing import best_angle_deg, field_of, inside
 from planner.sequence.models import Finding, Plan
+from planner.sequence.pair import other_body, pair_aim, pair_room
 
 SUN_FORBIDDEN_DEG, SUN_CAUTION_DEG = 5.0, 30.0
 _FEW_STARS, _TOO_FEW_STARS = 12, 4
@@ -114,6 +115,44 @@ def does_not_fit(case: Case) -> Iterator[Finding]:
             cure="camera_angle: best or a shorter focal length may hold it all; mosaic: track shoots all of it "
             "at each visit.",
         )
+
+
+def other_body_outside(case: Case) -> Iterator[Finding]:
+    """Two planets meet, and one frame does not hold both."""
+    from planner.sequence.recipes import place_of
+    from planner.sky.places import separation_arcsec, unit_vector
+
+    setting, sky = case.setting, case.sky
+    other = other_body(setting, sky)
+    if other is None or not len(case.sample_rows) or pair_aim(setting, sky):
+        return
+    rig = min((setting.rig, *setting.mount_mates), key=lambda each: pair_room(each, sky, other))
+    there = place_of(sky, other)
+    apart = separation_arcsec(unit_vector(*case.target), unit_vector(*there)).max() / 60.0
+    field = field_of(rig)
+    focal_mm = _two_digits_down(rig.optics.focal_length_mm * pair_room(rig, sky, other))
+    both = (np.concatenate(pair) for pair in zip(case.target, there, strict=True))
+    turned = rig.model_copy(update={"camera_angle_deg": best_angle_deg(rig, *both)})
+    turning = (
+        f"camera_angle_deg: {turned.camera_angle_deg:g} holds both; so does"
+        if rig.mount.kind == "equatorial" and pair_room(turned, sky, other) >= 1
+        else "Both fit with"
+    )
+    yield Finding(
+        rule="other-body-outside",
+        level="caution",
+        where="all frames",
+        sentence=f"{other.capitalize()} stands {apart:.0f} arcmin from {sky.target.capitalize()}; a frame of "
+        f"{field.half_width_arcsec / 30:.0f} x {field.half_height_arcsec / 30:.0f} arcmin at this camera angle does "
+        f"not hold both with a margin, so the camera follows {sky.target.capitalize()} alone.",
+        cure=f"{turning} a focal length of {focal_mm:g} mm or less at this camera angle. Or shoot a mosaic: frames "
+        f"of {other.capitalize()} by hand beside these.",
+    )
+
+
+def _two_digits_down(value: float) -> float:
+    step = 10 ** (np.floor(np.log10(value)) - 1)
+    return float(np.floor(value / step) * step)
 
 
 def target_leaves_frame(case: Case) -> Iterator[Finding]:
@@ -262,6 +301,7 @@ RULES = (
     field_turns,
     near_zenith,
     does_not_fit,
+    other_body_outside,
     target_leaves_frame,
     margin_thin,
     too_few_stars,

@@ -69,6 +69,7 @@ PROVOKED = [
                                           "longitude_deg": 45.0, "horizon": []}}),
     ("does-not-fit", "caution", TRANSIT, {"sensor": NARROW}),
     ("does-not-fit", "note", CAMPAIGN, {}),
+    ("other-body-outside", "caution", meeting, {"wish": {"darkness_deg": 0.0}}),
     ("margin-thin", "note", TRANSIT, {"mount": {"pointing_error_arcsec": 200.0}}),
     ("too-few-stars", "error", CAMPAIGN, {"sensor": {"width_px": 100, "height_px": 80}, "wish": {"visits": 6}}),
     ("target-leaves-frame", "caution", CAMPAIGN, {"mount": {"kind": "fixed"}, "wish": {"visits": 8}}),
