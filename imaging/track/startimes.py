@@ -189,8 +189,8 @@ def _events(
 
 def _model(curve: LightCurve, events: Sequence[EventFit], whole: float) -> np.ndarray:
     """Return the light as fitted, frame by frame."""
-    if not events:
-        return np.full(curve.start_s.size, whole)
+    if not events:  # of what dims without an instant, no steady light is drawn
+        return np.full(curve.start_s.size, np.nan if _dim_frames(curve.flux) else whole)
     seen = np.zeros(curve.start_s.size)
     for event in events:
         before = np.clip((event.time_s - curve.start_s) / curve.exposure_s, 0, 1)
@@ -244,6 +244,7 @@ def _findings(
         dim = _dim_frames(curve.flux)
         if dim:
             sentence = f"{name} is dim in {dim} of {len(curve.flux)} frames, but no {names} can be told"
+            words = words.removeprefix("no event: ")
         else:
             sentence = f"{name} shows no {names} in {len(curve.flux)} frames"
         # what visibly dims is not called steady
@@ -274,6 +275,7 @@ def _told(name: str, curve: StarCurve, words: str) -> str:
     if not curve.timings:
         dim = _dim_frames(curve.flux)
         if dim:
+            words = words.removeprefix("no event: ")
             return f"{name} is dim in {dim} of {len(curve.flux)} frames, but no instant can be told: {words}."
         return f"{name} neither went out nor came back in {len(curve.flux)} frames" + (
             f": {words}." if words else "."
