@@ -11,6 +11,7 @@ from astropy.wcs import WCS
 
 from imaging.compose.choices import Choices
 from imaging.compose.composing import compose_picture
+from imaging.compose.files import NARROWEST_PX
 from imaging.compose.material import gather
 from imaging.compose.stretch import background
 from imaging.discs.limb import fit_limb
@@ -158,7 +159,7 @@ def test_compose_writes_what_it_says_and_readers_agree(transit, tmp_path, capsys
     with Image.open(out / "composite.png") as image:
         assert image.text["Title"].startswith("Mercury")
         assert "predicted place" in image.text["Description"]
-        assert image.size[0] == linear.shape[1]
+        assert image.size[0] == max(linear.shape[1], NARROWEST_PX)  # a narrow picture stands on a wider caption
         assert image.size[1] > linear.shape[0]  # the caption band
         assert ImageCms.getOpenProfile(io.BytesIO(image.info["icc_profile"]))
     with Image.open(out / "composite.jpg") as image:
