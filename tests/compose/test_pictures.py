@@ -159,7 +159,8 @@ def test_compose_writes_what_it_says_and_readers_agree(transit, tmp_path, capsys
     with Image.open(out / "composite.png") as image:
         assert image.text["Title"].startswith("Mercury")
         assert "predicted place" in image.text["Description"]
-        assert image.size[0] == max(linear.shape[1], NARROWEST_PX)  # a narrow picture stands on a wider caption
+        # a narrow picture stands on a wider caption
+        assert image.size[0] == max(linear.shape[1], NARROWEST_PX)
         assert image.size[1] > linear.shape[0]  # the caption band
         assert ImageCms.getOpenProfile(io.BytesIO(image.info["icc_profile"]))
     with Image.open(out / "composite.jpg") as image:
