@@ -12,6 +12,8 @@ from planner.sequence.setting import Setting
 
 def other_body(setting: Setting, geometry: Geometry) -> str | None:
     """Return the name of the planet that the target meets, None where the event is no meeting."""
+    if geometry.target not in geometry.discs:  # a star that a body covers: the body comes to it
+        return None
     others = {setting.event.spec.body, setting.event.spec.other_body} - {geometry.target}
     return next((name for name in geometry.discs if name in others and geometry.reference == "stars"), None)
 

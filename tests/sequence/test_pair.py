@@ -110,3 +110,8 @@ def test_the_finder_names_both_planets_inside_the_frame():
         x, y = places[name]
         assert abs(x) < field.half_width_arcsec / 60
         assert abs(y) < field.half_height_arcsec / 60
+
+
+def test_a_star_behind_a_minor_planet_is_no_pair():
+    frames = planned_frames(example_plan("asteroid_occults_star_2028"))
+    assert np.ptp(frames.ra_deg) * 3600 < 1.0  # on the star throughout
