@@ -77,8 +77,8 @@ def frame_track(field: Field, ra_deg: np.ndarray, dec_deg: np.ndarray, margin: f
     aim_x = middle_x + _excess(right - middle_x, reach_x)
     aim_y = middle_y + _excess(up - middle_y, reach_y)
     ra_aim, dec_aim = radec_from_offsets(ra0, dec0, *field.on_sky(aim_x, aim_y))
-    # far from the middle up is another direction than there, or none: frames that miss are centred on their place
-    held = inside(field, ra_aim, dec_aim, ra_deg, dec_deg)
+    # far from the middle up is another direction than there, or none: frames that all but miss are centred
+    held = inside(field, ra_aim, dec_aim, ra_deg, dec_deg, margin / 2)
     return Framing(
         np.where(held, ra_aim, ra_deg), np.where(held, dec_aim, dec_deg), whole and bool(held.all())
     )
