@@ -22,6 +22,7 @@ APERTURES = (0.8, 1.2, 1.7)  # radii in widths of a star
 NEIGHBOURS = 15  # frames nearest in time that tell how the star lies from where it is expected
 DIM_SIGNAL = 10.0  # light over noise, from which half of the light is no noise in thousands of frames
 LEAST_DEPTH = 0.5  # of the dimming expected; less is a cloud, or another star's
+WITHIN_SIGMA = 3.0  # frames that begin and end so far from an instant must show it
 FAR_SIGMA = 5.0  # from the prediction, in its own and the timing's sigma together
 
 
@@ -166,7 +167,7 @@ def _events(
     try:
         events = list(find_events(curve))
     except NoSolutionError as none:
-        words = str(none)
+        words = str(none).removeprefix("no event: ")
     # an event too weak to show among all frames may show among those about its prediction
     for instant in circumstances.instants:
         if instant.name not in ("disappearance", "reappearance") or any(
@@ -237,14 +238,14 @@ def _findings(
         if instant.name in ("disappearance", "reappearance")
         and instant.visible
         and not any(timing.name == instant.name for timing in timings)
-        and curve.start_tt_s[0] + 30 < instant.tt_s < curve.start_tt_s[-1] - 30
+        and curve.start_tt_s[0] + WITHIN_SIGMA * instant.sigma_s < instant.tt_s
+        and instant.tt_s < curve.start_tt_s[-1] - WITHIN_SIGMA * instant.sigma_s
     ]
     if missing and not timings:
         names = " and no ".join(i.name for i in missing)
         dim = _dim_frames(curve.flux)
         if dim:
             sentence = f"{name} is dim in {dim} of {len(curve.flux)} frames, but no {names} can be told"
-            words = words.removeprefix("no event: ")
         else:
             sentence = f"{name} shows no {names} in {len(curve.flux)} frames"
         # what visibly dims is not called steady
@@ -275,7 +276,6 @@ def _told(name: str, curve: StarCurve, words: str) -> str:
     if not curve.timings:
         dim = _dim_frames(curve.flux)
         if dim:
-            words = words.removeprefix("no event: ")
             return f"{name} is dim in {dim} of {len(curve.flux)} frames, but no instant can be told: {words}."
         return f"{name} neither went out nor came back in {len(curve.flux)} frames" + (
             f": {words}." if words else "."

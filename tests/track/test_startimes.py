@@ -79,6 +79,7 @@ def test_a_curve_that_visibly_drops_is_never_called_without_event(frames):
 def test_a_star_that_shines_on_is_said_to(noise):
     begin = 899.2 + 0.43 * np.arange(92)
     flux = 1 + noise * np.random.default_rng(1).standard_normal(begin.size)
-    events, verdict, _ = told(LightCurve(begin, np.full(92, 0.029), flux))
+    events, verdict, findings = told(LightCurve(begin, np.full(92, 0.029), flux))
     assert not events
+    assert [finding.name for finding in findings] == ["no-event"]  # the frames begin 20 s before it was due
     assert "neither went out nor came back in 92 frames" in verdict
