@@ -18,6 +18,7 @@ from imaging.compose.plane import sky_to_plane
 from imaging.compose.stretch import Stretch, measured_stretch
 from planner.errors import FrameSetAside, InputError
 from planner.outputs import whole_file
+from planner.sequence.frametimes import aim_place
 from planner.sky.timescale import utc_iso
 
 STEADY_ON = ("auto", "sun", "moon", "stars", "horizon")
@@ -213,6 +214,11 @@ class _Shots:
         else:
             middle = self.frames[len(self.frames) // 2]
             anchor = middle.target_ra_deg, middle.target_dec_deg
+            aim = self.material.plan.passages[0].aim
+            if "+" in aim:
+                # two planets that meet: the frames are centred between them
+                ra_deg, dec_deg = aim_place(self.material.geometry_at(np.array([middle.tt_s])), aim)
+                anchor = float(ra_deg[0]), float(dec_deg[0])
         if self.film.orientation == "zenith":
             return anchor, float(self.zenith_pa[index])
         on_disc = self.steady_on in ("sun", "moon")

@@ -8,12 +8,14 @@ import numpy as np
 import pytest
 from astropy.io import fits
 from astropy.wcs import WCS
+from PIL import Image
 
 from imaging.compose.choices import Choices
 from imaging.compose.composing import compose_picture
 from imaging.compose.files import NARROWEST_PX
 from imaging.compose.material import gather
 from imaging.compose.stretch import background
+from imaging.compose.timelapse import Film, make_film
 from imaging.discs.limb import fit_limb
 from planner.cli.main import run_with
 from planner.sequence.documents import load_plan
@@ -106,7 +108,7 @@ def test_the_path_of_mars_has_one_place_a_visit_and_none_in_the_ground(loop):
 
 
 def test_a_short_path_is_shown_in_the_field_of_a_frame_with_what_it_passes(tmp_path):
-    """Venus moves by an arcminute in a field of a degree; Jupiter stays in the picture when a frame holds it."""
+    """Venus moves by an arcminute in a field of a degree; Jupiter, which every frame holds, stays in the picture."""
     rehearsal = rehearse(tmp_path, "planets_meet_2028", "--binning", "8", "--frames", "4")
     material = material_of(rehearsal)
     picture = compose_picture(material, Choices())
@@ -115,12 +117,18 @@ def test_a_short_path_is_shown_in_the_field_of_a_frame_with_what_it_passes(tmp_p
     assert np.isfinite(picture.image).mean() > 0.99
     pointing, disc = material.frames[2].pointing, material.geometry.discs["jupiter"]
     x, y = pointing.sky_to_pixel(disc.ra_deg[2:3], disc.dec_deg[2:3])
-    held = bool((0 < x) & (x < columns) & (0 < y) & (y < rows))
+    assert (0 < x) & (x < columns) & (0 < y) & (y < rows)
     place = picture.canvas.from_sky(
         picture.anchor_ra_deg, picture.anchor_dec_deg, float(disc.ra_deg[2]), float(disc.dec_deg[2])
     )
-    shown = 0 < place[0] < picture.canvas.width_px and 0 < place[1] < picture.canvas.height_px
-    assert shown == held
+    assert 0 < place[0] < picture.canvas.width_px
+    assert 0 < place[1] < picture.canvas.height_px
+    make_film(tmp_path / "film.gif", material, Film(size_px=(320, 240), stamp=False))
+    with Image.open(tmp_path / "film.gif") as film:
+        rows = np.flatnonzero((np.asarray(film.convert("L")) > 200).any(axis=1))
+        # the film is centred between the planets: one as far above its middle as the other below
+        assert rows[0] + rows[-1] == pytest.approx(film.height - 1, abs=0.05 * film.height)
+        assert np.ptp(rows) > 0.3 * film.height
 
 
 def test_compose_writes_what_it_says_and_readers_agree(transit, tmp_path, capsys):
