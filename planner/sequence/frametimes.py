@@ -149,8 +149,10 @@ def aim_place(geometry: Geometry, aim: str) -> tuple[np.ndarray, np.ndarray]:
     if plus and one in geometry.discs and two in geometry.discs:
         from planner.sky.places import radec_deg, unit_vector
 
-        ends = (unit_vector(geometry.discs[name].ra_deg, geometry.discs[name].dec_deg) for name in (one, two))
-        return radec_deg(sum(ends))
+        first, second = geometry.discs[one], geometry.discs[two]
+        return radec_deg(
+            unit_vector(first.ra_deg, first.dec_deg) + unit_vector(second.ra_deg, second.dec_deg)
+        )
     if aim in geometry.discs:
         return geometry.discs[aim].ra_deg, geometry.discs[aim].dec_deg
     for name, ra_deg, dec_deg, _ in geometry.stars:
