@@ -185,6 +185,8 @@ def bench_film(pictures: int = 300) -> None:
 
 
 if __name__ == "__main__":
+    if {"-h", "--help"} & set(sys.argv):
+        sys.exit(__doc__)
     quick = "--quick" in sys.argv
     parts = [part for part in ("warp", "film", "memory") if part in sys.argv] or ["warp", "film", "memory"]
     if "warp" in parts:
