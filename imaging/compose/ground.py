@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import warnings
-
 import numpy as np
 
 BLOCK_PX = 64
@@ -64,16 +62,27 @@ def block_levels(data: np.ndarray, block: int) -> np.ndarray:
     blocks = data[: ny * block, : nx * block].reshape(ny, block, nx, block)
     step = max(1, block // 22)
     cells = blocks[:, ::step, :, ::step].swapaxes(1, 2).reshape(ny, nx, -1)
-    with np.errstate(invalid="ignore"), warnings.catch_warnings():
-        warnings.simplefilter("ignore", RuntimeWarning)
-        covered = np.isfinite(cells).mean(axis=-1) > 0.5
-        center = np.nanmedian(cells, axis=-1, keepdims=True)
-        spread = 1.4826 * np.nanmedian(np.abs(cells - center), axis=-1, keepdims=True)
-        for _ in range(3):
-            kept = np.where(np.abs(cells - center) <= 2.5 * np.maximum(spread, 1e-6), cells, np.nan)
-            center = np.nanmean(kept, axis=-1, keepdims=True)
-            spread = np.nanstd(kept, axis=-1, keepdims=True) * 1.15
-    return np.where(covered, center[..., 0], np.nan)
+    count = np.isfinite(cells).sum(axis=-1)
+    covered = count > 0.5 * cells.shape[-1]
+    center = _medians(cells, count)
+    spread = 1.4826 * _medians(np.abs(cells - center[..., None]), count)
+    for _ in range(3):
+        away = np.abs(cells - center[..., None])
+        kept = away <= 2.5 * np.maximum(spread, 1e-6)[..., None]  # false for NaN
+        number = np.maximum(kept.sum(axis=-1), 1)
+        rest = np.where(kept, cells - center[..., None], 0)
+        mean = rest.sum(axis=-1) / number
+        spread = 1.15 * np.sqrt(np.maximum((rest**2).sum(axis=-1) / number - mean**2, 0))
+        center = center + mean
+    return np.where(covered, center, np.nan)
+
+
+def _medians(cells: np.ndarray, count: np.ndarray) -> np.ndarray:
+    """Return the median of the finite values of each last axis; `count`: how many they are. NaN where none."""
+    ordered = np.sort(cells, axis=-1)  # NaN go to the end
+    low, high = np.maximum(count - 1, 0) // 2, np.minimum(count // 2, cells.shape[-1] - 1)
+    pick = np.stack([low, high], axis=-1)
+    return np.take_along_axis(ordered, pick, axis=-1).mean(axis=-1)
 
 
 def _powers(order: int) -> list[tuple[int, int]]:

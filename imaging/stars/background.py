@@ -10,6 +10,7 @@ CELL_PX = 64  # side of a background cell: many times a star, a fraction of the 
 FINE_CELL_PX = 24  # where the sky is steep: the glare of the Moon
 _STEEP_SHARE = 0.005  # of the cells
 _STEEP = 0.1  # of a cell's variance that its slope may make
+_COARSE_STEP = 0.1  # of the noise: from here on the steps of the counts are told apart within a step
 
 
 @dataclass(frozen=True)
@@ -47,7 +48,9 @@ def background(data: np.ndarray, cell_px: int = CELL_PX) -> Background:
     """Return sky and noise of a frame on a grid, sources left out.
 
     Each cell gives the median of its pixels within 3 sigma of a first median; sigma comes from the lower half of
-    the pixels, which stars do not touch. A quarter of the pixels is looked at.
+    the pixels, which stars do not touch. A quarter of the pixels is looked at. Where the counts come in steps as
+    coarse as the noise (8-bit video, frames averaged and rounded), the quantiles are those of grouped data: the
+    pixels of one step are spread over it evenly.
     """
     import cv2
 
@@ -63,7 +66,7 @@ def background(data: np.ndarray, cell_px: int = CELL_PX) -> Background:
     for row, top in enumerate(top_edges):
         block = data[top : top + cell_h : step][:, take].reshape(-1, columns, len(take) // columns)
         sample = np.sort(block.transpose(1, 0, 2).reshape(columns, -1), axis=1)  # NaN sort to the end
-        grid[row], sigma[row] = _clipped(sample)
+        grid[row], sigma[row] = _clipped(sample, _step_between(sample))
     good = np.isfinite(grid) & np.isfinite(sigma)
     if not good.all():
         fill, spread = (np.median(grid[good]), np.median(sigma[good])) if good.any() else (0.0, 1.0)
@@ -83,7 +86,7 @@ def background(data: np.ndarray, cell_px: int = CELL_PX) -> Background:
                 top = top_edges[row]
                 block = (data[top : top + cell_h] - first.level(top, top + cell_h))[::step][:, take]
                 block = block.reshape(len(block), columns, -1).transpose(1, 0, 2).reshape(columns, -1)
-                spread = _clipped(np.sort(block, axis=1))[1]
+                spread = _clipped(np.sort(block, axis=1))[1]  # the slope has spread the steps
                 better = steep[row] & np.isfinite(spread)
                 sigma[row, better] = spread[better]
         sigma = cv2.medianBlur(_extended(sigma), 3)[1:-1, 1:-1]
@@ -94,19 +97,37 @@ def background(data: np.ndarray, cell_px: int = CELL_PX) -> Background:
     )
 
 
-def _clipped(sample: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
-    """Return clipped median and sigma of each sorted row."""
-    line = np.arange(len(sample))
+def _step_between(sample: np.ndarray) -> float:
+    """Return the least step between two different counts; 0 when there is none."""
+    steps = np.diff(sample[len(sample) // 2])
+    steps = steps[np.isfinite(steps) & (steps > 0)]
+    return float(steps.min()) if steps.size else 0.0
+
+
+def _clipped(sample: np.ndarray, step_adu: float = 0.0) -> tuple[np.ndarray, np.ndarray]:
+    """Return clipped median and sigma of each sorted row, whose counts come in steps."""
     number = np.isfinite(sample).sum(axis=1)
     last = np.maximum(number - 1, 0)
-    middle, low = sample[line, last // 2], sample[line, (last * 0.1587).astype(int)]
-    spread = middle - low
+    spread = _at(sample, last // 2) - _at(sample, (last * 0.1587).astype(int))
+    coarse = step_adu > _COARSE_STEP * float(np.median(spread[number >= 8])) if (number >= 8).any() else False
+    step_adu = step_adu if coarse else 0.0
+    middle = _at(sample, last // 2, step_adu)
+    spread = middle - _at(sample, (last * 0.1587).astype(int), step_adu)
     kept_low = (sample < (middle - 3 * spread)[:, None]).sum(axis=1)
     kept_high = (sample <= (middle + 3 * spread)[:, None]).sum(axis=1)
     number_kept = np.maximum(kept_high - kept_low, 1)
-    at = np.minimum(kept_low + number_kept // 2, sample.shape[1] - 1)
+    middle = _at(sample, np.minimum(kept_low + number_kept // 2, sample.shape[1] - 1), step_adu)
     at_low = np.minimum(kept_low + (number_kept * 0.1587).astype(int), sample.shape[1] - 1)
-    middle = sample[line, at]
-    spread = middle - sample[line, at_low]
+    spread = middle - _at(sample, at_low, step_adu)
     empty = number < 8
     return np.where(empty, np.nan, middle), np.where(empty, np.nan, spread)
+
+
+def _at(sample: np.ndarray, index: np.ndarray, step_adu: float = 0.0) -> np.ndarray:
+    """Return one value of each sorted row, its place among its equals spread over their step (grouped data)."""
+    value = sample[np.arange(len(sample)), index]
+    if step_adu <= 0:
+        return value
+    below = (sample < value[:, None]).sum(axis=1)
+    equal = np.maximum((sample == value[:, None]).sum(axis=1), 1)
+    return value + step_adu * ((index + 0.5 - below) / equal - 0.5)

@@ -23,13 +23,17 @@ _ODD_SHARE = 0.15  # of long stars above which the frame's stars are odd, not do
 _LEAST_SEPARATION_SIGMAS = 0.9
 _MOST = 10_000
 _ROUNDS = 12
+_SETTLED = 0.01  # of its error: a step below it moves no result
 _CHUNK_PIXELS = 1_500_000
 _PIXEL_VARIANCE = 1 / 12
 
 
 @dataclass(frozen=True)
 class _Pairs:
-    """n fits of two stars: light, x, y of each (n, 2, 3), their covariance (n, 6, 6), chi^2 of one and of two stars."""
+    """n fits of two stars: light, x, y of each (n, 2, 3), their covariance (n, 6, 6), chi^2 of one and of two stars.
+
+    `chi2_one` is NaN where it was not asked for.
+    """
 
     values: np.ndarray
     covariance: np.ndarray
@@ -121,7 +125,7 @@ def _split(
     if not len(rows) or len(rows) > max(3, _ODD_SHARE * usable.sum()):
         return measured
     start = np.concatenate([halves, companions])
-    pairs = _fit(data, sky, start, sigma, gain_e_adu)
+    pairs = _fit(data, sky, start, sigma, gain_e_adu, one_too=True)
     excess_one = np.maximum(pairs.chi2_one - pairs.pixels, 0)
     excess_two = np.maximum(pairs.chi2_two - pairs.pixels, 0)
     fine = _defended(pairs, sigma) & (pairs.chi2_one - pairs.chi2_two > _SURE_CHI2)
@@ -272,20 +276,32 @@ class _Columns:
 
 
 def _fit(
-    data: np.ndarray, sky: Background, start: np.ndarray, sigma: float, gain_e_adu: float | None
+    data: np.ndarray,
+    sky: Background,
+    start: np.ndarray,
+    sigma: float,
+    gain_e_adu: float | None,
+    *,
+    one_too: bool = False,
 ) -> _Pairs:
     apart = np.hypot(start[:, 0, 1] - start[:, 1, 1], start[:, 0, 2] - start[:, 1, 2])
     radius = int(np.ceil(3.5 * sigma + float(apart.max()) / 2)) + 1
     number = max(1, _CHUNK_PIXELS // (2 * radius + 1) ** 2)
     parts = [
-        _fit_chunk(data, sky, start[first : first + number], radius, sigma, gain_e_adu)
+        _fit_chunk(data, sky, start[first : first + number], radius, sigma, gain_e_adu, one_too)
         for first in range(0, len(start), number)
     ]
     return _Pairs(*(np.concatenate(column) for column in zip(*parts, strict=True)))
 
 
 def _fit_chunk(
-    data: np.ndarray, sky: Background, start: np.ndarray, radius: int, sigma: float, gain_e_adu: float | None
+    data: np.ndarray,
+    sky: Background,
+    start: np.ndarray,
+    radius: int,
+    sigma: float,
+    gain_e_adu: float | None,
+    one_too: bool,
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
     x0, y0 = np.rint(start[:, :, 1].mean(axis=1)), np.rint(start[:, :, 2].mean(axis=1))
     stamp, _, noise, reach = stamps_of(data, sky, x0, y0, radius)
@@ -297,13 +313,16 @@ def _fit_chunk(
     dy = reach[None, None, :, None] - local[:, :, 2, None, None]
     near = ((dx**2 + dy**2) < (3.5 * sigma + 0.5) ** 2).any(axis=1)
     two, covariance, chi2_two = _solved(stamp, noise, reach, local, near, sigma, gain_e_adu)
+    two[:, :, 1] += x0[:, None]
+    two[:, :, 2] += y0[:, None]
+    pixels = near.sum(axis=(1, 2)).astype(float)
+    if not one_too:
+        return two, covariance, np.full(len(two), np.nan), chi2_two, pixels
     light = np.maximum(local[:, :, 0], 1e-9)
     middle = (local * light[:, :, None]).sum(axis=1) / light.sum(axis=1)[:, None]
     middle[:, 0] = local[:, :, 0].sum(axis=1)
     _, _, chi2_one = _solved(stamp, noise, reach, middle[:, None, :], near, sigma, gain_e_adu)
-    two[:, :, 1] += x0[:, None]
-    two[:, :, 2] += y0[:, None]
-    return two, covariance, chi2_one, chi2_two, near.sum(axis=(1, 2)).astype(float)
+    return two, covariance, chi2_one, chi2_two, pixels
 
 
 def _solved(
@@ -319,40 +338,56 @@ def _solved(
     n, k, _ = values.shape
     values = values.copy()
     size = 3 * k
-    wide = np.sqrt(sigma**2 + _PIXEL_VARIANCE)
-    normal = np.zeros((n, size, size))
-    chi2 = np.full(n, np.inf)
-    for turn in range(_ROUNDS + 1):
-        slopes, model = [], np.zeros_like(stamp)
-        for star in range(k):
-            ox, oy = reach - values[:, star, 1, None], reach - values[:, star, 2, None]
-            gx = np.exp(-0.5 * (ox / wide) ** 2) / (np.sqrt(2 * np.pi) * wide)
-            gy = np.exp(-0.5 * (oy / wide) ** 2) / (np.sqrt(2 * np.pi) * wide)
-            light = values[:, star, 0, None, None]
-            unit = gy[:, :, None] * gx[:, None, :]
-            model += light * unit
-            slopes += [
-                unit,
-                light * unit * (ox / wide**2)[:, None, :],
-                light * unit * (oy / wide**2)[:, :, None],
-            ]
-        variance = noise[:, None, None] ** 2 + (np.maximum(model, 0) / gain_e_adu if gain_e_adu else 0.0)
-        weight = near / variance
-        rest = stamp - model
-        chi2 = (weight * rest**2).sum(axis=(1, 2))
-        jacobian = np.stack(slopes, axis=1).reshape(n, size, -1)
-        weighted = jacobian * weight.reshape(n, 1, -1)
-        normal = weighted @ jacobian.transpose(0, 2, 1)
-        scale = np.sqrt(np.maximum(np.einsum("naa->na", normal), 1e-30))
-        scaled = normal / scale[:, :, None] / scale[:, None, :]
-        if turn == _ROUNDS:
-            break
-        right = (weighted @ rest.reshape(n, -1, 1))[..., 0]
+    live = np.arange(n)  # the fits that still move
+    for turn in range(_ROUNDS):
+        scaled, scale, right, _ = _equations(
+            stamp[live], noise[live], reach, values[live], near[live], sigma, gain_e_adu
+        )
         damped = scaled + (0.1 * 0.3**turn + 1e-9) * np.eye(size)
         step = np.linalg.solve(damped, (right / scale)[..., None])[..., 0] / scale
-        step = np.where(np.isfinite(step), step, 0.0).reshape(n, k, 3)
+        step = np.where(np.isfinite(step), step, 0.0).reshape(-1, k, 3)
         step[:, :, 1:] = np.clip(step[:, :, 1:], -0.7 * sigma, 0.7 * sigma)
-        values += step
+        values[live] += step
+        error = 1 / scale.reshape(-1, k, 3)  # of each value, the others known: the least it can be
+        live = live[(np.abs(step) > _SETTLED * error).any(axis=(1, 2))]
+        if not len(live):
+            break
+    scaled, scale, _, chi2 = _equations(stamp, noise, reach, values, near, sigma, gain_e_adu)
     with np.errstate(invalid="ignore"):
         covariance = np.linalg.inv(scaled + 1e-12 * np.eye(size)) / scale[:, :, None] / scale[:, None, :]
     return values, covariance, chi2
+
+
+def _equations(
+    stamp: np.ndarray,
+    noise: np.ndarray,
+    reach: np.ndarray,
+    values: np.ndarray,
+    near: np.ndarray,
+    sigma: float,
+    gain_e_adu: float | None,
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Return the normal matrices with unit diagonal, their scales, the right sides and chi^2 at these values."""
+    n, k, _ = values.shape
+    wide = np.sqrt(sigma**2 + _PIXEL_VARIANCE)
+    jacobian = np.empty((n, 3 * k, *stamp.shape[1:]))
+    model = np.zeros_like(stamp)
+    for star in range(k):
+        ox, oy = reach - values[:, star, 1, None], reach - values[:, star, 2, None]
+        gx = np.exp(-0.5 * (ox / wide) ** 2) / (np.sqrt(2 * np.pi) * wide)
+        gy = np.exp(-0.5 * (oy / wide) ** 2) / (np.sqrt(2 * np.pi) * wide)
+        light = values[:, star, 0, None]
+        np.multiply(gy[:, :, None], gx[:, None, :], out=jacobian[:, 3 * star])
+        np.multiply(gy[:, :, None], (light * gx * ox / wide**2)[:, None, :], out=jacobian[:, 3 * star + 1])
+        np.multiply((light * gy * oy / wide**2)[:, :, None], gx[:, None, :], out=jacobian[:, 3 * star + 2])
+        model += light[:, :, None] * jacobian[:, 3 * star]
+    variance = noise[:, None, None] ** 2 + (np.maximum(model, 0) / gain_e_adu if gain_e_adu else 0.0)
+    weight = near / variance
+    rest = stamp - model
+    chi2 = (weight * rest**2).sum(axis=(1, 2))
+    jacobian = jacobian.reshape(n, 3 * k, -1)
+    weighted = jacobian * weight.reshape(n, 1, -1)
+    normal = weighted @ jacobian.transpose(0, 2, 1)
+    scale = np.sqrt(np.maximum(np.einsum("naa->na", normal), 1e-30))
+    right = (weighted @ rest.reshape(n, -1, 1))[..., 0]
+    return normal / scale[:, :, None] / scale[:, None, :], scale, right, chi2

@@ -192,3 +192,32 @@ def test_a_satellite_is_no_row_of_stars():
     assert not found.trailed
     distance = np.abs(y - 120 - x * 680 / 1399)
     assert matched(found, x[distance > 20], y[distance > 20])[0].mean() > 0.97
+
+
+@pytest.mark.parametrize("noise_adu", [0.3, 0.45, 0.7, 1.5])
+@pytest.mark.parametrize("slope_adu", [0.0, 2.0])
+def test_counts_coarser_than_the_noise_make_no_stars(noise_adu, slope_adu):
+    """8-bit video, or frames averaged and rounded: a sky of one count and its neighbour holds no stars."""
+    rng = np.random.default_rng(5)
+    shape = (600, 800)
+    grid_y, grid_x = np.mgrid[30:570:60, 30:770:60]
+    x, y = grid_x.ravel() + rng.uniform(-5, 5, grid_x.size), grid_y.ravel() + rng.uniform(-5, 5, grid_y.size)
+    sky_adu = 40.0 + slope_adu * np.linspace(0, 1, shape[1])
+    light = sky_adu + rng.normal(0, noise_adu, shape)
+    for a, b in zip(x, y, strict=True):
+        stamp = star_stamp(a - round(a), b - round(b), 60 * noise_adu, 2.5 / 2.3548, 8)
+        light[round(b) - 8 : round(b) + 9, round(a) - 8 : round(a) + 9] += stamp
+    found = detect(np.rint(light).astype("float32"))
+    hit, _ = matched(found, x, y)
+    assert hit.mean() > 0.97
+    assert len(found) - hit.sum() <= 12  # thousands where the sky's level is a whole count
+    sky = background(np.rint(light).astype("float32"))
+    level = sky.level(0, shape[0])
+    assert np.abs(level - sky_adu).max() < max(0.2, 0.2 * noise_adu)
+
+
+def test_the_noise_of_rounded_counts_is_that_of_the_counts():
+    rng = np.random.default_rng(6)
+    for noise_adu in (0.5, 1.0, 3.0):
+        counts = np.rint(rng.normal(20.3, noise_adu, (512, 512))).astype("float32")
+        assert np.median(background(counts).sigma_grid) == pytest.approx(counts.std(), rel=0.12)
