@@ -8,6 +8,7 @@ seeing and optics, dimmed by the air and in the corners, with photon and read no
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
+from typing import Literal
 
 import numpy as np
 
@@ -36,6 +37,7 @@ SIDEREAL_ARCSEC_S = 15.041
 EARTHSHINE = 1e-4
 # Blur of good optics, in pixels (assumed).
 OPTICS_FWHM_PX = 0.8
+_STAMPED_HALVES = {"start": -1.0, "middle": 0.0, "end": 1.0}  # of an exposure, after its middle
 
 
 @dataclass(frozen=True)
@@ -47,6 +49,7 @@ class Faults:
     `jitter_arcsec`: rms an axis, drawn for each frame; None takes the mount's tracking error.
     `drift_arcsec_h` toward `drift_pa_deg` from the start of each passage. `rotation_deg` is added to the roll.
     `mirrored`: the picture is flipped left to right. `site`: where the rig really stands.
+    `middle_stamp`: which instant of the exposure the stamps take for its middle.
     `limb_motion_arcsec`: rms of the seeing's displacements; None computes it, 0 turns it off.
     """
 
@@ -62,6 +65,7 @@ class Faults:
     limb_motion_arcsec: float | None = 0.0
     limb_correlation_arcsec: float = 8.0
     bleed: bool = False
+    middle_stamp: Literal["middle", "start", "end"] = "middle"
 
 
 @dataclass(frozen=True)
@@ -393,6 +397,7 @@ class Scene:
         faults = self.faults
         stamp = middle + faults.clock_offset_s
         stamp += faults.clock_drift_s_day * (middle - float(self.frames.start_tt_s[0])) / 86400
+        stamp += _STAMPED_HALVES[faults.middle_stamp] * self.shot(position).exposure_s / 2
         x, y = self._target_px(position, pointing)
         reference = balls.get(geometry.reference)
         rx, ry = pointing.project(reference.vector) if reference is not None else (np.nan, np.nan)

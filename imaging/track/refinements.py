@@ -21,6 +21,10 @@ from planner.sequence.models import Plan
 NAN = float("nan")
 CLAIM_SIGMA = 5.0
 CLOCK_SIGMA = 3.0
+START_ODDS = 20.0  # for half an exposure, over a wrong clock
+HALF_EXPOSURE = np.log(
+    0.05
+)  # how often it is the exposure that is misread, when a clock seems off: our judgement
 ANOTHER_DATE_S = 2.0 * DAY_S
 
 
@@ -51,8 +55,11 @@ def clock_findings(reading: Reading, plan: Plan, promise: Promise, question: Que
     if reading.name == "clock-far-off":
         findings.append(_offset_finding(reading.clock_offset_s, sigma))
     elif abs(offset) > CLOCK_SIGMA * sigma:
-        start = _start_for_middle(reading, plan, question)
-        findings.append(start or _offset_finding(offset, sigma, beyond=reading.name != "plain"))
+        start, perhaps = _start_for_middle(reading, plan, question)
+        if start is None:
+            start = _offset_finding(offset, sigma, beyond=reading.name != "plain")
+            start = replace(start, sentence=f"{start.sentence} {perhaps}".strip())
+        findings.append(start)
     drift, drift_sigma = _drift(reading, question)
     if np.isfinite(drift_sigma) and abs(drift) > CLAIM_SIGMA * drift_sigma:
         way = "gains" if drift > 0 else "loses"
@@ -97,31 +104,43 @@ def _refit(reading: Reading, priors: Priors, clock_s: np.ndarray | float, **more
         return None
 
 
-def _start_for_middle(reading: Reading, plan: Plan, question: Question) -> Finding | None:
-    """Return a finding when half the exposure explains the offset, as well as a free clock does or better."""
-    s = reading.sightings
-    half = s.exposure_s / 2.0
-    if np.median(half) < 3.0 * reading.fit.sigma["clock_s"]:
-        return None
-    clock_sigma = max(plan.rig.clock.sigma_s, 0.05)
-    tight = question.priors(clock_sigma)
+def _start_for_middle(reading: Reading, plan: Plan, question: Question) -> tuple[Finding | None, str]:
+    """Return the finding that half the exposure explains the offset, and words for a clock's own where it may.
+
+    Exposures that differ tell the two apart. Where all are alike nothing but the promise of the rig's clock does, and
+    either finding says that the other is possible, and at which odds.
+    """
+    s, used = reading.sightings, reading.fit.used
+    half, sigma = s.exposure_s / 2.0, reading.fit.sigma["clock_s"]
+    typical = float(np.median(half[used]))
+    if typical < 3.0 * sigma:
+        return None, ""
+    tight = question.priors(max(plan.rig.clock.sigma_s, 0.05))
     free = _refit(reading, question.priors(SMALL_CLOCK_S), reading.clock_s)
-    best = None
-    for sign, words in ((-1.0, "start of each exposure was taken for its middle"),
-                        (1.0, "end of each exposure was taken for its middle")):  # fmt: skip
-        fit = _refit(reading, tight, reading.clock_s + sign * half)
-        if fit is None or free is None:
-            continue
-        weight = fit.log_evidence - free.log_evidence + np.log(0.05)
-        if best is None or weight > best[0]:
-            best = weight, words, sign
-    if best is None or best[0] < np.log(20.0):
-        return None
-    text = (
-        f"The {best[1]}: stamps are off by half the exposure ({np.median(half):.3g} s), against a clock "
-        "that is wrong by chance as much."
-    )
-    return Finding("start-for-middle", odds(best[0]), text, best[2] * float(np.median(half)), NAN, "s")
+    tried = [(sign, _refit(reading, tight, reading.clock_s + sign * half)) for sign in (-1.0, 1.0)]
+    weighed = [(fit.log_evidence, sign) for sign, fit in tried if fit is not None]
+    if free is None or not weighed:
+        return None, ""
+    evidence, sign = max(weighed)
+    weight = evidence - free.log_evidence + HALF_EXPOSURE
+    which = "start" if sign < 0 else "end"
+    slip = f"the {which} of each exposure was taken for its middle"
+    alike = float(np.std(half[used])) < 3.0 * sigma
+    if weight >= np.log(START_ODDS):
+        text = f"{slip[0].upper()}{slip[1:]}: stamps are off by half the exposure ({typical:.3g} s)"
+        if alike:
+            way = "slow" if sign < 0 else "fast"
+            text += (
+                f". All exposures are alike, so that a clock {typical:.3g} s {way} would look the same: the odds "
+                "hold what the rig's clock promises."
+            )
+        else:
+            text += ", as exposures that differ tell: against a clock that is wrong by chance as much."
+        return Finding("start-for-middle", odds(weight), text, sign * typical, NAN, "s"), ""
+    if not alike or weight < -np.log(START_ODDS):
+        return None, ""
+    ratio = f"{np.exp(abs(weight)):.2g} to 1 {'for' if weight > 0 else 'against'}"
+    return None, f"Or {slip} ({typical:.3g} s): exposures that are all alike cannot tell; odds {ratio} that."
 
 
 def _drift(reading: Reading, question: Question) -> tuple[float, float]:

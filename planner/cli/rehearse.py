@@ -22,6 +22,13 @@ import click
 @click.option(
     "--clock-drift", metavar="S_DAY", type=float, default=0.0, help="Seconds a day on top of the offset."
 )
+@click.option(
+    "--middle-stamp",
+    type=click.Choice(["middle", "start", "end"]),
+    default="middle",
+    show_default=True,
+    help="Which instant of each exposure its stamps take for the middle.",
+)
 @click.option("--pointing-error", metavar="ARCSEC", type=float, help="Rms an axis, a passage [the mount's].")
 @click.option(
     "--jitter", metavar="ARCSEC", type=float, help="Rms an axis, a frame [the mount's tracking error]."
@@ -45,8 +52,8 @@ import click
 @click.option("--force", is_flag=True, help="Replace frames that exist.")
 @click.option("--quiet", is_flag=True)
 def command(  # type: ignore[no-untyped-def]
-    plan_path, output, thin, count, passage, binning, crop, clock_offset, clock_drift, pointing_error, jitter,
-    rotation, drift, drift_pa, mirror, from_site, limb_motion, bleed, seed, with_wcs, jobs, force, quiet,
+    plan_path, output, thin, count, passage, binning, crop, clock_offset, clock_drift, middle_stamp,
+    pointing_error, jitter, rotation, drift, drift_pa, mirror, from_site, limb_motion, bleed, seed, with_wcs, jobs, force, quiet,
 ) -> int:  # fmt: skip
     """Draw the frames of PLAN as the rig would record them, with faults on purpose if you like.
 
@@ -88,6 +95,7 @@ def command(  # type: ignore[no-untyped-def]
         site=_site(from_site, plan.site),
         limb_motion_arcsec=None if limb_motion == "auto" else _number("--limb-motion", limb_motion),
         bleed=bleed,
+        middle_stamp=middle_stamp,
     )
     with bar("rehearsing", quiet) as tick:
         paths = rehearse(

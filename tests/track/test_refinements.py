@@ -58,7 +58,23 @@ def test_a_start_taken_for_the_middle_is_told_apart_from_a_wrong_clock():
     frames = replace(frames, tt_s=planned - exposure / 2, exposure_s=exposure)
     clock = told("retrograde", frames)[1]
     assert [finding.name for finding in clock.findings] == ["start-for-middle"]
-    assert "start of each exposure was taken for its middle" in clock.findings[0].sentence
+    assert clock.findings[0].sentence.startswith("The start of each exposure was taken for its middle")
+    assert "as exposures that differ tell" in clock.findings[0].sentence
+
+
+@pytest.mark.parametrize(("sigma_arcsec", "name"), [(0.01, "start-for-middle"), (0.5, "clock-offset")])
+def test_with_exposures_all_alike_a_start_for_a_middle_and_a_wrong_clock_are_both_named(sigma_arcsec, name):
+    """The closer an offset is known to half the exposure, the less likely is a clock wrong by as much: odds say it."""
+    rng = np.random.default_rng(3)
+    planned = times("retrograde", 40, rng)
+    frames = star_sightings(scene("retrograde")[0].path, planned, rng, sigma_arcsec=sigma_arcsec)
+    exposure = np.full(40, 120.0)
+    frames = replace(frames, tt_s=planned - exposure / 2, exposure_s=exposure)
+    found = told("retrograde", frames)[1].findings
+    assert [finding.name for finding in found] == [name]
+    assert "taken for its middle" in found[0].sentence
+    assert "slow" in found[0].sentence
+    assert "odds" in found[0].sentence
 
 
 def test_a_site_typed_wrong_by_a_fifth_of_a_degree_is_found_beside_the_moon():
