@@ -11,6 +11,7 @@ from pathlib import Path
 
 import numpy as np
 
+from imaging.compose.bodies import PATCH_MOST_PX
 from imaging.compose.canvas import Canvas
 from imaging.compose.choices import Choices
 from imaging.compose.choose import evenly_spaced
@@ -20,7 +21,7 @@ from imaging.compose.patch import lay_patch, patch_box
 from imaging.compose.picture import Drawn, Picture
 from imaging.compose.plane import ARCSEC_PER_RADIAN, sky_to_plane
 from imaging.compose.sky_path import glow_radius_px
-from imaging.compose.visit import PATCH_MOST_PX, without_sky
+from imaging.compose.visit import without_sky
 from planner.errors import FrameSetAside, InputError
 
 
@@ -95,8 +96,9 @@ def arc_over_landscape(material: Material, landscape: Landscape, choices: Choice
         choices.tick(done, len(chosen))
         frame = visits[index]
         try:
+            drawn_at = canvas.at_scale(canvas.scale_arcsec_px / choices.enlarge)
             piece = _piece(
-                frame, canvas, float(geometry.zenith_pa_deg[index]), (x_px[index], y_px[index]), light
+                frame, drawn_at, float(geometry.zenith_pa_deg[index]), (x_px[index], y_px[index]), light
             )
         except FrameSetAside as problem:
             left_out.append((frame.path.name, problem.reason))
@@ -124,10 +126,18 @@ def arc_over_landscape(material: Material, landscape: Landscape, choices: Choice
         drawn=tuple(drawn),
         used=tuple((frame, "target of its visit") for _, frame, *_ in pieces),
         tone="photograph",
+        enlargement=choices.enlarge,
         notes=(
             f"the landscape {landscape.path.name} is the user's: azimuth {landscape.azimuth_deg:g} in the middle, "
             f"{landscape.width_deg:g} degrees wide, taken as a straight view with a level horizon",
             "the target stands at each visit's altitude and azimuth, refraction included",
+            *(
+                [
+                    f"its image is drawn {choices.enlarge:g} times larger than the landscape's scale, about its place"
+                ]
+                if choices.enlarge > 1
+                else []
+            ),
             "its brightness is true between visits, and scaled so that the brightest is white over the landscape",
         ),
         left_out=tuple(left_out),

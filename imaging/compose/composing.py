@@ -151,7 +151,7 @@ def write_picture(
             shown = tones
             if outputs.caption:
                 shown = files.captioned(
-                    tones,
+                    files.labelled(tones, picture.labels),
                     caption,
                     picture.canvas.up_pa_deg if has_sky else None,
                     picture.canvas.scale_arcsec_px,

@@ -115,73 +115,108 @@ def _ascii(text: str) -> str:
     return plain.encode("ascii", "replace").decode()
 
 
-def captioned(
-    image: np.ndarray, caption: str, up_pa_deg: float | None, scale_arcsec_px: float, mirrored: bool = False
-) -> np.ndarray:
+def labelled(image: np.ndarray, labels: tuple[tuple[float, float, str], ...]) -> np.ndarray:
+    """Return tones (first row at the top) with words in them, each centred on canvas pixels (x_px, y_px)."""
+    if not labels:
+        return image
+    from PIL import Image, ImageDraw
+
+    words = Image.new("L", (image.shape[1], image.shape[0]))
+    draw, font = ImageDraw.Draw(words), _font(_type_size(image.shape[1]))
+    for x_px, y_px, text in labels:
+        draw.text((x_px, image.shape[0] - 1 - y_px), text, fill=255, font=font, anchor="mm")
+    share = np.asarray(words, np.float32) / 255
+    if image.ndim == 3:
+        share = share[..., None]
+    return np.asarray(image + share * (BRIGHT / 255 - image), np.float32)
+
+
+def captioned(image: np.ndarray, caption: str, up_pa_deg: float | None, scale_arcsec_px: float) -> np.ndarray:
     """Return tones with a band below that holds the caption, north and east arrows, and a scale bar."""
-    from matplotlib import font_manager
-    from PIL import Image, ImageDraw, ImageFont
+    from PIL import Image, ImageDraw
 
     short = NARROWEST_PX - image.shape[1]
     if short > 0:  # room for words beside a small picture
         sides = ((0, 0), (short // 2, short - short // 2), *([(0, 0)] if image.ndim == 3 else []))
         image = np.pad(image, sides, constant_values=18 / 255)
-    height, width = image.shape[:2]
-    size = max(11, min(round(width / 62), 44))
-    font = ImageFont.truetype(font_manager.findfont("DejaVu Sans"), size)
-    marks_px = 9 * size
-    columns = max(20, int((width - marks_px - 3 * size) / (0.56 * size)))
+    width = image.shape[1]
+    size = _type_size(width)
+    font = _font(size)
+    length, label = round_length(0.22 * width * scale_arcsec_px)
+    bar_px = length / scale_arcsec_px
+    columns = max(20, int((width - max(bar_px, 6 * size) - 5 * size) / (0.56 * size)))
     lines = textwrap.wrap(caption, columns)
-    band = max(int((len(lines) + 1.4) * 1.35 * size), int(5.6 * size))
+    arrows = 0.0 if up_pa_deg is None else 4.8 * size
+    band = max(int((len(lines) + 1.4) * 1.35 * size), int(arrows + 3.4 * size))
     strip = Image.new("L", (width, band), 18)
     draw = ImageDraw.Draw(strip)
     for number, line in enumerate(lines):
-        draw.text((size, int((0.7 + 1.35 * number) * size)), line, fill=225, font=font)
+        draw.text((size, int((0.7 + 1.35 * number) * size)), line, fill=BRIGHT, font=font)
     if up_pa_deg is not None:  # a landscape and a sheet of discs have no celestial north
-        _arrows(draw, font, width - 5.2 * size, 3.0 * size, 1.7 * size, up_pa_deg)
+        _arrows(draw, font, width - 4.4 * size, 3.0 * size, 1.7 * size, up_pa_deg)
+    _scale_bar(draw, font, size, (width - size, band - 1.3 * size), bar_px, label)
     strip_array = np.asarray(strip, np.float32) / 255
     if image.ndim == 3:
         strip_array = np.repeat(strip_array[..., None], 3, axis=2)
-    whole = np.concatenate([image, strip_array])
-    return _with_scale_bar(whole, height, width, size, font, scale_arcsec_px)
+    return np.concatenate([image, strip_array])
+
+
+def _type_size(width: int) -> int:
+    return max(11, min(round(width / 62), 44))
+
+
+def _font(size: int) -> Any:
+    from matplotlib import font_manager
+    from PIL import ImageFont
+
+    return ImageFont.truetype(font_manager.findfont("DejaVu Sans"), size)
 
 
 def _arrows(draw: Any, font: Any, x: float, y: float, length: float, up_pa_deg: float) -> None:
     for label, pa in (("N", 0.0), ("E", 90.0)):
         angle = np.radians(pa - up_pa_deg)
         dx, dy = -np.sin(angle) * length, -np.cos(angle) * length
-        draw.line([(x, y), (x + dx, y + dy)], fill=225, width=max(1, int(length / 14)))
-        draw.text((x + 1.42 * dx, y + 1.42 * dy), label, fill=225, font=font, anchor="mm")
+        draw.line([(x, y), (x + dx, y + dy)], fill=BRIGHT, width=max(1, int(length / 14)))
+        draw.text((x + 1.42 * dx, y + 1.42 * dy), label, fill=BRIGHT, font=font, anchor="mm")
 
 
 NARROWEST_PX = 480
-ROUND_LENGTHS_ARCSEC = (1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200, 18000, 36000)
+BRIGHT = 225  # of 255: words and marks
+ROUND_LENGTHS_ARCSEC = (
+    0.1,
+    0.2,
+    0.5,
+    1,
+    2,
+    5,
+    10,
+    20,
+    30,
+    60,
+    120,
+    300,
+    600,
+    1200,
+    1800,
+    3600,
+    7200,
+    18000,
+    36000,
+)
 
 
 def round_length(arcsec: float) -> tuple[float, str]:
     """Return the largest round length not above `arcsec`, with its label."""
-    best = max((value for value in ROUND_LENGTHS_ARCSEC if value <= arcsec), default=1)
-    label = f"{best}″" if best < 60 else f"{best // 60}′" if best < 3600 else f"{best // 3600}°"
+    best = max((value for value in ROUND_LENGTHS_ARCSEC if value <= arcsec), default=0.1)
+    label = f"{best:g}″" if best < 60 else f"{best // 60}′" if best < 3600 else f"{best // 3600}°"
     return float(best), label
 
 
-def _with_scale_bar(
-    image: np.ndarray, height: int, width: int, size: int, font: Any, scale_arcsec_px: float
-) -> np.ndarray:
-    from PIL import Image, ImageDraw
-
-    length, label = round_length(0.22 * width * scale_arcsec_px)
-    pixels = length / scale_arcsec_px
-    box = (0, height - int(3 * size), width, height)
-    under = (image[box[1] : box[3]] * 255).astype(np.uint8)
-    strip = Image.fromarray(np.ascontiguousarray(under))
-    draw = ImageDraw.Draw(strip)
-    right, line = width - size, strip.height - size
-    bright = (225, 225, 225) if image.ndim == 3 else 225
-    thick = max(1, size // 9)
-    draw.line([(right - pixels, line), (right, line)], fill=bright, width=thick)
-    for x in (right - pixels, right):
-        draw.line([(x, line - size // 3), (x, line + size // 3)], fill=bright, width=thick)
-    draw.text((right - pixels / 2, line - size * 0.35), label, fill=bright, font=font, anchor="mb")
-    image[box[1] : box[3]] = np.asarray(strip, np.float32) / 255
-    return image
+def _scale_bar(
+    draw: Any, font: Any, size: int, right_end: tuple[float, float], length_px: float, label: str
+) -> None:
+    right, line = right_end
+    draw.line([(right - length_px, line), (right, line)], fill=BRIGHT, width=max(1, size // 9))
+    for x in (right - length_px, right):
+        draw.line([(x, line - size // 3), (x, line + size // 3)], fill=BRIGHT, width=max(1, size // 9))
+    draw.text((right - length_px / 2, line - size * 0.35), label, fill=BRIGHT, font=font, anchor="mb")

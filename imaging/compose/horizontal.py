@@ -39,6 +39,7 @@ def over_horizon(data: PathData, material: Material) -> PathData:
     return replace(
         data, canvas=canvas, anchor_deg=anchor, line=line, line_tt_s=tt_s, points=points, ticks=ticks, on_disc=None,
         disc_radius_arcsec=float("nan"), up_pa_deg=0.0, horizontal=True, second=None,
+        passing=None,
     )  # fmt: skip
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 from dataclasses import dataclass, field
+from pathlib import Path
 
 import numpy as np
 
@@ -51,14 +52,14 @@ class Light:
 
     def read(self, registered: Registered) -> Frame:
         """Return a frame's pixels; raises FrameSetAside when the file is missing, moved or unreadable."""
+        return self.read_file(registered.path, registered.frame_index, registered.camera)
+
+    def read_file(self, path: Path, frame_index: int, camera: Camera) -> Frame:
+        """Return the pixels of a frame that need not be registered; raises FrameSetAside."""
         from imaging.frames.reading import read_frame
 
         frame = read_frame(
-            registered.path,
-            zone="UTC",
-            index=registered.frame_index,
-            colour=self.colour,
-            calibration=self.calibration_of(registered.camera),
+            path, zone="UTC", index=frame_index, colour=self.colour, calibration=self.calibration_of(camera)
         )
         if frame.filter:
             self.filters.add(frame.filter)

@@ -46,6 +46,7 @@ class Registered:
     `tt_s`: mid-exposure, with the clock offset that the check found taken off. `reference_*`: predicted place of the
     Sun or Moon then (NaN when stars are the reference). `measured_*`: where the target was found, NaN when it was
     not; `sigma_along_arcsec`, `sigma_across_arcsec`: its 1-sigma. `limb_px`: centre and radius of the disc.
+    `registration_sigma_arcsec`: of the pointing an axis, where a neighbour's was borrowed.
     """
 
     path: Path
@@ -68,6 +69,7 @@ class Registered:
     verdict: str
     believed: bool = True
     camera: Camera = Camera()
+    registration_sigma_arcsec: float = float("nan")
 
     @property
     def measured(self) -> bool:
@@ -101,11 +103,23 @@ class Registered:
 
 
 @dataclass(frozen=True)
+class Starless:
+    """A frame that was not solved: what may still be known of it, when its planets show."""
+
+    path: Path
+    frame_index: int
+    passage: str
+    tt_s: float
+    exposure_s: float
+
+
+@dataclass(frozen=True)
 class Material:
     """A plan, its track, and the frames that can be used, in time order.
 
     `geometry_at(tt_s)` is the family's prediction for the plan's site; `set_aside` lists what cannot be used.
-    `notes`: what was chosen among the frames. `other_tracks`: of further rigs.
+    `notes`: what was chosen among the frames. `other_tracks`: of further rigs. `starless`: frames set aside because
+    they were not solved; see `bright`.
     """
 
     plan: Plan
@@ -117,6 +131,7 @@ class Material:
     observer: Observer | None
     notes: tuple[str, ...] = ()
     other_tracks: tuple[Path, ...] = ()
+    starless: tuple[Starless, ...] = ()
 
     @cached_property
     def geometry(self) -> Geometry:
@@ -167,9 +182,11 @@ def gather(
     meta["clock_correction_s"] = correction = offset if abs(offset) > 3 * sigma else 0.0
     folder = _Folder(track.path, frames_folder, meta)
     rows, aside = [], []
+    starless: list[Starless] = []
     for index, name in enumerate(track["file"].tolist()):
         try:
             if track["solved_by"][index] == "none":
+                starless += _starless(track, index, folder, correction)
                 raise FrameSetAside(name, f"was not solved: {track['reason'][index] or 'no reason given'}")
             path = folder.find(name)
             rows.append((float(tt_s_from_iso(str(track["utc_mid"][index]))) - correction, index, path))
@@ -188,7 +205,9 @@ def gather(
     if not frames:
         first = f"; the first: {aside[0]}" if aside else ""
         raise InputError(f"{track.path}: no frame is left to compose ({len(aside)} set aside{first})")
-    return Material(plan, track.path, meta, tuple(frames), tuple(aside), geometry_at, observer)
+    return Material(
+        plan, track.path, meta, tuple(frames), tuple(aside), geometry_at, observer, starless=tuple(starless)
+    )
 
 
 def planned_geometry(plan: Plan, observer: Observer | None) -> Callable[[np.ndarray], Geometry]:
@@ -225,6 +244,19 @@ class _Folder:
             return self.index[Path(name).name]
         except KeyError:
             raise FrameSetAside(name, f"is not in {self.folders[0]}; say where with --frames") from None
+
+
+def _starless(track: Track, index: int, folder: _Folder, correction_s: float) -> list[Starless]:
+    """Return a frame that was not solved, where it is there and has a time."""
+    from planner.sky.timescale import tt_s_from_iso
+
+    try:
+        path = folder.find(str(track["file"][index]))
+        tt_s = float(tt_s_from_iso(str(track["utc_mid"][index]))) - correction_s
+    except (FrameSetAside, InputError, ValueError):
+        return []
+    numbers = int(track["frame_index"][index]), str(track["passage"][index])
+    return [Starless(path, *numbers, tt_s, float(track["exposure_s"][index]))]
 
 
 class _Sky:

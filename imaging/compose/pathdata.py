@@ -14,6 +14,8 @@ from imaging.compose.canvas import Canvas
 from imaging.compose.choices import Choices
 from imaging.compose.material import Material, Registered
 from imaging.compose.orientation import up_pa_deg
+from imaging.compose.passing import LightCurve, Passing, light_curve_of, passing_of
+from imaging.compose.plane import ARCSEC_PER_RADIAN
 from imaging.track.path import target_place
 from planner.errors import InputError
 from planner.events.family import Geometry
@@ -22,6 +24,7 @@ from planner.sky.timescale import datetime_from_tt_s
 
 PATH_POINTS = 721
 STANDS_STILL_ARCSEC = 2.0
+WIDEST_ARCSEC = float(np.tan(np.radians(60.0)) * ARCSEC_PER_RADIAN)
 # Steps of time ticks in seconds, or days for campaigns: round to who reads a clock or a calendar
 _STEPS_S = (10, 30, 60, 120, 300, 600, 900, 1800, 3600, 7200, 10800, 21600, 43200)
 _STEPS_DAYS = (1, 2, 5, 10, 15, 30, 60, 90)
@@ -66,7 +69,7 @@ class PathData:
     `line`: predicted path (2, m), right and up in arcsec. `points`, `sigma`: measured places (2, n) and their 1-sigma.
     `disc_radius_arcsec`: of the reference disc about the origin, NaN among stars.
     `anchor_deg`: ICRS direction of the origin (of the disc, at the middle of the path); where `horizontal`, minus its
-    azimuth and its altitude.
+    azimuth and its altitude. `passing`: what passes before a star that is the target; `ticks` are then on its path.
     """
 
     title: str
@@ -95,6 +98,13 @@ class PathData:
     horizontal: bool = False
     second: SecondPath | None = None
     star_limit: float | None = None
+    passing: Passing | None = None
+    light: LightCurve | None = None
+
+    @property
+    def too_wide(self) -> bool:
+        """True for a path that no tangent plane holds: over 60 degrees from its middle."""
+        return not np.hypot(*self.line).max(initial=0.0) < WIDEST_ARCSEC
 
 
 def path_data(
@@ -126,6 +136,12 @@ def path_data(
     measured = [frame for frame in frames if frame.measured]
     points = np.array([_of_frame(canvas, f, on_disc, middle_anchor) for f in measured]).reshape(-1, 2).T
     disc = geometry.discs.get(on_disc or "")
+    passing = passing_of(material, canvas, middle_anchor) if on_disc is None else None
+    campaign = last - first > 5 * 86400.0
+    if passing is None:
+        ticks = time_ticks(tt_s, line, zone, campaign)
+    else:
+        ticks = time_ticks(passing.tt_s, passing.line, zone, False, still_arcsec=0.0)
     data = PathData(
         title=material.plan.title,
         site=_site_line(material),
@@ -139,7 +155,7 @@ def path_data(
         points=points,
         point_sigma=np.array([frame.sigma_arcsec for frame in measured]),
         residuals=_residuals(canvas, measured, on_disc, middle_anchor, tt_s, line),
-        ticks=time_ticks(tt_s, line, zone, last - first > 5 * 86400.0),
+        ticks=ticks,
         zone=zone,
         zone_label=zone_label,
         disc_radius_arcsec=float(disc.semidiameter_arcsec[PATH_POINTS // 2]) if disc is not None else np.nan,
@@ -149,12 +165,14 @@ def path_data(
         north_of_date_pa_deg=_north_of_date(middle_anchor, middle),
         phase_angle_deg=float(disc.phase_angle_deg[PATH_POINTS // 2]) if on_disc == "moon" and disc else 0.0,
         bright_limb_pa_deg=float(disc.bright_limb_pa_deg[PATH_POINTS // 2]) if disc else 0.0,
-        campaign=last - first > 5 * 86400.0,
+        campaign=campaign,
         second=None if other is None else _second(other, canvas, on_disc, middle_anchor),
         star_limit=choices.star_limit,
+        passing=passing,
+        light=light_curve_of(material),
     )
     _require_grid(choices.grid, data)
-    if choices.grid == "altaz":
+    if choices.grid == "altaz" or data.too_wide:
         from imaging.compose.horizontal import over_horizon
 
         return over_horizon(data, material)
@@ -162,7 +180,9 @@ def path_data(
 
 
 def _require_grid(grid: str, data: PathData) -> None:
-    suits = ("auto", "disc" if data.on_disc else "radec", "altaz")
+    suits: tuple[str, ...] = ("auto", "disc" if data.on_disc else "radec", "altaz")
+    if data.too_wide:
+        suits = ("auto", "altaz")  # no tangent plane holds it
     if grid not in suits:
         raise InputError(f"--grid: found {grid!r}; this path can be drawn with {', '.join(suits)}")
 
@@ -266,9 +286,15 @@ def _site_line(material: Material) -> str:
     return f"{site.name}, {north} {east}, {site.height_m:.0f} m"
 
 
-def time_ticks(tt_s: np.ndarray, line: np.ndarray, zone: tzinfo, campaign: bool) -> tuple[TimeTick, ...]:
+def time_ticks(
+    tt_s: np.ndarray,
+    line: np.ndarray,
+    zone: tzinfo,
+    campaign: bool,
+    still_arcsec: float = STANDS_STILL_ARCSEC,
+) -> tuple[TimeTick, ...]:
     """Return about ten ticks at round instants of the zone; none along a path that is a point."""
-    if np.ptp(line, axis=1).max() < STANDS_STILL_ARCSEC:
+    if np.ptp(line, axis=1).max() < still_arcsec:
         return ()
     start: datetime = datetime_from_tt_s(float(tt_s[0])).astimezone(zone)  # type: ignore[union-attr]
     span = float(tt_s[-1] - tt_s[0])

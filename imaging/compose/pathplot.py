@@ -22,6 +22,7 @@ from imaging.compose.plot_marks import (
     write_tick_labels,
 )
 from imaging.compose.plot_ornaments import draw_compass, draw_inset, draw_legend, draw_scale_bar
+from imaging.compose.plot_passing import draw_light, draw_passing
 from imaging.compose.plot_residuals import draw_residuals
 from imaging.compose.skygrid import View, altaz_grid, edge_crossing, radec_grid
 from planner.outputs import whole_file
@@ -40,9 +41,10 @@ def draw_path_plot(data: PathData, palette: Palette = LIGHT, stars: bool = True,
     view = _view(data)
     aspect = (view[3] - view[2]) / (view[1] - view[0])
     lower = 2.3 if residuals and data.points.size else 0.0
+    panel = 1.75 if data.light is not None else 0.0
     main = WIDE_IN * (RIGHT - LEFT) * aspect
     labels = 0.06 if data.on_disc else AXIS_LABELS_IN
-    below = labels + LEGEND_IN * (2 if data.second else 1) + 0.08
+    below = labels + LEGEND_IN * (2 if data.second else 1) + 0.08 + panel
     tall = main + lower + below + 0.78
     figure = Figure(figsize=(WIDE_IN, tall), facecolor=palette.paper)
     FigureCanvasAgg(figure)
@@ -66,6 +68,8 @@ def draw_path_plot(data: PathData, palette: Palette = LIGHT, stars: bool = True,
         if stars and not data.horizontal:
             field = star_places(data, view)
     _path(axes, data, palette)
+    if data.passing is not None:
+        draw_passing(axes, data.passing, palette)
     crowd = crowd_of(axes, data)
     if not data.horizontal:
         draw_compass(axes, data, palette, crowd)
@@ -81,6 +85,8 @@ def draw_path_plot(data: PathData, palette: Palette = LIGHT, stars: bool = True,
         write_limb_angles(figure, axes, data, palette, crowd)
     elif field is not None:
         field.write_names(figure, axes, palette, crowd)
+    if data.light is not None:
+        draw_light(figure, data, data.light, palette, (LEFT, (lower + 0.42) / tall, RIGHT - LEFT, 1.2 / tall))
     if lower:
         draw_residuals(figure, data, palette, (LEFT, 0.42 / tall, RIGHT - LEFT, (lower - 0.35) / tall))
     return figure
@@ -109,6 +115,9 @@ def _view(data: PathData) -> View:
         away = np.hypot(*data.points).max(initial=0.0) / data.disc_radius_arcsec
         reach = max(1.17, min(away + 0.1, 1.8)) * data.disc_radius_arcsec
         return -reach, reach, -reach, reach
+    if data.passing is not None:
+        half = data.passing.half_arcsec
+        return -half, half, -0.6 * half, 0.6 * half
     x, y = data.line
     length = max(np.ptp(x), np.ptp(y))
     # a target that stands still, a star, is shown in its neighbourhood
@@ -168,7 +177,7 @@ def _lit_part(data: PathData, palette: Palette) -> Any:
 def _sky(axes: Any, data: PathData, palette: Palette, view: View) -> None:
     grid = altaz_grid if data.horizontal else radec_grid
     for line in grid(data.canvas, data.anchor_deg, view):
-        ground = data.horizontal and line.kind == "dec" and line.label.strip("+−") in ("0°", "0° 00′")
+        ground = data.horizontal and line.kind == "dec" and line.label in ("0°", "0° 00′")
         axes.plot(
             *line.points,
             color=palette.ink if ground else palette.faint,
@@ -187,7 +196,7 @@ def _sky(axes: Any, data: PathData, palette: Palette, view: View) -> None:
             textcoords="offset points",
             ha="center" if edge == "bottom" else "right",
             va="top" if edge == "bottom" else "center",
-            fontsize=8,
+            fontsize=8 if len(line.label) < 13 or edge == "bottom" else 7,
             color=palette.quiet,
             annotation_clip=False,
         )
@@ -197,6 +206,8 @@ def _path(axes: Any, data: PathData, palette: Palette) -> None:
     from matplotlib.patches import Circle
 
     first = "predicted" if data.second is None else f"predicted, {data.site.split(',')[0]}"
+    if data.passing is not None:
+        first = "_"  # a star stands still: what moves is the body
     axes.plot(*data.line, color=palette.predicted, linewidth=1.2, zorder=3, label=first)
     pixel = arcsec_a_point(axes)
     for tick in data.ticks:
@@ -204,7 +215,7 @@ def _path(axes: Any, data: PathData, palette: Palette) -> None:
         axes.plot(
             [tick.right_arcsec - across[0], tick.right_arcsec + across[0]],
             [tick.up_arcsec - across[1], tick.up_arcsec + across[1]],
-            color=palette.predicted,
+            color=palette.predicted if data.passing is None else palette.other,
             linewidth=1.2,
             zorder=3.1,
         )

@@ -1,7 +1,7 @@
 """The discs of a planet over months, side by side in date order, at one scale and one orientation.
 
-Each visit's frames are registered on the planet and stacked; the sharper half of a visit is kept. The series may be
-enlarged, which the statement of truth and the caption then say.
+Each visit's frames are registered on the planet and stacked, its shortest exposures where it has several: what the
+longer ones burn out. The series may be enlarged, which the statement of truth and the caption then say.
 """
 
 from __future__ import annotations
@@ -13,14 +13,18 @@ import numpy as np
 from imaging.compose.canvas import Canvas
 from imaging.compose.choices import Choices
 from imaging.compose.choose import evenly_spaced
+from imaging.compose.exposures import by_exposure
 from imaging.compose.light import Light, exposure_level
 from imaging.compose.material import Material, Registered
 from imaging.compose.orientation import up_pa_deg
+from imaging.compose.pathdata import MONTHS
 from imaging.compose.picture import Drawn, Picture
 from imaging.compose.stack import new_stack
 from planner.errors import FrameSetAside, InputError
+from planner.sky.timescale import datetime_from_tt_s
 
 MOST_COLUMNS = 8
+LABEL_SHARE = 0.16  # of a cell's height, at its foot, for the date
 
 
 def phase_series(material: Material, choices: Choices, light: Light) -> Picture:
@@ -28,12 +32,13 @@ def phase_series(material: Material, choices: Choices, light: Light) -> Picture:
 
     The canvas is a sheet, not a piece of sky: every cell is a tangent plane about the target at its date.
     """
-    visits = [(name, [f for f in frames if f.measured]) for name, frames in material.passages()]
+    visits = [(name, _showing(frames)) for name, frames in material.passages()]
     visits = [(name, frames) for name, frames in visits if frames]
     if not visits:
         raise InputError(f"{material.track_path}: the target was measured in no frame")
     middles = np.array([frames[len(frames) // 2].tt_s for _, frames in visits])
-    visits = [visits[index] for index in evenly_spaced(middles, min(choices.instants, len(visits)))]
+    if len(visits) > choices.instants:
+        visits = [visits[index] for index in evenly_spaced(middles, choices.instants)]
     native = min(frame.scale_arcsec_px for _, frames in visits for frame in frames)
     scale = (choices.scale_arcsec_px or native) / choices.enlarge
     disc = material.geometry.discs.get(material.target)
@@ -41,13 +46,14 @@ def phase_series(material: Material, choices: Choices, light: Light) -> Picture:
         raise InputError(f"{material.target} is a point of light: a series of its discs is not possible")
     half_px = max(12, int(np.ceil(1.6 * float(disc.semidiameter_arcsec.max()) / scale + 3 * native / scale)))
     cell = 2 * half_px + 1
-    columns = min(MOST_COLUMNS, len(visits))
-    rows = -(-len(visits) // columns)
+    rows = -(-len(visits) // MOST_COLUMNS)
+    columns = -(-len(visits) // rows)
     planes = (3,) if light.colour else ()
     sheet = np.zeros((rows * cell, columns * cell, *planes), np.float32)
     drawn: list[Drawn] = []
     used: list[tuple[Registered, str]] = []
     left_out: list[tuple[str, str]] = []
+    labels: list[tuple[float, float, str]] = []
     for number, (_, frames) in enumerate(visits):
         choices.tick(number, len(visits))
         stacked = _visit(
@@ -67,6 +73,7 @@ def phase_series(material: Material, choices: Choices, light: Light) -> Picture:
         )
         drawn.append(Drawn(middle, x_px, y_px, x_px, y_px, middle.displacement_arcsec, sd / scale))
         used += [(frame, "disc of its date") for frame in kept]
+        labels.append((x_px, low + 0.5 * LABEL_SHARE * cell, _date(middle.tt_s)))
     choices.tick(len(visits), len(visits))
     if not drawn:
         raise InputError(f"no frame of the target is left; the first: {left_out[0]}")
@@ -91,7 +98,19 @@ def phase_series(material: Material, choices: Choices, light: Light) -> Picture:
             "the sheet has no sky coordinates: each disc stands in a cell of its own",
         ),
         left_out=tuple(left_out),
+        labels=tuple(labels),
     )
+
+
+def _showing(frames: list[Registered]) -> list[Registered]:
+    """Return the frames of a visit that show the disc: of those that hold the target, the shortest exposures."""
+    groups = by_exposure([frame for frame in frames if frame.measured or frame.solved_by == "planets"])
+    return sorted(groups[-1], key=lambda frame: frame.tt_s) if groups else []
+
+
+def _date(tt_s: float) -> str:
+    moment = datetime_from_tt_s(tt_s)
+    return "" if moment is None else f"{moment.day} {MONTHS[moment.month - 1]} {moment.year}"
 
 
 def _visit(

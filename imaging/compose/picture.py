@@ -34,6 +34,7 @@ class Picture:
     `anchor_ra_deg`, `anchor_dec_deg`: what the canvas is anchored on at `reference_tt_s`.
     `used`: every frame that went in, with its role. `tone`: `disc` or `stars`, for the stretch.
     `enlargement`: by how much bodies are drawn larger than true (1 for none). `left_out`: frames and why.
+    `labels`: words written into the picture with its caption, each centred on canvas pixels (x_px, y_px).
     """
 
     kind: str
@@ -51,6 +52,7 @@ class Picture:
     notes: tuple[str, ...] = ()
     enlargement: float = 1.0
     left_out: tuple[tuple[str, str], ...] = field(default=())
+    labels: tuple[tuple[float, float, str], ...] = ()
 
     def holds_path_about(self, disc: str | None) -> bool:
         """Return whether a path about this disc, or among stars (None), can be drawn on the picture."""

@@ -27,6 +27,8 @@ def crowd_of(axes: Any, data: PathData) -> Crowd:
     """Return what lies on the sheet already: the lines and the measured places."""
     box = axes.get_window_extent()
     kept = [_dense(data.line), data.points]
+    if data.passing is not None:
+        kept.append(_dense(data.passing.line))
     if data.second is not None:
         kept += [_dense(data.second.line), data.second.points]
     points = axes.transData.transform(np.concatenate(kept, axis=1).T).T

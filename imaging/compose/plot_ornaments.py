@@ -18,6 +18,8 @@ def draw_compass(axes: Any, data: PathData, palette: Palette, crowd: Crowd) -> N
     box = axes.get_window_extent()
     dots = axes.figure.dpi / 72
     x, y = box.x0 + 58 * dots, box.y1 - 56 * dots
+    if _on_path(crowd, _about(x, y, dots)) and not _on_path(crowd, _about(box.x1 - 62 * dots, y, dots)):
+        x = box.x1 - 62 * dots
     arms = [("N", data.north_of_date_pa_deg if data.on_disc else 0.0, 24.0)]
     arms.append(("E", arms[0][1] + 90.0, 24.0))
     if np.isfinite(data.zenith_pa_deg) and not data.campaign:
@@ -45,22 +47,41 @@ def draw_compass(axes: Any, data: PathData, palette: Palette, crowd: Crowd) -> N
         )
         axes.text(*name, label, fontsize=7 if thin else 9, color=palette.quiet if thin else palette.ink,
                   ha="center", va="center", zorder=7)  # fmt: skip
-    crowd.boxes.append((x - 56 * dots, y - 40 * dots, x + 46 * dots, y + 52 * dots))
+    crowd.boxes.append(_about(x, y, dots))
+
+
+Box = tuple[float, float, float, float]
+
+
+def _about(x: float, y: float, dots: float) -> Box:
+    """Return the room that a compass takes about its middle."""
+    return x - 56 * dots, y - 40 * dots, x + 46 * dots, y + 52 * dots
+
+
+def _on_path(crowd: Crowd, box: Box) -> bool:
+    """Return whether what is drawn already runs under a box."""
+    x, y = crowd.points
+    left, low, right, high = box
+    return bool(((x > left) & (x < right) & (y > low) & (y < high)).any())
 
 
 def draw_scale_bar(
     axes: Any, view: tuple[float, float, float, float], palette: Palette, crowd: Crowd
 ) -> None:
-    """Draw a bar of a round length at the lower right."""
+    """Draw a bar of a round length at the lower right, or the lower left where the path runs under it."""
     length, label = round_length(0.2 * (view[1] - view[0]))
     box = axes.get_window_extent()
     dots = axes.figure.dpi / 72
-    (x, y) = axes.transData.inverted().transform((box.x1 - 16 * dots, box.y0 + 14 * dots))
+    long = length / (view[1] - view[0]) * box.width
+    low, high = box.y0 + 8 * dots, box.y0 + 30 * dots
+    places = [(box.x1 - 16 * dots - long, low, box.x1, high), (box.x0, low, box.x0 + 16 * dots + long, high)]
+    at_left = _on_path(crowd, places[0]) and not _on_path(crowd, places[1])
+    end_px = box.x0 + 16 * dots + long if at_left else box.x1 - 16 * dots
+    (x, y) = axes.transData.inverted().transform((end_px, box.y0 + 14 * dots))
     axes.plot([x - length, x], [y, y], color=palette.ink, linewidth=1.4, zorder=7, solid_capstyle="butt")
     axes.annotate(label, (x - length / 2, y), xytext=(0, 3), textcoords="offset points", ha="center", va="bottom",
                   fontsize=8.5, color=palette.ink, zorder=7)  # fmt: skip
-    start = axes.transData.transform((x - length, y))
-    crowd.boxes.append((start[0] - 4, start[1] - 6 * dots, box.x1, start[1] + 16 * dots))
+    crowd.boxes.append(places[1 if at_left else 0])
 
 
 def draw_legend(

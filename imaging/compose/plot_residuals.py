@@ -26,7 +26,6 @@ def draw_residuals(
     height = tall * 0.44
     for number, (name, value, sigma) in enumerate(rows):
         axes = figure.add_axes((left, low + (1 - number) * (tall * 0.5) + tall * 0.06, wide, height))
-        axes.set_facecolor(palette.paper)
         axes.axhline(0, color=palette.predicted, linewidth=0.9)
         count = len(value)
         axes.errorbar(
@@ -38,25 +37,32 @@ def draw_residuals(
         axes.set_ylim(-reach, reach)
         rms = float(np.sqrt(np.nanmean(value**2)))
         axes.set_ylabel(f"{name} (″)\nrms {rms:.2g}″", color=palette.ink, fontsize=8)
-        axes.tick_params(colors=palette.quiet, labelcolor=palette.quiet, labelsize=8, length=3)
-        for spine in axes.spines.values():
-            spine.set_color(palette.quiet)
-            spine.set_linewidth(0.7)
-        _time_axis(axes, data)
+        quiet_axes(axes, palette)
+        time_axis(axes, data)
         if number == 0:
             axes.tick_params(labelbottom=False)
             axes.xaxis.get_offset_text().set_visible(False)
 
 
-def _time_axis(axes: Any, data: PathData) -> None:
+def quiet_axes(axes: Any, palette: Palette) -> None:
+    """Give a panel the look of the others."""
+    axes.set_facecolor(palette.paper)
+    axes.tick_params(colors=palette.quiet, labelcolor=palette.quiet, labelsize=8, length=3)
+    for spine in axes.spines.values():
+        spine.set_color(palette.quiet)
+        spine.set_linewidth(0.7)
+
+
+def time_axis(axes: Any, data: PathData) -> None:
+    """Label instants in the zone of the plot."""
     from matplotlib.dates import AutoDateLocator, ConciseDateFormatter
 
     locator = AutoDateLocator(minticks=4, maxticks=9, tz=data.zone)
     axes.xaxis.set_major_locator(locator)
     formatter = ConciseDateFormatter(locator, tz=data.zone, show_offset=not data.campaign)
-    formatter.formats = ["%Y", "%b", "%d", "%H:%M", "%H:%M", "%S.%f"]
-    formatter.zero_formats = ["", "%Y", "%b", "%d %b", "%H:%M", "%H:%M"]
-    formatter.offset_formats = ["", "%Y", "%B %Y", "%d %B %Y", "%d %B %Y", "%d %B %Y"]
+    formatter.formats = ["%Y", "%b", "%-d %b", "%H:%M", "%H:%M", "%H:%M:%S"]
+    formatter.zero_formats = ["", "%Y", "%-d %b", "%-d %b", "%H:%M", "%H:%M"]
+    formatter.offset_formats = ["", "%Y", "%Y", "%-d %B %Y", "%-d %B %Y", "%-d %B %Y"]
     axes.xaxis.set_major_formatter(formatter)
     axes.xaxis.get_offset_text().set_fontsize(8)
     axes.xaxis.get_offset_text().set_color(axes.xaxis.get_ticklabels()[0].get_color())

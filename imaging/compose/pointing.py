@@ -51,6 +51,29 @@ class StarPointing:
 
 
 @dataclass(frozen=True)
+class ShiftedPointing:
+    """A frame that borrows the pointing of another, off it by so many pixels."""
+
+    base: Pointing
+    dx_px: float
+    dy_px: float
+
+    @property
+    def scale_arcsec_px(self) -> float:
+        """Scale in the middle of the field."""
+        return self.base.scale_arcsec_px
+
+    def sky_to_pixel(self, ra_deg: np.ndarray, dec_deg: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return 0-based array pixels of ICRS directions."""
+        x_px, y_px = self.base.sky_to_pixel(ra_deg, dec_deg)
+        return x_px + self.dx_px, y_px + self.dy_px
+
+    def pixel_to_sky(self, x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return ICRS directions of array pixels."""
+        return self.base.pixel_to_sky(np.asarray(x_px) - self.dx_px, np.asarray(y_px) - self.dy_px)
+
+
+@dataclass(frozen=True)
 class Air:
     """The refracting air over a frame: lifts directions toward the zenith (unit vector, ICRS axes)."""
 

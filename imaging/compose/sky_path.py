@@ -11,6 +11,7 @@ from dataclasses import replace
 
 import numpy as np
 
+from imaging.compose.bodies import PATCH_MOST_PX, BodyPatch, Place
 from imaging.compose.canvas import Canvas, canvas_around
 from imaging.compose.choices import Choices
 from imaging.compose.ground import sky_surface
@@ -22,8 +23,9 @@ from imaging.compose.patch import lay_patch, patch_box
 from imaging.compose.picture import Drawn, Picture
 from imaging.compose.plane import sky_to_plane
 from imaging.compose.stack import new_stack
-from imaging.compose.visit import PATCH_MOST_PX, Visit, learnt_flats, stacked
+from imaging.compose.visit import Visit, learnt_flats, stacked
 from planner.errors import FrameSetAside, InputError
+from planner.sky.discs import SkyDisc
 
 PATCH_LEAST_PX = 5.0
 
@@ -36,6 +38,7 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
     shape = (canvas.height_px, canvas.width_px, *((3,) if light.colour else ()))
     ground = new_stack(choices.blend, shape, len(groups), choices.scratch)
     flats, matching = learnt_flats(material.frames, light), Matching()
+    others = _others(material)
     left_out: list[tuple[str, str]] = []
     visits: list[Visit] = []
     done = 0
@@ -46,7 +49,7 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
         done += 1
 
     for _, frames in groups:
-        visit = stacked(frames, canvas, anchor, choices, light, flats, left_out, tick)
+        visit = stacked(frames, canvas, anchor, choices, light, flats, left_out, tick, others)
         if visit is not None:
             stars = np.full(shape, np.nan, np.float32)
             stars[visit.box] = _level(visit.stars)
@@ -54,13 +57,20 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
             weight = np.zeros(shape[:2], np.float32)
             weight[visit.box] = edge_weight(stars[visit.box])
             ground.add(stars, weight)
-            visits.append(replace(visit, stars=np.zeros((0, 0), np.float32), patch=gain * visit.patch))
+            companions = {name: patch.brightened(gain) for name, patch in visit.companions.items()}
+            target = visit.target.brightened(gain)
+            visits.append(
+                replace(visit, stars=np.zeros((0, 0), np.float32), target=target, companions=companions)
+            )
     if not visits:
         why = f"; the first: {left_out[0][0]} {left_out[0][1]}" if left_out else ""
         raise InputError(f"no frame registered on stars is left{why}")
     image, count = ground.result()
     image, count, canvas = _inner_crop(image, count, canvas, visits, anchor, _companions(material))
-    drawn = [_lay(image, canvas, anchor, visit) for visit in visits]
+    drawn = [_drawn(image, canvas, anchor, visit) for visit in visits if visit.holds_target]
+    for visit in visits:
+        for patch in visit.companions.values():
+            _lay(image, canvas, anchor, patch)
     choices.tick(len(material.frames), len(material.frames))
     middle = 0.5 * (material.frames[0].tt_s + material.frames[-1].tt_s)
     notes = [
@@ -76,7 +86,9 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
     ]
     if max(visit.merged for visit in visits) > 1:
         notes.append(
-            "what long exposures burnt out in the target is taken from shorter ones, in linear light"
+            "what long exposures burnt out in "
+            + " and ".join(name.capitalize() for name in (material.target, *others))
+            + " is taken from shorter ones, in linear light"
         )
     return Picture(
         kind="sky-path",
@@ -89,15 +101,17 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
         anchor_dec_deg=anchor[1],
         reference_tt_s=float(middle),
         drawn=tuple(item for item in drawn if item is not None),
-        used=tuple(
-            (frame, "stars and target" if frame.measured else "stars")
-            for visit in visits
-            for frame in visit.frames
-        ),
+        used=tuple((frame, _role(frame)) for visit in visits for frame in visit.frames),
         tone="stars",
         notes=tuple(notes),
         left_out=tuple(left_out),
     )
+
+
+def _role(frame: Registered) -> str:
+    if frame.solved_by == "planets":
+        return "target"
+    return "stars and target" if frame.measured else "stars"
 
 
 def _level(stars: np.ndarray) -> np.ndarray:
@@ -120,7 +134,7 @@ def _inner_crop(
     What meets the target (`companions`, ICRS degrees) stays in it where a frame reaches.
     """
     covered = np.isfinite(image if image.ndim == 2 else image.sum(axis=2))
-    places = np.array([canvas.from_sky(*anchor, *visit.target_deg) for visit in visits], float)
+    places = np.array([canvas.from_sky(*anchor, *visit.target.place_deg) for visit in visits], float)
     for companion in companions:
         x, y = (float(value) for value in canvas.from_sky(*anchor, *companion))
         if 0 <= x < covered.shape[1] and 0 <= y < covered.shape[0] and covered[int(y), int(x)]:
@@ -216,10 +230,31 @@ def _field(
     return sky_to_plane(*anchor, *corners)
 
 
-def _lay(image: np.ndarray, canvas: Canvas, anchor: tuple[float, float], visit: Visit) -> Drawn | None:
-    x_px, y_px = (float(value) for value in canvas.from_sky(*anchor, *visit.target_deg))
+def _others(material: Material) -> dict[str, Place]:
+    """Return the planets that the target meets, each with where it is predicted in a frame."""
+    geometry = material.geometry
+    at = {(frame.path, frame.frame_index): number for number, frame in enumerate(material.frames)}
+
+    def place_of(disc: SkyDisc) -> Place:
+        def place(frame: Registered) -> tuple[float, float]:
+            number = at[frame.path, frame.frame_index]
+            return float(disc.ra_deg[number]), float(disc.dec_deg[number])
+
+        return place
+
+    stand_apart = ("sun", "moon", material.target)
+    if material.target not in geometry.discs:  # a star that is covered: what covers it is not seen beside it
+        return {}
+    return {name: place_of(disc) for name, disc in geometry.discs.items() if name not in stand_apart}
+
+
+def _lay(
+    image: np.ndarray, canvas: Canvas, anchor: tuple[float, float], patch: BodyPatch
+) -> tuple[float, float, float] | None:
+    """Lay a body into the picture; returns where (canvas pixels) and the radius of its glow, None when outside."""
+    x_px, y_px = (float(value) for value in canvas.from_sky(*anchor, *patch.place_deg))
     row, column = round(y_px), round(x_px)
-    half = visit.patch_canvas.width_px // 2
+    half = patch.canvas.width_px // 2
     box = patch_box(image.shape, column, row, half)
     if box is None:
         return None
@@ -227,20 +262,29 @@ def _lay(image: np.ndarray, canvas: Canvas, anchor: tuple[float, float], visit: 
         slice(box[0].start - row + half, box[0].stop - row + half),
         slice(box[1].start - column + half, box[1].stop - column + half),
     )
-    radius_px = glow_radius_px(visit.patch, visit.patch_canvas.anchor_x_px, visit.patch_canvas.anchor_y_px)
+    radius_px = glow_radius_px(patch.image, patch.canvas.anchor_x_px, patch.canvas.anchor_y_px)
     # the feather lies inside the glow: beyond it the patch has only the noise of one visit to add
     x, y = x_px - box[1].start, y_px - box[0].start
     # where the target stood in every frame of a visit there are no stars to see, only its own frames
     hole = ~np.isfinite(image[box])
-    image[box][hole] = visit.patch[cut][hole]
-    lay_patch(image[box], visit.patch[cut], x, y, 0.55 * radius_px, 0.45 * radius_px)
-    places = [
-        canvas.from_sky(*anchor, f.predicted_ra_deg, f.predicted_dec_deg) for f in visit.frames if f.measured
-    ]
+    image[box][hole] = patch.image[cut][hole]
+    lay_patch(image[box], patch.image[cut], x, y, 0.55 * radius_px, 0.45 * radius_px)
+    return x_px, y_px, radius_px
+
+
+def _drawn(image: np.ndarray, canvas: Canvas, anchor: tuple[float, float], visit: Visit) -> Drawn | None:
+    """Lay the target of a visit into the picture."""
+    laid = _lay(image, canvas, anchor, visit.target)
+    if laid is None:
+        return None
+    x_px, y_px, radius_px = laid
+    measured = [frame for frame in visit.frames if frame.measured]
+    places = [canvas.from_sky(*anchor, f.predicted_ra_deg, f.predicted_dec_deg) for f in measured]
     predicted = np.array(places, float).mean(axis=0) if places else np.array([x_px, y_px])
     apart = float(np.hypot(x_px - predicted[0], y_px - predicted[1])) * canvas.scale_arcsec_px
+    shown = measured or list(visit.frames)
     return Drawn(
-        visit.frames[len(visit.frames) // 2],
+        shown[len(shown) // 2],
         x_px,
         y_px,
         float(predicted[0]),

@@ -10,9 +10,13 @@ import numpy as np
 from imaging.compose.canvas import Canvas
 from imaging.compose.plane import plane_to_sky
 
-_RA_STEPS_DEG = tuple(15 * s / 3600 for s in (1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200))
+_RA_STEPS_DEG = tuple(
+    15 * s / 3600
+    for s in (0.01, 0.02, 0.05, 0.1, 0.2, 0.5, 1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200)
+)
 _DEC_STEPS_DEG = tuple(
-    s / 3600 for s in (10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200, 18000, 36000)
+    s / 3600
+    for s in (0.1, 0.2, 0.5, 1, 2, 5, 10, 20, 30, 60, 120, 300, 600, 1200, 1800, 3600, 7200, 18000, 36000)
 )
 
 
@@ -77,12 +81,22 @@ def _step(steps: tuple[float, ...], span: float, lines: int) -> float:
 
 def ra_label(ra_deg: float, step_deg: float) -> str:
     """Return right ascension in hours, with minutes and seconds as far as the step needs them."""
-    seconds = round((ra_deg % 360.0) * 240.0) % 86400
-    hours, minutes, left = seconds // 3600, seconds % 3600 // 60, seconds % 60
+    places = _places(step_deg * 240.0)
+    seconds = round((ra_deg % 360.0) * 240.0, places) % 86400
+    hours, minutes, left = int(seconds // 3600), int(seconds % 3600 // 60), seconds % 60
     text = f"{hours}h"
     if step_deg < 15:
         text += f" {minutes:02d}m"
-    return text + (f" {left:02d}s" if step_deg < 0.25 else "")
+    return text + (f" {_seconds(left, places)}s" if step_deg < 0.25 else "")
+
+
+def _places(step_seconds: float) -> int:
+    """Return the decimals that tell steps of this many seconds apart."""
+    return max(0, int(np.ceil(-np.log10(step_seconds) - 1e-9)))
+
+
+def _seconds(value: float, places: int) -> str:
+    return f"{value:0{3 + places if places else 2}.{places}f}"
 
 
 def azimuth_label(minus_azimuth_deg: float, step_deg: float) -> str:
@@ -97,12 +111,13 @@ def azimuth_label(minus_azimuth_deg: float, step_deg: float) -> str:
 
 def dec_label(dec_deg: float, step_deg: float) -> str:
     """Return declination in degrees, with minutes and seconds of arc as far as the step needs them."""
-    seconds = round(abs(dec_deg) * 3600.0)
-    degrees, minutes, left = seconds // 3600, seconds % 3600 // 60, seconds % 60
-    text = f"{'−' if dec_deg < 0 and seconds else '+'}{degrees}°"
+    places = _places(step_deg * 3600.0)
+    seconds = round(abs(dec_deg) * 3600.0, places)
+    degrees, minutes, left = int(seconds // 3600), int(seconds % 3600 // 60), seconds % 60
+    text = f"{'−' if dec_deg < 0 and seconds else '+' if seconds else ''}{degrees}°"
     if step_deg < 1:
         text += f" {minutes:02d}′"
-    return text + (f" {left:02d}″" if step_deg < 1 / 60 else "")
+    return text + (f" {_seconds(left, places)}″" if step_deg < 1 / 60 else "")
 
 
 def edge_crossing(line: np.ndarray, view: tuple[float, float, float, float], edge: str) -> float | None:

@@ -83,6 +83,7 @@ def registration_sentence(picture: Picture) -> str:
         "stars": "plate solutions",
         "sun-limb": "fits of the Sun's limb",
         "moon-limb": "fits of the Moon's limb",
+        "planets": "the planets in short exposures, at their predicted places",
     }
     return " and ".join(names.get(item, item) for item in how)
 
@@ -103,7 +104,7 @@ def caption(material: Material, picture: Picture) -> str:
     span = f"{start[:10]} {start[11:16]} to {end[11:16] if end[:10] == start[:10] else end[:10] + ' ' + end[11:16]} UTC"
     apart = [item.displacement_arcsec for item in picture.drawn if math.isfinite(item.displacement_arcsec)]
     count = len({(frame.path, frame.frame_index) for frame, _ in picture.used})
-    how = f"registered on {names.get(picture.registered_on, picture.registered_on)}"
+    how = f"registered on {names.get(picture.registered_on, picture.registered_on.capitalize())}"
     if picture.kind == "sky-series":
         how = f"registered on the limb of {names[material.reference]}, laid where it stood among the stars"
     pieces = [f"{material.plan.title}.", f"{material.plan.site.name}, {span}.", f"{count} frames {how}."]
@@ -111,10 +112,11 @@ def caption(material: Material, picture: Picture) -> str:
         pieces.append(picture.notes[-1][0].upper() + picture.notes[-1][1:] + ".")
     if apart:
         pieces.append(f"No position is drawn more than {_arcsec(max(apart))} from its predicted place.")
+    bar = "the landscape's scale" if picture.kind == "arc" else "their scale"
     pieces.append(
         "Nothing is enlarged."
         if picture.enlargement == 1
-        else f"Bodies are drawn {picture.enlargement:g} times their true size."
+        else f"Bodies are drawn {picture.enlargement:g} times their true size; the bar is at {bar}."
     )
     return " ".join(pieces)
 
@@ -143,6 +145,7 @@ def _frame(frame: Registered, role: str) -> dict[str, Any]:
         "utc_mid": utc_iso(frame.tt_s, 3),
         "role": role,
         "registered_by": frame.solved_by,
+        "pointing_sigma_arcsec": frame.registration_sigma_arcsec,
         "verdict": frame.verdict,
         "displacement_arcsec": frame.displacement_arcsec,
         "sigma_arcsec": frame.sigma_arcsec,

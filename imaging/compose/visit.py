@@ -7,20 +7,19 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from imaging.compose.bodies import BodyPatch, BodyStack, Place
 from imaging.compose.canvas import Canvas
 from imaging.compose.choices import Choices
-from imaging.compose.exposures import by_exposure, merged, not_burnt_out
+from imaging.compose.exposures import by_exposure, not_burnt_out
 from imaging.compose.ground import falloff, measured_falloff, sky_surface
 from imaging.compose.light import Light, bias_of, exposure_level
 from imaging.compose.matching import edge_weight
 from imaging.compose.material import Camera, Registered
 from imaging.compose.patch import patch_box
-from imaging.compose.plane import plane_to_sky, sky_to_plane
 from imaging.compose.stack import new_stack
 from imaging.frames.frame import Frame
 from planner.errors import FrameSetAside
 
-PATCH_MOST_PX = 90.0
 GLOW_PX = 56.0  # as far as the glow about a burnt-out planet is taken to reach
 TRAIL_PX = 3.0
 
@@ -29,16 +28,21 @@ TRAIL_PX = 3.0
 class Visit:
     """What a visit gives: stars in a `box` (rows, columns) of the picture, the target on a small canvas of its own.
 
-    `target_deg`: mean measured direction. `merged`: number of exposure lengths that the target's patch is made of.
+    `companions`: the other planets of the event, likewise. `merged`: number of exposure lengths that these are made of.
     """
 
     frames: tuple[Registered, ...]
     stars: np.ndarray
     box: tuple[slice, slice]
-    patch: np.ndarray
-    patch_canvas: Canvas
-    target_deg: tuple[float, float]
+    target: BodyPatch
+    companions: dict[str, BodyPatch]
     merged: int
+
+    @property
+    def holds_target(self) -> bool:
+        """False for a visit, or a panel of one, whose frames show only stars beside the target."""
+        middle = self.target.image.shape[0] // 2
+        return bool(np.isfinite(self.target.image[middle - 1 : middle + 2, middle - 1 : middle + 2]).all())
 
 
 @dataclass(frozen=True)
@@ -98,30 +102,35 @@ def stacked(
     flats: dict[Camera, Flat],
     left_out: list[tuple[str, str]],
     tick: Callable[[], None],
+    others: dict[str, Place],
 ) -> Visit | None:
     """Return a visit's stacks, outliers rejected; None when none of its frames can be read.
 
     Stars come from the longest exposures. Where a visit has shorter ones too, what the long ones burn out in the
-    target is taken from them.
+    target, and in the `others` that it meets, is taken from them.
     """
-    patch_canvas, target = _patch_canvas(canvas, anchor_deg, frames)
     planes = (3,) if light.colour else ()
-    patch_shape = (patch_canvas.height_px, patch_canvas.width_px, *planes)
+    shown = [frame for frame in frames if frame.measured] or frames
+    target = BodyStack.on(canvas, anchor_deg, shown, _target_place, light.colour)
+    met = {
+        name: BodyStack.on(canvas, anchor_deg, frames, place, light.colour) for name, place in others.items()
+    }
+    bodies = [target, *met.values()]
     groups = by_exposure(frames)
-    layers, kept, stars, whole = [], [], None, None
+    kept: list[Registered] = []
+    stars = None
     box = _covered(canvas, anchor_deg, groups[0], light)
     window = canvas.window(*box)
     trails = _moved_px(groups[0], window, anchor_deg) > TRAIL_PX
     for number, group in enumerate(groups):
-        patch = new_stack("clipped", patch_shape, len(group))
-        bright = new_stack("clipped", patch_shape, len(group))
-        last = number == len(groups) - 1 and len(groups) > 1
-        stack = patch
+        for body in bodies:
+            body.begin(len(group), number == len(groups) - 1 and len(groups) > 1)
+        stack = None
         if number == 0:
             star_shape = (window.height_px, window.width_px, *planes)
             stack = new_stack("clipped", star_shape, len(group), choices.scratch, again=True)
         seen: set[int] = set()
-        for turn in stack.turns():
+        for turn in [range(len(group))] if stack is None else stack.turns():
             for index in turn:
                 frame, new = group[index], index not in seen
                 seen.add(index)
@@ -136,26 +145,29 @@ def stacked(
                 level = exposure_level(pixels, frame)
                 good = not_burnt_out(pixels, frame.camera.saturation_adu) if len(groups) > 1 else None
                 pixels = without_sky(flats[frame.camera].applied(pixels, level.dark), level.dark)
-                if number == 0:
+                if stack is not None:
                     image = light.on_canvas(pixels, frame, window, anchor_deg, level)
                     if trails:
                         _without_target(image, frame, window, anchor_deg)
                     stack.add(image, edge_weight(image))
                 if not new:
                     continue
-                place = frame.target_ra_deg, frame.target_dec_deg
-                patch.add(light.on_canvas(pixels, frame, patch_canvas, place, level, good))
-                if last:
-                    bright.add(light.on_canvas(pixels, frame, patch_canvas, place, level))
+                for body in bodies:
+                    body.add(pixels, frame, level, good, light)
                 kept.append(frame)
-        if number == 0:
+        if stack is not None:
             stars = stack.result()[0]
-        layers.append(patch.result()[0])
-        whole = bright.result()[0] if last else None
+        for body in bodies:
+            body.end()
     if not kept or stars is None:
         return None
     kept.sort(key=lambda frame: frame.tt_s)
-    return Visit(tuple(kept), stars, box, merged(layers, whole), patch_canvas, target, len(groups))
+    companions = {name: body.patch() for name, body in met.items()}
+    return Visit(tuple(kept), stars, box, target.patch(), companions, len(groups))
+
+
+def _target_place(frame: Registered) -> tuple[float, float]:
+    return frame.target_ra_deg, frame.target_dec_deg
 
 
 def _moved_px(frames: list[Registered], canvas: Canvas, anchor_deg: tuple[float, float]) -> float:
@@ -208,24 +220,3 @@ def without_sky(frame: Frame, dark: float) -> Frame:
     if colour is not None:
         colour = np.stack([plane - sky_surface(plane - dark) for plane in np.moveaxis(colour, 2, 0)], axis=2)
     return replace(frame, data=data, colour=colour)
-
-
-def _patch_canvas(
-    canvas: Canvas, anchor: tuple[float, float], frames: list[Registered]
-) -> tuple[Canvas, tuple[float, float]]:
-    """Return a small canvas anchored on the target, with the pixel grid of the picture at the visit's mean place."""
-    measured = [frame for frame in frames if frame.measured] or frames
-    offsets = np.array(
-        [sky_to_plane(*anchor, frame.target_ra_deg, frame.target_dec_deg) for frame in measured], float
-    ).mean(axis=0)
-    x_px, y_px = (float(value) for value in canvas.from_plane(*offsets))
-    half = int(PATCH_MOST_PX) + 4
-    small = replace(
-        canvas,
-        width_px=2 * half + 1,
-        height_px=2 * half + 1,
-        anchor_x_px=half + x_px - round(x_px),
-        anchor_y_px=half + y_px - round(y_px),
-    )
-    ra, dec = plane_to_sky(*anchor, *offsets)
-    return small, (float(ra), float(dec))

@@ -51,6 +51,8 @@ class _Several(click.ParamType):
     type=click.Choice(("mean", "median", "clipped", "min", "max")),
     default="clipped",
     show_default=True,
+    help="Of the ground: the clean disc, or the stars. The target is always laid in at its own place, from its own "
+    "frames, with a soft edge.",
 )
 @click.option("--instants", type=click.IntRange(1, 500), default=9, show_default=True,
               help="How many times the target is drawn on a disc.")  # fmt: skip
@@ -62,7 +64,8 @@ class _Several(click.ParamType):
 )
 @click.option("--colour", is_flag=True, help="Keep the colours of a colour camera.")
 @click.option("--enlarge", type=click.FloatRange(1, 50), default=1.0, show_default=True,
-              help="Draw a sheet of discs larger than true; the caption says so.")  # fmt: skip
+              help="Draw a sheet of discs, or the target over a landscape, larger than true; the caption "
+              "says so.")  # fmt: skip
 @click.option(
     "--keep-off-track", is_flag=True, help="Draw the target also where the check found it off its track."
 )
@@ -110,13 +113,16 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     from datetime import UTC, tzinfo
     from zoneinfo import ZoneInfo
 
+    from imaging.compose.bright import with_short_exposures
     from imaging.compose.choices import Choices
     from imaging.compose.composing import Outputs, compose_picture, write_picture, write_plots
-    from imaging.compose.material import gather
+    from imaging.compose.light import Light
+    from imaging.compose.material import Material, gather
     from imaging.compose.pathdata import path_data
     from imaging.compose.selection import joined, through_filter
     from planner.cli.progress import bars
     from planner.sequence.documents import load_plan
+    from planner.sequence.models import Plan
 
     quiet = chosen["quiet"] or chosen["as_json"]
     outputs = Outputs(
@@ -131,26 +137,28 @@ def command(ctx: click.Context, plan: Path, track: Path, frames: Path | None, ou
     )
     outputs.refuse_existing()
     document = load_plan(plan)
-    material = gather(document, track, frames, keep_off_track=chosen["keep_off_track"])
-    material = joined(
-        through_filter(material, chosen["through"]),
-        [
-            through_filter(
-                gather(load_plan(a), b, c, keep_off_track=chosen["keep_off_track"]), chosen["through"]
-            )
-            for a, b, c in chosen["also"]
-        ],
-    )
-    other = None
-    if chosen["second_site"]:
-        second_plan, second_track, second_frames = chosen["second_site"]
-        other = through_filter(gather(load_plan(second_plan), second_track, second_frames), chosen["through"])
     landscape = _landscape(chosen["landscape"], chosen["view"])
     zone: tzinfo = UTC
     zone_label = "UTC"
     if chosen["local_time"]:
         zone, zone_label = ZoneInfo(document.site.timezone), document.site.timezone
-    with bars("composing", "making calibration masters", quiet=quiet) as (tick, master_tick):
+    titles = "composing", "making calibration masters", "registering short exposures"
+    with bars(*titles, quiet=quiet) as (tick, master_tick, short_tick):
+
+        def gathered(plan: Plan, track: Path, frames: Path | None) -> Material:
+            material = gather(plan, track, frames, keep_off_track=chosen["keep_off_track"])
+            if landscape is None:
+                material = with_short_exposures(material, Light(), short_tick)
+            return through_filter(material, chosen["through"])
+
+        material = joined(
+            gathered(document, track, frames),
+            [gathered(load_plan(a), Path(b), Path(c)) for a, b, c in chosen["also"]],
+        )
+        other = None
+        if chosen["second_site"]:
+            second_plan, second_track, second_frames = chosen["second_site"]
+            other = gathered(load_plan(second_plan), second_track, second_frames)
         night = None
         if chosen["calibration"] is not None:
             from imaging.frames.calibrating import calibration_of

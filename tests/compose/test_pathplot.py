@@ -138,6 +138,9 @@ def test_grid_lines_run_where_the_sky_has_them():
         (dec_label(-0.5, 0.5), "−0° 30′"),
         (dec_label(22.0, 5.0), "+22°"),
         (dec_label(-5.0125, 0.0125), "−5° 00′ 45″"),
+        (dec_label(0.0, 5.0), "0°"),
+        (dec_label(11.0431, 0.2 / 3600), "+11° 02′ 35.2″"),
+        (ra_label(27.71595, 0.02 * 15 / 3600), "1h 50m 51.83s"),
     ],
 )
 def test_grid_labels_read_as_the_trade_writes_them(label, text):
@@ -151,7 +154,7 @@ def test_scale_bars_are_round_and_as_long_as_they_say():
     assert round_length(40000) == (36000.0, "10°")
     picture = captioned(np.zeros((600, 800), np.float32), "A caption.", 0.0, 2.5)
     length, _ = round_length(0.22 * 800 * 2.5)
-    bar = picture[:600] > 0.7
+    bar = picture[600:] > 0.7
     row = int(np.argmax(bar.sum(axis=1)))
     columns = np.flatnonzero(bar[row])
     assert columns[-1] - columns[0] == pytest.approx(length / 2.5, abs=2)

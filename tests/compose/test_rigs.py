@@ -50,14 +50,14 @@ def test_two_rigs_make_one_sun_with_mercury_in_place(transit, other_rig):
     assert second.frames[0].scale_arcsec_px != pytest.approx(first.frames[0].scale_arcsec_px, rel=0.05)
     both = joined(first, [second])
     assert len(both.frames) == len(first.frames) + len(second.frames)
-    picture = compose_picture(both, Choices(instants=9, scale_arcsec_px=first.frames[0].scale_arcsec_px))
+    picture = compose_picture(both, Choices(instants=20, scale_arcsec_px=first.frames[0].scale_arcsec_px))
     used = {frame.path.parent for frame, _ in picture.used}
     assert used == {transit.frames, frames}
     fit = fit_limb(np.nan_to_num(picture.image))
     assert fit.x_px == pytest.approx(picture.canvas.anchor_x_px, abs=0.05)
     assert fit.y_px == pytest.approx(picture.canvas.anchor_y_px, abs=0.05)
     ground = compose_picture(
-        both, Choices(instants=9, scale_arcsec_px=picture.canvas.scale_arcsec_px, blend="max")
+        both, Choices(instants=20, scale_arcsec_px=picture.canvas.scale_arcsec_px, blend="max")
     )
     found = set()
     for item in picture.drawn:

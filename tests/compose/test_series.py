@@ -144,6 +144,10 @@ def test_a_series_of_discs_keeps_their_size_and_order_and_says_what_is_enlarged(
         tile = picture.image[:, number * cell : (number + 1) * cell]
         assert np.sqrt((tile > 0.5).sum() / np.pi) == pytest.approx(3 * radius, rel=0.02)
     assert picture.enlargement == 3
+    # every disc has its date below it, in order
+    assert [label[0] for label in picture.labels] == [item.x_px for item in picture.drawn]
+    assert all(y < item.y_px for (_, y, _), item in zip(picture.labels, picture.drawn, strict=True))
+    assert len({text for *_, text in picture.labels}) == 3
     assert "drawn 3 times their true size" in caption(material, picture)
     assert [item.x_px for item in picture.drawn] == sorted(item.x_px for item in picture.drawn)
     # what is exaggerated is told in every file that leaves the house
