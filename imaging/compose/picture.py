@@ -32,7 +32,7 @@ class Picture:
 
     `image`: (rows, columns) or (rows, columns, 3), float32, linear, NaN where no frame reaches; row 0 is the bottom.
     `anchor_ra_deg`, `anchor_dec_deg`: what the canvas is anchored on at `reference_tt_s`.
-    `used`: every frame that went in, with its role. `tone`: `disc` or `stars`, for the stretch.
+    `used`: every frame that went in, with its role. `tone`: for the stretch, see there.
     `enlargement`: by how much bodies are drawn larger than true (1 for none). `left_out`: frames and why.
     `labels`: words written into the picture with its caption, each centred on canvas pixels (x_px, y_px).
     """

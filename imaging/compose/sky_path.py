@@ -102,7 +102,7 @@ def sky_path(material: Material, choices: Choices, light: Light) -> Picture:
         reference_tt_s=float(middle),
         drawn=tuple(item for item in drawn if item is not None),
         used=tuple((frame, _role(frame)) for visit in visits for frame in visit.frames),
-        tone="stars",
+        tone="merged" if max(visit.merged for visit in visits) > 1 else "stars",
         notes=tuple(notes),
         left_out=tuple(left_out),
     )
@@ -263,12 +263,12 @@ def _lay(
         slice(box[1].start - column + half, box[1].stop - column + half),
     )
     radius_px = glow_radius_px(patch.image, patch.canvas.anchor_x_px, patch.canvas.anchor_y_px)
-    # the feather lies inside the glow: beyond it the patch has only the noise of one visit to add
+    # the feather lies about the end of the glow: a ground without the target has none of it further in
     x, y = x_px - box[1].start, y_px - box[0].start
     # where the target stood in every frame of a visit there are no stars to see, only its own frames
     hole = ~np.isfinite(image[box])
     image[box][hole] = patch.image[cut][hole]
-    lay_patch(image[box], patch.image[cut], x, y, 0.55 * radius_px, 0.45 * radius_px)
+    lay_patch(image[box], patch.image[cut], x, y, 0.85 * radius_px, 0.3 * radius_px)
     return x_px, y_px, radius_px
 
 

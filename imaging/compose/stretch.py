@@ -67,16 +67,16 @@ def background(image: np.ndarray) -> tuple[float, float]:
 
 
 def measured_stretch(image: np.ndarray, tone: str, faintest: float = np.inf) -> Stretch:
-    """Return the stretch for a picture of this tone (`disc`, `stars`, `photograph`, `linear`), measured on it.
+    """Return the stretch for a picture of this tone (`disc`, `stars`, `merged`, `photograph`, `linear`), measured on it.
 
-    Stars: the background goes to a dark grey, the brightest pixels (0.05 %) to white. Disc: what lies off the
+    Stars: the background goes to a dark grey, the brightest pixels (0.05 %) to white; merged: the brightest of all. Disc: what lies off the
     disc goes to black, the brightest hundredth of the disc to just under white; where a body of peak value
     `faintest` would be lost beside it, the curve bends until it is seen. A photograph keeps its own tones.
     """
     values = _sample(image)
     if not values.size:
         return Stretch("linear", 0.0, 1.0)
-    top = float(np.percentile(values, 99.98 if tone != "stars" else 99.95))
+    top = float(np.percentile(values, 99.95 if tone in ("stars", "merged") else 99.98))
     level, sigma = background(image)
     if tone == "photograph":
         return Stretch("srgb", 0.0, 1.0)
@@ -94,7 +94,9 @@ def measured_stretch(image: np.ndarray, tone: str, faintest: float = np.inf) -> 
             return Stretch("srgb", black, white)
         return Stretch("asinh", black, white, _softening(faintest - black, white - black, FAINT_TONE))
     black = level - SKY_ABOVE_BLACK * max(sigma, 1e-6 * abs(level), 1e-9)
-    white = max(top, level + 50 * max(sigma, 1e-9))
+    # what short exposures kept from burning out must not burn out in the tones
+    bright = float(np.nanmax(image)) if tone == "merged" else top
+    white = max(bright, level + 50 * max(sigma, 1e-9))
     return Stretch("asinh", black, white, _softening(level - black, white - black))
 
 

@@ -19,6 +19,7 @@ _MERGED_SIGMAS = 4.5  # within it the two are flagged as blended
 _LONGER = 1.2  # elongation over the frame's median from which one maximum may hold two stars
 _SURE_CHI2 = 60.0
 _BETTER = 0.4  # of the excess chi^2 of one star that may be left with two
+_ONE_MAXIMUM = 12.0  # widths: two stars further apart have a maximum each
 _ODD_SHARE = 0.15  # of long stars above which the frame's stars are odd, not double
 _LEAST_SEPARATION_SIGMAS = 0.9
 _MOST = 10_000
@@ -125,6 +126,11 @@ def _split(
     if not len(rows) or len(rows) > max(3, _ODD_SHARE * usable.sum()):
         return measured
     start = np.concatenate([halves, companions])
+    apart = np.hypot(start[:, 0, 1] - start[:, 1, 1], start[:, 0, 2] - start[:, 1, 2])
+    near = apart < _ONE_MAXIMUM * sigma  # moments of little light run away; no maximum is that long
+    rows, start = rows[near], start[near]
+    if not len(rows):
+        return measured
     pairs = _fit(data, sky, start, sigma, gain_e_adu, one_too=True)
     excess_one = np.maximum(pairs.chi2_one - pairs.pixels, 0)
     excess_two = np.maximum(pairs.chi2_two - pairs.pixels, 0)
