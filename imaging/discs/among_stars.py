@@ -19,6 +19,7 @@ from planner.errors import NoSolutionError
 # of the stamp's half side.
 # What the model of an image is not known to, however bright it is: measured on drawn points and discs.
 MODEL_FLOOR_PX = 0.006
+COARSE_PX = 0.01  # of a disc that a few pixels hold, besides
 _LOST = 0.2  # of a disc's area: so much of it saturated, its own shape is not seen
 _WIDTHS, _AUREOLE = (1.0, 1.6, 2.6, 4.5), (0.12, 0.2, 0.33, 0.6)
 
@@ -29,6 +30,7 @@ class Noise:
 
     `relative`: by what part of the light the model of the point spread may be wrong in a pixel (assumed).
     `brightest_adu`: the most that any usable pixel holds; a model that promises more earns no larger variance by it.
+    `map_adu2`: that of each pixel of a stamp where it is dark, in place of `sky_adu2`, when it is not the same for all.
     """
 
     level_adu: float
@@ -36,11 +38,17 @@ class Noise:
     per_adu: float
     relative: float = 0.0
     brightest_adu: float = np.inf
+    map_adu2: np.ndarray | None = None
+
+    @property
+    def dark_adu2(self) -> np.ndarray | float:
+        """The variance where nothing shines."""
+        return self.sky_adu2 if self.map_adu2 is None else self.map_adu2
 
     def variance(self, model: np.ndarray) -> np.ndarray:
         """Return the variance at these levels."""
         light = np.clip(model - self.level_adu, 0, self.brightest_adu - self.level_adu)
-        return self.sky_adu2 + self.per_adu * light + (self.relative * light) ** 2
+        return np.asarray(self.dark_adu2 + self.per_adu * light + (self.relative * light) ** 2)
 
 
 def planet_among_stars(
@@ -153,10 +161,12 @@ def spread_point(
     noise: Noise,
     clipped: int,
     disc: LitCells | None,
+    blur: Blur | None = None,
 ) -> DiscPlace:
-    """Fit a round point spread of free shape: six Gaussians of fixed ratio, integrated over pixels.
+    """Fit a round point spread of free shape: eight Gaussians of fixed ratio, integrated over pixels.
 
-    `disc`: what is spread, where it is no point; its centre of light is what is fitted.
+    `disc`: what is spread, where it is no point; its centre of light is what is fitted. `blur`: the shape, where it is
+    known but for its width to a fifth; few photons place a body better by it.
     """
     x, y = stamp.grid()
     unit = max(float(stamp.data.shape[0]), 1.0)
@@ -173,22 +183,25 @@ def spread_point(
         return rows @ disc.light @ columns.T
 
     reach = 0.5 * min(stamp.data.shape)
-    count = len(_WIDTHS) + len(_AUREOLE)
+    count = len(_WIDTHS) + len(_AUREOLE) if blur is None else 1
     seen = np.hypot(sigma, body.radius_px / 2)
     wide = seen if disc is None else sigma
 
     def components(parameters: np.ndarray) -> np.ndarray:
         px, py, log_sigma = parameters
+        if blur is not None:
+            known = replace(blur, sigma_px=float(np.exp(log_sigma))).parts()
+            return np.array([sum(part * spread(px, py, width) for part, width in known), *plane])
         widths = [ratio * np.exp(log_sigma) for ratio in _WIDTHS] + [part * reach for part in _AUREOLE]
         return np.array([spread(px, py, width) for width in widths] + plane)
 
     core = np.hypot(x - x0, y - y0) < 2 * FWHM_OVER_SIGMA * seen
     tolerance = replace(noise, relative=0.008, brightest_adu=float(stamp.data[stamp.usable].max()))
     x0, y0 = _clipped_centroid(stamp, x0, y0, noise, seen)
-    near = 0.5 + 0.5 * seen
+    near = 0.5 + 0.5 * seen if blur is None else 1.5 + seen  # one shape has one minimum
     start = np.array([x0, y0, np.log(wide)])
     stages: tuple[float, ...] = (0.008,)
-    if clipped or seen < 0.8:
+    if blur is None and (clipped or seen < 0.8):
         # a saturated or undersampled point has several minima: with large relative errors they are one
         stages = (0.1, 0.008)
         start = _best_start(stamp, components, start, replace(tolerance, relative=0.1), count)
@@ -200,7 +213,7 @@ def spread_point(
             start if fit is None else fit.parameters,
             np.array([0.01, 0.01, 0.01]),
             replace(tolerance, relative=relative).variance,
-            prior=np.array([np.inf, np.inf, 0.4]),
+            prior=np.array([np.inf, np.inf, 0.4 if blur is None else 0.2]),
             limit=np.array([near, near, 1.5]),
             robust=8.0,
             positive=count,
@@ -237,7 +250,7 @@ def _clipped_centroid(stamp: Stamp, x0: float, y0: float, noise: Noise, seen: fl
     light = np.where(stamp.usable | stamp.clipped, stamp.data - noise.level_adu, 0.0)
     top = max(0.01 * float(light.max()), 10 * np.sqrt(noise.sky_adu2))
     cut = np.clip(light, 0, top)
-    cut[light < max(0.2 * top, 4 * np.sqrt(noise.sky_adu2))] = 0
+    cut[light < np.maximum(0.2 * top, 4 * np.sqrt(noise.dark_adu2))] = 0
     radius = 3 * seen + np.sqrt(float((light >= top).sum()) / np.pi)
     for _ in range(6):
         window = cut * (np.hypot(x - x0, y - y0) < radius + 1)
@@ -290,14 +303,6 @@ def resolved(
         dx, dy = x - moon.x_px, y - moon.y_px
         away = np.hypot(dx, dy) / moon.outline.ratio(np.arctan2(dy, dx)) - moon.radius_px
         clear = 1 - coverage(away, finer)
-        if away.min() < 3 * sigma:
-            # the Moon's own light: a step with a slope inward, and its glare
-            inside = 1 - clear
-            plane += [
-                blurred(inside, moon.blur, finer, margin),
-                blurred(inside * np.clip(-away, 0, None) / unit, moon.blur, finer, margin),
-            ]
-        plane += [u * u, u * v, v * v]
 
     def disc(parameters: np.ndarray) -> np.ndarray:
         px, py, log_sigma, log_radius, exponent = parameters
@@ -343,7 +348,9 @@ def resolved(
     if height < 5 * np.sqrt(noise.sky_adu2):
         raise NoSolutionError("nothing like the planet's disc stands out there")
     notes = (f"{clipped} saturated pixels left out",) if clipped else ()
-    covariance = fit.covariance[:2, :2] + np.eye(2) * MODEL_FLOOR_PX**2
+    # few pixels hold a disc this small, and what the blur's shape is not known to then shows
+    coarse = COARSE_PX * float(np.clip(2.5 - body.radius_px, 0, 1))
+    covariance = fit.covariance[:2, :2] + np.eye(2) * (MODEL_FLOOR_PX**2 + coarse**2)
     return DiscPlace(
         px, py, covariance, float(body.radius_px * np.exp(fit.parameters[3])),
         float(body.radius_px * np.sqrt(fit.covariance[3, 3])), Blur(float(np.exp(fit.parameters[2])), wing),

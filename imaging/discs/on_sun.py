@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from imaging.discs.among_stars import COARSE_PX
 from imaging.discs.edge import Blur
 from imaging.discs.limb import LimbFit
 from imaging.discs.stamp import DiscPlace, Stamp, blurred, coverage, fit_stamp, sub_pixels
@@ -63,7 +64,7 @@ def planet_on_sun(
         notes = (f"the planet is {depth:.2f} as dark as a black disc: haze, stray light or a spot",)
     x, y = float(fit.parameters[0]), float(fit.parameters[1])
     # few pixels hold a disc this small, and what the blur's shape is not known to then shows (measured on drawn frames)
-    coarse = 0.01 * float(np.clip(2.5 - radius_px, 0, 1))
+    coarse = COARSE_PX * float(np.clip(2.5 - radius_px, 0, 1))
     covariance = fit.covariance[:2, :2] + np.eye(2) * (moved_by_seeing(radius_px, sun) ** 2 + coarse**2)
     radius = radius_px * float(np.exp(fit.parameters[3]))
     return DiscPlace(

@@ -9,12 +9,16 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from imaging.discs.edge import FWHM_OVER_SIGMA
+from imaging.discs.glare import limb_and_glare
+from imaging.discs.stamp import Stamp
 from imaging.frames.frame import Frame
 from imaging.stars.detection import Detections
 from imaging.stars.solve import detect_frame
 from imaging.track.measurement import Measurement
 from imaging.track.nominal import Promise
 from imaging.track.path import tangent_offsets, target_place, unit_vectors
+from planner.errors import NoSolutionError
 from planner.events.family import Geometry
 
 HALF_PX = 28  # half side of a piece: what the pointing may be off, an aperture, and its ring of sky
@@ -193,24 +197,17 @@ def _glow(
 ) -> np.ndarray:
     """Return the Moon's limb and its glare in a piece: what pixels equally far from the limb share."""
     assert m.disc is not None
-    line = np.arange(-HALF_PX, HALF_PX + 1)
-    dx, dy = column + line[None, :] - m.disc.x_px, row + line[:, None] - m.disc.y_px
-    step = np.floor(2 * (np.hypot(dx, dy) - m.disc.radius_px)).astype(int)
-    step -= step.min()
-    clear = np.hypot(column + line[None, :] - x, row + line[:, None] - y) > 3 * max(
-        np.nan_to_num(fwhm_px, nan=3), 2
+    seen = np.isfinite(data)
+    stamp = Stamp(
+        np.where(seen, data, 0.0), column - HALF_PX, row - HALF_PX, seen, np.zeros(data.shape, bool)
     )
-    clear &= np.isfinite(data)
-    number = np.bincount(step[clear], minlength=int(step.max()) + 1)
-    values = np.where(clear, data, 0.0)
-    mean = np.bincount(step[clear], values[clear], number.size) / np.maximum(number, 1)
-    for _ in range(2):
-        square = np.bincount(step[clear], (values - mean[step])[clear] ** 2, number.size)
-        scale = np.sqrt(square / np.maximum(number, 1)) + 0.5
-        near = clear & (np.abs(values - mean[step]) < 3 * scale[step])
-        number = np.bincount(step[near], minlength=number.size)
-        mean = np.bincount(step[near], values[near], mean.size) / np.maximum(number, 1)
-    known = number > 3
-    if not known.any():
+    fwhm_px = float(np.nan_to_num(fwhm_px, nan=3.0))
+    xs, ys = stamp.grid()
+    clear = np.hypot(xs - x, ys - y) > 3 * max(fwhm_px, 2)
+    disc = m.disc
+    try:
+        return limb_and_glare(
+            stamp, disc.x_px, disc.y_px, disc.radius_px, fwhm_px / FWHM_OVER_SIGMA, clear
+        ).light
+    except NoSolutionError:  # all of it is on the Moon, whose surface is even about the star
         return np.zeros_like(data)
-    return np.interp(step, np.flatnonzero(known), mean[known])
