@@ -1,6 +1,7 @@
 """A rig's lens, learned once from many frames and then held, so that sparse fields solve with it.
 
-Kept as YAML beside the rig: `RIG.lens.yaml`. Linear terms are not kept, because refraction changes them with altitude.
+Kept as YAML beside the rig (`planner.sequence.documents.lens_path`). Linear terms are not kept, because refraction
+changes them with altitude.
 """
 
 from __future__ import annotations
@@ -33,10 +34,11 @@ class LearnedLens:
     width_px: int
     height_px: int
 
-
-def lens_path(rig_path: Path) -> Path:
-    """Return where the lens of a rig file is kept."""
-    return rig_path.with_name(rig_path.stem + ".lens.yaml")
+    def scale_of(self, width_px: int, height_px: int) -> float | None:
+        """Return the scale of a frame of this size, binned or not, in arcsec/px; None for a part of the sensor."""
+        if abs(width_px * self.height_px / (height_px * self.width_px) - 1.0) > 0.002:
+            return None
+        return self.scale_arcsec_px * self.width_px / width_px
 
 
 def learn_lens(solutions: list[PlateSolution]) -> LearnedLens:

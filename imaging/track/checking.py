@@ -27,6 +27,7 @@ from planner.sky.starlist import deeper_catalogue
 
 if TYPE_CHECKING:
     from imaging.frames.calibrating import Calibration
+    from imaging.stars.lens import LearnedLens
 
 Outcome = Measurement | SetAside
 # What fitted radii of a frame may all be off by: spread between published solar radii is 0.3" (see
@@ -43,7 +44,7 @@ class CheckOptions:
     """How frames are read: `zone` of stamps without one, `pictures` keeps a cut-out a frame.
 
     `calibration`: what is taken off each frame first. `catalogue`: a deeper star catalogue of the user's.
-    `file_time`: fall back on the modification time of a file that tells no time.
+    `file_time`: fall back on the modification time of a file that tells no time. `lens`: learned of the rig.
     """
 
     zone: str | None = None
@@ -52,6 +53,7 @@ class CheckOptions:
     calibration: Calibration | None = None
     catalogue: Path | None = None
     file_time: bool = False
+    lens: LearnedLens | None = None
 
 
 def frame_files(folder: Path) -> list[Path]:
@@ -89,7 +91,7 @@ def measure_files(
 ) -> Iterator[Outcome]:
     """Yield what every frame gave, in the order of the files; one frame is in memory a process."""
     if options.jobs <= 1 or len(files) < 8:
-        measurer = Measurer(Promise(plan))
+        measurer = Measurer(Promise(plan), options.lens)
         for count, path in enumerate(files, 1):
             yield from measure_file(measurer, path, options)
             if tick:
@@ -111,7 +113,7 @@ _worker: tuple[Measurer, CheckOptions] | None = None
 
 def _start_worker(plan: Plan, options: CheckOptions) -> None:
     global _worker
-    _worker = Measurer(Promise(plan)), options
+    _worker = Measurer(Promise(plan), options.lens), options
 
 
 def _in_worker(path: Path) -> list[Outcome]:
@@ -129,7 +131,7 @@ def check_frames(
     """Measure files and understand them together; see `understand`."""
     options = with_hot_pixels(options, files)
     result, measurements = understand(plan, plan_name, measure_files(plan, files, options, tick))
-    return replace(result, provenance={**result.provenance, **told(options)}), measurements
+    return replace(result, provenance={**result.provenance, **told(options, measurements)}), measurements
 
 
 def with_hot_pixels(options: CheckOptions, files: Sequence[Path]) -> CheckOptions:
@@ -143,10 +145,16 @@ def with_hot_pixels(options: CheckOptions, files: Sequence[Path]) -> CheckOption
     return replace(options, calibration=replace(options.calibration or Calibration(), hot=hot))
 
 
-def told(options: CheckOptions) -> dict[str, str]:
-    """Return what the header of a result says of how its frames were prepared."""
+def told(options: CheckOptions, measurements: Sequence[Measurement] = ()) -> dict[str, str]:
+    """Return what the header of a result says of how its frames were prepared and solved."""
     said = options.calibration.provenance() if options.calibration is not None else {}
-    return said | ({"catalogue": str(options.catalogue)} if options.catalogue is not None else {})
+    if options.catalogue is not None:
+        said["catalogue"] = str(options.catalogue)
+    plates = [m.stars for m in measurements if m.stars is not None]
+    if options.lens is not None and plates:
+        held = sum(plate.by_lens for plate in plates)
+        said["lens"] = f"learned from {options.lens.frames} frames, held in {held} of {len(plates)} solutions"
+    return said
 
 
 def understand(

@@ -83,7 +83,7 @@ def follow_folder(
         raise InputError(f"{folder}: is not a folder of frames")
     refuse_outputs(output, None, force)
     promise = Promise(plan)
-    measurer, pending = Measurer(promise), Pending()
+    measurer, pending = Measurer(promise, options.lens), Pending()
     outcomes: list[Outcome] = []
     result, measurements = understand(plan, plan_name, outcomes, promise)
     last_new = last_written = time.monotonic()

@@ -8,6 +8,7 @@ from dataclasses import replace
 import numpy as np
 
 from imaging.frames.frame import Frame, FrameTime, Shutter
+from imaging.stars.lens import LearnedLens
 from imaging.track.cutout import Cutout, cut_out
 from imaging.track.measure_disc import OnDisc
 from imaging.track.measure_stars import AmongStars
@@ -20,9 +21,9 @@ from planner.errors import InputError, NoSolutionError
 class Measurer:
     """Measures the frames of one plan, one after the other; what one frame taught helps the next."""
 
-    def __init__(self, promise: Promise):
+    def __init__(self, promise: Promise, lens: LearnedLens | None = None):
         self.promise = promise
-        self._on_disc, self._among_stars = OnDisc(promise), AmongStars(promise)
+        self._on_disc, self._among_stars = OnDisc(promise), AmongStars(promise, lens)
         self._catcher = StarCatcher(promise) if promise.times_a_star else None
 
     def measure(self, frame: Frame, pictures: bool = False) -> Measurement:

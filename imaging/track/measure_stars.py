@@ -13,6 +13,7 @@ from imaging.discs.planet import Body, DiscPlace, planet_among_stars
 from imaging.frames.frame import Frame
 from imaging.stars.air import Air, air_over
 from imaging.stars.detection import Detections
+from imaging.stars.lens import LearnedLens
 from imaging.stars.solution import PlateSolution
 from imaging.stars.solve import detect_frame, solve_frame
 from imaging.track.measurement import AS_PREDICTED, Measurement, StarReference
@@ -22,15 +23,22 @@ from planner.errors import NoSolutionError
 from planner.events.family import Geometry
 
 STRANGER_RATIO = 5.0  # so much brighter than what is near the prediction, a stranger is taken for the target
+LEARNED_SCALE = 0.005  # relative, to which a learned scale holds: focus and temperature move it
+ENOUGH_STARS = 60  # matched, that tell a lens by themselves: what was learned before can only be older
+AS_MANY = 0.9  # of the stars matched freely, which a lens must explain too
 KNOWN_SCALE = 0.01  # of a rig file's scale, where the field is too sparse to find it freely
 TOO_SHORT = 0.1  # of the longest exposure of its passage: a frame for the disc, not for the stars
 
 
 class AmongStars:
-    """Measures frames of one plan against stars; the solution of one frame is the start of the next."""
+    """Measures frames of one plan against stars; the solution of one frame is the start of the next.
 
-    def __init__(self, promise: Promise) -> None:
+    `lens`: learned of the rig before; a frame that it does not fit is solved without it.
+    """
+
+    def __init__(self, promise: Promise, lens: LearnedLens | None = None) -> None:
         self.promise = promise
+        self._lens = lens
         self._solution: PlateSolution | None = None
         self.found: Detections | None = None  # of the last frame
 
@@ -48,6 +56,7 @@ class AmongStars:
         x, y = (float(np.squeeze(v)) for v in solution.sky_to_pixel(ra, dec))
         plate = replace(
             _plate(solution, frame.row_zero, x, y),
+            by_lens=self._lens is not None and solution.fit_lens is self._lens.lens,
             fwhm_px=float(found.psf_fwhm_px),
             zero_point_adu=_zero_point_adu(found, solution, (x, y)),
         )
@@ -62,6 +71,7 @@ class AmongStars:
             return replace(blank, reason=str(none))
         plate = replace(
             _plate(solution, frame.row_zero, place.x_px, place.y_px, place.covariance),
+            by_lens=plate.by_lens,
             fwhm_px=plate.fwhm_px,
             zero_point_adu=plate.zero_point_adu,
         )
@@ -77,28 +87,51 @@ class AmongStars:
     def _solved(
         self, frame: Frame, nominal: Nominal, geometry: Geometry, found: Detections, air: Air | None
     ) -> PlateSolution:
-        """Solve freely; then with roll, mirror and scale as planned; then, as stamps may be wrong, without air."""
+        """Solve freely; with few stars by the learned lens; then with roll, mirror and scale as planned.
+
+        Last, as stamps may be wrong, without air.
+        """
         bodies = [(float(disc.ra_deg[0]), float(disc.dec_deg[0])) for disc in geometry.discs.values()]
         known: dict[str, Any] = {
             "near": (nominal.aim_ra_deg, nominal.aim_dec_deg),
             "scale_arcsec_px": nominal.scale_arcsec_px,
             "exclude": bodies,
             "detections": found,
+            "air": air,
         }
-        planned = {
-            "rotation_deg": nominal.rotation_deg,
-            "parity": nominal.parity,
-            "scale_tolerance": KNOWN_SCALE,
-        }
-        tries: list[dict[str, Any]] = [{"air": air, "previous": self._solution}, {"air": air, **planned}]
-        if air is not None:
-            tries.append({"previous": self._solution})
         first: NoSolutionError | None = None
-        for one in tries:
+
+        def tried(**more: Any) -> PlateSolution | None:
+            nonlocal first
             try:
-                return solve_frame(frame, **known, **one)
+                return solve_frame(frame, **{**known, **more})
             except NoSolutionError as none:
                 first = first or none
+                return None
+
+        free = tried(previous=self._solution)
+        scale = None if self._lens is None else self._lens.scale_of(found.width_px, found.height_px)
+        if (
+            self._lens is not None
+            and scale is not None
+            and (free is None or len(free.matched.x_px) < ENOUGH_STARS)
+        ):
+            learned = {
+                "scale_arcsec_px": scale,
+                "scale_tolerance": LEARNED_SCALE,
+                "parity": self._lens.parity,
+            }
+            held = tried(previous=self._solution, lens=self._lens.lens, **learned)
+            # the lens of another camera would leave stars unexplained
+            if held and (free is None or len(held.matched.x_px) >= AS_MANY * len(free.matched.x_px)):
+                return held
+        solution = free or tried(
+            rotation_deg=nominal.rotation_deg, parity=nominal.parity, scale_tolerance=KNOWN_SCALE
+        )
+        if solution is None and air is not None:
+            solution = tried(previous=self._solution, air=None)
+        if solution is not None:
+            return solution
         if nominal.exposure_share < TOO_SHORT:
             raise NoSolutionError(
                 f"{geometry.target.capitalize()} {AS_PREDICTED} without stars in so short an exposure "

@@ -43,6 +43,7 @@ class StarReference:
     `header`: the solution as the text of a FITS header. `rotation_deg` and `parity` are of the array, as in
     `Nominal`, in the middle of the frame; `local_rotation_deg` at the target, which differs in a wide field. `fwhm_px`
     is of the stars, `zero_point_adu` the light of a star of magnitude 0 by all but the target; NaN when not known.
+    `by_lens`: the lens learned of the rig was held.
     """
 
     ra_deg: float
@@ -57,6 +58,7 @@ class StarReference:
     header: str
     fwhm_px: float = NAN
     zero_point_adu: float = NAN
+    by_lens: bool = False
 
 
 @dataclass(frozen=True)

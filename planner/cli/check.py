@@ -20,7 +20,9 @@ import click
 @click.option("--calibration", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
               help="Folder of bias, dark and flat folders, to calibrate the frames with.")  # fmt: skip
 @click.option("--catalogue", metavar="FILE", type=click.Path(dir_okay=False, path_type=Path),
-              help="A deeper star catalogue (FITS, VOTable, ECSV, CSV), beside the installed one.")  # fmt: skip
+              help="A deeper star catalogue (FITS, VOTable, ECSV, CSV) besides the installed [the rig's].")  # fmt: skip
+@click.option("--rig", metavar="RIG", type=click.Path(dir_okay=False, path_type=Path),
+              help="The rig's file: its catalogue and learned lens, if younger than the plan.")  # fmt: skip
 @click.option("--apply", "apply_what", type=click.Choice(["clock"]),
               help="Also write track_clock.ecsv, with the fitted clock offset taken off the times.")  # fmt: skip
 @click.option("--follow", is_flag=True, help="Measure each new frame as it arrives, until Ctrl-C.")
@@ -38,6 +40,7 @@ def command(  # type: ignore[no-untyped-def]
     file_time,
     calibration,
     catalogue,
+    rig,
     apply_what,
     follow,
     idle,
@@ -58,22 +61,29 @@ def command(  # type: ignore[no-untyped-def]
       syzygraph check mars.plan.yaml frames --calibration tonight --catalogue field.fits
     """
     from imaging.frames.calibrating import calibration_of
+    from imaging.stars.lens import read_lens
     from imaging.track.checking import CheckOptions, check_frames, frame_files
     from imaging.track.output import json_of, refuse_outputs, write_outputs
     from planner import errors
     from planner.cli.progress import bar, bars
-    from planner.sequence.documents import load_plan
+    from planner.sequence.documents import load_plan, load_rig
     from planner.sky.starlist import deeper_catalogue
 
     plan = load_plan(plan_path)
     output = output or folder.with_name(folder.name + "_checked")
+    named = load_rig(rig) if rig is not None else plan.rig
+    catalogue = catalogue or _named(plan_path, "catalogue", named.catalogue, "--catalogue")
+    lens_path = _named(plan_path, "lens", named.lens, "--rig")
+    lens = read_lens(lens_path) if lens_path is not None else None
     with deeper_catalogue(catalogue):  # a wrong file is said before any work
         pass
     night = None
     if calibration is not None:
         with bars("making calibration masters", quiet=as_json) as (tick,):
             night = calibration_of(calibration, tick=tick)
-    options = CheckOptions(zone or plan.rig.clock.zone, not no_pictures, jobs, night, catalogue, file_time)
+    options = CheckOptions(
+        zone or plan.rig.clock.zone, not no_pictures, jobs, night, catalogue, file_time, lens
+    )
     if follow:
         from imaging.track.follow import follow_folder
 
@@ -104,6 +114,18 @@ def command(  # type: ignore[no-untyped-def]
     if strict and result.findings:
         reserved = True
     return errors.EXIT_WITH_RESERVATIONS if reserved else errors.EXIT_DONE
+
+
+def _named(plan_path: Path, key: str, path: str | None, option: str) -> Path | None:
+    """Return the file that a rig names; one that is gone since the plan was made is an error with its cure."""
+    from planner.errors import DocumentError
+    from planner.sequence import strictyaml
+
+    if path is not None and not Path(path).is_file():
+        allowed = f"no such file; say where it is now with {option}, or take the key out"
+        line = strictyaml.read(plan_path).line(("rig", key))
+        raise DocumentError(plan_path, line, f"rig.{key}", repr(path), allowed)
+    return Path(path) if path is not None else None
 
 
 def _say(as_json: bool):  # type: ignore[no-untyped-def]

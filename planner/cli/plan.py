@@ -44,7 +44,7 @@ from planner import errors
     "--catalogue",
     type=click.Path(path_type=Path),
     metavar="FILE",
-    help="A deeper star catalogue, for what will be there to solve with.",
+    help="A deeper star catalogue, for what will be there to solve with [the rig's].",
 )
 @click.option("--from", "from_date", metavar="DATE", help="With --after: plan the rest from this date on.")
 @click.option("--strict", is_flag=True, help="Exit with 1 when the plan carries cautions of its rules.")
@@ -98,7 +98,11 @@ def command(
         if old_plan is None:
             raise errors.InputError("--after and --from need --of PLAN: the plan that was being followed")
         taken = taken_from(load_plan(old_plan), after, from_date)
-    with deeper_catalogue(catalogue), bar("planning", quiet=as_json) as tick:
+    named = wanted.rig.catalogue  # type: ignore[union-attr]
+    with (
+        deeper_catalogue(catalogue or (Path(named) if named else None)),
+        bar("planning", quiet=as_json) as tick,
+    ):
         plans = build_plans(wanted, tick, taken)
     for plan in plans:
         stop_at_errors(plan)

@@ -53,7 +53,8 @@ import click
 @click.option("--quiet", is_flag=True)
 def command(  # type: ignore[no-untyped-def]
     plan_path, output, thin, count, passage, binning, crop, clock_offset, clock_drift, middle_stamp,
-    pointing_error, jitter, rotation, drift, drift_pa, mirror, from_site, limb_motion, bleed, seed, with_wcs, jobs, force, quiet,
+    pointing_error, jitter, rotation, drift, drift_pa, mirror, from_site, limb_motion, bleed, seed, with_wcs,
+    jobs, force, quiet,
 ) -> int:  # fmt: skip
     """Draw the frames of PLAN as the rig would record them, with faults on purpose if you like.
 

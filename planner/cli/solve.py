@@ -19,7 +19,7 @@ from planner import errors
 @click.option("--focal-mm", metavar="MM", type=click.FloatRange(0, min_open=True), help="Focal length.")
 @click.option("--pixel-um", metavar="UM", type=click.FloatRange(0, min_open=True), help="Pixel pitch.")
 @click.option("--rig", metavar="RIG", type=click.Path(dir_okay=False, path_type=Path),
-              help="A rig file: its scale, and the lens learned beside it.")  # fmt: skip
+              help="A rig file: its scale, its catalogue, and the lens learned beside it.")  # fmt: skip
 @click.option(
     "--learn", is_flag=True, help="Learn the rig's lens from these frames, into a file beside the rig."
 )
@@ -28,7 +28,7 @@ from planner import errors
 )
 @click.option("--file-time", is_flag=True, help="Take a file's modification time where it tells no other.")
 @click.option("--catalogue", metavar="FILE", type=click.Path(dir_okay=False, path_type=Path),
-              help="A deeper star catalogue (FITS, VOTable, ECSV, CSV), beside the installed one.")  # fmt: skip
+              help="A deeper star catalogue (FITS, VOTable, ECSV, CSV) besides the installed [the rig's].")  # fmt: skip
 @click.option("--calibration", metavar="FOLDER", type=click.Path(file_okay=False, path_type=Path),
               help="Folder of bias, dark and flat folders, to calibrate the frames with.")  # fmt: skip
 @click.option("--no-blind", is_flag=True, help="Do not search the whole sky when the hints fail.")
@@ -72,7 +72,9 @@ def command(  # type: ignore[no-untyped-def]
     from planner.sky.starlist import deeper_catalogue
 
     scale, learned, model = _scale_and_lens(scale, focal_mm, pixel_um, rig, learn)
-    zone = zone or (model.clock.zone if model is not None else None)
+    if model is not None:
+        zone = zone or model.clock.zone
+        catalogue = catalogue or (Path(model.catalogue) if model.catalogue else None)
     hint = Hint(near=_near(near), scale_arcsec_px=scale)
     if learned is not None:
         hint = Hint(hint.near, learned.scale_arcsec_px, 0.005, parity=learned.parity, lens=learned.lens)
@@ -112,10 +114,12 @@ def command(  # type: ignore[no-untyped-def]
     else:
         _print(results, output)
     if learn:
-        from imaging.stars.lens import learn_lens, lens_path, write_lens
+        from imaging.stars.lens import learn_lens, write_lens
+        from planner.sequence.documents import lens_path
 
-        write_lens(learn_lens(solutions), model.name, lens_path(rig), force)
-        click.echo(f"lens learned from {len(solutions)} frames: {lens_path(rig)}", err=as_json)
+        kept = Path(model.lens) if model.lens else lens_path(rig)
+        write_lens(learn_lens(solutions), model.name, kept, force)
+        click.echo(f"lens learned from {len(solutions)} frames: {kept}", err=as_json)
     return errors.EXIT_DONE if all(one["solved"] for one in results) else errors.EXIT_WITH_RESERVATIONS
 
 
@@ -126,13 +130,13 @@ def _scale_and_lens(scale, focal_mm, pixel_um, rig, learn):  # type: ignore[no-u
         )
     lens, model = None, None
     if rig is not None:
-        from imaging.stars.lens import lens_path, read_lens
+        from imaging.stars.lens import read_lens
         from planner.sequence.documents import load_rig
 
         model = load_rig(rig)
         scale = scale or model.scale_arcsec_px
-        if lens_path(rig).exists() and not learn:
-            lens = read_lens(lens_path(rig))
+        if model.lens is not None and not learn:
+            lens = read_lens(Path(model.lens))
     elif learn:
         raise errors.InputError(
             "--learn: found without --rig; allowed is with the rig that the frames are of"

@@ -43,8 +43,32 @@ def load_site(path: str | Path) -> Site:
 
 
 def load_rig(path: str | Path) -> Rig:
-    """Return the rig in a YAML file; raises DocumentError."""
-    return _as(Rig, strictyaml.read(path))
+    """Return the rig in a YAML file, with whole paths to the files it names, and to a lens kept beside it.
+
+    Those count from the rig's folder and may not leave it. Raises DocumentError.
+    """
+    document = strictyaml.read(path)
+    if isinstance(document.data, dict):
+        _resolve_rig_files(document, ())
+        kept = lens_path(Path(path))
+        if "lens" not in document.data and kept.is_file():
+            document.data["lens"] = str(kept.resolve())
+    return _as(Rig, document)
+
+
+def lens_path(rig_path: Path) -> Path:
+    """Return where the lens learned of a rig file is kept, unless the rig names another place."""
+    return rig_path.with_name(rig_path.stem + ".lens.yaml")
+
+
+def _resolve_rig_files(document: strictyaml.Document, key: strictyaml.Key) -> None:
+    """Put whole paths in place of those of the files that a rig names, the rig being at this key of a document."""
+    rig = document.data
+    for part in key:
+        rig = rig[part]
+    for name in ("lens", "catalogue"):
+        if isinstance(rig.get(name), str):
+            rig[name] = str(_inside(document, (*key, name)).resolve())
 
 
 def load_plan(path: str | Path) -> Plan:
@@ -65,6 +89,8 @@ def load_brief(path: str | Path, site: Site | None = None, rig: Rig | None = Non
                 document.data[key] = given.model_dump(mode="json")
             elif isinstance(document.data.get(key), str):
                 document.data[key] = _referred(document, (key,), model)
+            elif key == "rig" and isinstance(document.data.get(key), dict):
+                _resolve_rig_files(document, (key,))
         event = document.data.get("event")
         if isinstance(event, dict) and isinstance(event.get("orbit"), str):
             event["orbit"] = load_orbit(_inside(document, ("event", "orbit"))).model_dump(
@@ -79,6 +105,8 @@ def load_brief(path: str | Path, site: Site | None = None, rig: Rig | None = Non
         for index, entry in enumerate(listed):
             if isinstance(entry, str):
                 listed[index] = _referred(document, ("other_rigs", index), Rig)
+            elif isinstance(entry, dict):
+                _resolve_rig_files(document, ("other_rigs", index))
     return _as(Brief, document)
 
 
@@ -190,11 +218,12 @@ def dump_plan(plan: Plan) -> str:
 def _referred(document: strictyaml.Document, key: strictyaml.Key, model: type[BaseModel]) -> dict[str, Any]:
     """Return the data of the file that a brief names, after it has been found right by itself."""
     path = _inside(document, key)
-    return _as(model, strictyaml.read(path)).model_dump(mode="json", exclude_unset=True)
+    loaded: BaseModel = load_rig(path) if model is Rig else _as(model, strictyaml.read(path))
+    return loaded.model_dump(mode="json", exclude_unset=True)
 
 
 def _inside(document: strictyaml.Document, key: strictyaml.Key) -> Path:
-    """Return the path of a file that a brief names, which must lie in the brief's folder."""
+    """Return the path of a file that a document names, which must lie in the document's own folder."""
     name = document.data
     for part in key:
         name = name[part]
@@ -207,7 +236,7 @@ def _inside(document: strictyaml.Document, key: strictyaml.Key) -> Path:
             line,
             where,
             repr(name),
-            "a path may not leave the brief's folder; name it on the command line",
+            f"a path may not leave the folder of {Path(document.path).name}; name it on the command line",
         )
     if not (folder / name).is_file():
         near = sorted(
@@ -218,7 +247,7 @@ def _inside(document: strictyaml.Document, key: strictyaml.Key) -> Path:
             line,
             where,
             repr(name),
-            "no such file in the brief's folder" + _did_you_mean(name, near),
+            f"no such file in the folder of {Path(document.path).name}" + _did_you_mean(name, near),
         )
     return folder / name
 

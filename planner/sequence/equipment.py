@@ -210,6 +210,14 @@ class Rig(Model):
     mirrored: bool = False
     storage_gb: float = Field(default=64.0, gt=0)
     power: Power = Power()
+    lens: str | None = Field(
+        default=None,
+        description="file of the lens that `solve --learn` learned; default: RIG.lens.yaml beside the rig",
+    )
+    catalogue: str | None = Field(
+        default=None,
+        description="file of a star catalogue deeper than the installed one, in the rig's folder",
+    )
 
     @property
     def scale_arcsec_px(self) -> float:

@@ -20,7 +20,6 @@ SLIPS = [
     (TRANSIT, "--frames 12 --binning 6 --clock-offset 3600", "zone"),
     (TRANSIT, "--frames 12 --binning 6 --clock-offset 86400", "date"),
     (TRANSIT, "--frames 12 --binning 6 --mirror", "mirrored"),
-    (TRANSIT, f"--frames 12 --binning 6 {OTHER_SIDE}", "longitude-sign"),
     (TRANSIT, "--frames 12 --binning 6 --rotation 30", "camera-turned"),
     (MOON, "--frames 12 --binning 4 --clock-offset -3600", "zone"),
     (MOON, "--frames 12 --binning 4 --mirror", "mirrored"),
@@ -54,6 +53,13 @@ FAULTS = [
     (TRANSIT, "--frames 12 --binning 8 --clock-offset 60", {}, ["clock-offset"]),
     (TRANSIT, "--frames 16 --binning 8 --clock-drift 600", {}, ["clock-drift"]),
     (TRANSIT, "--frames 10 --binning 8", {"focal_length_mm: 1000.0": "focal_length_mm: 1015.0"}, ["scale"]),
+    # from the plan's own side of Greenwich the Sun has not risen: so it is the plan that is wrong, not the frames
+    (
+        TRANSIT,
+        "--frames 12 --binning 6",
+        {"longitude_deg: 32.87": "longitude_deg: -32.87"},
+        ["longitude-sign"],
+    ),
     (TRANSIT, "--frames 10 --binning 8 --pointing-error 200 --drift 60", {}, []),
     (MOON, "--frames 24 --binning 4 --from-site 35.43,32.87,1420", {}, ["site-displaced"]),
 ]
