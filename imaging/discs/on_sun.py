@@ -113,15 +113,19 @@ class _Scene:
         middle = np.arctan2(float(np.mean(self.y)) - sun.y_px, float(np.mean(self.x)) - sun.x_px)
         self.tangent = (-dx * np.sin(middle) + dy * np.cos(middle)) / (10 * radius_px)
         self.small_shape = stamp.data.shape
+        self._known: tuple[float, np.ndarray, np.ndarray] | None = None
 
     def holds_limb(self) -> bool:
         """Say whether the limb, or its blur, is in the stamp."""
         return bool(self.sun_distance.max() > self.sun.radius_px - 2 * self.sun.blur.sigma_px)
 
     def _surface(self, limb_shift: float) -> tuple[np.ndarray, np.ndarray]:
+        if self._known is not None and self._known[0] == limb_shift:
+            return self._known[1:]
         radius = self.sun.radius_px + limb_shift
         mu = np.sqrt(np.clip(1 - (self.sun_distance / radius) ** 2, 0, 1))
-        return coverage(self.sun_distance - radius, self.finer), mu
+        self._known = limb_shift, coverage(self.sun_distance - radius, self.finer), mu
+        return self._known[1:]
 
     def components(self, parameters: np.ndarray) -> np.ndarray:
         """Return the components (5, rows, columns) with the planet in front."""
@@ -138,13 +142,9 @@ class _Scene:
 
     def _stack(self, seen: np.ndarray, mu: np.ndarray, log_sigma: float) -> np.ndarray:
         blur = Blur(float(np.exp(log_sigma)), self.sun.blur.wing)
-        parts = [
-            blurred(layer, blur, self.finer, self.margin)
-            for layer in (seen, seen * mu, seen * mu * mu, seen * self.tangent)
-        ]
-        if self.holds_limb():
-            parts.append(np.ones(self.small_shape))
-        return np.array(parts)
+        layers = np.array([seen, seen * mu, seen * mu * mu, seen * self.tangent])
+        parts = blurred(layers, blur, self.finer, self.margin)
+        return np.concatenate([parts, np.ones((1, *self.small_shape))]) if self.holds_limb() else parts
 
 
 def _depth(stamp: Stamp, scene: _Scene, parameters: np.ndarray) -> tuple[float, float]:
