@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import json
 import sys
+import time
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -19,13 +20,14 @@ from planner.cli.main import run_with
 
 HERE = Path(__file__).resolve().parent
 CONFIGS = HERE.parent.parent / "configs"
+MOST_FILM_BYTES = 300_000
 
 
 @dataclass(frozen=True)
 class Journey:
     """A brief, options of `rehearse`, pictures (name: options of `compose`), options of `timelapse`.
 
-    `site`: another than the brief's. `path`: which version of the path plot is kept.
+    `site`, `rig`: others than the brief's. `path`: which version of the path plot is kept.
     """
 
     name: str
@@ -34,6 +36,7 @@ class Journey:
     pictures: dict[str, tuple[str, ...]]
     film: tuple[str, ...] = ()
     site: Path | None = None
+    rig: Path | None = None
     path: str = "light"
     needs: tuple[str, ...] = field(default=())
 
@@ -49,7 +52,7 @@ JOURNEYS = (
     Journey(
         "far",
         CONFIGS / "mercury_transit_2032.yaml",
-        ("--frames", "40", "--binning", "2"),
+        ("--frames", "120", "--binning", "2"),
         {"two_sites": ("--second-site", "{transit.plan}", "{transit.track}", "{transit.frames}", "--instants", "21")},
         site=HERE / "far_shore.yaml",
         needs=("transit",),
@@ -79,9 +82,9 @@ JOURNEYS = (
     Journey(
         "meet",
         CONFIGS / "planets_meet_2028.yaml",
-        ("--frames", "24", "--binning", "2"),
+        ("--frames", "24", "--binning", "2", "--rotation", "78"),
         {"meet": ()},
-        ("--fps", "10", "--size", "640x480"),
+        ("--fps", "10", "--size", "480x640"),
     ),
     Journey(
         "asteroid",
@@ -94,8 +97,17 @@ JOURNEYS = (
         "arc",
         CONFIGS / "apparition_arc_2027.yaml",
         ("--frames", "32", "--binning", "2"),
-        {"arc": ("--landscape", "{work}/plate.png", "--view", "245,40,1015", "--instants", "16", "--grid", "altaz")},
+        {"arc": ("--landscape", "{work}/plate.png", "--view", "245,40,1015", "--instants", "16", "--grid", "altaz",
+                 "--enlarge", "6")},
         ("--fps", "8", "--size", "480x270"),
+    ),
+    Journey(
+        "venus",
+        HERE / "venus_phases.yaml",
+        (),
+        {"venus": ("--register", "target", "--enlarge", "3", "--instants", "12")},
+        site=CONFIGS / "sites" / "kestrel_ridge.yaml",
+        rig=HERE / "refractor_500mm.yaml",
     ),
 )  # fmt: skip
 
@@ -105,8 +117,10 @@ def step(output: Path, *arguments: str) -> None:
     if output.exists():
         return
     print("syzygraph", *arguments, flush=True)
+    began = time.monotonic()
     if run_with([*arguments, "--force"]) not in (0, 1):
         raise SystemExit(f"failed: {arguments}")
+    print(f"  took {time.monotonic() - began:.0f} s", flush=True)
 
 
 def shown(picture: Path, name: str, longest_px: int, quality: int = 88) -> None:
@@ -115,6 +129,27 @@ def shown(picture: Path, name: str, longest_px: int, quality: int = 88) -> None:
         image = image.convert("RGB")
         image.thumbnail((longest_px, longest_px), Image.Resampling.LANCZOS)
         image.save(HERE / f"{name}.jpg", quality=quality, optimize=True)
+
+
+def shown_film(film: Path) -> None:
+    """Keep a copy for the page, compressed until it is small."""
+    import av
+
+    with av.open(str(film)) as source:
+        rate = source.streams.video[0].average_rate
+        pictures = [frame.to_ndarray(format="gray") for frame in source.decode(video=0)]
+    copy = HERE / film.name
+    for quality in range(23, 46, 3):
+        with av.open(str(copy), "w", options={"movflags": "+faststart"}) as target:
+            stream = target.add_stream("libx264", rate=rate, options={"crf": str(quality), "preset": "slow"})
+            stream.height, stream.width = pictures[0].shape
+            stream.pix_fmt = "yuv420p"
+            for picture in pictures:
+                frame = av.VideoFrame.from_ndarray(picture, format="gray").reformat(format="yuv420p")
+                target.mux(stream.encode(frame))
+            target.mux(stream.encode())
+        if copy.stat().st_size <= MOST_FILM_BYTES:
+            return
 
 
 def detail(folder: Path, name: str, half_px: int = 110) -> None:
@@ -157,6 +192,7 @@ def make(journey: Journey, work: Path) -> None:
     """Go one journey and keep what the page shows."""
     plan, track, frames = _files(work, journey.name)
     place = ["--site", str(journey.site)] if journey.site else []
+    place += ["--rig", str(journey.rig)] if journey.rig else []
     step(plan, "plan", str(journey.brief), "-o", str(plan), *place)
     step(
         frames.with_name(f"{frames.name}.truth.ecsv"),
@@ -188,7 +224,7 @@ def make(journey: Journey, work: Path) -> None:
     if journey.film:
         film = work / f"{journey.name}.mp4"
         step(film, "timelapse", *common, "-o", str(film), *journey.film)
-        (HERE / film.name).write_bytes(film.read_bytes())
+        shown_film(film)
 
 
 def _files(work: Path, name: str) -> tuple[Path, Path, Path]:
@@ -199,9 +235,11 @@ def main(work: Path, wanted: list[str]) -> None:
     """Go the journeys asked for, or all."""
     work.mkdir(parents=True, exist_ok=True)
     plate(work / "plate.png")
+    began = time.monotonic()
     for journey in JOURNEYS:
         if not wanted or journey.name in wanted:
             make(journey, work)
+    print(f"all of it took {(time.monotonic() - began) / 60:.0f} min", flush=True)
 
 
 if __name__ == "__main__":

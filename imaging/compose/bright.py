@@ -196,7 +196,7 @@ def _shift(
     near = NEAR_ARCSEC / scale
     for name in places:
         apart = [np.hypot(*np.subtract(places[name], places[other])) for other in places if other != name]
-        near = min(near, *(0.4 * float(each) for each in apart if np.isfinite(each)), NEAR_ARCSEC)
+        near = min([near, *(0.4 * float(each) for each in apart if np.isfinite(each))])
     for name, (x_px, y_px) in places.items():
         if not (np.isfinite([x_px, y_px]).all() and 0 <= x_px < columns and 0 <= y_px < rows):
             continue

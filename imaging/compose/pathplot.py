@@ -121,7 +121,7 @@ def _view(data: PathData) -> View:
     x, y = data.line
     length = max(np.ptp(x), np.ptp(y))
     # a target that stands still, a star, is shown in its neighbourhood
-    length = max(length, 60.0) if length > STANDS_STILL_ARCSEC else 7200.0
+    length = max(length, min(60.0, 4.0 * length)) if length > STANDS_STILL_ARCSEC else 7200.0
     low, high = float(y.min()), float(y.max())
     if data.horizontal:
         horizon = -data.anchor_deg[1] * 3600.0

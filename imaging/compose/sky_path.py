@@ -186,7 +186,7 @@ def full_rectangle(covered: np.ndarray, keep: tuple[int, int, int, int]) -> tupl
 
 
 def _canvas(material: Material, choices: Choices, light: Light) -> tuple[tuple[float, float], Canvas]:
-    """Return the anchor and the canvas: the whole path with a margin of a fifth of it, or the field of a frame.
+    """Return the anchor and the canvas: the path with a margin of a fifth of it, the mosaic, or the field of a frame.
 
     A path that is short in its frames is shown in the whole of a frame, for what it passes by.
     """
@@ -212,6 +212,11 @@ def _canvas(material: Material, choices: Choices, light: Light) -> tuple[tuple[f
     extent = max(length, 200 * scale)
     middle = frames[len(frames) // 2]
     up = up_pa_deg(material, choices.orientation, anchor, middle.tt_s, on_disc=False)
+    if any(passage.panel for passage in material.plan.passages):
+        fields = [_field(group[0], anchor, light) for _, group in material.passages()]
+        known = [np.array(field) for field in fields if field is not None]
+        if known:  # a mosaic is shown whole, also beside the path
+            return anchor, canvas_around(*np.concatenate(known, axis=1), 0.0, scale, up, choices.largest_px)
     field = _field(middle, anchor, light)
     if field is not None and length < 0.35 * min(np.ptp(field[0]), np.ptp(field[1])):
         return anchor, canvas_around(*field, 0.0, scale, up, choices.largest_px)

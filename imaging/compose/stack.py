@@ -236,10 +236,13 @@ def has_room(folder: Path, needed_bytes: int) -> bool:
     return _free_bytes(folder) >= 1.05 * needed_bytes
 
 
-def require_room(folder: Path, needed_bytes: int, purpose: str) -> None:
+CURE = "fewer frames, a coarser --scale, --scratch on a larger disk, or --blend mean"
+
+
+def require_room(folder: Path, needed_bytes: int, purpose: str, cure: str = CURE) -> None:
     """Raise InputError when the disk of `folder` has less room than needed and a twentieth."""
     if not has_room(folder, needed_bytes):
         raise InputError(
-            f"{folder}: {purpose} needs {needed_bytes / 1e9:.1f} GB of disk, {_free_bytes(folder) / 1e9:.1f} GB are "
-            "free; choose fewer frames, a coarser --scale, --scratch on a larger disk, or --blend mean"
+            f"{folder}: {purpose} needs {needed_bytes / 1e9:.2g} GB of disk, {_free_bytes(folder) / 1e9:.2g} GB are "
+            f"free; choose {cure}"
         )

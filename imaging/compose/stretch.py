@@ -67,11 +67,12 @@ def background(image: np.ndarray) -> tuple[float, float]:
 
 
 def measured_stretch(image: np.ndarray, tone: str, faintest: float = np.inf) -> Stretch:
-    """Return the stretch for a picture of this tone (`disc`, `stars`, `merged`, `photograph`, `linear`), measured on it.
+    """Return the stretch for a picture, measured on it.
 
-    Stars: the background goes to a dark grey, the brightest pixels (0.05 %) to white; merged: the brightest of all. Disc: what lies off the
-    disc goes to black, the brightest hundredth of the disc to just under white; where a body of peak value
-    `faintest` would be lost beside it, the curve bends until it is seen. A photograph keeps its own tones.
+    `tone`: `stars`: the background goes to a dark grey, the brightest pixels (0.05 %) to white. `merged`: the same, but
+    the brightest pixel of all to white. `disc`: what lies off the disc goes to black, the brightest hundredth of the
+    disc to just under white; where a body of peak value `faintest` would be lost beside it, the curve bends until it is
+    seen. `photograph` keeps its own tones. `linear`: tones proportional to light.
     """
     values = _sample(image)
     if not values.size:

@@ -15,6 +15,7 @@ from imaging.compose.light import Light, disc_level, exposure_level
 from imaging.compose.material import Material, Registered
 from imaging.compose.orientation import position_angle_deg, up_pa_deg
 from imaging.compose.plane import sky_to_plane
+from imaging.compose.stack import require_room
 from imaging.compose.stretch import Stretch, measured_stretch
 from planner.errors import FrameSetAside, InputError
 from planner.outputs import whole_file
@@ -27,6 +28,7 @@ MOST_GAP_CARDS = 6
 MOST_ANIMATED = 240  # pictures in a GIF or animated PNG: beyond it a film is smaller and smoother
 LONGEST_PICTURES = 20_000
 DIM = 0.35
+BYTES_A_PIXEL = {".mp4": 0.25, ".gif": 1.0, ".png": 1.0}  # of grainy sky; discs need less
 
 
 @dataclass(frozen=True)
@@ -123,6 +125,10 @@ def make_film(path: Path, material: Material, film: Film, force: bool = False) -
             f"{path}: {len(plan)} pictures are too many for an animated picture (at most {MOST_ANIMATED}); "
             "choose .mp4, a larger --pace, or a lower --fps"
         )
+    pixels = shots.canvas.width_px * shots.canvas.height_px * len(plan)
+    require_room(
+        path.parent, int(BYTES_A_PIXEL[suffix] * pixels), "the film", "a smaller --size, or another disk"
+    )
     pictures = _pictures(shots, plan, film)
     with whole_file(path, force) as part:
         (_encode_mp4 if suffix == ".mp4" else _encode_animation)(part, pictures, film.fps)
@@ -156,7 +162,8 @@ class _Shots:
             if not frames:
                 raise InputError(f"--steady-on {self.steady_on}: no frame is registered on it")
         self.frames = frames
-        self.light = Light(threads=film.threads, ringless=material.reference == "stars")
+        # at a limb that the stretch makes bright, as at stars, the dark rings of a sharp filter would show
+        self.light = Light(threads=film.threads, ringless=material.reference != "sun")
         self.left_out: list[tuple[str, str]] = []
         self.stretch: Stretch | None = None
         geometry = material.geometry_at(np.array([frame.tt_s for frame in frames]))

@@ -110,6 +110,14 @@ def caption(material: Material, picture: Picture) -> str:
     pieces = [f"{material.plan.title}.", f"{material.plan.site.name}, {span}.", f"{count} frames {how}."]
     if picture.kind == "two-sites":
         pieces.append(picture.notes[-1][0].upper() + picture.notes[-1][1:] + ".")
+    geometry = material.geometry
+    if picture.kind == "sky-path" and material.target not in geometry.discs and picture.drawn:
+        where = _side(
+            picture.drawn[0].x_px / picture.canvas.width_px, picture.drawn[0].y_px / picture.canvas.height_px
+        )
+        pieces.append(
+            f"The star covered, {material.target}, stands {where}; what covers it is too faint to be drawn."
+        )
     if apart:
         pieces.append(f"No position is drawn more than {_arcsec(max(apart))} from its predicted place.")
     bar = "the landscape's scale" if picture.kind == "arc" else "their scale"
@@ -119,6 +127,13 @@ def caption(material: Material, picture: Picture) -> str:
         else f"Bodies are drawn {picture.enlargement:g} times their true size; the bar is at {bar}."
     )
     return " ".join(pieces)
+
+
+def _side(right: float, up: float) -> str:
+    """Return where in the picture a place is, from its shares of width and height."""
+    rows = "top" if up > 2 / 3 else "bottom" if up < 1 / 3 else ""
+    columns = "left" if right < 1 / 3 else "right" if right > 2 / 3 else ""
+    return f"at the {rows} {columns}".replace("  ", " ").strip() if rows or columns else "in the middle"
 
 
 def _arcsec(value: float) -> str:

@@ -148,8 +148,66 @@ def test_a_disk_too_small_is_named_before_any_picture_is_made(copy, tmp_path, ca
     code, statement = composed(copy, tmp_path / "out")
     said = capsys.readouterr().err.strip()
     assert (code, statement) == (2, None)
-    assert "of disk, 0.0 GB are free" in said
+    assert "of disk, 0.001 GB are free" in said
     assert said.count("\n") == 0
+    assert not (tmp_path / "out").exists()
+
+
+def test_a_disk_too_small_for_a_film_is_named_before_it_is_begun(copy, tmp_path, capsys, monkeypatch):
+    import shutil as disk
+
+    usage = disk.disk_usage(tmp_path)
+    monkeypatch.setattr("shutil.disk_usage", lambda folder: usage._replace(free=1_000))
+    film = tmp_path / "film.mp4"
+    assert run_with(["timelapse", *copy.arguments, "-o", str(film), "--quiet"]) == 2
+    assert "the film needs" in capsys.readouterr().err
+    assert not list(tmp_path.glob("film*"))
+
+
+@pytest.mark.parametrize(
+    "name",
+    [
+        "composite.fits",
+        "composite.png",
+        "path_light.svg",
+        "path_dark.svg",
+        "composite.truth.json",
+        "composite.html",
+    ],
+)
+def test_any_output_that_exists_is_kept_and_none_is_written_beside_it(copy, tmp_path, capsys, name):
+    out = tmp_path / "out"
+    out.mkdir()
+    (out / name).write_text("mine")
+    code = run_with(
+        ["compose", *copy.arguments, "-o", str(out), "--plots", "svg", "--instants", "2", "--quiet"]
+    )
+    assert code == 2
+    assert "--force" in capsys.readouterr().err
+    assert {path.name: path.read_text() for path in out.iterdir()} == {name: "mine"}
+
+
+def test_no_frame_of_stars_left_is_one_line(loop, tmp_path, capsys):
+    frames = tmp_path / "frames"
+    frames.mkdir()
+    for path in loop.frames.iterdir():
+        (frames / path.name).write_bytes(b"not a frame")
+    code = run_with(
+        [
+            "compose",
+            str(loop.plan),
+            str(loop.track),
+            "--frames",
+            str(frames),
+            "-o",
+            str(tmp_path / "out"),
+            "--quiet",
+        ]
+    )
+    said = capsys.readouterr().err.strip()
+    assert code == 2
+    assert said.count("\n") == 0
+    assert "no frame registered on stars is left" in said
     assert not (tmp_path / "out").exists()
 
 
