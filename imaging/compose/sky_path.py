@@ -216,7 +216,8 @@ def _canvas(material: Material, choices: Choices, light: Light) -> tuple[tuple[f
         fields = [_field(group[0], anchor, light) for _, group in material.passages()]
         known = [np.array(field) for field in fields if field is not None]
         if known:  # a mosaic is shown whole, also beside the path
-            return anchor, canvas_around(*np.concatenate(known, axis=1), 0.0, scale, up, choices.largest_px)
+            corners = np.concatenate(known, axis=1)
+            return anchor, canvas_around(corners[0], corners[1], 0.0, scale, up, choices.largest_px)
     field = _field(middle, anchor, light)
     if field is not None and length < 0.35 * min(np.ptp(field[0]), np.ptp(field[1])):
         return anchor, canvas_around(*field, 0.0, scale, up, choices.largest_px)
