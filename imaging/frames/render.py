@@ -8,10 +8,10 @@ seeing and optics, dimmed by the air and in the corners, with photon and read no
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
-from typing import Literal
 
 import numpy as np
 
+from imaging.frames.faults import Faults, with_stand_in
 from imaging.frames.render_camera import Readout, binned, record, vignetting
 from imaging.frames.render_discs import Ball, draw_ball, draw_moon, draw_sun
 from imaging.frames.render_light import PointSpread
@@ -37,35 +37,6 @@ SIDEREAL_ARCSEC_S = 15.041
 EARTHSHINE = 1e-4
 # Blur of good optics, in pixels (assumed).
 OPTICS_FWHM_PX = 0.8
-_STAMPED_HALVES = {"start": -1.0, "middle": 0.0, "end": 1.0}  # of an exposure, after its middle
-
-
-@dataclass(frozen=True)
-class Faults:
-    """What goes wrong on purpose. Everything is off by default but the mount's own errors.
-
-    `clock_offset_s`: frame stamps minus true UTC; `clock_drift_s_day` adds to it from the first frame on.
-    `pointing_error_arcsec`: rms an axis, drawn anew for each passage; None takes the mount's.
-    `jitter_arcsec`: rms an axis, drawn for each frame; None takes the mount's tracking error.
-    `drift_arcsec_h` toward `drift_pa_deg` from the start of each passage. `rotation_deg` is added to the roll.
-    `mirrored`: the picture is flipped left to right. `site`: where the rig really stands.
-    `middle_stamp`: which instant of the exposure the stamps take for its middle.
-    `limb_motion_arcsec`: rms of the seeing's displacements; None computes it, 0 turns it off.
-    """
-
-    clock_offset_s: float = 0.0
-    clock_drift_s_day: float = 0.0
-    pointing_error_arcsec: float | None = None
-    jitter_arcsec: float | None = None
-    drift_arcsec_h: float = 0.0
-    drift_pa_deg: float = 90.0
-    rotation_deg: float = 0.0
-    mirrored: bool = False
-    site: Site | None = None
-    limb_motion_arcsec: float | None = 0.0
-    limb_correlation_arcsec: float = 8.0
-    bleed: bool = False
-    middle_stamp: Literal["middle", "start", "end"] = "middle"
 
 
 @dataclass(frozen=True)
@@ -141,14 +112,25 @@ class Scene:
         if len(frames) == 0:
             raise InputError(f"the plan {plan.title!r} has no frames to rehearse")
         chosen = np.arange(len(frames)) if chosen is None else np.asarray(chosen, int)
-        rig = binned(plan.rig, cut.binning)
+        rig = binned(faults.real_rig(plan.rig), cut.binning)
         if min(rig.sensor.width_px, rig.sensor.height_px) < 16:
             raise InputError(
                 f"binning {cut.binning} leaves {rig.sensor.width_px} x {rig.sensor.height_px} pixels"
             )
         observer = observer_of(faults.site or plan.site)
         middle = frames.middle_tt_s[chosen]
-        geometry = catalogue.family(plan.event.family).geometry(planned_event(plan), observer, middle)
+        family, event = catalogue.family(plan.event.family), planned_event(plan)
+
+        def geometry_at(tt_s: np.ndarray) -> Geometry:
+            whole = family.geometry(event, observer, tt_s)
+            if not faults.stand_in:
+                return whole
+            # the same for all frames, whichever are drawn
+            return with_stand_in(
+                whole, family.geometry(event, observer, frames.middle_tt_s[len(frames) // 2, None])
+            )
+
+        geometry = geometry_at(middle)
         zenith = local_axes(observer, middle)[:, 2, :]
         moon = sky_disc("moon", observer, middle)
         moon_altitude, _ = altaz((moon.ra_deg, moon.dec_deg), observer, middle)
@@ -159,8 +141,7 @@ class Scene:
         )  # fmt: skip
         if rig.sensor.shutter == "rolling":  # the frame is drawn as it was when the target's row was exposed
             scene.delay_s = scene._row_delay_s()
-            family = catalogue.family(plan.event.family)
-            scene.geometry = family.geometry(planned_event(plan), observer, middle + scene.delay_s)
+            scene.geometry = geometry_at(middle + scene.delay_s)
         return scene
 
     def __len__(self) -> int:
@@ -397,7 +378,7 @@ class Scene:
         faults = self.faults
         stamp = middle + faults.clock_offset_s
         stamp += faults.clock_drift_s_day * (middle - float(self.frames.start_tt_s[0])) / 86400
-        stamp += _STAMPED_HALVES[faults.middle_stamp] * self.shot(position).exposure_s / 2
+        stamp += faults.stamped_half * self.shot(position).exposure_s / 2
         x, y = self._target_px(position, pointing)
         reference = balls.get(geometry.reference)
         rx, ry = pointing.project(reference.vector) if reference is not None else (np.nan, np.nan)

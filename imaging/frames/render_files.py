@@ -45,15 +45,15 @@ def rehearse(
     """
     faults, cut = faults or Faults(), cut or Cut()
     refuse_existing(truth_path(folder), force)
-    digits = max(4, len(str(int(np.max(chosen, initial=0)))))
-    paths = [folder / f"frame_{index:0{digits}d}.fits" for index in chosen]
+    last = int(np.max(chosen, initial=0))
+    paths = [folder / _name(int(index), last, faults) for index in chosen]
     for path in paths:
         refuse_existing(path, force)
     folder.mkdir(parents=True, exist_ok=True)
     portions = [part for part in np.array_split(chosen, max(1, min(len(chosen), 4 * jobs))) if part.size]
     if jobs <= 1:
         portions = [chosen]
-    draw = partial(_draw_portion, plan, folder, digits, faults, cut, seed, with_wcs, force)
+    draw = partial(_draw_portion, plan, folder, last, faults, cut, seed, with_wcs, force)
     truths: list[Truth] = []
     if jobs <= 1:
         truths = draw(chosen, tick=lambda done: tick(done, len(chosen)) if tick else None)
@@ -70,7 +70,7 @@ def rehearse(
 def _draw_portion(
     plan: Plan,
     folder: Path,
-    digits: int,
+    last: int,
     faults: Faults,
     cut: Cut,
     seed: int,
@@ -83,22 +83,38 @@ def _draw_portion(
     truths = []
     for position in range(len(scene)):
         picture = scene.draw(position)
-        path = folder / f"frame_{picture.index:0{digits}d}.fits"
-        write_frame(path, picture, plan, cut, with_wcs, force)
+        path = folder / _name(picture.index, last, faults)
+        write_frame(
+            path, picture, plan, cut, with_wcs, force, faults.site if faults.headers_tell_site else None
+        )
         truths.append(picture.truth)
         if tick:
             tick(position + 1)
     return truths
 
 
+def _name(index: int, last: int, faults: Faults) -> str:
+    number = last - index if faults.names_backwards else index
+    return f"frame_{number:0{max(4, len(str(last)))}d}.fits"
+
+
 def write_frame(
-    path: Path, picture: Picture, plan: Plan, cut: Cut, with_wcs: bool = False, force: bool = False
+    path: Path,
+    picture: Picture,
+    plan: Plan,
+    cut: Cut,
+    with_wcs: bool = False,
+    force: bool = False,
+    site: Site | None = None,
 ) -> None:
-    """Write one frame as FITS (standard 4.0): times are the stamped ones, begin, middle and end, UTC."""
+    """Write one frame as FITS (standard 4.0): times are the stamped ones, begin, middle and end, UTC.
+
+    `site`: what the header says of where it was taken, in place of the plan's.
+    """
     from astropy.io import fits
 
     hdu = fits.PrimaryHDU(picture.readout.adu)
-    for key, (value, comment) in header_cards(picture, plan, cut).items():
+    for key, (value, comment) in header_cards(picture, plan, cut, site).items():
         hdu.header[key] = (value, comment)
     if with_wcs:
         for key, value in wcs_cards(picture).items():
@@ -108,12 +124,14 @@ def write_frame(
         hdu.writeto(part, overwrite=True)
 
 
-def header_cards(picture: Picture, plan: Plan, cut: Cut) -> dict[str, tuple[Any, str]]:
+def header_cards(
+    picture: Picture, plan: Plan, cut: Cut, site: Site | None = None
+) -> dict[str, tuple[Any, str]]:
     """Return the keywords of a frame with their comments."""
     shot, truth, rig = picture.shot, picture.truth, picture.rig
     half = shot.exposure_s / 2
     begin, middle, end = (utc_iso(truth.stamped_tt_s + shift, 6).rstrip("Z") for shift in (-half, 0.0, half))
-    x, y, z = itrs_position_km(observer_of(plan.site)) * 1e3
+    x, y, z = itrs_position_km(observer_of(site or plan.site)) * 1e3
     cards: dict[str, tuple[Any, str]] = {
         "DATE-OBS": (begin, "start of exposure"),
         "DATE-BEG": (begin, "start of exposure"),
@@ -127,7 +145,7 @@ def header_cards(picture: Picture, plan: Plan, cut: Cut) -> dict[str, tuple[Any,
         "OBSGEO-Z": (round(float(z), 3), "[m] site, ITRS"),
         "INSTRUME": (_ascii(plan.rig.name), "rig"),
         "OBJECT": (_ascii(plan.title), "plan"),
-        "FOCALLEN": (rig.optics.focal_length_mm * rig.optics.reducer, "[mm] focal length"),
+        "FOCALLEN": (plan.rig.optics.focal_length_mm * plan.rig.optics.reducer, "[mm] focal length"),
         "APTDIA": (rig.optics.aperture_mm, "[mm] aperture"),
         "XPIXSZ": (rig.sensor.pixel_um, "[um] pixel, binning included"),
         "YPIXSZ": (rig.sensor.pixel_um, "[um] pixel, binning included"),

@@ -131,6 +131,9 @@ class CheckResult:
         text = f"{text} is on its predicted path in {share}, to {size:.2g} arcsec rms"
         if not np.isfinite(self.clock_offset_sigma_s):
             return text + "; the clock could not be judged."
+        half = next((f for f in self.findings if f.name == "start-for-middle"), None)
+        if half is not None:
+            return f"{text}; {half.sentence[:1].lower()}{half.sentence[1:].split(':')[0]} ({abs(half.value):.2g} s)."
         whole = reading.clock_s if reading.name in ("zone", "date") else 0.0
         words = clock_words(self.clock_offset_s - whole, self.clock_offset_sigma_s)
         if whole:

@@ -42,6 +42,18 @@ import click
 )
 @click.option("--mirror", is_flag=True, help="Flip the frames left to right.")
 @click.option("--from-site", metavar="LAT,LON,HEIGHT", help="Where the rig really stands (degrees, metres).")
+@click.option("--header-site", is_flag=True, help="With --from-site: let the headers tell it.")
+@click.option(
+    "--scale-error",
+    metavar="PERCENT",
+    type=click.FloatRange(-50, 100),
+    default=0.0,
+    help="Real scale minus the rig's.",
+)
+@click.option(
+    "--stand-in", is_flag=True, help="Draw a spot or a star that stands still in the planet's stead."
+)
+@click.option("--names-backwards", is_flag=True, help="Number the files from the last frame to the first.")
 @click.option(
     "--limb-motion", metavar="ARCSEC", default="0", help="Rms by seeing, or 'auto' from site and aperture."
 )
@@ -53,8 +65,8 @@ import click
 @click.option("--quiet", is_flag=True)
 def command(  # type: ignore[no-untyped-def]
     plan_path, output, thin, count, passage, binning, crop, clock_offset, clock_drift, middle_stamp,
-    pointing_error, jitter, rotation, drift, drift_pa, mirror, from_site, limb_motion, bleed, seed, with_wcs,
-    jobs, force, quiet,
+    pointing_error, jitter, rotation, drift, drift_pa, mirror, from_site, header_site,
+    scale_error, stand_in, names_backwards, limb_motion, bleed, seed, with_wcs, jobs, force, quiet,
 ) -> int:  # fmt: skip
     """Draw the frames of PLAN as the rig would record them, with faults on purpose if you like.
 
@@ -97,6 +109,10 @@ def command(  # type: ignore[no-untyped-def]
         limb_motion_arcsec=None if limb_motion == "auto" else _number("--limb-motion", limb_motion),
         bleed=bleed,
         middle_stamp=middle_stamp,
+        scale_error=scale_error / 100,
+        stand_in=stand_in,
+        headers_tell_site=header_site,
+        names_backwards=names_backwards,
     )
     with bar("rehearsing", quiet) as tick:
         paths = rehearse(

@@ -5,6 +5,7 @@ from __future__ import annotations
 import html
 import json
 import re
+from itertools import cycle
 
 import numpy as np
 import pytest
@@ -21,11 +22,16 @@ SLIPS = [
     (TRANSIT, "--frames 12 --binning 6 --clock-offset 86400", "date"),
     (TRANSIT, "--frames 12 --binning 6 --mirror", "mirrored"),
     (TRANSIT, "--frames 12 --binning 6 --rotation 30", "camera-turned"),
+    (TRANSIT, "--frames 12 --binning 6 --from-site -34.93,32.87,1420", "latitude-sign"),
+    (TRANSIT, "--frames 12 --binning 6 --stand-in", "wrong-body"),
+    (TRANSIT, "--frames 12 --binning 6 --clock-offset 2700", "clock-far-off"),
     (MOON, "--frames 12 --binning 4 --clock-offset -3600", "zone"),
+    (MOON, "--frames 12 --binning 4 --stand-in", "wrong-body"),
     (MOON, "--frames 12 --binning 4 --mirror", "mirrored"),
     (MARS, "--frames 6 --binning 3 --clock-offset 7200", "zone"),
     (MARS, "--frames 6 --binning 3 --clock-offset -86400", "date"),
     (MARS, "--frames 6 --binning 3 --mirror", "mirrored"),
+    (MARS, "--frames 8 --binning 6 --stand-in", "wrong-body"),
     (MARS, f"--frames 6 --binning 2 {OTHER_SIDE}", "longitude-sign"),
 ]
 
@@ -52,7 +58,10 @@ FAULTS = [
     (TRANSIT, "--frames 10 --binning 8 --clock-offset 3607.3", {}, ["zone"]),
     (TRANSIT, "--frames 12 --binning 8 --clock-offset 60", {}, ["clock-offset"]),
     (TRANSIT, "--frames 16 --binning 8 --clock-drift 600", {}, ["clock-drift"]),
-    (TRANSIT, "--frames 10 --binning 8", {"focal_length_mm: 1000.0": "focal_length_mm: 1015.0"}, ["scale"]),
+    (TRANSIT, "--frames 10 --binning 8 --scale-error 1.5", {}, ["scale"]),
+    (TRANSIT, "--frames 10 --binning 8 --clock-offset -864000", {}, ["another-date", "date"]),
+    (TRANSIT, "--frames 10 --binning 8 --names-backwards", {}, ["out-of-order"]),
+    (TRANSIT, "--frames 10 --binning 8 --header-site --from-site 35.43,32.87,1420", {}, ["site-differs"]),
     # from the plan's own side of Greenwich the Sun has not risen: so it is the plan that is wrong, not the frames
     (
         TRANSIT,
@@ -84,6 +93,44 @@ def test_a_fault_in_rendered_frames_is_named(tmp_path, capsys, brief, options, c
     assert names or not found
     page = html.unescape((tmp_path / "out" / "report.html").read_text(encoding="utf-8"))
     assert all(f"<b>{name}</b>" in page for name in names)
+
+
+def with_long_exposures(plan_text, exposures_s):
+    """A plan whose frames are exposed for seconds, through a filter a hundred times as dense, one every 12 s."""
+    lengths = cycle(exposures_s)
+
+    def slower(shot):
+        count = max(3, int(float(shot[1]) * int(shot[2]) / 12))
+        return f"cadence_s: 12.0, count: {count}, exposure_s: {next(lengths)}"
+
+    text = re.sub(r"cadence_s: ([\d.]+), count: (\d+), exposure_s: [\d.]+", slower, plan_text)
+    assert "{name: V," in text
+    return text.replace("{name: V,", "{name: V, optical_density: 2.0,")
+
+
+@pytest.mark.parametrize(
+    ("exposures_s", "instant", "name"),
+    [([2.0, 10.0], "start", "start-for-middle"), ([2.0, 10.0], "end", "start-for-middle"),
+     ([6.0], "start", "clock-offset")],
+)  # fmt: skip
+def test_a_start_or_end_taken_for_the_middle_is_named_and_not_without_the_clock_where_exposures_are_alike(
+    tmp_path, capsys, exposures_s, instant, name
+):
+    plan, frames = tmp_path / "p.plan.yaml", tmp_path / "frames"
+    assert run_with(["plan", str(ROOT / "configs" / f"{MOON}.yaml"), "-o", str(plan)]) == 0
+    plan.write_text(with_long_exposures(plan.read_text(encoding="utf-8"), exposures_s), encoding="utf-8")
+    drawn = ["rehearse", str(plan), "-o", str(frames), "--quiet", "--frames", "40", "--binning", "4"]
+    assert run_with([*drawn, "--middle-stamp", instant]) == 0
+    capsys.readouterr()
+    run_with(["check", str(plan), str(frames), "-o", str(tmp_path / "out"), "--json", "--no-pictures"])
+    told = json.loads(capsys.readouterr().out)
+    assert [finding["name"] for finding in told["findings"]] == [name]
+    sentence = told["findings"][0]["sentence"]
+    assert f"the {instant} of each exposure was taken for its middle" in sentence.replace("The", "the")
+    assert name == "clock-offset" or f"the {instant} of each exposure" in told["verdict"]
+    assert name != "clock-offset" or "exposures that are all alike cannot tell; odds" in sentence
+    page = html.unescape((tmp_path / "out" / "report.html").read_text(encoding="utf-8"))
+    assert f"<b>{name}</b>" in page
 
 
 def test_the_stated_sigma_of_the_clock_holds_when_seeing_moves_the_limb(tmp_path, capsys):
