@@ -61,7 +61,7 @@ def main() -> None:
 
         began = process_time()
         index = quad_index()
-        size = sum(part.nbytes for part in (index.keys, index.codes, index.stars)) / 1e6
+        size = index.nbytes / 1e6
         print(
             f"index: {len(index)} quads, {size:.0f} MB, opened or built in {process_time() - began:.1f} s of CPU"
         )

@@ -13,14 +13,14 @@ import numpy as np
 
 from imaging.stars.camera import Camera, Lens, unproject
 from imaging.stars.catalogue import rows_near, whole_sky
-from imaging.stars.groups import local_groups
+from imaging.stars.groups import coded, local_groups
 from imaging.stars.hinted import Attempt
 from imaging.stars.hypotheses import hypotheses_of
 from imaging.stars.index import QuadIndex
 from imaging.stars.refine import Field, grow
 from imaging.stars.verify import ACCEPT_LOG10, Tally
 
-GIVE_UP_S = 8.0
+GIVE_UP_S = 6.5  # a set of quads takes a second at most, so that all is over within eight
 _GROWN = 6  # hypotheses of a set: a true one is nearly always the likeliest
 _HOPELESS_LOG10 = -4.0  # share of the odds below which none is grown
 
@@ -94,9 +94,10 @@ def solve_blind(
         vectors = unproject(field.x_px[:used] - x0, field.y_px[:used] - y0, focal)
         image = local_groups(vectors, 4, search.neighbours)
         first, second = index.like(image.codes, search.tolerance)
-        sky_stars = row_of[index.stars[second].astype(np.int64)]
-        focal_each = focal * image.longest[first] / _longest(sky.vectors[sky_stars])
-        guesses = hypotheses_of(field, sky, image.stars[first], sky_stars, focal_each, allowed, parity)
+        found = coded(sky.vectors, row_of[index.quads(second)])
+        first = first[found.rows]
+        focal_each = focal * image.longest[first] / found.longest
+        guesses = hypotheses_of(field, sky, image.stars[first], found.stars, focal_each, allowed, parity)
         trials += len(guesses)
         for i in range(min(len(guesses), _GROWN)):
             share = guesses.log_share(i)
@@ -120,15 +121,6 @@ def _rows_seen(center: np.ndarray, focal_px: float, field: Field, tt_s: float) -
     """Return the rows of the brightest 200 stars or so of a field."""
     field_sr = min(field.area_px2 / focal_px**2, 2.0)
     return rows_near(center, np.arctan(field.half_diagonal_px / focal_px) * 1.1, tt_s, 200 / field_sr)
-
-
-def _longest(vectors: np.ndarray) -> np.ndarray:
-    """Return the longest chord of each group (n, k, 3)."""
-    longest = np.zeros(len(vectors))
-    for a in range(vectors.shape[1]):
-        for b in range(a):
-            longest = np.maximum(longest, np.linalg.norm(vectors[:, a] - vectors[:, b], axis=1))
-    return longest
 
 
 def _rows_by_index(index: np.ndarray) -> np.ndarray:

@@ -21,11 +21,15 @@ _ALL_GROUPS = 30_000  # up to this many groups are all made, however far apart t
 
 @dataclass(frozen=True)
 class Groups:
-    """n groups of k stars: indices (n, k) in canonical order, codes (n, edges - 1), longest chord (n,)."""
+    """n groups of k stars: indices (n, k) in canonical order, codes (n, edges - 1), longest chord (n,).
+
+    `rows`: which of the groups asked for each one is.
+    """
 
     stars: np.ndarray
     codes: np.ndarray
     longest: np.ndarray
+    rows: np.ndarray
 
     def __len__(self) -> int:
         """Return the number of groups."""
@@ -94,7 +98,7 @@ def coded(
     ordered = np.empty_like(stars)
     np.put_along_axis(ordered, place, stars, axis=1)
     _sort_rows(lengths)
-    return Groups(ordered, (lengths[1:] / longest).T, longest)
+    return Groups(ordered, (lengths[1:] / longest).T, longest, np.flatnonzero(keep))
 
 
 def _sort_rows(table: np.ndarray) -> None:

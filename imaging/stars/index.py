@@ -13,87 +13,114 @@ from collections.abc import Callable
 from contextlib import suppress
 from dataclasses import dataclass
 from functools import lru_cache
-from math import comb
 from pathlib import Path
 
 import numpy as np
 
-from imaging.stars.groups import coded, local_members
-
-FORMAT = 5
-CODE_STEPS = 255  # codes are kept as 8-bit fractions: an error of 0.001, a tenth of the tolerance
-CELL = 0.02  # side of a cell of code space
-_CELLS = 51  # cells a side
-_CHUNK = 50_000  # stars, or quads, worked on together: bounds the memory
-
-
-@dataclass(frozen=True)
-class Level:
-    """Stars of one density over the sky, and how many neighbours of each make its quads."""
-
-    stars: int
-    neighbours: int
-
-
-# Each level holds a quarter of the stars of the one before: fields of 1.8, 3.7, 7.4, 15, 30, 60 degrees see about 40.
-LEVELS = (
-    Level(1_000_000, 5),
-    Level(120_000, 6),
-    Level(30_000, 8),
-    Level(7_500, 10),
-    Level(1_900, 13),
-    Level(480, 15),
+from imaging.stars.gathering import (
+    CELL_STEPS,
+    CELLS,
+    CODE_STEPS,
+    FINE_CELLS,
+    SHAPE_BITS,
+    WITHIN_CELL,
+    Gathered,
+    gathered,
 )
+from imaging.stars.neighbours import LEVELS, Neighbours
+
+FORMAT = 6
+_CHUNK = 500_000  # quads looked at together: bounds the memory
+_POWERS = (4, 3, 2, 1, 0)
+# where in its cell a quad lies, in steps of each code
+_PLACES = np.stack(
+    [np.arange(WITHIN_CELL) // CELL_STEPS**power % CELL_STEPS for power in _POWERS], axis=1
+).astype(np.float32)
 
 
 @dataclass(frozen=True)
 class QuadIndex:
-    """n quads sorted by cell: `keys` (n,) uint32, `codes` (n, 5) uint8, `stars` (n, 4) rows of the star list."""
+    """n quads in the order of their shapes: `packed` (n, 3) uint16, see `imaging.stars.gathering`.
 
-    keys: np.ndarray
-    codes: np.ndarray
-    stars: np.ndarray
+    `directory`: where the quads of each cell of the first three codes begin.
+    """
+
+    directory: np.ndarray
+    packed: np.ndarray
+    levels: tuple[Neighbours, ...]
 
     def __len__(self) -> int:
         """Return the number of quads."""
-        return len(self.keys)
+        return len(self.packed)
+
+    @property
+    def nbytes(self) -> int:
+        """How much room the index takes, in memory or on disk."""
+        levels = sum(level.rows.nbytes + level.near.nbytes for level in self.levels)
+        return self.directory.nbytes + self.packed.nbytes + levels
+
+    def quads(self, rows: np.ndarray) -> np.ndarray:
+        """Return the stars (n, 4) of the quads in these rows of the index, as rows of the star list."""
+        stars = np.empty((len(rows), 4), dtype=np.int64)
+        whole = np.zeros((len(rows), 4), dtype="<u2")
+        whole[:, :3] = self.packed[rows]
+        numbers = whole.view("<i8")[:, 0] >> SHAPE_BITS
+        first = 0
+        for level in self.levels:
+            here = (numbers >= first) & (numbers < first + level.numbered)
+            stars[here] = level.rows[level.quads(numbers[here] - first)]
+            first += level.numbered
+        return stars
 
     def like(self, codes: np.ndarray, tolerance: float) -> tuple[np.ndarray, np.ndarray]:
         """Return pairs (row of `codes`, row of the index) whose codes differ by less than `tolerance` (Euclidean)."""
-        low = np.clip(((codes - tolerance) / CELL).astype(int), 0, _CELLS - 1)
-        high = np.clip(((codes + tolerance) / CELL).astype(int), 0, _CELLS - 1)
-        owner, cells = np.arange(len(codes)), low[:, :1] * 0
+        steps = codes * CODE_STEPS
+        reach = tolerance * CODE_STEPS + 0.5  # the codes kept are rounded
+        low = np.clip(np.ceil(steps - reach) // CELL_STEPS, 0, CELLS - 1).astype(np.int64)
+        high = np.clip(np.floor(steps + reach) // CELL_STEPS, 0, CELLS - 1).astype(np.int64)
+        owner, cells = np.arange(len(codes)), np.zeros(len(codes), dtype=np.int64)
+        away2 = np.zeros(len(codes))  # of the cell from the code
         for axis in range(5):  # every cell that the ball may touch, axis by axis
-            both = np.concatenate([low[owner, axis], high[owner, axis]])
-            distinct = np.concatenate([np.ones(len(owner), bool), high[owner, axis] > low[owner, axis]])
-            middle = high[owner, axis] - low[owner, axis] > 1
-            owner2, cells2 = (
-                np.tile(owner, 2)[distinct],
-                np.tile(cells[:, 0], 2)[distinct] * _CELLS + both[distinct],
-            )
-            if middle.any():
-                extra = cells[middle, 0] * _CELLS + low[owner[middle], axis] + 1
-                owner2, cells2 = np.append(owner2, owner[middle]), np.append(cells2, extra)
-            owner, cells = owner2, cells2[:, None]
-        start = np.searchsorted(self.keys, cells[:, 0].astype(np.uint32), side="left")
-        stop = np.searchsorted(self.keys, cells[:, 0].astype(np.uint32), side="right")
-        number = stop - start
-        rows = np.repeat(start - np.concatenate([[0], np.cumsum(number)[:-1]]), number) + np.arange(
-            number.sum()
-        )
-        owner = np.repeat(owner, number)
-        found_owner, found_rows = [], []
-        for part in range(0, len(rows), 500_000):
-            here = slice(part, part + 500_000)
-            away = self.codes[rows[here]].astype(np.float32) / CODE_STEPS - codes[owner[here]].astype(
-                np.float32
-            )
-            near = np.einsum("ni,ni->n", away, away) < tolerance**2
-            found_owner.append(owner[here][near])
-            found_rows.append(rows[here][near])
-        if not found_rows:
-            return np.empty(0, int), np.empty(0, int)
+            number = high[owner, axis] - low[owner, axis] + 1
+            owner, cells, away2 = np.repeat(owner, number), np.repeat(cells, number), np.repeat(away2, number)
+            nth = np.arange(len(owner)) - np.repeat(np.cumsum(number) - number, number)
+            cell = low[owner, axis] + nth
+            beyond = np.abs(steps[owner, axis] - (cell + 0.5) * CELL_STEPS + 0.5) - CELL_STEPS / 2
+            away2 = away2 + np.maximum(beyond, 0) ** 2
+            touched = away2 < reach**2
+            owner, cells, away2 = owner[touched], cells[touched] * CELLS + cell[touched], away2[touched]
+        start, stop = self._first(cells), self._first(cells + 1)
+        corner = np.stack([cells // CELLS**power % CELLS for power in _POWERS], axis=1) * CELL_STEPS
+        corner = (corner - steps[owner]).astype(np.float32)
+        found_owner, found_rows = [np.empty(0, int)], [np.empty(0, int)]
+        ends = np.cumsum(stop - start)
+        for part in range(0, int(ends[-1]) if len(ends) else 0, _CHUNK):
+            nth = np.arange(part, min(part + _CHUNK, int(ends[-1])))
+            box = np.searchsorted(ends, nth, side="right")
+            rows = stop[box] - (ends[box] - nth)
+            away = _PLACES[self._shape(rows) % WITHIN_CELL] + corner[box]
+            near = np.einsum("ni,ni->n", away, away) < (tolerance * CODE_STEPS) ** 2
+            found_owner.append(owner[box[near]])
+            found_rows.append(rows[near])
         return np.concatenate(found_owner), np.concatenate(found_rows)
+
+    def _first(self, cells: np.ndarray) -> np.ndarray:
+        """Return the first row at or after each cell, halving what is left of its entry of the directory."""
+        coarse, fine = np.divmod(cells, FINE_CELLS)
+        low, high = self.directory[coarse].astype(np.int64), self.directory[coarse + 1].astype(np.int64)
+        still = np.flatnonzero(low < high)
+        while len(still):
+            middle = (low[still] + high[still]) // 2
+            before = self._shape(middle) < fine[still] * WITHIN_CELL
+            low[still[before]] = middle[before] + 1
+            high[still[~before]] = middle[~before]
+            still = still[low[still] < high[still]]
+        return low
+
+    def _shape(self, rows: np.ndarray) -> np.ndarray:
+        """Return the cell of the last two codes and the place in the cell of all five, as one number (n,)."""
+        low = np.ndarray((len(self),), "<u4", self.packed.data, 0, self.packed.strides[:1])
+        return low[rows] & np.uint32((1 << SHAPE_BITS) - 1)
 
 
 def quad_index(tick: Callable[[int, int], None] | None = None) -> QuadIndex:
@@ -103,13 +130,14 @@ def quad_index(tick: Callable[[int, int], None] | None = None) -> QuadIndex:
 
 @lru_cache(maxsize=2)
 def _open(folder: Path) -> QuadIndex:
-    parts = [
-        np.load(folder / f"{name}.npy", mmap_mode="r", allow_pickle=False)
-        for name in ("keys", "codes", "stars")
-    ]
-    if not len(parts[0]) == len(parts[1]) == len(parts[2]):
+    def part(name: str) -> np.ndarray:
+        return np.load(folder / f"{name}.npy", mmap_mode="r", allow_pickle=False)
+
+    levels = tuple(Neighbours(part(f"rows-{i}"), part(f"near-{i}")) for i in range(len(LEVELS)))
+    index = QuadIndex(part("directory"), part("packed"), levels)
+    if len(index) != index.directory[-1]:
         raise ValueError("parts of different length")
-    return QuadIndex(*parts)
+    return index
 
 
 def _loaded(folder: Path | None) -> QuadIndex | None:
@@ -131,7 +159,7 @@ def _folder() -> Path | None:
     digest = hashlib.sha256()
     for name in ("source", "hip", "v"):
         digest.update(np.ascontiguousarray(stars[name]).tobytes())
-    digest.update(repr((FORMAT, LEVELS, CELL)).encode())
+    digest.update(repr((FORMAT, LEVELS, CELL_STEPS)).encode())
     try:
         return user_cache_path("syzygraph") / f"quads-{digest.hexdigest()[:16]}"
     except OSError:
@@ -144,7 +172,7 @@ _IN_MEMORY: list[QuadIndex] = []
 def _built(tick: Callable[[int, int], None] | None) -> QuadIndex:
     if _IN_MEMORY:
         return _IN_MEMORY[0]
-    index = build_index(tick)
+    quads = gathered(tick)
     folder = _folder()
     part: Path | None = None
     try:
@@ -152,8 +180,7 @@ def _built(tick: Callable[[int, int], None] | None) -> QuadIndex:
             raise OSError("no cache folder")
         folder.parent.mkdir(parents=True, exist_ok=True)
         part = Path(tempfile.mkdtemp(prefix=".part-quads-", dir=folder.parent))
-        for name in ("keys", "codes", "stars"):
-            np.save(part / f"{name}.npy", getattr(index, name), allow_pickle=False)
+        _write(quads, part)
         if folder.exists() and _loaded(folder) is None:
             shutil.rmtree(folder, ignore_errors=True)  # left damaged by an older run
         os.rename(part, folder)
@@ -161,102 +188,20 @@ def _built(tick: Callable[[int, int], None] | None) -> QuadIndex:
         if part is not None:
             shutil.rmtree(part, ignore_errors=True)
     loaded = _loaded(folder)
-    if loaded is not None:
-        return loaded
-    _IN_MEMORY.append(index)
-    return index
+    if loaded is None:
+        loaded = QuadIndex(quads.directory(), np.concatenate(list(quads.in_order())), quads.levels)
+        _IN_MEMORY.append(loaded)
+    return loaded
 
 
-def build_index(tick: Callable[[int, int], None] | None = None) -> QuadIndex:
-    """Return the index of the installed catalogue, made in memory.
-
-    Positions are of 2016.0; the proper motion of a century changes a quad's code by less than the tolerance for all but
-    a few stars.
-    """
-    from planner.sky.starlist import star_list
-
-    table = star_list()
-    ra, dec = np.radians(table["ra_deg"]), np.radians(table["dec_deg"])
-    vectors = np.column_stack([np.cos(dec) * np.cos(ra), np.cos(dec) * np.sin(ra), np.sin(dec)])
-    by_magnitude = np.argsort(table["v"], kind="stable")
-    most = sum(min(level.stars, len(table)) * comb(level.neighbours, 3) for level in LEVELS)
-    # filled from the front: what is never written to takes no memory
-    keys, codes, stars = (
-        np.empty(most, np.uint32),
-        np.empty((most, 5), np.uint8),
-        np.empty((most, 4), np.uint32),
-    )
-    count = 0
-    total = sum(min(level.stars, len(table)) for level in LEVELS)
-    done = 0
-    for level in LEVELS:
-        rows = _evenly_bright(vectors[by_magnitude], by_magnitude, level.stars)
-        here = vectors[rows]
-        members = _members(here, level.neighbours)
-        for part in range(0, len(members), _CHUNK):
-            groups = coded(here, members[part : part + _CHUNK])
-            keep = groups.codes[:, -1] > 0.12  # flat or cramped quads are the first to be lost to noise
-            new = slice(count, count + int(keep.sum()))
-            keys[new] = _cell_keys(groups.codes[keep])
-            codes[new] = np.round(groups.codes[keep] * CODE_STEPS)
-            stars[new] = rows[groups.stars[keep]]
-            count = new.stop
-            if tick is not None:
-                tick(done + len(rows) * min(part + _CHUNK, len(members)) // len(members), total)
-        done += len(rows)
-    del vectors, members, here
-    order = np.argsort(keys[:count], kind="stable").astype(np.uint32)
-    for table_part in (keys[:, None], codes, stars):  # a column at a time, in place
-        for column in table_part.T:
-            column[:count] = column[:count][order]
-    return QuadIndex(keys[:count], codes[:count], stars[:count])
-
-
-def _members(vectors: np.ndarray, neighbours: int) -> np.ndarray:
-    """Return the members (n, 4) of the quads of all stars with their nearest neighbours, each quad once."""
-    from scipy.spatial import cKDTree
-
-    tree = cKDTree(vectors)
-    each = comb(neighbours, 3)
-    members = np.empty((len(vectors) * each, 4), np.int32)
-    for first in range(0, len(vectors), _CHUNK):
-        part = local_members(tree, vectors[first : first + _CHUNK], 4, neighbours)
-        members[first * each : first * each + len(part)] = part
-    _, unique = np.unique(_mixed(members), return_index=True)
-    return members[unique]
-
-
-def _cell_keys(codes: np.ndarray) -> np.ndarray:
-    cells = np.clip((codes / CELL).astype(np.int64), 0, _CELLS - 1)
-    key = cells[:, 0]
-    for axis in range(1, 5):
-        key = key * _CELLS + cells[:, axis]
-    return key.astype(np.uint32)
-
-
-def _mixed(members: np.ndarray) -> np.ndarray:
-    """Return one 64-bit number a group (sorted members), different for different groups but for 1 in 1e5 tables."""
-    key = np.zeros(len(members), dtype=np.uint64)
-    with np.errstate(over="ignore"):
-        for column in range(members.shape[1]):
-            key = (key ^ members[:, column].astype(np.uint64)) * np.uint64(0x9E3779B97F4A7C15)
-            key ^= key >> np.uint64(29)
-    return key
-
-
-def _evenly_bright(vectors: np.ndarray, rows: np.ndarray, count: int) -> np.ndarray:
-    """Return rows of about `count` stars, the brightest of their neighbourhood: a field shows its own brightest."""
-    if count >= len(rows):
-        return rows
-    z_bins = max(4, round(np.sqrt(count / 6 / np.pi) * 2))  # cells of equal area with about six stars
-    z = np.minimum(((vectors[:, 2] + 1) / 2 * z_bins).astype(int), z_bins - 1)
-    ring = np.sqrt(np.maximum(1 - (2 * (z + 0.5) / z_bins - 1) ** 2, 1e-3))
-    around = np.maximum(3, np.round(ring * z_bins * np.pi / 2 * (2 / np.pi) * 1.57).astype(int))
-    azimuth = np.arctan2(vectors[:, 1], vectors[:, 0]) / (2 * np.pi) % 1
-    cell = z * 100_000 + np.minimum((azimuth * around).astype(int), around - 1)
-    order = np.argsort(cell, kind="stable")  # within a cell the order stays that of brightness
-    ordered = cell[order]
-    start = np.flatnonzero(np.append(True, ordered[1:] != ordered[:-1]))
-    rank = np.arange(len(ordered)) - np.repeat(start, np.diff(np.append(start, len(ordered))))
-    share = max(1, round(count / len(start)))
-    return rows[np.sort(order[rank < share])]
+def _write(quads: Gathered, folder: Path) -> None:
+    """Write the index, a part of the quads at a time: they are never all in memory twice."""
+    np.save(folder / "directory.npy", quads.directory(), allow_pickle=False)
+    for i, level in enumerate(quads.levels):
+        np.save(folder / f"rows-{i}.npy", level.rows, allow_pickle=False)
+        np.save(folder / f"near-{i}.npy", level.near, allow_pickle=False)
+    header = {"descr": "<u2", "fortran_order": False, "shape": (len(quads), 3)}
+    with (folder / "packed.npy").open("wb") as file:
+        np.lib.format.write_array_header_1_0(file, header)
+        for packed in quads.in_order():
+            file.write(packed.tobytes())
