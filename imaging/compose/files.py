@@ -144,17 +144,17 @@ def captioned(image: np.ndarray, caption: str, up_pa_deg: float | None, scale_ar
     font = _font(size)
     length, label = round_length(0.22 * width * scale_arcsec_px)
     bar_px = length / scale_arcsec_px
-    columns = max(20, int((width - max(bar_px, 6 * size) - 5 * size) / (0.56 * size)))
+    arrows_px = 0 if up_pa_deg is None else int(6.5 * size)  # a landscape and a sheet have no celestial north
+    columns = max(20, int((width - bar_px - arrows_px - 4 * size) / (0.56 * size)))
     lines = textwrap.wrap(caption, columns)
-    arrows = 0.0 if up_pa_deg is None else 4.8 * size
-    band = max(int((len(lines) + 1.4) * 1.35 * size), int(arrows + 3.4 * size))
+    band = max(int((len(lines) + 1.4) * 1.35 * size), int(5.6 * size))
     strip = Image.new("L", (width, band), 18)
     draw = ImageDraw.Draw(strip)
     for number, line in enumerate(lines):
         draw.text((size, int((0.7 + 1.35 * number) * size)), line, fill=BRIGHT, font=font)
-    if up_pa_deg is not None:  # a landscape and a sheet of discs have no celestial north
-        _arrows(draw, font, width - 4.4 * size, 3.0 * size, 1.7 * size, up_pa_deg)
-    _scale_bar(draw, font, size, (width - size, band - 1.3 * size), bar_px, label)
+    if up_pa_deg is not None:
+        _arrows(draw, font, width - 4.0 * size, band / 2, 1.7 * size, up_pa_deg)
+    _scale_bar(draw, font, size, (width - arrows_px - size, band / 2 + 0.7 * size), bar_px, label)
     strip_array = np.asarray(strip, np.float32) / 255
     if image.ndim == 3:
         strip_array = np.repeat(strip_array[..., None], 3, axis=2)
