@@ -80,7 +80,7 @@ def solve_hinted(
     """Return the match of a field whose centre and scale are roughly known; roll and mirror may be unknown.
 
     `sky_near(radius_rad, stars_per_sr)` gives catalogue stars around `center` (unit vector), brightest first, to
-    about that density (all when it is infinite). Never returns a match whose false-alarm probability is above 1e-7.
+    about that density (all when it is infinite). Never returns a match whose false-alarm probability is above 1e-6.
     """
     focal = ARCSEC_RAD / scale_arcsec_px
     height, width = field.shape

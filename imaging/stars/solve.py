@@ -67,7 +67,7 @@ def solve_frame(
     `blind`: search the whole sky when the hints fail; by default only without `near` and `previous`. `air`: lifts the
     stars of a search that is not blind as it does in the frame. `tick`: progress of the index that the first blind
     solution builds.
-    Raises NoSolutionError when no pointing has a false-alarm probability below 1e-7 (1e-6 for a calibrated rig); the
+    Raises NoSolutionError when no pointing has a false-alarm probability below 1e-6; the
     message says what was tried and what would help.
     """
     found = detections if detections is not None else detect_frame(frame)

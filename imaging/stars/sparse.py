@@ -17,9 +17,8 @@ from imaging.stars.hypotheses import Hypotheses, hypotheses_of, turned_by
 from imaging.stars.prescreen import promising
 from imaging.stars.refine import Field, Sky, grow
 from imaging.stars.roundness import narrowed
-from imaging.stars.verify import Tally
+from imaging.stars.verify import ACCEPT_LOG10, Tally
 
-ACCEPT_LOG10 = -6.0
 WIDEST_SCALE_TOLERANCE = 0.02
 _IMAGE_STARS, _SKY_STARS = 45, 160
 _RANK = 8  # detections up to about this rank are alike; further down a catalogue star is ever less likely
