@@ -1,7 +1,8 @@
 """Stars of a camera that did not follow the sky: found and measured along their trails.
 
 A trail is a line of even light, as wide as a star. Its middle is where the star stood at mid-exposure: the trail of a
-turning sky bends, which moves the middle of a straight line fitted to it by length^2 / (24 x distance from the pole).
+turning sky bends, which moves the middle of a straight line fitted to it by length^2 / (24 x distance from the pole)
+towards the pole. How the directions of the frame's trails change along a trail tells the bend, and it is taken off.
 The filter is matched to the trail (Turin 1960), the fit is a Gauss-Newton fit of the profile with each pixel's noise
 as weight, which reaches the Cramer-Rao bound: along the trail its two ends alone tell the place.
 """
@@ -44,6 +45,17 @@ class TrailField:
         xx, xy, yy = (terms @ self.coefficients).T
         large = (xx + yy) / 2 + np.hypot((xx - yy) / 2, xy)
         return np.sqrt(12 * np.maximum(large, 0.0)), 0.5 * np.arctan2(2 * xy, xx - yy)
+
+    def bend(self, x_px: np.ndarray, y_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return by how much (x, y) the even light of a bent trail lies off its middle: curvature x length^2 / 24."""
+        length, angle = self.at(x_px, y_px)
+        length = np.minimum(length, LONGEST_PX)
+        c, s = np.cos(angle), np.sin(angle)
+        half = np.maximum(length / 2, 1.0)
+        ahead, behind = (self.at(x_px + side * half * c, y_px + side * half * s)[1] for side in (1, -1))
+        turned = (ahead - behind + np.pi / 2) % np.pi - np.pi / 2  # a direction has no sign
+        off = turned / (2 * half) * length**2 / 24
+        return -off * s, off * c
 
 
 @dataclass(frozen=True)
@@ -135,8 +147,9 @@ def measure_trails(
     good &= (values[:, 2] > reach_y) & (values[:, 2] < height - 1 - reach_y)
     good &= ~_goes_on(data, sky, values, length, angle, field.sigma_px)
     good &= ~_doubled(values, length, angle, good, field.sigma_px)
+    off_x, off_y = field.bend(values[:, 1], values[:, 2])
     return Trails(
-        values[:, 1], values[:, 2], values[:, 0], covariance, snr, length, angle, saturated, good
+        values[:, 1] - off_x, values[:, 2] - off_y, values[:, 0], covariance, snr, length, angle, saturated, good
     )  # fmt: skip
 
 

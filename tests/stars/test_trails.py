@@ -13,11 +13,17 @@ SKY, READ, FWHM = 200.0, 3.0, 2.6
 SHAPE = (1000, 1400)
 
 
-def trail_stamp(x, y, flux, length, angle, reach):
-    """Light of a trail in each pixel, as 5 stars a pixel of length side by side: not the profile that is fitted."""
+def trail_stamp(x, y, flux, length, angle, reach, radius=np.inf):
+    """Light of a trail in each pixel, as 5 stars a pixel of length side by side: not the profile that is fitted.
+
+    An arc of `radius` about a centre to the left of its direction.
+    """
     number = max(3, int(5 * length))
-    along = (np.arange(number) + 0.5) / number - 0.5
-    at = np.array([x + along * length * np.cos(angle), y + along * length * np.sin(angle)])
+    along = ((np.arange(number) + 0.5) / number - 0.5) * length
+    turned = along / radius
+    ahead, left = along * np.sinc(turned / np.pi), along * np.sinc(turned / 2 / np.pi) * np.sin(turned / 2)
+    c, s = np.cos(angle), np.sin(angle)
+    at = np.array([x + ahead * c - left * s, y + ahead * s + left * c])
     span = np.arange(-reach, reach + 1)
     sigma = FWHM / 2.3548
     fx, fy = (
@@ -51,7 +57,7 @@ def tripod(length_px, pole=(700.0, 2500.0), count=110, seed=5, noise=True):
             slice(max(row - reach, 0), row + reach + 1),
             slice(max(column - reach, 0), column + reach + 1),
         )
-        stamp = trail_stamp(a - column, b - row, light, long, turn, reach)
+        stamp = trail_stamp(a - column, b - row, light, long, turn, reach, np.hypot(a - pole[0], b - pole[1]))
         part = frame[rows, columns]
         part += stamp[max(reach - row, 0) :, max(reach - column, 0) :][: part.shape[0], : part.shape[1]]
     if noise:
@@ -108,6 +114,22 @@ def test_the_middle_of_a_trail_is_found_to_the_cramer_rao_bound(length_px):
     assert np.median(np.abs(found.trail_length_px[index[ok]] - length[ok])) < 0.1
     turned = (np.radians(found.trail_angle_deg[index[ok]]) - angle[ok] + np.pi / 2) % np.pi - np.pi / 2
     assert np.abs(turned).max() < 0.02
+
+
+@pytest.mark.parametrize(("length_px", "pole"), [(30.0, (700.0, 1150.0)), (40.0, (-300.0, 500.0))])
+def test_a_trail_that_bends_about_a_near_pole_keeps_its_middle(length_px, pole):
+    """Straight lines fitted to these arcs lie 0.05 to 0.5 px towards the pole."""
+    frame, x, y, _, length, _ = tripod(length_px, pole)
+    found = detect(frame, gain_e_adu=1.0)
+    ok, index = matched(found, x, y)
+    away = np.hypot(x - pole[0], y - pole[1])
+    inward = ((found.x_px[index] - x) * (pole[0] - x) + (found.y_px[index] - y) * (pole[1] - y)) / away
+    bent = ok & (length**2 / 24 / away > 0.04)
+    assert bent.sum() > 30
+    bend = length**2 / 24 / away
+    slope = (inward * bend)[bent].sum() / (bend**2)[bent].sum()  # 1 where the bend is left in
+    assert abs(slope) < 0.15
+    assert abs(np.median(inward[bent])) < 0.01
 
 
 def test_the_covariance_says_along_from_across():
