@@ -72,7 +72,8 @@ class EventFit:
     `level_with`, `level_without`: flux with and without the star. `signal_to_noise`: of the star in one frame.
     `false_alarm_log10`: chance that noise alone shows as much anywhere in the curve. `bound_s`: the Cramér-Rao bound of
     an instant well inside an exposure, exposure over signal-to-noise; over all phases the best is 1.27 of it.
-    `in_dead_time`: the instant falls between two exposures, and is known no better than that.
+    `in_dead_time`: the instant falls between two exposures, and is known no better than that. `log_likelihood`: of the
+    best instant, to compare fits of the same frames.
     """
 
     kind: Kind
@@ -84,6 +85,7 @@ class EventFit:
     false_alarm_log10: float
     bound_s: float
     in_dead_time: bool
+    log_likelihood: float = float("nan")
 
     @property
     def depth(self) -> float:
@@ -338,7 +340,7 @@ def _fitted(  # type: ignore[no-untyped-def]
     found: Kind = expected or ("disappearance" if slope[best] > 0 else "reappearance")
     return EventFit(
         found, time, spread, float(max(ends)), float(min(ends)), signal, log10,
-        float(np.median(near.exposure_s)) / signal, not inside.any(),
+        float(np.median(near.exposure_s)) / signal, not inside.any(), float(log_likelihood.max()),
     )  # fmt: skip
 
 

@@ -149,12 +149,18 @@ def time_of_fits_plane(
     """Return the time of plane `index` of a cube whose third axis is time (FITS standard 4.0, section 9.2 and 9.5).
 
     The axis tells the middle of each plane, counted from MJDREF, JDREF or DATEREF, else from DATE-BEG or DATE-OBS;
-    a plane lasts as long as the exposure, else as the step. Raises NoTimeError for another axis, or with the reason.
+    a plane lasts as long as the exposure, else as the step. An axis without a name is time where its unit is one.
+    Raises NoTimeError for another axis, or with the reason, which is the same for all planes.
     """
     kind = str(header.get("CTYPE3") or "").strip().upper()
-    if kind != "TIME" and kind not in _SCALES:
-        raise NoTimeError(f"the header tells no time for plane {index} of {total}")
     unit = str(header.get("CUNIT3") or "s").strip()
+    if not kind and header.get("CUNIT3") and unit in _TIME_UNITS_S and header.get("CDELT3") is not None:
+        kind = "TIME"
+    if kind != "TIME" and kind not in _SCALES:
+        raise NoTimeError(
+            f"its header tells no time for each of its {total} planes: the third axis is {kind or 'without a name'}, "
+            "not TIME with CDELT3 seconds from plane to plane"
+        )
     step = _number(header.get("CDELT3"))
     if unit not in _TIME_UNITS_S or step is None:
         raise NoTimeError(

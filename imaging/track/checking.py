@@ -78,7 +78,10 @@ def measure_file(measurer: Measurer, path: Path, options: CheckOptions) -> list[
             ):
                 name = path.name if frame.frame_index == 0 else f"{path.name}[{frame.frame_index}]"
                 if frame.time is None:
-                    outcomes.append(SetAside(name, frame.time_missing or "tells no time"))
+                    timeless = SetAside(name, frame.time_missing or "tells no time")
+                    before = outcomes[-1] if outcomes else None
+                    if not (isinstance(before, SetAside) and before.reason == timeless.reason):
+                        outcomes.append(timeless)  # once for all planes of a cube
                     continue
                 outcomes.append(measurer.measure(frame, pictures=options.pictures))
     except FrameSetAside as aside:

@@ -98,7 +98,10 @@ def follow_star(
         begin += rolling_readout_s * part
         rows.append((begin, frame.exposure_s or 0.0, flux, float(np.sum(other)) if other else np.nan))
     if len(rows) < 8:
-        raise NoSolutionError(f"{len(rows)} frames tell their time: at least 8 are needed for a light curve")
+        why = f" ({aside[0].file}: {aside[0].reason}; --start and --cadence tell it)" if aside else ""
+        raise NoSolutionError(
+            f"{len(rows)} frames tell their time: at least 8 are needed for a light curve{why}"
+        )
     begin_s, exposure, flux_adu, other_adu = np.array(sorted(rows)).T
     if not (exposure > 0).all():
         cadence = float(np.median(np.diff(begin_s)))
@@ -126,7 +129,9 @@ def _frames(
             for frame in read_frames(path, zone):
                 name = path.name if count == 1 else f"{path.name}[{frame.frame_index}]"
                 if frame.time is None and not timeless:
-                    aside.append(SetAside(name, frame.time_missing or "tells no time"))
+                    reason = frame.time_missing or "tells no time"
+                    if not (frame.frame_index and aside and aside[-1].reason == reason):
+                        aside.append(SetAside(name, reason))  # once for all planes of a cube
                 elif shape is not None and frame.data.shape != shape:
                     aside.append(SetAside(name, "has another size than the first frame"))
                 else:

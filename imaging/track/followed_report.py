@@ -11,27 +11,34 @@ import numpy as np
 from imaging.discs.lightcurve import EventFit
 from imaging.track.figures import INK, MEASURED, PALE, PAPER, time_axes
 from imaging.track.followed import FollowedStar
+from imaging.track.fringes import Fringes
 from planner.outputs import whole_file
 
 
-def sentence(followed: FollowedStar, events: Sequence[EventFit], reason: str | None) -> str:
+def sentence(
+    followed: FollowedStar, events: Sequence[EventFit], reason: str | None, fringes: Sequence[Fringes] = ()
+) -> str:
     """Return what the curve tells, in one sentence."""
     from planner.sky.timescale import utc_iso
 
     if not events:
         return f"The star neither went out nor came back in {followed.curve.flux.size} frames: {reason}."
     parts = []
-    for event in events:
+    for number, event in enumerate(events):
         verb = "went out" if event.kind == "disappearance" else "came back"
         digits = int(np.clip(1 - np.floor(np.log10(event.sigma_s)), 1, 5))
         stamp = utc_iso(followed.origin_tt_s + event.time_s, digits)
         text = f"{verb} at {stamp} ± {event.sigma_s:.{digits}f} s"
-        parts.append(text + (" (between two exposures)" if event.in_dead_time else ""))
+        note = fringes[number].told if fringes else "between two exposures" if event.in_dead_time else ""
+        parts.append(f"{text} ({note})" if note else text)
     worst = max(event.false_alarm_log10 for event in events)
-    return f"The star {' and '.join(parts)}; noise alone shows as much in one curve of 10^{-worst:.0f}."
+    text = f"The star {' and '.join(parts)}; noise alone shows as much in one curve of 10^{-worst:.0f}."
+    return f"{text} No fringes fitted: {reason}." if reason else text
 
 
-def as_object(followed: FollowedStar, events: Sequence[EventFit], reason: str | None) -> dict[str, Any]:
+def as_object(
+    followed: FollowedStar, events: Sequence[EventFit], reason: str | None, fringes: Sequence[Fringes] = ()
+) -> dict[str, Any]:
     """Return the same for a machine."""
     from planner.sky.timescale import utc_iso
 
@@ -49,16 +56,30 @@ def as_object(followed: FollowedStar, events: Sequence[EventFit], reason: str | 
                 "depth": event.depth,
                 "false_alarm_log10": event.false_alarm_log10,
                 "between_exposures": event.in_dead_time,
+                **(_size(fringes[number]) if fringes else {}),
             }
-            for event in events
+            for number, event in enumerate(events)
         ],
         "reason": reason,
         "set_aside": [{"file": aside.file, "reason": aside.reason} for aside in followed.set_aside],
     }
 
 
+def _size(fringes: Fringes) -> dict[str, float]:
+    return {
+        "star_diameter_mas": fringes.diameter_mas,
+        "star_diameter_sigma_mas": fringes.diameter_sigma_mas,
+        "star_diameter_limit_mas": fringes.diameter_limit_mas,
+    }
+
+
 def write_curve(
-    followed: FollowedStar, events: Sequence[EventFit], reason: str | None, folder: Path, force: bool = False
+    followed: FollowedStar,
+    events: Sequence[EventFit],
+    reason: str | None,
+    folder: Path,
+    force: bool = False,
+    fringes: Sequence[Fringes] = (),
 ) -> None:
     """Write light_curve.ecsv and light_curve.png; raises OutputExistsError when one exists and not `force`."""
     from astropy.table import Table
@@ -76,7 +97,7 @@ def write_curve(
         },
         units={"begin_s": "s", "exposure_s": "s"},
     )
-    table.meta = as_object(followed, events, reason)
+    table.meta = as_object(followed, events, reason, fringes)
     with whole_file(folder / "light_curve.ecsv", force) as part:
         table.write(part, format="ascii.ecsv", overwrite=True)
     figure = _figure(followed, events)

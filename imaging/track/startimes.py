@@ -10,8 +10,10 @@ import numpy as np
 from imaging.discs.lightcurve import EventFit, LightCurve, find_events, fit_step
 from imaging.discs.photometry import aperture_flux, compared
 from imaging.track.findings import Finding
+from imaging.track.fringes import Edge, fit_fringes
 from imaging.track.measurement import Measurement
 from imaging.track.nominal import Promise
+from imaging.track.path import ARCSEC_RAD
 from imaging.track.result import ContactTiming, with_sigma
 from imaging.track.starlight import HALF_PX, StarPiece
 from planner.errors import NoSolutionError
@@ -22,6 +24,7 @@ APERTURES = (0.8, 1.2, 1.7)  # radii in widths of a star
 NEIGHBOURS = 15  # frames nearest in time that tell how the star lies from where it is expected
 DIM_SIGNAL = 10.0  # light over noise, from which half of the light is no noise in thousands of frames
 LEAST_DEPTH = 0.5  # of the dimming expected; less is a cloud, or another star's
+UNFILTERED_NM = 250.0  # of light that a bare sensor sees, about 550 nm (common practice, no source)
 WITHIN_SIGMA = 3.0  # frames that begin and end so far from an instant must show it
 FAR_SIGMA = 5.0  # from the prediction, in its own and the timing's sigma together
 
@@ -69,7 +72,9 @@ def time_star(
     drop = _expected_depth(circumstances)
     events, words = _events(curve, circumstances, origin, drop)
     clock = float(np.hypot(promise.rig.clock.sigma_s, np.median([m.time.sigma_s for m in frames])))
-    timings = tuple(_timing(event, origin, clock, circumstances) for event in events)
+    found = [_by_fringes(curve, event, origin, promise) for event in events]
+    events = tuple(event for event, _ in found)
+    timings = tuple(_timing(event, origin, clock, circumstances, note) for event, note in found)
     whole = float(np.median([event.level_with for event in events])) if events else float(np.nanmedian(flux))
     unit = whole if whole > 0 else 1.0
     made = StarCurve(
@@ -200,7 +205,34 @@ def _model(curve: LightCurve, events: Sequence[EventFit], whole: float) -> np.nd
     return bare + (whole - bare) * np.clip(seen, 0, 1)
 
 
-def _timing(event: EventFit, origin: float, clock_s: float, circumstances: Circumstances) -> ContactTiming:
+def _by_fringes(curve: LightCurve, event: EventFit, origin: float, promise: Promise) -> tuple[EventFit, str]:
+    """Return an event timed by the fringes of the Moon's edge, where frames show them, and what is said of it."""
+    if promise.plan.event.family != "moon-occults-star":
+        return event, ""
+    try:
+        fringes = fit_fringes(curve.usable(), event, edge_of_moon(promise, origin + event.time_s))
+    except NoSolutionError:
+        return event, ""
+    return fringes.event, fringes.told
+
+
+def edge_of_moon(promise: Promise, tt_s: float) -> Edge:
+    """Return the Moon's mean limb at the star at an instant, in the band of the plan's first filter."""
+    expected = promise.path.airless().at(np.array([tt_s - 0.5, tt_s + 0.5]))
+    apart = np.hypot(expected.east_arcsec, expected.north_arcsec) - expected.reference_semidiameter_arcsec
+    distance_km = float(promise.path.geometry(np.array([tt_s])).discs["moon"].distance_km[0])
+    speed_m_s = abs(float(np.diff(apart)[0])) / ARCSEC_RAD * distance_km * 1e3
+    filters = {one.name: one for one in promise.rig.filters}
+    used = next(
+        (shot.filter for passage in promise.plan.passages for shot in passage.shots if shot.filter), None
+    )
+    width_nm = filters[used].bandwidth_nm if used in filters else UNFILTERED_NM
+    return Edge(max(speed_m_s, 1.0), distance_km, 550.0, width_nm)
+
+
+def _timing(
+    event: EventFit, origin: float, clock_s: float, circumstances: Circumstances, note: str = ""
+) -> ContactTiming:
     predicted = circumstances.instant(event.kind)
     return ContactTiming(
         name=event.kind,
@@ -210,7 +242,7 @@ def _timing(event: EventFit, origin: float, clock_s: float, circumstances: Circu
         predicted_sigma_s=predicted.sigma_s if predicted is not None else float("nan"),
         false_alarm_log10=event.false_alarm_log10,
         signal_to_noise=event.signal_to_noise,
-        note="between two exposures" if event.in_dead_time else "",
+        note=note or ("between two exposures" if event.in_dead_time else ""),
     )
 
 

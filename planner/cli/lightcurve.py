@@ -91,19 +91,20 @@ def command(  # type: ignore[no-untyped-def]
         followed = follow_star(
             files, place, others, radius, rolling_readout, zone, _stamps(start, cadence), tick
         )
-    events, reason = [], None
+    events, reason, fringes = [], None, []
     try:
         events = list(find_events(followed.curve))
         if diffraction is not None:
-            events = [_with_fringes(followed.curve, event, _numbers(diffraction)) for event in events]
+            fringes = [_fringes(followed.curve, event, _numbers(diffraction)) for event in events]
+            events = [one.event for one in fringes]
     except errors.NoSolutionError as none:
         reason = str(none)
     if output is not None:
-        write_curve(followed, events, reason, output, force)
+        write_curve(followed, events, reason, output, force, fringes)
     if as_json:
-        click.echo(json.dumps(as_object(followed, events, reason), indent=2, allow_nan=False))
+        click.echo(json.dumps(as_object(followed, events, reason, fringes), indent=2, allow_nan=False))
     else:
-        click.echo(sentence(followed, events, reason))
+        click.echo(sentence(followed, events, reason, fringes))
         for aside in followed.set_aside:
             click.echo(f"  set aside {aside.file}: {aside.reason}")
         if output is not None:
@@ -148,23 +149,16 @@ def _numbers(text: str) -> list[float]:
     if not 2 <= len(numbers) <= 5 or min(numbers) < 0 or min(numbers[:2]) <= 0:
         raise errors.InputError(
             f"--diffraction: found {text!r}; allowed is speed in m/s, distance in km [, wavelength, bandwidth in nm, "
-            "diameter of the star in mas]: 620,378000,550,90,2"
+            "diameter of the star in mas, fitted when not given]: 620,378000,550,90"
         )
-    return numbers + [550.0, 100.0, 0.0][len(numbers) - 2 :]
+    return numbers + [550.0, 100.0][len(numbers) - 2 :]
 
 
-def _with_fringes(curve, event, numbers):  # type: ignore[no-untyped-def]
+def _fringes(curve, event, numbers):  # type: ignore[no-untyped-def]
     """Return an event timed by the fringes about where the step was found."""
-    from imaging.discs.lightcurve import fit_fresnel
+    from imaging.track.fringes import Edge, fit_fringes
 
-    speed_m_s, distance_km, wavelength_nm, bandwidth_nm, star_mas = numbers
-    # forty times the first fringe's scale, sqrt(wavelength distance / 2)
-    reach = 40 * (wavelength_nm * 1e-9 * distance_km * 1e3 / 2) ** 0.5 / speed_m_s
-    reach = max(reach, 5 * event.sigma_s)
-    window = event.time_s - reach, event.time_s + reach
-    return fit_fresnel(
-        curve, event.kind, speed_m_s, distance_km * 1e3, wavelength_nm, bandwidth_nm, star_mas, window
-    )
+    return fit_fringes(curve, event, Edge(*numbers[:4]), numbers[4] if len(numbers) > 4 else None)
 
 
 def _pair(option: str, text: str) -> tuple[float, float]:

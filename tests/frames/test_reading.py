@@ -81,7 +81,7 @@ def test_a_cube_gives_its_planes_one_at_a_time(tmp_path):
     assert [frame.frame_index for frame in frames] == [0, 1, 2, 3, 4]
     assert np.array_equal(frames[3].data, cube[3])
     assert np.array_equal(read_frame(path, index=4).data, cube[4])
-    assert "plane 0 of 5" in frames[0].time_missing
+    assert "each of its 5 planes" in frames[0].time_missing
 
 
 def test_site_and_scale_come_from_the_header(tmp_path):

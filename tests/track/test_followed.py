@@ -113,3 +113,18 @@ def test_planes_that_tell_no_time_are_set_aside_with_the_reason(tmp_path, capsys
     made = cube(tmp_path / "c.fits")
     assert run_with(["lightcurve", str(made), "--star", "61,30"]) == 2
     assert "tell their time" in capsys.readouterr().err
+
+
+def test_a_cube_without_times_is_one_line_and_an_axis_in_seconds_is_enough(tmp_path, capsys):
+    made = cube(tmp_path / "c.fits")
+    with fits.open(made) as hdus:
+        bare, data = hdus[0].header.copy(), hdus[0].data
+    fits.PrimaryHDU(data, bare).writeto(tmp_path / "bare.fits")
+    assert run_with(["lightcurve", str(tmp_path / "bare.fits"), "--star", "61,30"]) == 2
+    printed = "".join(capsys.readouterr())
+    assert "0 frames tell their time" in printed
+    assert printed.count("the third axis is without a name") == 1
+    bare["DATE-OBS"], bare["CUNIT3"], bare["CDELT3"] = "2027-08-13T18:52:00", "s", 0.04
+    fits.PrimaryHDU(data, bare).writeto(tmp_path / "unnamed.fits")
+    assert run_with(["lightcurve", str(tmp_path / "unnamed.fits"), "--star", "61,30", "--json"]) == 0
+    assert json.loads(capsys.readouterr().out)["frames"] == COUNT
