@@ -234,7 +234,7 @@ def spread_point(
         notes.append("the phase is not corrected: the direction to the lit limb is not known")
     elif np.hypot(dx, dy) > 0.01:
         law = law_of(body.name) if disc is None else "lambert"
-        notes.append(f"centre of figure from the centre of light by the law of {law}")
+        notes.append(f"centre of figure from the centre of light by the law of {law.title()}")
     if clipped:
         notes.append(f"{clipped} saturated pixels left out")
     return DiscPlace(

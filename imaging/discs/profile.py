@@ -12,6 +12,7 @@ from imaging.discs.ring import Lit, Ring, Sectors, Template, middles, sector_of
 from planner.errors import NoSolutionError
 
 _BIN_PX = 0.25
+_WAVES = range(1, 5)  # a turn, that clouds make in how the brightness bends across the limb
 
 
 @dataclass(frozen=True)
@@ -62,9 +63,12 @@ def fit_sectors(
         weight = 1 / (spread_out + (spread_in - spread_out) * np.clip(shape, 0, 1) + 1e-12)
         # a brightness that changes across the limb (cloud, vignetting) is not to be taken for a displacement
         columns = [shape, np.interp(place, template.offset, template.slope), place * shape]
+        if inner_blur is None:
+            columns.append(place * columns[-1])
         if template.inner is not None:
             columns.append(np.interp(place, template.offset, template.inner))
-        solution, inverse, chi2 = _solved(sector, count, weight, columns, value)
+        curved = len(columns) if inner_blur is None else None
+        solution, inverse, chi2 = _solved(sector, count, weight, columns, value, curved, contrast, whole)
         level = np.where(whole, solution[:, 0], level)
         contrast = np.where(whole & (solution[:, 1] > 0), solution[:, 1], contrast)
     assert template is not None
@@ -157,9 +161,20 @@ def _mean_profile(
 
 
 def _solved(
-    sector: np.ndarray, count: int, weight: np.ndarray, columns: list[np.ndarray], value: np.ndarray
+    sector: np.ndarray,
+    count: int,
+    weight: np.ndarray,
+    columns: list[np.ndarray],
+    value: np.ndarray,
+    curved: int | None,
+    contrast: np.ndarray,
+    whole: np.ndarray,
 ) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """Solve value = level + sum a_k column_k in every sector; returns solutions, inverse normals, chi^2 by freedom."""
+    """Solve value = level + sum a_k column_k in every sector; returns solutions, inverse normals, chi^2 by freedom.
+
+    `curved`: the number of the column by which a brightness bends across the limb. Where clouds do that it is free in
+    each sector; else it is held to its median, so that a clear sky costs nothing.
+    """
     terms = [None, *columns]
     size = len(terms)
     normal = np.empty((count, size, size))
@@ -171,11 +186,39 @@ def _solved(
             other = terms[j]
             product = heavy[i] if other is None else heavy[i] * other
             normal[:, i, j] = normal[:, j, i] = np.bincount(sector, product, count)
-    diagonal = np.arange(size)
-    normal[:, diagonal, diagonal] = normal[:, diagonal, diagonal] * (1 + 1e-9) + 1e-12
-    inverse = np.linalg.inv(normal)
-    solution = np.einsum("nij,nj->ni", inverse, right)
     square = np.bincount(sector, weight * value * value, count)
-    explained = np.einsum("ni,ni->n", solution, right)
     freedom = np.maximum(np.bincount(sector, minlength=count) - size, 1)
+    solution, inverse, chi2 = _solution(normal, right, square, freedom)
+    if curved is None:
+        return solution, inverse, chi2
+    bend, variance = solution[:, curved] / contrast, inverse[:, curved, curved] * chi2 / contrast**2
+    if _is_bent(bend[whole], variance[whole], middles(count)[whole]):
+        return solution, inverse, chi2
+    pull = chi2 / (contrast**2 * 1e-4 * float(np.median(variance[whole])))
+    normal[:, curved, curved] += pull
+    right[:, curved] += pull * float(np.median(bend[whole])) * contrast
+    solution, inverse, _ = _solution(normal, right, square, freedom)
+    return solution, inverse, chi2
+
+
+def _is_bent(bend: np.ndarray, variance: np.ndarray, angle: np.ndarray) -> bool:
+    """Say whether clouds bend the brightness: slow waves along the limb, which move a centre, above their noise."""
+    middle = float(np.median(bend))
+    most = 5 * 1.48 * float(np.median(np.abs(bend - middle)))
+    left = np.clip(bend - middle, -most, most) / np.sqrt(np.maximum(variance, 1e-30))
+    waves = np.concatenate([[np.cos(m * angle), np.sin(m * angle)] for m in _WAVES]).T
+    basis, _ = np.linalg.qr(np.column_stack([np.ones_like(angle), waves]))
+    power = (basis[:, 1:].T @ left) ** 2
+    return bool(power.mean() > 1 + np.sqrt(2 / power.size))
+
+
+def _solution(
+    normal: np.ndarray, right: np.ndarray, square: np.ndarray, freedom: np.ndarray
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    diagonal = np.arange(right.shape[1])
+    firm = normal.copy()
+    firm[:, diagonal, diagonal] = firm[:, diagonal, diagonal] * (1 + 1e-9) + 1e-12
+    inverse = np.linalg.inv(firm)
+    solution = np.einsum("nij,nj->ni", inverse, right)
+    explained = np.einsum("ni,ni->n", solution, right)
     return solution, inverse, np.maximum(square - explained, 0) / freedom
