@@ -12,13 +12,23 @@ from imaging.discs.edge import FWHM_OVER_SIGMA, WING_RATIO, Blur
 from imaging.discs.limb import LimbFit
 from imaging.discs.lit import RING_EDGES, Body, LitCells, from_the_light, lit_cells, ring_distance
 from imaging.discs.phase import law_of, minnaert
-from imaging.discs.stamp import DiscPlace, Stamp, blurred, coverage, fit_stamp, projected_cost, sub_pixels
+from imaging.discs.stamp import (
+    DiscPlace,
+    Stamp,
+    StampFit,
+    blurred,
+    coverage,
+    fit_stamp,
+    projected_cost,
+    sub_pixels,
+)
 from planner.errors import NoSolutionError
 
 # Widths of the round Gaussians that together are any point spread: in units of the narrowest, and, for the aureole,
 # of the stamp's half side.
 # What the model of an image is not known to, however bright it is: measured on drawn points and discs.
 MODEL_FLOOR_PX = 0.006
+_SATELLITE_SIGMAS, _MOST_SATELLITES = 8.0, 5
 COARSE_PX = 0.01  # of a disc that a few pixels hold, besides
 _LOST = 0.2  # of a disc's area: so much of it saturated, its own shape is not seen
 _WIDTHS, _AUREOLE = (1.0, 1.6, 2.6, 4.5), (0.12, 0.2, 0.33, 0.6)
@@ -278,6 +288,28 @@ def _best_start(  # type: ignore[no-untyped-def]
     return best
 
 
+def _satellites(stamp: Stamp, fit: StampFit, body: Body, sigma: float) -> np.ndarray:
+    """Say which pixels a satellite lights: points at or off the outline that stand out of what the fit leaves."""
+    import cv2
+
+    x, y = stamp.grid()
+    left = np.where(stamp.usable, stamp.data - fit.model, 0.0) / np.sqrt(np.maximum(fit.model, 1.0))
+    smooth = cv2.GaussianBlur(left, (0, 0), max(sigma, 0.6), borderType=cv2.BORDER_REPLICATE)
+    away = np.hypot(x - fit.parameters[0], y - fit.parameters[1])
+    off = stamp.usable & (away > 0.9 * (1 - body.flattening) * body.radius_px)
+    hit = np.zeros(stamp.data.shape, bool)
+    for _ in range(_MOST_SATELLITES):
+        free = off & ~hit
+        if free.sum() < 50:
+            break
+        scale = 1.48 * float(np.median(np.abs(smooth[free] - np.median(smooth[free]))))
+        row, column = np.unravel_index(np.argmax(np.where(free, smooth, -np.inf)), smooth.shape)
+        if smooth[row, column] < _SATELLITE_SIGMAS * scale:
+            break
+        hit |= np.hypot(x - column - stamp.x_low, y - row - stamp.y_low) < 3 * max(sigma, 0.6) + 0.5
+    return hit
+
+
 def resolved(
     stamp: Stamp,
     x0: float,
@@ -332,17 +364,26 @@ def resolved(
 
     light_dx, light_dy = body.light_offset_px()
     start = np.array([x0 - light_dx, y0 - light_dy, np.log(max(sigma, 0.3)), 0.0, 0.8])
-    fit = fit_stamp(
-        stamp,
-        components,
-        start,
-        np.array([0.02, 0.02, 0.01, 0.005, 0.02]),
-        noise.variance,
-        prior=np.array([np.inf, np.inf, 0.2 if moon is not None else 0.5, 0.01, 0.25]),
-        limit=np.array([max(6.0, 2 * body.radius_px)] * 2 + [1.5, 0.2, 1.0]),
-        robust=8.0,
-        positive=1 if body.ring_sine <= 0 else 1 + len(RING_EDGES) - 1,
-    )
+
+    def fitted(piece: Stamp, start: np.ndarray) -> StampFit:
+        return fit_stamp(
+            piece,
+            components,
+            start,
+            np.array([0.02, 0.02, 0.01, 0.005, 0.02]),
+            noise.variance,
+            prior=np.array([np.inf, np.inf, 0.2 if moon is not None else 0.5, 0.01, 0.25]),
+            limit=np.array([max(6.0, 2 * body.radius_px)] * 2 + [1.5, 0.2, 1.0]),
+            robust=8.0,
+            positive=1 if body.ring_sine <= 0 else 1 + len(RING_EDGES) - 1,
+        )
+
+    fit = fitted(stamp, start)
+    if moon is None:
+        beside = _satellites(stamp, fit, body, sigma)
+        if beside.any():
+            # from the same start: priors are about it
+            fit = fitted(replace(stamp, usable=stamp.usable & ~beside), start)
     px, py = float(fit.parameters[0]), float(fit.parameters[1])
     height = float((fit.amplitudes[0] * disc(fit.parameters)).max())
     if height < 5 * np.sqrt(noise.sky_adu2):

@@ -15,6 +15,7 @@ from planner.outputs import whole_file
 INK, PALE, PAPER = "#f2e6d8", "#8d8379", "#14110f"
 MEASURED, OFF = "#ffc46b", "#ff8f6b"
 FORMATS = ("png", "svg", "pdf")
+STILL = 1e-5  # degrees or arcseconds: a target that does not move has a place, not a path
 
 
 def _axes(rows: int, size: tuple[float, float], sharex: bool = True):  # type: ignore[no-untyped-def]
@@ -147,7 +148,9 @@ def path_figure(result: CheckResult):  # type: ignore[no-untyped-def]
     names = ("east_arcsec", "north_arcsec") if on_disc else ("ra_deg", "dec_deg")
     py = column(result, f"predicted_{names[1]}")
     mx, my = (column(result, f"measured_{name}") for name in names)
-    axis.plot(*result.line.T, color=INK, lw=1.0, label="predicted")
+    still = len(result.line) > 0 and bool(np.ptp(result.line, axis=0).max() < STILL)
+    place = result.line[:1] if still else result.line
+    axis.plot(*place.T, "+" if still else "-", color=INK, lw=1.0, ms=12, label="predicted")
     for kind, marker, colour in (("on-track", "o", MEASURED), ("off-track", "x", OFF)):
         chosen = (verdict == kind) & np.isfinite(mx)
         if chosen.any():

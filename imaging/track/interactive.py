@@ -12,6 +12,7 @@ from imaging.track.figures import (
     OFF,
     PALE,
     PAPER,
+    STILL,
     clock_shift_arcsec,
     column,
     disc_radius_arcsec,
@@ -244,7 +245,7 @@ def _range(data, part: str) -> tuple[float, float]:  # type: ignore[no-untyped-d
 
 
 def _path(result: CheckResult, source):  # type: ignore[no-untyped-def]
-    from bokeh.models import HoverTool
+    from bokeh.models import BasicTicker, HoverTool
 
     on_disc = result.reference in ("sun", "moon")
     options = {"match_aspect": True} if on_disc else {}
@@ -259,7 +260,10 @@ def _path(result: CheckResult, source):  # type: ignore[no-untyped-def]
     else:
         plot.xaxis.axis_label = "right ascension (degrees, ICRS); north up, east left"
         plot.yaxis.axis_label = "declination (degrees, ICRS)"
+    plot.xaxis.ticker = BasicTicker(desired_num_ticks=4)  # as many as fit on a phone
     plot.line(*result.line.T, line_color=INK)
+    if len(result.line) and np.ptp(result.line, axis=0).max() < STILL:
+        plot.scatter(*result.line[:1].T, marker="cross", size=16, color=INK, line_width=2)
     points = plot.scatter(
         "measured_x",
         "measured_y",

@@ -12,7 +12,7 @@ import numpy as np
 
 from imaging.track.cutout import Cutout
 from imaging.track.interactive import head, light_plot, plots
-from imaging.track.result import CheckResult, duration_text, frames, with_sigma
+from imaging.track.result import CLOCK_TOLD_S, CheckResult, duration_text, frames, with_sigma
 from planner.outputs import whole_file
 
 ROWS_SHOWN = 400
@@ -97,7 +97,7 @@ def _numbers(result: CheckResult) -> str:
     cells = [("frames", f"{result.measured} measured, {result.on_track} on track")]
     if result.set_aside:
         cells.append(("set aside", frames(len(result.set_aside))))
-    if np.isfinite(result.clock_offset_sigma_s):
+    if result.clock_offset_sigma_s < CLOCK_TOLD_S:
         offset = with_sigma(result.clock_offset_s, result.clock_offset_sigma_s)
         size = f" ({duration_text(result.clock_offset_s)})" if abs(result.clock_offset_s) >= 120 else ""
         cells.append(("clock, stamps − UTC", f"{offset} s{size}"))
@@ -148,15 +148,15 @@ def _star_contacts(result: CheckResult) -> str:
         spread = float(np.hypot(contact.sigma_s, contact.predicted_sigma_s))
         texts = (
             contact.name,
+            f"{with_sigma(late, spread)} s",
             f"{utc_iso(contact.stamped_tt_s, 3)} ± {contact.sigma_s:.2g} s",
             f"{utc_iso(contact.predicted_tt_s, 2)} ± {contact.predicted_sigma_s:.2g} s",
-            f"{with_sigma(late, spread)} s",
             f"1 in 10^{-contact.false_alarm_log10:.0f}",
             contact.note,
         )
         rows += "<tr><td>" + "</td><td>".join(escape(text) for text in texts) + "</td></tr>"
     titles = "</th><th>".join(
-        ("contact", "measured, frames' clock", "predicted, UTC", "difference", "chance of noise alone", "")
+        ("contact", "difference", "measured, frames' clock", "predicted, UTC", "chance of noise alone", "")
     )
     return f"""<section><h2>Contacts</h2><p class="quiet">Read off the light curve; errors hold the frames' clock.</p>
 <div class="wide"><table><tr><th>{titles}</th></tr>{rows}</table></div></section>"""
@@ -175,17 +175,17 @@ def _contacts(result: CheckResult) -> str:
             escape(text)
             for text in (
                 contact.name.replace("_", " "),
-                str(utc_iso(contact.predicted_tt_s, 1)),
-                str(utc_iso(contact.stamped_tt_s, 1)),
                 f"{with_sigma(contact.stamped_tt_s - contact.predicted_tt_s, contact.sigma_s)} s",
+                str(utc_iso(contact.stamped_tt_s, 1)),
+                str(utc_iso(contact.predicted_tt_s, 1)),
             )
         )
         + "</td></tr>"
         for contact in result.contacts
     )
     return f"""<section><h2>Contacts</h2><p class="quiet">Measured from the chord against the limb, by the frames'
-own clock.</p><div class="wide"><table><tr><th>contact</th><th>predicted, UTC</th>
-<th>measured, frames' clock</th><th>difference</th></tr>{rows}</table></div></section>"""
+own clock.</p><div class="wide"><table><tr><th>contact</th><th>difference</th>
+<th>measured, frames' clock</th><th>predicted, UTC</th></tr>{rows}</table></div></section>"""
 
 
 def _set_aside(result: CheckResult) -> str:
@@ -203,12 +203,12 @@ def _table(result: CheckResult) -> str:
     for row in result.rows[:ROWS_SHOWN]:
         texts = (
             row.file,
-            row.utc_mid,
-            row.solved_by,
             cell(row.along_arcsec),
             cell(row.across_arcsec),
             cell(row.sigma_along_arcsec).lstrip("+"),
             row.verdict,
+            row.utc_mid,
+            row.solved_by,
             row.reason,
         )
         inner = "</td><td>".join(escape(text) for text in texts)
@@ -216,7 +216,7 @@ def _table(result: CheckResult) -> str:
     more = len(result.rows) - ROWS_SHOWN
     note = f'<p class="quiet">{more} more rows are in track.ecsv.</p>' if more > 0 else ""
     titles = "</th><th>".join(
-        ("file", "mid-exposure, UTC", "solved by", "along ″", "across ″", "σ ″", "verdict", "reason")
+        ("file", "along ″", "across ″", "σ ″", "verdict", "mid-exposure, UTC", "solved by", "reason")
     )
     return f"""<section><details{" open" if len(result.rows) <= 25 else ""}><summary><h2>Frames</h2></summary>
 <div class="wide"><table><tr><th>{titles}</th></tr>{"".join(lines)}</table></div>{note}</details></section>"""
@@ -238,7 +238,9 @@ _STYLE = """
 :root{color-scheme:dark}
 body{margin:0 auto;max-width:72rem;padding:1rem;background:#14110f;color:#f2e6d8;
 font:1rem/1.5 system-ui,sans-serif}
-body.red::after{content:"";position:fixed;inset:0;background:#f00;mix-blend-mode:multiply;pointer-events:none;z-index:99}
+body.red::after{content:"";position:fixed;inset:0;background:#f00;mix-blend-mode:multiply;pointer-events:none;
+z-index:2147483647}
+body.red .quiet,body.red dt,body.red .odds,body.red .title,body.red tr.unmeasured td{color:#fff}
 .title{margin:0;color:#c9bcae}
 .verdict{font-size:clamp(1.25rem,4.5vw,1.9rem);line-height:1.3;font-weight:600;margin:.4rem 0 .8rem}
 h2{font-size:1.15rem;margin:1.6rem 0 .3rem;display:inline-block}
@@ -268,9 +270,17 @@ figcaption{font-size:.92rem;max-width:22rem;white-space:pre-line}
 """
 
 _SCRIPT = """
-document.getElementById("red").onclick = e => {
-  const on = document.body.classList.toggle("red");
-  e.target.setAttribute("aria-pressed", on);
+const redButton = document.getElementById("red");
+function setRed(on) {
+  document.body.classList.toggle("red", on);
+  redButton.setAttribute("aria-pressed", on);
+}
+// a page opened again at night stays red; some browsers keep nothing for a file
+try { setRed(localStorage.getItem("red") === "1"); } catch (nothingKept) {}
+redButton.onclick = () => {
+  const on = !document.body.classList.contains("red");
+  setRed(on);
+  try { localStorage.setItem("red", on ? "1" : "0"); } catch (nothingKept) {}
 };
 function showCutout(i, text) {
   const box = document.getElementById("cutout"), cut = CUTOUTS[i];

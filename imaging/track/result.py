@@ -15,6 +15,9 @@ if TYPE_CHECKING:
     from imaging.track.startimes import StarCurve
 
 
+CLOCK_TOLD_S = 600.0  # a clock known no better is not told: its target hardly moves
+
+
 @dataclass(frozen=True)
 class SetAside:
     """A file, or a frame of it, that could not be used, and why."""
@@ -129,7 +132,7 @@ class CheckResult:
             slip = ""  # the clock is told below, with its number
         text = f"{slip}; read so, {name}" if slip else name
         text = f"{text} is on its predicted path in {share}, to {size:.2g} arcsec rms"
-        if not np.isfinite(self.clock_offset_sigma_s):
+        if not self.clock_offset_sigma_s < CLOCK_TOLD_S:
             return text + "; the clock could not be judged."
         half = next((f for f in self.findings if f.name == "start-for-middle"), None)
         if half is not None:
