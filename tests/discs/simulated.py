@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 from scipy.ndimage import gaussian_filter, map_coordinates
@@ -26,6 +27,7 @@ class Disc:
     def spread(self) -> PointSpread:
         return PointSpread(np.array([1.0]), np.array([self.sigma_px]))
 
+    @cache  # noqa: B019 - a few discs in a run of tests
     def profile(self):
         return blurred_sun(self.radius, self.spread)
 

@@ -14,6 +14,7 @@ from imaging.discs.planet import Body, planet_among_stars, planet_beside_moon, p
 from imaging.frames.render_discs import Ball, draw_ball
 from imaging.frames.render_light import PointSpread
 from imaging.frames.render_pointing import Pointing, unit_vector
+from imaging.frames.render_stars import draw_points
 from planner.errors import NoSolutionError
 from tests.discs.simulated import Disc, recorded, sun_with_planet
 
@@ -239,3 +240,33 @@ def test_stated_error_includes_what_seeing_moves():
         place = planet_on_sun(image, x, y, 4.0, sun, search_px=6)
         pulls += [(place.x_px - x) / place.sigma_px[0], (place.y_px - y) / place.sigma_px[1]]
     assert 0.5 < np.std(pulls) < 1.6
+
+
+@pytest.mark.parametrize("radius", [4.5, 12.0])
+@pytest.mark.parametrize("away", [1.2, 1.5, 2.0, 3.0])
+def test_satellites_beside_a_planet_do_not_move_it(radius, away):
+    """One or two of a thousandth of the planet's light, as Jupiter's four have (from memory: 5 to 6 mag at -2)."""
+    scale, fwhm_px, light = 1.6, 2.5, 1e4 * np.pi * radius**2
+    for seed in range(4):
+        generator = np.random.default_rng(seed)
+        pointing = Pointing(unit_vector(80.0, 20.0), 0.0, 1, scale, 120, 120)
+        vector = unit_vector(*(np.array([80.0, 20.0]) + generator.uniform(-1, 1, 2) * scale / 3600))
+        ball = Ball("jupiter", vector, radius * scale, 0.065, 20.0, 5.0, 100.0, -2.0)
+        spread = PointSpread.seeing(fwhm_px)
+        rate = np.full((120, 120), 30.0, np.float32)
+        draw_ball(rate, pointing, ball, light, spread, None)
+        x, y = (float(v) for v in pointing.project(vector))
+        angle = generator.uniform(0, 2 * np.pi, 1 + seed % 2)
+        moons = x + away * radius * np.cos(angle), y + away * radius * np.sin(angle)
+        draw_points(rate, *moons, np.full(angle.size, 1e-3 * light), spread, 1e-4)
+        place = planet_among_stars(
+            recorded(rate, generator),
+            x + 1,
+            y - 1,
+            Body("jupiter", radius, 5.0, 190.0, 0.065, 110.0),
+            fwhm_px,
+            gain_e_adu=1.0,
+        )
+        off = np.array([place.x_px - x, place.y_px - y])
+        assert np.hypot(*off) < 0.015
+        assert off @ np.linalg.solve(place.covariance, off) < 2 * 2.5**2
