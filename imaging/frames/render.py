@@ -11,9 +11,9 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
-from imaging.frames.faults import Faults, with_stand_in
 from imaging.frames.render_camera import Readout, binned, record, vignetting
 from imaging.frames.render_discs import Ball, draw_ball, draw_moon, draw_sun
+from imaging.frames.render_faults import Faults, with_stand_in
 from imaging.frames.render_light import PointSpread
 from imaging.frames.render_pointing import Air, Pointing, moved, ra_dec_deg, unit_vector
 from imaging.frames.render_seeing import LimbMotion, image_motion_arcsec
