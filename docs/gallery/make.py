@@ -2,7 +2,8 @@
 
     python docs/gallery/make.py WORK_FOLDER [JOURNEY ...]
 
-Steps whose output stands in WORK_FOLDER are not done again. All of it takes an hour on two cores and 5 GB of disk.
+Steps whose output stands in WORK_FOLDER are not done again. All of it takes 40 minutes on two busy cores, 18 of
+processor time, and 9 GB of disk.
 """
 
 from __future__ import annotations
@@ -21,6 +22,7 @@ from planner.cli.main import run_with
 HERE = Path(__file__).resolve().parent
 CONFIGS = HERE.parent.parent / "configs"
 MOST_FILM_BYTES = 300_000
+SHOWN_CLOSE = ("transit", "moon", "mars", "meet")
 
 
 @dataclass(frozen=True)
@@ -158,8 +160,8 @@ def detail(folder: Path, name: str, half_px: int = 110) -> None:
     with Image.open(folder / "composite.png") as image:
         picture = image.convert("RGB")
     width, height = drawn["size_px"]
-    chosen = [drawn["drawn"][i] for i in np.linspace(0, len(drawn["drawn"]) - 1, 3).astype(int)]
-    sheet = Image.new("RGB", (6 * half_px + 20, 2 * half_px))
+    chosen = [drawn["drawn"][i] for i in np.unique(np.linspace(0, len(drawn["drawn"]) - 1, 3).astype(int))]
+    sheet = Image.new("RGB", (len(chosen) * (2 * half_px + 10) - 10, 2 * half_px))
     for number, item in enumerate(chosen):
         x = int(np.clip(item["x_px"], half_px, max(width - half_px, half_px)))
         y = int(np.clip(height - 1 - item["y_px"], half_px, max(height - half_px, half_px)))
@@ -219,8 +221,8 @@ def make(journey: Journey, work: Path) -> None:
         text = json.dumps(statement, indent=1, ensure_ascii=False)
         (HERE / f"{picture}.truth.json").write_text(text + "\n", encoding="utf-8")
         shown(folder / f"path_{journey.path}.png", f"{picture}_path", 1100)
-    first = next(iter(journey.pictures))
-    detail(work / f"{first}_pic", first)
+    if journey.name in SHOWN_CLOSE:
+        detail(work / f"{journey.name}_pic", journey.name)
     if journey.film:
         film = work / f"{journey.name}.mp4"
         step(film, "timelapse", *common, "-o", str(film), *journey.film)
