@@ -64,7 +64,7 @@ def _bounds_near_edges(data: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     four = np.ones((2, 2), np.uint8)
     lowest = cv2.erode(data, four, anchor=(0, 0))
     highest = cv2.dilate(data, four, anchor=(0, 0))
-    highest += PEAK_BETWEEN * (highest - lowest)
+    highest = np.asarray((1 + PEAK_BETWEEN) * highest - PEAK_BETWEEN * lowest, np.float32)
     bend = np.abs(cv2.Laplacian(data, cv2.CV_32F))
     noise = float(np.median(bend[::7, ::7])) / 0.6745
     near = cv2.dilate((bend > 40 * noise).astype(np.uint8), np.ones((17, 17), np.uint8))
