@@ -209,7 +209,7 @@ def _is_bent(bend: np.ndarray, variance: np.ndarray, angle: np.ndarray) -> bool:
     waves = np.concatenate([[np.cos(m * angle), np.sin(m * angle)] for m in _WAVES]).T
     basis, _ = np.linalg.qr(np.column_stack([np.ones_like(angle), waves]))
     power = (basis[:, 1:].T @ left) ** 2
-    return bool(power.mean() > 1 + np.sqrt(2 / power.size))
+    return bool(power.mean() > 1 + 2 * np.sqrt(2 / power.size))
 
 
 def _solution(
