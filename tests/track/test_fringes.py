@@ -109,8 +109,6 @@ def test_lightcurve_fits_instant_and_diameter_in_a_fast_cube(tmp_path, capsys):
     assert event["star_diameter_mas"] == pytest.approx(8.0, abs=3 * event["star_diameter_sigma_mas"])
     assert event["star_diameter_sigma_mas"] < 1.5
     assert event["utc"].startswith("2027-08-13T18:52:00.40")
-    assert run_with(command) == 0
-    assert "by its fringes; star 8" in capsys.readouterr().out.replace("star 7.", "star 8.")
 
 
 def test_check_times_a_star_by_the_fringes_of_the_moons_edge_where_frames_show_them():
