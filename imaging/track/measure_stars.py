@@ -61,6 +61,9 @@ class AmongStars:
             zero_point_adu=_zero_point_adu(found, solution, (x, y)),
         )
         blank = replace(blank, solved_by="stars", predicted_px=(x, y), stars=plate)
+        rows, columns = frame.data.shape[:2]
+        if not blank.nominal.holds_target and not (0 <= x < columns and 0 <= y < rows):
+            return replace(blank, reason=f"{geometry.target.capitalize()} {AS_PREDICTED} beside this panel")
         radius_px = float(semidiameter[0]) / plate.scale_arcsec_px
         body = body_of(
             geometry, radius_px, lambda pa: pixel_angle_deg(pa, plate.local_rotation_deg, plate.parity)

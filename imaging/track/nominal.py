@@ -23,7 +23,8 @@ POINT_PX = 0.05  # radius of a star as the disc rooms take it: far below any blu
 class Nominal:
     """The promise for one frame, in the axes of its array: see DEVELOPERS.md, conventions.
 
-    `exposure_share`: of the longest exposure that the plan has in this passage.
+    `exposure_share`: of the longest exposure that the plan has in this passage. `holds_target`: whether the target is
+    in the field, which it is not in panels of a mosaic beside it.
     """
 
     passage: str
@@ -33,6 +34,7 @@ class Nominal:
     aim_ra_deg: float
     aim_dec_deg: float
     exposure_share: float = 1.0
+    holds_target: bool = True
 
     def to_sky(self, dx_px: np.ndarray, dy_px: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
         """Return (east, north) in arcseconds of pixel offsets."""
@@ -107,14 +109,16 @@ class Promise:
         rotation, parity = array_orientation(
             float(planned.rotation_deg[at]), planned.parity < 0, frame.row_zero
         )
+        passage = self.plan.passages[int(planned.passage[at])]
         return Nominal(
-            passage=self.plan.passages[int(planned.passage[at])].name if near else "",
+            passage=passage.name if near else "",
             scale_arcsec_px=self.rig.scale_arcsec_px * frame.binning,
             rotation_deg=rotation,
             parity=parity,
             aim_ra_deg=float(planned.ra_deg[at]),
             aim_dec_deg=float(planned.dec_deg[at]),
             exposure_share=float(exposure / longest) if near and longest > 0 else 1.0,
+            holds_target=passage.holds_target or not near,
         )
 
 

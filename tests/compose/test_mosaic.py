@@ -58,3 +58,20 @@ def test_panels_without_the_target_enter_the_star_stack(mosaic):
             row, column = round(float(y)), round(float(x))
             assert picture.count[row - 20 : row + 20, column - 20 : column + 20].min() >= 1
     assert np.isfinite(picture.image).mean() > 0.995
+
+
+def test_check_says_of_a_panel_beside_the_target_that_the_target_is_not_there(mosaic):
+    """It took a bright star for Mars there, and called it off its path."""
+    from imaging.track.checking import CheckOptions, measure_files
+    from imaging.track.measurement import AS_PREDICTED, Measurement
+
+    plan, material = mosaic
+    beside = {passage.name for passage in plan.passages if not passage.holds_target}
+    files = sorted({frame.path for frame in material.frames if frame.passage in beside})[:3]
+    told = list(measure_files(plan, files, CheckOptions()))
+    assert len(told) == 3
+    for one in told:
+        assert isinstance(one, Measurement)
+        assert one.solved_by == "stars"
+        assert not one.measured
+        assert AS_PREDICTED in one.reason
