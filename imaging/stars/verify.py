@@ -15,7 +15,9 @@ from typing import Any
 import numpy as np
 
 DETECTED_SHARES = (0.03, 0.1, 0.25, 0.5, 0.8, 0.95)
-ACCEPT_LOG10 = -6.0  # one answer for every way: a millionth, stated as a bound (counted: docs/notes/solving.md)
+ACCEPT_LOG10 = (
+    -6.0
+)  # one answer for every way: a millionth, stated as a bound (counted: docs/notes/solving.md)
 _SHARED = 3  # pairs that make two matches the same
 _MOST = 1e7  # one star says no more than this: profiles have wings, and detections come in twos
 
