@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from imaging.discs.outline import Outline
-from imaging.discs.ring import Sectors
+from imaging.discs.ring import Sectors, slow_waves
 from planner.errors import NoSolutionError
 
 # Sectors further apart than this never count as moving together.
@@ -92,6 +92,8 @@ def fit_circle(
         middle = middle * max(
             1.0, _slow_waves(angle, design, np.sqrt(base * weight), residual) / max(most, 1e-9)
         )
+        clouds = (design * (base * weight)[:, None]).T @ slow_waves(angle)
+        middle = middle + sectors.wave_variance * clouds @ clouds.T
         covariance = bread @ (middle + np.diag(extra)) @ bread
     return CircleFit(
         x + float(solution[0]), y + float(solution[1]), radius + float(solution[2]), covariance, used, left, rms

@@ -8,11 +8,10 @@ import numpy as np
 
 from imaging.discs.edge import Blur, blurred_powers
 from imaging.discs.outline import Outline
-from imaging.discs.ring import Lit, Ring, Sectors, Template, middles, sector_of
+from imaging.discs.ring import Lit, Ring, Sectors, Template, middles, sector_of, slow_waves
 from planner.errors import NoSolutionError
 
 _BIN_PX = 0.25
-_WAVES = range(1, 5)  # a turn, that clouds make in how the brightness bends across the limb
 
 
 @dataclass(frozen=True)
@@ -53,6 +52,7 @@ def fit_sectors(
     level, contrast, whole = _contrasts(sector, place, value, number, count, width, lit)
     size = np.quantile(contrast[whole], 0.9)
     solution = inverse = chi2 = np.zeros(0)
+    wave_variance = 0.0
     template = None
     for _ in range(2 if shifts is None else 1):
         relative = (value - level[sector]) / contrast[sector]
@@ -68,7 +68,9 @@ def fit_sectors(
         if template.inner is not None:
             columns.append(np.interp(place, template.offset, template.inner))
         curved = len(columns) if inner_blur is None else None
-        solution, inverse, chi2 = _solved(sector, count, weight, columns, value, curved, contrast, whole)
+        solution, inverse, chi2, wave_variance = _solved(
+            sector, count, weight, columns, value, curved, contrast, whole
+        )
         level = np.where(whole, solution[:, 0], level)
         contrast = np.where(whole & (solution[:, 1] > 0), solution[:, 1], contrast)
     assert template is not None
@@ -83,7 +85,8 @@ def fit_sectors(
         shift = shift - np.average(shift[good], weights=1 / error[good] ** 2)
     if shifts is not None:
         shift = shift + shifts
-    return ProfileFit(Sectors(middles(count), shift, error, solution[:, 1], solution[:, 0], good), template)
+    sectors = Sectors(middles(count), shift, error, solution[:, 1], solution[:, 0], good, wave_variance)
+    return ProfileFit(sectors, template)
 
 
 def _contrasts(
@@ -169,11 +172,13 @@ def _solved(
     curved: int | None,
     contrast: np.ndarray,
     whole: np.ndarray,
-) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, float]:
     """Solve value = level + sum a_k column_k in every sector; returns solutions, inverse normals, chi^2 by freedom.
 
-    `curved`: the number of the column by which a brightness bends across the limb. Where clouds do that it is free in
-    each sector; else it is held to its median, so that a clear sky costs nothing.
+    `curved`: the number of the column by which a brightness bends across the limb. Where clouds surely do that it is
+    free in each sector. Else it is held to its median, so that a clear sky costs nothing, and of what the slow waves of
+    a free bend would move the limb by as much is put back as stands above their noise (Wiener 1949). Last of the
+    returned is the variance that each of these waves keeps, in px^2.
     """
     terms = [None, *columns]
     size = len(terms)
@@ -190,26 +195,39 @@ def _solved(
     freedom = np.maximum(np.bincount(sector, minlength=count) - size, 1)
     solution, inverse, chi2 = _solution(normal, right, square, freedom)
     if curved is None:
-        return solution, inverse, chi2
+        return solution, inverse, chi2, 0.0
     bend, variance = solution[:, curved] / contrast, inverse[:, curved, curved] * chi2 / contrast**2
-    if _is_bent(bend[whole], variance[whole], middles(count)[whole]):
-        return solution, inverse, chi2
+    power, number = _wave_power(bend[whole], variance[whole], middles(count)[whole])
+    if power > 1 + 2 * np.sqrt(2 / number):
+        return solution, inverse, chi2, 0.0
     pull = chi2 / (contrast**2 * 1e-4 * float(np.median(variance[whole])))
     normal[:, curved, curved] += pull
     right[:, curved] += pull * float(np.median(bend[whole])) * contrast
-    solution, inverse, _ = _solution(normal, right, square, freedom)
-    return solution, inverse, chi2
+    held, held_inverse, _ = _solution(normal, right, square, freedom)
+    share = max(0.0, 1 - 1 / power)
+    if share > 0:
+        with np.errstate(invalid="ignore", divide="ignore"):
+            moved = held[:, 2] / held[:, 1] - solution[:, 2] / solution[:, 1]
+            cost = (inverse[:, 2, 2] - held_inverse[:, 2, 2]) * chi2 / solution[:, 1] ** 2
+        sure = whole & np.isfinite(moved) & (cost > 0)
+        if sure.sum() > 3 * number:
+            waves = slow_waves(middles(count))
+            root = 1 / np.sqrt(cost[sure])
+            design = np.column_stack([np.ones(int(sure.sum())), waves[sure]]) * root[:, None]
+            found = np.linalg.lstsq(design, moved[sure] * root, rcond=1e-3)[0]
+            held[:, 2] -= share * (waves @ found[1:]) * held[:, 1]
+            return held, held_inverse, chi2, share * 2 * float(np.median(cost[sure])) / int(sure.sum())
+    return held, held_inverse, chi2, 0.0
 
 
-def _is_bent(bend: np.ndarray, variance: np.ndarray, angle: np.ndarray) -> bool:
-    """Say whether clouds bend the brightness: slow waves along the limb, which move a centre, above their noise."""
+def _wave_power(bend: np.ndarray, variance: np.ndarray, angle: np.ndarray) -> tuple[float, int]:
+    """Return the power of a bend in slow waves along the limb over its noise, and how many waves there are."""
     middle = float(np.median(bend))
     most = 5 * 1.48 * float(np.median(np.abs(bend - middle)))
     left = np.clip(bend - middle, -most, most) / np.sqrt(np.maximum(variance, 1e-30))
-    waves = np.concatenate([[np.cos(m * angle), np.sin(m * angle)] for m in _WAVES]).T
-    basis, _ = np.linalg.qr(np.column_stack([np.ones_like(angle), waves]))
+    basis, _ = np.linalg.qr(np.column_stack([np.ones_like(angle), slow_waves(angle)]))
     power = (basis[:, 1:].T @ left) ** 2
-    return bool(power.mean() > 1 + 2 * np.sqrt(2 / power.size))
+    return float(power.mean()), power.size
 
 
 def _solution(

@@ -50,7 +50,10 @@ class Ring:
 
 @dataclass(frozen=True)
 class Sectors:
-    """The limb in each sector: its displacement outward (px), the error, the contrast, whether it is to be used."""
+    """The limb in each sector: its displacement outward (px), the error, the contrast, whether it is to be used.
+
+    `wave_variance`: of what clouds may still move the limb by in each slow wave along it (px^2), beyond the errors.
+    """
 
     angle: np.ndarray
     shift: np.ndarray
@@ -58,6 +61,12 @@ class Sectors:
     contrast: np.ndarray
     level: np.ndarray
     good: np.ndarray
+    wave_variance: float = 0.0
+
+
+def slow_waves(angle: np.ndarray) -> np.ndarray:
+    """Return cosines and sines (n, 8) of one to four waves a turn, in which clouds bend the brightness at a limb."""
+    return np.concatenate([[np.cos(m * angle), np.sin(m * angle)] for m in range(1, 5)]).T
 
 
 @dataclass(frozen=True)
