@@ -12,7 +12,7 @@ CLOCK_OFFSET_S = 7.3
 JOURNEYS = (
     ("mercury_transit_2032", 40, 4),
     ("moon_occults_planet_2030", 32, 3),
-    ("mars_retrograde_2027", 30, 4),
+    ("mars_retrograde_2027", 24, 4),
 )
 
 
