@@ -183,7 +183,10 @@ def _turn(vector: np.ndarray, axis: int, angle: np.ndarray) -> np.ndarray:
 
 
 def elements_of(state: np.ndarray) -> np.ndarray:
-    """Return the elements (6,) of a heliocentric state (6,) in au and au/day, ICRS axes: the inverse."""
+    """Return the elements (6,) of a heliocentric state (6,) in au and au/day, ICRS axes: the inverse.
+
+    The mean anomaly of an orbit that is not closed is NaN.
+    """
     r, v = (_turn(part[:, None], 0, np.array([-OBLIQUITY]))[:, 0] for part in (state[:3], state[3:]))
     gm = SUN_GM_KM3_S2 * _GM_AU
     momentum = np.cross(r, v)
@@ -197,7 +200,8 @@ def elements_of(state: np.ndarray) -> np.ndarray:
     argument = np.arctan2(
         eccentric @ np.cross(momentum / np.linalg.norm(momentum), along_node), eccentric @ along_node
     )
-    big = np.arctan2(r @ v / np.sqrt(gm * a), 1 - length / a)
+    # an orbit that is not closed has no mean anomaly: NaN, and the last element with it
+    big = np.arctan2(r @ v / np.sqrt(gm * a), 1 - length / a) if a > 0 else np.nan
     anomaly = big - e * np.sin(big)
     return np.array([a, e, *(np.degrees([inclination, node, argument, anomaly]) % 360.0)])
 
