@@ -21,7 +21,7 @@ from imaging.stars.refine import Field, grow
 from imaging.stars.verify import ACCEPT_LOG10, Tally
 
 GIVE_UP_S = 6.5  # a set of quads takes a second at most, so that all is over within eight
-_GROWN = 6  # hypotheses of a set: a true one is nearly always the likeliest
+_GROWN = 10  # hypotheses of a set: a true one is nearly always among the likeliest
 _HOPELESS_LOG10 = -4.0  # share of the odds below which none is grown
 
 
@@ -49,13 +49,13 @@ SEARCHES = (
     Search(14.0, 10.0, 18.0, 40, 6, _WIDE),
     Search(38.0, 32.0, 45.0, 40, 6, _WIDE),
     Search(0.0, 0.1, 13.0, 40, 10, _FLAT),
+    Search(0.0, 0.1, 13.0, 40, 14, _FLAT),
+    Search(0.0, 0.1, 13.0, 70, 14, _FLAT),
     Search(30.0, 26.0, 34.5, 50, 8, _WIDE),
     Search(20.0, 16.0, 24.0, 50, 8, _WIDE),
     Search(25.0, 21.0, 29.0, 50, 8, _WIDE),
     Search(14.0, 10.0, 18.0, 50, 8, _WIDE),
     Search(38.0, 32.0, 45.0, 50, 8, _WIDE),
-    Search(0.0, 0.1, 13.0, 40, 14, _FLAT),
-    Search(0.0, 0.1, 13.0, 70, 14, _FLAT),
     Search(0.0, 0.1, 13.0, 110, 14, _FLAT),
 )
 
@@ -94,10 +94,14 @@ def solve_blind(
         vectors = unproject(field.x_px[:used] - x0, field.y_px[:used] - y0, focal)
         image = local_groups(vectors, 4, search.neighbours)
         first, second = index.like(image.codes, search.tolerance)
-        found = coded(sky.vectors, row_of[index.quads(second)])
+        quads, share_of_quad = index.quads(second)
+        found = coded(sky.vectors, row_of[quads])
         first = first[found.rows]
         focal_each = focal * image.longest[first] / found.longest
-        guesses = hypotheses_of(field, sky, image.stars[first], found.stars, focal_each, allowed, parity)
+        prior = share_of_quad[found.rows]
+        guesses = hypotheses_of(
+            field, sky, image.stars[first], found.stars, focal_each, allowed, parity, prior=prior
+        )
         trials += len(guesses)
         for i in range(min(len(guesses), _GROWN)):
             share = guesses.log_share(i)

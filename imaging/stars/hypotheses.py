@@ -155,11 +155,16 @@ def hypotheses_of(
     focal_range_px: tuple[float, float],
     parity: int | None = None,
     projection: str = "TAN",
+    prior: np.ndarray | None = None,
 ) -> Hypotheses:
-    """Return the cameras that carry these groups (n, k), with these focal lengths (n,), onto each other."""
+    """Return the cameras that carry these groups (n, k), with these focal lengths (n,), onto each other.
+
+    `prior` (n,): how likely each pairing is beforehand, up to a constant factor; all alike where not given.
+    """
+    prior = np.ones(len(focal)) if prior is None else prior
     keep = (focal > focal_range_px[0]) & (focal < focal_range_px[1])
     keep &= as_bright(field, stars, image_stars, sky_stars)
-    image_stars, sky_stars, focal = image_stars[keep], sky_stars[keep], focal[keep]
+    image_stars, sky_stars, focal, prior = image_stars[keep], sky_stars[keep], focal[keep], prior[keep]
     height, width = field.shape
     u, v = field.x_px[image_stars] - (width - 1) / 2, field.y_px[image_stars] - (height - 1) / 2
     seen = unproject(u, v, focal[:, None], projection)
@@ -170,7 +175,7 @@ def hypotheses_of(
     keep = residual.max(axis=1) < _LOOSEST * size
     image_stars, sky_stars, axes, focal = image_stars[keep], sky_stars[keep], axes[keep], focal[keep]
     misshapen = np.sqrt((residual[keep] ** 2).mean(axis=1)) / size[keep]
-    weight = _weight(field, stars, image_stars, sky_stars, misshapen, size[keep] * focal)
+    weight = prior[keep] * _weight(field, stars, image_stars, sky_stars, misshapen, size[keep] * focal)
     order = np.argsort(-weight, kind="stable")
     return Hypotheses(image_stars[order], sky_stars[order], axes[order], focal[order], weight[order])
 

@@ -59,9 +59,14 @@ class QuadIndex:
         levels = sum(level.rows.nbytes + level.near.nbytes for level in self.levels)
         return self.directory.nbytes + self.packed.nbytes + levels
 
-    def quads(self, rows: np.ndarray) -> np.ndarray:
-        """Return the stars (n, 4) of the quads in these rows of the index, as rows of the star list."""
+    def quads(self, rows: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+        """Return the stars (n, 4) of the quads in these rows of the index, as rows of the star list, and their share.
+
+        The share (n,) is what a quad has of its level: a field may be of any size, so that quads of a level count less
+        the more there are.
+        """
         stars = np.empty((len(rows), 4), dtype=np.int64)
+        share = np.empty(len(rows))
         whole = np.zeros((len(rows), 4), dtype="<u2")
         whole[:, :3] = self.packed[rows]
         numbers = whole.view("<i8")[:, 0] >> SHAPE_BITS
@@ -69,8 +74,9 @@ class QuadIndex:
         for level in self.levels:
             here = (numbers >= first) & (numbers < first + level.numbered)
             stars[here] = level.rows[level.quads(numbers[here] - first)]
+            share[here] = 1 / level.numbered
             first += level.numbered
-        return stars
+        return stars, share
 
     def like(self, codes: np.ndarray, tolerance: float) -> tuple[np.ndarray, np.ndarray]:
         """Return pairs (row of `codes`, row of the index) whose codes differ by less than `tolerance` (Euclidean)."""

@@ -91,7 +91,7 @@ def test_every_quad_is_found_by_its_own_shape(small_index):
     from imaging.stars.groups import coded
 
     index, vectors = small_index
-    groups = coded(vectors, index.quads(np.arange(len(index))))
+    groups = coded(vectors, index.quads(np.arange(len(index)))[0])
     assert len(groups) == len(index)
     asked, found = index.like(groups.codes, 0.006)  # the codes kept are rounded
     assert set(asked[asked == found].tolist()) == set(range(len(index)))
@@ -104,7 +104,7 @@ def test_what_is_found_is_all_that_is_near_and_nothing_else(small_index):
     rng = np.random.default_rng(3)
     codes = np.sort(rng.random((200, 5)), axis=1)[:, ::-1]
     asked, found = index.like(codes, 0.05)
-    held = np.round(coded(vectors, index.quads(np.arange(len(index)))).codes * 255) / 255
+    held = np.round(coded(vectors, index.quads(np.arange(len(index)))[0]).codes * 255) / 255
     away = np.linalg.norm(held[None] - codes[:, None], axis=2)
     assert set(zip(asked.tolist(), found.tolist(), strict=True)) == set(
         zip(*(rows.tolist() for rows in np.nonzero(away < 0.05)), strict=True)
