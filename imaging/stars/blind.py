@@ -20,7 +20,7 @@ from imaging.stars.index import QuadIndex
 from imaging.stars.refine import Field, grow
 from imaging.stars.verify import ACCEPT_LOG10, Tally
 
-GIVE_UP_S = 6.5  # a set of quads takes a second at most, so that all is over within eight
+GIVE_UP_S = 6.0  # a set of quads takes two seconds at most, so that all is over within eight
 _GROWN = 10  # hypotheses of a set: a true one is nearly always among the likeliest
 _HOPELESS_LOG10 = -4.0  # share of the odds below which none is grown
 
