@@ -16,6 +16,7 @@ CELLS = CODE_STEPS // CELL_STEPS + 1  # cells a side
 FINE_CELLS = CELLS**2  # cells of one entry of the directory, which knows three codes of five
 # Six bytes hold a quad: its number, the cell of its last two codes, and where in its cell of five codes it lies.
 WITHIN_CELL = CELL_STEPS**5
+# A fourth code of 1 would need more bits: no four points of a plane have five distances that are all the longest.
 SHAPE_BITS, NUMBER_BITS = 23, 25
 _PARTS = 64  # the quads are put in order in so many parts: bounds the memory
 
